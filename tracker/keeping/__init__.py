@@ -1,0 +1,1 @@
+"""The result folder: tables, provenance, decisions."""

@@ -1,0 +1,1 @@
+"""Tracks in, droplets out."""

@@ -1,0 +1,1 @@
+"""The inspection page, on this machine only."""

@@ -1,0 +1,1 @@
+"""Recording in, tracks out."""

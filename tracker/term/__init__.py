@@ -1,0 +1,1 @@
+"""Many recordings: a term's worth."""
