@@ -1,0 +1,511 @@
+"""`bench.toml` -> `Bench`: all that is known of cell, oil, air, site, camera and field, in SI, with uncertainties.
+
+The bench file lies beside the recording, in the nearest folder above it, or is named; `RECORDING_STEM.toml`
+beside the recording overrides single keys. A wrong key is one line: file, key, what was read, what is allowed.
+"""
+
+from __future__ import annotations
+
+import hashlib
+import json
+import tomllib
+from collections.abc import Mapping
+from dataclasses import dataclass, replace
+from pathlib import Path
+from typing import TYPE_CHECKING, Any, Literal
+
+from calibration.errors import CalibrationError, QuantityError
+from calibration.quantity import parse_quantity
+from calibration.scale import Scale, read_scale
+from physics.air import Air, moist_air
+from physics.droplet import Conditions
+from physics.errors import PhysicsError
+from physics.oil import oil_density
+from physics.site import local_gravity
+from tracker.errors import BenchError
+from tracker.records import Measured
+
+if TYPE_CHECKING:
+    from pydantic import BaseModel
+
+BENCH_NAME = "bench.toml"
+
+
+@dataclass(frozen=True, slots=True)
+class FieldSpec:
+    """Where the voltage over time comes from, as the bench file says."""
+
+    source: str  # list, log, lamp or motion
+    entries: tuple[tuple[float, float], ...] = ()  # (time in s, voltage in V)
+    log: Path | None = None
+    time_column: str = "time_s"
+    voltage_column: str = "voltage_v"
+    time_unit: str = "s"  # or "iso" for time stamps
+    voltage_unit: str = "V"
+    clock_offset: Measured | None = None  # s; None: to be fitted
+    lamp: tuple[int, int, int, int] | None = None  # x, y, width, height in px
+
+
+@dataclass(frozen=True, slots=True)
+class Bench:
+    """One bench at the time of one recording."""
+
+    name: str
+    files: tuple[str, ...]  # that were read, the bench file first
+    plate_gap: Measured  # m
+    voltage: Measured | None  # V, of the field-on state
+    oil_density: Measured  # kg/m^3, at the air's temperature
+    temperature: Measured  # K
+    pressure: Measured  # Pa
+    relative_humidity: Measured  # 0..1
+    viscosity: Measured  # Pa s; std: of the model or of the stated value
+    mean_free_path: Measured  # m
+    air_density: Measured  # kg/m^3
+    gravity: Measured  # m/s^2
+    slip: str
+    scale: Scale
+    exposure: Measured | None  # s; None: half the frame interval
+    down_deg: float | None  # gravity in the picture, from straight down toward +x; None: from the motion
+    frame_rate: float | None  # Hz, only for recordings without times
+    binning: int  # of the recording against the scale's picture
+    field: FieldSpec
+
+    @property
+    def conditions(self) -> Conditions:
+        """The bench as the laws want it."""
+        return Conditions(
+            temperature=self.temperature.value, viscosity=self.viscosity.value,
+            mean_free_path=self.mean_free_path.value, air_density=self.air_density.value,
+            oil_density=self.oil_density.value, gravity=self.gravity.value,
+            plate_gap=self.plate_gap.value, slip=self.slip,
+        )  # fmt: skip
+
+    @property
+    def digest(self) -> str:
+        """Hash of every value that a result depends on; paths and names do not count."""
+        plain = repr(replace(self, name="", files=(), field=replace(self.field, log=None)))
+        log = self.field.log.read_bytes() if self.field.log is not None and self.field.log.is_file() else b""
+        return hashlib.sha256(plain.encode() + log).hexdigest()
+
+
+# Key -> (unit inside, lowest, highest, words). Bounds are those of a droplet bench, wide enough for any that exists.
+_QUANTITIES: Mapping[str, tuple[str, float, float, str]] = {
+    "cell.plate_gap": ("m", 1e-5, 1.0, 'a length such as "6.00(2) mm", 10 um to 1 m'),
+    "cell.voltage": ("V", -1e5, 1e5, 'a voltage such as "260.0(5) V", not 0'),
+    "oil.density": ("kg/m^3", 2.0, 3e4, 'a density above air, such as "886(1) kg/m^3"'),
+    "oil.density_temperature": ("K", 200.0, 400.0, 'a temperature such as "20 degC"'),
+    "oil.expansion": ("1/K", 0.0, 5e-3, 'an expansion such as "7e-4 1/K"'),
+    "air.temperature": ("K", 253.15, 333.15, 'a temperature such as "22.0(3) degC", -20 to 60 degC'),
+    "air.pressure": ("Pa", 1e4, 1.2e5, 'a pressure such as "1008(1) hPa", 100 to 1200 hPa'),
+    "air.relative_humidity": ("", 0.0, 1.0, 'a share such as "45(5) percent", 0 to 100 percent'),
+    "air.viscosity": ("Pa s", 1e-6, 1e-4, 'a viscosity such as "1.83e-5 Pa s"'),
+    "site.gravity": ("m/s^2", 9.5, 10.0, 'an acceleration such as "9.8100(2) m/s^2", 9.5 to 10'),
+    "site.latitude": ("deg", -90.0, 90.0, 'a latitude such as "51.5 deg"'),
+    "site.altitude": ("m", -500.0, 9000.0, 'an altitude such as "80 m"'),
+    "camera.metres_per_pixel": ("m", 1e-9, 1e-3, 'a length such as "2.980(5) um"'),
+    "camera.exposure": ("s", 1e-6, 10.0, 'a time such as "20 ms"'),
+    "camera.frame_rate": ("Hz", 1e-3, 1e5, 'a rate such as "25 Hz"'),
+    "camera.down": ("deg", -180.0, 180.0, '"auto" or an angle such as "1.5 deg"'),
+    "field.clock_offset": ("s", -1e9, 1e9, '"auto" or a time such as "0.35 s"'),
+}
+
+
+def find_bench(recording: Path) -> Path | None:
+    """Find the bench file of a recording: beside it or in the nearest folder above.
+
+    Parameters
+    ----------
+    recording : Path
+        File or folder of pictures.
+
+    Returns
+    -------
+    bench : Path or None
+        None if no folder up to the root holds a ``bench.toml``.
+    """
+    for folder in recording.absolute().parents:
+        candidate = folder / BENCH_NAME
+        if candidate.is_file():
+            return candidate
+    return None
+
+
+def bench_text(bench: Path | str | None, *, recording: Path | None = None) -> dict[str, Any]:
+    """Read bench file and override as plain merged keys, without checking values.
+
+    Parameters
+    ----------
+    bench : Path, str or None
+        The bench file; None: found from the recording's place.
+    recording : Path, optional
+        Its ``STEM.toml`` overrides single keys.
+
+    Returns
+    -------
+    keys : dict
+        Sections of keys; each leaf is a tuple (value, file it came from); ``""`` holds the files read.
+
+    Raises
+    ------
+    BenchError
+        If there is no bench file, or one is no TOML.
+    """
+    main = Path(bench) if bench is not None else (find_bench(recording) if recording else None)
+    if main is None:
+        raise BenchError(str(recording or BENCH_NAME), "", "no bench file",
+                         f"a {BENCH_NAME} beside the recording or in a folder above, or --bench FILE")  # fmt: skip
+    files = [main]
+    if recording is not None:
+        own = recording.with_suffix(".toml") if recording.suffix else recording.parent / f"{recording.name}.toml"
+        if own.is_file() and own.absolute() != main.absolute():
+            files.append(own)
+    merged: dict[str, Any] = {"": files}
+    for file in files:
+        for section, keys in _read_toml(file).items():
+            if not isinstance(keys, dict):
+                raise BenchError(str(file), section, repr(keys), f"a section: [{section}]")
+            merged.setdefault(section, {}).update({key: (value, file) for key, value in keys.items()})
+    return merged
+
+
+def _read_toml(file: Path) -> dict[str, Any]:
+    try:
+        return tomllib.loads(file.read_text(encoding="utf-8"))
+    except FileNotFoundError as error:
+        raise BenchError(str(file), "", "no such file", "an existing bench file") from error
+    except (OSError, UnicodeDecodeError) as error:
+        raise BenchError(str(file), "", f"{error}", "a readable text file in UTF-8") from error
+    except tomllib.TOMLDecodeError as error:
+        raise BenchError(str(file), "", f"no TOML: {error}", 'lines such as plate_gap = "6.00(2) mm"') from error
+
+
+def _shape() -> type[BaseModel]:
+    """Build the pydantic model of the bench file; here, so that pydantic is imported only when needed."""
+    from pydantic import BaseModel, ConfigDict
+
+    class Section(BaseModel):
+        model_config = ConfigDict(extra="forbid", strict=True)
+
+    class Cell(Section):
+        plate_gap: str
+        voltage: str | None = None
+
+    class Oil(Section):
+        density: str
+        density_temperature: str | None = None
+        expansion: str | None = None
+
+    class AirSection(Section):
+        temperature: str
+        pressure: str
+        relative_humidity: str | None = None
+        viscosity: str | None = None
+        slip: Literal["kim2005", "davies1945", "allen_raabe1985", "hutchins1995", "millikan1923"] = "kim2005"
+
+    class Site(Section):
+        gravity: str | None = None
+        latitude: str | None = None
+        altitude: str | None = None
+
+    class Camera(Section):
+        scale: str | None = None
+        metres_per_pixel: str | None = None
+        exposure: str | None = None
+        down: str | None = None
+        frame_rate: str | None = None
+        binning: int = 1
+
+    class FieldSection(Section):
+        source: Literal["list", "log", "lamp", "motion"]
+        list: tuple[tuple[str, str], ...] | None = None
+        log: str | None = None
+        time_column: str | None = None
+        voltage_column: str | None = None
+        time_unit: str | None = None
+        voltage_unit: str | None = None
+        clock_offset: str | None = None
+        lamp: tuple[int, int, int, int] | None = None
+
+    class BenchFile(Section):
+        cell: Cell
+        oil: Oil
+        air: AirSection
+        site: Site
+        camera: Camera
+        field: FieldSection
+
+    return BenchFile
+
+
+class _Keys:
+    """Read access to merged keys: values as `Measured`, errors with the file that the key came from."""
+
+    def __init__(self, merged: dict[str, Any]) -> None:
+        self.files: list[Path] = merged[""]
+        self.sections = {name: keys for name, keys in merged.items() if name}
+
+    def raw(self, dotted: str) -> Any:
+        section, key = dotted.split(".")
+        return self.sections.get(section, {}).get(key, (None, None))[0]
+
+    def file(self, dotted: str) -> Path:
+        section, _, key = dotted.partition(".")
+        found = self.sections.get(section, {}).get(key, (None, None))[1]
+        return Path(found) if found is not None else self.files[0]
+
+    def error(self, dotted: str, found: object, allowed: str) -> BenchError:
+        return BenchError(str(self.file(dotted)), dotted, str(found), allowed)
+
+    def check_shape(self) -> None:
+        """Let pydantic look at names and types; its first complaint becomes a `BenchError`."""
+        from pydantic import ValidationError
+
+        plain = {s: {k: _tuples(v[0]) for k, v in keys.items()} for s, keys in self.sections.items()}
+        try:
+            _shape().model_validate(plain)
+        except ValidationError as error:
+            first = min(error.errors(), key=lambda e: e["type"] != "extra_forbidden")
+            dotted = ".".join(str(part) for part in first["loc"][:2])
+            raise self._explain(dotted, first) from None
+
+    def _explain(self, dotted: str, complaint: Mapping[str, Any]) -> BenchError:
+        if complaint["type"] == "extra_forbidden":
+            section = dotted.split(".")[0]
+            names = ", ".join(_names(section if "." in dotted else ""))
+            return self.error(dotted, "an unknown key", f"one of {names}")
+        if complaint["type"] == "missing":
+            words = _QUANTITIES[dotted][3] if dotted in _QUANTITIES else "this key is required"
+            return self.error(dotted, "nothing", words)
+        words = _QUANTITIES[dotted][3] if dotted in _QUANTITIES else str(complaint["msg"])
+        return self.error(dotted, repr(complaint["input"]), words)
+
+    def measured(self, dotted: str) -> Measured | None:
+        """One quantity, or None if the key is absent."""
+        text = self.raw(dotted)
+        if text is None:
+            return None
+        unit, low, high, words = _QUANTITIES[dotted]
+        try:
+            value, std = parse_quantity(text, unit)
+        except QuantityError as error:
+            raise self.error(dotted, f"{text!r} ({error.problem})", words) from error
+        if not low <= value <= high or (dotted == "cell.voltage" and value == 0):
+            raise self.error(dotted, repr(text), words)
+        return Measured(value, std, f"{self.file(dotted).name}: {dotted}")
+
+    def required(self, dotted: str) -> Measured:
+        value = self.measured(dotted)
+        if value is None:
+            raise self.error(dotted, "nothing", _QUANTITIES[dotted][3])
+        return value
+
+
+def _tuples(value: Any) -> Any:
+    return tuple(_tuples(item) for item in value) if isinstance(value, list) else value
+
+
+def _names(section: str) -> list[str]:
+    """Names that a section, or the whole file, allows."""
+    fields = _shape().model_fields
+    if section not in fields:
+        return sorted((*fields, "bench"))
+    model = fields[section].annotation
+    return sorted(model.model_fields) if model is not None and hasattr(model, "model_fields") else []
+
+
+def load_bench(bench: Path | str | None = None, *, recording: Path | str | None = None) -> Bench:
+    """Read the bench of a recording.
+
+    Parameters
+    ----------
+    bench : Path or str, optional
+        The bench file; if not given, found beside or above the recording.
+    recording : Path or str, optional
+        The recording; its own ``STEM.toml`` overrides single keys.
+
+    Returns
+    -------
+    bench : Bench
+        Every value in SI with one standard uncertainty and the place it came from.
+
+    Raises
+    ------
+    BenchError
+        File, key, what was read, what is allowed.
+    """
+    keys = _Keys(bench_text(bench, recording=Path(recording) if recording is not None else None))
+    label = keys.sections.pop("bench", {})
+    keys.check_shape()
+    air_values = _air(keys)
+    temperature = air_values["temperature"]
+    spec = _field(keys)
+    return Bench(
+        name=str(label.get("name", (keys.files[0].absolute().parent.name, None))[0]),
+        files=tuple(str(file) for file in keys.files),
+        plate_gap=keys.required("cell.plate_gap"),
+        voltage=_voltage(keys, spec),
+        oil_density=_oil(keys, temperature, air_values["air_density"].value),
+        gravity=_gravity(keys),
+        slip=keys.raw("air.slip") or "kim2005",
+        scale=_scale(keys, recording),
+        exposure=keys.measured("camera.exposure"),
+        down_deg=None if keys.raw("camera.down") in (None, "auto") else keys.required("camera.down").value,
+        frame_rate=None if keys.raw("camera.frame_rate") is None else keys.required("camera.frame_rate").value,
+        binning=_binning(keys),
+        field=spec,
+        **air_values,
+    )
+
+
+def _air(keys: _Keys) -> dict[str, Measured]:
+    """Air of the cell: what was stated and what follows from it."""
+    temperature, pressure = keys.required("air.temperature"), keys.required("air.pressure")
+    humidity = keys.measured("air.relative_humidity") or Measured(0.0)
+    stated = keys.measured("air.viscosity")
+    try:
+        air: Air = moist_air(temperature.value, pressure.value, relative_humidity=humidity.value,
+                             viscosity=None if stated is None else stated.value)  # fmt: skip
+    except PhysicsError as error:
+        raise keys.error("air.temperature", error, "air of a laboratory") from error
+    viscosity = stated or Measured(air.viscosity, air.viscosity * air.viscosity_std_rel, air.viscosity_origin)
+    return {
+        "temperature": temperature, "pressure": pressure, "relative_humidity": humidity, "viscosity": viscosity,
+        "mean_free_path": Measured(air.mean_free_path, 0.0, "ISO 15900"),
+        "air_density": Measured(air.density, 0.0, "CIPM-2007"),
+    }  # fmt: skip
+
+
+def _oil(keys: _Keys, temperature: Measured, air_density: float) -> Measured:
+    stated = keys.required("oil.density")
+    at, expansion = keys.measured("oil.density_temperature"), keys.measured("oil.expansion")
+    if stated.value <= air_density:
+        raise keys.error("oil.density", repr(keys.raw("oil.density")), _QUANTITIES["oil.density"][3])
+    if at is None or expansion is None:
+        return stated
+    warm = oil_density(stated.value, density_temperature=at.value, temperature=temperature.value,
+                       expansion=expansion.value)  # fmt: skip
+    by_expansion = stated.value * abs(temperature.value - at.value) * expansion.std
+    by_temperature = stated.value * expansion.value * at.std
+    std = (stated.std**2 + by_expansion**2 + by_temperature**2) ** 0.5
+    return Measured(warm, std, stated.origin)
+
+
+def _gravity(keys: _Keys) -> Measured:
+    stated = keys.measured("site.gravity")
+    if stated is not None:
+        return stated
+    latitude, altitude = keys.measured("site.latitude"), keys.measured("site.altitude")
+    if latitude is None or altitude is None:
+        raise keys.error("site.gravity", "nothing", 'gravity = "9.8100(2) m/s^2", or latitude and altitude')
+    # Gravity anomalies of the ground, which the formula leaves out, stay below 1e-3 m/s^2 nearly everywhere.
+    return Measured(local_gravity(latitude.value, altitude.value), 5e-4, "latitude and altitude")
+
+
+def _scale(keys: _Keys, recording: Path | str | None) -> Scale:
+    stated, name = keys.measured("camera.metres_per_pixel"), keys.raw("camera.scale")
+    if stated is not None and name is not None:
+        raise keys.error("camera.scale", "scale and metres_per_pixel", "one of the two")
+    if stated is not None:
+        return Scale.from_metres_per_pixel(stated.value, stated.std)
+    path = keys.file("camera.scale").parent / name if name is not None else find_scale(keys, recording)
+    if path is None:
+        raise keys.error("camera.scale", "nothing", 'scale = "scale.json" or metres_per_pixel = "2.980(5) um"')
+    try:
+        return read_scale(path)
+    except CalibrationError as error:
+        raise keys.error("camera.scale", error, "a file made by `fallrise scale`") from error
+
+
+def find_scale(keys: _Keys, recording: Path | str | None) -> Path | None:
+    """Find the scale by place: the nearest folder above with ``scale*.json``, the last one before the recording.
+
+    Parameters
+    ----------
+    keys : _Keys
+        For the bench file's folder where no recording is given.
+    recording : Path, str or None
+        The recording; its file date decides between several scales.
+
+    Returns
+    -------
+    scale : Path or None
+        The file whose picture is the newest that is not newer than the recording, or else the oldest.
+    """
+    start = Path(recording).absolute() if recording is not None else keys.files[0].absolute()
+    for folder in start.parents:
+        scales = sorted(folder.glob("scale*.json"))
+        if scales:
+            return _valid_scale(scales, start.stat().st_mtime if start.exists() else float("inf"))
+    return None
+
+
+def _valid_scale(scales: list[Path], moment: float) -> Path:
+    dated = sorted((_scale_time(path), path) for path in scales)
+    before = [path for time, path in dated if time <= moment]
+    return before[-1] if before else dated[0][1]
+
+
+def _scale_time(path: Path) -> float:
+    """POSIX time at which a scale was made: its own date if it has one, else that of the file."""
+    from datetime import datetime
+
+    try:
+        text = json.loads(path.read_text(encoding="utf-8")).get("date")
+        return datetime.fromisoformat(text).timestamp() if text else path.stat().st_mtime
+    except (OSError, ValueError, AttributeError):
+        return path.stat().st_mtime
+
+
+def _binning(keys: _Keys) -> int:
+    binning = keys.raw("camera.binning")
+    if binning is not None and not 1 <= binning <= 16:
+        raise keys.error("camera.binning", binning, "a whole number of pixels joined along each side, 1 to 16")
+    return binning or 1
+
+
+def _voltage(keys: _Keys, spec: FieldSpec) -> Measured | None:
+    voltage = keys.measured("cell.voltage")
+    if voltage is None and spec.source in ("lamp", "motion"):
+        raise keys.error("cell.voltage", "nothing", f"{_QUANTITIES['cell.voltage'][3]}; {spec.source} needs it")
+    return voltage
+
+
+def _field(keys: _Keys) -> FieldSpec:
+    """Voltage source; what the chosen source needs must be there."""
+    source = keys.raw("field.source")
+    needed = {"list": "list", "log": "log", "lamp": "lamp"}.get(source)
+    if needed and keys.raw(f"field.{needed}") is None:
+        raise keys.error(f"field.{needed}", "nothing", f'this key, since source = "{source}"')
+    offset = keys.raw("field.clock_offset")
+    log = keys.raw("field.log")
+    lamp = keys.raw("field.lamp")
+    if lamp is not None and (min(lamp) < 0 or min(lamp[2:]) < 1):
+        raise keys.error("field.lamp", lamp, "x, y, width, height in px, such as [8, 8, 16, 16]")
+    log_path = keys.file("field.log").parent / log if log is not None else None
+    if source == "log" and log_path is not None and not log_path.is_file():
+        raise keys.error("field.log", f"{log!r}: no such file", "an existing CSV file")
+    return FieldSpec(
+        source=source,
+        entries=_entries(keys),
+        log=log_path,
+        time_column=keys.raw("field.time_column") or "time_s",
+        voltage_column=keys.raw("field.voltage_column") or "voltage_v",
+        time_unit=keys.raw("field.time_unit") or "s",
+        voltage_unit=keys.raw("field.voltage_unit") or "V",
+        clock_offset=None if offset in (None, "auto") else keys.required("field.clock_offset"),
+        lamp=None if lamp is None else tuple(lamp),
+    )
+
+
+def _entries(keys: _Keys) -> tuple[tuple[float, float], ...]:
+    words = 'pairs such as [["0 s", "0 V"], ["2 s", "260 V"]], times increasing'
+    entries = []
+    for time_text, volt_text in keys.raw("field.list") or ():
+        try:
+            entries.append((parse_quantity(time_text, "s")[0], parse_quantity(volt_text, "V")[0]))
+        except QuantityError as error:
+            raise keys.error("field.list", error, words) from error
+    if any(b[0] <= a[0] for a, b in zip(entries, entries[1:], strict=False)):
+        raise keys.error("field.list", "times that do not increase", words)
+    return tuple(entries)
+

@@ -1,0 +1,205 @@
+"""Parse, call, print: the commands of `fallrise`. All work lies in the rooms below."""
+
+from __future__ import annotations
+
+import json
+import sys
+import traceback
+from pathlib import Path
+from typing import TYPE_CHECKING, Annotated, Any
+
+import typer
+
+from physics.errors import FallriseError
+
+if TYPE_CHECKING:
+    from tracker.keeping.store import Result
+
+app = typer.Typer(
+    name="fallrise",
+    help="Fall speed, radius and charge of oil droplets from microscope recordings, with uncertainties that hold.",
+    no_args_is_help=True, add_completion=False, pretty_exceptions_enable=False, rich_markup_mode=None,
+)  # fmt: skip
+
+BenchOption = Annotated[Path | None, typer.Option("--bench", help="Bench file; default: beside or above the recording.")]
+JsonOption = Annotated[bool, typer.Option("--json", help="Print the result for machines.")]
+
+
+@app.callback()
+def _options(
+    debug: Annotated[bool, typer.Option("--debug", help="Show a traceback when something fails.")] = False,
+) -> None:
+    """Take the options that hold for every command."""
+
+
+def _example(line: str) -> str:
+    """Give the epilogue of a command's help: one worked example."""
+    return f"Example:  {line}"
+
+
+@app.command(epilog=_example("fallrise measure sample_videos/steady.avi --bench sample_videos/bench.toml"))
+def measure(
+    recordings: Annotated[list[Path], typer.Argument(help="Video files or folders of pictures.")],
+    bench: BenchOption = None,
+    out: Annotated[Path | None, typer.Option("--out", help="Result folder; of several recordings: the folder "
+                                             "for their result folders.")] = None,
+    roi: Annotated[str | None, typer.Option("--roi", help="Part of the picture, X,Y,W,H in px.")] = None,
+    start: Annotated[float | None, typer.Option("--from", help="Leave out frames before this time in s.")] = None,
+    end: Annotated[float | None, typer.Option("--to", help="Leave out frames after this time in s.")] = None,
+    tables: Annotated[str, typer.Option("--tables", help="Format of the tracks: csv or parquet.")] = "csv",
+    as_json: JsonOption = False,
+) -> None:  # fmt: skip
+    """Measure recordings: droplets with fall speed, radius and charge, in a result folder beside each."""
+    from tracker.measure import measure as measure_one
+    from tracker.settings import make_settings
+
+    settings = make_settings(roi=roi, start=start, end=end, tables=tables)
+    results, failures = [], []
+    for recording in recordings:
+        folder = None if out is None else out if len(recordings) == 1 else out / f"{recording.stem}.fallrise"
+        try:
+            with _progress(recording.name, hidden=as_json) as progress:
+                result = measure_one(recording, bench=bench, out=folder, settings=settings, progress=progress)
+        except FallriseError as error:
+            if len(recordings) == 1:
+                raise
+            failures.append(error)
+            _complain(error)
+            continue
+        results.append(result)
+        if not as_json:
+            _show_result(result)
+    if as_json:
+        _print_json([_result_json(result) for result in results], single=len(recordings) == 1)
+    if failures:
+        raise typer.Exit(max(error.exit_status for error in failures))
+
+
+@app.command(epilog=_example("fallrise evaluate sample_videos/steady.fallrise"))
+def evaluate(
+    results: Annotated[list[Path], typer.Argument(help="Result folders.")],
+    bench: BenchOption = None,
+    as_json: JsonOption = False,
+) -> None:
+    """Work out speeds, charges and verdicts again from stored tracks, the present bench and decisions; no video."""
+    from tracker.evaluate import evaluate_result
+
+    done = [evaluate_result(folder, bench=bench) for folder in results]
+    if as_json:
+        _print_json([_result_json(result) for result in done], single=len(results) == 1)
+        return
+    for result in done:
+        _show_result(result)
+
+
+@app.command(epilog=_example("fallrise overlay sample_videos/steady.fallrise --frames 0:200 --out tracks.mp4"))
+def overlay(
+    result: Annotated[Path, typer.Argument(help="Result folder.")],
+    frames: Annotated[str | None, typer.Option("--frames", help="A:B, first and one past the last frame, or one "
+                                               "frame; default: all.")] = None,
+    out: Annotated[Path | None, typer.Option("--out", help=".png for one frame, .mp4 or .avi for a video, a folder "
+                                             "for a PNG of each frame; default: overlay.mp4 in the result.")] = None,
+    recording: Annotated[Path | None, typer.Option("--recording", help="The video, if it was moved.")] = None,
+) -> None:  # fmt: skip
+    """Draw the tracks over the recording; the verdict can be told by the shape of the mark."""
+    from tracker.showing.overlay import write_overlay
+
+    with _progress("overlay") as progress:
+        written = write_overlay(result, frames=frames, out=out, recording=recording, progress=progress)
+    typer.echo(str(written))
+
+
+@app.command(epilog=_example('fallrise decide clip.fallrise --droplet 7 --verdict reject --reason "two droplets"'))
+def decide(
+    result: Annotated[Path, typer.Argument(help="Result folder.")],
+    droplet: Annotated[int, typer.Option("--droplet", help="Number of the droplet.")],
+    verdict: Annotated[str, typer.Option("--verdict", help="keep, doubt, reject, split, trim, join, reset or undo.")],
+    reason: Annotated[str, typer.Option("--reason", help="Why, in your words.")] = "",
+    at: Annotated[float | None, typer.Option("--at", help="Time in s at which to split.")] = None,
+    start: Annotated[float | None, typer.Option("--from", help="Trim: keep from this time in s.")] = None,
+    end: Annotated[float | None, typer.Option("--to", help="Trim: keep to this time in s.")] = None,
+    other: Annotated[int | None, typer.Option("--with", help="Join: the other droplet.")] = None,
+    as_json: JsonOption = False,
+) -> None:
+    """Keep a person's decision on a droplet for good, and evaluate again."""
+    from tracker.evaluate import decide_and_evaluate
+
+    done = decide_and_evaluate(result, droplet=droplet, verdict=verdict, reason=reason, at=at, start=start, end=end,
+                               other=other)  # fmt: skip
+    if as_json:
+        _print_json([_result_json(done)], single=True)
+    else:
+        _show_result(done)
+
+
+def _progress(label: str, *, hidden: bool = False) -> Any:
+    """Give a progress bar on a terminal and nothing when piped; a callable (done, total) inside a context."""
+    from tracker.showing.terminal import progress_bar
+
+    return progress_bar(label, hidden=hidden or not sys.stderr.isatty())
+
+
+def _show_result(result: Result) -> None:
+    """Print the droplet table, what to know about it, and where the files are."""
+    from tracker.showing.terminal import show_result
+
+    show_result(result)
+
+
+def _result_json(result: Result) -> dict[str, Any]:
+    """Give a result as plain values."""
+    droplets = json.loads(result.droplets.to_json(orient="records", double_precision=15))
+    recording = {key: value for key, value in result.recording.items() if key != "frame_times_s"}
+    return {"result": str(result.folder), "recording": recording, "droplets": droplets}
+
+
+def _print_json(items: list[Any], *, single: bool) -> None:
+    typer.echo(json.dumps(items[0] if single and items else items, indent=1, default=str))
+
+
+def _complain(error: FallriseError) -> None:
+    """Say what failed in one line."""
+    line = " ".join(str(error).split())
+    typer.echo(f"fallrise: {line}", err=True)
+
+
+def main(arguments: list[str] | None = None) -> None:
+    """Run a command; the process ends with the exit status of the design.
+
+    Parameters
+    ----------
+    arguments : list of str, optional
+        Of the command line; `sys.argv` if not given.
+    """
+    given = list(sys.argv[1:] if arguments is None else arguments)
+    debug = "--debug" in given
+    given = [word for word in given if word != "--debug"]
+    sys.exit(_run(given, debug=debug))
+
+
+def _run(arguments: list[str], *, debug: bool) -> int:
+    import click
+
+    try:
+        status = app(args=arguments, prog_name="fallrise", standalone_mode=False)
+        return status if isinstance(status, int) else 0
+    except FallriseError as error:
+        if debug:
+            traceback.print_exc()
+        _complain(error)
+        return error.exit_status
+    except click.ClickException as error:
+        error.show()
+        return 2
+    except (KeyboardInterrupt, click.Abort):
+        typer.echo("fallrise: stopped; finished work is kept", err=True)
+        return 130
+    except Exception as error:
+        if debug:
+            traceback.print_exc()
+        typer.echo(f"fallrise: unexpected {type(error).__name__}: {error}; run again with --debug and report it", err=True)
+        return 1
+
+
+if __name__ == "__main__":
+    main()
