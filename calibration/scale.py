@@ -26,9 +26,9 @@ _KEYS |= {f"metres_per_pixel_{axis}_std": f"metres_per_pixel_{axis}_std" for axi
 class Distortion:
     """What bends the picture of the pattern.
 
-    A point at distance rho from the centre, in units of `radius_px`, is moved to 1 + `radial` rho^2 times that
-    distance to undo the lens. The lens moves with the camera, so its correction holds for the droplets too; the
-    tilt of the pattern need not be theirs, so it is never corrected and stands in the uncertainty of the scale.
+    A point at distance rho from the centre, in units of `radius_px`, is moved to 1 + `radial` rho^2 times
+    that distance to undo the lens. The lens moves with the camera, so its correction holds for the droplets
+    too; the tilt of the pattern need not be theirs, so it is never corrected and stands in the uncertainty.
     """
 
     radial: float = 0.0  # < 0 undoes pincushion, > 0 undoes barrel distortion
@@ -210,10 +210,17 @@ def binned(scale: Scale, binning: int) -> Scale:
             perspective_x=bend.perspective_x * binning,
             perspective_y=bend.perspective_y * binning,
         )
-    larger = {f"metres_per_pixel_{axis}{end}": getattr(scale, f"metres_per_pixel_{axis}{end}") * binning
-              for axis in "xy" for end in ("", "_std")}  # fmt: skip
-    smaller = {"width_px": scale.width_px // binning, "height_px": scale.height_px // binning}
-    return replace(scale, distortion=bend, residual_px=scale.residual_px / binning, **smaller, **larger)
+    return replace(
+        scale,
+        distortion=bend,
+        width_px=scale.width_px // binning,
+        height_px=scale.height_px // binning,
+        residual_px=scale.residual_px / binning,
+        metres_per_pixel_x=scale.metres_per_pixel_x * binning,
+        metres_per_pixel_x_std=scale.metres_per_pixel_x_std * binning,
+        metres_per_pixel_y=scale.metres_per_pixel_y * binning,
+        metres_per_pixel_y_std=scale.metres_per_pixel_y_std * binning,
+    )
 
 
 def fit_recording(scale: Scale, *, width: int, height: int, binning: int | None = None) -> Scale:
@@ -267,7 +274,7 @@ def fit_recording(scale: Scale, *, width: int, height: int, binning: int | None 
     if max(spare_x, spare_y) >= binning and scale.distortion is not None and scale.distortion.corrected:
         raise ScaleError(
             name,
-            f"{told} are a part of the picture's {picture} px, and the lens correction has to know which part; "
+            f"{told} are a part of the picture's {picture} px, and the lens correction must know which part; "
             f"correct camera.binning or take a picture with the recording's crop",
         )
     return binned(scale, binning)
