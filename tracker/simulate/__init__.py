@@ -1,0 +1,16 @@
+"""Recordings with known truth: droplets, camera and file of a simulated bench."""
+
+from tracker.simulate.make import Logger, Simulated, bench_text, simulate, write_bench, write_log
+from tracker.simulate.scene import Scene, read_scene, scene_from_mapping
+
+__all__ = [
+    "Logger",
+    "Scene",
+    "Simulated",
+    "bench_text",
+    "read_scene",
+    "scene_from_mapping",
+    "simulate",
+    "write_bench",
+    "write_log",
+]
