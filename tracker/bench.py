@@ -11,13 +11,15 @@ import json
 import tomllib
 from collections.abc import Mapping
 from dataclasses import dataclass, replace
+from itertools import pairwise
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, Literal
 
 from calibration.errors import CalibrationError, QuantityError
 from calibration.quantity import parse_quantity
-from calibration.scale import Scale, read_scale
+from calibration.scale import Scale, fit_recording, read_scale
 from physics.air import Air, moist_air
+from physics.drag import slip_model
 from physics.droplet import Conditions
 from physics.errors import PhysicsError
 from physics.oil import oil_density
@@ -67,7 +69,8 @@ class Bench:
     exposure: Measured | None  # s; None: half the frame interval
     down_deg: float | None  # gravity in the picture, from straight down toward +x; None: from the motion
     frame_rate: float | None  # Hz, only for recordings without times
-    binning: int  # of the recording against the scale's picture
+    binning: int | None  # of the recording against the scale's picture; None: not stated
+    voltage_rel_std: float  # of every field-on voltage, whatever its source
     field: FieldSpec
 
     @property
@@ -79,6 +82,48 @@ class Bench:
             oil_density=self.oil_density.value, gravity=self.gravity.value,
             plate_gap=self.plate_gap.value, slip=self.slip,
         )  # fmt: skip
+
+    @property
+    def shared_inputs(self) -> dict[str, Measured]:
+        """Inputs common to all droplets, under the names of `physics.budget.SHARED_INPUTS`.
+
+        Values in SI; the models of viscosity and slip count as factors of value 1.
+        """
+        model = slip_model(self.slip)
+        per_pixel = self.scale.metres_per_pixel_y
+        voltage = self.voltage.value if self.voltage is not None else max((abs(v) for _, v in self.field.entries), default=1.0)
+        return {
+            "scale": Measured(per_pixel, per_pixel * self.scale.relative_std, self.scale.picture or "camera.metres_per_pixel"),
+            "plate_gap": self.plate_gap,
+            "voltage": Measured(abs(voltage), abs(voltage) * self.voltage_rel_std, "cell.voltage or field.list"),
+            "temperature": self.temperature,
+            "pressure": self.pressure,
+            "relative_humidity": self.relative_humidity,
+            "viscosity_model": Measured(1.0, self.viscosity.std / self.viscosity.value, self.viscosity.origin),
+            "slip_model": Measured(1.0, model.std_rel, model.source),
+            "oil_density": self.oil_density,
+            "gravity": self.gravity,
+        }  # fmt: skip
+
+    def fitted_to(self, width: int, height: int) -> Bench:
+        """Give the bench for a recording of a size, after comparing it with the scale's picture.
+
+        Parameters
+        ----------
+        width, height : int
+            Of the recording in px.
+
+        Returns
+        -------
+        bench : Bench
+            Its scale is that of the recording's own pixels.
+
+        Raises
+        ------
+        ScaleError
+            If the recording is binned or cropped and ``camera.binning`` does not say so.
+        """
+        return replace(self, scale=fit_recording(self.scale, width=width, height=height, binning=self.binning))
 
     @property
     def digest(self) -> str:
@@ -95,8 +140,8 @@ _QUANTITIES: Mapping[str, tuple[str, float, float, str]] = {
     "oil.density": ("kg/m^3", 2.0, 3e4, 'a density above air, such as "886(1) kg/m^3"'),
     "oil.density_temperature": ("K", 200.0, 400.0, 'a temperature such as "20 degC"'),
     "oil.expansion": ("1/K", 0.0, 5e-3, 'an expansion such as "7e-4 1/K"'),
-    "air.temperature": ("K", 253.15, 333.15, 'a temperature such as "22.0(3) degC", -20 to 60 degC'),
-    "air.pressure": ("Pa", 1e4, 1.2e5, 'a pressure such as "1008(1) hPa", 100 to 1200 hPa'),
+    "air.temperature": ("K", 273.15, 323.15, 'a temperature such as "22.0(3) degC", 0 to 50 degC'),
+    "air.pressure": ("Pa", 1e4, 1.1e5, 'a pressure such as "1008(1) hPa", 100 to 1100 hPa'),
     "air.relative_humidity": ("", 0.0, 1.0, 'a share such as "45(5) percent", 0 to 100 percent'),
     "air.viscosity": ("Pa s", 1e-6, 1e-4, 'a viscosity such as "1.83e-5 Pa s"'),
     "site.gravity": ("m/s^2", 9.5, 10.0, 'an acceleration such as "9.8100(2) m/s^2", 9.5 to 10'),
@@ -213,7 +258,7 @@ def _shape() -> type[BaseModel]:
         exposure: str | None = None
         down: str | None = None
         frame_rate: str | None = None
-        binning: int = 1
+        binning: int | None = None
 
     class FieldSection(Section):
         source: Literal["list", "log", "lamp", "motion"]
@@ -339,11 +384,13 @@ def load_bench(bench: Path | str | None = None, *, recording: Path | str | None 
     air_values = _air(keys)
     temperature = air_values["temperature"]
     spec = _field(keys)
+    voltage = _voltage(keys, spec)
     return Bench(
         name=str(label.get("name", (keys.files[0].absolute().parent.name, None))[0]),
         files=tuple(str(file) for file in keys.files),
         plate_gap=keys.required("cell.plate_gap"),
-        voltage=_voltage(keys, spec),
+        voltage=voltage,
+        voltage_rel_std=_entries(keys)[1] or (abs(voltage.std / voltage.value) if voltage else 0.0),
         oil_density=_oil(keys, temperature, air_values["air_density"].value),
         gravity=_gravity(keys),
         slip=keys.raw("air.slip") or "kim2005",
@@ -367,7 +414,7 @@ def _air(keys: _Keys) -> dict[str, Measured]:
                              viscosity=None if stated is None else stated.value)  # fmt: skip
     except PhysicsError as error:
         raise keys.error("air.temperature", error, "air of a laboratory") from error
-    viscosity = stated or Measured(air.viscosity, air.viscosity * air.viscosity_std_rel, air.viscosity_origin)
+    viscosity = stated or Measured(air.viscosity, air.viscosity * air.viscosity_rel_std, "ISO 15900 and moist-air mixture")
     return {
         "temperature": temperature, "pressure": pressure, "relative_humidity": humidity, "viscosity": viscosity,
         "mean_free_path": Measured(air.mean_free_path, 0.0, "ISO 15900"),
@@ -456,11 +503,11 @@ def _scale_time(path: Path) -> float:
         return path.stat().st_mtime
 
 
-def _binning(keys: _Keys) -> int:
-    binning = keys.raw("camera.binning")
+def _binning(keys: _Keys) -> int | None:
+    binning: int | None = keys.raw("camera.binning")
     if binning is not None and not 1 <= binning <= 16:
         raise keys.error("camera.binning", binning, "a whole number of pixels joined along each side, 1 to 16")
-    return binning or 1
+    return binning
 
 
 def _voltage(keys: _Keys, spec: FieldSpec) -> Measured | None:
@@ -486,7 +533,7 @@ def _field(keys: _Keys) -> FieldSpec:
         raise keys.error("field.log", f"{log!r}: no such file", "an existing CSV file")
     return FieldSpec(
         source=source,
-        entries=_entries(keys),
+        entries=_entries(keys)[0],
         log=log_path,
         time_column=keys.raw("field.time_column") or "time_s",
         voltage_column=keys.raw("field.voltage_column") or "voltage_v",
@@ -497,15 +544,18 @@ def _field(keys: _Keys) -> FieldSpec:
     )
 
 
-def _entries(keys: _Keys) -> tuple[tuple[float, float], ...]:
+def _entries(keys: _Keys) -> tuple[tuple[tuple[float, float], ...], float]:
+    """Times and voltages of the list, and the largest relative uncertainty among its voltages."""
     words = 'pairs such as [["0 s", "0 V"], ["2 s", "260 V"]], times increasing'
-    entries = []
+    entries, rel_std = [], 0.0
     for time_text, volt_text in keys.raw("field.list") or ():
         try:
-            entries.append((parse_quantity(time_text, "s")[0], parse_quantity(volt_text, "V")[0]))
+            time, (volts, std) = parse_quantity(time_text, "s")[0], parse_quantity(volt_text, "V")
         except QuantityError as error:
             raise keys.error("field.list", error, words) from error
-    if any(b[0] <= a[0] for a, b in zip(entries, entries[1:], strict=False)):
+        entries.append((time, volts))
+        rel_std = max(rel_std, std / abs(volts) if volts else 0.0)
+    if any(b[0] <= a[0] for a, b in pairwise(entries)):
         raise keys.error("field.list", "times that do not increase", words)
-    return tuple(entries)
+    return tuple(entries), rel_std
 

@@ -102,7 +102,7 @@ def overlay(
     recording: Annotated[Path | None, typer.Option("--recording", help="The video, if it was moved.")] = None,
 ) -> None:  # fmt: skip
     """Draw the tracks over the recording; the verdict can be told by the shape of the mark."""
-    from tracker.showing.overlay import write_overlay
+    from tracker.export import write_overlay
 
     with _progress("overlay") as progress:
         written = write_overlay(result, frames=frames, out=out, recording=recording, progress=progress)

@@ -1,0 +1,132 @@
+"""Speeds, charges and verdicts again from stored tracks, with the present bench and decisions; no video."""
+
+from __future__ import annotations
+
+from dataclasses import replace
+from pathlib import Path
+from typing import Any
+
+from tracker.bench import Bench, load_bench
+from tracker.errors import BenchError, ResultError
+from tracker.keeping.decisions import append_decision, make_decision, read_decisions
+from tracker.keeping.store import Result, read_result, write_result
+from tracker.motion.droplets import evaluate_droplets
+from tracker.provenance import assemble, field_from_json, recording_from_json, tracks_from_table
+from tracker.records import Field, Recording, Settings, Tracks
+
+
+def evaluate_result(folder: Path | str, *, bench: Bench | Path | str | None = None) -> Result:
+    """Evaluate a result again and write it in place.
+
+    Parameters
+    ----------
+    folder : Path or str
+        Result folder.
+    bench : Bench, Path or str, optional
+        The bench or its file; if not given, the file that was used before, or one found by the recording's place.
+
+    Returns
+    -------
+    result : Result
+        As written.
+
+    Raises
+    ------
+    FallriseError
+        If the folder, the bench or a decision cannot be used; the old result stays.
+    """
+    folder = Path(folder)
+    old = read_result(folder)
+    try:
+        recording = recording_from_json(old.recording, (folder / old.recording["path"]).resolve())
+        settings = _settings(old.recording["settings"])
+        tracks = tracks_from_table(old.tracks)
+    except (KeyError, TypeError, ValueError) as error:
+        raise ResultError(str(folder), f"is damaged ({error}); measure the recording again") from error
+    loaded = bench if isinstance(bench, Bench) else _present_bench(old, recording, bench)
+    loaded = loaded.fitted_to(recording.width, recording.height)
+    field = _field(old, tracks, recording, loaded)
+    evaluation = evaluate_droplets(
+        tracks, recording, field, loaded, settings=settings, decisions=read_decisions(folder),
+        cuts=old.recording["seeing"].get("cuts", ()),
+    )  # fmt: skip
+    seeing = {"report": old.recording["seeing"], "warnings": tuple(old.recording["seeing"].get("warnings", ()))}
+    result = assemble(evaluation, recording=recording, field=field, bench=loaded, settings=settings, seeing=seeing,
+                      folder=folder)  # fmt: skip
+    return write_result(result, folder, tables=settings.tables)
+
+
+def decide_and_evaluate(folder: Path | str, **decision: Any) -> Result:
+    """Append a person's decision to a result and evaluate it again.
+
+    Parameters
+    ----------
+    folder : Path or str
+        Result folder.
+    **decision
+        As `tracker.keeping.decisions.make_decision` takes it.
+
+    Returns
+    -------
+    result : Result
+        With the decision obeyed.
+    """
+    made = make_decision(read_result(folder), **decision)
+    append_decision(Path(folder), made)
+    return evaluate_result(folder)
+
+
+def _settings(stored: dict[str, Any]) -> Settings:
+    known = {key: tuple(value) if isinstance(value, list) else value for key, value in stored.items()}
+    return replace(Settings(), **known)
+
+
+def _present_bench(old: Result, recording: Recording, bench: Path | str | None) -> Bench:
+    """The bench as its file says now: the named one, the one used before, or the one by the recording's place."""
+    stored = [Path(file) for file in old.recording["bench"]["files"]]
+    if bench is None and stored and stored[0].is_file():
+        bench = stored[0]
+    try:
+        return load_bench(bench, recording=recording.path)
+    except BenchError as error:
+        if bench is None:
+            raise ResultError(str(old.folder), f"its bench file is gone; name one with --bench ({error})") from error
+        raise
+
+
+def _field(old: Result, tracks: Tracks, recording: Recording, bench: Bench) -> Field:
+    """The field as the present bench gives it; a lamp's toggles are those seen before, at the present voltage."""
+    from tracker.voltage import field_of_tracks, known_field
+
+    spec = bench.field
+    stored = field_from_json(old.recording["field"])
+    if spec.source == "lamp":
+        if stored.source != "lamp" or bench.voltage is None:
+            raise ResultError(str(old.folder), "was measured without the lamp; measure the recording again")
+        return scaled_field(stored, bench.voltage.value)
+    if spec.source == "list" or (spec.source == "log" and spec.clock_offset is not None):
+        return known_field(spec.source, recording, bench)
+    return field_of_tracks(tracks, recording, bench)
+
+
+def scaled_field(field: Field, voltage: float) -> Field:
+    """Give a two-state field at another field-on voltage.
+
+    Parameters
+    ----------
+    field : Field
+        On and off, as a lamp gives it.
+    voltage : float
+        In V, of the field-on state.
+
+    Returns
+    -------
+    field : Field
+        The same toggles; the largest voltage becomes the given one.
+    """
+    was = max((s.voltage for s in field.segments), key=abs, default=0.0)
+    if was in (0.0, voltage):
+        return field
+    factor = voltage / was
+    segments = tuple(replace(s, voltage=s.voltage * factor) for s in field.segments)
+    return replace(field, segments=segments, knot_volts=field.knot_volts * factor)

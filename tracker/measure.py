@@ -1,0 +1,99 @@
+"""The main job: one recording -> its result folder. Reads top to bottom like the design.
+
+bench -> seeing -> voltage and links -> droplets -> tables. Heavy libraries are imported when the work begins.
+"""
+
+from __future__ import annotations
+
+import os
+from collections.abc import Callable
+from pathlib import Path
+from typing import TYPE_CHECKING
+
+from tracker.errors import RecordingError, ResultError
+
+if TYPE_CHECKING:
+    from tracker.bench import Bench
+    from tracker.keeping.store import Result
+    from tracker.records import Settings
+
+Progress = Callable[[float, float], None]
+
+
+def measure(
+    path: Path | str,
+    *,
+    bench: Bench | Path | str | None = None,
+    out: Path | str | None = None,
+    settings: Settings | None = None,
+    progress: Progress | None = None,
+) -> Result:
+    """Measure one recording.
+
+    Parameters
+    ----------
+    path : Path or str
+        Video file, multi-page TIFF, or folder of pictures.
+    bench : Bench, Path or str, optional
+        The bench or its file; if not given, found beside or above the recording.
+    out : Path or str, optional
+        Result folder; ``STEM.fallrise`` beside the recording if not given. Decisions in it are kept and obeyed.
+    settings : Settings, optional
+        Part of picture and time, table format, false-alarm rate.
+    progress : callable, optional
+        Takes (done, total) in frames; total 0 where the end is not known.
+
+    Returns
+    -------
+    result : Result
+        Tables as DataFrames and the provenance, as written to the folder.
+
+    Raises
+    ------
+    FallriseError
+        One line: what, which file, what to do. Nothing that was there before is lost.
+    """
+    from tracker.bench import Bench, load_bench
+    from tracker.keeping.decisions import read_decisions
+    from tracker.keeping.store import result_folder, write_result
+    from tracker.motion.droplets import evaluate_droplets
+    from tracker.provenance import assemble
+    from tracker.records import Settings
+    from tracker.seeing.see import see
+    from tracker.voltage import field_and_tracks
+
+    path = Path(path)
+    settings = settings or Settings()
+    _require_recording(path)
+    folder = result_folder(path) if out is None else Path(out)
+    _require_writable(folder)
+    bench = bench if isinstance(bench, Bench) else load_bench(bench, recording=path)
+
+    seen = see(path, settings=settings, frame_rate=bench.frame_rate, lamp=bench.field.lamp, progress=progress)
+    bench = bench.fitted_to(seen.recording.width, seen.recording.height)
+    field, tracks = field_and_tracks(seen, bench, settings)
+    evaluation = evaluate_droplets(
+        tracks, seen.recording, field, bench, settings=settings, decisions=read_decisions(folder), cuts=seen.cuts
+    )
+    result = assemble(evaluation, recording=seen.recording, field=field, bench=bench, settings=settings,
+                      seeing={"report": seen.report, "warnings": seen.warnings}, folder=folder)  # fmt: skip
+    return write_result(result, folder, tables=settings.tables)
+
+
+def _require_recording(path: Path) -> None:
+    """A missing recording is told before anything is said about benches."""
+    if not path.exists():
+        raise RecordingError(str(path), "no such file or folder; check the name")
+    if path.is_file() and path.stat().st_size == 0:
+        raise RecordingError(str(path), "is empty (0 bytes); copy the recording again")
+
+
+def _require_writable(folder: Path) -> None:
+    """A folder that cannot be written is told before the work, not after it."""
+    home = folder
+    while not home.exists() and home != home.parent:
+        home = home.parent
+    if not home.is_dir():
+        raise ResultError(str(home), "is a file; name another folder with --out")
+    if not os.access(home, os.W_OK | os.X_OK):
+        raise ResultError(str(home), "cannot be written; change its permissions or name another folder with --out")

@@ -1,0 +1,288 @@
+"""All that is needed to check or repeat a measurement, gathered into `recording.json` and its tables."""
+
+from __future__ import annotations
+
+import os
+import platform
+from importlib.metadata import PackageNotFoundError, version
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+from calibration.scale import Scale, scale_from_json, scale_to_json
+from tracker.bench import Bench
+from tracker.keeping.store import Result
+from tracker.keeping.tables import CHANGES, DROPLETS, SEGMENTS, table
+from tracker.records import Field, Measured, Recording, Segment, Settings, Sightings, Tracks
+
+if TYPE_CHECKING:
+    import pandas as pd
+
+    from tracker.motion.droplets import Evaluation
+
+_PACKAGES = ("fallrise", "numpy", "scipy", "av", "opencv-python-headless", "pandas")
+
+
+def assemble(
+    evaluation: Evaluation,
+    *,
+    recording: Recording,
+    field: Field,
+    bench: Bench,
+    settings: Settings,
+    seeing: dict[str, Any],
+    folder: Path,
+) -> Result:
+    """Gather tables and provenance of one measurement.
+
+    Parameters
+    ----------
+    evaluation : Evaluation
+        What the motion wing found.
+    recording, field, bench, settings
+        What it was found from.
+    seeing : dict
+        ``report`` and ``warnings`` of the seeing wing.
+    folder : Path
+        Result folder, to which the recording's path is written relative.
+
+    Returns
+    -------
+    result : Result
+        Not written yet.
+    """
+    warnings = [*recording.warnings, *seeing["warnings"], *field.warnings, *bench.scale.warnings, *evaluation.warnings]
+    provenance = {
+        "file": recording.path.name,
+        "path": os.path.relpath(recording.path.absolute(), folder.absolute()),
+        "sha256": recording.sha256,
+        "frames": frames_json(recording),
+        "bench": bench_json(bench),
+        "scale": scale_to_json(bench.scale),
+        "air": {
+            "viscosity_pa_s": bench.viscosity.value, "viscosity_std_pa_s": bench.viscosity.std,
+            "mean_free_path_m": bench.mean_free_path.value, "density_kg_m3": bench.air_density.value,
+            "temperature_k": bench.temperature.value, "pressure_pa": bench.pressure.value,
+            "relative_humidity": bench.relative_humidity.value,
+        },
+        "field": field_json(field),
+        "orientation": evaluation.orientation,
+        "air_current": evaluation.air_current,
+        "exposure": evaluation.exposure,
+        "charge_unit": evaluation.charge_unit,
+        "budget": evaluation.budget,
+        "seeing": seeing["report"],
+        "settings": settings.as_dict(),
+        "versions": versions(),
+        "warnings": list(dict.fromkeys(warnings)),
+        "frame_times_s": recording.frame_times,
+    }  # fmt: skip
+    return Result(
+        None, tracks_table(evaluation.tracks, evaluation.used, recording, field, bench.scale),
+        table(evaluation.segments, SEGMENTS), table(evaluation.droplets, DROPLETS), table(evaluation.changes, CHANGES),
+        provenance,
+    )  # fmt: skip
+
+
+def tracks_table(tracks: Tracks, used: Any, recording: Recording, field: Field, scale: Scale) -> pd.DataFrame:
+    """Turn tracks into their table.
+
+    Parameters
+    ----------
+    tracks : Tracks
+        Ordered by droplet and frame.
+    used : array_like of shape (len(tracks),)
+        True where a sighting took part in the fits.
+    recording : Recording
+        Gives the times.
+    field : Field
+        Gives the segments.
+    scale : Scale
+        Of the recording.
+
+    Returns
+    -------
+    table : DataFrame
+        Columns of `tracker.keeping.tables.TRACKS`.
+    """
+    import numpy as np
+    import pandas as pd
+
+    from calibration.scale import to_metres
+
+    seen = tracks.sightings
+    times = recording.frame_times[seen.frame]
+    x_m, y_m = to_metres(scale, seen.x, seen.y)
+    return pd.DataFrame({
+        "droplet": tracks.droplet, "frame": seen.frame, "time_s": times, "x_px": seen.x, "y_px": seen.y,
+        "x_std_px": seen.x_std, "y_std_px": seen.y_std, "x_m": x_m, "y_m": y_m, "brightness": seen.brightness,
+        "segment": field.segment_of(times), "used": np.asarray(used).astype(np.int64),
+        "width_px": seen.width, "flags": seen.flags,
+    })  # fmt: skip
+
+
+def tracks_from_table(frame: pd.DataFrame) -> Tracks:
+    """Give the tracks back from their table; the inverse of `tracks_table`.
+
+    Parameters
+    ----------
+    frame : DataFrame
+        Columns of `tracker.keeping.tables.TRACKS`.
+
+    Returns
+    -------
+    tracks : Tracks
+        In the table's order.
+    """
+    names = {"frame": "frame", "x": "x_px", "y": "y_px", "x_std": "x_std_px", "y_std": "y_std_px",
+             "brightness": "brightness", "width": "width_px", "flags": "flags"}  # fmt: skip
+    columns = {name: frame[column].to_numpy() for name, column in names.items()}
+    return Tracks(frame["droplet"].to_numpy("int64"), Sightings(**columns))
+
+
+def frames_json(recording: Recording) -> dict[str, Any]:
+    """Describe the frames of a recording.
+
+    Parameters
+    ----------
+    recording : Recording
+        As it was read.
+
+    Returns
+    -------
+    frames : dict
+        Plain values.
+    """
+    times = recording.frame_times
+    return {
+        "count": len(times), "first_s": float(times[0]), "last_s": float(times[-1]),
+        "interval_s": recording.frame_interval, "uneven": recording.uneven,
+        "repeated": recording.repeated.tolist(), "lost": recording.lost, "width_px": recording.width,
+        "height_px": recording.height, "bit_depth": recording.bit_depth, "full_scale": recording.full_scale,
+        "codec": recording.codec, "warnings": list(recording.warnings),
+    }  # fmt: skip
+
+
+def recording_from_json(provenance: dict[str, Any], path: Path) -> Recording:
+    """Give the record of a recording back from its provenance; the video is not opened.
+
+    Parameters
+    ----------
+    provenance : dict
+        As in ``recording.json``.
+    path : Path
+        Of the recording.
+
+    Returns
+    -------
+    recording : Recording
+        As it was read.
+    """
+    frames = provenance["frames"]
+    return Recording(
+        path, provenance["sha256"], frames["width_px"], frames["height_px"], provenance["frame_times_s"],
+        frames["repeated"], frames["lost"], frames["uneven"], frames["bit_depth"], frames["full_scale"],
+        frames["codec"], tuple(frames["warnings"]),
+    )  # fmt: skip
+
+
+def field_json(field: Field) -> dict[str, Any]:
+    """Describe a field, knots included, so that it can be had back.
+
+    Parameters
+    ----------
+    field : Field
+        Voltage over time.
+
+    Returns
+    -------
+    values : dict
+        Plain values.
+    """
+    return {
+        "source": field.source,
+        "segments": [{"start_s": s.start, "end_s": s.end, "voltage_v": s.voltage} for s in field.segments],
+        "clock_offset_s": field.clock_offset, "clock_offset_std_s": field.clock_offset_std,
+        "clock_rate": field.clock_rate, "sign_known": field.sign_known,
+        "toggle_std_s": field.toggle_std.tolist(),
+        "knots": [field.knot_times.tolist(), field.knot_volts.tolist()], "warnings": list(field.warnings),
+    }  # fmt: skip
+
+
+def field_from_json(values: dict[str, Any]) -> Field:
+    """Give a field back; the inverse of `field_json`.
+
+    Parameters
+    ----------
+    values : dict
+        As `field_json` gives them.
+
+    Returns
+    -------
+    field : Field
+        Voltage over time.
+    """
+    segments = tuple(Segment(s["start_s"], s["end_s"], s["voltage_v"]) for s in values["segments"])
+    return Field(
+        values["source"], segments, values["knots"][0], values["knots"][1], values["toggle_std_s"],
+        values["clock_offset_s"], values["clock_offset_std_s"], values["clock_rate"], values["sign_known"],
+        tuple(values["warnings"]),
+    )  # fmt: skip
+
+
+def bench_json(bench: Bench) -> dict[str, Any]:
+    """Describe a bench in SI, with uncertainties and where each value came from.
+
+    Parameters
+    ----------
+    bench : Bench
+        As it was used.
+
+    Returns
+    -------
+    values : dict
+        Plain values.
+    """
+    units = {"plate_gap": "m", "voltage": "V", "oil_density": "kg/m^3", "temperature": "K", "pressure": "Pa",
+             "relative_humidity": "1", "viscosity": "Pa s", "mean_free_path": "m", "air_density": "kg/m^3",
+             "gravity": "m/s^2", "exposure": "s"}  # fmt: skip
+    quantities = {}
+    for name, unit in units.items():
+        measured: Measured | None = getattr(bench, name)
+        if measured is not None:
+            quantities[name] = {"value": measured.value, "std": measured.std, "unit": unit, "origin": measured.origin}
+    return {"name": bench.name, "files": [str(Path(file).absolute()) for file in bench.files], "digest": bench.digest,
+            "slip": bench.slip, "down_deg": bench.down_deg, "binning": bench.binning,
+            "frame_rate_hz": bench.frame_rate, "voltage_rel_std": bench.voltage_rel_std, **quantities}  # fmt: skip
+
+
+def stored_scale(provenance: dict[str, Any]) -> Scale:
+    """Give the scale of a result.
+
+    Parameters
+    ----------
+    provenance : dict
+        As in ``recording.json``.
+
+    Returns
+    -------
+    scale : Scale
+        For the recording's own pixels.
+    """
+    return scale_from_json(provenance["scale"])
+
+
+def versions() -> dict[str, str]:
+    """Give the versions of what was at work.
+
+    Returns
+    -------
+    versions : dict
+        Of Python and the packages that a number depends on.
+    """
+    found = {"python": platform.python_version()}
+    for name in _PACKAGES:
+        try:
+            found[name] = version(name)
+        except PackageNotFoundError:
+            found[name] = "not installed"
+    return found

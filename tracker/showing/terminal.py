@@ -1,0 +1,156 @@
+"""What a person sees on the terminal: progress and the droplet table."""
+
+from __future__ import annotations
+
+import sys
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
+from typing import TYPE_CHECKING, Any
+
+if TYPE_CHECKING:
+    from tracker.keeping.store import Result
+
+Progress = Callable[[float, float], None]  # done, total (0: not known)
+
+
+@contextmanager
+def progress_bar(label: str, *, hidden: bool = False) -> Iterator[Progress | None]:
+    """Show a progress bar on standard error while the context lasts.
+
+    Parameters
+    ----------
+    label : str
+        What is being worked on.
+    hidden : bool, optional
+        True shows nothing.
+
+    Yields
+    ------
+    progress : callable or None
+        Takes (done, total); total 0 means that the end is not known. None if hidden.
+    """
+    if hidden:
+        yield None
+        return
+    from rich.console import Console
+    from rich.progress import BarColumn, Progress, TextColumn, TimeRemainingColumn
+
+    columns = (TextColumn("{task.description}"), BarColumn(), TextColumn("{task.percentage:>3.0f} %"), TimeRemainingColumn())
+    with Progress(*columns, console=Console(stderr=True), transient=True) as bar:
+        task = bar.add_task(label, total=None)
+        yield lambda done, total: bar.update(task, completed=done, total=total or None)
+
+
+def show_result(result: Result) -> None:
+    """Print what was measured: a heading, the droplet table, warnings, the folder.
+
+    Parameters
+    ----------
+    result : Result
+        A measured recording.
+    """
+    from rich.console import Console
+
+    # Piped output is never cut to the width of a terminal that is not there.
+    console = Console(highlight=False, width=None if sys.stdout.isatty() else 160)
+    drops, frames = result.droplets, result.recording.get("frames", {})
+    counts = drops["verdict"].value_counts()
+    told = ", ".join(f"{counts.get(v, 0)} {v}" for v in ("keep", "doubt", "reject"))
+    span = f"{frames.get('count', 0)} frames, {frames.get('first_s', 0):.6g} to {frames.get('last_s', 0):.6g} s"
+    console.print(f"{result.recording.get('file', '')}: {span}; {len(drops)} droplets: {told}", markup=False)
+    if len(drops):
+        console.print(_droplet_table(result))
+    unit = result.recording.get("charge_unit") or {}
+    if unit.get("reason"):
+        console.print(f"charge unit: {unit['reason']}", markup=False)
+    for warning in result.recording.get("warnings", []):
+        console.print(f"warning: {warning}", markup=False)
+    if result.folder is not None:
+        console.print(f"result: {result.folder}", markup=False)
+
+
+def _droplet_table(result: Result) -> Any:
+    """Give one line a droplet, in units that a person reads; charges in units of e beside C."""
+    from rich import box
+    from rich.table import Table
+
+    from physics.droplet import ELEMENTARY_CHARGE
+
+    heads = ("droplet", "verdict", "frames", "fall um/s", "radius um", "charge 1e-19 C", "own", "shared", "charge/e",
+             "number", "P", "reasons")  # fmt: skip
+    made = Table(box=box.SIMPLE, pad_edge=False)
+    for head in heads:
+        made.add_column(head, justify="left" if head in ("verdict", "reasons") else "right", no_wrap=head != "reasons")
+    for row in result.droplets.itertuples(index=False):
+        made.add_row(
+            str(row.droplet), str(row.verdict), str(row.frames),
+            pair(row.fall_speed_m_s, row.fall_speed_std_m_s, 1e6), pair(row.radius_m, row.radius_std_m, 1e6),
+            number(row.charge_c, 1e19, 3), number(row.charge_own_std_c, 1e19, 3), number(row.charge_shared_std_c, 1e19, 3),
+            number(row.charge_c, 1 / ELEMENTARY_CHARGE, 2), "" if missing(row.charge_number) else str(row.charge_number),
+            number(row.charge_number_probability, 1, 3), "" if missing(row.reasons) else str(row.reasons),
+        )  # fmt: skip
+    return made
+
+
+def missing(value: object) -> bool:
+    """Tell if a cell is empty.
+
+    Parameters
+    ----------
+    value : object
+        A cell of a table.
+
+    Returns
+    -------
+    empty : bool
+        True for None, NaN and pandas' missing value.
+    """
+    import pandas as pd
+
+    return bool(pd.isna(value))  # type: ignore[call-overload]
+
+
+def number(value: Any, factor: float, decimals: int) -> str:
+    """Write a cell with a fixed number of decimals.
+
+    Parameters
+    ----------
+    value : float or missing
+        In SI.
+    factor : float
+        To the unit that is shown.
+    decimals : int
+        Digits behind the point.
+
+    Returns
+    -------
+    text : str
+        Empty if the cell is.
+    """
+    return "" if missing(value) else f"{value * factor:.{decimals}f}"
+
+
+def pair(value: Any, std: Any, factor: float) -> str:
+    """Write a value with its uncertainty in brackets, two digits of it.
+
+    Parameters
+    ----------
+    value, std : float or missing
+        In SI.
+    factor : float
+        To the unit that is shown.
+
+    Returns
+    -------
+    text : str
+        Such as ``75.3(21)``; empty if the cell is.
+    """
+    from math import floor, log10
+
+    if missing(value):
+        return ""
+    if missing(std) or not std > 0:
+        return f"{value * factor:.4g}"
+    decimals = max(0, 1 - floor(log10(std * factor)))
+    digits = round(std * factor * 10**decimals)
+    return f"{value * factor:.{decimals}f}({digits})"

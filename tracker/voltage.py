@@ -1,0 +1,136 @@
+"""Voltage over time and the links of one recording: each may need the other.
+
+A list, a lamp or a log with a known clock gives the voltage first, and the links use it. Where the clock or the
+toggles must come from the droplets, droplets are linked without the voltage, the field is found, and they are
+linked again.
+"""
+
+from __future__ import annotations
+
+from tracker.bench import Bench
+from tracker.errors import FieldError
+from tracker.motion.field import compare_fields, field_from_lamp, field_from_list
+from tracker.motion.fieldlog import field_from_log, read_log
+from tracker.motion.fieldmotion import field_from_motion, fit_clock_offset
+from tracker.records import Field, Recording, Seen, Settings, Tracks
+from tracker.seeing.link import link
+
+
+def field_and_tracks(seen: Seen, bench: Bench, settings: Settings) -> tuple[Field, Tracks]:
+    """Find the voltage over time and link sightings to tracks.
+
+    Parameters
+    ----------
+    seen : Seen
+        What the seeing wing found.
+    bench : Bench
+        Its `field` says where the voltage comes from; every further source that it names is compared.
+    settings : Settings
+        For the links.
+
+    Returns
+    -------
+    field : Field
+        From the chosen source.
+    tracks : Tracks
+        Linked with that voltage.
+
+    Raises
+    ------
+    FieldError
+        If the field cannot be had, or two sources disagree; the message shows both.
+    """
+    spec = bench.field
+    if spec.source in ("list", "lamp") or (spec.source == "log" and spec.clock_offset is not None):
+        field = known_field(spec.source, seen.recording, bench, lamp=seen.lamp)
+    else:
+        field = field_of_tracks(link(seen, field=None, settings=settings), seen.recording, bench)
+    for other in _other_sources(bench, seen):
+        compare_fields(field, known_field(other, seen.recording, bench, lamp=seen.lamp), seen.recording)
+    return field, link(seen, field=field, settings=settings)
+
+
+def known_field(source: str, recording: Recording, bench: Bench, *, lamp: object = None) -> Field:
+    """Give the field of a source that does not need the droplets.
+
+    Parameters
+    ----------
+    source : str
+        ``list``, ``lamp``, or ``log`` with a stated clock offset.
+    recording : Recording
+        Whose time is covered.
+    bench : Bench
+        With the source's keys.
+    lamp : ndarray of shape (frames,), optional
+        Mean grey of the lamp's rectangle.
+
+    Returns
+    -------
+    field : Field
+        Voltage over the recording's time.
+    """
+    spec = bench.field
+    if source == "list":
+        return field_from_list(spec.entries, recording)
+    if source == "lamp":
+        if lamp is None or bench.voltage is None:
+            raise FieldError(str(recording.path), "the lamp needs field.lamp and cell.voltage in the bench file")
+        return field_from_lamp(lamp, recording, exposure=exposure_of(bench, recording), voltage=bench.voltage.value)
+    if spec.log is None or spec.clock_offset is None:
+        raise FieldError(str(recording.path), "the log needs field.log and field.clock_offset in the bench file")
+    log = read_log(spec.log, time_column=spec.time_column, voltage_column=spec.voltage_column,
+                   time_unit=spec.time_unit, voltage_unit=spec.voltage_unit)  # fmt: skip
+    return field_from_log(log, recording, offset=spec.clock_offset.value, offset_std=spec.clock_offset.std)
+
+
+def field_of_tracks(tracks: Tracks, recording: Recording, bench: Bench) -> Field:
+    """Give the field whose clock or toggles come from the droplets.
+
+    Parameters
+    ----------
+    tracks : Tracks
+        Linked with or without the voltage.
+    recording : Recording
+        Whose time is covered.
+    bench : Bench
+        Source ``motion``, or ``log`` with its clock to be fitted.
+
+    Returns
+    -------
+    field : Field
+        Voltage over the recording's time.
+    """
+    spec = bench.field
+    if spec.source == "log" and spec.log is not None:
+        log = read_log(spec.log, time_column=spec.time_column, voltage_column=spec.voltage_column,
+                       time_unit=spec.time_unit, voltage_unit=spec.voltage_unit)  # fmt: skip
+        return fit_clock_offset(tracks, log, recording, bench)
+    if bench.voltage is None:
+        raise FieldError(str(recording.path), "toggles from motion need cell.voltage in the bench file")
+    return field_from_motion(tracks, recording, bench)
+
+
+def exposure_of(bench: Bench, recording: Recording) -> float:
+    """Exposure of each frame in s: the bench's, or half the frame interval.
+
+    Parameters
+    ----------
+    bench : Bench
+        May state the exposure.
+    recording : Recording
+        Gives the frame interval.
+
+    Returns
+    -------
+    exposure : float
+        In s.
+    """
+    return bench.exposure.value if bench.exposure is not None else 0.5 * recording.frame_interval
+
+
+def _other_sources(bench: Bench, seen: Seen) -> list[str]:
+    """Name the sources, beside the chosen one, that the bench file gives and that need no droplets."""
+    spec = bench.field
+    given = {"list": bool(spec.entries), "lamp": seen.lamp is not None,
+             "log": spec.log is not None and spec.clock_offset is not None}  # fmt: skip
+    return [source for source, there in given.items() if there and source != spec.source]
