@@ -1,0 +1,213 @@
+"""Charge numbers of one bench's droplets, found together with the factor that all their charges share.
+
+An error of scale, gap, voltage, viscosity or density moves all charges by nearly one factor. Added to each
+droplet's own uncertainty it would hide most numbers; left out it makes wrong ones look certain. Taken as one
+unknown with its prior it is measured by the droplets themselves.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import ArrayLike, NDArray
+
+from physics.droplet import ELEMENTARY_CHARGE
+from physics.errors import PhysicsError
+
+FloatArray = NDArray[np.float64]
+IntArray = NDArray[np.int64]
+LogLikelihood = tuple[ArrayLike, ArrayLike]  # charge numbers -K..K and the log likelihood of each
+
+OUTLIER_SHARE = 0.05  # prior probability that a charge is on no tooth
+GAUSSIAN_BELOW = (
+    0.25  # own standard deviation over e; below it the likelihood of a charge is normal where it matters
+)
+_GRID_REACH = 4.0  # prior standard deviations of the factor that are searched
+_LEAST_GRID = 321
+_MOST_GRID = 6001
+_LARGEST_ARRAY = 2_000_000  # elements of one work array
+
+
+@dataclass(frozen=True, slots=True)
+class ChargeNumbers:
+    """Charge numbers of a bench's droplets, found together with the factor that all their charges share."""
+
+    number: IntArray  # (N,) signed, the most probable
+    probability: FloatArray  # (N,) of that number, for a droplet that carries a whole number
+    outlier_probability: FloatArray  # (N,) that the charge is on no tooth: a bad track
+    number_values: IntArray  # (N, K) the numbers that were weighed
+    number_probability: FloatArray  # (N, K) rows add up to 1
+    factor: float  # measured over true charge, posterior mean, for a droplet of typical sensitivity
+    factor_std: float
+    joint: bool  # the charges narrowed the factor; False: each droplet stands alone under the prior
+
+
+def number_probabilities(
+    charges: ArrayLike,
+    own_stds: ArrayLike,
+    *,
+    shared_rel_std: ArrayLike = 0.0,
+    log_likelihoods: Sequence[LogLikelihood | None] | None = None,
+    unit: float = ELEMENTARY_CHARGE,
+) -> ChargeNumbers:
+    """Probability of every charge number of every droplet of one bench.
+
+    Parameters
+    ----------
+    charges : array_like of shape (N,)
+        Posterior means in C, signed, with radius and localisation noise integrated.
+    own_stds : array_like of shape (N,)
+        Their own standard deviations in C, above 0, without what the droplets share.
+    shared_rel_std : array_like of shape () or (N,), optional
+        Relative standard uncertainty of the common factor; per droplet where sensitivities differ.
+    log_likelihoods : sequence of (numbers, log likelihood) or None, optional
+        Of each droplet at consecutive charge numbers, flat prior. Used where the own standard deviation
+        exceeds e/4, where the shape matters; between whole numbers it is interpolated. Below, the normal
+        density is used.
+    unit : float, optional
+        In C; the elementary charge unless a scale of another unit is wanted.
+
+    Returns
+    -------
+    numbers : ChargeNumbers
+        Prior flat over all whole numbers, 0 and both signs included.
+
+    Raises
+    ------
+    PhysicsError
+        If shapes differ or a standard deviation is not above 0.
+
+    Notes
+    -----
+    Measured charge = factor x n e + noise, the factor normal about 1. Each droplet's likelihood of a factor
+    is its wrapped density: a smooth set of charges says nothing of the factor, so a set whose comb is blurred
+    falls back to the form in which each droplet carries the shared uncertainty by itself. P_i(n) = sum_k p(k
+    | all) P_i(n | k).
+    """
+    q, s, shared = _columns(charges, own_stds, shared_rel_std, unit)
+    if len(q) == 0:
+        return _none()
+    grid, prior = _factor_grid(q, s, shared)
+    factor = 1 + grid * shared[:, None]  # (N, G)
+    values = _windows(q, s, shared)  # (N, K)
+    chunks = _chunks(len(q), values.shape[1] * len(grid))
+    log_post = np.log(prior)
+    outlier = np.empty((len(q), len(grid)))
+    for part in chunks:
+        density, _ = _wrapped(q[part], s[part], values[part], factor[part], _part(log_likelihoods, part))
+        mixed = (1 - OUTLIER_SHARE) * density + OUTLIER_SHARE
+        outlier[part] = OUTLIER_SHARE / mixed
+        log_post = log_post + np.log(mixed).sum(axis=0)
+    post = np.exp(log_post - log_post.max())
+    post /= post.sum()
+    probability = np.empty(values.shape)
+    for part in chunks:
+        _, given = _wrapped(q[part], s[part], values[part], factor[part], _part(log_likelihoods, part))
+        probability[part] = given @ post
+    best = probability.argmax(axis=1)
+    rows = np.arange(len(q))
+    typical = float(np.median(shared))
+    mean = float(post @ grid)
+    std = float(np.sqrt(post @ (grid - mean) ** 2))
+    return ChargeNumbers(
+        number=values[rows, best], probability=probability[rows, best],
+        outlier_probability=outlier @ post, number_values=values, number_probability=probability,
+        factor=1 + typical * mean, factor_std=typical * std, joint=bool(typical > 0 and std < 0.5),
+    )  # fmt: skip
+
+
+def _columns(
+    charges: ArrayLike, own: ArrayLike, shared: ArrayLike, unit: float
+) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """Check the columns and give charges and deviations over the unit."""
+    q, s = np.asarray(charges, dtype=float) / unit, np.asarray(own, dtype=float) / unit
+    if q.ndim != 1 or q.shape != s.shape:
+        raise PhysicsError("own_stds", s.shape, f"flat and as many as there are charges, {q.shape}")
+    if not (np.all(np.isfinite(q)) and np.all(np.isfinite(s)) and np.all(s > 0)):
+        raise PhysicsError("own_stds", s * unit, "finite and above 0 C, charges finite")
+    rel = np.broadcast_to(np.asarray(shared, dtype=float), q.shape)
+    if not (np.all(rel >= 0) and np.all(rel < 0.25)):
+        raise PhysicsError("shared_rel_std", shared, "at least 0 and below 0.25")
+    return q, s, rel
+
+
+def _none() -> ChargeNumbers:
+    """Result for no droplets."""
+    empty, none = np.empty(0), np.empty(0, np.int64)
+    return ChargeNumbers(none, empty, empty, np.empty((0, 0), np.int64), np.empty((0, 0)), 1.0, 0.0, False)
+
+
+def _factor_grid(q: FloatArray, s: FloatArray, shared: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """Grid of the factor in prior standard deviations and its prior; fine enough for the sharpest charge."""
+    if not shared.any():
+        return np.zeros(1), np.ones(1)
+    sharpest = np.max(np.abs(q) * shared / s)
+    count = int(np.clip(np.ceil(8 * _GRID_REACH * sharpest), _LEAST_GRID, _MOST_GRID)) | 1
+    grid = np.linspace(-_GRID_REACH, _GRID_REACH, count)
+    prior = np.exp(-0.5 * grid**2)
+    return grid, prior / prior.sum()
+
+
+def _windows(q: FloatArray, s: FloatArray, shared: FloatArray) -> IntArray:
+    """Whole numbers (N, K) about each charge, as many for all, that hold its probability."""
+    reach = int(np.ceil(np.max(5 * s + _GRID_REACH * shared * np.abs(q)))) + 1
+    return np.rint(q).astype(np.int64)[:, None] + np.arange(-reach, reach + 1)
+
+
+def _chunks(count: int, each: int) -> list[slice]:
+    """Slices of droplets whose work arrays stay small."""
+    size = max(1, _LARGEST_ARRAY // each)
+    return [slice(start, min(start + size, count)) for start in range(0, count, size)]
+
+
+def _part(given: Sequence[LogLikelihood | None] | None, part: slice) -> Sequence[LogLikelihood | None]:
+    """Log likelihoods of a slice of droplets; nothing if there are none."""
+    return () if given is None else given[part]
+
+
+def _wrapped(
+    q: FloatArray, s: FloatArray, values: IntArray, factor: FloatArray, exact: Sequence[LogLikelihood | None]
+) -> tuple[FloatArray, FloatArray]:
+    """Wrapped density (N, G) of each charge for each factor, and the probability (N, K, G) of each number given it."""
+    log_like = _log_likelihood(q, s, values, factor, exact)
+    top = log_like.max(axis=1)
+    given = np.exp(log_like - top[:, None])
+    total = given.sum(axis=1)
+    return factor * np.exp(top) * total, given / total[:, None]
+
+
+def _log_likelihood(
+    q: FloatArray,
+    s: FloatArray,
+    values: IntArray,
+    factor: FloatArray,
+    exact: Sequence[LogLikelihood | None],
+) -> FloatArray:
+    """Log density (N, K, G) of each measured charge for each number and factor, per unit of charge."""
+    expected = values[:, :, None] * factor[:, None, :]
+    z = (q[:, None, None] - expected) / s[:, None, None]
+    out: FloatArray = -0.5 * z**2 - np.log(s * np.sqrt(2 * np.pi))[:, None, None]
+    for i, given in enumerate(exact):
+        if given is not None and s[i] >= GAUSSIAN_BELOW:
+            out[i] = _interpolated(given, expected[i])
+    return out
+
+
+def _interpolated(given: LogLikelihood, charge: FloatArray) -> FloatArray:
+    """Log density between and beyond whole numbers by Akima's local cubic, which is exact for a normal one."""
+    from scipy.interpolate import Akima1DInterpolator
+
+    numbers, log_like = np.asarray(given[0], dtype=float), np.asarray(given[1], dtype=float)
+    usable = np.isfinite(log_like) & (log_like > log_like.max() - 200)
+    numbers, log_like = numbers[usable], log_like[usable]
+    if len(numbers) < 3 or np.any(np.diff(numbers) != 1):
+        raise PhysicsError("log_likelihoods", numbers, "finite at three consecutive numbers or more")
+    curve = Akima1DInterpolator(numbers, log_like)
+    fine = np.linspace(numbers[0], numbers[-1], 16 * (len(numbers) - 1) + 1)
+    density = np.exp(curve(fine) - log_like.max())
+    area = np.sum((density[1:] + density[:-1]) / 2) * (fine[1] - fine[0])
+    inside = np.clip(charge, numbers[0], numbers[-1])
+    beyond = 8.0 * np.abs(charge - inside)  # steep beyond the numbers that were weighed
+    return np.asarray(curve(inside) - beyond - log_like.max() - np.log(area))
