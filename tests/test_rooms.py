@@ -64,7 +64,9 @@ def room_of(name: str) -> str | None:
     return max(rooms, key=len) if rooms else None
 
 
-@pytest.mark.parametrize(("name", "path"), modules(), ids=lambda value: value if isinstance(value, str) else "")
+@pytest.mark.parametrize(
+    ("name", "path"), modules(), ids=lambda value: value if isinstance(value, str) else ""
+)
 def test_arrows_run_one_way(name, path):
     """A room imports only the rooms that lie below it."""
     room = room_of(name)

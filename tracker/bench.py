@@ -8,12 +8,9 @@ from __future__ import annotations
 
 import hashlib
 import json
-import tomllib
-from collections.abc import Mapping
 from dataclasses import dataclass, replace
 from itertools import pairwise
 from pathlib import Path
-from typing import TYPE_CHECKING, Any, Literal
 
 from calibration.errors import CalibrationError, QuantityError
 from calibration.quantity import parse_quantity
@@ -24,13 +21,8 @@ from physics.droplet import Conditions
 from physics.errors import PhysicsError
 from physics.oil import oil_density
 from physics.site import local_gravity
-from tracker.errors import BenchError
+from tracker.benchfile import QUANTITIES, Keys, bench_text
 from tracker.records import Measured
-
-if TYPE_CHECKING:
-    from pydantic import BaseModel
-
-BENCH_NAME = "bench.toml"
 
 
 @dataclass(frozen=True, slots=True)
@@ -91,9 +83,13 @@ class Bench:
         """
         model = slip_model(self.slip)
         per_pixel = self.scale.metres_per_pixel_y
-        voltage = self.voltage.value if self.voltage is not None else max((abs(v) for _, v in self.field.entries), default=1.0)
+        voltage = (
+            self.voltage.value
+            if self.voltage is not None
+            else max((abs(v) for _, v in self.field.entries), default=1.0)
+        )
         return {
-            "scale": Measured(per_pixel, per_pixel * self.scale.relative_std, self.scale.picture or "camera.metres_per_pixel"),
+            "scale": Measured(per_pixel, per_pixel * self.scale.relative_std, self.scale.picture or "stated"),
             "plate_gap": self.plate_gap,
             "voltage": Measured(abs(voltage), abs(voltage) * self.voltage_rel_std, "cell.voltage or field.list"),
             "temperature": self.temperature,
@@ -123,7 +119,9 @@ class Bench:
         ScaleError
             If the recording is binned or cropped and ``camera.binning`` does not say so.
         """
-        return replace(self, scale=fit_recording(self.scale, width=width, height=height, binning=self.binning))
+        return replace(
+            self, scale=fit_recording(self.scale, width=width, height=height, binning=self.binning)
+        )
 
     @property
     def digest(self) -> str:
@@ -131,231 +129,6 @@ class Bench:
         plain = repr(replace(self, name="", files=(), field=replace(self.field, log=None)))
         log = self.field.log.read_bytes() if self.field.log is not None and self.field.log.is_file() else b""
         return hashlib.sha256(plain.encode() + log).hexdigest()
-
-
-# Key -> (unit inside, lowest, highest, words). Bounds are those of a droplet bench, wide enough for any that exists.
-_QUANTITIES: Mapping[str, tuple[str, float, float, str]] = {
-    "cell.plate_gap": ("m", 1e-5, 1.0, 'a length such as "6.00(2) mm", 10 um to 1 m'),
-    "cell.voltage": ("V", -1e5, 1e5, 'a voltage such as "260.0(5) V", not 0'),
-    "oil.density": ("kg/m^3", 2.0, 3e4, 'a density above air, such as "886(1) kg/m^3"'),
-    "oil.density_temperature": ("K", 200.0, 400.0, 'a temperature such as "20 degC"'),
-    "oil.expansion": ("1/K", 0.0, 5e-3, 'an expansion such as "7e-4 1/K"'),
-    "air.temperature": ("K", 273.15, 323.15, 'a temperature such as "22.0(3) degC", 0 to 50 degC'),
-    "air.pressure": ("Pa", 1e4, 1.1e5, 'a pressure such as "1008(1) hPa", 100 to 1100 hPa'),
-    "air.relative_humidity": ("", 0.0, 1.0, 'a share such as "45(5) percent", 0 to 100 percent'),
-    "air.viscosity": ("Pa s", 1e-6, 1e-4, 'a viscosity such as "1.83e-5 Pa s"'),
-    "site.gravity": ("m/s^2", 9.5, 10.0, 'an acceleration such as "9.8100(2) m/s^2", 9.5 to 10'),
-    "site.latitude": ("deg", -90.0, 90.0, 'a latitude such as "51.5 deg"'),
-    "site.altitude": ("m", -500.0, 9000.0, 'an altitude such as "80 m"'),
-    "camera.metres_per_pixel": ("m", 1e-9, 1e-3, 'a length such as "2.980(5) um"'),
-    "camera.exposure": ("s", 1e-6, 10.0, 'a time such as "20 ms"'),
-    "camera.frame_rate": ("Hz", 1e-3, 1e5, 'a rate such as "25 Hz"'),
-    "camera.down": ("deg", -180.0, 180.0, '"auto" or an angle such as "1.5 deg"'),
-    "field.clock_offset": ("s", -1e9, 1e9, '"auto" or a time such as "0.35 s"'),
-}
-
-
-def find_bench(recording: Path) -> Path | None:
-    """Find the bench file of a recording: beside it or in the nearest folder above.
-
-    Parameters
-    ----------
-    recording : Path
-        File or folder of pictures.
-
-    Returns
-    -------
-    bench : Path or None
-        None if no folder up to the root holds a ``bench.toml``.
-    """
-    for folder in recording.absolute().parents:
-        candidate = folder / BENCH_NAME
-        if candidate.is_file():
-            return candidate
-    return None
-
-
-def bench_text(bench: Path | str | None, *, recording: Path | None = None) -> dict[str, Any]:
-    """Read bench file and override as plain merged keys, without checking values.
-
-    Parameters
-    ----------
-    bench : Path, str or None
-        The bench file; None: found from the recording's place.
-    recording : Path, optional
-        Its ``STEM.toml`` overrides single keys.
-
-    Returns
-    -------
-    keys : dict
-        Sections of keys; each leaf is a tuple (value, file it came from); ``""`` holds the files read.
-
-    Raises
-    ------
-    BenchError
-        If there is no bench file, or one is no TOML.
-    """
-    main = Path(bench) if bench is not None else (find_bench(recording) if recording else None)
-    if main is None:
-        raise BenchError(str(recording or BENCH_NAME), "", "no bench file",
-                         f"a {BENCH_NAME} beside the recording or in a folder above, or --bench FILE")  # fmt: skip
-    files = [main]
-    if recording is not None:
-        own = recording.with_suffix(".toml") if recording.suffix else recording.parent / f"{recording.name}.toml"
-        if own.is_file() and own.absolute() != main.absolute():
-            files.append(own)
-    merged: dict[str, Any] = {"": files}
-    for file in files:
-        for section, keys in _read_toml(file).items():
-            if not isinstance(keys, dict):
-                raise BenchError(str(file), section, repr(keys), f"a section: [{section}]")
-            merged.setdefault(section, {}).update({key: (value, file) for key, value in keys.items()})
-    return merged
-
-
-def _read_toml(file: Path) -> dict[str, Any]:
-    try:
-        return tomllib.loads(file.read_text(encoding="utf-8"))
-    except FileNotFoundError as error:
-        raise BenchError(str(file), "", "no such file", "an existing bench file") from error
-    except (OSError, UnicodeDecodeError) as error:
-        raise BenchError(str(file), "", f"{error}", "a readable text file in UTF-8") from error
-    except tomllib.TOMLDecodeError as error:
-        raise BenchError(str(file), "", f"no TOML: {error}", 'lines such as plate_gap = "6.00(2) mm"') from error
-
-
-def _shape() -> type[BaseModel]:
-    """Build the pydantic model of the bench file; here, so that pydantic is imported only when needed."""
-    from pydantic import BaseModel, ConfigDict
-
-    class Section(BaseModel):
-        model_config = ConfigDict(extra="forbid", strict=True)
-
-    class Cell(Section):
-        plate_gap: str
-        voltage: str | None = None
-
-    class Oil(Section):
-        density: str
-        density_temperature: str | None = None
-        expansion: str | None = None
-
-    class AirSection(Section):
-        temperature: str
-        pressure: str
-        relative_humidity: str | None = None
-        viscosity: str | None = None
-        slip: Literal["kim2005", "davies1945", "allen_raabe1985", "hutchins1995", "millikan1923"] = "kim2005"
-
-    class Site(Section):
-        gravity: str | None = None
-        latitude: str | None = None
-        altitude: str | None = None
-
-    class Camera(Section):
-        scale: str | None = None
-        metres_per_pixel: str | None = None
-        exposure: str | None = None
-        down: str | None = None
-        frame_rate: str | None = None
-        binning: int | None = None
-
-    class FieldSection(Section):
-        source: Literal["list", "log", "lamp", "motion"]
-        list: tuple[tuple[str, str], ...] | None = None
-        log: str | None = None
-        time_column: str | None = None
-        voltage_column: str | None = None
-        time_unit: str | None = None
-        voltage_unit: str | None = None
-        clock_offset: str | None = None
-        lamp: tuple[int, int, int, int] | None = None
-
-    class BenchFile(Section):
-        cell: Cell
-        oil: Oil
-        air: AirSection
-        site: Site
-        camera: Camera
-        field: FieldSection
-
-    return BenchFile
-
-
-class _Keys:
-    """Read access to merged keys: values as `Measured`, errors with the file that the key came from."""
-
-    def __init__(self, merged: dict[str, Any]) -> None:
-        self.files: list[Path] = merged[""]
-        self.sections = {name: keys for name, keys in merged.items() if name}
-
-    def raw(self, dotted: str) -> Any:
-        section, key = dotted.split(".")
-        return self.sections.get(section, {}).get(key, (None, None))[0]
-
-    def file(self, dotted: str) -> Path:
-        section, _, key = dotted.partition(".")
-        found = self.sections.get(section, {}).get(key, (None, None))[1]
-        return Path(found) if found is not None else self.files[0]
-
-    def error(self, dotted: str, found: object, allowed: str) -> BenchError:
-        return BenchError(str(self.file(dotted)), dotted, str(found), allowed)
-
-    def check_shape(self) -> None:
-        """Let pydantic look at names and types; its first complaint becomes a `BenchError`."""
-        from pydantic import ValidationError
-
-        plain = {s: {k: _tuples(v[0]) for k, v in keys.items()} for s, keys in self.sections.items()}
-        try:
-            _shape().model_validate(plain)
-        except ValidationError as error:
-            first = min(error.errors(), key=lambda e: e["type"] != "extra_forbidden")
-            dotted = ".".join(str(part) for part in first["loc"][:2])
-            raise self._explain(dotted, first) from None
-
-    def _explain(self, dotted: str, complaint: Mapping[str, Any]) -> BenchError:
-        if complaint["type"] == "extra_forbidden":
-            section = dotted.split(".")[0]
-            names = ", ".join(_names(section if "." in dotted else ""))
-            return self.error(dotted, "an unknown key", f"one of {names}")
-        if complaint["type"] == "missing":
-            words = _QUANTITIES[dotted][3] if dotted in _QUANTITIES else "this key is required"
-            return self.error(dotted, "nothing", words)
-        words = _QUANTITIES[dotted][3] if dotted in _QUANTITIES else str(complaint["msg"])
-        return self.error(dotted, repr(complaint["input"]), words)
-
-    def measured(self, dotted: str) -> Measured | None:
-        """One quantity, or None if the key is absent."""
-        text = self.raw(dotted)
-        if text is None:
-            return None
-        unit, low, high, words = _QUANTITIES[dotted]
-        try:
-            value, std = parse_quantity(text, unit)
-        except QuantityError as error:
-            raise self.error(dotted, f"{text!r} ({error.problem})", words) from error
-        if not low <= value <= high or (dotted == "cell.voltage" and value == 0):
-            raise self.error(dotted, repr(text), words)
-        return Measured(value, std, f"{self.file(dotted).name}: {dotted}")
-
-    def required(self, dotted: str) -> Measured:
-        value = self.measured(dotted)
-        if value is None:
-            raise self.error(dotted, "nothing", _QUANTITIES[dotted][3])
-        return value
-
-
-def _tuples(value: Any) -> Any:
-    return tuple(_tuples(item) for item in value) if isinstance(value, list) else value
-
-
-def _names(section: str) -> list[str]:
-    """Names that a section, or the whole file, allows."""
-    fields = _shape().model_fields
-    if section not in fields:
-        return sorted((*fields, "bench"))
-    model = fields[section].annotation
-    return sorted(model.model_fields) if model is not None and hasattr(model, "model_fields") else []
 
 
 def load_bench(bench: Path | str | None = None, *, recording: Path | str | None = None) -> Bench:
@@ -378,7 +151,7 @@ def load_bench(bench: Path | str | None = None, *, recording: Path | str | None 
     BenchError
         File, key, what was read, what is allowed.
     """
-    keys = _Keys(bench_text(bench, recording=Path(recording) if recording is not None else None))
+    keys = Keys(bench_text(bench, recording=Path(recording) if recording is not None else None))
     label = keys.sections.pop("bench", {})
     keys.check_shape()
     air_values = _air(keys)
@@ -397,14 +170,16 @@ def load_bench(bench: Path | str | None = None, *, recording: Path | str | None 
         scale=_scale(keys, recording),
         exposure=keys.measured("camera.exposure"),
         down_deg=None if keys.raw("camera.down") in (None, "auto") else keys.required("camera.down").value,
-        frame_rate=None if keys.raw("camera.frame_rate") is None else keys.required("camera.frame_rate").value,
+        frame_rate=None
+        if keys.raw("camera.frame_rate") is None
+        else keys.required("camera.frame_rate").value,
         binning=_binning(keys),
         field=spec,
         **air_values,
     )
 
 
-def _air(keys: _Keys) -> dict[str, Measured]:
+def _air(keys: Keys) -> dict[str, Measured]:
     """Air of the cell: what was stated and what follows from it."""
     temperature, pressure = keys.required("air.temperature"), keys.required("air.pressure")
     humidity = keys.measured("air.relative_humidity") or Measured(0.0)
@@ -414,7 +189,9 @@ def _air(keys: _Keys) -> dict[str, Measured]:
                              viscosity=None if stated is None else stated.value)  # fmt: skip
     except PhysicsError as error:
         raise keys.error("air.temperature", error, "air of a laboratory") from error
-    viscosity = stated or Measured(air.viscosity, air.viscosity * air.viscosity_rel_std, "ISO 15900 and moist-air mixture")
+    viscosity = stated or Measured(
+        air.viscosity, air.viscosity * air.viscosity_rel_std, "ISO 15900 and moist-air mixture"
+    )
     return {
         "temperature": temperature, "pressure": pressure, "relative_humidity": humidity, "viscosity": viscosity,
         "mean_free_path": Measured(air.mean_free_path, 0.0, "ISO 15900"),
@@ -422,11 +199,11 @@ def _air(keys: _Keys) -> dict[str, Measured]:
     }  # fmt: skip
 
 
-def _oil(keys: _Keys, temperature: Measured, air_density: float) -> Measured:
+def _oil(keys: Keys, temperature: Measured, air_density: float) -> Measured:
     stated = keys.required("oil.density")
     at, expansion = keys.measured("oil.density_temperature"), keys.measured("oil.expansion")
     if stated.value <= air_density:
-        raise keys.error("oil.density", repr(keys.raw("oil.density")), _QUANTITIES["oil.density"][3])
+        raise keys.error("oil.density", repr(keys.raw("oil.density")), QUANTITIES["oil.density"][3])
     if at is None or expansion is None:
         return stated
     warm = oil_density(stated.value, density_temperature=at.value, temperature=temperature.value,
@@ -437,7 +214,7 @@ def _oil(keys: _Keys, temperature: Measured, air_density: float) -> Measured:
     return Measured(warm, std, stated.origin)
 
 
-def _gravity(keys: _Keys) -> Measured:
+def _gravity(keys: Keys) -> Measured:
     stated = keys.measured("site.gravity")
     if stated is not None:
         return stated
@@ -448,7 +225,7 @@ def _gravity(keys: _Keys) -> Measured:
     return Measured(local_gravity(latitude.value, altitude.value), 5e-4, "latitude and altitude")
 
 
-def _scale(keys: _Keys, recording: Path | str | None) -> Scale:
+def _scale(keys: Keys, recording: Path | str | None) -> Scale:
     stated, name = keys.measured("camera.metres_per_pixel"), keys.raw("camera.scale")
     if stated is not None and name is not None:
         raise keys.error("camera.scale", "scale and metres_per_pixel", "one of the two")
@@ -456,19 +233,21 @@ def _scale(keys: _Keys, recording: Path | str | None) -> Scale:
         return Scale.from_metres_per_pixel(stated.value, stated.std)
     path = keys.file("camera.scale").parent / name if name is not None else find_scale(keys, recording)
     if path is None:
-        raise keys.error("camera.scale", "nothing", 'scale = "scale.json" or metres_per_pixel = "2.980(5) um"')
+        raise keys.error(
+            "camera.scale", "nothing", 'scale = "scale.json" or metres_per_pixel = "2.980(5) um"'
+        )
     try:
         return read_scale(path)
     except CalibrationError as error:
         raise keys.error("camera.scale", error, "a file made by `fallrise scale`") from error
 
 
-def find_scale(keys: _Keys, recording: Path | str | None) -> Path | None:
+def find_scale(keys: Keys, recording: Path | str | None) -> Path | None:
     """Find the scale by place: the nearest folder above with ``scale*.json``, the last one before the recording.
 
     Parameters
     ----------
-    keys : _Keys
+    keys : Keys
         For the bench file's folder where no recording is given.
     recording : Path, str or None
         The recording; its file date decides between several scales.
@@ -503,21 +282,25 @@ def _scale_time(path: Path) -> float:
         return path.stat().st_mtime
 
 
-def _binning(keys: _Keys) -> int | None:
+def _binning(keys: Keys) -> int | None:
     binning: int | None = keys.raw("camera.binning")
     if binning is not None and not 1 <= binning <= 16:
-        raise keys.error("camera.binning", binning, "a whole number of pixels joined along each side, 1 to 16")
+        raise keys.error(
+            "camera.binning", binning, "a whole number of pixels joined along each side, 1 to 16"
+        )
     return binning
 
 
-def _voltage(keys: _Keys, spec: FieldSpec) -> Measured | None:
+def _voltage(keys: Keys, spec: FieldSpec) -> Measured | None:
     voltage = keys.measured("cell.voltage")
     if voltage is None and spec.source in ("lamp", "motion"):
-        raise keys.error("cell.voltage", "nothing", f"{_QUANTITIES['cell.voltage'][3]}; {spec.source} needs it")
+        raise keys.error(
+            "cell.voltage", "nothing", f"{QUANTITIES['cell.voltage'][3]}; {spec.source} needs it"
+        )
     return voltage
 
 
-def _field(keys: _Keys) -> FieldSpec:
+def _field(keys: Keys) -> FieldSpec:
     """Voltage source; what the chosen source needs must be there."""
     source = keys.raw("field.source")
     needed = {"list": "list", "log": "log", "lamp": "lamp"}.get(source)
@@ -544,7 +327,7 @@ def _field(keys: _Keys) -> FieldSpec:
     )
 
 
-def _entries(keys: _Keys) -> tuple[tuple[tuple[float, float], ...], float]:
+def _entries(keys: Keys) -> tuple[tuple[tuple[float, float], ...], float]:
     """Times and voltages of the list, and the largest relative uncertainty among its voltages."""
     words = 'pairs such as [["0 s", "0 V"], ["2 s", "260 V"]], times increasing'
     entries, rel_std = [], 0.0
@@ -558,4 +341,3 @@ def _entries(keys: _Keys) -> tuple[tuple[tuple[float, float], ...], float]:
     if any(b[0] <= a[0] for a, b in pairwise(entries)):
         raise keys.error("field.list", "times that do not increase", words)
     return tuple(entries), rel_std
-

@@ -21,7 +21,9 @@ app = typer.Typer(
     no_args_is_help=True, add_completion=False, pretty_exceptions_enable=False, rich_markup_mode=None,
 )  # fmt: skip
 
-BenchOption = Annotated[Path | None, typer.Option("--bench", help="Bench file; default: beside or above the recording.")]
+BenchOption = Annotated[
+    Path | None, typer.Option("--bench", help="Bench file; default: beside or above the recording.")
+]
 JsonOption = Annotated[bool, typer.Option("--json", help="Print the result for machines.")]
 
 
@@ -92,7 +94,9 @@ def evaluate(
         _show_result(result)
 
 
-@app.command(epilog=_example("fallrise overlay sample_videos/steady.fallrise --frames 0:200 --out tracks.mp4"))
+@app.command(
+    epilog=_example("fallrise overlay sample_videos/steady.fallrise --frames 0:200 --out tracks.mp4")
+)
 def overlay(
     result: Annotated[Path, typer.Argument(help="Result folder.")],
     frames: Annotated[str | None, typer.Option("--frames", help="A:B, first and one past the last frame, or one "
@@ -109,11 +113,15 @@ def overlay(
     typer.echo(str(written))
 
 
-@app.command(epilog=_example('fallrise decide clip.fallrise --droplet 7 --verdict reject --reason "two droplets"'))
+@app.command(
+    epilog=_example('fallrise decide clip.fallrise --droplet 7 --verdict reject --reason "two droplets"')
+)
 def decide(
     result: Annotated[Path, typer.Argument(help="Result folder.")],
     droplet: Annotated[int, typer.Option("--droplet", help="Number of the droplet.")],
-    verdict: Annotated[str, typer.Option("--verdict", help="keep, doubt, reject, split, trim, join, reset or undo.")],
+    verdict: Annotated[
+        str, typer.Option("--verdict", help="keep, doubt, reject, split, trim, join, reset or undo.")
+    ],
     reason: Annotated[str, typer.Option("--reason", help="Why, in your words.")] = "",
     at: Annotated[float | None, typer.Option("--at", help="Time in s at which to split.")] = None,
     start: Annotated[float | None, typer.Option("--from", help="Trim: keep from this time in s.")] = None,
@@ -130,6 +138,45 @@ def decide(
         _print_json([_result_json(done)], single=True)
     else:
         _show_result(done)
+
+
+@app.command(
+    epilog=_example("fallrise simulate --out trial.avi --seed 7 --set droplets=20 --bench trial.bench.toml")
+)
+def simulate(
+    out: Annotated[Path, typer.Option("--out", help="Recording: .avi .mp4 .mov .mkv .webm .tif, or a folder for "
+                                      "PNG pictures.")] = Path("simulated.avi"),
+    scene: Annotated[Path | None, typer.Option("--scene", help="TOML file with fields of the scene.")] = None,
+    assign: Annotated[list[str] | None, typer.Option("--set", help="KEY=VALUE, a field of the scene; may be "
+                                                     "repeated.")] = None,
+    seed: Annotated[int, typer.Option("--seed", min=0, help="The same seed gives the same droplets.")] = 1,
+    bench: Annotated[Path | None, typer.Option("--bench", help="Write the bench file of the scene there.")] = None,
+    log: Annotated[Path | None, typer.Option("--log", help="Write a voltage log there.")] = None,
+    log_early: Annotated[float, typer.Option("--log-early", help="The log's clock shows so many s less.")] = 0.0,
+    log_fast: Annotated[float, typer.Option("--log-fast", help="The log's clock runs fast by this share.")] = 0.0,
+    show: Annotated[bool, typer.Option("--show", help="Print all fields of the scene; write nothing.")] = False,
+    as_json: JsonOption = False,
+) -> None:  # fmt: skip
+    """Make a recording with known truth, to try settings before a lab day."""
+    from tracker import simulate as room
+
+    values = {**(room.read_scene(scene) if scene else {}), **room.read_assignments(assign or [])}
+    made = room.scene_from_mapping(values)
+    if show:
+        typer.echo(room.scene_text(made), nl=False)
+        return
+    with _progress(out.name, hidden=as_json) as progress:
+        files = room.simulate(made, out, seed=seed, progress=progress)
+    written = {"recording": files.recording, "truth": files.truth_json, "motion": files.truth_npz}
+    if bench is not None:
+        written["bench"] = room.write_bench(made, bench, recording=out)
+    if log is not None:
+        logger = room.Logger(early=log_early, fast=log_fast)
+        written["log"] = room.write_log(made, log, logger=logger, seed=seed)
+    if as_json:
+        _print_json([{key: str(path) for key, path in written.items()}], single=True)
+    else:
+        typer.echo("\n".join(str(path) for path in written.values()))
 
 
 def _progress(label: str, *, hidden: bool = False) -> Any:
@@ -197,7 +244,10 @@ def _run(arguments: list[str], *, debug: bool) -> int:
     except Exception as error:
         if debug:
             traceback.print_exc()
-        typer.echo(f"fallrise: unexpected {type(error).__name__}: {error}; run again with --debug and report it", err=True)
+        typer.echo(
+            f"fallrise: unexpected {type(error).__name__}: {error}; run again with --debug and report it",
+            err=True,
+        )
         return 1
 
 

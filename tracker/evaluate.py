@@ -50,7 +50,10 @@ def evaluate_result(folder: Path | str, *, bench: Bench | Path | str | None = No
         tracks, recording, field, loaded, settings=settings, decisions=read_decisions(folder),
         cuts=old.recording["seeing"].get("cuts", ()),
     )  # fmt: skip
-    seeing = {"report": old.recording["seeing"], "warnings": tuple(old.recording["seeing"].get("warnings", ()))}
+    seeing = {
+        "report": old.recording["seeing"],
+        "warnings": tuple(old.recording["seeing"].get("warnings", ())),
+    }
     result = assemble(evaluation, recording=recording, field=field, bench=loaded, settings=settings, seeing=seeing,
                       folder=folder)  # fmt: skip
     return write_result(result, folder, tables=settings.tables)
@@ -90,7 +93,9 @@ def _present_bench(old: Result, recording: Recording, bench: Path | str | None) 
         return load_bench(bench, recording=recording.path)
     except BenchError as error:
         if bench is None:
-            raise ResultError(str(old.folder), f"its bench file is gone; name one with --bench ({error})") from error
+            raise ResultError(
+                str(old.folder), f"its bench file is gone; name one with --bench ({error})"
+            ) from error
         raise
 
 

@@ -100,7 +100,9 @@ def find_recording(result: Result, recording: Path | None = None) -> Path:
         candidates = [folder / stored, folder.parent / str(result.recording.get("file", ""))]
         recording = next((path for path in candidates if path.exists()), candidates[0])
     if not recording.exists():
-        raise RecordingError(str(recording), "the recording of this result is not there; name it with --recording")
+        raise RecordingError(
+            str(recording), "the recording of this result is not there; name it with --recording"
+        )
     return recording
 
 
@@ -135,7 +137,9 @@ def drawn_frames(
     low, high = result.recording.get("seeing", {}).get("grey_range") or (None, None)
     with open_recording(find_recording(result, recording), frame_rate=camera) as reader:
         for batch in reader:
-            for number, (time, picture) in enumerate(zip(batch.times, batch.pictures, strict=True), batch.first_index):
+            for number, (time, picture) in enumerate(
+                zip(batch.times, batch.pictures, strict=True), batch.first_index
+            ):
                 if number >= last:
                     return
                 if number >= first:

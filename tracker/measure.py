@@ -73,7 +73,13 @@ def measure(
     bench = bench.fitted_to(seen.recording.width, seen.recording.height)
     field, tracks = field_and_tracks(seen, bench, settings)
     evaluation = evaluate_droplets(
-        tracks, seen.recording, field, bench, settings=settings, decisions=read_decisions(folder), cuts=seen.cuts
+        tracks,
+        seen.recording,
+        field,
+        bench,
+        settings=settings,
+        decisions=read_decisions(folder),
+        cuts=seen.cuts,
     )
     result = assemble(evaluation, recording=seen.recording, field=field, bench=bench, settings=settings,
                       seeing={"report": seen.report, "warnings": seen.warnings}, folder=folder)  # fmt: skip
@@ -96,4 +102,6 @@ def _require_writable(folder: Path) -> None:
     if not home.is_dir():
         raise ResultError(str(home), "is a file; name another folder with --out")
     if not os.access(home, os.W_OK | os.X_OK):
-        raise ResultError(str(home), "cannot be written; change its permissions or name another folder with --out")
+        raise ResultError(
+            str(home), "cannot be written; change its permissions or name another folder with --out"
+        )

@@ -50,7 +50,13 @@ def assemble(
     result : Result
         Not written yet.
     """
-    warnings = [*recording.warnings, *seeing["warnings"], *field.warnings, *bench.scale.warnings, *evaluation.warnings]
+    warnings = [
+        *recording.warnings,
+        *seeing["warnings"],
+        *field.warnings,
+        *bench.scale.warnings,
+        *evaluation.warnings,
+    ]
     provenance = {
         "file": recording.path.name,
         "path": os.path.relpath(recording.path.absolute(), folder.absolute()),
@@ -249,7 +255,12 @@ def bench_json(bench: Bench) -> dict[str, Any]:
     for name, unit in units.items():
         measured: Measured | None = getattr(bench, name)
         if measured is not None:
-            quantities[name] = {"value": measured.value, "std": measured.std, "unit": unit, "origin": measured.origin}
+            quantities[name] = {
+                "value": measured.value,
+                "std": measured.std,
+                "unit": unit,
+                "origin": measured.origin,
+            }
     return {"name": bench.name, "files": [str(Path(file).absolute()) for file in bench.files], "digest": bench.digest,
             "slip": bench.slip, "down_deg": bench.down_deg, "binning": bench.binning,
             "frame_rate_hz": bench.frame_rate, "voltage_rel_std": bench.voltage_rel_std, **quantities}  # fmt: skip

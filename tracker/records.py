@@ -241,7 +241,11 @@ class Seen:
 
     recording: Recording
     sightings: Sightings
-    report: dict[str, Any] = field(default_factory=dict)  # spot width, noise, gain, threshold, ...: for provenance
+    report: dict[str, Any] = field(
+        default_factory=dict
+    )  # spot width, noise, gain, threshold, ...: for provenance
     lamp: FloatArray | None = None  # (frames,) mean grey of the lamp's rectangle
-    cuts: IntArray = field(default_factory=lambda: np.empty(0, np.int64))  # frames at which the camera was bumped
+    cuts: IntArray = field(
+        default_factory=lambda: np.empty(0, np.int64)
+    )  # frames at which the camera was bumped
     warnings: tuple[str, ...] = ()

@@ -74,10 +74,16 @@ def known_field(source: str, recording: Recording, bench: Bench, *, lamp: object
         return field_from_list(spec.entries, recording)
     if source == "lamp":
         if lamp is None or bench.voltage is None:
-            raise FieldError(str(recording.path), "the lamp needs field.lamp and cell.voltage in the bench file")
-        return field_from_lamp(lamp, recording, exposure=exposure_of(bench, recording), voltage=bench.voltage.value)
+            raise FieldError(
+                str(recording.path), "the lamp needs field.lamp and cell.voltage in the bench file"
+            )
+        return field_from_lamp(
+            lamp, recording, exposure=exposure_of(bench, recording), voltage=bench.voltage.value
+        )
     if spec.log is None or spec.clock_offset is None:
-        raise FieldError(str(recording.path), "the log needs field.log and field.clock_offset in the bench file")
+        raise FieldError(
+            str(recording.path), "the log needs field.log and field.clock_offset in the bench file"
+        )
     log = read_log(spec.log, time_column=spec.time_column, voltage_column=spec.voltage_column,
                    time_unit=spec.time_unit, voltage_unit=spec.voltage_unit)  # fmt: skip
     return field_from_log(log, recording, offset=spec.clock_offset.value, offset_std=spec.clock_offset.std)

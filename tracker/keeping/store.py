@@ -9,6 +9,7 @@ from __future__ import annotations
 import errno
 import hashlib
 import json
+import math
 import os
 import shutil
 import tempfile
@@ -121,14 +122,14 @@ def _write_draft(result: Result, draft: Path, *, tables: str) -> dict[str, Any]:
 def _publish(draft: Path, folder: Path) -> None:
     """Move the draft into place by renames, provenance last."""
     if not folder.exists():
-        os.chmod(draft, 0o755)
+        draft.chmod(0o755)
         draft.rename(folder)
         _sync(folder.parent)
         return
     old = {path.name for path in folder.glob("tracks.*")}
     new = {path.name for path in draft.iterdir()}
     for name in sorted(new, key=lambda n: n == PROVENANCE):
-        os.replace(draft / name, folder / name)
+        (draft / name).replace(folder / name)
     for name in old - new:
         (folder / name).unlink()
     _sync(folder)
@@ -185,7 +186,9 @@ def _read_once(folder: Path, *, tracks: bool) -> Result:
             raise ResultError(str(path), "is missing; measure the recording again")
         expected = provenance.get("tables", {}).get(file)
         if expected is not None and file_hash(path) != expected:
-            raise _MixedTablesError(str(path), f"does not belong to its {PROVENANCE}; measure the recording again")
+            raise _MixedTablesError(
+                str(path), f"does not belong to its {PROVENANCE}; measure the recording again"
+            )
         try:
             frames[name] = read_table(path, columns)
         except (ValueError, OSError) as error:
@@ -260,7 +263,7 @@ def replace_file(path: Path, write: Callable[[Path], object]) -> None:
         try:
             write(part)
             _sync(part)
-            os.replace(part, path)
+            part.replace(path)
         finally:
             part.unlink(missing_ok=True)
         _sync(path.parent)
@@ -305,7 +308,7 @@ def _plain(value: Any) -> Any:
         return _plain(value.tolist())
     if isinstance(value, Path):
         return str(value)
-    if isinstance(value, float) and (value != value or value in (float("inf"), float("-inf"))):
+    if isinstance(value, float) and not math.isfinite(value):
         return None
     return value
 
@@ -317,5 +320,7 @@ def _one_line(target: Path) -> Iterator[None]:
         yield
     except OSError as error:
         if error.errno in (errno.ENOSPC, errno.EDQUOT):
-            raise ResultError(str(target), "the disk is full; nothing was changed, free some space and repeat") from error
+            raise ResultError(
+                str(target), "the disk is full; nothing was changed, free some space and repeat"
+            ) from error
         raise ResultError(str(target), f"cannot be written ({error.strerror or error})") from error

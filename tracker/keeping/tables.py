@@ -41,8 +41,13 @@ TRACKS = (
     Column("segment", "", "number of the segment of constant voltage; -1 between two", "int"),
     Column("used", "", "1 if the sighting took part in the fits, else 0", "int"),
     Column("width_px", "px", "standard deviation of the spot", decimals=3),
-    Column("flags", "", "sum of what was odd about the sighting: 1 saturated, 2 edge, 4 crowded, 8 streak, 16 soft, "
-           "32 on a line, 64 merged", "int"),
+    Column(
+        "flags",
+        "",
+        "sum of what was odd about the sighting: 1 saturated, 2 edge, 4 crowded, 8 streak, 16 soft, "
+        "32 on a line, 64 merged",
+        "int",
+    ),
 )
 
 SEGMENTS = (
@@ -157,7 +162,8 @@ def write_csv(frame: pd.DataFrame, path: Path, columns: Sequence[Column]) -> Non
     for column in columns:
         values = frame[column.name]
         if column.kind == "text":
-            arrays.append(pa.array([None if v is None or v != v else safe_cell(str(v)) for v in values], pa.string()))
+            texts = [safe_cell(str(text)) for text in values.fillna("")]
+            arrays.append(pa.array([text or None for text in texts], pa.string()))
         elif column.decimals is not None:
             arrays.append(pa.array(np.round(values.to_numpy(np.float64), column.decimals), from_pandas=True))
         else:
@@ -185,7 +191,9 @@ def write_parquet(frame: pd.DataFrame, path: Path, columns: Sequence[Column]) ->
     for column in columns:
         array = pa.array(frame[column.name], from_pandas=True)
         arrays.append(array)
-        fields.append(pa.field(column.name, array.type, metadata={"unit": column.unit, "meaning": column.meaning}))
+        fields.append(
+            pa.field(column.name, array.type, metadata={"unit": column.unit, "meaning": column.meaning})
+        )
     pq.write_table(pa.table(arrays, schema=pa.schema(fields)), path, compression="zstd")
 
 

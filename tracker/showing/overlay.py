@@ -8,7 +8,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -80,7 +80,9 @@ class TrackIndex:
         return made
 
 
-def grey8(picture: NDArray[np.generic], *, low: float | None = None, high: float | None = None) -> NDArray[np.uint8]:
+def grey8(
+    picture: NDArray[np.generic], *, low: float | None = None, high: float | None = None
+) -> NDArray[np.uint8]:
     """Turn a grey picture of any depth into 8 bit for a screen.
 
     Parameters
@@ -102,7 +104,7 @@ def grey8(picture: NDArray[np.generic], *, low: float | None = None, high: float
     low = float(values.min()) if low is None else low
     high = float(values.max()) if high is None else high
     scaled = (values - low) * (255.0 / max(high - low, 1e-9))
-    return np.clip(np.rint(scaled), 0, 255).astype(np.uint8)
+    return np.asarray(np.clip(np.rint(scaled), 0, 255), dtype=np.uint8)
 
 
 def draw_overlay(
@@ -128,7 +130,7 @@ def draw_overlay(
     """
     import cv2
 
-    drawn = cv2.cvtColor(picture, cv2.COLOR_GRAY2BGR)
+    drawn: NDArray[Any] = cv2.cvtColor(picture, cv2.COLOR_GRAY2BGR)
     if zoom > 1:
         drawn = cv2.resize(drawn, None, fx=zoom, fy=zoom, interpolation=cv2.INTER_NEAREST)
     for mark in marks:
@@ -143,10 +145,10 @@ def draw_overlay(
 def _to_screen(points: NDArray[np.float64], zoom: int) -> NDArray[np.int32]:
     """Pixel centres of the picture as OpenCV's fixed-point places on the enlarged one."""
     placed = (points + 0.5) * zoom - 0.5
-    return np.rint(placed * 2**_SHIFT).astype(np.int32)
+    return np.asarray(np.rint(placed * 2**_SHIFT), dtype=np.int32)
 
 
-def _draw_shape(drawn: NDArray[np.uint8], mark: Mark, colour: tuple[int, int, int], thick: int, zoom: int) -> None:
+def _draw_shape(drawn: NDArray[Any], mark: Mark, colour: tuple[int, int, int], thick: int, zoom: int) -> None:
     """Circle, square or cross around the droplet, and its number beside it."""
     import cv2
 
@@ -160,7 +162,15 @@ def _draw_shape(drawn: NDArray[np.uint8], mark: Mark, colour: tuple[int, int, in
         for sign in (-1, 1):
             near, far = arm // 3, arm
             for a, b in ((-far, -near), (near, far)):
-                cv2.line(drawn, (cx + a, cy + sign * a), (cx + b, cy + sign * b), colour, thick, cv2.LINE_AA, _SHIFT)
+                cv2.line(
+                    drawn,
+                    (cx + a, cy + sign * a),
+                    (cx + b, cy + sign * b),
+                    colour,
+                    thick,
+                    cv2.LINE_AA,
+                    _SHIFT,
+                )
     place = (int(cx / 2**_SHIFT + 10 + zoom), int(cy / 2**_SHIFT - 6))
     cv2.putText(drawn, str(mark.droplet), place, cv2.FONT_HERSHEY_SIMPLEX, 0.4, (0, 0, 0), 3, cv2.LINE_AA)
     cv2.putText(drawn, str(mark.droplet), place, cv2.FONT_HERSHEY_SIMPLEX, 0.4, colour, 1, cv2.LINE_AA)

@@ -114,7 +114,14 @@ def track_path(result: Result, droplet: int) -> dict[str, NDArray[Any]]:
         here = segment == number
         if number in speeds.index and np.isfinite(speeds[number]):
             model[here] = height[here].mean() - speeds[number] * (time[here] - time[here].mean())
-    return {"time": time, "frame": frame, "height": height, "model": model, "residual": height - model, "used": used}
+    return {
+        "time": time,
+        "frame": frame,
+        "height": height,
+        "model": model,
+        "residual": height - model,
+        "used": used,
+    }
 
 
 def shade_segments(axes: Axes, result: Result) -> None:

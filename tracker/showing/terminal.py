@@ -35,7 +35,12 @@ def progress_bar(label: str, *, hidden: bool = False) -> Iterator[Progress | Non
     from rich.console import Console
     from rich.progress import BarColumn, Progress, TextColumn, TimeRemainingColumn
 
-    columns = (TextColumn("{task.description}"), BarColumn(), TextColumn("{task.percentage:>3.0f} %"), TimeRemainingColumn())
+    columns = (
+        TextColumn("{task.description}"),
+        BarColumn(),
+        TextColumn("{task.percentage:>3.0f} %"),
+        TimeRemainingColumn(),
+    )
     with Progress(*columns, console=Console(stderr=True), transient=True) as bar:
         task = bar.add_task(label, total=None)
         yield lambda done, total: bar.update(task, completed=done, total=total or None)
@@ -56,7 +61,9 @@ def show_result(result: Result) -> None:
     drops, frames = result.droplets, result.recording.get("frames", {})
     counts = drops["verdict"].value_counts()
     told = ", ".join(f"{counts.get(v, 0)} {v}" for v in ("keep", "doubt", "reject"))
-    span = f"{frames.get('count', 0)} frames, {frames.get('first_s', 0):.6g} to {frames.get('last_s', 0):.6g} s"
+    span = (
+        f"{frames.get('count', 0)} frames, {frames.get('first_s', 0):.6g} to {frames.get('last_s', 0):.6g} s"
+    )
     console.print(f"{result.recording.get('file', '')}: {span}; {len(drops)} droplets: {told}", markup=False)
     if len(drops):
         console.print(_droplet_table(result))
@@ -80,15 +87,24 @@ def _droplet_table(result: Result) -> Any:
              "number", "P", "reasons")  # fmt: skip
     made = Table(box=box.SIMPLE, pad_edge=False)
     for head in heads:
-        made.add_column(head, justify="left" if head in ("verdict", "reasons") else "right", no_wrap=head != "reasons")
+        made.add_column(
+            head, justify="left" if head in ("verdict", "reasons") else "right", no_wrap=head != "reasons"
+        )
     for row in result.droplets.itertuples(index=False):
         made.add_row(
-            str(row.droplet), str(row.verdict), str(row.frames),
-            pair(row.fall_speed_m_s, row.fall_speed_std_m_s, 1e6), pair(row.radius_m, row.radius_std_m, 1e6),
-            number(row.charge_c, 1e19, 3), number(row.charge_own_std_c, 1e19, 3), number(row.charge_shared_std_c, 1e19, 3),
-            number(row.charge_c, 1 / ELEMENTARY_CHARGE, 2), "" if missing(row.charge_number) else str(row.charge_number),
-            number(row.charge_number_probability, 1, 3), "" if missing(row.reasons) else str(row.reasons),
-        )  # fmt: skip
+            str(row.droplet),
+            str(row.verdict),
+            str(row.frames),
+            pair(row.fall_speed_m_s, row.fall_speed_std_m_s, 1e6),
+            pair(row.radius_m, row.radius_std_m, 1e6),
+            number(row.charge_c, 1e19, 3),
+            number(row.charge_own_std_c, 1e19, 3),
+            number(row.charge_shared_std_c, 1e19, 3),
+            number(row.charge_c, 1 / ELEMENTARY_CHARGE, 2),
+            "" if missing(row.charge_number) else str(row.charge_number),
+            number(row.charge_number_probability, 1, 3),
+            "" if missing(row.reasons) else str(row.reasons),
+        )
     return made
 
 
@@ -107,7 +123,7 @@ def missing(value: object) -> bool:
     """
     import pandas as pd
 
-    return bool(pd.isna(value))  # type: ignore[call-overload]
+    return bool(pd.isna(value))
 
 
 def number(value: Any, factor: float, decimals: int) -> str:
