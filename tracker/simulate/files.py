@@ -58,7 +58,7 @@ def tick(path: Path, scene: Scene) -> float:
 
 
 @contextmanager
-def open_writer(path: Path, scene: Scene) -> Iterator[Writer]:
+def open_writer(path: Path, scene: Scene, *, shown: Path) -> Iterator[Writer]:
     """Open a recording for writing; the suffix chooses container and default codec.
 
     Parameters
@@ -67,6 +67,8 @@ def open_writer(path: Path, scene: Scene) -> Iterator[Writer]:
         ``.avi .mp4 .mov .mkv .webm`` video, ``.tif .tiff`` stack, no suffix: a folder of PNG pictures.
     scene : Scene
         Size, depth, codec, quality, frame rate.
+    shown : Path
+        The name that errors tell, where `path` is a temporary one.
 
     Yields
     ------
@@ -84,7 +86,7 @@ def open_writer(path: Path, scene: Scene) -> Iterator[Writer]:
     try:
         path.parent.mkdir(parents=True, exist_ok=True)
         if suffix in _USUAL:
-            with _video(path, scene) as write:
+            with _video(path, scene, shown) as write:
                 yield write
         elif suffix in (".tif", ".tiff"):
             import tifffile
@@ -95,9 +97,9 @@ def open_writer(path: Path, scene: Scene) -> Iterator[Writer]:
             path.mkdir(exist_ok=True)
             yield _png_writer(path)
         else:
-            raise UsageError(f"{path}: known are {' '.join(_USUAL)} .tif .tiff, or no suffix")
+            raise UsageError(f"{shown}: known are {' '.join(_USUAL)} .tif .tiff, or no suffix")
     except OSError as error:
-        raise FileError(str(path), f"cannot be written: {error.strerror or error}") from error
+        raise FileError(str(shown), f"cannot be written: {error.strerror or error}") from error
 
 
 def _stack_writer(stack: Any) -> Writer:
@@ -135,14 +137,14 @@ def _pixel_format(path: Path, scene: Scene, codec: str) -> tuple[str, str]:
 
 
 @contextmanager
-def _video(path: Path, scene: Scene) -> Iterator[Writer]:
+def _video(path: Path, scene: Scene, shown: Path) -> Iterator[Writer]:
     """Encode pictures one by one, so that memory does not grow with the length."""
     import av
 
     codec = scene.codec or _USUAL[path.suffix.lower()]
     if codec not in _ENCODERS:
-        raise UsageError(f"{path}: unknown codec {codec!r}; known are {', '.join(_ENCODERS)}")
-    given, stored = _pixel_format(path, scene, codec)
+        raise UsageError(f"{shown}: unknown codec {codec!r}; known are {', '.join(_ENCODERS)}")
+    given, stored = _pixel_format(shown, scene, codec)
     rate = Fraction(scene.frame_rate).limit_denominator(1001)
     step = (
         1 / rate
@@ -166,7 +168,7 @@ def _video(path: Path, scene: Scene) -> Iterator[Writer]:
             for packet in stream.encode():
                 container.mux(packet)
         except av.FFmpegError as error:
-            raise FileError(str(path), f"cannot be encoded as {codec}: {error.strerror}") from error
+            raise FileError(str(shown), f"cannot be written as {codec}: {error.strerror}") from error
 
 
 def _set_quality(context: Any, codec: str, quality: int) -> None:

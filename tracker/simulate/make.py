@@ -43,7 +43,7 @@ class Simulated:
 
 
 def simulate(
-    scene: Scene, out: str | Path, *, seed: int, progress: Callable[[int, int], None] | None = None
+    scene: Scene, out: str | Path, *, seed: int, progress: Callable[[float, float], None] | None = None
 ) -> Simulated:
     """Write a recording with known truth.
 
@@ -87,7 +87,7 @@ def simulate(
     motion = move(scene, drops, starts, motion_rng)
     looks = draw_looks(scene, camera_rng)
     written, repeated = _losses(scene, len(starts), file_rng)
-    with _whole(out) as part, open_writer(part, scene) as write:
+    with _whole(out) as part, open_writer(part, scene, shown=out) as write:
         shown = None
         for k, picture in enumerate(pictures(scene, looks, motion, camera_rng)):
             if written[k]:

@@ -3,14 +3,14 @@
 from __future__ import annotations
 
 import itertools
+import json
 import math
 import tomllib
-from collections.abc import Mapping
+from collections.abc import Iterable, Mapping
 from dataclasses import dataclass, fields
 from pathlib import Path
 from typing import Any
 
-from physics.errors import FallriseError
 from tracker.errors import FileError, UsageError
 
 Knots = tuple[tuple[float, float], ...]
@@ -179,6 +179,57 @@ def scene_from_mapping(values: Mapping[str, Any]) -> Scene:
     return Scene(**values)
 
 
+def scene_text(scene: Scene) -> str:
+    """Write a scene as TOML, every field with its value.
+
+    Parameters
+    ----------
+    scene : Scene
+        The scene.
+
+    Returns
+    -------
+    text : str
+        One line a field, as `read_scene` reads it; a lamp that is not there is left out.
+    """
+    values = {f.name: getattr(scene, f.name) for f in fields(Scene)}
+    return "".join(f"{name} = {_toml(value)}\n" for name, value in values.items() if value is not None)
+
+
+def _toml(value: Any) -> str:
+    """One value as TOML."""
+    if isinstance(value, tuple):
+        return f"[{', '.join(_toml(v) for v in value)}]"
+    return json.dumps(value)  # numbers, booleans and plain texts look the same in both
+
+
+def read_assignments(lines: Iterable[str]) -> dict[str, Any]:
+    """Read fields that a person typed as ``KEY=VALUE``.
+
+    Parameters
+    ----------
+    lines : iterable of str
+        Each a key and a TOML value, such as ``voltages=[0, 260, -260]``.
+
+    Returns
+    -------
+    values : dict
+        To be handed to `scene_from_mapping`.
+
+    Raises
+    ------
+    UsageError
+        If a line is none.
+    """
+    values: dict[str, Any] = {}
+    for line in lines:
+        try:
+            values.update(tomllib.loads(line))
+        except ValueError:
+            raise UsageError(f"--set {line}: must be KEY=VALUE with a TOML value, such as lines=4") from None
+    return values
+
+
 def read_scene(path: str | Path) -> dict[str, Any]:
     """Read the fields of a scene from a TOML file.
 
@@ -199,7 +250,5 @@ def read_scene(path: str | Path) -> dict[str, Any]:
     """
     try:
         return tomllib.loads(Path(path).read_text(encoding="utf-8"))
-    except FallriseError:
-        raise
     except (OSError, ValueError) as error:
         raise FileError(str(path), f"no scene could be read: {error}") from error
