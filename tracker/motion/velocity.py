@@ -9,14 +9,14 @@ from typing import Literal
 import numpy as np
 
 from calibration.scale import Scale, to_metres
-from physics.errors import PhysicsError
+from physics.freefit import MIN_INCREMENTS, free_fit, robust_increments
 from physics.increments import Increments, field_impulse, increments, whitened
 from tracker.motion.field import uncertain_spans
 from tracker.records import Field, Flag, FloatArray, IntArray, Recording, Tracks, readonly
 
-OUTLIER = 5.0  # whitened residual beyond which one sighting, or one step, does not belong to the droplet
+OUTLIER = 5.0  # whitened residual of a step beyond which the place of the droplet jumped
 LEFT_OUT = Flag.MERGED | Flag.EDGE  # sightings whose place may be biased by more than it is uncertain
-LEAST_STEPS = 8  # for a fit of speeds, diffusion and noise
+MOST_HOPS = 5  # a track with more is no track of one droplet
 LEAST_DRIVE = 5.0  # significance that the drive must reach, over all droplets, to give gravity's direction
 
 
@@ -152,77 +152,32 @@ def _breaks(
 
 
 @dataclass(frozen=True, slots=True)
-class RoughFit:
-    """Speeds along both picture axes with diffusion and noise; the first look at a droplet."""
+class _Speeds:
+    """Speeds of one droplet along both picture axes."""
 
-    speed: FloatArray  # (2,) m/s along down and side, field off
+    fall: FloatArray  # (2,) m/s along down and side, field off
     drive: FloatArray  # (2,) m/s per V
-    speed_var: float  # (m/s)^2 of each component
+    fall_var: float  # (m/s)^2 of each component
     drive_var: float  # (m/s per V)^2 of each component; inf if the field never changed
-    diffusion: float  # m^2/s
-    rho: float  # s
 
 
-def rough_fit(steps: Increments) -> RoughFit | None:
-    """Fit speed and drive along both axes, with diffusion and noise from the steps' own covariance.
-
-    Parameters
-    ----------
-    steps : Increments
-        Of one droplet.
-
-    Returns
-    -------
-    fit : RoughFit or None
-        None if the steps are too few or do not vary.
-
-    Notes
-    -----
-    Diffusion and noise by the covariance-based estimator (Vestergaard et al., Phys. Rev. E 89, 022726): with
-    residuals d of the speeds, s^2 = -<d_k d_k+1> + D tau/3 and D = (<d^2> - 2 s^2) / <2 dt - 2 tau/3>. Good
-    enough to weigh steps; final values come from `physics.motion`.
-    """
-    if len(steps) < LEAST_STEPS:
+def _speeds(path: Path) -> _Speeds | None:
+    """Fit speed and drive along both axes; None if the track is too short."""
+    steps = path.steps()
+    if len(steps) < MIN_INCREMENTS:
         return None
-    driven = np.ptp(steps.impulse / steps.dt) > 0
+    fit = free_fit(steps)
+    driven = bool(np.all(np.isfinite(fit.drive_per_volt)))
     design = np.column_stack([steps.dt, steps.impulse]) if driven else steps.dt[:, None]
-    diffusion, rho = _moments(steps, design)
-    if not diffusion > 0:
-        return None
-    white = [whitened(steps, diffusion=diffusion, rho=rho, columns=design, axis=axis) for axis in _AXES]
-    normal = white[0].columns.T @ white[0].columns
-    if np.linalg.cond(normal) > 1e14:
-        return None
-    covariance = np.linalg.inv(normal)
+    rho = float(np.exp(fit.log_rho))
+    white = [whitened(steps, diffusion=fit.diffusion, rho=rho, columns=design, axis=axis) for axis in _AXES]
     found = np.array([np.linalg.lstsq(w.columns, w.data, rcond=None)[0] for w in white])
-    drive = found[:, 1] if driven else np.zeros(2)
-    drive_var = float(covariance[1, 1]) if driven else float("inf")
-    return RoughFit(found[:, 0], drive, float(covariance[0, 0]), drive_var, diffusion, rho)
+    covariance = np.linalg.inv(white[0].columns.T @ white[0].columns)
+    drive, drive_var = (found[:, 1], float(covariance[1, 1])) if driven else (np.zeros(2), float("inf"))
+    return _Speeds(found[:, 0], drive, float(covariance[0, 0]), drive_var)
 
 
 _AXES: tuple[Literal["down"], Literal["side"]] = ("down", "side")
-
-
-def _moments(steps: Increments, design: FloatArray) -> tuple[float, float]:
-    """D in m^2/s and s^2/D in s from second moments of the residuals along both axes."""
-    residuals = [_residual(data, design) for data in (steps.down, steps.side)]
-    joined = steps.blur_off > 0 if steps.exposure > 0 else np.diff(steps.first) == 1
-    size = float(np.mean([np.mean(r**2) for r in residuals]))
-    if not (size > 0 and np.any(joined)):
-        return size / (2 * float(np.mean(steps.dt))), 0.1 * float(np.median(steps.dt))
-    neighbours = float(np.mean([np.mean(r[:-1][joined] * r[1:][joined]) for r in residuals]))
-    third = steps.exposure / 3
-    # <d^2> = D (2 dt - 2 tau/3) + 2 s^2 and <d d'> = D tau/3 - s^2, so <d^2> + 2 <d d'> = 2 D dt.
-    diffusion = (size + 2 * neighbours) / (2 * float(np.mean(steps.dt)))
-    diffusion = min(
-        max(diffusion, 0.05 * size / (2 * float(np.mean(steps.dt)))), size / float(np.mean(steps.dt))
-    )
-    return diffusion, max((diffusion * third - neighbours) / diffusion, 1e-4 * float(np.median(steps.dt)))
-
-
-def _residual(data: FloatArray, design: FloatArray) -> FloatArray:
-    residual: FloatArray = data - design @ np.linalg.lstsq(design, data, rcond=None)[0]
-    return residual
 
 
 def fit_orientation(
@@ -259,9 +214,9 @@ def fit_orientation(
     """
     picture = Orientation(0.0, 0.0, "picture")
     found = paths(tracks, recording, field=field, scale=scale, exposure=exposure, orientation=picture)
-    fits = [fit for fit in (rough_fit(path.steps()) for path in found if len(path) > LEAST_STEPS) if fit]
+    fits = [fit for fit in (_speeds(path) for path in found if len(path) > MIN_INCREMENTS) if fit]
     drive, significance = _axis([fit.drive for fit in fits], [fit.drive_var for fit in fits])
-    fall = np.sum([fit.speed / fit.speed_var for fit in fits], axis=0) if fits else np.zeros(2)
+    fall = np.sum([fit.fall / fit.fall_var for fit in fits], axis=0) if fits else np.zeros(2)
     if drive is not None and fall @ drive < 0:
         drive = -drive
     seen = None if drive is None else float(np.rad2deg(np.arctan2(drive[1], drive[0])))
@@ -285,9 +240,9 @@ def _axis(vectors: list[FloatArray], variances: list[float]) -> tuple[FloatArray
     return (axes[:, 1], float(np.sqrt(signal))) if signal > 0 else (None, 0.0)
 
 
-def _from_fall(fits: list[RoughFit], fall: FloatArray) -> Orientation:
+def _from_fall(fits: list[_Speeds], fall: FloatArray) -> Orientation:
     """Direction of the mean fall, if it is sure enough; else the picture's own."""
-    weight = float(np.sum([1 / fit.speed_var for fit in fits]))
+    weight = float(np.sum([1 / fit.fall_var for fit in fits]))
     length = float(np.hypot(*fall))
     if weight == 0 or length / np.sqrt(weight) < LEAST_DRIVE:
         note = "gravity's direction cannot be told from the motion; straight down in the picture is used"
@@ -338,81 +293,24 @@ def without_outliers(path: Path) -> tuple[Path, int, tuple[int, ...]]:
 
     Notes
     -----
-    A whitened residual beyond 5 marks a step; chance gives one in 1.7 million. If leaving out the sighting at
-    one of its ends heals the track, that sighting was wrong; else the place itself jumped.
+    Sightings by `physics.freefit.robust_increments`. A whitened residual beyond 5 that is left after that is a
+    lasting jump; chance gives one step in 1.7 million.
     """
-    outliers, hops = 0, []
-    limit = max(3, len(path) // 10)
-    for _ in range(limit):
-        worst = _worst_step(path)
-        if worst is None:
-            break
-        step, size = worst
-        healed = [(_size_at(path.without(end), path.times[end]), end) for end in (step, step + 1)]
-        best, end = min(healed)
-        if best < max(OUTLIER - 1.0, 0.6 * min(size, 8.0)) and best < size:
-            path, outliers = path.without(end), outliers + 1
-        else:
-            hops.append(int(path.frames[step + 1]))
-            path = path.cut(step)
-    return path, outliers, tuple(sorted(hops))
-
-
-def residuals(path: Path) -> tuple[Increments, FloatArray] | None:
-    """Whitened residuals of the rough fit along gravity and across it.
-
-    Parameters
-    ----------
-    path : Path
-        Of one droplet.
-
-    Returns
-    -------
-    steps : Increments
-        That they belong to.
-    residuals : ndarray of shape (2, N)
-        Standard normal for one droplet with one charge. None in place of both if no fit is possible.
-    """
-    try:
+    if len(path.steps()) < 2 * MIN_INCREMENTS:
+        return path, 0, ()
+    _, marked = robust_increments(path.steps())
+    for sighting in marked[::-1]:
+        path = path.without(int(sighting))
+    hops = []
+    for _ in range(MOST_HOPS):
         steps = path.steps()
-        fit = rough_fit(steps)
-    except PhysicsError:
-        return None
-    if fit is None:
-        return None
-    columns = np.column_stack([steps.dt, steps.impulse])
-    scale = 1.0
-    found = []
-    for axis, data_speed, data_drive in zip(_AXES, fit.speed, fit.drive, strict=True):
-        white = whitened(steps, diffusion=fit.diffusion, rho=fit.rho, columns=columns, axis=axis)
-        found.append(white.data - white.columns @ np.array([data_speed, data_drive]))
-    both = np.array(found)
-    # One wrong sighting widens D; the spread of the middle half does not see it.
-    spread = float(np.median(np.abs(both))) / 0.6745
-    scale = min(scale, spread) if spread > 0 else 1.0
-    return steps, both / scale
-
-
-def _worst_step(path: Path) -> tuple[int, float] | None:
-    """Step with the largest residual beyond `OUTLIER`, counted between the sightings of the path."""
-    found = residuals(path)
-    if found is None:
-        return None
-    steps, both = found
-    size = np.max(np.abs(both), axis=0)
-    worst = int(np.argmax(size))
-    return (int(steps.first[worst]), float(size[worst])) if size[worst] > OUTLIER else None
-
-
-def _size_at(path: Path, time: float) -> float:
-    """Largest residual of the steps that hold, or neighbour, a time."""
-    found = residuals(path)
-    if found is None:
-        return float("inf")
-    steps, both = found
-    begin, end = path.times[steps.first], path.times[steps.first + 1]
-    near = np.flatnonzero((begin <= time) & (end >= time))
-    if len(near) == 0:
-        return 0.0
-    window = slice(max(near[0] - 1, 0), near[-1] + 2)
-    return float(np.max(np.abs(both[:, window])))
+        if len(steps) < MIN_INCREMENTS:
+            break
+        fit = free_fit(steps)
+        size = np.maximum(np.abs(fit.down_residuals), np.abs(fit.side_residuals))
+        worst = int(np.argmax(size))
+        if size[worst] <= OUTLIER:
+            break
+        hops.append(int(path.frames[steps.first[worst] + 1]))
+        path = path.cut(int(steps.first[worst]))
+    return path, len(marked), tuple(sorted(hops))
