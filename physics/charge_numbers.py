@@ -7,7 +7,7 @@ unknown with its prior it is measured by the droplets themselves.
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -18,12 +18,13 @@ from physics.errors import PhysicsError
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
-LogLikelihood = tuple[ArrayLike, ArrayLike]  # charge numbers -K..K and the log likelihood of each
+LogDensity = Callable[[FloatArray], FloatArray]  # charges in C -> log density of one droplet's charge
+LogLikelihood = tuple[ArrayLike, ArrayLike]  # consecutive charge numbers and the log likelihood of each
+Shape = LogDensity | LogLikelihood | None
 
 OUTLIER_SHARE = 0.05  # prior probability that a charge is on no tooth
-GAUSSIAN_BELOW = (
-    0.25  # own standard deviation over e; below it the likelihood of a charge is normal where it matters
-)
+FUNCTION_FROM = 0.1  # own standard deviation over e from which a given density replaces the normal one
+PAIR_FROM = 0.25  # the same for a likelihood that is known at whole numbers only
 _GRID_REACH = 4.0  # prior standard deviations of the factor that are searched
 _LEAST_GRID = 321
 _MOST_GRID = 6001
@@ -49,7 +50,7 @@ def number_probabilities(
     own_stds: ArrayLike,
     *,
     shared_rel_std: ArrayLike = 0.0,
-    log_likelihoods: Sequence[LogLikelihood | None] | None = None,
+    shapes: Sequence[Shape] | None = None,
     unit: float = ELEMENTARY_CHARGE,
 ) -> ChargeNumbers:
     """Probability of every charge number of every droplet of one bench.
@@ -62,10 +63,11 @@ def number_probabilities(
         Their own standard deviations in C, above 0, without what the droplets share.
     shared_rel_std : array_like of shape () or (N,), optional
         Relative standard uncertainty of the common factor; per droplet where sensitivities differ.
-    log_likelihoods : sequence of (numbers, log likelihood) or None, optional
-        Of each droplet at consecutive charge numbers, flat prior. Used where the own standard deviation
-        exceeds e/4, where the shape matters; between whole numbers it is interpolated. Below, the normal
-        density is used.
+    shapes : sequence, optional
+        For each droplet None, a function that gives the log density at charges in C (up to a constant), or a
+        pair (consecutive charge numbers, their log likelihood under a flat prior), which is interpolated.
+        Used where the charge is so blurred that more than mean and standard deviation matter: from 0.1 e for
+        a function, from 0.25 e for a pair, which is too coarse below. Elsewhere the density is normal.
     unit : float, optional
         In C; the elementary charge unless a scale of another unit is wanted.
 
@@ -83,8 +85,8 @@ def number_probabilities(
     -----
     Measured charge = factor x n e + noise, the factor normal about 1. Each droplet's likelihood of a factor
     is its wrapped density: a smooth set of charges says nothing of the factor, so a set whose comb is blurred
-    falls back to the form in which each droplet carries the shared uncertainty by itself. P_i(n) = sum_k p(k
-    | all) P_i(n | k).
+    falls back to the form in which each droplet carries the shared uncertainty by itself. Over the factors k,
+    P_i(n) = sum_k p(k given all) P_i(n given k).
     """
     q, s, shared = _columns(charges, own_stds, shared_rel_std, unit)
     if len(q) == 0:
@@ -96,7 +98,7 @@ def number_probabilities(
     log_post = np.log(prior)
     outlier = np.empty((len(q), len(grid)))
     for part in chunks:
-        density, _ = _wrapped(q[part], s[part], values[part], factor[part], _part(log_likelihoods, part))
+        density, _ = _wrapped(q[part], s[part], values[part], factor[part], _part(shapes, part), unit)
         mixed = (1 - OUTLIER_SHARE) * density + OUTLIER_SHARE
         outlier[part] = OUTLIER_SHARE / mixed
         log_post = log_post + np.log(mixed).sum(axis=0)
@@ -104,7 +106,7 @@ def number_probabilities(
     post /= post.sum()
     probability = np.empty(values.shape)
     for part in chunks:
-        _, given = _wrapped(q[part], s[part], values[part], factor[part], _part(log_likelihoods, part))
+        _, given = _wrapped(q[part], s[part], values[part], factor[part], _part(shapes, part), unit)
         probability[part] = given @ post
     best = probability.argmax(axis=1)
     rows = np.arange(len(q))
@@ -162,16 +164,16 @@ def _chunks(count: int, each: int) -> list[slice]:
     return [slice(start, min(start + size, count)) for start in range(0, count, size)]
 
 
-def _part(given: Sequence[LogLikelihood | None] | None, part: slice) -> Sequence[LogLikelihood | None]:
+def _part(given: Sequence[Shape] | None, part: slice) -> Sequence[Shape]:
     """Log likelihoods of a slice of droplets; nothing if there are none."""
     return () if given is None else given[part]
 
 
 def _wrapped(
-    q: FloatArray, s: FloatArray, values: IntArray, factor: FloatArray, exact: Sequence[LogLikelihood | None]
+    q: FloatArray, s: FloatArray, values: IntArray, factor: FloatArray, exact: Sequence[Shape], unit: float
 ) -> tuple[FloatArray, FloatArray]:
     """Wrapped density (N, G) of each charge for each factor, and the probability (N, K, G) of each number given it."""
-    log_like = _log_likelihood(q, s, values, factor, exact)
+    log_like = _log_likelihood(q, s, values, factor, exact, unit)
     top = log_like.max(axis=1)
     given = np.exp(log_like - top[:, None])
     total = given.sum(axis=1)
@@ -183,16 +185,33 @@ def _log_likelihood(
     s: FloatArray,
     values: IntArray,
     factor: FloatArray,
-    exact: Sequence[LogLikelihood | None],
+    exact: Sequence[Shape],
+    unit: float,
 ) -> FloatArray:
     """Log density (N, K, G) of each measured charge for each number and factor, per unit of charge."""
     expected = values[:, :, None] * factor[:, None, :]
     z = (q[:, None, None] - expected) / s[:, None, None]
     out: FloatArray = -0.5 * z**2 - np.log(s * np.sqrt(2 * np.pi))[:, None, None]
     for i, given in enumerate(exact):
-        if given is not None and s[i] >= GAUSSIAN_BELOW:
+        if callable(given):
+            if s[i] >= FUNCTION_FROM:
+                out[i] = _tabulated(given, expected[i], q[i], s[i], unit)
+        elif given is not None and s[i] >= PAIR_FROM:
             out[i] = _interpolated(given, expected[i])
     return out
+
+
+def _tabulated(density: LogDensity, charge: FloatArray, q: float, s: float, unit: float) -> FloatArray:
+    """Log density at charges over the unit from a table of the given function; 385 points err by less than 0.01."""
+    grid = np.linspace(min(q - 8 * s, charge.min()), max(q + 8 * s, charge.max()), 385)
+    values = np.asarray(density(grid * unit), dtype=float)
+    if values.shape != grid.shape or not np.isfinite(values.max()):
+        raise PhysicsError(
+            "shapes", values.shape, "a function that gives one finite log density for each charge"
+        )
+    values = np.maximum(values - values.max(), -700.0)
+    area = np.sum(np.exp(values)) * (grid[1] - grid[0])
+    return np.asarray(np.interp(charge, grid, values) - np.log(area))
 
 
 def _interpolated(given: LogLikelihood, charge: FloatArray) -> FloatArray:
@@ -203,7 +222,7 @@ def _interpolated(given: LogLikelihood, charge: FloatArray) -> FloatArray:
     usable = np.isfinite(log_like) & (log_like > log_like.max() - 200)
     numbers, log_like = numbers[usable], log_like[usable]
     if len(numbers) < 3 or np.any(np.diff(numbers) != 1):
-        raise PhysicsError("log_likelihoods", numbers, "finite at three consecutive numbers or more")
+        raise PhysicsError("shapes", numbers, "finite at three consecutive numbers or more")
     curve = Akima1DInterpolator(numbers, log_like)
     fine = np.linspace(numbers[0], numbers[-1], 16 * (len(numbers) - 1) + 1)
     density = np.exp(curve(fine) - log_like.max())

@@ -122,11 +122,19 @@ def resolution(charges: ArrayLike, own_stds: ArrayLike, *, unit: float) -> Resol
 
 def _time_factor(numbers: FloatArray, stds: FloatArray) -> float | None:
     """Smallest factor on the time at which the droplets at hand are enough."""
-    for factor in np.geomspace(1.1, MOST_TIME, 48):
-        need = droplets_to_resolve(numbers, stds / np.sqrt(factor))
-        if need is not None and need <= len(numbers):
-            return float(factor)
-    return None
+    if not _enough(numbers, stds / np.sqrt(MOST_TIME)):
+        return None
+    low, high = 1.0, MOST_TIME
+    while high / low > 1.05:
+        middle = float(np.sqrt(low * high))
+        low, high = (low, middle) if _enough(numbers, stds / np.sqrt(middle)) else (middle, high)
+    return high
+
+
+def _enough(numbers: FloatArray, stds: FloatArray) -> bool:
+    """Tell if the droplets at hand would resolve the unit with these uncertainties."""
+    need = droplets_to_resolve(numbers, stds)
+    return need is not None and need <= len(numbers)
 
 
 def _sentence(count: int, more: int | None, factor: float | None) -> str:
