@@ -26,8 +26,8 @@ GAS_CONSTANT = 8.314472  # CODATA 2006, the value that belongs to CIPM-2007
 VISCOSITY_MODEL_REL_STD = 0.002
 # Part of the humidity's effect on the viscosity that the mixture rule may have wrong.
 MIXTURE_RULE_REL_STD = 0.5
-# Lennard-Jones pair of air (97.0 K, 3.617 A) and water (Stockmayer, 506 K, 2.71 A, 1.85 D), joined by the rule
-# of Mason and Monchick (1962) for a polar with a non-polar molecule: well depth in K and diameter in A.
+# Lennard-Jones pair of air (97.0 K, 3.617 A) and water (Stockmayer, 506 K, 2.71 A, 1.85 D), joined by the
+# rule of Mason and Monchick (1962) for a polar with a non-polar molecule: well depth in K, diameter in A.
 PAIR_WELL_DEPTH = 245.0
 PAIR_DIAMETER = 3.137
 

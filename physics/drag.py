@@ -124,7 +124,9 @@ def slip_model(name: str) -> SlipModel:
     return SLIP_MODELS[name]
 
 
-def slip_correction(radius: ArrayLike, *, mean_free_path: ArrayLike, slip: str = "kim2005") -> Floats:
+def slip_correction(
+    radius: ArrayLike, *, mean_free_path: ArrayLike, slip: str = "kim2005", slip_factor: ArrayLike = 1.0
+) -> Floats:
     """Slip (Cunningham) correction Cc, by which a gas drags a small sphere less than Stokes' law says.
 
     Parameters
@@ -135,6 +137,8 @@ def slip_correction(radius: ArrayLike, *, mean_free_path: ArrayLike, slip: str =
         ISO 15900 mean free path in m; broadcasts with `radius`. The model's own convention is applied here.
     slip : str, optional
         Key of `SLIP_MODELS`.
+    slip_factor : array_like, optional
+        On Cc - 1, about 1: to see what an error of the model does.
 
     Returns
     -------
@@ -156,7 +160,7 @@ def slip_correction(radius: ArrayLike, *, mean_free_path: ArrayLike, slip: str =
         model.path_factor * np.asarray(mean_free_path, dtype=np.float64) / np.asarray(radius, np.float64)
     )
     _check_knudsen(knudsen, radius, model)
-    return _correction(knudsen, model)
+    return np.asarray(1.0 + np.asarray(slip_factor, dtype=np.float64) * _term(knudsen, model))
 
 
 def slip_slope(radius: ArrayLike, *, mean_free_path: ArrayLike, slip: str = "kim2005") -> Floats:
@@ -220,17 +224,28 @@ def mobility(
     return np.asarray(correction / resistance)
 
 
-def radius_of_slip_area(area: ArrayLike, *, mean_free_path: ArrayLike, slip: str = "kim2005") -> Floats:
-    """Radius r that solves r^2 Cc(r) = area.
+def solve_radius(
+    target: ArrayLike,
+    *,
+    power: int,
+    mean_free_path: ArrayLike,
+    slip: str = "kim2005",
+    slip_factor: ArrayLike = 1.0,
+) -> Floats:
+    """Radius r that solves r^2 Cc(r) = target (a fall speed) or r / Cc(r) = target (a mobility).
 
     Parameters
     ----------
-    area : array_like
-        In m^2, finite and > 0: the squared radius that a fall speed gives without slip.
+    target : array_like
+        In m^2 or m, finite and > 0.
+    power : int
+        2 for r^2 Cc, 1 for r / Cc.
     mean_free_path : array_like
         ISO 15900 mean free path in m; broadcasts.
     slip : str, optional
         Key of `SLIP_MODELS`.
+    slip_factor : array_like, optional
+        As for `slip_correction`.
 
     Returns
     -------
@@ -240,24 +255,30 @@ def radius_of_slip_area(area: ArrayLike, *, mean_free_path: ArrayLike, slip: str
     Raises
     ------
     PhysicsError
-        If an area is not positive, or the radius is outside the slip model's range.
+        If a target is not positive, or the radius is outside the slip model's range.
 
     Notes
     -----
-    Newton's method in ln r from the side without slip. There ln(r^2 Cc) is increasing with a slope between 1
-    and 2, so the steps approach the root from above and end after about five.
+    Newton's method in ln r from the radius without slip. Both left sides grow with a slope between 1 and 2, the
+    first convex and the second concave, so that the steps approach the root from one side and end after about
+    five.
     """
+    if power not in (1, 2):
+        raise PhysicsError("power", power, "1 or 2")
+    sign = 2 * power - 3
     model = slip_model(slip)
-    log_area = np.log(_positive("area", area))
+    goal = np.log(_positive("target", target))
     path = model.path_factor * np.asarray(mean_free_path, dtype=np.float64)
-    log_radius = np.broadcast_to(0.5 * log_area, np.broadcast_shapes(log_area.shape, path.shape)).copy()
+    factor = np.asarray(slip_factor, dtype=np.float64)
+    shape = np.broadcast_shapes(goal.shape, path.shape, factor.shape)
+    log_radius = np.broadcast_to(goal / power, shape).copy()
     for _ in range(60):
         knudsen = path * np.exp(-log_radius)
         wave = model.beta * np.exp(-model.gamma / knudsen)
-        term = knudsen * (model.alpha + wave)
-        slope = 2.0 - (term + model.gamma * wave) / (1.0 + term)
-        step = (2.0 * log_radius + np.log1p(term) - log_area) / slope
-        log_radius -= step
+        term = factor * knudsen * (model.alpha + wave)
+        slope = power - sign * (term + factor * model.gamma * wave) / (1.0 + term)
+        step = (power * log_radius + sign * np.log1p(term) - goal) / slope
+        log_radius = log_radius - step
         if not np.any(np.abs(step) > 1e-13):
             break
     radius = np.exp(log_radius)
@@ -326,9 +347,9 @@ def stokes_check(reynolds: ArrayLike, *, tolerance: float = 1e-3) -> StokesCheck
     return StokesCheck(largest, excess, holds, warning)
 
 
-def _correction(knudsen: Floats, model: SlipModel) -> Floats:
-    """Cc at a Knudsen number of the model's own convention, unchecked."""
-    return 1.0 + knudsen * (model.alpha + model.beta * np.exp(-model.gamma / knudsen))
+def _term(knudsen: Floats, model: SlipModel) -> Floats:
+    """Cc - 1 at a Knudsen number of the model's own convention, unchecked."""
+    return knudsen * (model.alpha + model.beta * np.exp(-model.gamma / knudsen))
 
 
 def _slope(knudsen: Floats, model: SlipModel) -> Floats:

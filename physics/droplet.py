@@ -210,7 +210,34 @@ def radius_from_fall_speed(speed: ArrayLike, conditions: Conditions) -> Floats:
             "fall_speed", f"{float(down.flat[where]):g} m/s at index {where}", "finite and above 0"
         )
     area = down * (9.0 * conditions.viscosity / (2.0 * conditions.density_excess * conditions.gravity))
-    return drag.radius_of_slip_area(area, mean_free_path=conditions.mean_free_path, slip=conditions.slip)
+    return drag.solve_radius(area, power=2, mean_free_path=conditions.mean_free_path, slip=conditions.slip)
+
+
+def radius_from_diffusion(coefficient: ArrayLike, conditions: Conditions) -> Floats:
+    """Radius of droplets that diffuse at a rate: the inverse of `diffusion`.
+
+    Parameters
+    ----------
+    coefficient : array_like
+        Diffusion coefficient in m^2/s; finite and > 0.
+    conditions : Conditions
+        Air and slip model.
+
+    Returns
+    -------
+    radius : ndarray
+        In m, solved to round-off.
+
+    Raises
+    ------
+    PhysicsError
+        If a coefficient is not finite and positive, or so large that the slip model does not hold.
+    """
+    rate = np.asarray(coefficient, dtype=np.float64)
+    if np.any(~(np.isfinite(rate) & (rate > 0.0))):
+        raise PhysicsError("diffusion", coefficient, "finite and above 0 m^2/s")
+    stokes = BOLTZMANN * conditions.temperature / (6.0 * math.pi * conditions.viscosity * rate)
+    return drag.solve_radius(stokes, power=1, mean_free_path=conditions.mean_free_path, slip=conditions.slip)
 
 
 def charge_from_drive(

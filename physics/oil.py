@@ -13,13 +13,13 @@ def oil_density(
     Parameters
     ----------
     density : float
-        At `density_temperature`, in kg/m^3, 200 to 20 000.
+        At `density_temperature`, in kg/m^3, 2 to 30 000.
     density_temperature : float
         In K.
     temperature : float
         Of the droplets, in K; at most 60 K away.
     expansion : float, optional
-        Cubic expansion coefficient alpha in 1/K, referred to `density_temperature`; 0 to 3e-3.
+        Cubic expansion coefficient alpha in 1/K, referred to `density_temperature`; 0 to 5e-3.
 
     Returns
     -------
@@ -40,10 +40,10 @@ def oil_density(
     ----------
     .. [1] ISO 80000-5:2019, item 5-3.2 (cubic expansion coefficient).
     """
-    if not 200.0 <= density <= 20_000.0:
-        raise PhysicsError("oil_density", density, "200 to 20000 kg/m^3")
-    if not 0.0 <= expansion <= 3e-3:
-        raise PhysicsError("expansion", expansion, "0 to 0.003 1/K")
+    if not 2.0 <= density <= 30_000.0:
+        raise PhysicsError("oil_density", density, "2 to 30000 kg/m^3")
+    if not 0.0 <= expansion <= 5e-3:
+        raise PhysicsError("expansion", expansion, "0 to 0.005 1/K")
     for name, value in (("density_temperature", density_temperature), ("temperature", temperature)):
         if not 200.0 <= value <= 400.0:
             raise PhysicsError(name, value, "200 to 400 K")
