@@ -244,7 +244,7 @@ def _impulse(volts: Course, drops: Drops, bounds: FloatArray, tau: float) -> lis
             )
             total = [a + step * b for a, b in zip(total, _travel(after, bounds, tau), strict=True)]
         columns.append(total)
-    return [np.array([c[i] for c in columns]).reshape(len(columns), -1).T for i in range(3)]
+    return [np.array([c[i] for c in columns]).reshape(len(columns), len(bounds) - 1).T for i in range(3)]
 
 
 def _wander(

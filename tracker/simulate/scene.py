@@ -91,6 +91,7 @@ class Scene:
             for one in value if isinstance(value, tuple) else (value,):
                 if not (isinstance(one, (int, float)) and low <= one <= high):
                     raise UsageError(f"scene: {name_} = {value}: must be within {low:g} to {high:g}")
+        _check_shapes(self)
         _check_joint(self)
 
     @property
@@ -134,6 +135,26 @@ def _tuples(value: Any) -> Any:
     return tuple(_tuples(v) for v in value) if isinstance(value, (list, tuple)) else value
 
 
+def _check_shapes(scene: Scene) -> None:
+    """Refuse lists of the wrong length or with something else than numbers in them."""
+    rows: dict[str, tuple[tuple[Any, ...], int]] = {
+        "radius": ((scene.radius,), 2), "charge_number": ((scene.charge_number,), 2),
+        "schedule": (scene.schedule, 2), "air_current": (scene.air_current, 3), "lamp": ((scene.lamp,), 4),
+    }  # fmt: skip
+    for name, (values, length) in rows.items():
+        for row in values if getattr(scene, name) is not None else ():
+            if not (isinstance(row, tuple) and len(row) == length and all(_is_number(v) for v in row)):
+                raise UsageError(f"scene: {name} = {getattr(scene, name)}: needs {length} numbers each")
+    if not scene.voltages or not scene.air_current:
+        raise UsageError("scene: voltages and air_current need one entry at least")
+    if scene.lamp is not None and min(scene.lamp) < 0:
+        raise UsageError(f"scene: lamp = {scene.lamp}: needs x, y, width, height in px")
+
+
+def _is_number(value: object) -> bool:
+    return isinstance(value, (int, float)) and math.isfinite(value)
+
+
 def _check_joint(scene: Scene) -> None:
     """Refuse what only two fields together make impossible."""
     if scene.radius[0] > scene.radius[1] or scene.charge_number[0] > scene.charge_number[1]:
@@ -150,8 +171,8 @@ def _check_joint(scene: Scene) -> None:
         raise UsageError("scene: ramp must be shorter than each plateau")
     if scene.charge_steps > scene.droplets:
         raise UsageError("scene: charge_steps must not exceed droplets")
-    if not scene.voltages or not math.isfinite(sum(scene.voltages)):
-        raise UsageError("scene: voltages needs one finite voltage at least")
+    if any(b[0] < a[0] for a, b in itertools.pairwise(scene.air_current)):
+        raise UsageError("scene: the times of the air_current must not decrease")
 
 
 def scene_from_mapping(values: Mapping[str, Any]) -> Scene:
