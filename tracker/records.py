@@ -220,6 +220,22 @@ class Measured:
 
 
 @dataclass(frozen=True, slots=True)
+class Decision:
+    """What a person decided on a track; tied to the track's place and time, since numbers may change."""
+
+    time: str  # of the decision, ISO 8601 in UTC
+    droplet: int  # number at that time; for the reader, never for finding the track
+    verdict: str  # keep, doubt, reject, split, trim, join, reset or undo
+    reason: str
+    place: tuple[tuple[float, float, float], ...]  # samples of the track: time in s, x and y in px
+    at: float | None = None  # s, of a split
+    start: float | None = None  # s, of a trim: sightings before are left out
+    end: float | None = None  # s, of a trim: sightings after are left out
+    other: int | None = None  # droplet that is joined
+    other_place: tuple[tuple[float, float, float], ...] = ()  # its samples
+
+
+@dataclass(frozen=True, slots=True)
 class Settings:
     """All that a user may choose for the measurement of one recording."""
 

@@ -12,8 +12,7 @@ import numpy as np
 
 from physics.droplet import Conditions, droplet_mobility, fall_speed, radius_from_fall_speed
 from physics.errors import PhysicsError
-from physics.freefit import MIN_INCREMENTS, FreeFit, free_fit
-from physics.increments import Increments, whitened
+from physics.motion import MIN_INCREMENTS, FreeFit, Increments, free_fit, whitened
 from tracker.records import FloatArray, IntArray
 
 STEP_THRESHOLD = 18.0  # one false step in 1000 droplets

@@ -10,6 +10,7 @@ from collections.abc import Sequence
 import numpy as np
 from numpy.typing import ArrayLike
 
+from tracker.bench import Bench
 from tracker.errors import FieldError
 from tracker.records import Field, FloatArray, Recording, Segment
 
@@ -18,6 +19,7 @@ LEAST_SEPARABILITY = (
 )
 LEAST_RUN = 3  # frames; a lamp that changes for less is flicker
 SAME_VOLTAGE = 0.1  # of the largest voltage: nearer voltages of two sources are the same
+SHARP = 0.1  # of the frame interval: a toggle known so well counts as known
 SATURATED = 0.98  # of full scale: a lit lamp above does not tell how long it was lit
 
 
@@ -36,6 +38,27 @@ def recording_span(recording: Recording) -> tuple[float, float]:
     """
     times = recording.frame_times
     return float(times[0]), float(times[-1] + (recording.frame_interval or 1.0))
+
+
+def exposure_of(bench: Bench, recording: Recording) -> float:
+    """Exposure of each frame.
+
+    Parameters
+    ----------
+    bench : Bench
+        May state it.
+    recording : Recording
+        Else half its frame interval is taken.
+
+    Returns
+    -------
+    exposure : float
+        In s; never longer than the shortest frame interval.
+    """
+    if bench.exposure is None:
+        return 0.5 * recording.frame_interval
+    shortest = float(np.min(np.diff(recording.frame_times))) if len(recording.frame_times) > 1 else np.inf
+    return min(bench.exposure.value, shortest)
 
 
 def field_from_list(
@@ -144,7 +167,8 @@ def uncertain_spans(field: Field, *, frame_interval: float, coverage: float = 3.
     field : Field
         Its `toggle_std` and `clock_offset_std` say how well each toggle is known.
     frame_interval : float
-        In s. Uncertainties below a thousandth of it are as good as none and give no stretch.
+        In s. A toggle known to a tenth of it moves the places by less than Brownian motion in one frame does,
+        and gives no stretch.
     coverage : float, optional
         Half width of a stretch in standard uncertainties.
 
@@ -155,34 +179,10 @@ def uncertain_spans(field: Field, *, frame_interval: float, coverage: float = 3.
     """
     spans = []
     for before, after, std in zip(field.segments, field.segments[1:], field.toggle_std, strict=False):
-        width = coverage * float(np.hypot(std, field.clock_offset_std))
-        if width > 1e-3 * frame_interval:
-            spans.append((before.end - width, after.start + width))
+        known = float(np.hypot(std, field.clock_offset_std))
+        if known > SHARP * frame_interval:
+            spans.append((before.end - coverage * known, after.start + coverage * known))
     return np.array(spans, dtype=float).reshape(-1, 2)
-
-
-def frames_in_doubt(field: Field, times: ArrayLike, *, exposure: float, frame_interval: float) -> np.ndarray:
-    """Frames whose exposure touches a stretch in which the voltage is uncertain.
-
-    Parameters
-    ----------
-    field : Field
-        Voltage over time.
-    times : array_like of shape (N,)
-        Start of each exposure in s.
-    exposure, frame_interval : float
-        In s.
-
-    Returns
-    -------
-    doubtful : ndarray of bool, shape (N,)
-        Such frames are left out of the fits.
-    """
-    start = np.asarray(times, float)
-    doubtful = np.zeros(start.shape, bool)
-    for first, last in uncertain_spans(field, frame_interval=frame_interval):
-        doubtful |= (start < last) & (start + exposure > first)
-    return doubtful
 
 
 def field_from_lamp(

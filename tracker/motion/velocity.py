@@ -9,8 +9,15 @@ from typing import Literal
 import numpy as np
 
 from calibration.scale import Scale, to_metres
-from physics.freefit import MIN_INCREMENTS, free_fit, robust_increments
-from physics.increments import Increments, field_impulse, increments, whitened
+from physics.motion import (
+    MIN_INCREMENTS,
+    Increments,
+    field_impulse,
+    free_fit,
+    increments,
+    robust_increments,
+    whitened,
+)
 from tracker.motion.field import uncertain_spans
 from tracker.records import Field, Flag, FloatArray, IntArray, Recording, Tracks, readonly
 

@@ -1,0 +1,266 @@
+"""The clock of a voltage log against the recording's, found from all droplets together."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from physics.motion import MIN_INCREMENTS, Increments, field_impulse, free_fit, whitened
+from tracker.bench import Bench
+from tracker.errors import FieldError
+from tracker.motion.field import exposure_of, field_of_steps, recording_span
+from tracker.motion.fieldlog import Log, field_from_log, on_recording_clock
+from tracker.motion.velocity import Orientation, Path, fit_orientation, paths
+from tracker.records import Field, FloatArray, IntArray, Recording, Tracks
+
+COARSE = 0.1  # s, step of the first search
+FINE = 0.01  # s, step of the second
+RATE_STD = 3e-4  # relative: what clocks of loggers and cameras differ by; prior of the rate
+RATE_GAIN = 10.83  # chi-square by which a rate must improve the fit, 1 in 1000
+LEAST_MARGIN = 30.0  # chi-square by which the best offset must beat any other
+LEAST_RELATIVE_MARGIN = 0.02  # of the gain; what charge steps and mistaken links may cost the right offset
+LEAST_GAIN = 40.0  # chi-square that the log must explain: one in 1e7 by chance over 1000 offsets
+MOST_DROPLETS = 30  # longest tracks that are used; more narrow the offset below what matters
+STEPS_AT_ONCE = 4_000_000  # numbers held at once in the first search
+
+
+def fit_clock_offset(tracks: Tracks, log: Log, recording: Recording, bench: Bench) -> Field:
+    """Find the clock offset of a log, and its rate where that shows, and give the field.
+
+    Parameters
+    ----------
+    tracks : Tracks
+        Linked with or without the voltage.
+    log : Log
+        On its own clock.
+    recording : Recording
+        Whose time is covered.
+    bench : Bench
+        Scale, exposure and gravity's direction if stated.
+
+    Returns
+    -------
+    field : Field
+        With source ``log``, `clock_offset`, its standard uncertainty, and `clock_rate`.
+
+    Raises
+    ------
+    FieldError
+        If the droplets do not follow the log at any offset, or follow it at several, as with a schedule that
+        repeats; the message names the offsets.
+
+    Notes
+    -----
+    For each offset, speed and drive of every droplet are fitted to its steps; the offset maximises the sum over
+    droplets of the chi-square that the drive explains. First on a grid of 0.1 s over every offset at which the
+    log covers half the recording, then 10 ms, then by the likelihood itself, whose width is the uncertainty. The
+    offset holds at the middle of the recording.
+    """
+    exposure = exposure_of(bench, recording)
+    span = recording_span(recording)
+    idle = field_of_steps("log", [span[0]], [0.0], span=span)
+    picture = Orientation(bench.down_deg or 0.0, 0.0, "picture")
+    found = paths(tracks, recording, field=idle, scale=bench.scale, exposure=exposure, orientation=picture)
+    usable = [path for path in found if len(path.steps()) >= 2 * MIN_INCREMENTS]
+    if not usable:
+        raise FieldError(str(log.path), "no droplet is tracked long enough to set the log's clock; state it")
+    usable = sorted(usable, key=len, reverse=True)[:MOST_DROPLETS]
+    offsets = _search_range(log, span)
+    gain = _coarse_gain(usable, log, offsets)
+    peaks = _peaks(offsets, gain)
+    coarse = field_from_log(log, recording, offset=float(offsets[peaks[0]]))
+    turned = fit_orientation(
+        tracks, recording, field=coarse, scale=bench.scale, exposure=exposure, down_deg=bench.down_deg
+    )
+    if turned.origin == "drive":
+        oriented = paths(
+            tracks, recording, field=idle, scale=bench.scale, exposure=exposure, orientation=turned
+        )
+        chosen = {path.droplet for path in usable}
+        usable = [path for path in oriented if path.droplet in chosen]
+    fit = _Fit(usable, log, recording, exposure)
+    return fit.field([float(offsets[i]) for i in peaks])
+
+
+def _search_range(log: Log, span: tuple[float, float]) -> FloatArray:
+    """Offsets at which the log covers at least half of the recording; a log of changes holds on after its last."""
+    half = 0.5 * (span[1] - span[0])
+    last = float(log.times[-1]) + (0.0 if log.sampled else half)
+    low, high = span[0] + half - last, span[1] - half - float(log.times[0])
+    if high <= low:
+        problem = f"the log lasts {log.times[-1] - log.times[0]:.2f} s, less than half the recording's"
+        raise FieldError(str(log.path), f"{problem} {span[1] - span[0]:.2f} s; state field.clock_offset")
+    return np.arange(low, high + COARSE, COARSE)
+
+
+def _coarse_gain(usable: list[Path], log: Log, offsets: FloatArray) -> FloatArray:
+    """Chi-square that the drive explains at each offset, steps taken as independent."""
+    from scipy.integrate import cumulative_trapezoid
+
+    times, volts = np.asarray(log.times), np.asarray(log.volts)
+    if not log.sampled:
+        times, volts = np.repeat(times, 2)[1:], np.repeat(volts, 2)[:-1]
+    total = cumulative_trapezoid(volts, times, initial=0.0)
+    gain = np.zeros(len(offsets))
+    for path in usable:
+        steps = path.steps()
+        weight = 1 / np.sqrt(steps.dt)
+        drift = np.sqrt(steps.dt) / np.linalg.norm(np.sqrt(steps.dt))
+        begin = path.times[steps.first] + 0.5 * path.exposure
+        rows = max(1, STEPS_AT_ONCE // len(steps))
+        for first in range(0, len(offsets), rows):
+            at = begin - offsets[first : first + rows, None]
+            impulse = (
+                _integral(at + steps.dt, times, volts, total) - _integral(at, times, volts, total)
+            ) * weight
+            impulse -= (impulse @ drift)[:, None] * drift
+            power = np.einsum("ij,ij->i", impulse, impulse)
+            for data in (steps.down, steps.side):
+                score = impulse @ (data * weight)
+                part = score**2 / np.maximum(power, 1e-300) / _step_variance(data * weight)
+                gain[first : first + rows] += np.where(power > 1e-9 * float(power.max() + 1e-300), part, 0.0)
+    return gain
+
+
+def _integral(at: FloatArray, times: FloatArray, volts: FloatArray, total: FloatArray) -> FloatArray:
+    """Integral of the logged voltage to each time, the end voltages holding outside."""
+    inside = np.interp(at, times, total)
+    before, after = np.minimum(at - times[0], 0.0), np.maximum(at - times[-1], 0.0)
+    result: FloatArray = inside + volts[0] * before + volts[-1] * after
+    return result
+
+
+def _step_variance(steps: FloatArray) -> float:
+    """Variance of steps that toggles do not widen: from the middle half of second differences."""
+    second = np.abs(np.diff(steps))
+    return max(float(np.median(second) / 0.6745) ** 2 / 2, 1e-300)
+
+
+def _peaks(offsets: FloatArray, gain: FloatArray, *, most: int = 6) -> list[int]:
+    """Local maxima of the gain, highest first."""
+    inner = np.concatenate(([-np.inf], gain, [-np.inf]))
+    top = np.flatnonzero((gain >= inner[:-2]) & (gain >= inner[2:]))
+    return [int(i) for i in top[np.argsort(gain[top])[::-1]][:most]] or [int(np.argmax(gain))]
+
+
+@dataclass(frozen=True, slots=True)
+class _Droplet:
+    """One droplet's steps with what their whitening needs."""
+
+    steps: Increments
+    frames: IntArray  # of the sightings
+    diffusion: float
+    rho: float
+
+
+class _Fit:
+    """Likelihood of offset and rate of a log, all droplets together."""
+
+    def __init__(self, usable: list[Path], log: Log, recording: Recording, exposure: float) -> None:
+        self.usable, self.log, self.recording, self.exposure = usable, log, recording, exposure
+        self.middle = 0.5 * sum(recording_span(recording))
+        self.droplets: list[_Droplet] = []
+
+    def impulse(self, offset: float, rate: float) -> FloatArray:
+        """Exposure average of the voltage's time integral at every frame."""
+        times = on_recording_clock(np.asarray(self.log.times), offset=offset, rate=rate, middle=self.middle)
+        volts = np.asarray(self.log.volts)
+        if not self.log.sampled:
+            times, volts = np.repeat(times, 2)[1:], np.repeat(volts, 2)[:-1]
+        return field_impulse(times, volts, self.recording.frame_times, self.exposure)
+
+    def prepare(self, offset: float) -> None:
+        """Find diffusion and noise of every droplet with the log at one offset."""
+        impulse = self.impulse(offset, 0.0)
+        self.droplets = []
+        for path in self.usable:
+            steps = path.steps()
+            driven = _with_impulse(steps, impulse[path.frames])
+            fit = free_fit(driven)
+            self.droplets.append(_Droplet(steps, path.frames, fit.diffusion, float(np.exp(fit.log_rho))))
+
+    def gain(self, offset: float, rate: float = 0.0) -> float:
+        """Chi-square that the drives explain, less the penalty of an unlikely rate."""
+        impulse = self.impulse(offset, rate)
+        total = -((rate / RATE_STD) ** 2)
+        for droplet in self.droplets:
+            seconds = np.diff(impulse[droplet.frames])[droplet.steps.first]
+            white = whitened(
+                droplet.steps, diffusion=droplet.diffusion, rho=droplet.rho,
+                columns=np.column_stack([droplet.steps.dt, seconds]),
+            )  # fmt: skip
+            drift, drive = white.columns[:, 0], white.columns[:, 1]
+            free = drive - drift * (drift @ drive) / (drift @ drift)
+            power = float(free @ free)
+            if power > 1e-9 * float(drive @ drive):
+                total += float(free @ white.data) ** 2 / power
+        return total
+
+    def field(self, starts: list[float]) -> Field:
+        """Best offset among the peaks of the first search, checked against the others, as a field."""
+        self.prepare(starts[0])
+        tops = sorted((self._climb(start) for start in starts), reverse=True)
+        best_gain, best = tops[0]
+        self.prepare(best)
+        self._check(best_gain, best, [(gain, at) for gain, at in tops[1:] if abs(at - best) > 2 * COARSE])
+        offset, rate = self._polish(best)
+        mean, std = self._width(offset, rate)
+        return field_from_log(self.log, self.recording, offset=mean, offset_std=std, rate=rate)
+
+    def _climb(self, start: float) -> tuple[float, float]:
+        """Best offset within a coarse step of a start, to 10 ms."""
+        grid = start + np.arange(-COARSE, COARSE + FINE / 2, FINE)
+        gains = [self.gain(float(offset)) for offset in grid]
+        top = int(np.argmax(gains))
+        return gains[top], float(grid[top])
+
+    def _check(self, gain: float, best: float, rivals: list[tuple[float, float]]) -> None:
+        """Refuse a log that explains nothing, or that fits as well elsewhere."""
+        if gain < LEAST_GAIN:
+            problem = f"the droplets do not follow the log at any clock offset (best {best:.2f} s)"
+            raise FieldError(str(self.log.path), f"{problem}; state field.clock_offset or another source")
+        needed = max(LEAST_MARGIN, LEAST_RELATIVE_MARGIN * gain)
+        near = [at for other, at in rivals if gain - other < needed]
+        if near:
+            others = ", ".join(f"{at:.2f} s" for at in near)
+            problem = f"the clock offset is ambiguous: {best:.2f} s fits the droplets, and so does {others}"
+            raise FieldError(
+                str(self.log.path), f"{problem}; the schedule repeats, so state field.clock_offset"
+            )
+
+    def _polish(self, best: float) -> tuple[float, float]:
+        """Offset, and rate if it improves the fit, at the top of the likelihood."""
+        from scipy.optimize import minimize, minimize_scalar
+
+        alone = minimize_scalar(lambda x: -self.gain(float(x)), bounds=(best - FINE, best + FINE), method="bounded",
+                                options={"xatol": 1e-5})  # fmt: skip
+        start = np.array([[alone.x, 0.0], [alone.x + 2e-3, 0.0], [alone.x, RATE_STD]])
+        both = minimize(lambda p: -self.gain(float(p[0]), float(p[1])), start[0], method="Nelder-Mead",
+                        options={"initial_simplex": start, "xatol": 1e-5, "fatol": 0.02, "maxfev": 90})  # fmt: skip
+        if alone.fun - both.fun > RATE_GAIN:
+            return float(both.x[0]), float(both.x[1])
+        return float(alone.x), 0.0
+
+    def _width(self, offset: float, rate: float) -> tuple[float, float]:
+        """Mean and standard deviation of the offset under its likelihood."""
+        top, reach = self.gain(offset, rate), 1e-3
+        while (
+            reach < COARSE
+            and min(self.gain(offset - reach, rate), self.gain(offset + reach, rate)) > top - 12
+        ):
+            reach *= 2
+        grid = offset + np.linspace(-reach, reach, 25)
+        gains = np.array([self.gain(float(x), rate) for x in grid])
+        weight = np.exp(0.5 * (gains - gains.max()))
+        weight /= weight.sum()
+        mean = float(weight @ grid)
+        spacing = grid[1] - grid[0]
+        return mean, float(np.sqrt(weight @ (grid - mean) ** 2 + spacing**2 / 12))
+
+
+def _with_impulse(steps: Increments, impulse: FloatArray) -> Increments:
+    """Give steps whose volt seconds are those of the sightings."""
+    from dataclasses import replace
+
+    return replace(steps, impulse=np.diff(impulse)[steps.first])
