@@ -9,8 +9,9 @@ import numpy as np
 
 from physics.droplet import Conditions
 from physics.errors import PhysicsError
-from physics.freefit import MIN_INCREMENTS, free_fit_of, likelihood_grid
+from physics.freefit import free_fit_of
 from physics.increments import FloatArray, Increments
+from physics.likelihood import MIN_INCREMENTS, likelihood_grid
 from physics.posterior import SPEED_SPAN, Law, law_at, law_table, moments, radius_span
 
 __all__ = ["air_current"]

@@ -18,160 +18,25 @@ from numpy.typing import ArrayLike, NDArray
 from scipy.linalg import lapack
 
 from physics.errors import PhysicsError
-from physics.increments import Axis, FloatArray, Increments, Whitened, whiten_grid, whitened
+from physics.increments import Axis, FloatArray, Increments, Whitened, whitened
+from physics.likelihood import (
+    MIN_INCREMENTS,
+    Design,
+    Sums,
+    best_log_rho,
+    likelihood_grid,
+    sums_of,
+    whitened_design,
+)
 
 __all__ = [
-    "MIN_INCREMENTS",
     "FreeFit",
     "SegmentSpeeds",
-    "Sums",
     "free_fit",
-    "likelihood_grid",
+    "free_fit_of",
     "robust_increments",
     "segment_speeds",
 ]
-
-MIN_INCREMENTS = 8  # fewer leave the variance so few degrees of freedom that no interval would hold
-RHO_POINTS = 9  # over +-3.5 standard deviations the trapezoid rule is exact to 1e-3
-LOG_DROP = 6.125  # nats: 3.5 standard deviations of a normal likelihood
-NOISE_RANGE = (1e-3, 1e4)  # of rho over the median step; below 1e-3 the noise changes nothing
-SINGULAR = 1e-9  # relative: below, drift and drive are one column
-
-
-@dataclass(frozen=True, slots=True)
-class Sums:
-    """Sufficient statistics on a grid of rho; what follows no longer depends on the track's length.
-
-    K values of rho, P charge parts that saw the field. "Less the drives" is the Schur complement: what is
-    left of a sum after the drives of all parts were fitted.
-    """
-
-    count: int  # steps; each axis has as many data
-    parts: NDArray[np.int64]  # (P,) numbers of the parts
-    log_rho: FloatArray  # (K,) evenly spaced, ln s
-    log_det: FloatArray  # (K,) of A + rho M, both axes together
-    drift: FloatArray  # (K,) g'g less the drives
-    drift_data: FloatArray  # (K,) g'y less the drives
-    data: FloatArray  # (K,) y'y less the drives
-    drive: FloatArray  # (K, P) drive per volt at zero drift
-    drive_slope: FloatArray  # (K, P) what one unit of drift takes from it
-    drive_cov: FloatArray  # (K, P, P) inverse of G'G
-    log_det_drive: FloatArray  # (K,) of G'G
-    side_drift: FloatArray  # (K,) g'g across
-    side_speed: FloatArray  # (K,) m/s
-    side_data: FloatArray  # (K,) x'x less the fitted side speed
-    separable: bool  # drift and drives are different columns
-
-    @property
-    def free_residual(self) -> FloatArray:
-        """(K,) sum of squares that the free fit leaves, both axes."""
-        explained = self.drift_data**2 / self.drift if self.separable else 0.0
-        return np.asarray(self.data - explained + self.side_data)
-
-    @property
-    def degrees_of_freedom(self) -> int:
-        """Data less fitted speeds."""
-        return 2 * self.count - len(self.parts) - 1 - int(self.separable)
-
-    @property
-    def restricted(self) -> FloatArray:
-        """(K,) REML log likelihood of rho with D at its best, up to a constant."""
-        own = np.log(self.drift) if self.separable else 0.0
-        penalty = self.log_det + self.log_det_drive + own + np.log(self.side_drift)
-        return np.asarray(-0.5 * (self.degrees_of_freedom * np.log(self.free_residual) + penalty))
-
-
-def _sums(steps: Increments, log_rho: FloatArray) -> Sums:
-    """Sufficient statistics for each rho; see `Sums`."""
-    seen = [p for p in range(steps.parts) if np.any(steps.impulse[steps.part == p] != 0)]
-    drives = [np.where(steps.part == p, steps.impulse, 0.0) for p in seen]
-    columns = np.column_stack([steps.dt, *drives, steps.down])
-    side_columns = np.column_stack([steps.dt, steps.side])
-    rho = np.exp(log_rho)
-    if steps.same_noise:
-        white, log_det = whiten_grid(steps, rho, np.column_stack([columns, steps.side]), "down")
-        gram = np.swapaxes(white, 1, 2) @ white
-        side, side_log_det = gram[:, [0, -1]][:, :, [0, -1]], log_det
-        gram = gram[:, :-1, :-1]
-    else:
-        white, log_det = whiten_grid(steps, rho, columns, "down")
-        gram = np.swapaxes(white, 1, 2) @ white
-        white, side_log_det = whiten_grid(steps, rho, side_columns, "side")
-        side = np.swapaxes(white, 1, 2) @ white
-    inner = gram[:, 1:-1, 1:-1]
-    inverse = np.asarray(np.linalg.inv(inner), dtype=np.float64)
-    ends = gram[:, 1:-1][:, :, [0, -1]]  # G'g and G'y
-    fitted = inverse @ ends
-    schur = gram[:, [0, -1]][:, :, [0, -1]] - np.swapaxes(ends, 1, 2) @ fitted
-    side_speed = side[:, 0, 1] / side[:, 0, 0]
-    return Sums(
-        count=len(steps), parts=np.array(seen, dtype=np.int64), log_rho=log_rho, log_det=log_det + side_log_det,
-        drift=schur[:, 0, 0], drift_data=schur[:, 0, 1], data=schur[:, 1, 1],
-        drive=fitted[:, :, 1], drive_slope=fitted[:, :, 0], drive_cov=inverse,
-        log_det_drive=np.linalg.slogdet(inner)[1], side_drift=side[:, 0, 0], side_speed=side_speed,
-        side_data=side[:, 1, 1] - side_speed * side[:, 0, 1],
-        separable=bool(np.all(schur[:, 0, 0] > SINGULAR * gram[:, 0, 0])),
-    )  # fmt: skip
-
-
-def likelihood_grid(steps: Increments, *, points: int = RHO_POINTS) -> Sums:
-    """Sufficient statistics on a grid of ln rho that holds the restricted likelihood of the noise.
-
-    Parameters
-    ----------
-    steps : Increments
-        At least `MIN_INCREMENTS` steps.
-    points : int
-        Of the grid.
-
-    Returns
-    -------
-    sums : Sums
-        From 3.5 standard deviations below the best to 3.5 above. Where the noise cannot be told from none,
-        the grid begins at rho = 1e-3 of the median step, where it has no effect any more.
-    """
-    if len(steps) < MIN_INCREMENTS:
-        raise PhysicsError("increments", len(steps), f"at least {MIN_INCREMENTS}")
-    low, high = np.log(np.median(steps.dt)) + np.log(NOISE_RANGE)
-    grid = np.linspace(low, high, points + 2)
-    for _ in range(8):
-        sums = _sums(steps, grid)
-        drop = sums.restricted.max() - sums.restricted
-        inside = np.flatnonzero(drop < LOG_DROP)
-        first, last = max(inside[0] - 1, 0), min(inside[-1] + 1, len(grid) - 1)
-        if len(inside) >= 3 and len(inside) <= points - 2:
-            break
-        grid = np.linspace(grid[first], grid[last], points)
-    return _sums(steps, np.linspace(*_limits(sums, first, last), points))
-
-
-def _vertex(grid: FloatArray, value: FloatArray) -> tuple[float, float]:
-    """Place and height of the top of values on an even grid, by the parabola through the highest three."""
-    top = int(np.argmax(value))
-    if top in (0, len(grid) - 1):
-        return float(grid[top]), float(value[top])
-    left, middle, right = value[top - 1 : top + 2]
-    bend = left - 2 * middle + right
-    shift = 0.5 * (left - right) / bend
-    return float(grid[top] + shift * (grid[1] - grid[0])), float(middle - 0.25 * (left - right) * shift)
-
-
-def _limits(sums: Sums, first: int, last: int) -> tuple[float, float]:
-    """Find ln rho where the restricted likelihood has dropped by `LOG_DROP` on either side."""
-    grid, value = sums.log_rho, sums.restricted
-    top, height = _vertex(grid, value)
-    root = np.sign(grid - top) * np.sqrt(2 * np.maximum(height - value, 0.0))  # straight for a parabola
-    bound = np.sqrt(2 * LOG_DROP)
-    below = np.flatnonzero(root <= -bound)
-    above = np.flatnonzero(root >= bound)
-    low, high = grid[first], grid[last]
-    if len(below) and below[-1] + 1 < len(grid):
-        i = below[-1]
-        low = np.interp(-bound, root[i : i + 2], grid[i : i + 2])
-    if len(above) and above[0] > 0:
-        i = above[0] - 1
-        high = np.interp(bound, root[i : i + 2], grid[i : i + 2])
-    return float(low), float(high)
 
 
 @dataclass(frozen=True, slots=True)
@@ -232,18 +97,18 @@ def free_fit_of(steps: Increments, grid: Sums) -> FreeFit:
     log_rho_mean = weight @ grid.log_rho
     log_q = np.log(grid.free_residual)
     log_var = 2 / grid.degrees_of_freedom + weight @ log_q**2 - (weight @ log_q) ** 2
-    best = _sums(steps, np.array([_vertex(grid.log_rho, grid.restricted)[0]]))
+    design = whitened_design(steps, np.array([best_log_rho(grid)]))
+    best = sums_of(design)
     diffusion = float(best.free_residual[0]) / best.degrees_of_freedom
     speeds, covariance = _speeds(best, steps.parts, diffusion)
-    rho = float(np.exp(best.log_rho[0]))
-    down, side = _residuals(steps, best, diffusion, rho)
+    down, side = _residuals(design, best, diffusion)
     return FreeFit(
         fall_speed=float(speeds[0]), fall_speed_std=float(np.sqrt(covariance[0, 0])),
         drive_per_volt=speeds[1:], drive_per_volt_std=np.sqrt(np.diag(covariance)[1:]), covariance=covariance,
         side_speed=float(best.side_speed[0]), side_speed_std=float(np.sqrt(diffusion / best.side_drift[0])),
         diffusion=diffusion, log_diffusion_std=float(np.sqrt(log_var)), log_rho=float(best.log_rho[0]),
         log_rho_std=float(np.sqrt(weight @ grid.log_rho**2 - log_rho_mean**2)),
-        noise_std=float(np.sqrt(rho * diffusion)), dof=best.degrees_of_freedom,
+        noise_std=float(np.sqrt(np.exp(best.log_rho[0]) * diffusion)), dof=best.degrees_of_freedom,
         down_residuals=down, side_residuals=side,
     )  # fmt: skip
 
@@ -262,17 +127,12 @@ def _speeds(best: Sums, parts: int, diffusion: float) -> tuple[FloatArray, Float
     return speeds, covariance
 
 
-def _residuals(steps: Increments, best: Sums, diffusion: float, rho: float) -> tuple[FloatArray, FloatArray]:
-    """Whitened residuals of both axes."""
-    drives = np.zeros(steps.parts)
+def _residuals(design: Design, best: Sums, diffusion: float) -> tuple[FloatArray, FloatArray]:
+    """Whitened residuals of both axes, unit variance."""
     fall = best.drift_data[0] / best.drift[0] if best.separable else 0.0
-    drives[best.parts] = best.drive[0] - best.drive_slope[0] * fall
-    mean = np.column_stack(
-        [fall * steps.dt + drives[steps.part] * steps.impulse, best.side_speed[0] * steps.dt]
-    )
-    down = whitened(steps, diffusion=diffusion, rho=rho, columns=mean[:, 0])
-    side = whitened(steps, diffusion=diffusion, rho=rho, columns=mean[:, 1], axis="side")
-    return down.data - down.columns[:, 0], side.data - side.columns[:, 0]
+    down = np.concatenate([[-fall], fall * best.drive_slope[0] - best.drive[0], [1.0]])
+    side = np.array([-best.side_speed[0], 1.0])
+    return design.down[0] @ down / np.sqrt(diffusion), design.side[0] @ side / np.sqrt(diffusion)
 
 
 @dataclass(frozen=True, slots=True)

@@ -1,6 +1,7 @@
 """Motion of a charged, diffusing droplet seen by a camera: one door to the modules that describe it.
 
 `physics.increments`: steps between sightings, their covariance, whitening, the field's impulse.
+`physics.likelihood`: restricted likelihood of the place noise, sufficient statistics.
 `physics.freefit`: speeds, diffusion and place noise without any law; speeds of segments; stray sightings.
 `physics.posterior`: radius and charges with the law. `physics.air_current`: vertical speed of the air.
 `physics.responses`: how the bench's shared inputs act on the law.
@@ -8,7 +9,6 @@
 
 from physics.air_current import air_current
 from physics.freefit import (
-    MIN_INCREMENTS,
     FreeFit,
     SegmentSpeeds,
     free_fit,
@@ -23,6 +23,7 @@ from physics.increments import (
     segment_occupancy,
     whitened,
 )
+from physics.likelihood import MIN_INCREMENTS
 from physics.posterior import NO_CHARGE_REASONS, DropletPosterior, droplet_posterior
 from physics.responses import input_responses
 

@@ -9,7 +9,7 @@ ln r, ln rho, side drift and charge: a charge may be 0 or of either sign, and no
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, fields, replace
 from typing import Any
 
 import numpy as np
@@ -19,8 +19,9 @@ from scipy.special import logsumexp, ndtr
 from physics.drag import slip_correction, slip_model
 from physics.droplet import BOLTZMANN, ELEMENTARY_CHARGE, Conditions, mass, weight
 from physics.errors import PhysicsError
-from physics.freefit import MIN_INCREMENTS, FreeFit, Sums, free_fit_of, likelihood_grid
+from physics.freefit import FreeFit, free_fit_of
 from physics.increments import FloatArray, Increments
+from physics.likelihood import MIN_INCREMENTS, Sums, likelihood_grid
 from physics.responses import STEP, input_responses
 
 __all__ = ["NO_CHARGE_REASONS", "DropletPosterior", "droplet_posterior"]
@@ -148,12 +149,12 @@ class _Mixture:
 
 
 def _log_likelihood(
-    sums: Sums, law: Law, air_speed: float, air_std: float, scale: float
+    sums: Sums, law: Law, air_speed: float, air_std: float, scale: FloatArray | float = 1.0
 ) -> tuple[FloatArray, FloatArray, FloatArray]:
     """Log likelihood (R, K) with charges, side drift and air speed integrated; mean and variance of the drift.
 
     The drift is w = v_g + u with the air's u normal. Completing the square in w gives all three in closed form,
-    also where drift and drive are one column (sums.drift = 0).
+    also where drift and drive are one column (sums.drift = 0). `scale` multiplies all lengths that were seen.
     """
     speed, diffusion = (law.speed + air_speed)[:, None], law.diffusion[:, None]
     data = scale**2 * (sums.data + sums.side_data)
@@ -169,15 +170,13 @@ def _log_likelihood(
     return value, (speed + air_std**2 * cross / diffusion) / spread, air_std**2 / spread
 
 
-def _mixture(
-    sums: Sums, law: Law, gap: float, *, air_speed: float, air_std: float, scale: float = 1.0
-) -> _Mixture:
+def _mixture(sums: Sums, law: Law, gap: float, *, air_speed: float, air_std: float) -> _Mixture:
     """Posterior on the radius grid: weight, and moments of the charges given the radius."""
-    value, drift, drift_var = _log_likelihood(sums, law, air_speed, air_std, scale)
+    value, drift, drift_var = _log_likelihood(sums, law, air_speed, air_std)
     joint = np.exp(value - value.max())
     of_radius = joint.sum(axis=1)
     given = joint / np.maximum(of_radius, 1e-300)[:, None]  # p(rho | r)
-    drive = scale * sums.drive - sums.drive_slope * drift[:, :, None]
+    drive = sums.drive - sums.drive_slope * drift[:, :, None]
     mean = np.einsum("rk,rkp->rp", given, drive)
     off = drive - mean[:, None, :]
     slopes = sums.drive_slope[:, :, None] * sums.drive_slope[:, None, :]
@@ -218,12 +217,14 @@ def _settled_mixture(
     for _ in range(4):
         law = law_at(np.linspace(*span, RADIUS_POINTS), conditions)
         mixture = _mixture(sums, law, conditions.plate_gap, air_speed=air_speed, air_std=air_std)
-        carrying = np.flatnonzero(mixture.weight > 1e-9 * mixture.weight.max())
+        carrying = np.flatnonzero(mixture.weight > 1e-8 * mixture.weight.max())
         if len(carrying) >= RADIUS_POINTS // 3:
             break
         first, last = max(carrying[0] - 1, 0), min(carrying[-1] + 1, RADIUS_POINTS - 1)
         span = (float(law.log_radius[first]), float(law.log_radius[last]))
-    return law, mixture
+    rows = slice(carrying[0], carrying[-1] + 1)
+    law = Law(*(getattr(law, name)[rows] for name in ("log_radius", "speed", "mobility", "diffusion")))
+    return law, _mixture(sums, law, conditions.plate_gap, air_speed=air_speed, air_std=air_std)
 
 
 def droplet_posterior(
@@ -402,7 +403,7 @@ def _charge_quantiles(
 ) -> FloatArray:
     """Bounds of the 68 and 95 % intervals of a mixture of normals."""
     used = weight > 1e-6 * weight.max()
-    grid = centre + width * np.linspace(-5, 5, 161)
+    grid = centre + width * np.linspace(-5, 5, 101)
     cumulative = ndtr((grid[:, None] - mean[used]) / std[used]) @ weight[used]
     levels = np.array(LEVELS_68 + LEVELS_95) * weight[used].sum()
     return np.asarray(np.interp(levels, cumulative, grid))
@@ -413,22 +414,29 @@ def _primitive_changes(
 ) -> dict[str, tuple[float, FloatArray]]:
     """Derivatives of (ln r, q) by the logarithm of each primitive, by a small change of the whole posterior."""
     up = 1 + STEP
-    slower = replace(law, speed=law.speed / up, mobility=law.mobility / up, diffusion=law.diffusion / up)
     laws = {
         "scale": law,
-        "friction": slower,
+        "friction": Law(law.log_radius, law.speed / up, law.mobility / up, law.diffusion / up),
         "weight": replace(law, speed=law.speed * up),
         "thermal": replace(law, diffusion=law.diffusion * up),
         "slip": law_at(law.log_radius, conditions, slip_factor=up),
         "path": law_at(law.log_radius, replace(conditions, mean_free_path=conditions.mean_free_path * up)),
     }
-    changes = {}
-    for name, changed in laws.items():
-        scale = up if name == "scale" else 1.0
-        new = _mixture(sums, changed, conditions.plate_gap, air_speed=air_speed, air_std=air_std, scale=scale)
-        charge = (new.mean_charge - base.mean_charge) / STEP
-        changes[name] = ((new.mean_log_radius - base.mean_log_radius) / STEP, charge)
-    return changes
+    size, columns = len(law.log_radius), [f.name for f in fields(Law)]
+    stacked = Law(*(np.concatenate([getattr(each, name) for each in laws.values()]) for name in columns))
+    scale = np.repeat([up if name == "scale" else 1.0 for name in laws], size)[:, None]
+    value, drift, _ = _log_likelihood(sums, stacked, air_speed, air_std, scale)
+    weight = np.exp(value - value.max())
+    drive = scale[:, :, None] * sums.drive - sums.drive_slope * drift[:, :, None]
+    charge = np.einsum("rk,rkp,r->rp", weight, drive, conditions.plate_gap / stacked.mobility)
+    of_radius = weight.sum(axis=1).reshape(len(laws), size)
+    total = of_radius.sum(axis=1)
+    log_radius = of_radius @ law.log_radius / total
+    means = charge.reshape(len(laws), size, -1).sum(axis=1) / total[:, None]
+    return {
+        name: (float(r - base.mean_log_radius) / STEP, (q - base.mean_charge) / STEP)
+        for name, r, q in zip(laws, log_radius, means, strict=True)
+    }
 
 
 def _sensitivities(
