@@ -1,0 +1,164 @@
+"""Still picture behind the droplets: glare, its smooth part, and the shade of the reticle's dark lines."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Any
+
+import cv2
+import numpy as np
+from numpy.typing import NDArray
+
+F32 = NDArray[np.float32]
+
+_LOW = 0.3  # quantile that a droplet in place for half the samples hardly moves
+_LOW_OFFSET = 0.5244  # standard deviations of a normal distribution from that quantile to its mean
+_CLIP = 2.0  # samples within so many standard deviations make the mean
+_LINE_SCALE = 14.0  # px, standard deviation of the smoothing that separates glare from lines
+_LINE_ROUNDS = 6
+_LINE_DEPTH = 0.93  # shade below this is a line
+_MIN_TEMPORAL = 12  # fewer samples cannot tell a droplet from glare in time
+
+
+@dataclass(frozen=True, slots=True)
+class Background:
+    """What the picture shows without droplets."""
+
+    level: F32  # (height, width) grey
+    shade: F32  # (height, width) share of light that passes the reticle's dark lines, 1 off the lines
+    variance: float  # of `level` through the finite number of samples, as a share of a pixel's variance
+    samples: int
+    line_share: float  # share of the picture under dark lines
+
+
+def find_background(samples: NDArray[Any], *, black: float) -> Background:
+    """Estimate the still background from pictures taken at different times.
+
+    Parameters
+    ----------
+    samples : ndarray of shape (n, height, width), uint8 or uint16
+        Pictures of one level of illumination.
+    black : float
+        Grey value of no light.
+
+    Returns
+    -------
+    background : Background
+        From a low quantile in time and the mean of the samples about it; from the picture's own surroundings
+        where there are too few samples.
+    """
+    if len(samples) >= _MIN_TEMPORAL:
+        level = temporal_level(samples)
+        variance = 1.3 / len(samples)  # variance of a mean clipped at 2 standard deviations
+    else:
+        level = spatial_level(samples.mean(0, dtype=np.float32))
+        variance = 0.0
+    shade, share = find_shade(level, black)
+    return Background(level, shade, variance, len(samples), share)
+
+
+def temporal_level(samples: NDArray[Any]) -> F32:
+    """Mean in time of the samples that show the background and no droplet."""
+    ordered = sort_in_time(samples)
+    n = len(ordered)
+    low = round(_LOW * (n - 1))
+    lower = max(0, round(0.08 * (n - 1)))
+    centre = ordered[low].astype(np.float32)
+    spread = centre - ordered[lower]
+    # Both quantiles at the ranks that were taken, so that the offset is right for any number of samples.
+    z_low, z_lower = _z((low + 0.625) / (n + 0.25)), _z((lower + 0.625) / (n + 0.25))
+    sigma = _local_mean(spread, 31) / (z_low - z_lower)
+    sigma = np.maximum(sigma, 0.3)
+    centre -= z_low * sigma
+    half = _CLIP * sigma + 0.5
+    bottom, top = centre - half, centre + half
+    total = np.zeros(centre.shape, np.float32)
+    count = np.zeros(centre.shape, np.float32)
+    for picture in ordered:
+        inside = ((picture >= bottom) & (picture <= top)).astype(np.float32)
+        count += inside
+        total += inside * picture
+    return np.where(count > 0, total / np.maximum(count, 1), centre).astype(np.float32)
+
+
+def sort_in_time(samples: NDArray[Any]) -> NDArray[Any]:
+    """Each pixel's samples in increasing order, by Batcher's odd-even merge network of picture-wide minima."""
+    n = len(samples)
+    ordered = [np.ascontiguousarray(s) for s in samples]
+    p = 1
+    while p < n:
+        k = p
+        while k >= 1:
+            for j in range(k % p, n - k, 2 * k):
+                for i in range(min(k, n - j - k)):
+                    a, b = i + j, i + j + k
+                    if a // (2 * p) == b // (2 * p):
+                        ordered[a], ordered[b] = (
+                            np.minimum(ordered[a], ordered[b]), np.maximum(ordered[a], ordered[b]),
+                        )  # fmt: skip
+            k //= 2
+        p *= 2
+    return np.stack(ordered)
+
+
+def spatial_level(picture: F32, *, size: int = 41) -> F32:
+    """Smooth surroundings of each pixel, spots left out: a masked mean that drops what lies above it."""
+    level: NDArray[Any] = _local_mean(picture, size)
+    for _ in range(4):
+        above = picture - level
+        sigma = 1.4826 * float(np.median(np.abs(above - np.median(above))))
+        mask = (np.abs(above) < 2.5 * max(sigma, 1e-3)).astype(np.float32)
+        share = np.maximum(_local_mean(mask, size), np.float32(1e-3))
+        level = _local_mean(picture * mask, size) / share
+    return level
+
+
+def find_shade(level: F32, black: float) -> tuple[F32, float]:
+    """Split the background into smooth glare and the shade of dark lines.
+
+    Returns
+    -------
+    shade : ndarray
+        Share of light that passes, 1 off the lines.
+    share : float
+        Of the picture that lies under lines.
+
+    Notes
+    -----
+    A dark line dims the glare and a droplet behind it alike. The smooth part is a Gaussian mean over the
+    pixels that are not darker than it.
+    """
+    light = np.maximum(level - black, 1e-3)
+    mask: NDArray[Any] = np.ones(light.shape, np.float32)
+    smooth: NDArray[Any] = light
+    for _ in range(_LINE_ROUNDS):
+        weight = cv2.GaussianBlur(mask, (0, 0), _LINE_SCALE)
+        smooth = cv2.GaussianBlur(light * mask, (0, 0), _LINE_SCALE) / np.maximum(weight, 1e-3)
+        mask = (light >= smooth - np.maximum(1.5, 0.06 * smooth)).astype(np.float32)
+    ratio = np.minimum(light / smooth, 1).astype(np.float32)
+    line: NDArray[Any] = ((ratio < _LINE_DEPTH) & (smooth - light > 1.5)).astype(np.uint8)
+    line = cv2.morphologyEx(line, cv2.MORPH_CLOSE, np.ones((3, 3), np.uint8))
+    line = _long_parts(line)
+    near = cv2.dilate(line, np.ones((5, 5), np.uint8)).astype(bool)
+    shade = np.where(near, ratio, np.float32(1)).astype(np.float32)
+    return np.maximum(shade, 0.02), float(line.mean())
+
+
+def _long_parts(line: NDArray[Any]) -> NDArray[Any]:
+    """Parts of a mask that are longer than 25 px: lines and figures of a reticle, not specks of noise."""
+    count, labels, stats, _ = cv2.connectedComponentsWithStats(line, connectivity=8)
+    long = np.maximum(stats[:, cv2.CC_STAT_WIDTH], stats[:, cv2.CC_STAT_HEIGHT]) > 25
+    long[0] = False
+    return long[labels].astype(np.uint8) if count > 1 else line
+
+
+def _local_mean(picture: F32, size: int) -> F32:
+    """Mean over a square, reflected at the edges."""
+    return np.asarray(cv2.blur(picture, (size, size), borderType=cv2.BORDER_REFLECT), np.float32)
+
+
+def _z(share: float) -> float:
+    """Quantile of the standard normal distribution."""
+    from statistics import NormalDist
+
+    return NormalDist().inv_cdf(share)

@@ -1,0 +1,245 @@
+"""Frame -> candidates: matched filter, threshold from a stated false-alarm rate, local maxima."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+from typing import Any
+
+import cv2
+import numpy as np
+from numpy.typing import NDArray
+
+from tracker.seeing.fit import Windows
+
+F32 = NDArray[np.float32]
+Candidates = tuple[NDArray[np.int64], NDArray[np.float64], NDArray[np.float64], NDArray[np.float64]]
+
+_COARSE_WIDTH = 0.75  # px, least spot width after binning: costs 0.25 in signal to noise, saves two thirds
+_MAX_BINNING = 8
+_TILE = 32  # px, tiles on which the noise is measured
+_MAX_CANDIDATES = 4000  # a frame with more shows no droplets but a change of the whole picture
+
+
+@dataclass(frozen=True, slots=True)
+class Detector:
+    """Matched filter of one recording, on pictures binned as far as the spot allows."""
+
+    binning: int  # px of the recording to a px of the filtered picture, along each axis
+    sigma: float  # px of the binned picture, width of the filter
+    level: F32  # filtered background, binned
+    inverse_noise: F32  # 1 / standard deviation of the filtered residual, binned
+    threshold: float  # in standard deviations of the filtered residual
+    kernel: F32  # one-dimensional
+    frame_area: float  # px^2 of the binned picture
+
+    def filtered(self, picture: NDArray[Any]) -> F32:
+        """Picture binned and smoothed, less the background."""
+        return _smooth(picture, self.binning, self.kernel) - self.level
+
+    def candidates(self, pictures: list[NDArray[Any]]) -> Candidates:
+        """Local maxima above the threshold.
+
+        Parameters
+        ----------
+        pictures : list of ndarray of shape (height, width)
+            A batch.
+
+        Returns
+        -------
+        frame : ndarray of shape (N,)
+            Number of the picture in the batch.
+        x, y : ndarray of shape (N,)
+            px of the recording, from a parabola through the maximum and its neighbours.
+        score : ndarray of shape (N,)
+            Signal to noise after the filter.
+        """
+        height, width = self.level.shape
+        stack = np.empty((len(pictures), height, width), np.float32)
+        for i, picture in enumerate(pictures):
+            _smooth(picture, self.binning, self.kernel, out=stack[i])
+        stack -= self.level
+        stack *= self.inverse_noise
+        return find_peaks(stack, self.threshold, self.binning)
+
+
+def find_peaks(stack: F32, threshold: float, binning: int) -> Candidates:
+    """Pixels above `threshold` that are the highest of their 3 x 3, with sub-pixel place; see `candidates`."""
+    _, height, width = stack.shape
+    flat = stack.reshape(-1)
+    above = np.flatnonzero(flat > threshold)
+    row, column = np.divmod(above % (height * width), width)
+    inner = (row > 0) & (row < height - 1) & (column > 0) & (column < width - 1)
+    above = above[inner]
+    value = flat[above]
+    top = np.ones(len(above), np.bool_)
+    for offset in (-width - 1, -width, -width + 1, -1):
+        top &= value > flat[above + offset]
+    for offset in (1, width - 1, width, width + 1):
+        top &= value >= flat[above + offset]
+    above, value = above[top], value[top]
+    frame, rest = np.divmod(above, height * width)
+    row, column = np.divmod(rest, width)
+    dx = _vertex(flat[above - 1], value, flat[above + 1])
+    dy = _vertex(flat[above - width], value, flat[above + width])
+    half = (binning - 1) / 2
+    return frame, (column + dx) * binning + half, (row + dy) * binning + half, value.astype(np.float64)
+
+
+def _vertex(before: F32, at: F32, after: F32) -> NDArray[np.float64]:
+    """Place of a parabola's top between three values."""
+    bend = np.minimum(before + after - 2.0 * at, -1e-6)
+    return np.clip(0.5 * (before - after) / bend, -0.5, 0.5).astype(np.float64)
+
+
+def _smooth(picture: NDArray[Any], binning: int, kernel: F32, *, out: F32 | None = None) -> F32:
+    """Bin by means and convolve; sums of the kernel are 1."""
+    if binning > 1:
+        height, width = (s // binning for s in picture.shape)
+        picture = cv2.resize(
+            picture[: height * binning, : width * binning], (width, height), interpolation=cv2.INTER_AREA
+        )
+    result = cv2.sepFilter2D(picture, cv2.CV_32F, kernel, kernel, dst=out, borderType=cv2.BORDER_REFLECT)
+    return np.asarray(result, np.float32)
+
+
+def gaussian_kernel(sigma: float) -> F32:
+    """Samples of a Gaussian of sum 1, out to 3 standard deviations."""
+    reach = math.ceil(3 * sigma)
+    kernel = np.exp(-0.5 * (np.arange(-reach, reach + 1) / sigma) ** 2)
+    return np.asarray(kernel / kernel.sum(), np.float32)
+
+
+def build_detector(
+    samples: NDArray[Any], level: F32, *, width: float, false_alarms: float
+) -> tuple[Detector, dict[str, float]]:
+    """Set up the matched filter from sample pictures.
+
+    Parameters
+    ----------
+    samples : ndarray of shape (n, height, width)
+        Pictures of the recording.
+    level : ndarray of shape (height, width)
+        Background.
+    width : float
+        Standard deviation of a spot in px.
+    false_alarms : float
+        False sightings a frame that are accepted.
+
+    Returns
+    -------
+    detector : Detector
+    report : dict
+        The threshold by theory and as found on the recording.
+
+    Notes
+    -----
+    Noise is the spread of the *filtered* residual in tiles: compression removes fine noise but leaves the
+    part that the filter passes. The threshold for white noise follows from the rate of maxima of a Gaussian
+    random field; minima of the same pictures, which no bright droplet makes, raise it where noise is not
+    Gaussian.
+    """
+    binning = 1
+    while width / (2 * binning) >= _COARSE_WIDTH and 2 * binning <= _MAX_BINNING:
+        binning *= 2
+    sigma = max(width / binning, 0.6)
+    kernel = gaussian_kernel(sigma)
+    smooth_level = _smooth(level, binning, kernel)
+    stack = np.stack([_smooth(p, binning, kernel) for p in samples])
+    stack -= smooth_level
+    inverse = np.float32(1) / noise_map(stack, tile=max(8, _TILE // binning))
+    stack *= inverse
+    area = float(smooth_level.size)
+    theory = threshold_for(false_alarms, area, sigma)
+    found = _threshold_of_minima(stack, false_alarms, area, sigma)
+    threshold = max(theory, found)
+    detector = Detector(binning, sigma, smooth_level, inverse, threshold, kernel, area)
+    return detector, {"threshold": threshold, "threshold_white_noise": theory, "threshold_of_minima": found}
+
+
+def noise_map(stack: F32, *, tile: int) -> F32:
+    """Standard deviation of the residual from its median absolute value in tiles, smooth between them."""
+    n, height, width = stack.shape
+    step = max(1, n // 12)
+    use = np.abs(stack[::step, ::2, ::2])
+    rows, columns = max(1, height // tile), max(1, width // tile)
+    coarse = np.empty((rows, columns), np.float32)
+    edges_y = np.linspace(0, use.shape[1], rows + 1).astype(int)
+    edges_x = np.linspace(0, use.shape[2], columns + 1).astype(int)
+    for i in range(rows):
+        for j in range(columns):
+            block = use[:, edges_y[i] : edges_y[i + 1], edges_x[j] : edges_x[j + 1]]
+            coarse[i, j] = np.median(block) if block.size else 0
+    floor = max(float(np.median(coarse)) * 0.3, 1e-3)
+    coarse = 1.4826 * np.maximum(coarse, floor)
+    return np.asarray(cv2.resize(coarse, (width, height), interpolation=cv2.INTER_LINEAR), np.float32)
+
+
+def false_alarm_rate(threshold: float, area: float, sigma: float) -> float:
+    """Maxima above a threshold in white noise smoothed by a Gaussian, expected in an area.
+
+    Notes
+    -----
+    R. J. Adler, The Geometry of Random Fields (1981), ch. 6: density of high maxima of a Gaussian field in the
+    plane, lambda (2 pi)^(-3/2) u exp(-u^2/2), with the second spectral moment lambda = 1 / (2 sigma^2).
+    """
+    density: float = (2 * math.pi) ** -1.5 / (2 * sigma**2)
+    return area * density * threshold * math.exp(-0.5 * threshold**2)
+
+
+def threshold_for(rate: float, area: float, sigma: float) -> float:
+    """Threshold in standard deviations at which `rate` false maxima are expected in an area; at least 2."""
+    low, high = 1.0, 12.0
+    while high - low > 1e-4:
+        middle = 0.5 * (low + high)
+        low, high = (middle, high) if false_alarm_rate(middle, area, sigma) > rate else (low, middle)
+    return max(2.0, high)
+
+
+def _threshold_of_minima(stack: F32, rate: float, area: float, sigma: float) -> float:
+    """Threshold at which the recording's own minima reach the rate, extended by the tail's shape.
+
+    Few samples hold few rare minima, so the depth reached once a frame is taken from the samples and stretched
+    by the ratio that white noise would have.
+    """
+    _, _, _, depth = find_peaks(-stack, 2.5, 1)
+    seldom = max(rate, 4.0 / len(stack))
+    count = max(1, round(seldom * len(stack)))
+    if len(depth) <= count:
+        return 0.0
+    reached = float(np.partition(depth, -count)[-count])
+    return reached * threshold_for(rate, area, sigma) / threshold_for(seldom, area, sigma)
+
+
+def cut_windows(
+    pictures: NDArray[Any], frame: NDArray[np.int64], x: NDArray[np.float64], y: NDArray[np.float64], *,
+    reach: int, level: F32, shade: F32, full_scale: float,
+) -> Windows:  # fmt: skip
+    """Cut squares of side 2 reach + 1 around places; at the edge of the picture they are moved inward.
+
+    Parameters
+    ----------
+    pictures : ndarray of shape (n, height, width)
+        A batch.
+    frame, x, y : ndarray of shape (N,)
+        Picture of the batch, and place in px.
+    reach : int
+        px.
+    level, shade : ndarray of shape (height, width)
+        Background and the reticle's shade.
+    full_scale : float
+        Grey values from here on are marked bad.
+
+    Returns
+    -------
+    windows : Windows
+    """
+    side = 2 * reach + 1
+    height, width = level.shape
+    left = np.clip(np.rint(x).astype(np.int64) - reach, 0, width - side)
+    top = np.clip(np.rint(y).astype(np.int64) - reach, 0, height - side)
+    view = np.lib.stride_tricks.sliding_window_view
+    raw = view(pictures, (side, side), axis=(1, 2))[frame, top, left]
+    back = view(level, (side, side))[top, left]
+    shades = view(shade, (side, side))[top, left]
+    return Windows(left, top, raw - back, back, shades, raw >= full_scale)

@@ -1,0 +1,219 @@
+"""What a recording tells of its own optics and camera: spot width, noise of a pixel, threshold."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+from typing import Any
+
+import cv2
+import numpy as np
+from numpy.typing import NDArray
+
+from tracker.records import FloatArray
+from tracker.seeing.background import Background, find_background
+from tracker.seeing.detect import Detector, build_detector, cut_windows, find_peaks
+from tracker.seeing.fit import Camera, Spots, Windows, fit_spots, profiles
+
+F32 = NDArray[np.float32]
+
+_SCALES = (0.7, 1.0, 1.4, 2.0, 2.8, 4.0, 5.6, 8.0)  # px, spot widths tried
+_DEFAULT_SCALE = 2  # index of the scale taken where nothing is seen
+_COARSE = 2.9  # px, scales up to here must show the noise of finer ones
+_FEW = 5  # fewer spots teach nothing
+_SEEN = 6.0  # signal to noise of a spot that teaches
+_TEACHERS = 400  # spots that are enough
+_PICTURES = 12  # sample pictures in which teachers are sought
+
+
+@dataclass(frozen=True, slots=True)
+class Eyes:
+    """All that is needed to look at a frame."""
+
+    background: Background
+    detector: Detector
+    camera: Camera
+    width: float  # px, standard deviation of a sharp spot
+    reach: int  # px, half side of the fit's window
+    noise_factor: FloatArray  # (2,) standard deviation of a place against the camera's: faint, bright
+    report: dict[str, Any]
+
+
+def learn(samples: NDArray[Any], *, black: float, full_scale: float, false_alarms: float) -> Eyes:
+    """Find background, spot width, noise and threshold from sample pictures.
+
+    Parameters
+    ----------
+    samples : ndarray of shape (n, height, width), uint8 or uint16
+        Pictures spread over the recording, of one illumination.
+    black, full_scale : float
+        Grey values of no light and of saturation.
+    false_alarms : float
+        False sightings a frame that are accepted.
+
+    Returns
+    -------
+    eyes : Eyes
+    """
+    background = find_background(samples, black=black)
+    chosen = samples[np.unique(np.linspace(0, len(samples) - 1, _PICTURES).astype(int))]
+    residual = chosen - background.level
+    guess, noise = scale_search(residual)
+    camera = Camera(white_variance(noise, guess), 0.0, black, full_scale)
+    width, spots, windows = find_width(chosen, residual, background, camera, guess=guess)
+    if len(spots) >= _FEW:
+        camera = find_camera(windows, spots, residual, background, camera)
+        width, spots, windows = find_width(chosen, residual, background, camera, guess=width)
+    detector, found = build_detector(samples, background.level, width=width, false_alarms=false_alarms)
+    reach = min(max(3, math.ceil(2.8 * width)), (min(samples.shape[1:]) - 1) // 2)
+    report = {
+        "spot_width_px": width, "read_noise": math.sqrt(camera.read_variance), "camera_gain": camera.gain,
+        "binning": detector.binning, "background_samples": background.samples,
+        "line_share": background.line_share, "teaching_spots": len(spots), **found,
+    }  # fmt: skip
+    return Eyes(background, detector, camera, width, reach, np.ones(2), report)
+
+
+def white_variance(noise: float, sigma: float) -> float:
+    """Variance of a pixel of the white noise that a Gaussian filter turns into `noise`; at least rounding's.
+
+    The filter leaves 1 / (4 pi sigma^2) of a white variance. Compression takes noise from single pixels that
+    it leaves in the sums over a spot, and those are what a fit feels.
+    """
+    return max(4 * math.pi * sigma**2 * noise**2, 1 / 12)
+
+
+def find_width(
+    pictures: NDArray[Any], residual: F32, background: Background, camera: Camera, *, guess: float
+) -> tuple[float, Spots, Windows]:
+    """Width of sharp spots, with the spots that showed it.
+
+    Free fits to the clearest lone spots; the narrower axis counts, as motion widens the other.
+    """
+    frame, x, y = _lone_spots(residual, guess, camera)
+    reach = min(max(3, math.ceil(3.2 * guess)), (min(residual.shape[1:]) - 1) // 2)
+    windows = cut_windows(
+        pictures, frame, x, y, reach=reach, level=background.level, shade=background.shade,
+        full_scale=camera.full_scale,
+    )  # fmt: skip
+    start = np.full(len(x), guess)
+    spots = fit_spots(windows, (x, y), camera=camera, width=(start, start), free_width=True, rounds=8)
+    clear = spots.good & (np.abs(np.log(spots.sx * spots.sy) / 2 - math.log(guess)) < math.log(2))
+    clear &= np.hypot(spots.x - x, spots.y - y) < 2 * guess
+    rows = np.flatnonzero(clear)
+    spots, windows = _chosen(spots, rows), windows.take(rows)
+    if len(rows) < _FEW:
+        return guess, spots, windows
+    return float(min(np.median(spots.sx), np.median(spots.sy))), spots, windows
+
+
+def _chosen(s: Spots, rows: NDArray[np.int64]) -> Spots:
+    return Spots(
+        s.amplitude[rows], s.x[rows], s.y[rows], s.sx[rows], s.sy[rows], s.covariance[rows], s.chi2[rows],
+        s.good[rows],
+    )  # fmt: skip
+
+
+def scale_search(residual: F32) -> tuple[float, float]:
+    """Width of the filter in which most spots stand out best, and the noise that it leaves.
+
+    Returns
+    -------
+    width : float
+        px; the default where nothing is seen.
+    noise : float
+        Standard deviation in grey of the residual smoothed with that width.
+
+    Notes
+    -----
+    White noise falls as 1 / width. A compressed recording has less of it in fine detail; there the noise of the
+    coarser scales is carried down, or every fleck would look like a very small spot.
+    """
+    pictures = residual[:: max(1, len(residual) // 4)]
+    scales = [s for s in _SCALES if 6 * s <= min(residual.shape[1:])] or [_SCALES[0]]
+    smooth = [np.stack([cv2.GaussianBlur(r, (0, 0), s) for r in pictures]) for s in scales]
+    raw = [1.4826 * float(np.median(np.abs(f[:, ::2, ::2]))) * s for f, s in zip(smooth, scales, strict=True)]
+    coarse = [i for i, s in enumerate(scales) if s <= _COARSE]
+    noise = [max(raw[i : coarse[-1] + 1] or [raw[i]]) / s for i, s in enumerate(scales)]
+    noise = [max(n, 0.02) for n in noise]
+    ratio = np.stack([f / n for f, n in zip(smooth, noise, strict=True)])
+    best = ratio.max(0)
+    frame, x, y, score = find_peaks(best, _SEEN, 1)
+    at = (frame, np.rint(y).astype(int), np.rint(x).astype(int))
+    which = ratio[(slice(None), *at)].argmax(0)
+    order = np.argsort(-score)[:_TEACHERS]
+    index = _DEFAULT_SCALE if len(order) < _FEW else int(np.median(which[order]))
+    return scales[min(index, len(scales) - 1)], noise[min(index, len(scales) - 1)]
+
+
+def _lone_spots(
+    residual: F32, width: float, camera: Camera
+) -> tuple[NDArray[np.int64], FloatArray, FloatArray]:
+    """Clearest spots without a neighbour within 8 widths."""
+    from scipy.spatial import cKDTree
+
+    smooth = np.stack([cv2.GaussianBlur(r, (0, 0), width) for r in residual])
+    empty = camera.read_variance + camera.gain * float(np.median(residual))
+    smooth /= math.sqrt(empty / (4 * math.pi * width**2))
+    frame, x, y, score = find_peaks(smooth, _SEEN, 1)
+    apart = 1e6  # px between the planes of different pictures
+    tree = cKDTree(np.column_stack([x, y, apart * frame]))
+    lone = np.ones(len(x), np.bool_)
+    pairs = tree.query_pairs(8 * width, output_type="ndarray")
+    lone[pairs.ravel()] = False
+    rows = np.flatnonzero(lone)
+    rows = rows[np.argsort(-score[rows])[:_TEACHERS]]
+    return frame[rows], x[rows], y[rows]
+
+
+def find_camera(
+    windows: Windows, spots: Spots, residual: F32, background: Background, first: Camera
+) -> Camera:
+    """Read variance and gain from what fitted spots leave and from the empty background.
+
+    Parameters
+    ----------
+    windows, spots
+        Lone spots, fitted with free width.
+    residual : ndarray of shape (n, height, width)
+        Pictures less the background.
+    background : Background
+    first : Camera
+        With the variance of the empty background as `read_variance` and no gain.
+
+    Returns
+    -------
+    camera : Camera
+
+    Notes
+    -----
+    Each spot's residual is projected on the pattern u v g(u) g(v), which no fitted parameter touches and which
+    has the spot's own fineness: its square has the mean sum T^2 (read^2 + gain * grey). So the gain is right
+    for the noise that matters, compressed or not.
+    """
+    p = np.stack(
+        [spots.amplitude, spots.x - windows.left, spots.y - windows.top, np.log(spots.sx), np.log(spots.sy)],
+        1,
+    )
+    u, v, gx, gy = profiles(p, windows.grey.shape[1])
+    shape = gy[:, :, None] * gx[:, None, :] * windows.shade
+    model = shape * spots.amplitude[:, None, None].astype(np.float32)
+    left = np.where(windows.bad, 0, windows.grey - model)
+    pattern = np.where(windows.bad, 0, shape * u[:, None, :] * v[:, :, None])
+    square = np.einsum("nij,nij->n", left, pattern).astype(np.float64) ** 2
+    power = np.einsum("nij,nij->n", pattern, pattern).astype(np.float64)
+    base = max(float(np.median(background.level)) - first.black, 0.0)
+    light = windows.background - np.float32(first.black) + model - np.float32(base)
+    excess = np.einsum("nij,nij,nij->n", light, pattern, pattern).astype(np.float64)
+    empty = first.read_variance
+    gain = 0.0
+    for _ in range(20):  # mean of squares by weighted least squares, outliers cut at 3 standard deviations
+        expected = empty * power + gain * excess
+        kept = square < 9 * expected
+        weight = kept * excess / expected**2
+        gain = max(
+            0.0,
+            float((weight * (square / 0.9733 - empty * power)).sum() / max((weight * excess).sum(), 1e-12)),
+        )
+    gain = min(gain, 0.95 * empty / base if base > 0 else gain)
+    return Camera(empty - gain * base, gain, first.black, first.full_scale)
