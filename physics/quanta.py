@@ -35,6 +35,7 @@ __all__ = [
     "number_probabilities",
     "pooled_charge_unit",
     "resolution",
+    "unit_ratio",
 ]
 
 SEARCH = (
@@ -244,6 +245,46 @@ def pooled_charge_unit(
     curve = _curve(frequency, blurred, [best, *rivals])
     verdict = _Verdict(best, tuple(rivals[:5]), margin, needed, curve)
     return _resolved(used, verdict, width, common_rel_std) if resolved else _unresolved(used, verdict)
+
+
+def unit_ratio(sample: ChargeSample, unit: float, *, prior_rel_std: float) -> tuple[float, float]:
+    """Spacing of a few charges over a unit that is known: of one bench over that of all, or of one week.
+
+    Parameters
+    ----------
+    sample : ChargeSample
+        Charges of the bench or week; at least one.
+    unit : float
+        In C.
+    prior_rel_std : float
+        Relative standard deviation of the ratio about 1 before the charges are looked at, above 0 and below
+        0.1. It keeps apart the ratios at which a charge would jump to the next number.
+
+    Returns
+    -------
+    ratio : float
+        Posterior mean; charges that tell nothing leave it at 1.
+    std : float
+        Its own standard uncertainty, without what the charges share; at most about `prior_rel_std`.
+
+    Raises
+    ------
+    PhysicsError
+        If there is no charge, or the unit or the prior is outside its range.
+    """
+    if not len(sample):
+        raise PhysicsError("sample", "empty", "at least one charge that differs from 0")
+    if not (unit > 0 and 0 < prior_rel_std < 0.1):
+        raise PhysicsError("prior_rel_std", prior_rel_std, "above 0 and below 0.1, the unit above 0 C")
+    half = 4 * prior_rel_std
+    points = 2 * int(np.clip(np.ceil(half / (0.4 * comb.relative_precision(sample))), 200, 4000)) + 1
+    f, value = comb.pooled_log_ratio((sample,), 1 / unit, half, points)
+    ratio = 1 / (f * unit)
+    value = value - 0.5 * (np.log(ratio) / prior_rel_std) ** 2
+    weight = np.exp(value - value.max())
+    weight /= weight.sum()
+    mean = float(weight @ ratio)
+    return mean, float(np.sqrt(weight @ (ratio - mean) ** 2))
 
 
 @dataclass(frozen=True, slots=True)

@@ -140,6 +140,26 @@ def decide(
         _show_result(done)
 
 
+@app.command(epilog=_example("fallrise pool term/ --out term/unit"))
+def pool(
+    results: Annotated[list[Path], typer.Argument(help="Result folders, or folders that hold results.")],
+    out: Annotated[
+        Path, typer.Option("--out", help="Folder for charge_unit.json and charge_unit.png.")
+    ] = Path(),
+    as_json: JsonOption = False,
+) -> None:
+    """Find the charge unit over many results, without assuming e, and what it says of each bench."""
+    from tracker.term.pool import pool_results
+    from tracker.term.poolfiles import pool_text, write_pool
+
+    found = pool_results(results)
+    written = write_pool(found, out)
+    if as_json:
+        typer.echo(written[0].read_text(encoding="utf-8"), nl=False)
+    else:
+        typer.echo("\n".join([pool_text(found), *map(str, written)]))
+
+
 @app.command(
     epilog=_example("fallrise simulate --out trial.avi --seed 7 --set droplets=20 --bench trial.bench.toml")
 )

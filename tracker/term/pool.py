@@ -1,0 +1,456 @@
+"""Charge unit over many results, and what it says of each bench."""
+
+from __future__ import annotations
+
+from collections.abc import Iterable, Mapping, Sequence
+from dataclasses import dataclass, replace
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from physics.budget import Budget, DropletModel, bench_budget, explaining_errors, shared_sensitivities
+from physics.drag import slip_model
+from physics.droplet import ELEMENTARY_CHARGE, Conditions
+from physics.quanta import SEARCH, ChargeSample, ChargeUnit, charge_sample, pooled_charge_unit, unit_ratio
+from tracker.errors import ResultError, UsageError
+from tracker.keeping.store import PROVENANCE, SUFFIX, Result, read_result
+from tracker.records import Measured
+
+if TYPE_CHECKING:
+    import pandas as pd
+
+FloatArray = NDArray[np.float64]
+
+COMMON_INPUTS = ("viscosity_model", "slip_model")  # models that err alike on all benches
+EXPLAINING = ("scale", "plate_gap", "voltage", "viscosity_model")  # single errors that a bench is asked for
+DEVIATES_FROM = 2.0  # standard uncertainties off e, from which a bench is told to be off
+ODD_FROM = 3.0  # standard uncertainties off the other benches, from which a bench leaves the pool
+_WORDS = {
+    "scale": "a scale",
+    "plate_gap": "a plate gap",
+    "voltage": "a voltage",
+    "viscosity_model": "a viscosity",
+}
+_RADII = 7  # radii at which sensitivities are worked out; between them they are straight
+
+
+@dataclass(frozen=True, slots=True)
+class BenchUnit:
+    """What the charges of one bench say of it."""
+
+    label: str
+    results: tuple[str, ...]
+    sample: ChargeSample
+    unit: ChargeUnit  # of this bench alone
+    ratio: float  # charge unit over e; nan if neither the bench nor the pool is resolved
+    ratio_own_std: float
+    ratio_shared_std: float
+    left_out: str  # why the bench takes no part in the pooled unit; empty if it does
+    from_pool: bool  # the bench alone is not resolved; its ratio rests on the unit of all benches
+    budget: Budget  # of the factor on all its charges
+    errors: Mapping[
+        str, tuple[float, float]
+    ]  # input -> relative error that would explain the ratio, and its std
+    sentence: str
+
+    @property
+    def deviation(self) -> float:
+        """Deviation of the unit from e in standard uncertainties, own and shared joined."""
+        return (self.ratio - 1) / float(np.hypot(self.ratio_own_std, self.ratio_shared_std))
+
+
+@dataclass(frozen=True, slots=True)
+class Pool:
+    """Charge unit of all results together, and of each bench."""
+
+    unit: ChargeUnit
+    benches: tuple[BenchUnit, ...]
+    skipped: tuple[tuple[str, str], ...]  # result, why it was left out
+
+
+@dataclass(frozen=True, slots=True)
+class _Bench:
+    """Rows of one bench before the unit is looked for."""
+
+    label: str
+    results: tuple[str, ...]
+    sample: ChargeSample
+    budget: Budget
+
+
+def find_results(paths: Iterable[Path | str]) -> list[Path]:
+    """Give the result folders that the paths name or hold.
+
+    Parameters
+    ----------
+    paths : iterable of path
+        Result folders, or folders with results anywhere below.
+
+    Returns
+    -------
+    folders : list of Path
+        Sorted within each path, each once.
+
+    Raises
+    ------
+    UsageError
+        If a path is no folder, or holds no result.
+    """
+    found: dict[Path, None] = {}
+    for path in map(Path, paths):
+        if (path / PROVENANCE).is_file():
+            found[path] = None
+            continue
+        below = sorted(p.parent for p in path.rglob(PROVENANCE) if p.parent.name.endswith(SUFFIX))
+        if not below:
+            raise UsageError(f"{path}: neither a result folder nor a folder that holds one; measure first")
+        found.update(dict.fromkeys(below))
+    return list(found)
+
+
+def pool_results(folders: Sequence[Path | str]) -> Pool:
+    """Find the charge unit over result folders.
+
+    Parameters
+    ----------
+    folders : sequence of path
+        Result folders, or folders with results below; only droplets with the verdict keep are used.
+
+    Returns
+    -------
+    pool : Pool
+        With what was left out and why.
+
+    Raises
+    ------
+    UsageError, ResultError
+        If a path holds no result, or no result can be read.
+    """
+    results, skipped = [], []
+    for folder in find_results(folders):
+        try:
+            results.append(read_result(folder, tracks=False))
+        except ResultError as error:
+            skipped.append((str(folder), error.problem))
+    if not results:
+        raise ResultError(*skipped[0])
+    pool = pool_of(results)
+    return Pool(pool.unit, pool.benches, (*skipped, *pool.skipped))
+
+
+def pool_of(results: Sequence[Result]) -> Pool:
+    """Find the charge unit over results that have been read.
+
+    Parameters
+    ----------
+    results : sequence of Result
+        Their tracks are not needed. A recording that comes twice counts once.
+
+    Returns
+    -------
+    pool : Pool
+        Benches in the order in which they appear.
+
+    Notes
+    -----
+    Each bench has one unknown factor on its charges, with the uncertainty of scale, gap, voltage, air and
+    oil; the charges of one bench fix the comb, and benches are joined with their factors integrated out. The
+    models of viscosity and slip err alike on all benches and are added at the end.
+    """
+    by_bench: dict[tuple[object, ...], list[Result]] = {}
+    seen: dict[str, str] = {}
+    skipped = []
+    for result in results:
+        name, digest = _name(result), str(result.recording.get("sha256", ""))
+        if digest and digest in seen:
+            skipped.append((name, f"the same recording as {seen[digest]}"))
+            continue
+        seen[digest] = name
+        by_bench.setdefault(_bench_key(result.recording), []).append(result)
+    labels = _labels([members[0] for members in by_bench.values()])
+    benches = [_bench(label, members) for label, members in zip(labels, by_bench.values(), strict=True)]
+    common = _common_rel_std(benches)
+    own = [_without_common(bench, common) for bench in benches]
+    alone = [pooled_charge_unit((bench.sample,), search=SEARCH) for bench in benches]
+    outside = _odd_benches(labels, alone, [s.shared_rel_std for s in own])
+    inside = [s for label, s in zip(labels, own, strict=True) if label not in outside]
+    unit = pooled_charge_unit(inside, common_rel_std=common, search=SEARCH)
+    kept = [label not in outside for label in labels]
+    unit = _widened(
+        unit, [a for a, k in zip(alone, kept, strict=True) if k], [s.shared_rel_std for s in inside]
+    )
+    made = [_bench_unit(bench, one, unit, outside.get(bench.label, ""))
+            for bench, one in zip(benches, alone, strict=True)]  # fmt: skip
+    return Pool(unit, tuple(made), tuple(skipped))
+
+
+def _odd_benches(
+    labels: Sequence[str], units: Sequence[ChargeUnit], shared: Sequence[float]
+) -> dict[str, str]:
+    """Benches that differ from all others by more than the uncertainties allow; told only among three or more."""
+    value = {label: u.over_e for label, u in zip(labels, units, strict=True) if u.resolved}
+    std = {label: float(np.hypot(u.unit_own_std / ELEMENTARY_CHARGE, u.over_e * s))
+           for label, u, s in zip(labels, units, shared, strict=True) if u.resolved}  # fmt: skip
+    odd: dict[str, str] = {}
+    while len(value) >= 3:
+        off = {}
+        for label, here in value.items():
+            others = [other for other in value if other != label]
+            weight = np.array([std[other] ** -2.0 for other in others])
+            mean = float(np.average([value[other] for other in others], weights=weight))
+            off[label] = (here - mean) / float(np.hypot(std[label], weight.sum() ** -0.5))
+        worst = max(off, key=lambda label: abs(off[label]))
+        if abs(off[worst]) <= ODD_FROM:
+            break
+        odd[worst] = f"its charge unit is {abs(off[worst]):.1f} standard uncertainties off the other benches'"
+        del value[worst]
+    return odd
+
+
+def _widened(unit: ChargeUnit, alone: Sequence[ChargeUnit], shared: Sequence[float]) -> ChargeUnit:
+    """Widen the uncertainty of a unit whose benches differ by more than theirs say (Birge's ratio)."""
+    from scipy.stats import chi2
+
+    rows = [
+        (u.unit, np.hypot(u.unit_own_std, u.unit * s))
+        for u, s in zip(alone, shared, strict=True)
+        if u.resolved
+    ]
+    if not unit.resolved or len(rows) < 2:
+        return unit
+    value, std = np.array(rows).T
+    mean = np.average(value, weights=std**-2.0)
+    square, dof = float(np.sum(((value - mean) / std) ** 2)), len(rows) - 1
+    if square <= chi2.isf(0.003, dof):
+        return unit
+    factor = float(np.sqrt(square / dof))
+    bands = [tuple(unit.unit + factor * (end - unit.unit) for end in band)
+             for band in (unit.interval_68, unit.interval_95)]  # fmt: skip
+    return replace(
+        unit, unit_std=factor * unit.unit_std, unit_shared_std=factor * unit.unit_shared_std,
+        unit_own_std=factor * unit.unit_own_std, over_e_std=factor * unit.over_e_std,
+        interval_68=(bands[0][0], bands[0][1]), interval_95=(bands[1][0], bands[1][1]),
+        reason=f"{unit.reason}; the benches differ by more than their uncertainties say, "
+               f"so all uncertainties are multiplied by {factor:.1f}",
+    )  # fmt: skip
+
+
+def _name(result: Result) -> str:
+    """Name of a result for people."""
+    return str(result.folder) if result.folder is not None else str(result.recording.get("file", "result"))
+
+
+def _bench_key(recording: Mapping[str, Any]) -> tuple[object, ...]:
+    """What tells one bench from another: its file, its cell and its reference picture."""
+    bench, scale = recording.get("bench", {}), recording.get("scale", {})
+    files = bench.get("files") or [""]
+    gap = bench.get("plate_gap", {}).get("value")
+    return bench.get("name"), files[0], gap, scale.get("picture_sha256") or scale.get("metres_per_pixel_y")
+
+
+def _labels(results: Sequence[Result]) -> list[str]:
+    """One label for each bench, numbered where names repeat."""
+    labels: list[str] = []
+    for result in results:
+        name = str(result.recording.get("bench", {}).get("name") or "bench")
+        count = sum(label == name or label.startswith(f"{name} (") for label in labels)
+        labels.append(f"{name} ({count + 1})" if count else name)
+    return labels
+
+
+def _bench(label: str, results: Sequence[Result]) -> _Bench:
+    """Gather the charges of one bench."""
+    import pandas as pd
+
+    droplets = [kept_droplets(result.droplets) for result in results]
+    steps = [charge_steps(result.changes, kept) for result, kept in zip(results, droplets, strict=True)]
+    table = pd.concat(droplets, ignore_index=True)
+    charge, own = (table[name].to_numpy(float) for name in ("charge_c", "charge_own_std_c"))
+    budget = _factor_budget(results[0].recording, table)
+    relative = table["charge_shared_std_c"].to_numpy(float) / np.abs(charge)
+    usable = np.isfinite(relative)
+    weight = (charge / own) ** 2
+    shared = (
+        float(np.average(relative[usable], weights=weight[usable])) if usable.any() else budget.shared_std
+    )
+    change, change_std = (np.concatenate(column) for column in zip(*steps, strict=True))
+    sample = charge_sample(charge, own, rel_stds=table["rel_std"].to_numpy(float), shared_rel_std=shared,
+                           steps=(change, change_std))  # fmt: skip
+    return _Bench(label, tuple(_name(result) for result in results), sample, budget)
+
+
+def kept_droplets(droplets: pd.DataFrame) -> pd.DataFrame:
+    """Rows of droplets that are kept and have a charge, with the part of its uncertainty that grows with the charge.
+
+    Parameters
+    ----------
+    droplets : DataFrame
+        As in ``droplets.csv``.
+
+    Returns
+    -------
+    kept : DataFrame
+        The same columns and ``rel_std``: relative, through the radius; a charge at a given drive goes with
+        the radius to the power 1.1.
+    """
+    good = (droplets["verdict"] == "keep") & droplets["charge_c"].notna() & (droplets["charge_own_std_c"] > 0)
+    kept = droplets[good.fillna(False)].copy()
+    kept["rel_std"] = (1.1 * kept["radius_std_m"] / kept["radius_m"]).fillna(0.0)
+    return kept
+
+
+def charge_steps(changes: pd.DataFrame, kept: pd.DataFrame) -> tuple[FloatArray, FloatArray]:
+    """Changes of charge of the kept droplets, as charges of their own.
+
+    Parameters
+    ----------
+    changes : DataFrame
+        As in ``changes.csv``; only charge steps are used.
+    kept : DataFrame
+        As `kept_droplets` gives it.
+
+    Returns
+    -------
+    change : ndarray of shape (M,)
+        In C, signed.
+    std : ndarray of shape (M,)
+        Own standard uncertainty in C: the test statistic is (change / std)^2 at a known radius; the radius
+        adds its part.
+    """
+    steps = changes[(changes["kind"] == "charge_step") & changes["droplet"].isin(kept["droplet"])]
+    change = (steps["after_c"] - steps["before_c"]).to_numpy(float)
+    statistic = steps["statistic"].to_numpy(float)
+    radius_part = kept.set_index("droplet")["rel_std"].reindex(steps["droplet"]).to_numpy(float)
+    good = np.isfinite(change) & (change != 0) & (statistic > 0)
+    change, statistic, radius_part = change[good], statistic[good], radius_part[good]
+    return change, np.abs(change) * np.hypot(1 / np.sqrt(statistic), radius_part)
+
+
+def shared_inputs(recording: Mapping[str, Any]) -> dict[str, Measured]:
+    """Inputs that all droplets of a recording share, from its provenance.
+
+    Parameters
+    ----------
+    recording : mapping
+        As in ``recording.json``.
+
+    Returns
+    -------
+    inputs : dict of str to Measured
+        Under the names of `physics.budget.SHARED_INPUTS`; models count as factors of value 1.
+    """
+    bench, scale = recording["bench"], recording["scale"]
+    same = ("plate_gap", "temperature", "pressure", "relative_humidity", "oil_density", "gravity")
+    inputs = {
+        name: Measured(bench[name]["value"], bench[name]["std"], bench[name]["origin"]) for name in same
+    }
+    per_pixel = scale["metres_per_pixel_y"]
+    volts = bench.get("voltage", {}).get("value") or _largest_voltage(recording)
+    viscosity, slip = bench["viscosity"], slip_model(bench["slip"])
+    inputs["scale"] = Measured(per_pixel, scale["metres_per_pixel_y_std"], scale.get("picture") or "stated")
+    inputs["voltage"] = Measured(
+        abs(volts), abs(volts) * bench["voltage_rel_std"], "cell.voltage or field.list"
+    )
+    inputs["viscosity_model"] = Measured(1.0, viscosity["std"] / viscosity["value"], viscosity["origin"])
+    inputs["slip_model"] = Measured(1.0, slip.std_rel, slip.source)
+    return inputs
+
+
+def _largest_voltage(recording: Mapping[str, Any]) -> float:
+    """Largest voltage of the segments, 1 V if there is none: only its relative error counts."""
+    segments = recording.get("field", {}).get("segments", ())
+    return max((abs(s["voltage_v"]) for s in segments), default=0.0) or 1.0
+
+
+def _factor_budget(recording: Mapping[str, Any], kept: pd.DataFrame) -> Budget:
+    """Budget of the factor on all charges of a bench; droplets count by (charge / own uncertainty)^2."""
+    bench = recording["bench"]
+    values = {name: bench[name]["value"] for name in ("temperature", "viscosity", "mean_free_path", "air_density",
+                                                      "oil_density", "gravity", "plate_gap")}  # fmt: skip
+    conditions = Conditions(**values, slip=bench["slip"])
+    radius = kept["radius_m"].to_numpy(float)
+    radius = radius[np.isfinite(radius)] if np.isfinite(radius).any() else np.array([5e-7])
+    grid = np.geomspace(radius.min(), radius.max() * 1.001, _RADII)
+    slopes = np.stack([shared_sensitivities(DropletModel(r, 1e-18, conditions))[1] for r in grid])
+    each = np.stack([np.interp(np.log(radius), np.log(grid), column) for column in slopes.T], axis=1)
+    weight = np.ones(len(radius))
+    if len(kept) == len(radius):
+        weight = ((kept["charge_c"] / kept["charge_own_std_c"]) ** 2).to_numpy(float)
+    return bench_budget(each, shared_inputs(recording), weights=weight)
+
+
+def _common_rel_std(benches: Sequence[_Bench]) -> float:
+    """Relative uncertainty that all benches share: of the models, where the viscosity was not stated."""
+    if len(benches) < 2:
+        return 0.0
+    return min(_common_of(bench) for bench in benches)
+
+
+def _common_of(bench: _Bench) -> float:
+    """The models' part of a bench's shared uncertainty."""
+    rows = [row for row in bench.budget.rows if row.input in COMMON_INPUTS]
+    return float(
+        min(np.sqrt(sum((row.sensitivity * row.std) ** 2 for row in rows)), bench.sample.shared_rel_std)
+    )
+
+
+def _without_common(bench: _Bench, common: float) -> ChargeSample:
+    """The bench's charges with only what it does not share with other benches."""
+    s = bench.sample
+    rest = float(np.sqrt(max(s.shared_rel_std**2 - common**2, 0.0)))
+    return ChargeSample(s.charge, s.floor_std, s.rel_std, s.pair, s.pair_cov, rest)
+
+
+def _explaining(ratio: float, own: float, shared: float, budget: Budget) -> dict[str, tuple[float, float]]:
+    """Single errors that would explain a ratio; the uncertainty of each is that of all else."""
+    if not np.isfinite(ratio):
+        return {}
+    rows = {row.input: row for row in budget.rows}
+    errors = {}
+    for name, error in explaining_errors(ratio, budget).items():
+        if name in EXPLAINING:
+            slope = rows[name].sensitivity * rows[name].value
+            rest = max(shared**2 - (rows[name].sensitivity * rows[name].std) ** 2, 0.0)
+            errors[name] = error, float(np.hypot(own / ratio, np.sqrt(rest)) / abs(slope))
+    return {name: errors[name] for name in EXPLAINING if name in errors}
+
+
+def _bench_unit(bench: _Bench, alone: ChargeUnit, pooled: ChargeUnit, left_out: str) -> BenchUnit:
+    """Ratio of one bench's charge unit to e, and what single error would explain it."""
+    shared = bench.sample.shared_rel_std
+    ratio = own = float("nan")
+    from_pool = not alone.resolved and pooled.resolved and len(bench.sample) > 0
+    if alone.resolved:
+        ratio, own = alone.over_e, alone.unit_own_std / ELEMENTARY_CHARGE
+    elif from_pool:
+        prior = min(max(1.5 * shared, 0.01), 0.03)
+        relative, std = unit_ratio(bench.sample, pooled.unit, prior_rel_std=prior)
+        ratio, own = relative * pooled.over_e, std * pooled.over_e
+    made = BenchUnit(bench.label, bench.results, bench.sample, alone, ratio, own, ratio * shared, left_out, from_pool,
+                     bench.budget, _explaining(ratio, own, shared, bench.budget), "")  # fmt: skip
+    return _with_sentence(made)
+
+
+def _with_sentence(bench: BenchUnit) -> BenchUnit:
+    """Say in words what the charge unit says of the bench."""
+    if not np.isfinite(bench.ratio):
+        return replace(bench, sentence=f"{bench.label}: {bench.unit.reason}")
+    spread = float(np.hypot(bench.ratio_own_std, bench.ratio_shared_std))
+    origin = ", given the unit of all benches" if bench.from_pool else ""
+    aside = f"; left out of the pooled unit: {bench.left_out}" if bench.left_out else ""
+    start = (f"{bench.label}: charge unit over e {bench.ratio:.4f} +/- {bench.ratio_own_std:.4f} (own) "
+             f"+/- {bench.ratio_shared_std:.4f} (shared){origin}{aside}")  # fmt: skip
+    if abs(bench.ratio - 1) < 2 * bench.ratio_own_std:
+        return replace(bench, sentence=f"{start}; it agrees with e.")
+    verdict = "more than" if abs(bench.ratio - 1) > DEVIATES_FROM * spread else "within"
+    ways = "; ".join(_error_words(name, *error) for name, error in bench.errors.items())
+    return replace(bench, sentence=f"{start}; off by {verdict} {DEVIATES_FROM:.0f} standard uncertainties. "
+                   f"One of these would explain it: {ways}.")  # fmt: skip
+
+
+def _error_words(name: str, error: float, std: float) -> str:
+    """Words such as "a scale 0.80 % (0.12 %) too large"."""
+    side = "large" if error > 0 else "small"
+    return f"{_WORDS[name]} stated {100 * abs(error):.2f} % ({100 * std:.2f} %) too {side}"
