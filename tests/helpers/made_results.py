@@ -44,7 +44,7 @@ def made_bench(folder: Path, *, text: str = BENCH) -> Path:
     return file
 
 
-def made_result(  # noqa: PLR0913
+def made_result(
     folder: Path,
     bench_file: Path,
     rng: np.random.Generator,
