@@ -50,7 +50,7 @@ def number_probabilities(
     own_stds: ArrayLike,
     *,
     shared_rel_std: ArrayLike = 0.0,
-    shapes: Sequence[Shape] | None = None,
+    log_likelihoods: Sequence[Shape] | None = None,
     unit: float = ELEMENTARY_CHARGE,
 ) -> ChargeNumbers:
     """Probability of every charge number of every droplet of one bench.
@@ -63,7 +63,7 @@ def number_probabilities(
         Their own standard deviations in C, above 0, without what the droplets share.
     shared_rel_std : array_like of shape () or (N,), optional
         Relative standard uncertainty of the common factor; per droplet where sensitivities differ.
-    shapes : sequence, optional
+    log_likelihoods : sequence, optional
         For each droplet None, a function that gives the log density at charges in C (up to a constant), or a
         pair (consecutive charge numbers, their log likelihood under a flat prior), which is interpolated.
         Used where the charge is so blurred that more than mean and standard deviation matter: from 0.1 e for
@@ -79,7 +79,7 @@ def number_probabilities(
     Raises
     ------
     PhysicsError
-        If shapes differ or a standard deviation is not above 0.
+        If lengths differ or a standard deviation is not above 0.
 
     Notes
     -----
@@ -98,7 +98,9 @@ def number_probabilities(
     log_post = np.log(prior)
     outlier = np.empty((len(q), len(grid)))
     for part in chunks:
-        density, _ = _wrapped(q[part], s[part], values[part], factor[part], _part(shapes, part), unit)
+        density, _ = _wrapped(
+            q[part], s[part], values[part], factor[part], _part(log_likelihoods, part), unit
+        )
         mixed = (1 - OUTLIER_SHARE) * density + OUTLIER_SHARE
         outlier[part] = OUTLIER_SHARE / mixed
         log_post = log_post + np.log(mixed).sum(axis=0)
@@ -106,7 +108,7 @@ def number_probabilities(
     post /= post.sum()
     probability = np.empty(values.shape)
     for part in chunks:
-        _, given = _wrapped(q[part], s[part], values[part], factor[part], _part(shapes, part), unit)
+        _, given = _wrapped(q[part], s[part], values[part], factor[part], _part(log_likelihoods, part), unit)
         probability[part] = given @ post
     best = probability.argmax(axis=1)
     rows = np.arange(len(q))
@@ -207,7 +209,7 @@ def _tabulated(density: LogDensity, charge: FloatArray, q: float, s: float, unit
     values = np.asarray(density(grid * unit), dtype=float)
     if values.shape != grid.shape or not np.isfinite(values.max()):
         raise PhysicsError(
-            "shapes", values.shape, "a function that gives one finite log density for each charge"
+            "log_likelihoods", values.shape, "a function that gives one finite log density for each charge"
         )
     values = np.maximum(values - values.max(), -700.0)
     area = np.sum(np.exp(values)) * (grid[1] - grid[0])
@@ -222,7 +224,7 @@ def _interpolated(given: LogLikelihood, charge: FloatArray) -> FloatArray:
     usable = np.isfinite(log_like) & (log_like > log_like.max() - 200)
     numbers, log_like = numbers[usable], log_like[usable]
     if len(numbers) < 3 or np.any(np.diff(numbers) != 1):
-        raise PhysicsError("shapes", numbers, "finite at three consecutive numbers or more")
+        raise PhysicsError("log_likelihoods", numbers, "finite at three consecutive numbers or more")
     curve = Akima1DInterpolator(numbers, log_like)
     fine = np.linspace(numbers[0], numbers[-1], 16 * (len(numbers) - 1) + 1)
     density = np.exp(curve(fine) - log_like.max())
