@@ -165,7 +165,7 @@ def gains_of_suffix(base: FloatArray, extra: FloatArray, data: FloatArray) -> Fl
     diagonal = np.einsum("nii->ni", with_self)
     sound = np.all(np.einsum("nii->ni", inner) > 1e-6 * np.maximum(diagonal, 1e-300), axis=1)
     scale = np.sqrt(np.maximum(np.einsum("nii->ni", inner), 1e-300))
-    correlation = inner / (scale[:, :, None] * scale[:, None, :])
+    correlation = np.where(sound[:, None, None], inner / (scale[:, :, None] * scale[:, None, :]), 0.0)
     sound &= np.linalg.det(correlation) > 1e-6
     gains = np.zeros(len(data))
     if np.any(sound):

@@ -171,9 +171,8 @@ def _join(
         return [] if found and len(found) > 1 else [_lost(decision)]
     one, two = number == found[0], number == other[0]
     if np.intersect1d(tracks.sightings.frame[one], tracks.sightings.frame[two]).size:
-        return [
-            f"the join of {decision.time[:10]} of droplets {decision.droplet} and {decision.other} is not possible any more: both are seen in the same frames"
-        ]
+        what = f"the join of {decision.time[:10]} of droplets {decision.droplet} and {decision.other}"
+        return [f"{what} is not possible any more: both are seen in the same frames"]
     number[two] = found[0]
     return []
 

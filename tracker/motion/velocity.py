@@ -94,7 +94,7 @@ class Path:
 
 def paths(
     tracks: Tracks, recording: Recording, *, field: Field, scale: Scale, exposure: float,
-    orientation: Orientation, cuts: Sequence[int] = (),
+    orientation: Orientation, cuts: Sequence[int] = (), left_out: np.ndarray | None = None,
 ) -> list[Path]:  # fmt: skip
     """Bring tracks into metres along and across gravity, without the sightings that cannot be used.
 
@@ -114,6 +114,8 @@ def paths(
         Gravity in the picture.
     cuts : sequence of int, optional
         Frames at which the camera was bumped: the step that reaches such a frame is left out.
+    left_out : ndarray of bool, shape (len(tracks),), optional
+        Rows that a person left out.
 
     Returns
     -------
@@ -131,6 +133,8 @@ def paths(
         np.isfinite(x) & np.isfinite(y) & (x_std > 0) & (y_std > 0)
         & ((sightings.flags & int(LEFT_OUT)) == 0) & ~np.isin(sightings.frame, recording.repeated)
     )  # fmt: skip
+    if left_out is not None:
+        usable &= ~left_out
     found = []
     for droplet in tracks.numbers:
         span = tracks.rows(int(droplet))

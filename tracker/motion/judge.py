@@ -1,0 +1,189 @@
+"""From what is known of one droplet to the codes of its reasons; thresholds as `verdict` states them."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+
+from physics.drag import reynolds_number
+from physics.droplet import Conditions, diffusion
+from physics.motion import MIN_INCREMENTS, DropletPosterior
+from tracker.motion.aircurrent import AirCurrent
+from tracker.motion.changes import History
+from tracker.motion.rows import SegmentRow
+from tracker.motion.velocity import Path
+from tracker.records import Flag, IntArray, Settings
+
+Z_LIMIT = 3.29  # two-sided 1 in 1000
+LARGEST_RADIUS = 5e-6  # m, of a droplet that must not be taken for dirt
+STUCK_SHARE = 0.1  # of that droplet's diffusion
+SURE = 0.95  # probability from which a charge number is called certain
+SHARES = (
+    ("merged", Flag.MERGED, 0.2), ("out_of_focus", Flag.SOFT, 0.5), ("saturated", Flag.SATURATED, 0.5),
+    ("edge", Flag.EDGE, 0.3), ("streak", Flag.STREAK, 0.3),
+)  # fmt: skip
+
+
+@dataclass(frozen=True, slots=True)
+class Facts:
+    """What a verdict rests on."""
+
+    path: Path
+    flags: IntArray  # of all sightings of the track
+    outliers: int  # sightings left out
+    hops: int
+    history: History | None
+    posterior: DropletPosterior | None
+    conditions: Conditions
+    number: int | None
+    number_probability: float
+    on_no_number: float  # probability that the charge is on no whole number
+
+
+@dataclass(frozen=True, slots=True)
+class Balance:
+    """A droplet at rest with the field on."""
+
+    segment: int
+    time: float  # s, middle of the segment
+    time_std: float  # s, of a time somewhere in the segment
+    voltage: float  # V at which it would hang still
+    voltage_std: float  # V, own
+    statistic: float  # |speed| over its standard uncertainty
+    threshold: float = 2.0
+
+
+def reasons_of(facts: Facts, air: AirCurrent, rests: Sequence[Balance], settings: Settings) -> list[str]:
+    """Give the codes of all reasons that hold for one droplet.
+
+    Parameters
+    ----------
+    facts : Facts
+        Of the droplet.
+    air : AirCurrent
+        That all droplets share.
+    rests : sequence of Balance
+        Where the droplet rests with the field on.
+    settings : Settings
+        Least number of sightings.
+
+    Returns
+    -------
+    codes : list of str
+        Keys of `tracker.motion.verdict.REASONS`.
+    """
+    codes = [code for code, flag, most in SHARES if _share(facts.flags, flag) > most]
+    if _stuck(facts):
+        return [*codes, "stuck"]
+    history, posterior = facts.history, facts.posterior
+    if len(facts.path) < settings.min_frames or history is None or posterior is None:
+        return [*codes, "too_short"]
+    if facts.hops:
+        codes.append("hop")
+    if facts.outliers > max(2, 0.05 * len(facts.flags)):
+        codes.append("outliers")
+    codes += [change.kind for change in history.changes]
+    codes += _speed_codes(facts, history, posterior, air)
+    codes += _charge_codes(facts, history, posterior)
+    if rests:
+        codes.append("balance")
+    return codes
+
+
+def _share(flags: IntArray, flag: Flag) -> float:
+    return float(np.mean((flags & int(flag)) != 0)) if len(flags) else 0.0
+
+
+def _stuck(facts: Facts) -> bool:
+    """Whether the place spreads less than Brownian motion of a large droplet makes it."""
+    path = facts.path
+    if len(path) < MIN_INCREMENTS:
+        return False
+    spread = float(np.var(path.down) + np.var(path.side)) / 2
+    # A diffusing place has the variance D T / 3 about its mean over a time T.
+    apparent = 3 * spread / float(path.times[-1] - path.times[0])
+    return apparent < STUCK_SHARE * float(diffusion(LARGEST_RADIUS, facts.conditions))
+
+
+def _speed_codes(facts: Facts, history: History, posterior: DropletPosterior, air: AirCurrent) -> list[str]:
+    """Reasons that rest on speeds and Brownian motion."""
+    codes, fit = [], history.fit
+    drift = (fit.side_speed - air.side) / float(np.hypot(fit.side_speed_std, air.side_std))
+    if abs(drift) > Z_LIMIT:
+        codes.append("side_drift")
+    if abs(posterior.diffusion_z) > Z_LIMIT:
+        codes.append("diffusion")
+    if posterior.inconsistent:
+        codes.append("inconsistent")
+    if posterior.log_radius_std > 0.3:
+        codes.append("imprecise")
+    if np.isfinite(posterior.radius):
+        fastest = float(np.max(np.abs(history.steps.down / history.steps.dt)))
+        number = reynolds_number(
+            posterior.radius,
+            fastest,
+            air_density=facts.conditions.air_density,
+            viscosity=facts.conditions.viscosity,
+        )
+        if float(number) > 0.1:
+            codes.append("inertia")
+    return codes
+
+
+def _charge_codes(facts: Facts, history: History, posterior: DropletPosterior) -> list[str]:
+    """Reasons that rest on the charge, or on why there is none."""
+    if posterior.reason:
+        return ["too_short" if posterior.reason == "too_few_steps" else posterior.reason]
+    if not np.isfinite(history.fit.fall_speed):
+        return ["one_voltage"]
+    if facts.number is None:
+        return []
+    if facts.number == 0 and facts.number_probability > SURE:
+        return ["neutral"]
+    codes = [] if facts.number_probability >= SURE else ["number_open"]
+    return [*codes, "between_numbers"] if facts.on_no_number > 0.9 else codes
+
+
+def balances(segments: Sequence[SegmentRow], history: History) -> list[Balance]:
+    """Find the segments with the field on in which a droplet rests.
+
+    Parameters
+    ----------
+    segments : sequence of SegmentRow
+        Of one droplet.
+    history : History
+        Of the same droplet.
+
+    Returns
+    -------
+    balances : list of Balance
+        A segment counts if its speed is 0 within 2 standard uncertainties, and these are below a fifth of the
+        fall speed. The balance voltage comes from all segments: -fall speed / drive per volt, of the part of
+        the charge that holds there.
+    """
+    fit = history.fit
+    found: list[Balance] = []
+    if not np.isfinite(fit.fall_speed):
+        return found
+    for row in segments:
+        small = row.down_speed_std_m_s < 0.2 * abs(fit.fall_speed)
+        if row.voltage_v == 0 or not small or abs(row.down_speed_m_s) > 2 * row.down_speed_std_m_s:
+            continue
+        middle = 0.5 * (row.start_s + row.end_s)
+        part = sum(change.kind == "charge_step" and change.time < middle for change in history.changes)
+        drive = float(fit.drive_per_volt[min(part, len(fit.drive_per_volt) - 1)])
+        if not abs(drive * row.voltage_v) > 0.5 * abs(fit.fall_speed):
+            continue  # a slow droplet without drive rests nowhere
+        voltage = -fit.fall_speed / drive
+        i = 1 + min(part, len(fit.drive_per_volt) - 1)
+        slope = np.zeros(len(fit.covariance))
+        slope[0], slope[i] = -1 / drive, fit.fall_speed / drive**2
+        covariance = np.where(np.isfinite(fit.covariance), fit.covariance, 0.0)
+        std = float(np.sqrt(slope @ covariance @ slope))
+        half = 0.5 * (row.end_s - row.start_s)
+        found.append(Balance(
+            row.segment, middle, half / np.sqrt(3), voltage, std, abs(row.down_speed_m_s) / row.down_speed_std_m_s
+        ))  # fmt: skip
+    return found
