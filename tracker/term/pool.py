@@ -5,21 +5,17 @@ from __future__ import annotations
 from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass, replace
 from pathlib import Path
-from typing import TYPE_CHECKING, Any
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
-from physics.budget import Budget, DropletModel, bench_budget, explaining_errors, shared_sensitivities
-from physics.drag import slip_model
-from physics.droplet import ELEMENTARY_CHARGE, Conditions
+from physics.budget import Budget, explaining_errors
+from physics.droplet import ELEMENTARY_CHARGE
 from physics.quanta import SEARCH, ChargeSample, ChargeUnit, charge_sample, pooled_charge_unit, unit_ratio
 from tracker.errors import ResultError, UsageError
 from tracker.keeping.store import PROVENANCE, SUFFIX, Result, read_result
-from tracker.records import Measured
-
-if TYPE_CHECKING:
-    import pandas as pd
+from tracker.term.poolcharges import bench_charges, factor_budget
 
 FloatArray = NDArray[np.float64]
 
@@ -33,7 +29,6 @@ _WORDS = {
     "voltage": "a voltage",
     "viscosity_model": "a viscosity",
 }
-_RADII = 7  # radii at which sensitivities are worked out; between them they are straight
 
 
 @dataclass(frozen=True, slots=True)
@@ -78,6 +73,7 @@ class _Bench:
     results: tuple[str, ...]
     sample: ChargeSample
     budget: Budget
+    common: float  # relative uncertainty by the models, which err alike on all benches
 
 
 def find_results(paths: Iterable[Path | str]) -> list[Path]:
@@ -261,139 +257,31 @@ def _labels(results: Sequence[Result]) -> list[str]:
 
 
 def _bench(label: str, results: Sequence[Result]) -> _Bench:
-    """Gather the charges of one bench."""
-    import pandas as pd
-
-    droplets = [kept_droplets(result.droplets) for result in results]
-    steps = [charge_steps(result.changes, kept) for result, kept in zip(results, droplets, strict=True)]
-    table = pd.concat(droplets, ignore_index=True)
-    charge, own = (table[name].to_numpy(float) for name in ("charge_c", "charge_own_std_c"))
-    budget = _factor_budget(results[0].recording, table)
-    relative = table["charge_shared_std_c"].to_numpy(float) / np.abs(charge)
-    usable = np.isfinite(relative)
-    weight = (charge / own) ** 2
-    shared = (
-        float(np.average(relative[usable], weights=weight[usable])) if usable.any() else budget.shared_std
-    )
-    change, change_std = (np.concatenate(column) for column in zip(*steps, strict=True))
-    sample = charge_sample(charge, own, rel_stds=table["rel_std"].to_numpy(float), shared_rel_std=shared,
-                           steps=(change, change_std))  # fmt: skip
-    return _Bench(label, tuple(_name(result) for result in results), sample, budget)
+    """Gather the charges of one bench and the budget of their common factor."""
+    charges = bench_charges(results)
+    budget = factor_budget(results, charges)
+    shared = charges.shared_rel_std if np.isfinite(charges.shared_rel_std) else budget.shared_std
+    sample = charge_sample(
+        charges.charge, charges.own_std, rel_stds=charges.rel_std, shared_rel_std=shared,
+        steps=(charges.step, charges.step_std), pairs=(charges.pair, charges.pair_cov),
+    )  # fmt: skip
+    common = min(_models_part(budget, results[0].recording), shared)
+    return _Bench(label, tuple(_name(result) for result in results), sample, budget, common)
 
 
-def kept_droplets(droplets: pd.DataFrame) -> pd.DataFrame:
-    """Rows of droplets that are kept and have a charge, with the part of its uncertainty that grows with the charge.
-
-    Parameters
-    ----------
-    droplets : DataFrame
-        As in ``droplets.csv``.
-
-    Returns
-    -------
-    kept : DataFrame
-        The same columns and ``rel_std``: relative, through the radius; a charge at a given drive goes with
-        the radius to the power 1.1.
-    """
-    good = (droplets["verdict"] == "keep") & droplets["charge_c"].notna() & (droplets["charge_own_std_c"] > 0)
-    kept = droplets[good.fillna(False)].copy()
-    kept["rel_std"] = (1.1 * kept["radius_std_m"] / kept["radius_m"]).fillna(0.0)
-    return kept
-
-
-def charge_steps(changes: pd.DataFrame, kept: pd.DataFrame) -> tuple[FloatArray, FloatArray]:
-    """Changes of charge of the kept droplets, as charges of their own.
-
-    Parameters
-    ----------
-    changes : DataFrame
-        As in ``changes.csv``; only charge steps are used.
-    kept : DataFrame
-        As `kept_droplets` gives it.
-
-    Returns
-    -------
-    change : ndarray of shape (M,)
-        In C, signed.
-    std : ndarray of shape (M,)
-        Own standard uncertainty in C: the test statistic is (change / std)^2 at a known radius; the radius
-        adds its part.
-    """
-    steps = changes[(changes["kind"] == "charge_step") & changes["droplet"].isin(kept["droplet"])]
-    change = (steps["after_c"] - steps["before_c"]).to_numpy(float)
-    statistic = steps["statistic"].to_numpy(float)
-    radius_part = kept.set_index("droplet")["rel_std"].reindex(steps["droplet"]).to_numpy(float)
-    good = np.isfinite(change) & (change != 0) & (statistic > 0)
-    change, statistic, radius_part = change[good], statistic[good], radius_part[good]
-    return change, np.abs(change) * np.hypot(1 / np.sqrt(statistic), radius_part)
-
-
-def shared_inputs(recording: Mapping[str, Any]) -> dict[str, Measured]:
-    """Inputs that all droplets of a recording share, from its provenance.
-
-    Parameters
-    ----------
-    recording : mapping
-        As in ``recording.json``.
-
-    Returns
-    -------
-    inputs : dict of str to Measured
-        Under the names of `physics.budget.SHARED_INPUTS`; models count as factors of value 1.
-    """
-    bench, scale = recording["bench"], recording["scale"]
-    same = ("plate_gap", "temperature", "pressure", "relative_humidity", "oil_density", "gravity")
-    inputs = {
-        name: Measured(bench[name]["value"], bench[name]["std"], bench[name]["origin"]) for name in same
-    }
-    per_pixel = scale["metres_per_pixel_y"]
-    volts = bench.get("voltage", {}).get("value") or _largest_voltage(recording)
-    viscosity, slip = bench["viscosity"], slip_model(bench["slip"])
-    inputs["scale"] = Measured(per_pixel, scale["metres_per_pixel_y_std"], scale.get("picture") or "stated")
-    inputs["voltage"] = Measured(
-        abs(volts), abs(volts) * bench["voltage_rel_std"], "cell.voltage or field.list"
-    )
-    inputs["viscosity_model"] = Measured(1.0, viscosity["std"] / viscosity["value"], viscosity["origin"])
-    inputs["slip_model"] = Measured(1.0, slip.std_rel, slip.source)
-    return inputs
-
-
-def _largest_voltage(recording: Mapping[str, Any]) -> float:
-    """Largest voltage of the segments, 1 V if there is none: only its relative error counts."""
-    segments = recording.get("field", {}).get("segments", ())
-    return max((abs(s["voltage_v"]) for s in segments), default=0.0) or 1.0
-
-
-def _factor_budget(recording: Mapping[str, Any], kept: pd.DataFrame) -> Budget:
-    """Budget of the factor on all charges of a bench; droplets count by (charge / own uncertainty)^2."""
-    bench = recording["bench"]
-    values = {name: bench[name]["value"] for name in ("temperature", "viscosity", "mean_free_path", "air_density",
-                                                      "oil_density", "gravity", "plate_gap")}  # fmt: skip
-    conditions = Conditions(**values, slip=bench["slip"])
-    radius = kept["radius_m"].to_numpy(float)
-    radius = radius[np.isfinite(radius)] if np.isfinite(radius).any() else np.array([5e-7])
-    grid = np.geomspace(radius.min(), radius.max() * 1.001, _RADII)
-    slopes = np.stack([shared_sensitivities(DropletModel(r, 1e-18, conditions))[1] for r in grid])
-    each = np.stack([np.interp(np.log(radius), np.log(grid), column) for column in slopes.T], axis=1)
-    weight = np.ones(len(radius))
-    if len(kept) == len(radius):
-        weight = ((kept["charge_c"] / kept["charge_own_std_c"]) ** 2).to_numpy(float)
-    return bench_budget(each, shared_inputs(recording), weights=weight)
+def _models_part(budget: Budget, recording: Mapping[str, Any]) -> float:
+    """Part of the models of viscosity and slip in the uncertainty of the factor; a stated viscosity is no model."""
+    stated = "air.viscosity" in str(recording["bench"]["viscosity"].get("origin"))
+    common = [name for name in COMMON_INPUTS if not (stated and name == "viscosity_model")]
+    rows = [row for row in budget.rows if row.input in common]
+    return float(np.sqrt(sum((row.sensitivity * row.std) ** 2 for row in rows)))
 
 
 def _common_rel_std(benches: Sequence[_Bench]) -> float:
-    """Relative uncertainty that all benches share: of the models, where the viscosity was not stated."""
+    """Relative uncertainty that all benches share, as far as it matters: one bench has nothing to share it with."""
     if len(benches) < 2:
         return 0.0
-    return min(_common_of(bench) for bench in benches)
-
-
-def _common_of(bench: _Bench) -> float:
-    """The models' part of a bench's shared uncertainty."""
-    rows = [row for row in bench.budget.rows if row.input in COMMON_INPUTS]
-    return float(
-        min(np.sqrt(sum((row.sensitivity * row.std) ** 2 for row in rows)), bench.sample.shared_rel_std)
-    )
+    return min(bench.common for bench in benches)
 
 
 def _without_common(bench: _Bench, common: float) -> ChargeSample:

@@ -1,0 +1,245 @@
+"""Charges of one bench from its results, and the budget of the factor that they share."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from physics.budget import SHARED_INPUTS, Budget, DropletModel, bench_budget, shared_sensitivities
+from physics.drag import slip_model
+from physics.droplet import Conditions
+from tracker.keeping.store import Result
+from tracker.records import Measured
+
+if TYPE_CHECKING:
+    import pandas as pd
+
+FloatArray = NDArray[np.float64]
+
+_RADII = 7  # radii at which sensitivities are worked out; between them they are straight
+_USUAL_RADIUS = 5e-7  # m, where none is known
+
+
+@dataclass(frozen=True, slots=True)
+class BenchCharges:
+    """Kept charges of one bench; a droplet whose charge changed is a pair, or a charge and a step."""
+
+    charge: FloatArray  # (N,) C
+    own_std: FloatArray  # (N,) C
+    rel_std: FloatArray  # (N,) relative part of it, through the radius
+    radius: FloatArray  # (N,) m, nan where unknown
+    sensitivity: FloatArray  # (N, 10) d ln charge by `SHARED_INPUTS`, nan where not stored
+    step: FloatArray  # (M,) C
+    step_std: FloatArray  # (M,) C
+    pair: FloatArray  # (K, 2) C
+    pair_cov: FloatArray  # (K, 2, 2) C^2
+    shared_rel_std: float  # of the common factor; nan if the results do not say
+
+
+def bench_charges(results: Sequence[Result]) -> BenchCharges:
+    """Gather the kept charges of one bench.
+
+    Parameters
+    ----------
+    results : sequence of Result
+        Of that bench; their tracks are not needed.
+
+    Returns
+    -------
+    charges : BenchCharges
+        Droplets count by (charge / own uncertainty)^2 in the shared uncertainty.
+    """
+    import pandas as pd
+
+    tables, steps, pairs = [], [], []
+    for result in results:
+        kept = kept_droplets(result.droplets)
+        paired = charge_pairs(result.recording, kept)
+        alone = kept[~kept["droplet"].isin(list(paired))]
+        pairs += list(paired.values())
+        steps.append(charge_steps(result.changes, alone))
+        tables.append(alone.assign(sensitivity=_stored_sensitivities(result.recording, alone)))
+    table = pd.concat(tables, ignore_index=True)
+    charge, own = (table[name].to_numpy(float) for name in ("charge_c", "charge_own_std_c"))
+    relative = table["charge_shared_std_c"].to_numpy(float) / np.abs(charge)
+    usable = np.isfinite(relative)
+    shared = np.average(relative[usable], weights=(charge / own)[usable] ** 2) if usable.any() else np.nan
+    step, step_std = (np.concatenate(column) for column in zip(*steps, strict=True))
+    none = np.full(len(SHARED_INPUTS), np.nan)
+    return BenchCharges(
+        charge, own, table["rel_std"].to_numpy(float), table["radius_m"].to_numpy(float),
+        np.array([none if row is None else row for row in table["sensitivity"]]).reshape(-1, len(SHARED_INPUTS)),
+        step, step_std, np.array([q for q, _ in pairs]).reshape(-1, 2),
+        np.array([c for _, c in pairs]).reshape(-1, 2, 2), float(shared),
+    )  # fmt: skip
+
+
+def _stored_sensitivities(recording: Mapping[str, Any], kept: pd.DataFrame) -> list[list[float] | None]:
+    """Sensitivities of the kept droplets, as the measurement stored them."""
+    budget = recording.get("budget") or {}
+    stored = budget.get("log_charge_sensitivities") or {}
+    if tuple(budget.get("inputs", ())) != SHARED_INPUTS:
+        stored = {}
+    return [stored.get(str(droplet)) for droplet in kept["droplet"]]
+
+
+def kept_droplets(droplets: pd.DataFrame) -> pd.DataFrame:
+    """Rows of droplets that are kept and have a charge, with the part of its uncertainty that grows with the charge.
+
+    Parameters
+    ----------
+    droplets : DataFrame
+        As in ``droplets.csv``.
+
+    Returns
+    -------
+    kept : DataFrame
+        The same columns and ``rel_std``: relative, through the radius; a charge at a given drive goes with
+        the radius to the power 1.1.
+    """
+    good = (droplets["verdict"] == "keep") & droplets["charge_c"].notna() & (droplets["charge_own_std_c"] > 0)
+    kept = droplets[good.fillna(False)].copy()
+    kept["rel_std"] = (1.1 * kept["radius_std_m"] / kept["radius_m"]).fillna(0.0)
+    return kept
+
+
+def charge_steps(changes: pd.DataFrame, kept: pd.DataFrame) -> tuple[FloatArray, FloatArray]:
+    """Changes of charge of the kept droplets, as charges of their own.
+
+    Parameters
+    ----------
+    changes : DataFrame
+        As in ``changes.csv``; only charge steps are used.
+    kept : DataFrame
+        As `kept_droplets` gives it.
+
+    Returns
+    -------
+    change : ndarray of shape (M,)
+        In C, signed.
+    std : ndarray of shape (M,)
+        Own standard uncertainty in C: the test statistic is (change / std)^2 at a known radius; the radius
+        adds its part.
+    """
+    steps = changes[(changes["kind"] == "charge_step") & changes["droplet"].isin(kept["droplet"])]
+    change = (steps["after_c"] - steps["before_c"]).to_numpy(float)
+    statistic = steps["statistic"].to_numpy(float)
+    radius_part = kept.set_index("droplet")["rel_std"].reindex(steps["droplet"]).to_numpy(float)
+    good = np.isfinite(change) & (change != 0) & (statistic > 0)
+    change, statistic, radius_part = change[good], statistic[good], radius_part[good]
+    return change, np.abs(change) * np.hypot(1 / np.sqrt(statistic), radius_part)
+
+
+def charge_pairs(
+    recording: Mapping[str, Any], kept: pd.DataFrame
+) -> dict[int, tuple[FloatArray, FloatArray]]:
+    """Two charges and their covariance of each kept droplet that changed its charge, where the result holds them.
+
+    Parameters
+    ----------
+    recording : mapping
+        As in ``recording.json``.
+    kept : DataFrame
+        As `kept_droplets` gives it.
+
+    Returns
+    -------
+    pairs : dict of int to (charge of shape (2,), covariance of shape (2, 2))
+        In C and C^2: the charge of the longest part, and that other part whose difference from it is best
+        known.
+    """
+    parts = (recording.get("details") or {}).get("charge_parts") or {}
+    found = {}
+    for droplet, main_charge in zip(kept["droplet"], kept["charge_c"], strict=True):
+        stored = parts.get(str(droplet))
+        if stored is None:
+            continue
+        charge = np.array([np.nan if q is None else q for q in stored["charge_c"]])
+        cov = np.array(stored["covariance_c2"], dtype=float)
+        main = int(np.nanargmin(np.abs(charge - main_charge)))
+        step_var = np.diag(cov) + cov[main, main] - 2 * cov[main]
+        step_var[~np.isfinite(charge) | (step_var <= 0)] = np.inf
+        step_var[main] = np.inf
+        other = int(np.argmin(step_var))
+        if np.isfinite(step_var[other]):
+            rows = [main, other]
+            found[int(droplet)] = charge[rows], cov[np.ix_(rows, rows)]
+    return found
+
+
+def shared_inputs(recording: Mapping[str, Any]) -> dict[str, Measured]:
+    """Inputs that all droplets of a recording share, from its provenance.
+
+    Parameters
+    ----------
+    recording : mapping
+        As in ``recording.json``.
+
+    Returns
+    -------
+    inputs : dict of str to Measured
+        Under the names of `physics.budget.SHARED_INPUTS`; models count as factors of value 1.
+    """
+    bench, scale = recording["bench"], recording["scale"]
+    same = ("plate_gap", "temperature", "pressure", "relative_humidity", "oil_density", "gravity")
+    inputs = {
+        name: Measured(bench[name]["value"], bench[name]["std"], bench[name]["origin"]) for name in same
+    }
+    per_pixel = scale["metres_per_pixel_y"]
+    volts = bench.get("voltage", {}).get("value") or _largest_voltage(recording)
+    viscosity, slip = bench["viscosity"], slip_model(bench["slip"])
+    inputs["scale"] = Measured(per_pixel, scale["metres_per_pixel_y_std"], scale.get("picture") or "stated")
+    inputs["voltage"] = Measured(
+        abs(volts), abs(volts) * bench["voltage_rel_std"], "cell.voltage or field.list"
+    )
+    inputs["viscosity_model"] = Measured(1.0, viscosity["std"] / viscosity["value"], viscosity["origin"])
+    inputs["slip_model"] = Measured(1.0, slip.std_rel, slip.source)
+    return inputs
+
+
+def _largest_voltage(recording: Mapping[str, Any]) -> float:
+    """Largest voltage of the segments, 1 V if there is none: only its relative error counts."""
+    segments = recording.get("field", {}).get("segments", ())
+    return max((abs(s["voltage_v"]) for s in segments), default=0.0) or 1.0
+
+
+def factor_budget(results: Sequence[Result], charges: BenchCharges) -> Budget:
+    """Budget of the factor on all charges of a bench.
+
+    Parameters
+    ----------
+    results : sequence of Result
+        Of that bench; the first one's provenance gives the inputs.
+    charges : BenchCharges
+        Of the same results; droplets count by (charge / own uncertainty)^2.
+
+    Returns
+    -------
+    budget : Budget
+        With the sensitivities that the measurement stored, or those of the closed form at the droplets'
+        radii.
+    """
+    recording = results[0].recording
+    stored = np.all(np.isfinite(charges.sensitivity), axis=1)
+    if stored.any():
+        weights = (charges.charge / charges.own_std)[stored] ** 2
+        return bench_budget(charges.sensitivity[stored], shared_inputs(recording), weights=weights)
+    known = np.isfinite(charges.radius)
+    radius = charges.radius[known] if known.any() else np.array([_USUAL_RADIUS])
+    weights = (charges.charge / charges.own_std)[known] ** 2 if known.any() else np.ones(1)
+    return bench_budget(_closed_form(recording, radius), shared_inputs(recording), weights=weights)
+
+
+def _closed_form(recording: Mapping[str, Any], radius: FloatArray) -> FloatArray:
+    """Sensitivities (N, 10) of charges at given radii, from a few radii."""
+    bench = recording["bench"]
+    values = {name: bench[name]["value"] for name in ("temperature", "viscosity", "mean_free_path", "air_density",
+                                                      "oil_density", "gravity", "plate_gap")}  # fmt: skip
+    conditions = Conditions(**values, slip=bench["slip"])
+    grid = np.geomspace(radius.min(), radius.max() * 1.001, _RADII)
+    slopes = np.stack([shared_sensitivities(DropletModel(r, 1e-18, conditions))[1] for r in grid])
+    return np.stack([np.interp(np.log(radius), np.log(grid), column) for column in slopes.T], axis=1)
