@@ -3,20 +3,21 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
 
 import numpy as np
+from scipy.special import logsumexp
 
 from physics.droplet import Conditions
 from physics.errors import PhysicsError
-from physics.freefit import free_fit_of
+from physics.freefit import FreeFit, free_fit
 from physics.increments import FloatArray, Increments
-from physics.likelihood import MIN_INCREMENTS, likelihood_grid
-from physics.posterior import SPEED_SPAN, Law, law_at, law_table, moments, radius_span
+from physics.likelihood import MIN_INCREMENTS
+from physics.posterior import Law, law_table, moments
 
 __all__ = ["air_current"]
 
 AIR_POINTS = 41
+SPAN = 5.0  # standard deviations of ln D that each droplet's radius may lie from its diffusion
 
 
 def air_current(
@@ -60,60 +61,43 @@ def air_current(
     if not prior_std > 0:
         raise PhysicsError("prior_std", prior_std, "above 0 m/s")
     table = law_table(conditions)
-    prepared = [_air_terms(steps, table, conditions, 5 * prior_std) for steps in droplets]
-    terms = [term for term in prepared if term is not None]
+    fits = [free_fit(steps) for steps in droplets if len(steps) >= MIN_INCREMENTS]
+    # a droplet's own std of ln D is small when its D came out high, so as a weight it would draw u upward
+    spread = float(np.sqrt(np.median([fit.dof * fit.log_diffusion_std**2 for fit in fits]))) if fits else 0.0
     speeds = prior_std * np.linspace(-5, 5, AIR_POINTS)
     mean, std = 0.0, prior_std
-    for _ in range(4):
-        total = -0.5 * (speeds / prior_std) ** 2 + sum(term.log_likelihood(speeds) for term in terms)
+    for _ in range(6):
+        total = -0.5 * (speeds / prior_std) ** 2
+        for fit in fits:
+            total = total + _log_likelihood(fit, table, speeds, spread / np.sqrt(fit.dof))
         weights = np.exp(total - total.max())
         mean, std = moments(weights / weights.sum(), speeds)
-        if std > 2 * (speeds[1] - speeds[0]):
+        step = speeds[1] - speeds[0]
+        if std > 2 * step:
             break
-        speeds = mean + max(5 * std, 3 * (speeds[1] - speeds[0])) * np.linspace(-1, 1, AIR_POINTS)
+        speeds = mean + max(5 * std, 2 * step) * np.linspace(-1, 1, AIR_POINTS)
     return mean, std
 
 
-@dataclass(frozen=True, slots=True)
-class _AirTerms:
-    """Log likelihood of one droplet, constant + slope w - bend w^2 / 2, w = speed + u, on a grid of ln r, ln rho."""
+def _log_likelihood(fit: FreeFit, table: Law, air_speeds: FloatArray, log_diffusion_std: float) -> FloatArray:
+    """Log likelihood of air speeds from one droplet's fall speed and free diffusion, its radius integrated out.
 
-    speed: FloatArray  # (R,)
-    constant: FloatArray  # (R, K)
-    slope: FloatArray  # (R, K)
-    bend: FloatArray  # (R, K)
-
-    def log_likelihood(self, air_speeds: FloatArray) -> FloatArray:
-        """Integrate radius and noise out at each air speed."""
-        drift = (self.speed[:, None] + air_speeds)[:, None, :]
-        value = self.constant[:, :, None] + drift * (
-            self.slope[:, :, None] - 0.5 * self.bend[:, :, None] * drift
-        )
-        top = value.max()
-        return np.asarray(top + np.log(np.maximum(np.exp(value - top).sum(axis=(0, 1)), 1e-300)))
-
-
-def _air_terms(steps: Increments, table: Law, conditions: Conditions, reach: float) -> _AirTerms | None:
-    """Prepare one droplet for `air_current`; None if it has no say."""
-    if len(steps) < MIN_INCREMENTS:
-        return None
-    sums = likelihood_grid(steps)
-    fit = free_fit_of(steps, sums)
-    if not sums.separable:
-        return None
-    span = radius_span(fit, table, 0.0, reach / SPEED_SPAN)
-    if span is None or span[2]:
-        return None
-    ends = np.interp(span[:2], table.log_radius, table.speed)
-    points = int(np.clip((ends[1] - ends[0]) / (0.7 * fit.fall_speed_std), 60, 600))
-    law = law_at(np.linspace(span[0], span[1], points), conditions)
-    slope = np.gradient(law.speed, law.log_radius)
-    by_motion = fit.log_diffusion_std / np.abs(np.gradient(np.log(law.diffusion), law.log_radius))
-    orthogonal = slope + (fit.fall_speed_std / by_motion) ** 2 / slope
-    diffusion = law.diffusion[:, None]
-    constant = (
-        np.log(orthogonal)[:, None] - 0.5 * (2 * sums.count - len(sums.parts) - 1) * np.log(diffusion)
-        - 0.5 * (sums.log_det + sums.log_det_drive + np.log(sums.side_drift))
-        - 0.5 * (sums.data + sums.side_data) / diffusion
-    )  # fmt: skip
-    return _AirTerms(law.speed, constant, sums.drift_data / diffusion, sums.drift / diffusion)
+    With ln D known to s_D and the speed w to s_w, the parameter orthogonal to the air speed has the density
+    v' + (s_w / s_r)^2 / v' in ln r, where v' = dv/dln r and s_r = s_D / |dln D/dln r|.
+    """
+    if not np.isfinite(fit.fall_speed):
+        return np.zeros_like(air_speeds)
+    span = np.log(fit.diffusion) + SPAN * log_diffusion_std * np.array([1.0, -1.0])
+    ends = np.interp(-span, -np.log(table.diffusion), table.log_radius)
+    reach = np.interp(ends, table.log_radius, table.speed)
+    points = int(np.clip((reach[1] - reach[0]) / (0.7 * fit.fall_speed_std), 60, 2000))
+    log_radius = np.linspace(ends[0], ends[1], points)
+    speed, log_diffusion = (
+        np.interp(log_radius, table.log_radius, column) for column in (table.speed, np.log(table.diffusion))
+    )
+    slope = np.gradient(speed, log_radius)
+    radius_std = log_diffusion_std / np.abs(np.gradient(log_diffusion, log_radius))
+    prior = slope + (fit.fall_speed_std / radius_std) ** 2 / slope
+    constant = np.log(prior) - 0.5 * ((np.log(fit.diffusion) - log_diffusion) / log_diffusion_std) ** 2
+    misfit = (fit.fall_speed - air_speeds[:, None] - speed) / fit.fall_speed_std
+    return np.asarray(logsumexp(constant - 0.5 * misfit**2, axis=1) - np.log(points))
