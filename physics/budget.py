@@ -20,7 +20,7 @@ from physics import drag
 from physics.air import PRESSURE_RANGE, TEMPERATURE_RANGE, Air, dry_mean_free_path, moist_air
 from physics.droplet import BOLTZMANN, Conditions, diffusion, droplet_mobility, fall_speed
 from physics.errors import PhysicsError
-from physics.propagation import MonteCarlo, joint_normal, monte_carlo, normal, validate_linear
+from physics.propagation import MonteCarlo, Trials, joint_normal, monte_carlo, normal, validate_linear
 
 Floats = NDArray[np.float64]
 
@@ -192,7 +192,9 @@ def shared_effect(
     """
     c, start = model.conditions, np.asarray(model.radius if radius is None else radius, dtype=np.float64)
     e = {name: np.asarray(errors.get(name, 0.0), dtype=np.float64) for name in SHARED_INPUTS}
-    changes = np.stack(np.broadcast_arrays(e["temperature"], e["pressure"], e["relative_humidity"]))
+    changes = np.stack(
+        np.broadcast_arrays(np.log1p(e["temperature"]), np.log1p(e["pressure"]), e["relative_humidity"])
+    )
     log_viscosity, log_path, log_density = np.tensordot(_air_slopes(model), changes, axes=(1, 0))
     viscosity = c.viscosity * np.exp(log_viscosity) * (1.0 + e["viscosity_model"])
     gas = {"mean_free_path": c.mean_free_path * np.exp(log_path), "slip": c.slip}
@@ -481,4 +483,4 @@ def _simulate(
 
     draws = [joint_normal((math.log(model.radius), model.charge), own_covariance)]
     draws.extend(normal(0.0, float(std)) for std in shared_errors(inputs))
-    return monte_carlo(result, draws, rng, digits=digits)
+    return monte_carlo(result, draws, rng, trials=Trials(digits=digits, share=0.2))

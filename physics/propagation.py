@@ -47,6 +47,29 @@ class Propagated:
 
 
 @dataclass(frozen=True, slots=True)
+class Trials:
+    """How long to draw.
+
+    Attributes
+    ----------
+    digits : int
+        Significant digits of the standard uncertainty that must be steady, 1 or 2.
+    probability : float
+        Of the coverage intervals.
+    share : float
+        Part of the numerical tolerance within which the result must be steady; a fifth where a linear result is
+        to be judged by it (JCGM 101, 8.2).
+    most : int
+        Draws at which to stop in any case.
+    """
+
+    digits: int = 2
+    probability: float = 0.95
+    share: float = 1.0
+    most: int = 2_000_000
+
+
+@dataclass(frozen=True, slots=True)
 class MonteCarlo:
     """Result of a propagation of distributions.
 
@@ -304,9 +327,7 @@ def monte_carlo(
     distributions: Sequence[Draw],
     rng: np.random.Generator,
     *,
-    digits: int = 2,
-    probability: float = 0.95,
-    most: int = 2_000_000,
+    trials: Trials = Trials(),
 ) -> MonteCarlo:
     """Propagate distributions adaptively, until the result is steady to the digits wanted.
 
@@ -318,44 +339,40 @@ def monte_carlo(
         One per input, or one per group of correlated inputs.
     rng : Generator
         Source of randomness.
-    digits : int, optional
-        Significant digits of the standard uncertainty that must be steady, 1 or 2.
-    probability : float, optional
-        Of the coverage intervals.
-    most : int, optional
-        Draws at which to stop in any case.
+    trials : Trials, optional
+        Digits, probability and bounds.
 
     Returns
     -------
     MonteCarlo
-        `stable` says whether `most` was enough.
+        `stable` says whether `trials.most` was enough.
 
     References
     ----------
     .. [1] JCGM 101:2008, 7.9.4; blocks of 10 000 draws.
     """
-    size = max(10_000, math.ceil(100.0 / (1.0 - probability)))
+    tail = 0.5 - 0.5 * trials.probability
+    size = max(10_000, math.ceil(100.0 / (1.0 - trials.probability)))
     blocks: list[Floats] = []
     figures: list[tuple[float, float, float, float]] = []
     stable = False
-    while not stable and (len(blocks) + 1) * size <= max(most, 2 * size):
+    while not stable and (len(blocks) + 1) * size <= max(trials.most, 2 * size):
         block = _one_block(function, distributions, rng, size)
         blocks.append(block)
-        low, high = np.quantile(block, [0.5 - 0.5 * probability, 0.5 + 0.5 * probability])
+        low, high = np.quantile(block, [tail, 1.0 - tail])
         figures.append((float(block.mean()), float(block.std(ddof=1)), float(low), float(high)))
         if len(blocks) >= 2:
             std = math.sqrt(sum(f[1] ** 2 for f in figures) / len(figures))
-            spread = np.std(figures, axis=0, ddof=1) / math.sqrt(len(figures))
-            stable = bool(np.all(2.0 * spread <= numerical_tolerance(std, digits=digits)))
+            spread = float(np.std(figures, axis=0, ddof=1).max()) / math.sqrt(len(figures))
+            stable = 2.0 * spread <= trials.share * numerical_tolerance(std, digits=trials.digits)
     values = np.sort(np.concatenate(blocks))
-    tail = 0.5 - 0.5 * probability
     low, high = np.quantile(values, [tail, 1.0 - tail])
     return MonteCarlo(
         mean=float(values.mean()),
         std=float(values.std(ddof=1)),
         symmetric=(float(low), float(high)),
-        shortest=_shortest(values, probability),
-        probability=probability,
+        shortest=_shortest(values, trials.probability),
+        probability=trials.probability,
         trials=values.size,
         stable=stable,
     )
