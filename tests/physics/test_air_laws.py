@@ -89,8 +89,8 @@ def test_humidity_lowers_the_viscosity(temperature, humidity):
 def test_pair_viscosity_uses_the_tabled_collision_integrals(reduced, momentum, diffusive):
     """Viscosity and A* of the unlike pair follow from the Lennard-Jones collision integrals.
 
-    Source: Hirschfelder, Curtiss and Bird (1954), table I-M, from memory; the fits of Neufeld et al. (1972) are good to
-    0.2 %, to which 0.3 % for other tables' digits is added.
+    Source: Hirschfelder, Curtiss and Bird (1954), table I-M, from memory; the fits of Neufeld et al. (1972) are good
+    to 0.2 %, to which 0.3 % for other tables' digits is added.
     """
     temperature = reduced * air.PAIR_WELL_DEPTH
     viscosity, a_star = air._pair_viscosity(temperature)
@@ -284,8 +284,8 @@ def test_gravity_is_somigliana(latitude, gravity):
 def test_gravity_at_a_known_place_and_height():
     """Gravity at Chicago, and against the formula of fluids over latitudes and heights.
 
-    Sources: 980.28 Gal as used with the oil drops of 1913, from memory, 30 mGal for the rock below; fluids has an older
-    normal gravity, 3e-5 m/s^2 higher at the equator and 1.1e-4 lower at 80 deg, and the same height term.
+    Sources: 980.28 Gal as used with the oil drops of 1913, from memory, 30 mGal for the rock below; fluids has an
+    older normal gravity, 3e-5 m/s^2 higher at the equator and 1.1e-4 lower at 80 deg, and the same height term.
     """
     assert local_gravity(41.79, 182.0) == pytest.approx(9.8028, abs=3e-4)
     for latitude in np.linspace(-80, 80, 9):

@@ -66,8 +66,9 @@ def slopes(droplet_model: DropletModel) -> tuple[dict[str, float], dict[str, flo
 def test_sensitivities_of_one_droplet():
     """Sensitivities of the charge of a 0.6 um droplet agree with an independent computation to its printed digits.
 
-    Source: computed apart from this package (r 0.6 um, rho 886, Kim et al. with ISO air): viscosity 1.592, oil density
-    -0.593, gravity -0.592, mean free path -0.184 (which the pressure carries with the opposite sign), V -1, d +1.
+    Source: computed apart from this package (r 0.6 um, rho 886, Kim et al. with ISO air): viscosity 1.592, oil
+    density -0.593, gravity -0.592, mean free path -0.184 (which the pressure carries with the opposite sign), V -1,
+    d +1.
     """
     dry = moist_air(296.15, 101_325.0)
     _, q = slopes(DropletModel(0.6e-6, 8e-19, bench(dry, air_density=1.1873296), dry))
@@ -166,7 +167,8 @@ def test_temperature_acts_through_the_air():
 def test_given_viscosity_does_not_follow_the_weather():
     """A viscosity from the bench file leaves temperature only the free path, the density and the oil.
 
-    Source: with the model's viscosity a kelvin makes 0.33 % of charge; without it the free path's 0.07 % the other way.
+    Source: with the model's viscosity a kelvin makes 0.33 % of charge; without it the free path's 0.07 % the other
+    way.
     """
     air = moist_air(296.15, 101_325.0, viscosity=1.83e-5)
     given_q = slopes(DropletModel(0.6e-6, 8e-19, bench(air), air))[1]
@@ -239,7 +241,8 @@ def test_shared_covariance_between_droplets():
 def test_droplet_budget_table():
     """The table of a droplet names every input in its unit; shares add up to 1 and parts to the whole.
 
-    Source: JCGM 100, sum of squares: share = (sensitivity x std / combined std)^2 with the numbers of the table itself.
+    Source: JCGM 100, sum of squares: share = (sensitivity x std / combined std)^2 with the numbers of the table
+    itself.
     """
     droplet_model = model()
     own = 0.08 * ELEMENTARY_CHARGE
@@ -263,8 +266,8 @@ def test_droplet_budget_table():
 def test_monte_carlo_agrees_with_a_well_behaved_droplet():
     """For small uncertainties the linear budget is confirmed, and says so.
 
-    Two digits of the standard uncertainty, 1.0e-20 C: the ends of both intervals lie within half a unit of the second,
-    while the second-order shift of the mean is 1e-22 C.
+    Two digits of the standard uncertainty, 1.0e-20 C: the ends of both intervals lie within half a unit of the
+    second, while the second-order shift of the mean is 1e-22 C.
     """
     droplet_model = model(number=5)
     own = 0.05 * ELEMENTARY_CHARGE
@@ -281,8 +284,8 @@ def test_monte_carlo_agrees_with_a_well_behaved_droplet():
 def test_monte_carlo_takes_over_where_linear_fails():
     """With a scale known to 20 % the Monte Carlo result is given, skewed, and the note says by how much it differs.
 
-    Source: without slip q ~ scale^1.5 for a fixed ratio of speeds, so that for a normal scale error s the quantiles of
-    q are (1 + 1.96 s)^1.5 in closed form.
+    Source: without slip q ~ scale^1.5 for a fixed ratio of speeds, so that for a normal scale error s the quantiles
+    of q are (1 + 1.96 s)^1.5 in closed form.
     """
     plain = DropletModel(1e-6, 8e-19, bench(mean_free_path=1e-20, air_density=0.0), AIR)
     inputs = {"scale": Stated(3e-6, 0.6e-6)}

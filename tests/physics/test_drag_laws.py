@@ -54,8 +54,8 @@ def test_davies_has_its_own_mean_free_path():
 def test_millikan_has_his_own_mean_free_path():
     """Millikan's free path is 94 nm at 23 degC and 76 cmHg, and his constant b follows from his A.
 
-    Sources: eta = 0.3502 rho c l (Phys. Rev. 22, 1923, abstract); b = 0.000617 cm cmHg of the 1917 work, from memory, and
-    0.000621 by a straight line through its 25 drops: 1 % apart, and the product A l p lies between them.
+    Sources: eta = 0.3502 rho c l (Phys. Rev. 22, 1923, abstract); b = 0.000617 cm cmHg of the 1917 work, from
+    memory, and 0.000621 by a straight line through its 25 drops: 1 % apart, and the product A l p lies between them.
     """
     model = SLIP_MODELS["millikan1923"]
     path = model.path_factor * LAMBDA
@@ -68,8 +68,9 @@ def test_millikan_has_his_own_mean_free_path():
 def test_free_molecules_reflect_mostly_diffusely(name):
     """For large Knudsen numbers every correlation meets free-molecule drag with 60 to 100 % diffuse reflection.
 
-    Source: P. S. Epstein, Phys. Rev. 23 (1924), 710: F = 4/3 pi r^2 rho c v (1 + pi d / 8), d the diffuse share, so that
-    Cc / Kn -> 4.5 x 0.4908 / (1 + pi d / 8). In another convention of the free path d would come out beyond 1 or at 0.4.
+    Source: P. S. Epstein, Phys. Rev. 23 (1924), 710: F = 4/3 pi r^2 rho c v (1 + pi d / 8), d the diffuse share, so
+    that Cc / Kn -> 4.5 x 0.4908 / (1 + pi d / 8). In another convention of the free path d would come out beyond 1
+    or at 0.4.
     """
     model = SLIP_MODELS[name]
     slope = model.path_factor * (model.alpha + model.beta)
@@ -93,8 +94,8 @@ def test_the_sources_differ_as_stated():
 def test_slip_in_a_printed_aerosol_table():
     """Cc at 20 degC and 1 atm agrees with a textbook table, within what the correlations differ by.
 
-    Source: W. C. Hinds, Aerosol Technology, 2nd ed. (1999), table A11 (free path 66 nm), from memory. It has a fit of its
-    own, 3.2 % above Kim et al. at 0.1 um, 0.5 % at 0.5 um and 0.15 % from 1 um on.
+    Source: W. C. Hinds, Aerosol Technology, 2nd ed. (1999), table A11 (free path 66 nm), from memory. It has a fit
+    of its own, 3.2 % above Kim et al. at 0.1 um, 0.5 % at 0.5 um and 0.15 % from 1 um on.
     """
     diameters = np.array([0.1, 0.5, 1.0, 2.0, 5.0, 10.0]) * 1e-6
     printed = np.array([2.928, 1.316, 1.155, 1.077, 1.031, 1.015])
@@ -159,8 +160,8 @@ def test_mobility_without_slip_is_stokes():
 def test_stokes_drag_ends_where_the_drag_curve_says(reynolds):
     """The excess of the drag over Stokes' law at the end of its range is that of a standard drag curve.
 
-    Source: fluids.drag_sphere, correlation of Clift, Grace and Weber (1978); 3/16 Re is the first term of the same curve,
-    the next one takes 6 % of it away at Re = 0.1.
+    Source: fluids.drag_sphere, correlation of Clift, Grace and Weber (1978); 3/16 Re is the first term of the same
+    curve, the next one takes 6 % of it away at Re = 0.1.
     """
     excess = fluids.drag_sphere(reynolds, Method="Clift") * reynolds / 24 - 1
     check = stokes_check(reynolds)

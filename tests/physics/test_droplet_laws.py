@@ -43,8 +43,8 @@ def test_constants_are_exact():
 def test_one_droplet_worked_by_hand():
     """A droplet of 0.6 um with five charges has the speeds that an independent computation gives.
 
-    Source: computed apart from this package, to nine digits: Cc 1.1306816, weight 7.8508082e-15 N, fall 4.28321823e-5 m/s,
-    rise 3.21380434e-4 m/s and 4.07044799e-4 m/s when driven down, by 500 V over 6 mm.
+    Source: computed apart from this package, to nine digits: Cc 1.1306816, weight 7.8508082e-15 N, fall
+    4.28321823e-5 m/s, rise 3.21380434e-4 m/s and 4.07044799e-4 m/s when driven down, by 500 V over 6 mm.
     """
     radius = 0.6e-6
     assert droplet.weight(radius, BENCH) == pytest.approx(7.8508082e-15, rel=1e-8)
@@ -102,9 +102,9 @@ def test_speed_times_square_is_radius_times_factor(speed, factor):
 def test_printed_table_of_settling_and_diffusion():
     """Settling speed, mobility and diffusion of spheres of unit density agree with a textbook table.
 
-    Source: W. C. Hinds, Aerosol Technology, 2nd ed. (1999), table A11, from memory: 20 degC, 1 atm, eta 1.81e-5 Pa s, free
-    path 66 nm, no buoyancy. Its slip fit differs from Kim et al. by 3.2 % at 0.1 um, 0.5 % at 0.5 um and 0.15 % above;
-    three printed digits add up to 0.5 %.
+    Source: W. C. Hinds, Aerosol Technology, 2nd ed. (1999), table A11, from memory: 20 degC, 1 atm, eta 1.81e-5 Pa
+    s, free path 66 nm, no buoyancy. Its slip fit differs from Kim et al. by 3.2 % at 0.1 um, 0.5 % at 0.5 um and
+    0.15 % above; three printed digits add up to 0.5 %.
     """
     table = np.array([
         [0.1, 8.82e-7, 1.72e11, 6.95e-10],

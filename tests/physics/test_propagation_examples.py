@@ -49,7 +49,8 @@ VISCOMETER_STDS = np.array([0.0463, 6.1, 0.5, 0.5, 5.49, 0.5])
 def test_end_gauge():
     """JCGM 100, H.1: 50 000 838 nm, standard uncertainty 32 nm, 16 degrees of freedom, expanded (99 %) 93 nm.
 
-    Source: JCGM 100:2008, H.1.2 to H.1.6. Printed: u(d) 9.7 nm from 5.8, 3.9, 6.7 nm with 24, 5, 8 degrees of freedom.
+    Source: JCGM 100:2008, H.1.2 to H.1.6. Printed: u(d) 9.7 nm from 5.8, 3.9, 6.7 nm with 24, 5, 8 degrees of
+    freedom.
     """
     d_parts = [5.8, 3.9, 6.7]
     assert math.hypot(*d_parts) == pytest.approx(9.7, abs=0.05)
@@ -133,7 +134,8 @@ def test_sum_of_four_normal_inputs():
 def test_sum_of_four_rectangular_inputs():
     """JCGM 101, 9.2.3: u = 2.00 and 95 % interval +-3.88 where linear propagation says +-3.92.
 
-    Source: JCGM 101:2008, 9.2.3 and table 3; with 4e6 draws an end of the interval is good to 0.003 and 0.01 is asked.
+    Source: JCGM 101:2008, 9.2.3 and table 3; with 4e6 draws an end of the interval is good to 0.003 and 0.01 is
+    asked.
     """
     width = math.sqrt(3)
     result = monte_carlo(
@@ -165,8 +167,8 @@ def test_one_dominant_rectangular_input():
 def test_falling_ball_viscometer():
     """NIST TN 1900, E3: 5.69 mPa s linear, but 5.82 with u = 1.11 and 95 % from 4.05 to 8.39 by Monte Carlo.
 
-    Source: A. Possolo, NIST Technical Note 1900 (2015), example E3. Printed to 0.01; the upper end is known to 0.006 from
-    2e6 draws here and to about as much in the publication.
+    Source: A. Possolo, NIST Technical Note 1900 (2015), example E3. Printed to 0.01; the upper end is known to 0.006
+    from 2e6 draws here and to about as much in the publication.
     """
     linear = propagate(lambda x: viscometer(*x), VISCOMETER, VISCOMETER_STDS)
     assert linear.values[0] == pytest.approx(5.69, abs=0.005)

@@ -63,9 +63,9 @@ def computed_radii(slip: str) -> np.ndarray:
 def test_radii_of_the_25_drops():
     """The radii of the sound rows come out from fall speed, temperature and pressure.
 
-    Source: table of 25 drops, 1917, with its viscosity, density 919.9 kg/m^3 and the slip law of 1923. The published radii
-    are 0.05 to 0.45 % larger, one (24) 0.7 %: they were worked by hand in successive approximation; nothing below
-    that is in the reach of the printed digits.
+    Source: table of 25 drops, 1917, with its viscosity, density 919.9 kg/m^3 and the slip law of 1923. The published
+    radii are 0.05 to 0.45 % larger, one (24) 0.7 %: they were worked by hand in successive approximation; nothing
+    below that is in the reach of the printed digits.
     """
     ratio = computed_radii("millikan1923") / TABLE[:, 3]
     usual = TABLE[:, 0] != 24
@@ -77,8 +77,8 @@ def test_radii_of_the_25_drops():
 def test_radii_of_the_25_drops_with_modern_values():
     """With the viscosity and slip of ISO 15900 the radii move by less than those laws differ.
 
-    Source: the same table. Modern viscosity is 0.55 % higher, which makes 0.3 % of radius; slip differs by up to 4 % of
-    its term, at the lowest pressure 0.4 % of radius.
+    Source: the same table. Modern viscosity is 0.55 % higher, which makes 0.3 % of radius; slip differs by up to 4 %
+    of its term, at the lowest pressure 0.4 % of radius.
     """
     ratio = computed_radii("kim2005") / TABLE[:, 3]
     assert np.all((ratio > 0.9995) & (ratio < 1.005))
@@ -87,8 +87,8 @@ def test_radii_of_the_25_drops_with_modern_values():
 def test_free_path_of_the_25_drops():
     """The published free path over radius is that of this package in Millikan's convention, at every pressure.
 
-    Source: the same table, four digits of l/a and a; pressures from 13 to 76 cmHg. 0.13 % covers a digit of l/a in the
-    worst rows, 0.03 % is met on average.
+    Source: the same table, four digits of l/a and a; pressures from 13 to 76 cmHg. 0.13 % covers a digit of l/a in
+    the worst rows, 0.03 % is met on average.
     """
     factor = SLIP_MODELS["millikan1923"].path_factor
     paths = np.array([moist_air(row[1] + 273.15, row[4] * CMHG).mean_free_path for row in TABLE]) * factor
@@ -97,8 +97,8 @@ def test_free_path_of_the_25_drops():
     assert ratio.mean() == pytest.approx(1.0, abs=3e-4)
 
 
-# The Electron (1917), table VIII: one drop that changed its sign twice, 53.48 cmHg, 1723.5 V at the beginning and 1702.1 V
-# at the end. Sign, mean time of fall, times of rise in s, published number of charges; in the order of time.
+# The Electron (1917), table VIII: one drop that changed its sign twice, 53.48 cmHg, 1723.5 V at the beginning and
+# 1702.1 V at the end. Sign, mean time of fall, times of rise in s, published number of charges; in the order of time.
 SIGN_CHANGE = [
     (-1, 62.976, [41.728, 41.590], 8),
     (-1, 62.976, [25.740, 25.798, 25.510, 25.806], 11),
@@ -137,8 +137,8 @@ def common_divisor(charges: np.ndarray) -> float:
 def test_charge_numbers_of_the_sign_change_drop_are_found_blind(drift):
     """The charge numbers of all eleven states, with sign, follow without the value of e.
 
-    Source: The Electron (1917), table VIII: 8 11 12 11 22 6 7 6 8 7 19. With the battery's decay they are found as well as
-    without regard to it.
+    Source: The Electron (1917), table VIII: 8 11 12 11 22 6 7 6 8 7 19. With the battery's decay they are found as
+    well as without regard to it.
     """
     voltages = np.linspace(1723.5, 1702.1, 11) if drift else np.full(11, 1712.8)
     charges = sign_change_charges(voltages)
@@ -150,8 +150,8 @@ def test_charge_numbers_of_the_sign_change_drop_are_found_blind(drift):
 def test_sign_change_drop_has_one_unit_for_both_signs():
     """Positive and negative units agree, and their scatter is that of the timing once the battery's decay is in.
 
-    Source: the same table; published units 6.697 (positive) and 6.700 (negative), ratio 0.99955, "probable error 1 part in
-    1500" of each, so that the ratio's standard uncertainty is 0.0014; without the decay the scatter is 0.4 %.
+    Source: the same table; published units 6.697 (positive) and 6.700 (negative), ratio 0.99955, "probable error 1
+    part in 1500" of each, so that the ratio's standard uncertainty is 0.0014; without the decay the scatter is 0.4 %.
     """
     numbers = np.array([sign * number for sign, *_, number in SIGN_CHANGE])
     steady = sign_change_charges(np.full(11, 1712.8)) / numbers
