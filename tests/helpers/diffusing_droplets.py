@@ -1,4 +1,4 @@
-"""Tracks of diffusing, falling, driven droplets as a camera sees them, by exact sampling; no code of ours in the motion.
+"""Tracks of diffusing, falling, driven droplets as a camera sees them, by exact sampling.
 
 The exposure average of a Brownian path is drawn from its exact joint law with the path's ends: given the ends, the
 mean over an exposure tau is normal about their midpoint with variance 2 D tau / 12 (Brownian bridge). The field's
@@ -85,7 +85,7 @@ def record(
     radius: float,
     number: float,
     *,
-    plan: Plan = Plan(),  # noqa: B008 - frozen
+    plan: Plan = Plan(),
     conditions: Conditions = CONDITIONS,
 ) -> Track:
     """Record one droplet of a radius in m and a charge in elementary charges."""
