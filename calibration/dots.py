@@ -1,0 +1,228 @@
+"""Dots of a dot grid and corners of a chessboard: where they are, to a few hundredths of a pixel.
+
+Both are places where the smoothed picture is level: a dot is its top, a corner its saddle.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import cv2
+import numpy as np
+from numpy.typing import NDArray
+
+FloatArray = NDArray[np.float64]
+
+MOST_DOTS = 20_000  # beyond these more dots sharpen nothing that the pattern's tolerance has not blunted
+
+
+@dataclass(frozen=True, slots=True)
+class Spots:
+    """Candidates for the nodes of a lattice."""
+
+    place: FloatArray  # (N, 2) px, x and y
+    size: float  # px, radius of a dot, or width of the kernel for corners
+    fill: float  # fraction of a square of the nearest distance that a dot covers; 0 for corners
+
+
+def find_dots(flat: NDArray[np.float32], sign: int) -> Spots | None:
+    """Find dots: spots of like size, as round as they are wide.
+
+    Parameters
+    ----------
+    flat : ndarray of float32
+        Flattened picture.
+    sign : int
+        +1 for bright dots, -1 for dark ones.
+
+    Returns
+    -------
+    spots : Spots or None
+        None if there are fewer than nine.
+    """
+    smooth = np.asarray(cv2.GaussianBlur(sign * flat, (0, 0), 0.7), dtype=np.float32)
+    binary = _threshold(smooth)
+    count, _, facts, centres = cv2.connectedComponentsWithStats(binary, connectivity=4, ltype=cv2.CV_32S)
+    if count < 10:
+        return None
+    left, top, wide, high, area = (facts[1:, k].astype(float) for k in range(5))
+    height, width = flat.shape
+    whole = (left > 0) & (top > 0) & (left + wide < width) & (top + high < height)
+    round_ = (np.maximum(wide, high) <= 1.8 * np.minimum(wide, high) + 1) & (area >= 0.5 * wide * high)
+    fit = whole & round_ & (area >= 4)
+    if fit.sum() < 9:
+        return None
+    usual = _usual(area[fit])
+    fit &= (area > usual / 2.5) & (area < 2.5 * usual)
+    if fit.sum() < 9:
+        return None
+    place = centres[1:][fit]
+    distance = _nearest(place)
+    return Spots(place, float(np.sqrt(usual / np.pi)), float(usual / distance**2))
+
+
+def _threshold(smooth: NDArray[np.float32]) -> NDArray[np.uint8]:
+    """Split the picture at Otsu's threshold, taken over a range free of the brightest and darkest specks."""
+    sample = smooth.ravel()[:: max(1, smooth.size // 500_000)]
+    low, high = np.percentile(sample, [0.2, 99.8])
+    scaled = np.clip((smooth - low) * (255 / max(high - low, 1e-9)), 0, 255).astype(np.uint8)
+    return np.asarray(cv2.threshold(scaled, 0, 1, cv2.THRESH_BINARY | cv2.THRESH_OTSU)[1], dtype=np.uint8)
+
+
+def _usual(area: FloatArray) -> float:
+    """Area that occurs most often, on a scale of ratios."""
+    bins = np.round(4 * np.log2(area)).astype(int)
+    counts = np.convolve(np.bincount(bins - bins.min()), [1, 1, 1], "same")
+    near = np.abs(bins - bins.min() - int(np.argmax(counts))) <= 1
+    return float(np.median(area[near]))
+
+
+def _nearest(place: FloatArray) -> float:
+    """Usual distance to the nearest neighbour."""
+    from scipy.spatial import cKDTree
+
+    distance, _ = cKDTree(place).query(place, k=2)
+    return float(np.median(distance[:, 1]))
+
+
+def find_corners(flat: NDArray[np.float32], sigma: float) -> Spots | None:
+    """Find the corners of a chessboard: saddles where two dark and two bright squares meet.
+
+    Parameters
+    ----------
+    flat : ndarray of float32
+        Flattened picture.
+    sigma : float
+        Width of the smoothing in px.
+
+    Returns
+    -------
+    spots : Spots or None
+        None if there are fewer than nine.
+    """
+    smooth = cv2.GaussianBlur(flat, (0, 0), sigma)
+    xx = cv2.Sobel(smooth, cv2.CV_32F, 2, 0, ksize=3)
+    yy = cv2.Sobel(smooth, cv2.CV_32F, 0, 2, ksize=3)
+    xy = cv2.Sobel(smooth, cv2.CV_32F, 1, 1, ksize=3)
+    saddle = xy**2 - xx * yy
+    size = 2 * int(np.ceil(2 * sigma)) + 1
+    top = (saddle == cv2.dilate(saddle, np.ones((size, size), np.uint8))) & (saddle > 0)
+    border = size
+    top[:border] = top[-border:] = False
+    top[:, :border] = top[:, -border:] = False
+    y, x = np.nonzero(top)
+    if len(x) < 9:
+        return None
+    strength = saddle[y, x]
+    keep = strength > 0.15 * np.sort(strength)[-max(9, min(len(strength), 40) // 2)]
+    place = np.stack([x[keep], y[keep]], axis=1).astype(float)
+    return Spots(place, sigma, 0.0) if len(place) >= 9 else None
+
+
+def lattice_vectors(place: FloatArray) -> FloatArray | None:
+    """Find the two steps from a node to its neighbours that most nodes have in common.
+
+    Parameters
+    ----------
+    place : ndarray of shape (N, 2)
+        Nodes and strays, px.
+
+    Returns
+    -------
+    steps : ndarray of shape (2, 2) or None
+        The step along I (nearer to +x) and along J (nearer to +y), px; None if no square lattice stands out.
+    """
+    from scipy.spatial import cKDTree
+
+    nearest = min(9, len(place))
+    distance, neighbour = cKDTree(place).query(place, k=nearest)
+    vectors = (place[neighbour[:, 1:]] - place[:, None, :]).reshape(-1, 2)
+    length = np.hypot(vectors[:, 0], vectors[:, 1])
+    usual = float(np.median(distance[:, 1]))
+    close = (length < 1.45 * usual) & (length > 0.6 * usual)
+    if close.sum() < 8:
+        return None
+    chosen = vectors[close]
+    phase = 4 * np.arctan2(chosen[:, 1], chosen[:, 0])
+    histogram, edges = np.histogram(phase % (2 * np.pi), bins=36, range=(0, 2 * np.pi))
+    peak = edges[int(np.argmax(histogram + np.roll(histogram, 1) + np.roll(histogram, -1)))] + np.pi / 36
+    turn = ((peak + np.pi) % (2 * np.pi) - np.pi) / 4
+    steps = []
+    for angle in (turn, turn + np.pi / 2):
+        along = chosen @ np.array([np.cos(angle), np.sin(angle)])
+        across = chosen @ np.array([-np.sin(angle), np.cos(angle)])
+        same = (along > 0) & (np.abs(across) < 0.35 * along)
+        if same.sum() < max(4, 0.15 * len(place)):
+            return None
+        steps.append(np.median(chosen[same], axis=0))
+    return np.array(steps)
+
+
+def refine_spots(
+    picture: NDArray[np.float32], place: FloatArray, sigma: float
+) -> tuple[FloatArray, NDArray[np.bool_]]:
+    """Place of each dot or corner between the pixels.
+
+    Parameters
+    ----------
+    picture : ndarray of float32
+        Grey values.
+    place : ndarray of shape (N, 2)
+        Starting places in px.
+    sigma : float
+        Width of the Gaussian in px.
+
+    Returns
+    -------
+    place : ndarray of shape (N, 2)
+        Refined, px.
+    fine : ndarray of bool of shape (N,)
+        False where the picture's edge cuts the kernel or the place wandered off.
+
+    Notes
+    -----
+    Zero of the gradient of the picture smoothed by a Gaussian, by Newton's method on the exact kernel: for a dot
+    the least-squares place of a spot of that profile, for a corner the saddle.
+    """
+    moved, fine = place.copy(), np.zeros(len(place), dtype=bool)
+    reach = int(np.ceil(3 * sigma)) + 1
+    most = max(1, 4_000_000 // (2 * reach + 1) ** 2)
+    for first in range(0, len(place), most):
+        rows = slice(first, first + most)
+        moved[rows], fine[rows] = _refine(picture, place[rows], sigma, reach)
+    return moved, fine
+
+
+def _refine(
+    picture: NDArray[np.float32], place: FloatArray, sigma: float, reach: int
+) -> tuple[FloatArray, NDArray[np.bool_]]:
+    """Refine one batch of spots."""
+    height, width = picture.shape
+    centre = np.rint(place).astype(int)
+    whole = (centre >= reach).all(axis=1) & (centre < np.array([width, height]) - reach).all(axis=1)
+    inner = np.clip(centre, reach, np.array([width, height]) - reach - 1)
+    offsets = np.arange(-reach, reach + 1)
+    patch = picture[inner[:, 1, None, None] + offsets[:, None], inner[:, 0, None, None] + offsets[None, :]]
+    patch = patch.astype(np.float64) - patch.mean(axis=(1, 2), keepdims=True)
+    start = place - inner
+    shift = start.copy()
+    for _ in range(6):
+        kx, ky = _kernels(offsets, shift[:, 0], sigma), _kernels(offsets, shift[:, 1], sigma)
+        rows = [np.einsum("nij,nj->ni", patch, k) for k in kx]
+        gx, gy = (rows[1] * ky[0]).sum(1), (rows[0] * ky[1]).sum(1)
+        xx, yy, xy = (rows[2] * ky[0]).sum(1), (rows[0] * ky[2]).sum(1), (rows[1] * ky[1]).sum(1)
+        det = xx * yy - xy**2
+        det = np.where(np.abs(det) < 1e-12, np.inf, det)
+        step = -np.stack([yy * gx - xy * gy, xx * gy - xy * gx], axis=1) / det[:, None]
+        shift += np.clip(step, -0.5 * sigma, 0.5 * sigma)
+    stayed = np.hypot(*(shift - start).T) < max(1.5, 0.7 * sigma)
+    return inner + shift, whole & stayed
+
+
+def _kernels(
+    offsets: NDArray[np.int64], shift: FloatArray, sigma: float
+) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """Gaussian about each shift and its first two derivatives after the shift."""
+    t = (offsets[None, :] - shift[:, None]) / sigma
+    bell = np.exp(-0.5 * t * t)
+    return bell, bell * t / sigma, bell * (t * t - 1) / sigma**2

@@ -1,0 +1,351 @@
+"""One lattice for all marks of a pattern: which line or dot each mark is, and the map from the picture to it.
+
+A mark says that one lattice coordinate is a whole number at a place in the picture: a point on a line says it of
+one coordinate, a dot of both. Numbering grows outward from a seed, so that neither a missing nor a false line can
+shift the count; the map is then fitted to all marks at once.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+
+import numpy as np
+from numpy.typing import NDArray
+
+FloatArray = NDArray[np.float64]
+IntArray = NDArray[np.int64]
+BoolArray = NDArray[np.bool_]
+
+SAME = 0.2  # of the pitch: a mark farther from a whole number belongs to no line
+AFFINE = 3  # parameters for one coordinate of a map without lens or tilt
+
+
+@dataclass(frozen=True, slots=True)
+class Marks:
+    """Where one lattice coordinate is a whole number; a dot is two marks."""
+
+    x: FloatArray  # (N,) px
+    y: FloatArray  # (N,) px
+    axis: IntArray  # (N,) which coordinate: 0 or 1
+    index: IntArray  # (N,) its whole number
+    cluster: IntArray  # (N,) marks that share an error: one line, one block of dots
+    weight: FloatArray  # (N,) inverse relative standard deviation
+
+    def take(self, rows: NDArray[np.bool_]) -> Marks:
+        """Give the chosen marks."""
+        return Marks(
+            *(getattr(self, name)[rows] for name in ("x", "y", "axis", "index", "cluster", "weight"))
+        )
+
+    @property
+    def axes(self) -> tuple[int, ...]:
+        """Coordinates that occur."""
+        return tuple(int(a) for a in np.unique(self.axis))
+
+
+@dataclass(frozen=True, slots=True)
+class LatticeFit:
+    """Map from the picture to lattice coordinates, fitted.
+
+    With q = (place - centre) / radius and Q = q (1 + k |q|^2), coordinate a is (c0 + c1 Qx + c2 Qy) / (1 + g Q).
+    """
+
+    coefficients: FloatArray  # (axes, 3): c0, c1, c2
+    radial: float  # k
+    tilt: FloatArray  # (2,): g
+    covariance: FloatArray  # of coefficients (flat), then k if it was fitted, then g if it was
+    terms: tuple[str, ...]  # of "radial" and "tilt": what was fitted
+    centre: tuple[float, float]  # px
+    radius: float  # px
+    residual: FloatArray  # (N,) px across the line
+    used: BoolArray  # (N,) False: left out as an outlier
+    mark_std: float  # px, of one mark against its line
+    line_std: float  # px, common to the marks of one cluster
+
+
+def grow_numbers(
+    place: FloatArray, gradient: FloatArray, *, seed: int, unit: FloatArray, frame: FloatArray | None = None
+) -> FloatArray:
+    """Number marks outward from one of them.
+
+    Parameters
+    ----------
+    place : ndarray of shape (N, 2)
+        In px.
+    gradient : ndarray of shape (K, 2)
+        First estimate near the seed of K = 1 or 2 lattice coordinates per px.
+    seed : int
+        The mark to start from; it gets the number 0.
+    unit : ndarray of shape (2,)
+        Distance in px along both columns of `frame` that counts as one step of growth.
+    frame : ndarray of shape (2, 2), optional
+        Columns are the directions for `unit`; default the picture's axes.
+
+    Returns
+    -------
+    coordinate : ndarray of shape (N, K)
+        Lattice coordinates; those of true marks are whole numbers but for some hundredths.
+
+    Notes
+    -----
+    Each round fits a polynomial map (first degree near the seed, third in the end) to the marks that lie on whole
+    numbers within a radius, and widens the radius by a third: far less than it takes for a lens or a tilt to add
+    half a pitch to what the map predicts.
+    """
+    offset = place - place[seed]
+    steps = offset @ (np.eye(2) if frame is None else frame) / unit
+    distance = np.hypot(steps[:, 0], steps[:, 1])
+    scale = max(float(distance.max()), 1.0)
+    coordinate = offset @ gradient.T
+    radius = 3.2
+    while True:
+        inside = distance <= radius
+        for _ in range(2):
+            good = inside & (np.abs(coordinate - np.rint(coordinate)) < 0.25).all(axis=1)
+            degree = _degree(
+                int(good.sum()), radius, np.ptp(np.rint(coordinate[good]), axis=0) if good.any() else 0
+            )
+            basis = _powers(steps / min(radius, scale), degree)
+            if good.sum() >= 2 * basis.shape[1] + 2:
+                solution = np.linalg.lstsq(basis[good], np.rint(coordinate[good]), rcond=None)[0]
+                coordinate = basis @ solution
+        if radius >= scale:
+            break
+        radius *= 1.33
+    return np.asarray(coordinate)
+
+
+def _degree(count: int, radius: float, spans: NDArray[np.float64] | int) -> int:
+    """Degree of the map that a number of marks over a number of lines can bear."""
+    least = float(np.min(spans))
+    if count >= 80 and radius > 9 and least >= 8:
+        return 3
+    return 2 if count >= 30 and radius > 5 and least >= 4 else 1
+
+
+def _powers(t: FloatArray, degree: int) -> FloatArray:
+    """Monomials of two variables up to a degree; columns."""
+    return np.stack(
+        [t[:, 0] ** (n - m) * t[:, 1] ** m for n in range(degree + 1) for m in range(n + 1)], axis=1
+    )
+
+
+def fit_lattice(marks: Marks, *, width: int, height: int) -> LatticeFit:
+    """Fit the map from the picture to the lattice, with lens and tilt only where the residuals demand them.
+
+    Parameters
+    ----------
+    marks : Marks
+        Numbered.
+    width, height : int
+        Of the picture in px.
+
+    Returns
+    -------
+    fit : LatticeFit
+        Its covariance holds the scatter of single marks and what marks of one line share, both from the residuals.
+
+    Notes
+    -----
+    Weighted least squares with outliers left out at 4.5 standard deviations. Lens and tilt are kept where their
+    estimates exceed three standard uncertainties (Wald's test).
+    """
+    plain = _fit(marks, (), width, height)
+    if len(np.unique(marks.cluster)) < 5 or len(marks.x) < 24:
+        return plain
+    terms: tuple[str, ...] = ("radial", "tilt")
+    while terms:
+        full = _fit(marks, terms, width, height, start=plain)
+        strength = {name: _wald(full, name) for name in terms}
+        weakest = min(strength, key=lambda name: strength[name])
+        if strength[weakest] > 1:
+            return full
+        terms = tuple(name for name in terms if name != weakest)
+    return plain
+
+
+def _wald(fit: LatticeFit, name: str) -> float:
+    """Wald statistic of a term over its limit: 9 for one parameter, 11.8 for two (both 3 standard deviations)."""
+    first = fit.coefficients.size + (1 if name == "tilt" and "radial" in fit.terms else 0)
+    rows = slice(first, first + (2 if name == "tilt" else 1))
+    value = fit.tilt if name == "tilt" else np.array([fit.radial])
+    spread = fit.covariance[rows, rows]
+    if not np.isfinite(spread).all() or np.linalg.cond(spread) > 1e12:
+        return 0.0
+    return float(value @ np.linalg.solve(spread, value)) / (11.8 if name == "tilt" else 9.0)
+
+
+def _fit(
+    marks: Marks, terms: tuple[str, ...], width: int, height: int, start: LatticeFit | None = None
+) -> LatticeFit:
+    """Fit one choice of terms, leaving outliers out."""
+    radius = float(np.hypot(width, height) / 2)
+    centre = ((width - 1) / 2, (height - 1) / 2)
+    q = np.stack([(marks.x - centre[0]) / radius, (marks.y - centre[1]) / radius], axis=1)
+    theta = _affine_start(marks, q)
+    theta = np.concatenate([theta, np.zeros(("radial" in terms) + 2 * ("tilt" in terms))])
+    used = np.ones(len(q), dtype=bool) if start is None else start.used
+    for _ in range(12):
+        value, jacobian = lattice_map(theta, q, marks.axis, terms=terms)
+        pitch = _pitch_px(theta, len(marks.axes), radius)[marks.axis]
+        residual = (value - marks.index) * pitch
+        weight = np.where(used, marks.weight, 0.0)
+        design = jacobian * (pitch * weight)[:, None]
+        step = np.linalg.lstsq(design, -residual * weight, rcond=None)[0]
+        theta = theta + step
+        spread = 1.4826 * np.median(np.abs(residual[used] * marks.weight[used]))
+        again = np.abs(residual) * marks.weight < max(4.5 * spread, 0.03)
+        if np.abs(design @ step).max(initial=0) < 1e-6 and (again == used).all():
+            break
+        used = again if again.sum() > 2 * len(theta) else used
+    value, jacobian = lattice_map(theta, q, marks.axis, terms=terms)
+    pitch = _pitch_px(theta, len(marks.axes), radius)[marks.axis]
+    residual = (value - marks.index) * pitch
+    design = jacobian * pitch[:, None]
+    covariance, mark_std, line_std = _covariance(design[used], residual[used], marks.take(used))
+    split = AFFINE * len(marks.axes)
+    radial = float(theta[split]) if "radial" in terms else 0.0
+    tilt = theta[-2:].copy() if "tilt" in terms else np.zeros(2)
+    shape = theta[:split].reshape(-1, AFFINE)
+    return LatticeFit(
+        shape, radial, tilt, covariance, terms, centre, radius, residual, used, mark_std, line_std
+    )
+
+
+def _affine_start(marks: Marks, q: FloatArray) -> FloatArray:
+    """Coefficients of the plain map by linear least squares, for each coordinate."""
+    parts = []
+    for axis in marks.axes:
+        rows = marks.axis == axis
+        basis = np.column_stack([np.ones(rows.sum()), q[rows]])
+        parts.append(np.linalg.lstsq(basis, marks.index[rows].astype(float), rcond=None)[0])
+    return np.concatenate(parts)
+
+
+def _pitch_px(theta: FloatArray, axes: int, radius: float) -> FloatArray:
+    """Distance between lines in px at the centre for each coordinate (tilt left out)."""
+    shape = theta[: AFFINE * axes].reshape(-1, AFFINE)
+    return np.asarray(radius / np.hypot(shape[:, 1], shape[:, 2]))
+
+
+def lattice_map(
+    theta: FloatArray, q: FloatArray, axis: IntArray, *, terms: tuple[str, ...]
+) -> tuple[FloatArray, FloatArray]:
+    """Lattice coordinate of places and its derivatives after the parameters.
+
+    Parameters
+    ----------
+    theta : ndarray of shape (P,)
+        Coefficients of each coordinate, then k if "radial" is in `terms`, then g if "tilt" is.
+    q : ndarray of shape (N, 2)
+        Places from the centre in units of the radius.
+    axis : ndarray of int of shape (N,)
+        The coordinate asked for at each place.
+    terms : tuple of str
+        Of "radial" and "tilt".
+
+    Returns
+    -------
+    value : ndarray of shape (N,)
+        Lattice coordinate.
+    jacobian : ndarray of shape (N, P)
+        Its derivatives.
+    """
+    tilt = theta[-2:] if "tilt" in terms else np.zeros(2)
+    split = len(theta) - 2 * ("tilt" in terms) - ("radial" in terms)
+    radial = theta[split] if "radial" in terms else 0.0
+    rho2 = (q**2).sum(axis=1)
+    bent = q * (1 + radial * rho2)[:, None]
+    depth = 1 + bent @ tilt
+    shape = theta[:split].reshape(-1, AFFINE)[axis]
+    value = (shape[:, 0] + (shape[:, 1:] * bent).sum(axis=1)) / depth
+    jacobian = np.zeros((len(q), len(theta)))
+    for column, factor in enumerate((np.ones(len(q)), bent[:, 0], bent[:, 1])):
+        jacobian[np.arange(len(q)), AFFINE * axis + column] = factor / depth
+    slope = (shape[:, 1:] - value[:, None] * tilt) / depth[:, None]
+    if "radial" in terms:
+        jacobian[:, split] = (slope * q).sum(axis=1) * rho2
+    if "tilt" in terms:
+        jacobian[:, -2:] = -value[:, None] * bent / depth[:, None]
+    return value, jacobian
+
+
+def _covariance(design: FloatArray, residual: FloatArray, marks: Marks) -> tuple[FloatArray, float, float]:
+    """Covariance of the parameters with what marks of one cluster share; also both standard deviations.
+
+    The shared part is found by the method of moments from the clusters' weighted means: their scatter is that of
+    the marks over the square root of their number, and what exceeds it is shared.
+    """
+    weight = marks.weight
+    dof = max(1, len(residual) - design.shape[1])
+    white = residual * weight
+    _, cluster = np.unique(marks.cluster, return_inverse=True)
+    count = int(cluster.max()) + 1
+    power = np.bincount(cluster, weight**2, count)
+    mean = np.bincount(cluster, residual * weight**2, count) / power
+    within = white - mean[cluster] * weight
+    inner = max(1, len(residual) - count)
+    mark_var = float((within**2).sum() / inner) if inner > 8 else float((white**2).sum() / dof)
+    # Of the parameters for one coordinate two rest on the lines as wholes: where the first is, and the pitch.
+    outer = max(1, count - (design.shape[1] - len(marks.axes)))
+    excess = float((power * mean**2).sum() / outer - mark_var)
+    line_var = max(0.0, excess * count / float(power.sum())) * _student(outer) ** 2
+    scaled = design * weight[:, None]
+    inverse = np.linalg.pinv(scaled.T @ scaled, rcond=1e-14)
+    sums = np.zeros((count, design.shape[1]))
+    np.add.at(sums, cluster, design * (weight**2)[:, None])
+    middle = mark_var * scaled.T @ scaled + line_var * sums.T @ sums
+    return inverse @ middle @ inverse, float(np.sqrt(mark_var)), float(np.sqrt(line_var))
+
+
+def _student(dof: int) -> float:
+    """Student's factor that gives a standard deviation from few values the coverage of one from many (68.27 %).
+
+    JCGM 100:2008, G.3; the closed form is within 0.3 % of table G.2 from 2 degrees of freedom on.
+    """
+    return float(1 + 0.5 / dof + 0.3 / dof**2) if dof > 1 else 1.84
+
+
+def local_gradient(fit: LatticeFit, x: FloatArray, y: FloatArray) -> FloatArray:
+    """Gradient of the lattice coordinates, per px of the picture after the lens is corrected.
+
+    Parameters
+    ----------
+    fit : LatticeFit
+        The map.
+    x, y : ndarray of shape (N,)
+        Places in px, after correction.
+
+    Returns
+    -------
+    gradient : ndarray of shape (N, axes, 2)
+        Per px along x and y.
+    """
+    q = np.stack([(x - fit.centre[0]) / fit.radius, (y - fit.centre[1]) / fit.radius], axis=1)
+    depth = 1 + q @ fit.tilt
+    value = (fit.coefficients[:, 0][None, :] + q @ fit.coefficients[:, 1:].T) / depth[:, None]
+    slope = fit.coefficients[None, :, 1:] - value[:, :, None] * fit.tilt[None, None, :]
+    return np.asarray(slope / depth[:, None, None] / fit.radius)
+
+
+def without_outliers(marks: Marks, fit: LatticeFit) -> tuple[Marks, LatticeFit]:
+    """Give marks and fit with the outliers taken out of both.
+
+    Parameters
+    ----------
+    marks : Marks
+        As fitted.
+    fit : LatticeFit
+        Of these marks.
+
+    Returns
+    -------
+    marks : Marks
+        Those used.
+    fit : LatticeFit
+        With residuals of those alone.
+    """
+    keep = fit.used
+    return marks.take(keep), replace(
+        fit, residual=fit.residual[keep], used=np.ones(int(keep.sum()), dtype=bool)
+    )

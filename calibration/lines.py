@@ -1,0 +1,391 @@
+"""Ruled lines in a picture: their directions, and where they are, to a few hundredths of a pixel.
+
+A family of parallel lines is looked at in strips along it: the picture is turned so that the lines stand upright,
+and a few dozen rows are averaged to one profile. A curved or fanning line is straight within a strip.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import cv2
+import numpy as np
+from numpy.typing import NDArray
+
+FloatArray = NDArray[np.float64]
+
+STRIP_ROWS = 32  # long enough to average noise, short enough that a line that leans by 1 degree stays sharp
+
+
+@dataclass(frozen=True, slots=True)
+class LinePoints:
+    """Places on the lines of one family, one for each line and strip."""
+
+    x: FloatArray  # px
+    y: FloatArray  # px
+    across: FloatArray  # px along the direction across the lines
+    along: FloatArray  # px along the lines
+    contrast: FloatArray  # grey values of the line above its surroundings
+    pitch: float  # px, first estimate
+    angle: float  # rad, of the direction across the lines, from +x toward +y, in [0, pi)
+    width: float  # px, standard deviation of the kernel that fits the lines
+    strips: int  # strips that the picture has along the lines
+    continuity: float  # 1: the lines are unbroken; near 0: they are rows of dots
+
+
+def flatten(picture: NDArray[np.float32]) -> NDArray[np.float32]:
+    """Take out uneven light.
+
+    Parameters
+    ----------
+    picture : ndarray of float32
+        Grey values.
+
+    Returns
+    -------
+    flat : ndarray of float32
+        Grey values over the light's own level, less 1: light multiplies what it falls on, so a slope of it, which
+        would shift every line and dot, is divided out. Where the ground is nearly black the level is taken off.
+
+    Notes
+    -----
+    The level is a polynomial of fourth degree, fitted with Tukey's weights (A. E. Beaton and J. W. Tukey,
+    Technometrics 16 (1974), 147-185) to the picture made small, so that lines and debris do not pull at it.
+    """
+    height, width = picture.shape
+    step = max(1, max(height, width) // 128)
+    small = cv2.resize(picture, (width // step, height // step), interpolation=cv2.INTER_AREA).astype(
+        np.float64
+    )
+    rows, columns = small.shape
+    ty, tx = np.linspace(-1, 1, rows), np.linspace(-1, 1, columns)
+    powers = [(n, m) for n in range(5) for m in range(5 - n)]
+    basis = np.stack([np.outer(ty**n, tx**m).ravel() for n, m in powers], axis=1)
+    weight = np.ones(small.size)
+    for _ in range(8):
+        root = np.sqrt(weight)[:, None]
+        terms = np.linalg.lstsq(basis * root, small.ravel() * root[:, 0], rcond=None)[0]
+        off = small.ravel() - basis @ terms
+        spread = max(float(np.median(np.abs(off))) * 1.4826, 1e-6 * float(np.ptp(small)), 1e-12)
+        weight = np.clip(1 - (off / (4.685 * spread)) ** 2, 0, None) ** 2 + 1e-6
+    fy, fx = np.linspace(-1, 1, height), np.linspace(-1, 1, width)
+    table = np.zeros((5, 5))
+    for (n, m), term in zip(powers, terms, strict=True):
+        table[n, m] = term
+    level = (np.vander(fy, 5, increasing=True) @ table @ np.vander(fx, 5, increasing=True).T).astype(
+        np.float32
+    )
+    reach = float(np.ptp(np.percentile(small, [1, 99])))
+    if level.min() > 0.1 * reach:
+        return np.asarray(picture / level - 1, dtype=np.float32)
+    return np.asarray((picture - level) / max(reach, 1e-9), dtype=np.float32)
+
+
+def line_directions(flat: NDArray[np.float32], *, most: int = 3) -> list[float]:
+    """Find the directions across the lines that a picture may hold, the strongest first.
+
+    Parameters
+    ----------
+    flat : ndarray of float32
+        Flattened picture.
+    most : int, optional
+        At most so many.
+
+    Returns
+    -------
+    angles : list of float
+        In rad in [0, pi), from +x toward +y.
+
+    Notes
+    -----
+    Peaks of the histogram of gradient directions, weighted with the squared gradient, over the level that noise
+    and debris give to all directions alike.
+    """
+    smooth = cv2.GaussianBlur(flat, (0, 0), 1.2)
+    gx, gy = cv2.Sobel(smooth, cv2.CV_32F, 1, 0, ksize=3), cv2.Sobel(smooth, cv2.CV_32F, 0, 1, ksize=3)
+    power = (gx**2 + gy**2).ravel()
+    # Debris is few pixels of large gradient; past the 99.5th percentile a pixel counts as much as one at it.
+    power = np.minimum(power, np.percentile(power[:: max(1, power.size // 200_000)], 99.5))
+    bins = (cv2.phase(gx, gy).ravel() * (360 / np.pi)).astype(np.int32) % 360
+    histogram = np.bincount(bins, weights=power, minlength=360)
+    kernel = np.exp(-0.5 * (np.arange(-8, 9) / 3.0) ** 2)
+    smoothed = np.convolve(
+        np.concatenate([histogram[-8:], histogram, histogram[:8]]), kernel / kernel.sum(), "valid"
+    )
+    level = np.median(smoothed)
+    peak = (smoothed >= np.roll(smoothed, 1)) & (smoothed > np.roll(smoothed, -1)) & (smoothed > 1.15 * level)
+    found: list[float] = []
+    for place in sorted(np.flatnonzero(peak), key=lambda n: -smoothed[n]):
+        window = np.arange(place - 6, place + 7)
+        weight = np.clip(smoothed[window % 360] - level, 0, None)
+        angle = float(np.deg2rad(((window + 0.5) * weight).sum() / weight.sum() / 2) % np.pi)
+        if all(abs((angle - other + np.pi / 2) % np.pi - np.pi / 2) > np.deg2rad(12) for other in found):
+            found.append(angle)
+    return found[:most]
+
+
+def line_points(flat: NDArray[np.float32], angle: float) -> LinePoints | None:
+    """Locate the lines of one direction.
+
+    Parameters
+    ----------
+    flat : ndarray of float32
+        Flattened picture.
+    angle : float
+        Direction across the lines in rad.
+
+    Returns
+    -------
+    points : LinePoints or None
+        None if the profiles across this direction repeat nowhere.
+    """
+    turning = _turning(angle)
+    turned, valid, back = _turn(flat, turning)
+    rows = min(STRIP_ROWS, max(4, min(flat.shape) // 8))
+    profiles, mask = _strips(turned, valid, rows, lean=float(np.tan(angle - turning)))
+    if len(profiles) == 0:
+        return None
+    profiles = np.where(mask, profiles - _level(profiles, mask), 0.0)
+    repeat = _repeat(profiles, mask)
+    if repeat is None:
+        return None
+    pitch, half_width = repeat
+    sigma = float(np.clip(0.8 * half_width, 0.8, pitch / 4.5))
+    sign = _polarity(profiles, mask, sigma)
+    strip, column, contrast = _peaks(sign * profiles, mask, sigma=sigma, pitch=pitch)
+    if len(strip) < 4:
+        return None
+    place, fine = refine_profile(sign * profiles, mask, strip, column, sigma=sigma)
+    strip, place, contrast = strip[fine], place[fine], contrast[fine]
+    middle = (strip + 0.5) * rows - 0.5
+    x = back[0, 0] * place + back[0, 1] * middle + back[0, 2]
+    y = back[1, 0] * place + back[1, 1] * middle + back[1, 2]
+    broken = _continuity(sign * turned, strip * rows, place, rows=rows, pitch=pitch)
+    return LinePoints(x, y, place, middle, contrast, pitch, angle, sigma, len(profiles), broken)
+
+
+def _turning(angle: float) -> float:
+    """Angle to turn by: lines within 3 degrees of the pixel rows or columns are left as they are.
+
+    OpenCV rounds places to 1/32 px. Along a line that is turned by many degrees this averages out; along one that
+    is turned by one degree, it does not. `_strips` straightens such lines instead.
+    """
+    upright = round(angle / (np.pi / 2)) * (np.pi / 2)
+    return upright if abs(angle - upright) < np.deg2rad(3) else angle
+
+
+def _turn(
+    flat: NDArray[np.float32], angle: float
+) -> tuple[NDArray[np.float32], NDArray[np.bool_], FloatArray]:
+    """Turn the picture so that the direction `angle` is +x; also where it is valid, and the way back."""
+    height, width = flat.shape
+    c, s = np.round([np.cos(angle), np.sin(angle)], 15)
+    corners = np.array([[0, 0], [width - 1, 0], [0, height - 1], [width - 1, height - 1]]) @ np.array(
+        [[c, -s], [s, c]]
+    )
+    low = np.floor(corners.min(axis=0))
+    size = np.ceil(corners.max(axis=0) - low).astype(int) + 1
+    # place in the turned picture (u, v) -> place in the picture
+    back = np.array([[c, -s, c * low[0] - s * low[1]], [s, c, s * low[0] + c * low[1]]])
+    way = cv2.INTER_CUBIC | cv2.WARP_INVERSE_MAP
+    turned = cv2.warpAffine(
+        flat, back, (int(size[0]), int(size[1])), flags=way, borderMode=cv2.BORDER_REPLICATE
+    )
+    u, v = np.arange(size[0])[None, :], np.arange(size[1])[:, None]
+    x, y = back[0, 0] * u + back[0, 1] * v + back[0, 2], back[1, 0] * u + back[1, 1] * v + back[1, 2]
+    inside: NDArray[np.bool_] = (x > -0.5) & (x < width - 0.5) & (y > -0.5) & (y < height - 0.5)
+    return np.asarray(turned, dtype=np.float32), inside, back
+
+
+def _strips(
+    turned: NDArray[np.float32], valid: NDArray[np.bool_], rows: int, *, lean: float
+) -> tuple[FloatArray, NDArray[np.bool_]]:
+    """Average every `rows` rows to a profile, rows moved so that lines which lean (px per row) stand upright.
+
+    A column counts only where all its rows are in the picture.
+    """
+    count = turned.shape[0] // rows
+    shape = (count, rows, turned.shape[1])
+    profiles = np.zeros((count, turned.shape[1]))
+    for row in range(rows):
+        moved = turned[row : count * rows : rows]
+        shift = lean * (row - (rows - 1) / 2)
+        if shift:
+            weights = _cubic(-shift)[None, :]
+            moved = np.asarray(cv2.filter2D(moved, -1, weights, borderType=cv2.BORDER_REPLICATE), np.float32)
+        profiles += np.asarray(moved, dtype=np.float64) / rows
+    mask = np.asarray(valid[: count * rows].reshape(shape).all(axis=1))
+    return profiles, mask
+
+
+def _cubic(shift: float) -> FloatArray:
+    """Weights of the neighbours that give a row's values `shift` px to the right, by cubic convolution.
+
+    R. G. Keys, IEEE Trans. Acoust. Speech Signal Process. 29 (1981), 1153-1160, with a = -1/2.
+    """
+    reach = int(np.ceil(abs(shift))) + 2
+    t = np.abs(np.arange(-reach, reach + 1) - shift)
+    near = 1.5 * t**3 - 2.5 * t**2 + 1
+    far = -0.5 * t**3 + 2.5 * t**2 - 4 * t + 2
+    return np.asarray(np.where(t <= 1, near, np.where(t < 2, far, 0.0)))
+
+
+def _smooth(profiles: FloatArray, sigma: float) -> FloatArray:
+    """Smooth each profile with a Gaussian."""
+    from scipy.ndimage import gaussian_filter1d
+
+    return np.asarray(gaussian_filter1d(profiles, sigma, axis=1, mode="nearest", truncate=4.0))
+
+
+def _level(profiles: FloatArray, mask: NDArray[np.bool_]) -> FloatArray:
+    """Smooth level of each profile over its valid part, wide against any pitch that is allowed."""
+    wide = max(8.0, float(mask.sum(axis=1).max()) / 4)
+    weight = _smooth(mask.astype(float), wide)
+    return _smooth(np.where(mask, profiles, 0.0), wide) / np.maximum(weight, 1e-6)
+
+
+def _repeat(profiles: FloatArray, mask: NDArray[np.bool_]) -> tuple[float, float] | None:
+    """Distance at which the profiles repeat and half the width of what repeats, from their autocorrelation."""
+    from scipy.signal import find_peaks
+
+    size = 1 << int(2 * profiles.shape[1] - 1).bit_length()
+    power = (np.abs(np.fft.rfft(profiles, size, axis=1)) ** 2).sum(axis=0)
+    shared = (np.abs(np.fft.rfft(mask.astype(float), size, axis=1)) ** 2).sum(axis=0)
+    longest = int(mask.sum(axis=1).max() * 0.55)
+    overlap = np.maximum(np.fft.irfft(shared, size)[: longest + 1], 1.0)
+    curve = np.fft.irfft(power, size)[: longest + 1] / overlap
+    if longest < 8 or curve[0] <= 0:
+        return None
+    # White noise stands in the first value only; the second and third give what is left without it.
+    curve[0] = max(curve[1] + (curve[1] - curve[2]) / 3, curve[1])
+    if curve[0] <= 0:
+        return None
+    curve = curve / curve[0]
+    peaks, _ = find_peaks(curve, prominence=0.06)
+    peaks = peaks[peaks >= 4]
+    heights = curve[peaks]
+    if len(peaks) == 0 or heights.max() < 0.08:
+        return None
+    first = int(peaks[heights >= 0.5 * heights.max()][0])
+    below = np.flatnonzero(curve < 0.5 * (1 + curve[: first + 1].min()))
+    return _vertex(curve, first), float(below[0]) if len(below) else first / 4
+
+
+def _vertex(curve: FloatArray, n: int) -> float:
+    """Place of the maximum of a sampled curve near sample n, from a parabola."""
+    if not 0 < n < len(curve) - 1:
+        return float(n)
+    left, mid, right = curve[n - 1], curve[n], curve[n + 1]
+    bend = left - 2 * mid + right
+    return float(n + (0.5 * (left - right) / bend if bend < 0 else 0.0))
+
+
+def _polarity(profiles: FloatArray, mask: NDArray[np.bool_], sigma: float) -> float:
+    """Give +1 for bright lines, -1 for dark ones: lines are narrower than the gaps between them."""
+    values = _smooth(profiles, max(0.6, 0.5 * sigma))[mask]
+    spread = np.clip(values - np.median(values), *np.percentile(values - np.median(values), [0.5, 99.5]))
+    return 1.0 if float(((spread - spread.mean()) ** 3).mean()) >= 0 else -1.0
+
+
+def _peaks(
+    profiles: FloatArray, mask: NDArray[np.bool_], *, sigma: float, pitch: float
+) -> tuple[NDArray[np.int64], NDArray[np.int64], FloatArray]:
+    """Local maxima that stand out from the gaps half a pitch to both sides: strip, column, contrast."""
+    smooth = _smooth(profiles, sigma)
+    smooth = np.where(mask, smooth, -np.inf)
+    top = np.zeros(mask.shape, dtype=bool)
+    top[:, 1:-1] = (smooth[:, 1:-1] >= smooth[:, :-2]) & (smooth[:, 1:-1] > smooth[:, 2:]) & mask[:, 1:-1]
+    strip, column = np.nonzero(top)
+    half = max(2, round(pitch / 2))
+    gaps = []
+    for side in (-half, half):
+        at = column + side
+        inside = (at >= 0) & (at < mask.shape[1])
+        at = np.clip(at, 0, mask.shape[1] - 1)
+        gaps.append(np.where(inside & mask[strip, at], smooth[strip, at], np.nan))
+    known = np.isfinite(gaps[0]) | np.isfinite(gaps[1])
+    strip, column = strip[known], column[known]
+    contrast = smooth[strip, column] - np.nanmax(np.array(gaps)[:, known], axis=0)
+    if len(contrast) == 0:
+        return strip, column, contrast
+    # The strongest tenth are lines (if there are any); a quarter of their contrast separates lines from dirt.
+    keep = contrast > 0.25 * np.percentile(contrast, 90)
+    return strip[keep], column[keep], contrast[keep]
+
+
+def refine_profile(
+    profiles: FloatArray,
+    mask: NDArray[np.bool_],
+    strip: NDArray[np.int64],
+    column: NDArray[np.int64],
+    *,
+    sigma: float,
+) -> tuple[FloatArray, NDArray[np.bool_]]:
+    """Place of each maximum of the smoothed profile, between the samples.
+
+    Parameters
+    ----------
+    profiles : ndarray of shape (strips, columns)
+        Bright lines.
+    mask : ndarray of bool
+        Where the profiles are valid.
+    strip, column : ndarray of int
+        Of the maxima.
+    sigma : float
+        Width of the Gaussian in px.
+
+    Returns
+    -------
+    place : ndarray of float
+        In px along the profile.
+    fine : ndarray of bool
+        False where the maximum wandered off or the picture's edge cuts the kernel.
+
+    Notes
+    -----
+    Zero of the correlation with the derivative of a Gaussian, by Newton's method on the exact kernel, so that no
+    parabola through three samples biases it. The maximum of the matched filter is the least-squares place of a
+    line of that profile; for any symmetric line it is unbiased.
+    """
+    reach = max(2, int(np.ceil(3.5 * sigma)))
+    offsets = np.arange(-reach, reach + 1)
+    at = column[:, None] + offsets[None, :]
+    clipped = np.clip(at, 0, profiles.shape[1] - 1)
+    values = profiles[strip[:, None], clipped]
+    whole = mask[strip[:, None], clipped] & (at == clipped)
+    # Cut kernels: allowed down to 2.5 sigma, where the lost weight is too small to move the zero.
+    near = np.abs(offsets) <= np.ceil(2.5 * sigma)
+    fine = (whole | ~near).all(axis=1)
+    values = np.where(whole, values - values.min(axis=1, keepdims=True), 0.0)
+    place = np.zeros(len(column))
+    for _ in range(6):
+        t = (offsets[None, :] - place[:, None]) / sigma
+        bell = np.exp(-0.5 * t * t)
+        slope = (values * t * bell).sum(axis=1)
+        bend = (values * (1 - t * t) * bell).sum(axis=1)
+        step = np.where(bend > 0, sigma * slope / np.where(bend > 0, bend, 1.0), 0.0)
+        place += np.clip(step, -0.5 * sigma, 0.5 * sigma)
+    return column + place, fine & (np.abs(place) < 1.0 + 0.5 * sigma)
+
+
+def _continuity(
+    turned: NDArray[np.float32], first_row: NDArray[np.int64], place: FloatArray, *, rows: int, pitch: float
+) -> float:
+    """How unbroken lines are: 1 less the relative spread of the contrast along them, noise taken out.
+
+    A row of dots that fill half of it has 0; a line stays as it is where another crosses it.
+    """
+    pick = np.linspace(0, len(place) - 1, min(len(place), 400)).astype(int)
+    centre = np.rint(place[pick]).astype(int)
+    row = first_row[pick][:, None] + np.arange(rows)[None, :]
+
+    def column(shift: int) -> FloatArray:
+        at = np.clip(centre + shift, 0, turned.shape[1] - 1)
+        return np.asarray(turned[row, at[:, None]], dtype=np.float64)
+
+    half = max(2, round(pitch / 2))
+    gap = 0.5 * (column(-half) + column(half)).mean(axis=1, keepdims=True)
+    contrast = column(0) - gap
+    mean = contrast.mean(axis=1)
+    neighbour = (contrast[:, 1:] * contrast[:, :-1]).mean(axis=1) - mean**2
+    return 1 - float(np.median(np.sqrt(np.clip(neighbour, 0, None)) / np.maximum(mean, 1e-9)))

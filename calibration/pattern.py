@@ -1,0 +1,303 @@
+"""Find a reference pattern in a picture: ruled lines, a square grid or a dot grid, or a reason why there is none."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from calibration.dots import MOST_DOTS, Spots, find_corners, find_dots, lattice_vectors, refine_spots
+from calibration.errors import PatternError
+from calibration.lattice import (
+    SAME,
+    LatticeFit,
+    Marks,
+    fit_lattice,
+    grow_numbers,
+    local_gradient,
+    without_outliers,
+)
+from calibration.lines import LinePoints, flatten, line_directions, line_points
+from calibration.trust import LEAST_LINES, Refusal, judge_lines, judge_nodes, largest_block
+
+FloatArray = NDArray[np.float64]
+PATTERNS = ("lines", "grid", "dots")
+
+UNBROKEN = 0.4  # continuity below which "lines" are rows of dots or squares
+WORST_RESIDUAL = 0.06  # of the pitch: rms above which marks are no lattice
+
+
+@dataclass(frozen=True, slots=True)
+class Lattice:
+    """A pattern that was found and can be trusted."""
+
+    pattern: str  # lines, grid or dots
+    features: str  # lines, dots, or corners (of a chessboard)
+    marks: Marks
+    fit: LatticeFit
+    counts: tuple[int, ...]  # lines (rows and columns of dots) from first to last, for each coordinate
+    width: int  # of the picture, px
+    height: int
+
+
+def find_pattern(
+    picture: NDArray[np.generic], pattern: str | None = None, *, name: str = "picture"
+) -> Lattice:
+    """Find the reference pattern in a picture.
+
+    Parameters
+    ----------
+    picture : ndarray of shape (rows, columns)
+        Grey values of any depth.
+    pattern : {"lines", "grid", "dots"} or None, optional
+        What to look for; None tries all.
+    name : str, optional
+        The file, for messages.
+
+    Returns
+    -------
+    lattice : Lattice
+        The marks with their numbers and the fitted map.
+
+    Raises
+    ------
+    PatternError
+        If no pattern can be trusted; the message says why.
+    """
+    if pattern not in (None, *PATTERNS):
+        raise ValueError(f"pattern = {pattern!r}: must be one of {', '.join(PATTERNS)}, or None")
+    grey = np.asarray(picture, dtype=np.float32)
+    if grey.ndim != 2 or min(grey.shape) < 48:
+        raise PatternError(
+            name, f"the picture has {' x '.join(map(str, grey.shape[::-1]))} px; at least 48 x 48 are needed"
+        )
+    if not np.isfinite(grey).all() or grey.max() <= grey.min():
+        raise PatternError(name, "the picture is one flat grey; is the lamp on and the pattern in focus?")
+    flat = flatten(grey)
+    refusals = []
+    for search in (_search_lines, _search_dots, _search_corners):
+        found = search(flat, pattern)
+        if isinstance(found, Lattice):
+            return found
+        if found is not None:
+            refusals.append(found)
+    best = max(refusals, key=lambda refusal: refusal.progress)
+    raise PatternError(name, best.why)
+
+
+def _search_lines(flat: NDArray[np.float32], pattern: str | None) -> Lattice | Refusal | None:
+    """Look for one or two families of ruled lines."""
+    if pattern == "dots":
+        return None
+    refusal = Refusal("no lines, grid or dots stand out from the picture", 0)
+    families: list[tuple[LinePoints, Marks]] = []
+    for angle in line_directions(flat):
+        points = line_points(flat, angle)
+        found = _number_lines(points) if points is not None else None
+        if points is None or found is None:
+            continue
+        if isinstance(found, Marks):
+            points, found = _second_look(flat, points, found)
+        if isinstance(found, Refusal):
+            refusal = found if found.progress > refusal.progress else refusal
+            continue
+        families.append((points, found))
+    if not families:
+        return refusal
+    first = max(families, key=lambda f: len(f[1].x))
+    second = next((f for f in families if _crosses(first[0], f[0])), None)
+    if second is None or pattern == "lines":
+        if pattern == "grid":
+            return Refusal("lines run in one direction only; for a ruled scale use --pattern lines", 6)
+        return _accept("lines", "lines", first[1], flat)
+    return _accept(
+        "grid", "lines", _join(*sorted((first, second), key=lambda f: abs(np.sin(f[0].angle)))), flat
+    )
+
+
+def _second_look(
+    flat: NDArray[np.float32], points: LinePoints, marks: Marks
+) -> tuple[LinePoints, Marks | Refusal]:
+    """Locate the lines again with their direction known to 0.01 degree.
+
+    A line that leans within its strip is shifted where it ends or is covered in mid-strip.
+    """
+    basis = np.column_stack([np.ones(len(marks.x)), marks.x, marks.y])
+    slope = np.linalg.lstsq(basis, marks.index.astype(float), rcond=None)[0][1:]
+    angle = float(np.arctan2(slope[1], slope[0]) % np.pi)
+    again = line_points(flat, angle)
+    if again is None or not 0.8 < again.pitch / points.pitch < 1.25:
+        return points, marks
+    found = _number_lines(again)
+    return (again, found) if isinstance(found, Marks) else (points, marks)
+
+
+def _crosses(one: LinePoints, other: LinePoints) -> bool:
+    """Tell whether two families make a square grid: crossing at about 90 degrees with about the same pitch."""
+    crossing = abs((one.angle - other.angle) % np.pi - np.pi / 2)
+    return crossing < np.deg2rad(15) and 0.7 < one.pitch / other.pitch < 1.43
+
+
+def _join(first: tuple[LinePoints, Marks], second: tuple[LinePoints, Marks]) -> Marks:
+    """Give the marks of both families of a grid as one."""
+    one, two = first[1], second[1]
+    shift = int(one.cluster.max()) + 1
+    return Marks(
+        np.concatenate([one.x, two.x]),
+        np.concatenate([one.y, two.y]),
+        np.concatenate([one.axis, np.ones_like(two.axis)]),
+        np.concatenate([one.index, two.index]),
+        np.concatenate([one.cluster, two.cluster + shift]),
+        np.concatenate([one.weight, two.weight]),
+    )
+
+
+def _number_lines(points: LinePoints) -> Marks | Refusal:
+    """Number the lines of one family, or say why they are none."""
+    if points.continuity < UNBROKEN:
+        return Refusal("what repeats in the picture is no unbroken line", 1)
+    place = np.stack([points.x, points.y], axis=1)
+    direction = np.array([np.cos(points.angle), np.sin(points.angle)])
+    frame = np.stack([direction, [-direction[1], direction[0]]], axis=1)
+    rows = np.unique(points.along)
+    spacing = float(np.diff(rows).min()) if len(rows) > 1 else points.pitch
+    unit = np.array([points.pitch, max(points.pitch, spacing)])
+    best, coordinate = -1.0, np.zeros(len(place))
+    for seed in _seeds(place):
+        pitch = _local_pitch(points, seed)
+        grown = grow_numbers(place, direction[None, :] / pitch, seed=seed, unit=unit, frame=frame)[:, 0]
+        near = np.abs(grown - np.rint(grown)) < SAME
+        score = float(points.contrast[near].sum() / points.contrast.sum())
+        if score > best:
+            best, coordinate = score, grown
+        if score > 0.93:
+            break
+    problem = judge_lines(coordinate, points.contrast, strips=points.strips)
+    if problem is not None:
+        return problem
+    near = np.abs(coordinate - np.rint(coordinate)) < SAME
+    index = np.rint(coordinate[near]).astype(np.int64)
+    weight = np.clip(points.contrast[near] / np.median(points.contrast[near]), 0.3, 1.5)
+    return Marks(place[near, 0], place[near, 1], np.zeros_like(index), index, index - index.min(), weight)
+
+
+def _seeds(place: FloatArray) -> list[int]:
+    """Marks to start numbering from: near the middle of all, then of each quarter of the picture."""
+    middle = np.median(place, axis=0)
+    low, high = (np.percentile(place, q, axis=0) for q in (25, 75))
+    targets = [middle, low, high, np.array([low[0], high[1]]), np.array([high[0], low[1]])]
+    return [int(np.argmin(((place - target) ** 2).sum(axis=1))) for target in targets]
+
+
+def _local_pitch(points: LinePoints, seed: int) -> float:
+    """Usual distance of neighbours in the strips about the seed; the first estimate where there are none."""
+    rows = np.unique(points.along)
+    near = np.argsort(np.abs(rows - points.along[seed]))[:3]
+    gaps = np.concatenate([np.diff(np.sort(points.across[points.along == rows[n]])) for n in near])
+    gaps = gaps[np.abs(gaps / points.pitch - 1) < 0.35]
+    return float(np.median(gaps)) if len(gaps) else points.pitch
+
+
+def _search_dots(flat: NDArray[np.float32], pattern: str | None) -> Lattice | Refusal | None:
+    """Look for a dot grid, dark on bright and bright on dark."""
+    if pattern in ("lines", "grid"):
+        return None
+    best = Refusal("no dots of like size stand out from the picture", 0)
+    for sign in (-1, 1):
+        spots = find_dots(flat, sign)
+        # Dots that fill more than this are the squares of a board or the cells of a grid.
+        if spots is None or spots.fill > 0.42:
+            continue
+        found = _number_nodes(flat, spots, kernel=max(0.8, 0.8 * spots.size))
+        result = _accept("dots", "dots", found, flat) if isinstance(found, Marks) else found
+        if isinstance(result, Lattice):
+            return result
+        best = result if result.progress > best.progress else best
+    return best
+
+
+def _search_corners(flat: NDArray[np.float32], pattern: str | None) -> Lattice | Refusal | None:
+    """Look for the corners of a chessboard, which is a square grid without lines."""
+    if pattern in ("lines", "dots"):
+        return None
+    best = Refusal("no grid stands out from the picture", 0)
+    for sigma in (2.0, 4.0):
+        spots = find_corners(flat, sigma)
+        if spots is None:
+            continue
+        found = _number_nodes(flat, spots, kernel=sigma)
+        result = _accept("grid", "corners", found, flat) if isinstance(found, Marks) else found
+        if isinstance(result, Lattice):
+            return result
+        best = result if result.progress > best.progress else best
+    return best
+
+
+def _number_nodes(flat: NDArray[np.float32], spots: Spots, *, kernel: float) -> Marks | Refusal:
+    """Number dots or corners in two directions, or say why they are no lattice."""
+    steps = lattice_vectors(spots.place)
+    if steps is None:
+        return Refusal("spots are there, but they stand in no square lattice", 1)
+    size = np.hypot(steps[:, 0], steps[:, 1])
+    if not 0.7 < size[0] / size[1] < 1.43 or abs(steps[0] @ steps[1]) > 0.3 * size.prod():
+        return Refusal("spots stand in a lattice that is not square", 2)
+    gradient = np.asarray(np.linalg.inv(steps).T, dtype=np.float64)
+    best, coordinate, block = 0, np.zeros_like(spots.place), np.zeros(len(spots.place), dtype=bool)
+    for seed in _seeds(spots.place):
+        grown = grow_numbers(spots.place, gradient, seed=seed, unit=np.full(2, size.mean()))
+        chosen = largest_block(grown)
+        if chosen.sum() > best:
+            best, coordinate, block = int(chosen.sum()), grown, chosen
+        if best > 0.9 * len(spots.place):
+            break
+    problem = judge_nodes(coordinate, block)
+    if problem is not None:
+        return problem
+    rows = np.flatnonzero(block)
+    if len(rows) > MOST_DOTS:
+        rows = np.sort(np.random.default_rng(0).choice(rows, MOST_DOTS, replace=False))
+    place, fine = refine_spots(flat, spots.place[rows], kernel)
+    return _node_marks(place[fine], np.rint(coordinate[rows][fine]).astype(np.int64))
+
+
+def _node_marks(place: FloatArray, index: NDArray[np.int64]) -> Marks:
+    """Give two marks for each node; blocks of up to 4 x 4 nodes may share an error."""
+    span = np.ptp(index, axis=0) + 1
+    block = int(np.clip(span.min() // 3, 1, 4))
+    cells = (index - index.min(axis=0)) // block
+    cluster = cells[:, 0] * (int(cells[:, 1].max()) + 1) + cells[:, 1]
+    both, zero = np.tile(place, (2, 1)), np.zeros(len(place), dtype=np.int64)
+    return Marks(
+        both[:, 0],
+        both[:, 1],
+        np.concatenate([zero, zero + 1]),
+        np.concatenate([index[:, 0], index[:, 1]]),
+        np.concatenate([cluster, cluster + int(cluster.max(initial=0)) + 1]),
+        np.ones(2 * len(place)),
+    )
+
+
+def _accept(pattern: str, features: str, marks: Marks, flat: NDArray[np.float32]) -> Lattice | Refusal:
+    """Fit the map and take the pattern only if the marks obey it."""
+    height, width = flat.shape
+    if len(marks.x) < 12:
+        return Refusal("fewer than 12 places on lines or dots could be measured", 3)
+    all_marks = len(marks.x)
+    fit = fit_lattice(marks, width=width, height=height)
+    marks, fit = without_outliers(marks, fit)
+    if len(marks.x) < 0.6 * all_marks:
+        return Refusal("lines or dots do not obey one lattice: more than 40 % of them are outliers", 6)
+    counts = []
+    for axis in marks.axes:
+        index = marks.index[marks.axis == axis]
+        counts.append(int(index.max() - index.min()) + 1)
+    if max(counts) < LEAST_LINES or min(counts) < LEAST_LINES - 1:
+        return Refusal(f"only {max(counts)} lines are in the picture; at least {LEAST_LINES} are needed", 6)
+    pitch = 1 / np.hypot(*local_gradient(fit, np.array([fit.centre[0]]), np.array([fit.centre[1]]))[0].T)
+    rms = float(np.sqrt(np.mean(fit.residual**2)))
+    if rms > WORST_RESIDUAL * pitch.min():
+        return Refusal(
+            f"lines or dots scatter by {100 * rms / pitch.min():.0f} % of the pitch about the best lattice", 6
+        )
+    return Lattice(pattern, features, marks, fit, tuple(counts), width, height)
