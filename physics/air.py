@@ -270,16 +270,29 @@ def vapour_fraction(temperature: float, pressure: float, *, relative_humidity: f
     ----------
     .. [1] A. Picard, R. S. Davis, M. Glaeser, K. Fujii, Metrologia 45 (2008), 149-155.
     """
-    celsius = temperature - 273.15
-    saturation = math.exp(
-        1.2378847e-5 * temperature**2 - 1.9121316e-2 * temperature + 33.93711047 - 6.3431645e3 / temperature
-    )
-    enhancement = 1.00062 + 3.14e-8 * pressure + 5.6e-7 * celsius**2
-    fraction = relative_humidity * enhancement * saturation / pressure
+    fraction = relative_humidity * _saturated_fraction(temperature, pressure)
     if not fraction <= MOST_VAPOUR:
-        most = MOST_VAPOUR * relative_humidity / fraction
+        most = highest_humidity(temperature, pressure)
         raise PhysicsError("relative_humidity", relative_humidity, f"at most {most:.2g} at this pressure")
     return fraction
+
+
+def highest_humidity(temperature: float, pressure: float) -> float:
+    """Highest relative humidity that the laws of this module take.
+
+    Parameters
+    ----------
+    temperature : float
+        In K.
+    pressure : float
+        In Pa.
+
+    Returns
+    -------
+    humidity : float
+        1, or less in hot and thin air, where saturation would be more than a quarter of vapour.
+    """
+    return min(1.0, MOST_VAPOUR / _saturated_fraction(temperature, pressure))
 
 
 def density_cipm(temperature: float, pressure: float, *, vapour_fraction: float) -> float:
@@ -314,6 +327,15 @@ def density_cipm(temperature: float, pressure: float, *, vapour_fraction: float)
     compressibility = 1.0 - ratio * first + ratio**2 * (1.83e-11 - 0.765e-8 * x**2)
     molar_mass = MOLAR_MASS_DRY * (1.0 - x * (1.0 - MOLAR_MASS_WATER / MOLAR_MASS_DRY))
     return pressure * molar_mass / (compressibility * GAS_CONSTANT * temperature)
+
+
+def _saturated_fraction(temperature: float, pressure: float) -> float:
+    """Mole fraction of water vapour at saturation, with the enhancement factor (CIPM-2007)."""
+    celsius = temperature - 273.15
+    saturation = math.exp(
+        1.2378847e-5 * temperature**2 - 1.9121316e-2 * temperature + 33.93711047 - 6.3431645e3 / temperature
+    )
+    return (1.00062 + 3.14e-8 * pressure + 5.6e-7 * celsius**2) * saturation / pressure
 
 
 def _pair_viscosity(temperature: float) -> tuple[float, float]:

@@ -17,7 +17,14 @@ import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from physics import drag
-from physics.air import PRESSURE_RANGE, TEMPERATURE_RANGE, Air, dry_mean_free_path, moist_air
+from physics.air import (
+    PRESSURE_RANGE,
+    TEMPERATURE_RANGE,
+    Air,
+    dry_mean_free_path,
+    highest_humidity,
+    moist_air,
+)
 from physics.droplet import BOLTZMANN, Conditions, diffusion, droplet_mobility, fall_speed
 from physics.errors import PhysicsError
 from physics.propagation import MonteCarlo, Trials, joint_normal, monte_carlo, normal, validate_linear
@@ -417,7 +424,8 @@ def explaining_errors(ratio: float, budget: Budget) -> dict[str, float]:
 def _air_slopes(model: DropletModel) -> Floats:
     """Slopes of ln (viscosity, mean free path, density) by (ln T, ln p, RH), shape (3, 3)."""
     air = model.air or _dry_air(model.conditions)
-    humidity = min(max(air.relative_humidity, 0.005), 0.995)
+    most = highest_humidity(air.temperature * 1.001, air.pressure * 0.999)  # where the moves below end
+    humidity = min(max(air.relative_humidity, 0.005), most - 0.005)
     columns = []
     for move in np.eye(3) * (1e-3, 1e-3, 5e-3):
         ends = []

@@ -45,11 +45,13 @@ def input_responses(
         float(np.clip(value, limits[0], limits[1] / (1 + 2 * STEP)))
         for value, limits in ((kelvin, air.TEMPERATURE_RANGE), (pressure, air.PRESSURE_RANGE))
     )
-    base = air.moist_air(kelvin, pressure, relative_humidity=0.5)
+    most = air.highest_humidity(kelvin * (1 + STEP), pressure)  # below 1 in hot and thin air
+    damp, damper = min(0.5, 0.8 * most), min(0.6, 0.96 * most)
+    base = air.moist_air(kelvin, pressure, relative_humidity=damp)
     moved = {
-        "temperature": (air.moist_air(kelvin * (1 + STEP), pressure, relative_humidity=0.5), STEP),
-        "pressure": (air.moist_air(kelvin, pressure * (1 + STEP), relative_humidity=0.5), STEP),
-        "relative_humidity": (air.moist_air(kelvin, pressure, relative_humidity=0.6), 0.1),
+        "temperature": (air.moist_air(kelvin * (1 + STEP), pressure, relative_humidity=damp), STEP),
+        "pressure": (air.moist_air(kelvin, pressure * (1 + STEP), relative_humidity=damp), STEP),
+        "relative_humidity": (air.moist_air(kelvin, pressure, relative_humidity=damper), damper - damp),
     }
     responses: dict[str, dict[str, float]] = {}
     for name, (state, step) in moved.items():
