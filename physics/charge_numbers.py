@@ -232,3 +232,30 @@ def _interpolated(given: LogLikelihood, charge: FloatArray) -> FloatArray:
     inside = np.clip(charge, numbers[0], numbers[-1])
     beyond = 8.0 * np.abs(charge - inside)  # steep beyond the numbers that were weighed
     return np.asarray(curve(inside) - beyond - log_like.max() - np.log(area))
+
+
+def certain_share(own_std: float, *, level: float = 0.95) -> float:
+    """Share of droplets whose most probable number has at least a certain probability.
+
+    Parameters
+    ----------
+    own_std : float
+        Standard uncertainty of the charge over the unit, above 0; infinite gives 0.
+    level : float, optional
+        Probability from which a number is called certain.
+
+    Returns
+    -------
+    share : float
+        Over normal errors and a flat prior of the numbers.
+    """
+    if not own_std > 0:
+        raise PhysicsError("own_std", own_std, "above 0")
+    if own_std > 2:
+        return 0.0
+    from scipy.special import ndtri
+
+    error = own_std * ndtri((np.arange(2000) + 0.5) / 2000)
+    away = (error - np.rint(error))[:, None] - np.arange(-12, 13)
+    likelihood = np.exp(-0.5 * (away / own_std) ** 2)
+    return float(np.mean(likelihood.max(axis=1) / likelihood.sum(axis=1) >= level))

@@ -55,6 +55,11 @@ class TrackInformation:
     variance: FloatArray  # (2, 2) information on (ln r, ln s^2) from the variances of both axes
     radius: float  # m
 
+    def shortened(self, share: float) -> TrackInformation:
+        """Give the information if only a share of the steps can be used, evenly over the track."""
+        return TrackInformation(share * self.drift, share * self.drift_drive, share * self.drive, share * self.variance,
+                                self.radius)  # fmt: skip
+
 
 def track_information(
     radius: float,

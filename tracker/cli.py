@@ -161,6 +161,61 @@ def pool(
 
 
 @app.command(
+    epilog=_example('fallrise plan --bench bench.toml --voltage "400 V" --plateau "2 s" --out plan.png')
+)
+def plan(
+    bench: BenchOption = None,
+    duration: Annotated[
+        str, typer.Option("--duration", help="Longest time that a droplet is watched.")
+    ] = "60 s",
+    plateau: Annotated[
+        str, typer.Option("--plateau", help="Time between two changes of the voltage.")
+    ] = "3 s",
+    voltage: Annotated[
+        str | None, typer.Option("--voltage", help="Field-on voltage; default: the bench's.")
+    ] = None,
+    voltage_max: Annotated[
+        str | None, typer.Option("--voltage-max", help="Of the supply; default: 1000 V.")
+    ] = None,
+    settling: Annotated[
+        str, typer.Option("--settling", help="Left out after each change of voltage.")
+    ] = "0.1 s",
+    pattern: Annotated[str, typer.Option("--pattern", help="Plateaus in turn: 0, + and -.")] = "0,+,0,-",
+    frame_rate: Annotated[
+        str | None, typer.Option("--frame-rate", help="Default: the bench's, or 25 Hz.")
+    ] = None,
+    pixel: Annotated[
+        str | None, typer.Option("--pixel", help="Size of a pixel; default: the bench's scale.")
+    ] = None,
+    noise: Annotated[float, typer.Option("--noise", help="Standard deviation of a place in px.")] = 0.1,
+    height: Annotated[str | None, typer.Option("--height", help="Of the view, along gravity.")] = None,
+    radii: Annotated[str, typer.Option("--radii", help="Radii of droplets.")] = "0.3,0.4,0.5,0.7,1.0 um",
+    numbers: Annotated[str, typer.Option("--numbers", help="Charge numbers.")] = "-1,-2,-5,-10",
+    droplets: Annotated[int, typer.Option("--droplets", min=1, help="Measured together on one bench.")] = 20,
+    out: Annotated[
+        Path | None, typer.Option("--out", help="Picture of the plan, .png, .svg or .pdf.")
+    ] = None,
+    as_json: JsonOption = False,
+) -> None:
+    """Tell the precision that a planned recording can reach, and the best voltage and plateau."""
+    from tracker.bench import load_bench
+    from tracker.keeping.store import json_text
+    from tracker.planning import PlanOptions, plan_recording, planned_recording
+    from tracker.planview import draw, plan_json, plan_table
+
+    known = load_bench(bench, recording=None if bench else Path("plan"))
+    options = PlanOptions(
+        duration=duration, plateau=plateau, voltage=voltage, voltage_max=voltage_max, settling=settling,
+        pattern=pattern, frame_rate=frame_rate, pixel=pixel, place_noise_px=noise, view_height=height, radii=radii,
+        numbers=numbers, droplets=droplets,
+    )  # fmt: skip
+    made = plan_recording(known, planned_recording(known, options))
+    if out is not None:
+        draw(made, out)
+    typer.echo(json_text(plan_json(made)) if as_json else plan_table(made))
+
+
+@app.command(
     epilog=_example("fallrise simulate --out trial.avi --seed 7 --set droplets=20 --bench trial.bench.toml")
 )
 def simulate(

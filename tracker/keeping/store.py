@@ -238,8 +238,24 @@ def write_json(content: Any, path: Path) -> None:
     path : Path
         Of the file; it is replaced.
     """
-    text = json.dumps(_plain(content), indent=1, ensure_ascii=False, allow_nan=False) + "\n"
+    text = json_text(content) + "\n"
     replace_file(path, lambda part: part.write_text(text, encoding="utf-8"))
+
+
+def json_text(content: Any) -> str:
+    """Give plain values as JSON.
+
+    Parameters
+    ----------
+    content : object
+        Plain values, numpy's and paths among them; NaN and infinite values become null.
+
+    Returns
+    -------
+    text : str
+        Indented, without a newline at the end.
+    """
+    return json.dumps(_plain(content), indent=1, ensure_ascii=False, allow_nan=False)
 
 
 def replace_file(path: Path, write: Callable[[Path], object]) -> None:
