@@ -140,6 +140,49 @@ def decide(
         _show_result(done)
 
 
+@app.command(epilog=_example("fallrise batch term/ --out results/ --workers 4"))
+def batch(
+    folder: Annotated[Path, typer.Argument(help="Folder with a term's recordings.")],
+    out: Annotated[Path | None, typer.Option("--out", help="Output folder; default: fallrise-results in the "
+                                             "folder.")] = None,
+    bench: Annotated[Path | None, typer.Option("--bench", help="One bench file for all; default: the nearest beside "
+                                               "or above each recording.")] = None,
+    workers: Annotated[int | None, typer.Option("--workers", help="Processes; default: one a core.")] = None,
+    cluster: Annotated[str, typer.Option("--cluster", help="Address of a dask scheduler, such as "
+                                         "tcp://10.0.0.5:8786.")] = "",
+    tables: Annotated[str, typer.Option("--tables", help="Format of the tracks: csv or parquet.")] = "csv",
+    retry: Annotated[bool, typer.Option("--retry", help="Try failed recordings again, though nothing "
+                                        "changed.")] = False,
+    as_json: JsonOption = False,
+) -> None:  # fmt: skip
+    """Measure all recordings of a folder; run again, it goes on where it stopped."""
+    from tracker.settings import make_settings
+    from tracker.term.batch import Options, run_batch
+    from tracker.term.terminal import batch_bar, batch_text
+
+    options = Options(bench, make_settings(tables=tables), workers, cluster, retry)
+    with batch_bar(hidden=as_json) as progress:
+        made = run_batch(folder, out=out, options=options, progress=progress)
+    if as_json:
+        names = ("recording", "sha256", "status", "droplets", "kept", "seconds", "reason")
+        rows = [{name: getattr(entry, name) for name in names} for entry in made.entries]
+        _print_json([{"out": str(made.out), "measured": made.measured, "recordings": rows}], single=True)
+    else:
+        typer.echo(batch_text(made))
+    if made.failed:
+        raise typer.Exit(1)
+
+
+@app.command(epilog=_example("fallrise report results/"))
+def report(
+    folder: Annotated[Path, typer.Argument(help="Result folder, or output folder of a batch.")],
+) -> None:
+    """Write the HTML report of a result or of a batch again."""
+    from tracker.term.report import write_report
+
+    typer.echo(str(write_report(folder)))
+
+
 @app.command(epilog=_example("fallrise pool term/ --out term/unit"))
 def pool(
     results: Annotated[list[Path], typer.Argument(help="Result folders, or folders that hold results.")],

@@ -57,7 +57,7 @@ def measure(
     from tracker.keeping.decisions import read_decisions
     from tracker.keeping.store import result_folder, write_result
     from tracker.motion.droplets import evaluate_droplets
-    from tracker.provenance import assemble
+    from tracker.provenance import as_stored, assemble
     from tracker.records import Settings
     from tracker.seeing.see import see
     from tracker.voltage import field_and_tracks
@@ -73,7 +73,7 @@ def measure(
     bench = bench.fitted_to(seen.recording.width, seen.recording.height)
     field, tracks = field_and_tracks(seen, bench, settings)
     evaluation = evaluate_droplets(
-        tracks,
+        as_stored(tracks),
         seen.recording,
         field,
         bench,

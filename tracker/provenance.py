@@ -4,14 +4,15 @@ from __future__ import annotations
 
 import os
 import platform
+from dataclasses import replace
 from importlib.metadata import PackageNotFoundError, version
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
-from calibration.scale import Scale, scale_from_json, scale_to_json
+from calibration.scale import Scale, scale_from_json, scale_to_json, to_metres
 from tracker.bench import Bench
 from tracker.keeping.store import Result
-from tracker.keeping.tables import CHANGES, DROPLETS, SEGMENTS, table
+from tracker.keeping.tables import CHANGES, DROPLETS, SEGMENTS, TRACKS, table
 from tracker.records import Field, Measured, Recording, Segment, Settings, Sightings, Tracks
 
 if TYPE_CHECKING:
@@ -19,6 +20,9 @@ if TYPE_CHECKING:
 
     from tracker.motion.droplets import Evaluation
 
+# Column of `Sightings` -> column of the table of tracks.
+_SIGHTING_COLUMNS = {"frame": "frame", "x": "x_px", "y": "y_px", "x_std": "x_std_px", "y_std": "y_std_px",
+                     "brightness": "brightness", "width": "width_px", "flags": "flags"}  # fmt: skip
 _PACKAGES = ("fallrise", "numpy", "scipy", "av", "opencv-python-headless", "pandas")
 
 
@@ -76,6 +80,7 @@ def assemble(
         "exposure": evaluation.exposure,
         "charge_unit": evaluation.charge_unit,
         "budget": evaluation.budget,
+        "details": evaluation.details,
         "seeing": seeing["report"],
         "settings": settings.as_dict(),
         "versions": versions(),
@@ -83,21 +88,19 @@ def assemble(
         "frame_times_s": recording.frame_times,
     }  # fmt: skip
     return Result(
-        None, tracks_table(evaluation.tracks, evaluation.used, recording, field, bench.scale),
+        None, tracks_table(evaluation, recording, field, bench.scale),
         table(evaluation.segments, SEGMENTS), table(evaluation.droplets, DROPLETS), table(evaluation.changes, CHANGES),
         provenance,
     )  # fmt: skip
 
 
-def tracks_table(tracks: Tracks, used: Any, recording: Recording, field: Field, scale: Scale) -> pd.DataFrame:
+def tracks_table(evaluation: Evaluation, recording: Recording, field: Field, scale: Scale) -> pd.DataFrame:
     """Turn tracks into their table.
 
     Parameters
     ----------
-    tracks : Tracks
-        Ordered by droplet and frame.
-    used : array_like of shape (len(tracks),)
-        True where a sighting took part in the fits.
+    evaluation : Evaluation
+        Tracks, which rows the fits rest on, and the linker's own numbers.
     recording : Recording
         Gives the times.
     field : Field
@@ -108,26 +111,49 @@ def tracks_table(tracks: Tracks, used: Any, recording: Recording, field: Field, 
     Returns
     -------
     table : DataFrame
-        Columns of `tracker.keeping.tables.TRACKS`.
+        Columns of `tracker.keeping.tables.TRACKS`, ordered by droplet, then frame.
     """
     import numpy as np
     import pandas as pd
 
-    from calibration.scale import to_metres
-
+    tracks = evaluation.tracks
     seen = tracks.sightings
     times = recording.frame_times[seen.frame]
     x_m, y_m = to_metres(scale, seen.x, seen.y)
     return pd.DataFrame({
         "droplet": tracks.droplet, "frame": seen.frame, "time_s": times, "x_px": seen.x, "y_px": seen.y,
         "x_std_px": seen.x_std, "y_std_px": seen.y_std, "x_m": x_m, "y_m": y_m, "brightness": seen.brightness,
-        "segment": field.segment_of(times), "used": np.asarray(used).astype(np.int64),
-        "width_px": seen.width, "flags": seen.flags,
+        "segment": field.segment_of(times), "used": np.asarray(evaluation.used).astype(np.int64),
+        "linked": evaluation.linked, "width_px": seen.width, "flags": seen.flags,
     })  # fmt: skip
 
 
+def as_stored(tracks: Tracks) -> Tracks:
+    """Round sightings to the digits that the table of tracks keeps.
+
+    What is evaluated at once is then what `tracker.evaluate` finds in the files, to the last digit. The digits
+    kept are hundreds of times finer than any sighting's own uncertainty.
+
+    Parameters
+    ----------
+    tracks : Tracks
+        As linked.
+
+    Returns
+    -------
+    tracks : Tracks
+        The same with rounded columns.
+    """
+    digits = {column.name: column.decimals for column in TRACKS if column.decimals is not None}
+    rounded = {
+        name: getattr(tracks.sightings, name).round(digits[column])
+        for name, column in _SIGHTING_COLUMNS.items() if column in digits
+    }  # fmt: skip
+    return Tracks(tracks.droplet, replace(tracks.sightings, **rounded))
+
+
 def tracks_from_table(frame: pd.DataFrame) -> Tracks:
-    """Give the tracks back from their table; the inverse of `tracks_table`.
+    """Give the tracks as they were linked back from their table.
 
     Parameters
     ----------
@@ -137,12 +163,11 @@ def tracks_from_table(frame: pd.DataFrame) -> Tracks:
     Returns
     -------
     tracks : Tracks
-        In the table's order.
+        Ordered by the linker's number, then frame.
     """
-    names = {"frame": "frame", "x": "x_px", "y": "y_px", "x_std": "x_std_px", "y_std": "y_std_px",
-             "brightness": "brightness", "width": "width_px", "flags": "flags"}  # fmt: skip
-    columns = {name: frame[column].to_numpy() for name, column in names.items()}
-    return Tracks(frame["droplet"].to_numpy("int64"), Sightings(**columns))
+    ordered = frame.sort_values(["linked", "frame"], kind="stable")
+    columns = {name: ordered[column].to_numpy() for name, column in _SIGHTING_COLUMNS.items()}
+    return Tracks(ordered["linked"].to_numpy("int64"), Sightings(**columns))
 
 
 def frames_json(recording: Recording) -> dict[str, Any]:

@@ -9,9 +9,9 @@ from __future__ import annotations
 
 from tracker.bench import Bench
 from tracker.errors import FieldError
-from tracker.motion.field import compare_fields, field_from_lamp, field_from_list
+from tracker.motion.field import compare_fields, exposure_of, field_from_lamp, field_from_list
+from tracker.motion.fieldclock import fit_clock_offset
 from tracker.motion.fieldlog import field_from_log, read_log
-from tracker.motion.fieldmotion import field_from_motion, fit_clock_offset
 from tracker.records import Field, Recording, Seen, Settings, Tracks
 from tracker.seeing.link import link
 
@@ -113,25 +113,9 @@ def field_of_tracks(tracks: Tracks, recording: Recording, bench: Bench) -> Field
         return fit_clock_offset(tracks, log, recording, bench)
     if bench.voltage is None:
         raise FieldError(str(recording.path), "toggles from motion need cell.voltage in the bench file")
+    from tracker.motion.fieldmotion import field_from_motion
+
     return field_from_motion(tracks, recording, bench)
-
-
-def exposure_of(bench: Bench, recording: Recording) -> float:
-    """Exposure of each frame in s: the bench's, or half the frame interval.
-
-    Parameters
-    ----------
-    bench : Bench
-        May state the exposure.
-    recording : Recording
-        Gives the frame interval.
-
-    Returns
-    -------
-    exposure : float
-        In s.
-    """
-    return bench.exposure.value if bench.exposure is not None else 0.5 * recording.frame_interval
 
 
 def _other_sources(bench: Bench, seen: Seen) -> list[str]:

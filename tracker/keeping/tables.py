@@ -40,6 +40,7 @@ TRACKS = (
     Column("brightness", "grey", "sum of the grey values of the spot above the background", decimals=1),
     Column("segment", "", "number of the segment of constant voltage; -1 between two", "int"),
     Column("used", "", "1 if the sighting took part in the fits, else 0", "int"),
+    Column("linked", "", "number that the linker gave, before a person's splits and joins", "int"),
     Column("width_px", "px", "standard deviation of the spot", decimals=3),
     Column(
         "flags",
