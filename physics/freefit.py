@@ -38,6 +38,8 @@ __all__ = [
     "segment_speeds",
 ]
 
+STRAY_SCALE = 0.85  # strays widen the fitted noise: below this, residuals are scaled by their median instead
+
 
 @dataclass(frozen=True, slots=True)
 class FreeFit:
@@ -219,7 +221,7 @@ def robust_increments(
     -----
     The statistic of a sighting is that of one more parameter, an offset of this place alone, in the whitened
     fit (deletion residual): for Gaussian noise it is standard normal whatever the noise and the diffusion.
-    A lasting jump is no such offset and stays.
+    Where a lasting jump in one of the two steps fits better, the sighting stays.
     """
     out: list[int] = []
     for _ in range(rounds):
@@ -240,14 +242,13 @@ def _outliers(steps: Increments, fit: FreeFit, limit: float) -> NDArray[np.int64
     worst = np.zeros(len(joined))
     axes: tuple[tuple[Axis, FloatArray], ...] = (("down", fit.down_residuals), ("side", fit.side_residuals))
     for axis, white in axes:
-        score = _offset_scores(steps, white, rho, axis)[joined]
-        worst = np.maximum(worst, np.abs(score) / min(1.0, 1.4826 * float(np.median(np.abs(score)))))
+        worst = np.maximum(worst, _offset_scores(steps, white, rho, axis)[joined])
     rank = np.array([worst[max(0, i - 2) : i + 3].max() for i in range(len(worst))])
     return np.asarray(steps.last[joined[(worst > limit) & (worst >= rank)]])
 
 
 def _offset_scores(steps: Increments, white: FloatArray, rho: float, axis: Axis) -> FloatArray:
-    """Offset statistic of the sighting between steps k and k + 1, for all k, from whitened residuals.
+    """Size of the offset of the sighting between steps k and k + 1, for all k; 0 where a jump in a step fits better.
 
     Columns of L^-1 are needed: with unit offset m_k = e_k - e_k+1 the score is m_k' C^-1 r / sqrt(m_k' C^-1 m_k);
     the three elements of C^-1 come from the pivots of C taken from both ends.
@@ -264,4 +265,8 @@ def _offset_scores(steps: Increments, white: FloatArray, rho: float, axis: Axis)
         np.stack([np.ones(len(raw)), np.append(lower, 0.0)]), raw / forward, uplo="L", trans="T", diag="U"
     )
     a = solved.ravel()
-    return np.asarray((a[:-1] - a[1:]) / np.sqrt(inverse[:-1] + inverse[1:] - 2 * beside))
+    offset = (a[:-1] - a[1:]) / np.sqrt(inverse[:-1] + inverse[1:] - 2 * beside)
+    jump = np.abs(a) / np.sqrt(inverse)
+    typical = 1.4826 * float(np.median(np.abs(offset)))
+    size = np.abs(offset) / (typical if typical < STRAY_SCALE else 1.0)
+    return np.where(np.abs(offset) > np.maximum(jump[:-1], jump[1:]), size, 0.0)

@@ -28,6 +28,7 @@ MIN_INCREMENTS = 8  # fewer leave the variance so few degrees of freedom that no
 RHO_POINTS = 9  # over +-3.5 standard deviations the trapezoid rule is exact to 1e-3
 LOG_DROP = 6.125  # nats: 3.5 standard deviations of a normal likelihood
 NOISE_RANGE = (1e-3, 1e4)  # of rho over the median step; below 1e-3 the noise changes nothing
+FIELD_OFF = 1e-3  # V; below, the field counts as off: sums of volt seconds leave 1e-10 V of round-off
 SINGULAR = 1e-9  # relative: below, drift and drive are one column
 
 
@@ -87,7 +88,8 @@ class Design:
 
 def whitened_design(steps: Increments, log_rho: FloatArray) -> Design:
     """Whiten drift, drives and data of both axes by A + rho M; one factorisation if their noise is the same."""
-    seen = [p for p in range(steps.parts) if np.any(steps.impulse[steps.part == p] != 0)]
+    driven = np.abs(steps.impulse) > FIELD_OFF * steps.dt
+    seen = [p for p in range(steps.parts) if np.any(driven[steps.part == p])]
     drives = [np.where(steps.part == p, steps.impulse, 0.0) for p in seen]
     columns = [steps.dt, *drives, steps.down]
     rho = np.exp(log_rho)

@@ -34,6 +34,7 @@ NO_CHARGE_REASONS: Mapping[str, str] = {
 RADIUS_RANGE = (3e-8, 1.5e-5)  # m; below, a droplet diffuses out of sight, above, Stokes' law has ended
 RADIUS_POINTS = 120
 SPEED_SPAN, DIFFUSION_SPAN = 5.0, 6.0  # standard deviations of either that the radius grid holds
+MOST_NUMBERS = 2000  # charge numbers beyond are never resolved
 RATIO_LIMIT = 0.3  # relative uncertainty of the fall speed up to which diffusion is compared with it
 
 
@@ -249,7 +250,7 @@ def droplet_posterior(
         speed and is integrated out, so that its doubt is part of the standard deviations of the result.
     charge_number_max : int, optional
         Largest charge number of `number_values`; None takes all that the charges reach within 8 standard
-        deviations, at least 10.
+        deviations, from 10 to 2000.
     responses : mapping, optional
         As `input_responses` gives; None calls it.
 
@@ -369,7 +370,7 @@ def _charge_results(
     std = np.sqrt(np.diag(cov))
     own: FloatArray = np.sqrt(np.einsum("rpp->rp", mixture.charge_cov))
     reach = float(np.max(np.abs(mean) + 8 * std)) / ELEMENTARY_CHARGE
-    most = max(10, int(np.ceil(reach))) if number_max is None else int(number_max)
+    most = int(np.clip(np.ceil(reach), 10, MOST_NUMBERS)) if number_max is None else int(number_max)
     numbers = np.arange(-most, most + 1)
     at_numbers = np.asarray(numbers * ELEMENTARY_CHARGE, dtype=np.float64)
     likelihood = np.full((parts, len(numbers)), np.nan)
