@@ -330,7 +330,7 @@ def _split(part: IntArray, step: int) -> IntArray:
     return np.where(later, part + 1, part)
 
 
-def _longer_side(steps: Increments, step: int) -> IntArray:
-    """Steps of the longer side of a switch."""
-    rows = np.arange(len(steps))
-    return rows[rows < step] if np.sum(steps.dt[:step]) >= np.sum(steps.dt[step:]) else rows[rows >= step]
+def _longer_side(steps: Increments, step: int) -> np.ndarray:
+    """Mark the steps of the longer side of a switch."""
+    before = np.arange(len(steps)) < step
+    return before if np.sum(steps.dt[before]) >= np.sum(steps.dt[~before]) else ~before

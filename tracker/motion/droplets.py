@@ -339,6 +339,11 @@ def _segment_rows(droplet: _Droplet, field: Field) -> list[SegmentRow]:
     occupancy = segment_occupancy(
         [s.start for _, s in seen], [s.end for _, s in seen], path.times, path.exposure
     )[steps.first]
+    # A segment of which one step or less was seen has no speed of its own.
+    whole = np.flatnonzero(np.sum(occupancy > 0.5 * steps.dt[:, None], axis=0) >= 2)
+    seen, occupancy = [seen[k] for k in whole], occupancy[:, whole]
+    if not seen:
+        return []
     speeds = segment_speeds(steps, occupancy, diffusion=fit.diffusion, rho=float(np.exp(fit.log_rho)))
     inside = field.segment_of(path.times)
     return [

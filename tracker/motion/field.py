@@ -19,7 +19,7 @@ LEAST_SEPARABILITY = (
 )
 LEAST_RUN = 3  # frames; a lamp that changes for less is flicker
 SAME_VOLTAGE = 0.1  # of the largest voltage: nearer voltages of two sources are the same
-SHARP = 0.1  # of the frame interval: a toggle known so well counts as known
+SHARP = 0.25  # of the frame interval: a toggle known so well counts as known
 SATURATED = 0.98  # of full scale: a lit lamp above does not tell how long it was lit
 
 

@@ -19,7 +19,7 @@ FINE = 0.01  # s, step of the second
 RATE_STD = 3e-4  # relative: what clocks of loggers and cameras differ by; prior of the rate
 RATE_GAIN = 10.83  # chi-square by which a rate must improve the fit, 1 in 1000
 LEAST_MARGIN = 30.0  # chi-square by which the best offset must beat any other
-LEAST_RELATIVE_MARGIN = 0.02  # of the gain; what charge steps and mistaken links may cost the right offset
+LEAST_RELATIVE_MARGIN = 0.005  # of the gain; what charge steps and mistaken links may cost the right offset
 LEAST_GAIN = 40.0  # chi-square that the log must explain: one in 1e7 by chance over 1000 offsets
 MOST_DROPLETS = 30  # longest tracks that are used; more narrow the offset below what matters
 STEPS_AT_ONCE = 4_000_000  # numbers held at once in the first search
@@ -190,11 +190,7 @@ class _Fit:
                 droplet.steps, diffusion=droplet.diffusion, rho=droplet.rho,
                 columns=np.column_stack([droplet.steps.dt, seconds]),
             )  # fmt: skip
-            drift, drive = white.columns[:, 0], white.columns[:, 1]
-            free = drive - drift * (drift @ drive) / (drift @ drift)
-            power = float(free @ free)
-            if power > 1e-9 * float(drive @ drive):
-                total += float(free @ white.data) ** 2 / power
+            total += _explained(white.columns[:, 0], white.columns[:, 1], white.data)
         return total
 
     def field(self, starts: list[float]) -> Field:
@@ -256,7 +252,25 @@ class _Fit:
         weight /= weight.sum()
         mean = float(weight @ grid)
         spacing = grid[1] - grid[0]
-        return mean, float(np.sqrt(weight @ (grid - mean) ** 2 + spacing**2 / 12))
+        toggles = max(1, int(np.sum(np.abs(np.diff(self.log.volts)) > 0.3 * np.ptp(self.log.volts))))
+        # Each jump may lie anywhere between two readings of the log.
+        sampling = self.log.interval**2 / 12 / toggles
+        return mean, float(np.sqrt(weight @ (grid - mean) ** 2 + spacing**2 / 12 + sampling))
+
+
+def _explained(drift: FloatArray, drive: FloatArray, data: FloatArray) -> float:
+    """Chi-square that the drive explains, less that of a droplet which would rise with the field off.
+
+    The second tells a schedule from the same one with on and off exchanged.
+    """
+    free = drive - drift * (drift @ drive) / (drift @ drift)
+    power = float(free @ free)
+    if power <= 1e-9 * float(drive @ drive):
+        return 0.0
+    gain = float(free @ data) ** 2 / power
+    alone = drift - drive * (drift @ drive) / (drive @ drive)
+    rise = min(float(alone @ data), 0.0)
+    return gain - rise**2 / float(alone @ alone)
 
 
 def _with_impulse(steps: Increments, impulse: FloatArray) -> Increments:

@@ -1,0 +1,437 @@
+"""Voltage over time from the droplets' own motion: toggles by exact dynamic programming, then by their likelihood."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
+
+import numpy as np
+
+from physics.droplet import Conditions, diffusion, radius_from_fall_speed
+from physics.errors import PhysicsError
+from physics.motion import MIN_INCREMENTS, Increments, field_impulse, free_fit, whitened
+from tracker.bench import Bench
+from tracker.errors import FieldError
+from tracker.motion.field import exposure_of, field_of_steps, recording_span
+from tracker.motion.fieldclock import fit_clock_offset
+from tracker.motion.velocity import Orientation, Path, paths
+from tracker.records import Field, FloatArray, IntArray, Recording, Tracks
+
+__all__ = ["field_from_motion", "fit_clock_offset", "segments_of_motion", "sharpened"]
+
+FALSE_TOGGLES = 1e-3  # per recording
+LEAST_SEGMENT = 6  # frames
+LEAST_DROPLET = 30  # steps of a droplet that takes part
+SAME_STATE = 0.25  # of the spread of the states: scores nearer to one another are one state
+GRID = 33  # points of a toggle's likelihood
+LEAST_TIMING = 6.0  # chi-square by which places of a toggle must differ, or the droplets say nothing of it
+OFF_MARGIN = 9.0  # chi-square by which the field-off state must fit a falling sphere better than the other
+
+
+def field_from_motion(tracks: Tracks, recording: Recording, bench: Bench) -> Field:
+    """Find when the field was on from the droplets' motion alone.
+
+    Parameters
+    ----------
+    tracks : Tracks
+        Linked without the voltage.
+    recording : Recording
+        Frame times.
+    bench : Bench
+        `voltage` of the field-on state, scale, exposure, air and oil.
+
+    Returns
+    -------
+    field : Field
+        With source ``motion``, two states (off, on) or three (off, on, reversed), and the uncertainty of every
+        toggle. The first field-on segment has the bench's voltage; that its sign is so cannot be seen, hence
+        `sign_known` is False and a warning says so.
+
+    Raises
+    ------
+    FieldError
+        If no toggle is seen, if there are more than three states, or if on and off cannot be told apart.
+
+    Notes
+    -----
+    Steps over sqrt(2 D dt) of each droplet are independent with unit variance about a mean that only a toggle
+    changes. The partition of the recording that minimises the residual sum of squares plus a penalty for each
+    toggle is found exactly by dynamic programming [1]_; the step that holds the toggle is left out. With K
+    droplets and L = ln(frames / 0.001) the penalty is 2 K + 2 sqrt(K L) + 2 L, at which one recording in a
+    thousand shows a toggle that is none. Then the time of each toggle is its posterior mean given the
+    neighbouring segments, with the full covariance of the steps.
+
+    References
+    ----------
+    .. [1] B. Jackson et al., IEEE Signal Process. Lett. 12 (2005), 105-108.
+    """
+    voltage = bench.voltage
+    if voltage is None:
+        raise FieldError(str(recording.path), "toggles from motion need cell.voltage in the bench file")
+    exposure = exposure_of(bench, recording)
+    droplets = _droplets(tracks, recording, bench, exposure)
+    edges = segments_of_motion(*_scaled_steps(droplets, recording))
+    if len(edges) < 2:
+        raise FieldError(
+            str(recording.path),
+            "no toggle of the field is seen in the motion; state it as a list, log or lamp",
+        )
+    states = _states(droplets, edges, recording, bench.conditions)
+    times = recording.frame_times
+    coarse = np.concatenate(([times[0]], [0.5 * (times[a] + times[b]) for a, b in zip(
+        [e for _, e in edges[:-1]], [s for s, _ in edges[1:]], strict=True)]))  # fmt: skip
+    volts = voltage.value * states
+    field = field_of_steps(
+        "motion", coarse, volts, span=recording_span(recording), toggle_std=recording.frame_interval,
+        sign_known=False, warnings=_sign_warning(voltage.value, states),
+    )  # fmt: skip
+    return _refined(field, droplets, recording, np.arange(len(field.segments) - 1))
+
+
+def sharpened(field: Field, tracks: Tracks, recording: Recording, bench: Bench) -> Field:
+    """Place toggles that a lamp or a slow log leaves open better, by the droplets' motion.
+
+    Parameters
+    ----------
+    field : Field
+        With jumps between constant voltages.
+    tracks : Tracks
+        Linked.
+    recording : Recording
+        Frame times.
+    bench : Bench
+        Scale and exposure.
+
+    Returns
+    -------
+    field : Field
+        Each toggle whose uncertainty exceeds a hundredth of the frame interval is moved within three of its
+        standard uncertainties; where the droplets say nothing, it stays.
+    """
+    jumps = np.array(
+        [a.end == b.start for a, b in zip(field.segments, field.segments[1:], strict=False)], bool
+    )
+    open_ones = np.flatnonzero(jumps & (field.toggle_std > 0.01 * recording.frame_interval))
+    if len(open_ones) == 0:
+        return field
+    droplets = _droplets(tracks, recording, bench, exposure_of(bench, recording))
+    return _refined(field, droplets, recording, open_ones)
+
+
+def _sign_warning(voltage: float, states: FloatArray) -> tuple[str, ...]:
+    first = float(voltage * states[np.flatnonzero(states)[0]])
+    return (
+        f"the sign of every charge rests on the first field-on segment having {first:+.4g} V, as cell.voltage says; "
+        "motion cannot tell it",
+    )
+
+
+def _droplets(tracks: Tracks, recording: Recording, bench: Bench, exposure: float) -> list[Path]:
+    """Paths along the stated or the picture's vertical, of droplets seen long enough."""
+    span = recording_span(recording)
+    idle = field_of_steps("motion", [span[0]], [0.0], span=span)
+    orientation = Orientation(bench.down_deg or 0.0, 0.0, "picture")
+    found = paths(
+        tracks, recording, field=idle, scale=bench.scale, exposure=exposure, orientation=orientation
+    )
+    usable = [path for path in found if len(path) > LEAST_DROPLET and len(path.steps()) >= LEAST_DROPLET]
+    if not usable:
+        problem = f"no droplet is tracked for {LEAST_DROPLET} frames, so the motion cannot tell when the field was on"
+        raise FieldError(str(recording.path), problem)
+    return usable
+
+
+def _scaled_steps(droplets: Sequence[Path], recording: Recording) -> tuple[FloatArray, np.ndarray]:
+    """Steps over sqrt(2 D dt) for each droplet and frame interval; 0 where there is none, and where there is."""
+    shape = len(droplets), max(len(recording.frame_times) - 1, 1)
+    scaled, seen = np.zeros(shape), np.zeros(shape, bool)
+    for j, path in enumerate(droplets):
+        steps = path.steps()
+        frames = path.frames[steps.first]
+        single = path.frames[steps.first + 1] - frames == 1
+        unit = np.sqrt(2 * _side_diffusion(steps) * steps.dt)
+        scaled[j, frames[single]] = (steps.down / unit)[single]
+        seen[j, frames[single]] = True
+    return scaled, seen
+
+
+def _side_diffusion(steps: Increments) -> float:
+    """Diffusion from the motion across the field, which toggles do not touch: <x^2>/2dt + <x x'>/dt."""
+    side = steps.side - steps.dt * (np.sum(steps.side) / np.sum(steps.dt))
+    joined = steps.first[1:] - steps.first[:-1] == 1
+    mean_dt = float(np.mean(steps.dt))
+    size = float(np.mean(side**2))
+    neighbours = float(np.mean((side[:-1] * side[1:])[joined])) if np.any(joined) else 0.0
+    return max(size + 2 * neighbours, 0.2 * size) / (2 * mean_dt)
+
+
+def segments_of_motion(scaled: FloatArray, seen: np.ndarray) -> list[tuple[int, int]]:
+    """Partition frame intervals into stretches of constant mean, exactly.
+
+    Parameters
+    ----------
+    scaled : ndarray of shape (droplets, N)
+        Steps with unit variance; 0 where a droplet was not seen.
+    seen : ndarray of bool, same shape
+        Where it was.
+
+    Returns
+    -------
+    segments : list of (first, end)
+        Frame intervals first..end-1 of each stretch, in order. One interval, the one that holds the toggle,
+        lies between two stretches and belongs to neither.
+    """
+    count = scaled.shape[1]
+    most = max(float(np.max(seen.sum(axis=0))), 1.0)
+    log = float(np.log(max(count, 2) / FALSE_TOGGLES))
+    penalty = 2 * most + 2 * np.sqrt(most * log) + 2 * log
+    total = np.concatenate([np.zeros((len(scaled), 1)), np.cumsum(scaled, axis=1)], axis=1).T
+    number = np.concatenate([np.zeros((len(scaled), 1)), np.cumsum(seen, axis=1)], axis=1).T
+    single = np.append(np.sum(scaled**2, axis=0), 0.0)
+    # best[e]: largest sum over segments of sum_j (sum Z)^2 / n, less the penalties, of intervals before e.
+    best, begin = np.full(count + 1, -np.inf), np.zeros(count + 1, np.int64)
+    alive, dead = np.array([0]), np.array([count + LEAST_SEGMENT + 2])
+    offer = np.full(count + 2, -np.inf)  # value with which a segment may start at s
+    offer[0] = 0.0
+    for end in range(1, count + 1):
+        ready = alive[alive <= end - min(LEAST_SEGMENT, count)]
+        if len(ready):
+            sums, length = total[end] - total[ready], number[end] - number[ready]
+            gain = offer[ready] + np.sum(sums**2 / np.maximum(length, 1), axis=1)
+            top = int(np.argmax(gain))
+            best[end], begin[end] = gain[top], ready[top]
+            # A later start at end + 1 then beats these for every later end, the step between counted in their favour.
+            worse = gain + single[end] < best[end] - penalty
+            late = np.where(worse, end + LEAST_SEGMENT + 1, count + LEAST_SEGMENT + 2)
+            dead[: len(ready)] = np.minimum(dead[: len(ready)], late)
+        if end + 1 <= count - LEAST_SEGMENT and np.isfinite(best[end]):
+            offer[end + 1] = best[end] - penalty
+            alive, dead = np.append(alive, end + 1), np.append(dead, count + LEAST_SEGMENT + 2)
+        keep = dead > end
+        alive, dead = alive[keep], dead[keep]
+    segments, end = [], count
+    while end > 0 and np.isfinite(best[end]):
+        segments.append((int(begin[end]), end))
+        end = int(begin[end]) - 1
+    return segments[::-1]
+
+
+@dataclass(frozen=True, slots=True)
+class _Means:
+    """Speed of every droplet in every segment, and its variance; nan where it was not seen."""
+
+    speed: FloatArray  # (droplets, segments) m/s
+    variance: FloatArray  # (m/s)^2
+    diffusion: FloatArray  # (droplets,) m^2/s
+    diffusion_std: FloatArray  # (droplets,) of ln D
+
+
+def _means(droplets: Sequence[Path], edges: Sequence[tuple[int, int]]) -> _Means:
+    """Mean speeds within the segments."""
+    speed = np.full((len(droplets), len(edges)), np.nan)
+    variance = speed.copy()
+    diffusions = np.zeros(len(droplets))
+    stds = np.zeros(len(droplets))
+    for j, path in enumerate(droplets):
+        steps = path.steps()
+        diffusions[j] = _side_diffusion(steps)
+        stds[j] = np.sqrt(3.0 / len(steps))  # the covariance estimator's, noise small against D dt
+        frames, last = path.frames[steps.first], path.frames[steps.first + 1]
+        for i, (first, end) in enumerate(edges):
+            inside = (frames >= first) & (last <= end)
+            if np.sum(inside) >= 3:
+                duration = float(np.sum(steps.dt[inside]))
+                speed[j, i] = np.sum(steps.down[inside]) / duration
+                variance[j, i] = 2 * diffusions[j] / duration
+    return _Means(speed, variance, diffusions, stds)
+
+
+def _states(
+    droplets: Sequence[Path], edges: Sequence[tuple[int, int]], recording: Recording, conditions: Conditions
+) -> FloatArray:
+    """Voltage of every segment over the first field-on one: 0, 1 or -1."""
+    means = _means(droplets, edges)
+    score = _scores(means)
+    groups = _groups(score)
+    levels = np.array([np.mean(score[groups == k]) for k in range(groups.max() + 1)])
+    if len(levels) == 3:
+        share = (levels[1] - levels[0]) / (levels[2] - levels[0])
+        if not 0.4 < share < 0.6:
+            problem = f"the motion's three states are not off, on and reversed: the middle is at {share:.2f} of the way"
+            raise FieldError(str(recording.path), f"{problem}; state the voltages as a list or a log")
+        off = 1
+    elif len(levels) == 2:
+        off = _off_state(means, groups, recording, conditions)
+    else:
+        raise FieldError(
+            str(recording.path), f"{len(levels)} states of the motion; state the voltages as a list or a log"
+        )
+    states = np.sign(levels[groups] - levels[off])
+    return np.asarray(states * states[np.flatnonzero(states)[0]])
+
+
+def _scores(means: _Means) -> FloatArray:
+    """One number for each segment, the droplets' common pattern of speeds: rank-one fit with missing values."""
+    weight = np.where(np.isfinite(means.speed), 1 / means.variance, 0.0)
+    speed = np.where(np.isfinite(means.speed), means.speed, 0.0)
+    score = _start_scores(speed, weight)
+    for _ in range(200):
+        # Each droplet's speed is a + b score; then each segment's score from all droplets.
+        w = weight.sum(axis=1)
+        ws, wss = weight @ score, weight @ score**2
+        wv, wvs = np.sum(weight * speed, axis=1), np.sum(weight * speed * score, axis=1)
+        determinant = w * wss - ws**2
+        sound = determinant > 1e-9 * np.maximum(w * wss, 1e-300)
+        b = np.where(sound, (w * wvs - ws * wv) / np.where(sound, determinant, 1.0), 0.0)
+        a = np.where(sound, (wv - b * ws) / np.maximum(w, 1e-300), 0.0)
+        power = np.sum(weight * (b**2)[:, None], axis=0)
+        new = np.sum(weight * b[:, None] * (speed - a[:, None]), axis=0) / np.maximum(power, 1e-300)
+        span = np.ptp(new)
+        new = (new - new.min()) / (span if span > 0 else 1.0)
+        if np.max(np.abs(new - score)) < 1e-9:
+            break
+        score = new
+    return score
+
+
+def _start_scores(speed: FloatArray, weight: FloatArray) -> FloatArray:
+    """Start from the droplet whose speeds differ most significantly between segments."""
+    mean = np.sum(weight * speed, axis=1) / np.maximum(weight.sum(axis=1), 1e-300)
+    spread = np.sum(weight * (speed - mean[:, None]) ** 2, axis=1)
+    best = int(np.argmax(spread * (np.sum(weight > 0, axis=1) / weight.shape[1]) ** 2))
+    score = np.where(weight[best] > 0, speed[best], mean[best])
+    span = np.ptp(score)
+    return np.asarray((score - score.min()) / (span if span > 0 else 1.0))
+
+
+def _groups(score: FloatArray) -> IntArray:
+    """Number of the state of each segment, states ordered by score."""
+    order = np.argsort(score)
+    steps = np.diff(score[order]) > SAME_STATE
+    groups = np.zeros(len(score), np.int64)
+    groups[order] = np.concatenate(([0], np.cumsum(steps)))
+    return groups
+
+
+def _off_state(means: _Means, groups: IntArray, recording: Recording, conditions: Conditions) -> int:
+    """Field-off state of two: there every droplet falls, at the speed that its Brownian motion asks for."""
+    misfit = [float(np.sum(_fall_misfit(means, groups == k, conditions))) for k in (0, 1)]
+    if abs(misfit[0] - misfit[1]) < OFF_MARGIN:
+        raise FieldError(
+            str(recording.path),
+            "on and off cannot be told apart by the motion; state the field as a list, log or lamp",
+        )
+    return int(np.argmin(misfit))
+
+
+def _fall_misfit(means: _Means, chosen: np.ndarray, conditions: Conditions) -> FloatArray:
+    """Chi-square of each droplet for being a falling sphere of the oil in the chosen segments."""
+    weight = np.where(np.isfinite(means.speed) & chosen, 1 / means.variance, 0.0)
+    total = weight.sum(axis=1)
+    misfit = np.zeros(len(total))
+    for j in np.flatnonzero(total > 0):
+        speed = float(np.sum(weight[j] * np.nan_to_num(means.speed[j])) / total[j])
+        std = float(1 / np.sqrt(total[j]))
+        if speed < 2 * std:
+            misfit[j] = min((speed / std - 2) ** 2, 100.0)
+            continue
+        try:
+            law = float(diffusion(radius_from_fall_speed(speed, conditions), conditions))
+        except PhysicsError:
+            continue
+        ln_std = float(np.hypot(means.diffusion_std[j], 0.6 * std / speed))
+        # Capped: a clump or a mistaken link must not decide for all.
+        misfit[j] = min((np.log(means.diffusion[j] / law) / ln_std) ** 2, 25.0)
+    return misfit
+
+
+def _refined(field: Field, droplets: Sequence[Path], recording: Recording, which: IntArray) -> Field:
+    """Place the chosen toggles by their likelihood, with what the field says already as the prior."""
+    times = np.array([segment.end for segment in field.segments[:-1]])
+    stds = np.array(field.toggle_std)
+    prepared = [_prepared(path, field) for path in droplets]
+    for i in which:
+        low = field.segments[i].start if i == 0 else times[i - 1]
+        high = field.segments[i + 1].end if i + 2 == len(field.segments) else times[i + 1]
+        placed = _toggle_posterior(prepared, (low, float(times[i]), high), std=float(stds[i]))
+        if placed is not None:
+            times[i], stds[i] = placed
+    bounds = [field.segments[0].start, *times, field.segments[-1].end]
+    volts = [segment.voltage for segment in field.segments]
+    new = field_of_steps(
+        field.source, bounds[:-1], volts, span=recording_span(recording), toggle_std=np.concatenate(([0.0], stds)),
+        sign_known=field.sign_known, warnings=field.warnings,
+    )  # fmt: skip
+    return replace(new, clock_offset=field.clock_offset, clock_offset_std=field.clock_offset_std,
+                   clock_rate=field.clock_rate)  # fmt: skip
+
+
+@dataclass(frozen=True, slots=True)
+class _Prepared:
+    """One droplet's steps, and what their whitening needs."""
+
+    path: Path
+    steps: Increments
+    diffusion: float
+    rho: float
+
+
+def _prepared(path: Path, field: Field) -> _Prepared:
+    """Find diffusion and noise of a droplet with the field as it is known so far."""
+    impulse = field_impulse(field.knot_times, field.knot_volts, path.times, path.exposure)
+    steps = replace(path, impulse=impulse).steps()
+    fit = free_fit(steps)
+    return _Prepared(path, steps, fit.diffusion, float(np.exp(fit.log_rho)))
+
+
+def _toggle_posterior(
+    droplets: Sequence[_Prepared], window: tuple[float, float, float], *, std: float
+) -> tuple[float, float] | None:
+    """Mean and standard deviation of the time of one toggle in s; None if the droplets say nothing."""
+    low, start, high = window
+    inside = []
+    for droplet in droplets:
+        begin = droplet.path.times[droplet.steps.first]
+        within = (begin >= low) & (begin + droplet.steps.dt + droplet.path.exposure <= high)
+        if np.sum(within) > MIN_INCREMENTS:
+            inside.append((droplet, droplet.steps.select(within)))
+    if not inside:
+        return None
+    grid = np.linspace(max(low, start - 3 * std), min(high, start + 3 * std), GRID)
+    for finer in range(4):
+        gain = np.sum([_ramp_gain(droplet, steps, grid) for droplet, steps in inside], axis=0)
+        if finer == 0 and np.ptp(gain) < LEAST_TIMING:
+            return None
+        weight = np.exp(0.5 * (gain - gain.max()))
+        weight /= weight.sum()
+        mean, spacing = float(weight @ grid), float(grid[1] - grid[0])
+        spread = float(np.sqrt(weight @ (grid - mean) ** 2))
+        if spread > 2 * spacing:
+            break
+        reach = 5 * max(spread, 0.5 * spacing)
+        grid = np.linspace(max(low, mean - reach), min(high, mean + reach), GRID)
+    return mean, float(np.hypot(spread, spacing / np.sqrt(12)))
+
+
+def _ramp_gain(droplet: _Prepared, steps: Increments, grid: FloatArray) -> FloatArray:
+    """Chi-square that a change of speed at each time of the grid explains."""
+    begin = droplet.path.times[steps.first]
+    ramps = _ramp(begin + steps.dt, grid, droplet.path.exposure) - _ramp(begin, grid, droplet.path.exposure)
+    white = whitened(
+        steps, diffusion=droplet.diffusion, rho=droplet.rho, columns=np.column_stack([steps.dt, ramps])
+    )
+    drift, ramps = white.columns[:, 0], white.columns[:, 1:]
+    drift = drift / np.linalg.norm(drift)
+    free = ramps - np.outer(drift, drift @ ramps)
+    power = np.sum(free**2, axis=0)
+    gain = (free.T @ white.data) ** 2 / np.maximum(power, 1e-300)
+    return np.asarray(np.where(power > 1e-9 * np.sum(ramps**2, axis=0), gain, 0.0))
+
+
+def _ramp(begin: FloatArray, grid: FloatArray, exposure: float) -> FloatArray:
+    """Exposure average of max(0, t - toggle), for exposures (rows) and toggles (columns)."""
+    since = begin[:, None] - grid
+    if exposure == 0:
+        return np.asarray(np.maximum(since, 0.0))
+    later, sooner = np.maximum(since + exposure, 0.0), np.maximum(since, 0.0)
+    return np.asarray((later**2 - sooner**2) / (2 * exposure))
