@@ -261,6 +261,11 @@ def shared_covariance(sensitivities: ArrayLike, stds: ArrayLike, *, values: Arra
     -------
     covariance : ndarray of shape (N, N)
         Symmetric, of rank K at most. Droplets' own variances are to be added on the diagonal.
+
+    Raises
+    ------
+    PhysicsError
+        If the shapes do not fit.
     """
     matrix = np.asarray(sensitivities, dtype=np.float64)
     errors = np.asarray(stds, dtype=np.float64)
@@ -300,6 +305,11 @@ def droplet_budget(
     Budget
         With the row ``own`` and one row per input that is given; normal interval at 95 %.
 
+    Raises
+    ------
+    PhysicsError
+        If the quantity is another one, or as for `shared_errors`.
+
     References
     ----------
     .. [1] JCGM 100:2008, 8.1 to 8.8.
@@ -327,6 +337,11 @@ def bench_budget(sensitivities: ArrayLike, inputs: Mapping[str, Estimate], *, we
     -------
     Budget
         Of ``charge factor``, value 1; its own part is 0.
+
+    Raises
+    ------
+    PhysicsError
+        If a weight is negative or all are 0, or as for `shared_errors`.
     """
     share = np.asarray(weights, dtype=np.float64)
     if not share.sum() > 0.0 or np.any(share < 0.0):
@@ -407,6 +422,11 @@ def explaining_errors(ratio: float, budget: Budget) -> dict[str, float]:
         Relative error of the stated value of each input (absolute for the relative humidity), stated less
         true over true: 0.008 for ``scale`` reads "the stated scale is 0.8 % too large". Inputs whose
         sensitivity is below 0.05 are left out, since no sensible error of theirs explains anything.
+
+    Raises
+    ------
+    PhysicsError
+        If the ratio is not finite and above 0.
     """
     if not 0.0 < ratio < math.inf:
         raise PhysicsError("ratio", ratio, "finite and above 0")

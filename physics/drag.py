@@ -327,6 +327,11 @@ def stokes_check(reynolds: ArrayLike, *, tolerance: float = 1e-3) -> StokesCheck
     StokesCheck
         With a line of warning if the tolerance is passed (at 1e-3: Re above 0.0053).
 
+    Raises
+    ------
+    PhysicsError
+        If a number is negative or not finite.
+
     Notes
     -----
     Drag = Stokes x (1 + 3/16 Re + ...) for Re < 1.
@@ -336,8 +341,9 @@ def stokes_check(reynolds: ArrayLike, *, tolerance: float = 1e-3) -> StokesCheck
     .. [1] C. W. Oseen, Ark. Mat. Astron. Fys. 6 (1910), No. 29.
     """
     values = np.asarray(reynolds, dtype=np.float64)
-    if np.any(~(values >= 0.0)):
-        raise PhysicsError("reynolds", float(values[~(values >= 0.0)].flat[0]), "0 or more")
+    bad = ~(np.isfinite(values) & (values >= 0.0))
+    if np.any(bad):
+        raise PhysicsError("reynolds", float(values[bad].flat[0]), "finite and 0 or more")
     largest = float(values.max()) if values.size else 0.0
     excess = 3.0 / 16.0 * largest
     holds = excess <= tolerance

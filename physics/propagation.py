@@ -219,6 +219,11 @@ def effective_degrees_of_freedom(contributions: ArrayLike, degrees: ArrayLike) -
     degrees : float
         ``inf`` if all contributing inputs have infinitely many.
 
+    Raises
+    ------
+    PhysicsError
+        If a number of degrees of freedom is not above 0.
+
     References
     ----------
     .. [1] JCGM 100:2008, eq. G.2b.
@@ -244,6 +249,11 @@ def coverage_factor(degrees: float, *, probability: float = 0.95) -> float:
     -------
     factor : float
         Expanded over standard uncertainty.
+
+    Raises
+    ------
+    PhysicsError
+        If there is less than one degree of freedom, or the probability is not within 0 and 1.
     """
     from scipy.special import ndtri, stdtrit
 
