@@ -1,0 +1,146 @@
+"""A report as one HTML file that needs nothing from elsewhere: text, tables, pictures; all text is escaped."""
+
+from __future__ import annotations
+
+import base64
+import io
+from collections.abc import Sequence
+from dataclasses import dataclass
+from html import escape
+from typing import TYPE_CHECKING
+
+if TYPE_CHECKING:
+    from matplotlib.figure import Figure
+
+_STYLE = """
+:root { color-scheme: light; }
+body { font: 1rem/1.5 system-ui, sans-serif; color: #111; background: #fff; margin: 0 auto; padding: 1rem;
+  max-width: 62rem; overflow-wrap: anywhere; }
+h1 { font-size: 1.6rem; line-height: 1.2; margin: .5rem 0; }
+h2 { font-size: 1.25rem; margin: 2rem 0 .5rem; border-bottom: 1px solid #888; }
+nav ul { padding-left: 1.2rem; columns: 2 14rem; }
+figure { margin: 1rem 0; break-inside: avoid; }
+figure img { width: 100%; height: auto; }
+figcaption { font-weight: 600; }
+.wide { overflow-x: auto; }
+table { border-collapse: collapse; margin: .75rem 0; font-variant-numeric: tabular-nums; overflow-wrap: normal; }
+caption { text-align: left; font-weight: 600; padding: .25rem 0; }
+th, td { border: 1px solid #999; padding: .2rem .5rem; text-align: left; vertical-align: top; }
+th { background: #eee; }
+td.n { text-align: right; white-space: nowrap; }
+td.t { min-width: 8rem; }
+@media print { body { max-width: none; padding: 0; font-size: 10pt; } nav { display: none; }
+  h2 { break-after: avoid; } tr { break-inside: avoid; } thead { display: table-header-group; }
+  .wide { overflow: visible; } th { background: none; } }
+"""
+
+
+@dataclass(frozen=True, slots=True)
+class Picture:
+    """A figure with its title and a text that says what it shows."""
+
+    title: str
+    figure: Figure
+    text: str  # alternative for those who do not see it
+
+
+@dataclass(frozen=True, slots=True)
+class Grid:
+    """A table of texts; a cell that reads as a number is set to the right."""
+
+    title: str
+    heads: tuple[str, ...]
+    rows: tuple[tuple[str, ...], ...]
+
+
+@dataclass(frozen=True, slots=True)
+class Section:
+    """A heading with paragraphs and then tables and pictures."""
+
+    title: str
+    paragraphs: tuple[str, ...] = ()
+    parts: tuple[Picture | Grid, ...] = ()
+
+
+def render(title: str, lead: Sequence[str], sections: Sequence[Section]) -> str:
+    """Give the whole page.
+
+    Parameters
+    ----------
+    title : str
+        Of the page.
+    lead : sequence of str
+        Paragraphs before the first heading.
+    sections : sequence of Section
+        In order.
+
+    Returns
+    -------
+    page : str
+        HTML that makes no request.
+    """
+    entries = "".join(f'<li><a href="#s{i}">{escape(s.title)}</a></li>' for i, s in enumerate(sections))
+    body = "".join(_section(section, f"s{i}") for i, section in enumerate(sections))
+    return (
+        '<!DOCTYPE html>\n<html lang="en">\n<head>\n<meta charset="utf-8">\n'
+        '<meta name="viewport" content="width=device-width, initial-scale=1">\n'
+        '<meta http-equiv="Content-Security-Policy" content="default-src \'none\'; img-src data:; '
+        "style-src 'unsafe-inline'\">\n"
+        f"<title>{escape(title)}</title>\n<style>{_STYLE}</style>\n</head>\n<body>\n<main>\n"
+        f"<h1>{escape(title)}</h1>\n{_paragraphs(lead)}"
+        f'<nav aria-label="Contents"><ul>{entries}</ul></nav>\n{body}</main>\n</body>\n</html>\n'
+    )
+
+
+def _paragraphs(texts: Sequence[str]) -> str:
+    return "".join(f"<p>{escape(text)}</p>\n" for text in texts)
+
+
+def _section(section: Section, name: str) -> str:
+    parts = "".join(_picture(p) if isinstance(p, Picture) else _grid(p) for p in section.parts)
+    head = f'<section id="{name}">\n<h2>{escape(section.title)}</h2>\n'
+    return f"{head}{_paragraphs(section.paragraphs)}{parts}</section>\n"
+
+
+def _grid(grid: Grid) -> str:
+    heads = "".join(f'<th scope="col">{escape(head)}</th>' for head in grid.heads)
+    rows = "".join(f"<tr>{''.join(map(_cell, row))}</tr>\n" for row in grid.rows)
+    return (
+        f'<div class="wide"><table><caption>{escape(grid.title)}</caption>\n<thead><tr>{heads}</tr></thead>\n'
+        f"<tbody>\n{rows}</tbody></table></div>\n"
+    )
+
+
+def _cell(text: str) -> str:
+    first = text.strip().lstrip("+-")[:1]
+    kind = "n" if first.isdigit() and len(text) < 24 else "t"
+    return f'<td class="{kind}">{escape(text)}</td>'
+
+
+def _picture(picture: Picture) -> str:
+    data = base64.b64encode(svg_of(picture.figure)).decode()
+    return (
+        f"<figure><figcaption>{escape(picture.title)}</figcaption>\n"
+        f'<img alt="{escape(picture.text)}" src="data:image/svg+xml;base64,{data}"></figure>\n'
+    )
+
+
+def svg_of(figure: Figure) -> bytes:
+    """Give a figure as SVG, the same bytes for the same figure.
+
+    Parameters
+    ----------
+    figure : Figure
+        Of matplotlib.
+
+    Returns
+    -------
+    svg : bytes
+        A document of its own.
+    """
+    import matplotlib
+
+    stream = io.BytesIO()
+    with matplotlib.rc_context({"svg.hashsalt": "fallrise"}):
+        figure.savefig(stream, format="svg", metadata={"Date": None})
+    return stream.getvalue()
