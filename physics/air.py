@@ -5,6 +5,9 @@ from __future__ import annotations
 import math
 from dataclasses import dataclass
 
+import numpy as np
+from numpy.typing import NDArray
+
 from physics.errors import PhysicsError
 
 # Reference pair of ISO 15900:2020, annex A (after Kim et al. 2005): dry air at 296.15 K and 101 325 Pa.
@@ -327,6 +330,40 @@ def density_cipm(temperature: float, pressure: float, *, vapour_fraction: float)
     compressibility = 1.0 - ratio * first + ratio**2 * (1.83e-11 - 0.765e-8 * x**2)
     molar_mass = MOLAR_MASS_DRY * (1.0 - x * (1.0 - MOLAR_MASS_WATER / MOLAR_MASS_DRY))
     return pressure * molar_mass / (compressibility * GAS_CONSTANT * temperature)
+
+
+def air_slopes(air: Air) -> NDArray[np.float64]:
+    """Logarithmic slopes of what follows from the state of the air.
+
+    Parameters
+    ----------
+    air : Air
+        The state.
+
+    Returns
+    -------
+    slopes : ndarray of shape (3, 3)
+        Derivatives of ln viscosity, ln mean free path and ln density (rows) by ln temperature, ln pressure and
+        relative humidity (columns; the last as a fraction, not logarithmic, since it may be 0). Differences over
+        1e-3, 1e-3 and 5e-3, inside the laws' range. A given viscosity has slopes of 0.
+    """
+    most = highest_humidity(air.temperature * 1.001, air.pressure * 0.999)  # where the moves below end
+    humidity = min(max(air.relative_humidity, 0.005), most - 0.005)
+    columns = []
+    for move in np.eye(3) * (1e-3, 1e-3, 5e-3):
+        ends = []
+        for sign in (1.0, -1.0):
+            t, p = air.temperature * (1.0 + sign * move[0]), air.pressure * (1.0 + sign * move[1])
+            t = min(max(t, TEMPERATURE_RANGE[0]), TEMPERATURE_RANGE[1])
+            p = min(max(p, PRESSURE_RANGE[0]), PRESSURE_RANGE[1])
+            state = moist_air(t, p, relative_humidity=humidity + sign * move[2])
+            place = math.log(t) + math.log(p) + state.relative_humidity  # one of the three moves at a time
+            ends.append((place, np.log((state.viscosity, state.mean_free_path, state.density))))
+        columns.append((ends[0][1] - ends[1][1]) / (ends[0][0] - ends[1][0]))
+    slopes = np.stack(columns, axis=1)
+    if air.viscosity_origin == "given":
+        slopes[0] = 0.0
+    return slopes
 
 
 def _saturated_fraction(temperature: float, pressure: float) -> float:

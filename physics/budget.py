@@ -17,14 +17,7 @@ import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from physics import drag
-from physics.air import (
-    PRESSURE_RANGE,
-    TEMPERATURE_RANGE,
-    Air,
-    dry_mean_free_path,
-    highest_humidity,
-    moist_air,
-)
+from physics.air import PRESSURE_RANGE, Air, air_slopes, dry_mean_free_path, moist_air
 from physics.droplet import BOLTZMANN, Conditions, diffusion, droplet_mobility, fall_speed
 from physics.errors import PhysicsError
 from physics.propagation import MonteCarlo, Trials, joint_normal, monte_carlo, normal, validate_linear
@@ -202,7 +195,9 @@ def shared_effect(
     changes = np.stack(
         np.broadcast_arrays(np.log1p(e["temperature"]), np.log1p(e["pressure"]), e["relative_humidity"])
     )
-    log_viscosity, log_path, log_density = np.tensordot(_air_slopes(model), changes, axes=(1, 0))
+    log_viscosity, log_path, log_density = np.tensordot(
+        air_slopes(model.air or _dry_air(c)), changes, axes=(1, 0)
+    )
     viscosity = c.viscosity * np.exp(log_viscosity) * (1.0 + e["viscosity_model"])
     gas = {"mean_free_path": c.mean_free_path * np.exp(log_path), "slip": c.slip}
     gas["slip_factor"] = 1.0 + e["slip_model"]
@@ -439,31 +434,6 @@ def explaining_errors(ratio: float, budget: Budget) -> dict[str, float]:
         for name, slope in relative.items()
         if name in SHARED_UNITS and abs(slope) >= 0.05
     }
-
-
-def _air_slopes(model: DropletModel) -> Floats:
-    """Slopes of ln (viscosity, mean free path, density) by (ln T, ln p, RH), shape (3, 3)."""
-    air = model.air or _dry_air(model.conditions)
-    most = highest_humidity(air.temperature * 1.001, air.pressure * 0.999)  # where the moves below end
-    humidity = min(max(air.relative_humidity, 0.005), most - 0.005)
-    columns = []
-    for move in np.eye(3) * (1e-3, 1e-3, 5e-3):
-        ends = []
-        for sign in (1.0, -1.0):
-            t, p = air.temperature * (1.0 + sign * move[0]), air.pressure * (1.0 + sign * move[1])
-            t, p = (
-                min(max(t, TEMPERATURE_RANGE[0]), TEMPERATURE_RANGE[1]),
-                min(max(p, PRESSURE_RANGE[0]), PRESSURE_RANGE[1]),
-            )
-            state = moist_air(t, p, relative_humidity=humidity + sign * move[2])
-            position = math.log(t), math.log(p), state.relative_humidity
-            ends.append((position, (state.viscosity, state.mean_free_path, state.density)))
-        width = sum(ends[0][0]) - sum(ends[1][0])
-        columns.append(np.log(np.asarray(ends[0][1]) / np.asarray(ends[1][1])) / width)
-    slopes = np.stack(columns, axis=1)
-    if air.viscosity_origin == "given":
-        slopes[0] = 0.0
-    return slopes
 
 
 def _dry_air(conditions: Conditions) -> Air:
