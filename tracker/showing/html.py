@@ -20,7 +20,7 @@ h1 { font-size: 1.6rem; line-height: 1.2; margin: .5rem 0; }
 h2 { font-size: 1.25rem; margin: 2rem 0 .5rem; border-bottom: 1px solid #888; }
 nav ul { padding-left: 1.2rem; columns: 2 14rem; }
 figure { margin: 1rem 0; break-inside: avoid; }
-figure img { width: 100%; height: auto; }
+figure img { width: 100%; min-width: 34rem; height: auto; }
 figcaption { font-weight: 600; }
 .wide { overflow-x: auto; }
 table { border-collapse: collapse; margin: .75rem 0; font-variant-numeric: tabular-nums; overflow-wrap: normal; }
@@ -28,10 +28,10 @@ caption { text-align: left; font-weight: 600; padding: .25rem 0; }
 th, td { border: 1px solid #999; padding: .2rem .5rem; text-align: left; vertical-align: top; }
 th { background: #eee; }
 td.n { text-align: right; white-space: nowrap; }
-td.t { min-width: 8rem; }
+td.l { min-width: 16rem; }
 @media print { body { max-width: none; padding: 0; font-size: 10pt; } nav { display: none; }
   h2 { break-after: avoid; } tr { break-inside: avoid; } thead { display: table-header-group; }
-  .wide { overflow: visible; } th { background: none; } }
+  .wide { overflow: visible; } th { background: none; } figure img { min-width: 0; } td.l { min-width: 0; } }
 """
 
 
@@ -113,7 +113,7 @@ def _grid(grid: Grid) -> str:
 
 def _cell(text: str) -> str:
     first = text.strip().lstrip("+-")[:1]
-    kind = "n" if first.isdigit() and len(text) < 24 else "t"
+    kind = "n" if first.isdigit() and len(text) < 24 else "l" if len(text) > 40 else "t"
     return f'<td class="{kind}">{escape(text)}</td>'
 
 
@@ -121,7 +121,7 @@ def _picture(picture: Picture) -> str:
     data = base64.b64encode(svg_of(picture.figure)).decode()
     return (
         f"<figure><figcaption>{escape(picture.title)}</figcaption>\n"
-        f'<img alt="{escape(picture.text)}" src="data:image/svg+xml;base64,{data}"></figure>\n'
+        f'<div class="wide"><img alt="{escape(picture.text)}" src="data:image/svg+xml;base64,{data}"></div></figure>\n'
     )
 
 

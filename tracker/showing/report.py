@@ -121,17 +121,22 @@ def bars_figure(counts: Mapping[str, int], *, title: str, xlabel: str) -> Figure
     figure : Figure
         One pair of axes.
     """
+    from matplotlib.ticker import MaxNLocator
+
     figure = new_figure(9, 1.2 + 0.3 * max(1, len(counts)))
     axes = figure.subplots()
     bars = axes.barh([label_of(name) for name in counts], list(counts.values()), color="0.7", edgecolor="k")
     axes.bar_label(bars, padding=3)
+    axes.xaxis.set_major_locator(MaxNLocator(integer=True))
     axes.invert_yaxis()
     axes.margins(x=0.12)
     axes.set(title=title, xlabel=xlabel)
     return figure
 
 
-def distribution_figure(groups: Mapping[str, NDArray[np.float64]], *, title: str, xlabel: str) -> Figure:
+def distribution_figure(
+    groups: Mapping[str, NDArray[np.float64]], *, title: str, xlabel: str, step: float | None = None
+) -> Figure:
     """Draw histograms of one quantity, stacked, one hatching a group.
 
     Parameters
@@ -140,6 +145,8 @@ def distribution_figure(groups: Mapping[str, NDArray[np.float64]], *, title: str
         Values of each group, finite, in the unit of the label.
     title, xlabel : str
         Words for title and axis.
+    step : float, optional
+        Width of a bin, the middle of one being 0; None: by the number of values.
 
     Returns
     -------
@@ -151,7 +158,7 @@ def distribution_figure(groups: Mapping[str, NDArray[np.float64]], *, title: str
     values = [np.asarray(v, float) for v in groups.values()]
     joined = np.concatenate([*values, np.empty(0)])
     if len(joined):
-        edges = np.histogram_bin_edges(joined, bins=min(40, max(8, int(np.sqrt(len(joined)) * 2)))).tolist()
+        edges = _bin_edges(joined, step).tolist()
         drawn: Any = axes.hist(values, edges, stacked=True, color=["0.85"] * len(values), edgecolor="k", lw=0.6,
                                label=[label_of(name) for name in groups])  # fmt: skip
         containers = drawn[2] if len(values) > 1 else [drawn[2]]
@@ -162,6 +169,15 @@ def distribution_figure(groups: Mapping[str, NDArray[np.float64]], *, title: str
             axes.legend(fontsize="small")
     axes.set(title=title, xlabel=xlabel, ylabel="droplets")
     return figure
+
+
+def _bin_edges(values: NDArray[np.float64], step: float | None) -> NDArray[np.float64]:
+    """Edges of at most 160 bins."""
+    if step is not None and np.ptp(values) / step < 160:
+        return np.asarray(
+            step * np.arange(np.floor(values.min() / step - 0.5), values.max() / step + 2) + step / 2
+        )
+    return np.histogram_bin_edges(values, bins=min(40, max(8, int(np.sqrt(len(values)) * 2))))
 
 
 def reason_counts(droplets: pd.DataFrame) -> Counter[str]:

@@ -209,7 +209,8 @@ def _unit_sections(results: Mapping[str, Result], days: Mapping[str, date]) -> l
     value = (f"Charge unit {unit.unit:.5e} C, own uncertainty {unit.unit_own_std:.1e} C, shared "
              f"{unit.unit_shared_std:.1e} C; {unit.over_e:.4f} of e "
              f"with a standard uncertainty of {unit.over_e_std:.4f}.")  # fmt: skip
-    told = (value, unit.reason) if unit.resolved else (unit.reason,)
+    reason = f"{unit.reason[:1].upper()}{unit.reason[1:]}."
+    told = (value, reason) if unit.resolved else (reason,)
     skipped = tuple(f"Left out {Path(name).name}: {reason}." for name, reason in pool.skipped)
     comb = Picture("Charges over the unit, the comb, and the statistic",
                    unit_figure(unit, charge_groups(pool), bench_ratios(pool)), " ".join(told))  # fmt: skip
@@ -218,7 +219,7 @@ def _unit_sections(results: Mapping[str, Result], days: Mapping[str, date]) -> l
         Section("What it says of each bench", tuple(bench.sentence for bench in pool.benches), (bench_grid(pool),)),
         drift_section(drifts),
         Section("Uncertainty budget", ("Relative standard uncertainty of all charges of a bench by what its droplets "
-                "share; the own part of each droplet comes on top.",), (budget_grid(pool),)),
+                "share; the own part of each droplet comes on top.", *_unstated(pool)), (budget_grid(pool),)),
     ]  # fmt: skip
 
 
@@ -315,10 +316,24 @@ def budget_grid(pool: Pool) -> Grid:
     rows = [
         (bench.label, row.input.replace("_", " "), f"{row.value:.6g}", row.unit, f"{row.std:.2g}",
          f"{100 * abs(row.sensitivity * row.std):.3f} %", f"{100 * row.share:.1f} %")
-        for bench in pool.benches for row in bench.budget.rows if row.input != "own"
+        for bench in pool.benches for row in bench.budget.rows if row.input != "own" and row.std > 0
     ]  # fmt: skip
     heads = ("bench", "input", "value", "unit", "standard uncertainty", "of the charge", "share")
     return Grid("Shared inputs", heads, tuple(rows))
+
+
+def _unstated(pool: Pool) -> list[str]:
+    """Say which inputs count as exact, since the bench file gives them no uncertainty."""
+    told = []
+    for bench in pool.benches:
+        exact = [
+            row.input.replace("_", " ") for row in bench.budget.rows if row.std == 0 and row.input != "own"
+        ]
+        if exact:
+            told.append(
+                f"{bench.label}: taken as exact, since the bench file states no uncertainty: {', '.join(exact)}."
+            )
+    return told
 
 
 def _reasons_section(droplets: pd.DataFrame) -> Section:
@@ -354,7 +369,9 @@ def _distribution_section(droplets: pd.DataFrame) -> Section:
             text = (f"{len(joined)} kept droplets: median {middle:.3g} {unit}, 5 % below {low:.3g} {unit}, "
                     f"5 % above {high:.3g} {unit}.")  # fmt: skip
         title = f"Distribution of the {name}"
-        figure = distribution_figure(groups, title=title, xlabel=f"{name} / {unit}")
+        figure = distribution_figure(
+            groups, title=title, xlabel=f"{name} / {unit}", step=0.25 if unit == "e" else None
+        )
         parts.append(Picture(title, figure, text))
     return Section("Radii and charges", (), tuple(parts))
 
