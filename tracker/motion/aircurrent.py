@@ -3,15 +3,48 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 
-from physics.droplet import Conditions
-from physics.motion import FreeFit, Increments, air_current
+from physics.droplet import Conditions, diffusion, radius_from_fall_speed
+from physics.errors import PhysicsError
+from physics.motion import MIN_INCREMENTS, FreeFit, Increments, air_current, free_fit, whitened
+from tracker.motion.velocity import Path
 from tracker.records import FloatArray
 
 LEAST_PRIOR = 1e-8  # m/s; slower air moves no droplet by more than it diffuses in minutes
+KNOTS_APART = 3.0  # s between the knots of a changing current: convection in a cell takes longer to turn
+LEAST_DROPLETS = 4  # with fewer, what they share cannot be told from what each does
+CHANGING = 1e-3  # false alarms per recording of a changing current
+RIDGE = 1e-4  # m/s, prior width of the change of the current
+SOUND = (
+    4.0  # standard deviations by which Brownian motion may miss the fall speed in a droplet that takes part
+)
+
+
+@dataclass(frozen=True, slots=True)
+class Drift:
+    """Change of the air's speed about its mean over the recording: straight lines between knots."""
+
+    times: FloatArray = field(default_factory=lambda: np.empty(0))  # (K,) s
+    down: FloatArray = field(default_factory=lambda: np.empty(0))  # (K,) m/s
+    side: FloatArray = field(default_factory=lambda: np.empty(0))  # (K,) m/s
+    covariance: FloatArray = field(default_factory=lambda: np.empty((0, 0)))  # (m/s)^2 of `down`
+
+    def taken_out(self, steps: Increments, times: FloatArray) -> Increments:
+        """Give the steps as in air that keeps its mean speed; `times` are those of the sightings."""
+        if not len(self.times):
+            return steps
+        hats = _hats(steps, times, self.times)
+        return replace(steps, down=steps.down - hats @ self.down, side=steps.side - hats @ self.side)
+
+    def std_of_mean(self, steps: Increments, times: FloatArray) -> float:
+        """Standard uncertainty in m/s of the drift's mean over the time of one droplet."""
+        if not len(self.times):
+            return 0.0
+        share = _hats(steps, times, self.times).sum(axis=0) / np.sum(steps.dt)
+        return float(np.sqrt(max(share @ self.covariance @ share, 0.0)))
 
 
 @dataclass(frozen=True, slots=True)
@@ -23,19 +56,22 @@ class AirCurrent:
     side: float  # m/s
     side_std: float  # m/s
     droplets: int  # that it rests on
+    drift: Drift = field(default_factory=Drift)
 
-    def plain(self) -> dict[str, float | int]:
+    def plain(self) -> dict[str, object]:
         """Give plain values for provenance."""
         return {
             "down_m_s": self.down, "down_std_m_s": self.down_std, "side_m_s": self.side,
-            "side_std_m_s": self.side_std, "droplets": self.droplets,
+            "side_std_m_s": self.side_std, "droplets": self.droplets, "changing": bool(len(self.drift.times)),
+            "drift": {"time_s": self.drift.times.tolist(), "down_m_s": self.drift.down.tolist(),
+                      "side_m_s": self.drift.side.tolist()},
         }  # fmt: skip
 
 
 def find_air_current(
     steps: Sequence[Increments], fits: Sequence[FreeFit], conditions: Conditions
 ) -> AirCurrent:
-    """Find the air's speed from what all droplets share.
+    """Find the air's steady speed from what all droplets share.
 
     Parameters
     ----------
@@ -51,7 +87,8 @@ def find_air_current(
     current : AirCurrent
         Across gravity the weighted mean of the droplets' side speeds. Along gravity the air adds to every fall
         speed; only Brownian motion tells the two apart, and weakly, so the side speed serves as the prior's
-        width: air in a cell moves about as fast along as across.
+        width: air in a cell moves about as fast along as across. Droplets whose Brownian motion contradicts
+        their fall speed by more than the prior allows take no part.
     """
     if not fits:
         return AirCurrent(0.0, 0.0, 0.0, 0.0, 0)
@@ -59,8 +96,21 @@ def find_air_current(
     stds = np.array([fit.side_speed_std for fit in fits])
     side, side_std = robust_mean(speeds, stds)
     prior = max(float(np.hypot(side, side_std)), LEAST_PRIOR)
-    down, down_std = air_current(steps, conditions, prior_std=prior)
-    return AirCurrent(down, down_std, side, side_std, len(fits))
+    sound = [s for s, fit in zip(steps, fits, strict=True) if _is_sound(fit, prior, conditions)]
+    down, down_std = air_current(sound, conditions, prior_std=prior)
+    return AirCurrent(down, down_std, side, side_std, len(sound))
+
+
+def _is_sound(fit: FreeFit, prior: float, conditions: Conditions) -> bool:
+    """Whether Brownian motion and fall speed can belong to one sphere of the oil in air within the prior."""
+    try:
+        law = float(diffusion(radius_from_fall_speed(fit.fall_speed, conditions), conditions))
+    except PhysicsError:
+        return False
+    vague = (
+        0.6 * float(np.hypot(fit.fall_speed_std, 2 * prior)) / fit.fall_speed
+    )  # d ln D / d ln v is 0.5 to 0.6
+    return bool(abs(np.log(fit.diffusion / law)) < SOUND * float(np.hypot(fit.log_diffusion_std, vague)))
 
 
 def robust_mean(values: FloatArray, stds: FloatArray) -> tuple[float, float]:
@@ -88,3 +138,113 @@ def robust_mean(values: FloatArray, stds: FloatArray) -> tuple[float, float]:
             break
         mean = new
     return mean, std
+
+
+def find_drift(paths: Sequence[Path]) -> Drift:
+    """Find how the air's speed changes over a recording, if it does.
+
+    Parameters
+    ----------
+    paths : sequence of Path
+        Of all droplets.
+
+    Returns
+    -------
+    drift : Drift
+        Without knots if the droplets share no change of speed, which is tested at 1 in 1000 across gravity,
+        where no charge acts, and along it with the quarter of the droplets that change most left out.
+
+    Notes
+    -----
+    Generalised least squares: every droplet keeps its own fall speed, drive and side speed, and all share one
+    speed of the air that runs in straight lines between knots about 3 s apart. Its mean over the recording
+    cannot be told from the fall speeds and is 0 here.
+    """
+    usable = [
+        path for path in paths if len(path) >= MIN_INCREMENTS and len(path.steps()) >= 2 * MIN_INCREMENTS
+    ]
+    if len(usable) < LEAST_DROPLETS:
+        return Drift()
+    begin, end = min(path.times[0] for path in usable), max(path.times[-1] for path in usable)
+    count = int((end - begin) / KNOTS_APART) + 1
+    if count < 3:
+        return Drift()
+    knots = np.linspace(begin, end, count)
+    terms = [_terms(path, knots) for path in usable]
+    side = _Shared.of([term[1] for term in terms])
+    own = np.array([term[0].chi_square() for term in terms])
+    calm = np.argsort(own)[: max(LEAST_DROPLETS, int(0.75 * len(own)))]
+    down = _Shared.of([terms[i][0] for i in calm])
+    if not (side.significant() or down.significant()):
+        return Drift()
+    return Drift(knots, down.solution(), side.solution(), down.covariance())
+
+
+@dataclass(frozen=True, slots=True)
+class _Shared:
+    """Normal equations of a speed at knots, what each droplet does by itself projected out."""
+
+    matrix: FloatArray  # (K, K)
+    right: FloatArray  # (K,)
+
+    @classmethod
+    def of(cls, terms: Sequence[_Shared]) -> _Shared:
+        """Add the equations of several droplets."""
+        return cls(np.sum([t.matrix for t in terms], axis=0), np.sum([t.right for t in terms], axis=0))
+
+    def covariance(self) -> FloatArray:
+        """Covariance of the speeds at the knots, their mean taken out."""
+        inverse = np.linalg.inv(self.matrix + np.eye(len(self.right)) / RIDGE**2)
+        centre = np.eye(len(self.right)) - 1 / len(self.right)
+        return np.asarray(centre @ inverse @ centre)
+
+    def solution(self) -> FloatArray:
+        """Speeds at the knots, their mean taken out."""
+        found = np.linalg.solve(self.matrix + np.eye(len(self.right)) / RIDGE**2, self.right)
+        return np.asarray(found - found.mean())
+
+    def chi_square(self) -> float:
+        """Chi-square that the shared speed explains."""
+        return float(self.right @ np.linalg.pinv(self.matrix, rcond=1e-8, hermitian=True) @ self.right)
+
+    def significant(self) -> bool:
+        """Whether chance explains it in fewer than one recording in a thousand."""
+        from scipy.stats import chi2
+
+        rank = int(
+            np.linalg.matrix_rank(self.matrix, tol=1e-8 * np.linalg.norm(self.matrix, 2), hermitian=True)
+        )
+        return rank > 0 and bool(chi2.sf(self.chi_square(), rank) < CHANGING)
+
+
+def _terms(path: Path, knots: FloatArray) -> tuple[_Shared, _Shared]:
+    """Give one droplet's equations along and across gravity."""
+    steps = path.steps()
+    fit = free_fit(steps)
+    rho = float(np.exp(fit.log_rho))
+    hats = _hats(steps, np.asarray(path.times), knots)
+    own = np.column_stack([steps.dt, steps.impulse]) if np.any(steps.impulse) else steps.dt[:, None]
+    down = whitened(steps, diffusion=fit.diffusion, rho=rho, columns=np.column_stack([own, hats]))
+    across = np.column_stack([steps.dt, hats])
+    side = whitened(steps, diffusion=fit.diffusion, rho=rho, columns=across, axis="side")
+    return _projected(down.columns, down.data, own.shape[1]), _projected(side.columns, side.data, 1)
+
+
+def _projected(columns: FloatArray, data: FloatArray, own: int) -> _Shared:
+    """Project the first columns out of the others and the data."""
+    basis, _ = np.linalg.qr(columns[:, :own])
+    rest = columns[:, own:] - basis @ (basis.T @ columns[:, own:])
+    return _Shared(rest.T @ rest, rest.T @ data)
+
+
+def _hats(steps: Increments, times: FloatArray, knots: FloatArray) -> FloatArray:
+    """Displacement of each step by unit speed at each knot, straight lines between (steps, K)."""
+    middle = times[steps.first] + 0.5 * (steps.dt + steps.exposure)
+    place = np.clip((middle - knots[0]) / (knots[1] - knots[0]), 0, len(knots) - 1)
+    left = np.minimum(place.astype(np.int64), len(knots) - 2)
+    share = place - left
+    hats = np.zeros((len(middle), len(knots)))
+    rows = np.arange(len(middle))
+    hats[rows, left] = (1 - share) * steps.dt
+    hats[rows, left + 1] = share * steps.dt
+    return hats

@@ -20,15 +20,17 @@ from physics.motion import (
 )
 from physics.quanta import ChargeNumbers, ChargeUnit, charge_sample, number_probabilities, pooled_charge_unit
 from tracker.bench import Bench
-from tracker.motion.aircurrent import AirCurrent, find_air_current
+from tracker.motion.aircurrent import AirCurrent, Drift, find_air_current, find_drift
 from tracker.motion.changes import History, find_changes
 from tracker.motion.decided import apply_decisions
 from tracker.motion.field import exposure_of
-from tracker.motion.judge import Balance, Facts, balances, reasons_of
+from tracker.motion.judge import Balance, Facts, balances, is_stuck, reasons_of
 from tracker.motion.rows import NAN, ChangeRow, DropletRow, SegmentRow
 from tracker.motion.velocity import Path, fit_orientation, paths, without_outliers
 from tracker.motion.verdict import REASONS, ordered, verdict_of
 from tracker.records import Decision, Field, FloatArray, IntArray, Recording, Settings, Tracks, readonly
+
+LAMP_RIM = 4.0  # px about the lamp's rectangle that its light blurs into
 
 
 @dataclass(frozen=True, slots=True)
@@ -97,15 +99,19 @@ def evaluate_droplets(
     """
     exposure, conditions = exposure_of(bench, recording), bench.conditions
     decided = apply_decisions(tracks, recording, decisions)
+    left_out = decided.trimmed | _in_lamp(decided.tracks, bench)
     orientation = fit_orientation(
         decided.tracks, recording, field=field, scale=bench.scale, exposure=exposure, down_deg=bench.down_deg
     )
     found = paths(
         decided.tracks, recording, field=field, scale=bench.scale, exposure=exposure, orientation=orientation,
-        cuts=cuts, left_out=decided.trimmed,
+        cuts=cuts, left_out=left_out,
     )  # fmt: skip
-    droplets = [_histories(path, conditions, settings) for path in found]
-    air = _air(droplets, conditions)
+    cleaned = [_cleaned(path, settings) for path in found]
+    moving = [droplet.path for droplet in cleaned if not is_stuck(droplet.path, conditions)]
+    drift = find_drift([path for path in moving if len(path) >= settings.min_frames])
+    droplets = [_with_history(droplet, conditions, settings, drift) for droplet in cleaned]
+    air = replace(_air(droplets, conditions), drift=drift)
     droplets = _posteriors(droplets, bench, air)
     shared = _SharedPart.of(droplets, bench)
     numbers = _numbers(droplets, shared)
@@ -138,14 +144,33 @@ def _exposure_warning(bench: Bench, exposure: float) -> tuple[str, ...]:
     return (f"camera.exposure is not stated: half the frame interval, {exposure * 1e3:.3g} ms, is assumed",)
 
 
-def _histories(path: Path, conditions: Conditions, settings: Settings) -> _Droplet:
-    """Leave out what does not belong to one droplet and look for what happened to it."""
+def _in_lamp(tracks: Tracks, bench: Bench) -> np.ndarray:
+    """Mark sightings inside the lamp's rectangle: its light, no droplets."""
+    if bench.field.lamp is None:
+        return np.zeros(len(tracks), bool)
+    left, top, width, height = bench.field.lamp
+    x, y = tracks.sightings.x, tracks.sightings.y
+    inside = (x > left - LAMP_RIM) & (x < left + width + LAMP_RIM)
+    return np.asarray(inside & (y > top - LAMP_RIM) & (y < top + height + LAMP_RIM))
+
+
+def _cleaned(path: Path, settings: Settings) -> _Droplet:
+    """Leave out what does not belong to one droplet."""
     if len(path) < max(settings.min_frames, 2):
         return _Droplet(path, 0, (), None)
-    path, outliers, hops = without_outliers(path)
-    if len(path) < settings.min_frames or len(path.steps()) < MIN_INCREMENTS:
-        return _Droplet(path, outliers, hops, None)
-    return _Droplet(path, outliers, hops, find_changes(path.steps(), np.asarray(path.times), conditions))
+    return _Droplet(*without_outliers(path), None)
+
+
+def _with_history(droplet: _Droplet, conditions: Conditions, settings: Settings, drift: Drift) -> _Droplet:
+    """Look for what happened to a droplet, the air's change of speed taken out."""
+    path = droplet.path
+    if len(path) < max(settings.min_frames, 2) or is_stuck(path, conditions):
+        return droplet
+    steps = path.steps()
+    if len(steps) < MIN_INCREMENTS:
+        return droplet
+    times = np.asarray(path.times)
+    return replace(droplet, history=find_changes(drift.taken_out(steps, times), times, conditions))
 
 
 def _air(droplets: list[_Droplet], conditions: Conditions) -> AirCurrent:
@@ -159,14 +184,18 @@ def _posteriors(droplets: list[_Droplet], bench: Bench, air: AirCurrent) -> list
     """Posterior of radius and charges of every droplet that has a history."""
     conditions = bench.conditions
     responses = input_responses(conditions, viscosity_given="air.viscosity" in bench.viscosity.origin)
-    return [
-        d if d.history is None else replace(
-            d, posterior=droplet_posterior(
-                d.history.steps, conditions, air_speed=air.down, air_speed_std=air.down_std, responses=responses
+    done = []
+    for d in droplets:
+        if d.history is not None:
+            std = float(
+                np.hypot(air.down_std, air.drift.std_of_mean(d.history.steps, np.asarray(d.path.times)))
             )
-        )
-        for d in droplets
-    ]  # fmt: skip
+            found = droplet_posterior(
+                d.history.steps, conditions, air_speed=air.down, air_speed_std=std, responses=responses
+            )
+            d = replace(d, posterior=found)  # noqa: PLW2901 - the same droplet, known better
+        done.append(d)
+    return done
 
 
 def _charge(droplet: _Droplet) -> tuple[float, float]:

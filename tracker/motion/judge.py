@@ -75,7 +75,7 @@ def reasons_of(facts: Facts, air: AirCurrent, rests: Sequence[Balance], settings
         Keys of `tracker.motion.verdict.REASONS`.
     """
     codes = [code for code, flag, most in SHARES if _share(facts.flags, flag) > most]
-    if _stuck(facts):
+    if is_stuck(facts.path, facts.conditions):
         return [*codes, "stuck"]
     history, posterior = facts.history, facts.posterior
     if len(facts.path) < settings.min_frames or history is None or posterior is None:
@@ -96,15 +96,27 @@ def _share(flags: IntArray, flag: Flag) -> float:
     return float(np.mean((flags & int(flag)) != 0)) if len(flags) else 0.0
 
 
-def _stuck(facts: Facts) -> bool:
-    """Whether the place spreads less than Brownian motion of a large droplet makes it."""
-    path = facts.path
+def is_stuck(path: Path, conditions: Conditions) -> bool:
+    """Tell whether a place spreads less than Brownian motion of a large droplet makes it.
+
+    Parameters
+    ----------
+    path : Path
+        Of one track.
+    conditions : Conditions
+        Of the bench.
+
+    Returns
+    -------
+    stuck : bool
+        True for dirt on a window or a bright pixel; False for a track too short to tell.
+    """
     if len(path) < MIN_INCREMENTS:
         return False
     spread = float(np.var(path.down) + np.var(path.side)) / 2
     # A diffusing place has the variance D T / 3 about its mean over a time T.
     apparent = 3 * spread / float(path.times[-1] - path.times[0])
-    return apparent < STUCK_SHARE * float(diffusion(LARGEST_RADIUS, facts.conditions))
+    return apparent < STUCK_SHARE * float(diffusion(LARGEST_RADIUS, conditions))
 
 
 def _speed_codes(facts: Facts, history: History, posterior: DropletPosterior, air: AirCurrent) -> list[str]:
