@@ -86,9 +86,9 @@ def _settings(stored: dict[str, Any]) -> Settings:
 
 def _present_bench(old: Result, recording: Recording, bench: Path | str | None) -> Bench:
     """The bench as its file says now: the named one, the one used before, or the one by the recording's place."""
-    stored = [Path(file) for file in old.recording["bench"]["files"]]
+    stored = [(old.folder or Path()) / file for file in old.recording["bench"]["files"]]
     if bench is None and stored and stored[0].is_file():
-        bench = stored[0]
+        bench = stored[0].resolve()
     try:
         return load_bench(bench, recording=recording.path)
     except BenchError as error:

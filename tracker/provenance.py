@@ -66,7 +66,7 @@ def assemble(
         "path": os.path.relpath(recording.path.absolute(), folder.absolute()),
         "sha256": recording.sha256,
         "frames": frames_json(recording),
-        "bench": bench_json(bench),
+        "bench": bench_json(bench, folder),
         "scale": scale_to_json(bench.scale),
         "air": {
             "viscosity_pa_s": bench.viscosity.value, "viscosity_std_pa_s": bench.viscosity.std,
@@ -260,13 +260,15 @@ def field_from_json(values: dict[str, Any]) -> Field:
     )  # fmt: skip
 
 
-def bench_json(bench: Bench) -> dict[str, Any]:
+def bench_json(bench: Bench, folder: Path) -> dict[str, Any]:
     """Describe a bench in SI, with uncertainties and where each value came from.
 
     Parameters
     ----------
     bench : Bench
         As it was used.
+    folder : Path
+        Result folder, to which the paths of the bench files are written relative.
 
     Returns
     -------
@@ -286,7 +288,7 @@ def bench_json(bench: Bench) -> dict[str, Any]:
                 "unit": unit,
                 "origin": measured.origin,
             }
-    return {"name": bench.name, "files": [str(Path(file).absolute()) for file in bench.files], "digest": bench.digest,
+    return {"name": bench.name, "files": [os.path.relpath(Path(file).absolute(), folder.absolute()) for file in bench.files], "digest": bench.digest,
             "slip": bench.slip, "down_deg": bench.down_deg, "binning": bench.binning,
             "frame_rate_hz": bench.frame_rate, "voltage_rel_std": bench.voltage_rel_std, **quantities}  # fmt: skip
 

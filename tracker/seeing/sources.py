@@ -51,6 +51,12 @@ class Form:
     interval: float  # s, nominal time between frames; 0 if unknown
     duration: float  # s, 0 if unknown
     frames: int  # as the container states, 0 if it does not
+    seekable: bool  # whether every frame can be had without decoding others
+
+    @property
+    def picture_bytes(self) -> int:
+        """Memory of one picture."""
+        return self.width * self.height * (1 if self.bit_depth <= 8 else 2)
 
 
 class Source(Protocol):
@@ -193,12 +199,13 @@ class VideoSource:
             black=float(_LIMITED_BLACK * scale) if limited else 0.0,
             full_scale=float(_LIMITED_WHITE * scale if limited else 2**bits - 1),
             codec=f"{stream.codec_context.name} {frame.format.name}", time_step=0.0 if self._rate else base,
-            interval=1 / rate if rate else 0.0, duration=duration, frames=int(stream.frames or 0),
+            interval=1 / rate if rate else 0.0, duration=duration, frames=int(stream.frames or 0), seekable=self._intra and not self._rate and duration > 0,
         )  # fmt: skip
 
     def _decode(self) -> Iterator[Any]:
         """Yield decoded frames; damaged packets are stepped over and counted."""
-        broken = 0
+        broken = count = 0
+        cut = False
         errors = self._av.error.FFmpegError
         packets = self._container.demux(self._stream)
         while True:
@@ -207,12 +214,19 @@ class VideoSource:
             except StopIteration:
                 break
             except errors:
-                self.warnings.append("the file ends in the middle of its data: measured as far as it goes")
+                cut = True
                 break
             try:
-                yield from packet.decode()
+                frames = packet.decode()
             except errors:
                 broken += 1
+                continue
+            count += len(frames)
+            yield from frames
+        stated = int(self._stream.frames or 0)
+        if cut or count + broken < stated - 1:
+            told = f", {count} of {stated} pictures," if stated else ""
+            self.warnings.append(f"the file ends in the middle of its data{told}: measured as far as it goes")
         if broken:
             self.warnings.append(f"{broken} damaged packets could not be decoded and were left out")
 
@@ -258,11 +272,6 @@ class VideoSource:
             picture, bits, _ = _luma(frame)
             if picture.shape == (self.form.height, self.form.width) and bits == self.form.bit_depth:
                 yield RawFrame(frame.pts * base, picture.copy())
-
-    @property
-    def seeks_anywhere(self) -> bool:
-        """Whether every frame can be had without decoding others."""
-        return self._intra and self._rate is None
 
     def close(self) -> None:
         """Give the file back."""
@@ -334,8 +343,6 @@ class StillSource:
             if picture is not None and picture.shape == (self.form.height, self.form.width):
                 yield RawFrame(index / self._rate, picture)
 
-    seeks_anywhere = True
-
     def close(self) -> None:
         """Nothing is held open."""
 
@@ -381,8 +388,6 @@ class TiffSource:
             if picture.shape == (self.form.height, self.form.width):
                 yield RawFrame(index / self._rate, picture)
 
-    seeks_anywhere = True
-
     def close(self) -> None:
         """Give the file back."""
         self._file.close()
@@ -418,5 +423,5 @@ def _still_form(first: Picture, codec: str, rate: float, count: int) -> Form:
     bits = first.dtype.itemsize * 8
     return Form(
         width=first.shape[1], height=first.shape[0], bit_depth=bits, black=0.0, full_scale=float(2**bits - 1),
-        codec=codec, time_step=0.0, interval=1 / rate, duration=count / rate, frames=count,
+        codec=codec, time_step=0.0, interval=1 / rate, duration=count / rate, frames=count, seekable=True,
     )  # fmt: skip
