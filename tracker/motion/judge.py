@@ -19,6 +19,7 @@ from tracker.records import Flag, IntArray, Settings
 Z_LIMIT = 3.29  # two-sided 1 in 1000
 LARGEST_RADIUS = 5e-6  # m, of a droplet that must not be taken for dirt
 STUCK_SHARE = 0.1  # of that droplet's diffusion
+MOST_APART = 4  # frames between sightings, in the median
 SURE = 0.95  # probability from which a charge number is called certain
 SHARES = (
     ("merged", Flag.MERGED, 0.2), ("out_of_focus", Flag.SOFT, 0.5), ("saturated", Flag.SATURATED, 0.5),
@@ -80,6 +81,8 @@ def reasons_of(facts: Facts, air: AirCurrent, rests: Sequence[Balance], settings
     history, posterior = facts.history, facts.posterior
     if len(facts.path) < settings.min_frames or history is None or posterior is None:
         return [*codes, "too_short"]
+    if np.median(np.diff(facts.path.frames)) > MOST_APART:
+        codes.append("sparse")
     if facts.hops:
         codes.append("hop")
     if facts.outliers > max(2, 0.05 * len(facts.flags)):

@@ -25,6 +25,8 @@ class Reason:
 _ALL = (
     Reason("too_short", "Seen too briefly for a charge.",
            "sightings used", "below 15, or below 8 steps between them", "none: counted, not estimated", "reject"),
+    Reason("sparse", "Seen only here and there: chance detections, no droplet.",
+           "median number of frames between sightings", "above 4", "none: counted, not estimated", "reject"),
     Reason("stuck", "Does not move: dirt on a window or a bright pixel, no droplet.",
            "variance of the place about its mean, times 3 over the time seen: an apparent D",
            "below a tenth of D at 5 um radius", "below 1e-4 for droplets below 3 um", "reject"),
