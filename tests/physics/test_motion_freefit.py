@@ -314,7 +314,7 @@ def test_stray_sightings_are_found_and_good_ones_kept():
         assert len(cleaned) == len(track.times) - 1 - len(marked)
     # two neighbours thrown alike are a jump to and fro, not two strays: one pair in 30 tracks is expected
     assert found >= 150 - 3 * 2
-    # 39 000 good places (two axes): 0.02 beyond 5, 0.1 beyond 4.7, the scale of a contaminated track being 6 % uncertain
+    # 39 000 good places (two axes): 0.02 beyond 5, 0.1 beyond 4.7; a track's scale is 6 % uncertain
     assert extra <= 1
 
 
