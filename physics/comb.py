@@ -13,6 +13,7 @@ References
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass, field
 
 import numpy as np
@@ -28,9 +29,10 @@ COARSE_PHASE_STD = (
     0.12  # floor of the phase's standard deviation in the scan, so that it misses no sharp peak
 )
 COARSE_PHASE_STEP = 0.08  # step of the scan: phase that the largest charge gains in it
-_SERIES_FROM = 0.3  # above this phase std the Fourier series is shorter than the sum over teeth
+_SERIES_FROM = 0.2  # phase std above which the Fourier series is shorter than the sum over teeth of one width
+_TEETH_TO = 0.3  # the same where each tooth has its own width, and only the sum is exact
 _GROUP = 32  # factors multiplied before a logarithm is taken; densities stay far below 1e9, so no overflow
-_CHUNK = 400_000  # elements of one work array
+_CHUNK = 24_000  # elements of one work array
 
 
 def _empty() -> FloatArray:
@@ -89,8 +91,8 @@ def wrapped_normal(phase: ArrayLike, std: ArrayLike) -> FloatArray:
 
     Notes
     -----
-    Sum over the two nearest teeth below a standard deviation of 0.3 (the third is below exp(-12.5) of the
-    height there), two terms of the Fourier series above (the third is below 4e-7).
+    Sum over the two nearest teeth below a standard deviation of 0.2, where the third is below 4e-6 of the highest;
+    three terms of the Fourier series above, where the fourth is below 7e-6.
 
     References
     ----------
@@ -98,20 +100,40 @@ def wrapped_normal(phase: ArrayLike, std: ArrayLike) -> FloatArray:
     """
     phase = np.asarray(phase, dtype=float)
     away = np.abs(phase - np.rint(phase))
-    return _density(away, np.asarray(std, dtype=float), None)
+    return _density(away, np.broadcast_to(np.asarray(std, dtype=float), away.shape))
 
 
-def _density(away: FloatArray, std: FloatArray, next_std: FloatArray | None) -> FloatArray:
-    """Wrapped normal density at `away` (0..0.5) from the nearest tooth; the next tooth may have its own std."""
-    peak = np.minimum(std, _SERIES_FROM)
-    second = peak if next_std is None else np.minimum(next_std, 2 * _SERIES_FROM)
-    out = _normal(away, peak) + _normal(1.0 - away, second)
-    wide = np.broadcast_to(std > _SERIES_FROM, out.shape)
+def _density(away: FloatArray, std: FloatArray) -> FloatArray:
+    """Wrapped normal density at `away` (0..0.5) from the nearest tooth, all teeth of one width."""
+    narrow = np.minimum(std, _SERIES_FROM)
+    out = _normal(away, narrow) + _normal(1.0 - away, narrow)
+    wide = std > _SERIES_FROM
     if wide.any():
-        h = np.exp(-2 * np.pi**2 * np.broadcast_to(std, out.shape)[wide] ** 2)
-        turn = 2 * np.pi * np.broadcast_to(away, out.shape)[wide]
-        out[wide] = 1.0 + 2 * h * np.cos(turn) + 2 * h**4 * np.cos(2 * turn)
-    return np.asarray(out)
+        out[wide] = _series(away[wide], std[wide])
+    return out
+
+
+def _series(away: FloatArray, std: FloatArray) -> FloatArray:
+    """Fourier series of the wrapped normal density."""
+    h = np.exp(-2 * np.pi**2 * std * std)
+    h4 = h * h * h * h
+    c = np.cos(2 * np.pi * away)  # cos 2x = 2 c^2 - 1, cos 3x = c (4 c^2 - 3)
+    c2 = c * c
+    return np.asarray(1.0 + 2 * (h * c + h4 * (2 * c2 - 1) + h4 * h4 * h * c * (4 * c2 - 3)))
+
+
+def _density_of_teeth(phase: FloatArray, width: Callable[[FloatArray], FloatArray]) -> FloatArray:
+    """Density of phases where each tooth has its own width; one width where the teeth have merged anyway."""
+    tooth = np.rint(phase)
+    middle = width(tooth)
+    out = np.zeros_like(phase)
+    for shift in (-1.0, 0.0, 1.0):
+        std = middle if shift == 0 else width(tooth + shift)
+        out += _normal(phase - tooth - shift, np.minimum(std, 2 * _TEETH_TO))
+    wide = middle > _TEETH_TO
+    if wide.any():
+        out[wide] = _series(np.abs(phase - tooth)[wide], middle[wide])
+    return out
 
 
 def _normal(x: FloatArray, std: FloatArray) -> FloatArray:
@@ -123,16 +145,11 @@ def _normal(x: FloatArray, std: FloatArray) -> FloatArray:
 def _single_density(sample: ChargeSample, frequency: FloatArray, factor: float, floor: float) -> FloatArray:
     """Density (N, F) of each single charge's phase; the standard deviation belongs to the tooth, not to the charge."""
     phase = np.abs(sample.charge)[:, None] * frequency
-    tooth = np.rint(phase)
-    away = np.abs(phase - tooth)
     std = sample.floor_std[:, None] * frequency
     if not sample.rel_std.any():
-        return _density(away, np.maximum(factor * std, floor), None)
+        return _density(np.abs(phase - np.rint(phase)), np.maximum(factor * std, floor))
     rel = sample.rel_std[:, None]
-    other = tooth + np.where(phase >= tooth, 1.0, -1.0)
-    here = np.maximum(factor * np.hypot(std, rel * tooth), floor)
-    there = np.maximum(factor * np.hypot(std, rel * other), floor)
-    return _density(away, here, there)
+    return _density_of_teeth(phase, lambda tooth: np.maximum(factor * np.hypot(std, rel * tooth), floor))
 
 
 def _pair_density(sample: ChargeSample, frequency: FloatArray, factor: float, floor: float) -> FloatArray:

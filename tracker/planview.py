@@ -174,6 +174,7 @@ def _draw_charge(axes: Axes, plan: Plan) -> None:
     axes.set(
         title="Charge: own standard uncertainty", xlabel="radius / um", ylabel="uncertainty / e", yscale="log"
     )
+    _plain_ticks(axes, "y", (0.01, 0.02, 0.05, 0.1, 0.2, 0.5, 1, 2, 5, 10))
     axes.legend(fontsize="small")
 
 
