@@ -139,7 +139,7 @@ def lattice_vectors(place: FloatArray) -> FloatArray | None:
     vectors = (place[neighbour[:, 1:]] - place[:, None, :]).reshape(-1, 2)
     length = np.hypot(vectors[:, 0], vectors[:, 1])
     usual = float(np.median(distance[:, 1]))
-    close = (length < 1.45 * usual) & (length > 0.6 * usual)
+    close = (length < 1.28 * usual) & (length > 0.6 * usual)
     if close.sum() < 8:
         return None
     chosen = vectors[close]

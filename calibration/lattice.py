@@ -7,6 +7,7 @@ shift the count; the map is then fitted to all marks at once.
 
 from __future__ import annotations
 
+import itertools
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -147,68 +148,91 @@ def fit_lattice(marks: Marks, *, width: int, height: int) -> LatticeFit:
 
     Notes
     -----
-    Weighted least squares with outliers left out at 4.5 standard deviations. Lens and tilt are kept where their
-    estimates exceed three standard uncertainties (Wald's test).
+    Generalised least squares for marks that scatter by themselves and share an error with the marks of their line
+    (J. C. Pinheiro and D. M. Bates, Mixed-Effects Models in S and S-PLUS, Springer 2000, 2.2); both variances come
+    from the residuals, and marks beyond 4.5 standard deviations are left out. Lens and tilt are kept where their
+    estimates exceed four standard uncertainties (Wald's test), lines taken to scatter as they do without them: so
+    a few lines that are ruled unevenly are not taken for a lens, while lines that are bent are.
     """
     plain = _fit(marks, (), width, height)
-    if len(np.unique(marks.cluster)) < 5 or len(marks.x) < 24:
+    if len(marks.x) < 24:
         return plain
     terms: tuple[str, ...] = ("radial", "tilt")
     while terms:
-        full = _fit(marks, terms, width, height, start=plain)
+        full = _fit(marks, terms, width, height, line_var=plain.line_std**2)
         strength = {name: _wald(full, name) for name in terms}
         weakest = min(strength, key=lambda name: strength[name])
         if strength[weakest] > 1:
-            return full
+            return _fit(marks, terms, width, height)
         terms = tuple(name for name in terms if name != weakest)
     return plain
 
 
 def _wald(fit: LatticeFit, name: str) -> float:
-    """Wald statistic of a term over its limit: 9 for one parameter, 11.8 for two (both 3 standard deviations)."""
+    """Wald statistic of a term over its limit: 16 for one parameter, 19.3 for two (both 4 standard deviations)."""
     first = fit.coefficients.size + (1 if name == "tilt" and "radial" in fit.terms else 0)
     rows = slice(first, first + (2 if name == "tilt" else 1))
     value = fit.tilt if name == "tilt" else np.array([fit.radial])
     spread = fit.covariance[rows, rows]
     if not np.isfinite(spread).all() or np.linalg.cond(spread) > 1e12:
         return 0.0
-    return float(value @ np.linalg.solve(spread, value)) / (11.8 if name == "tilt" else 9.0)
+    return float(value @ np.linalg.solve(spread, value)) / (19.3 if name == "tilt" else 16.0)
 
 
 def _fit(
-    marks: Marks, terms: tuple[str, ...], width: int, height: int, start: LatticeFit | None = None
+    marks: Marks, terms: tuple[str, ...], width: int, height: int, line_var: float | None = None
 ) -> LatticeFit:
-    """Fit one choice of terms, leaving outliers out."""
+    """Fit one choice of terms, leaving outliers out; `line_var` None: from the residuals."""
     radius = float(np.hypot(width, height) / 2)
     centre = ((width - 1) / 2, (height - 1) / 2)
     q = np.stack([(marks.x - centre[0]) / radius, (marks.y - centre[1]) / radius], axis=1)
     theta = _affine_start(marks, q)
+    split = len(theta)
     theta = np.concatenate([theta, np.zeros(("radial" in terms) + 2 * ("tilt" in terms))])
-    used = np.ones(len(q), dtype=bool) if start is None else start.used
-    for _ in range(12):
+    pitch = _pitch_px(theta[:split], radius)[marks.axis]
+    used = np.ones(len(q), dtype=bool)
+    variances = 1.0, 0.0
+    for _ in range(15):
         value, jacobian = lattice_map(theta, q, marks.axis, terms=terms)
-        pitch = _pitch_px(theta, len(marks.axes), radius)[marks.axis]
         residual = (value - marks.index) * pitch
-        weight = np.where(used, marks.weight, 0.0)
-        design = jacobian * (pitch * weight)[:, None]
-        step = np.linalg.lstsq(design, -residual * weight, rcond=None)[0]
+        left = marks.take(used)
+        design = decorrelate(jacobian[used] * pitch[used, None], left, *variances)
+        step = np.linalg.lstsq(
+            design, -decorrelate(residual[used, None], left, *variances)[:, 0], rcond=None
+        )[0]
         theta = theta + step
-        spread = 1.4826 * np.median(np.abs(residual[used] * marks.weight[used]))
-        again = np.abs(residual) * marks.weight < max(4.5 * spread, 0.03)
-        if np.abs(design @ step).max(initial=0) < 1e-6 and (again == used).all():
+        residual = residual + jacobian @ step * pitch
+        variances = _variances(residual[used], left, len(theta), line_var)
+        again = _inliers(residual, marks)
+        if np.abs(design @ step).max(initial=0) < 1e-5 and (again == used).all():
             break
         used = again if again.sum() > 2 * len(theta) else used
     value, jacobian = lattice_map(theta, q, marks.axis, terms=terms)
-    pitch = _pitch_px(theta, len(marks.axes), radius)[marks.axis]
     residual = (value - marks.index) * pitch
-    design = jacobian * pitch[:, None]
-    covariance, mark_std, line_std = _covariance(design[used], residual[used], marks.take(used))
-    split = AFFINE * len(marks.axes)
+    left = marks.take(used)
+    variances = _variances(residual[used], left, len(theta), line_var)
+    design = decorrelate(jacobian[used] * pitch[used, None], left, *variances)
+    covariance = variances[0] * np.linalg.pinv(design.T @ design, rcond=1e-14)
     radial = float(theta[split]) if "radial" in terms else 0.0
     tilt = theta[-2:].copy() if "tilt" in terms else np.zeros(2)
+    stds = float(np.sqrt(variances[0])), float(np.sqrt(variances[1]))
     shape = theta[:split].reshape(-1, AFFINE)
-    return LatticeFit(
-        shape, radial, tilt, covariance, terms, centre, radius, residual, used, mark_std, line_std
+    return LatticeFit(shape, radial, tilt, covariance, terms, centre, radius, residual, used, *stds)
+
+
+def _inliers(residual: FloatArray, marks: Marks) -> BoolArray:
+    """Marks within 4.5 robust standard deviations of their line's middle, and lines within 4.5 of theirs."""
+    count = int(marks.cluster.max()) + 1
+    order = np.argsort(marks.cluster, kind="stable")
+    bounds = np.searchsorted(marks.cluster[order], np.arange(count + 1))
+    middle = np.array(
+        [np.median(residual[order[a:b]]) if b > a else 0.0 for a, b in itertools.pairwise(bounds)]
+    )
+    own = (residual - middle[marks.cluster]) * marks.weight
+    spread = 1.4826 * float(np.median(np.abs(own)))
+    all_spread = 1.4826 * float(np.median(np.abs(residual)))
+    return (np.abs(own) < max(4.5 * spread, 0.03)) & (
+        np.abs(residual) < max(4.5 * all_spread, 4.5 * spread, 0.03)
     )
 
 
@@ -222,9 +246,9 @@ def _affine_start(marks: Marks, q: FloatArray) -> FloatArray:
     return np.concatenate(parts)
 
 
-def _pitch_px(theta: FloatArray, axes: int, radius: float) -> FloatArray:
-    """Distance between lines in px at the centre for each coordinate (tilt left out)."""
-    shape = theta[: AFFINE * axes].reshape(-1, AFFINE)
+def _pitch_px(coefficients: FloatArray, radius: float) -> FloatArray:
+    """Distance between lines in px at the centre for each coordinate, of the plain map."""
+    shape = coefficients.reshape(-1, AFFINE)
     return np.asarray(radius / np.hypot(shape[:, 1], shape[:, 2]))
 
 
@@ -270,32 +294,64 @@ def lattice_map(
     return value, jacobian
 
 
-def _covariance(design: FloatArray, residual: FloatArray, marks: Marks) -> tuple[FloatArray, float, float]:
-    """Covariance of the parameters with what marks of one cluster share; also both standard deviations.
+def _variances(
+    residual: FloatArray, marks: Marks, parameters: int, line_var: float | None
+) -> tuple[float, float]:
+    """Variance of single marks, and the one that the marks of a line share, by the method of moments.
 
-    The shared part is found by the method of moments from the clusters' weighted means: their scatter is that of
-    the marks over the square root of their number, and what exceeds it is shared.
+    The means of lines scatter as their marks do over the square root of their number; what exceeds this is shared.
     """
     weight = marks.weight
-    dof = max(1, len(residual) - design.shape[1])
-    white = residual * weight
     _, cluster = np.unique(marks.cluster, return_inverse=True)
     count = int(cluster.max()) + 1
     power = np.bincount(cluster, weight**2, count)
     mean = np.bincount(cluster, residual * weight**2, count) / power
-    within = white - mean[cluster] * weight
-    inner = max(1, len(residual) - count)
-    mark_var = float((within**2).sum() / inner) if inner > 8 else float((white**2).sum() / dof)
-    # Of the parameters for one coordinate two rest on the lines as wholes: where the first is, and the pitch.
-    outer = max(1, count - (design.shape[1] - len(marks.axes)))
-    excess = float((power * mean**2).sum() / outer - mark_var)
-    line_var = max(0.0, excess * count / float(power.sum())) * _student(outer) ** 2
-    scaled = design * weight[:, None]
-    inverse = np.linalg.pinv(scaled.T @ scaled, rcond=1e-14)
-    sums = np.zeros((count, design.shape[1]))
-    np.add.at(sums, cluster, design * (weight**2)[:, None])
-    middle = mark_var * scaled.T @ scaled + line_var * sums.T @ sums
-    return inverse @ middle @ inverse, float(np.sqrt(mark_var)), float(np.sqrt(line_var))
+    within = (residual - mean[cluster]) * weight
+    # Of the parameters, one direction of each coordinate rests on how lines run, the others on lines as wholes.
+    axes = len(marks.axes)
+    inner, outer = len(residual) - count - axes, max(1, count - (parameters - axes))
+    if inner > 8:
+        mark_var = float((within**2).sum() / inner)
+    else:
+        mark_var = float(((residual * weight) ** 2).sum() / max(1, len(residual) - parameters))
+    mark_var = max(mark_var, 1e-12)
+    if line_var is None:
+        excess = float((power * mean**2).sum() / outer - mark_var)
+        line_var = max(0.0, excess * count / float(power.sum())) * _student(outer) ** 2
+    return mark_var, line_var
+
+
+def decorrelate(rows: FloatArray, marks: Marks, mark_var: float, line_var: float) -> FloatArray:
+    """Make the errors of marks independent and of equal variance `mark_var`, by taking a part of each line's mean off.
+
+    Parameters
+    ----------
+    rows : ndarray of shape (N, P)
+        Residuals or derivatives in px, one row a mark.
+    marks : Marks
+        Their weights and the lines that they belong to.
+    mark_var, line_var : float
+        Variance of one mark of weight 1, and of what the marks of one line share, px^2.
+
+    Returns
+    -------
+    white : ndarray of shape (N, P)
+        Rows for ordinary least squares.
+
+    Notes
+    -----
+    Of a covariance s^2 1 + b^2 w w' the inverse root is (1 - t w w' / w'w) / s with
+    t = 1 - s / sqrt(s^2 + b^2 w'w), for rows already multiplied by the weights w.
+    """
+    scaled = rows * marks.weight[:, None]
+    if line_var <= 0:
+        return scaled
+    _, cluster = np.unique(marks.cluster, return_inverse=True)
+    power = np.bincount(cluster, marks.weight**2)
+    part = 1 - np.sqrt(mark_var / (mark_var + line_var * power))
+    sums = np.zeros((len(power), rows.shape[1]))
+    np.add.at(sums, cluster, scaled * marks.weight[:, None])
+    return np.asarray(scaled - (part / power)[cluster, None] * sums[cluster] * marks.weight[:, None])
 
 
 def _student(dof: int) -> float:

@@ -31,6 +31,7 @@ class LinePoints:
     width: float  # px, standard deviation of the kernel that fits the lines
     strips: int  # strips that the picture has along the lines
     continuity: float  # 1: the lines are unbroken; near 0: they are rows of dots
+    levels: tuple[float, float]  # usual grey value on the lines, and between them
 
 
 def flatten(picture: NDArray[np.float32]) -> NDArray[np.float32]:
@@ -124,7 +125,27 @@ def line_directions(flat: NDArray[np.float32], *, most: int = 3) -> list[float]:
     return found[:most]
 
 
-def line_points(flat: NDArray[np.float32], angle: float) -> LinePoints | None:
+def without_debris(flat: NDArray[np.float32], *, mark: float, ground: float) -> NDArray[np.float32]:
+    """Cut grey values off beyond those of marks and ground, so that droplets and dust weigh little.
+
+    Parameters
+    ----------
+    flat : ndarray of float32
+        Flattened picture.
+    mark, ground : float
+        Usual value on the lines or dots, and between them.
+
+    Returns
+    -------
+    cut : ndarray of float32
+        Values outside the range by more than three times the pixel noise are set to that limit. What is symmetric
+        about a line or dot stays so.
+    """
+    noise = 1.4826 / np.sqrt(2) * float(np.median(np.abs(np.diff(flat[:: 1 + flat.shape[0] // 500], axis=1))))
+    return np.clip(flat, min(mark, ground) - 3 * noise, max(mark, ground) + 3 * noise)
+
+
+def line_points(flat: NDArray[np.float32], angle: float, *, careful: bool = False) -> LinePoints | None:
     """Locate the lines of one direction.
 
     Parameters
@@ -133,6 +154,8 @@ def line_points(flat: NDArray[np.float32], angle: float) -> LinePoints | None:
         Flattened picture.
     angle : float
         Direction across the lines in rad.
+    careful : bool, optional
+        True averages the middle half of the rows in each strip only, which debris does not reach.
 
     Returns
     -------
@@ -142,7 +165,7 @@ def line_points(flat: NDArray[np.float32], angle: float) -> LinePoints | None:
     turning = _turning(angle)
     turned, valid, back = _turn(flat, turning)
     rows = min(STRIP_ROWS, max(4, min(flat.shape) // 8))
-    profiles, mask = _strips(turned, valid, rows, lean=float(np.tan(angle - turning)))
+    profiles, mask = _strips(turned, valid, rows, lean=float(np.tan(angle - turning)), trim=careful)
     if len(profiles) == 0:
         return None
     profiles = np.where(mask, profiles - _level(profiles, mask), 0.0)
@@ -155,13 +178,14 @@ def line_points(flat: NDArray[np.float32], angle: float) -> LinePoints | None:
     strip, column, contrast = _peaks(sign * profiles, mask, sigma=sigma, pitch=pitch)
     if len(strip) < 4:
         return None
-    place, fine = refine_profile(sign * profiles, mask, strip, column, sigma=sigma)
+    slope = _ground_slope(sign * profiles, mask, strip, column, half=pitch / 2)
+    place, fine = refine_profile(sign * profiles, mask, strip, column, sigma=sigma, slope=slope)
     strip, place, contrast = strip[fine], place[fine], contrast[fine]
     middle = (strip + 0.5) * rows - 0.5
     x = back[0, 0] * place + back[0, 1] * middle + back[0, 2]
     y = back[1, 0] * place + back[1, 1] * middle + back[1, 2]
-    broken = _continuity(sign * turned, strip * rows, place, rows=rows, pitch=pitch)
-    return LinePoints(x, y, place, middle, contrast, pitch, angle, sigma, len(profiles), broken)
+    levels, unbroken = _along(turned, strip * rows, place, rows=rows, pitch=pitch)
+    return LinePoints(x, y, place, middle, contrast, pitch, angle, sigma, len(profiles), unbroken, levels)
 
 
 def _turning(angle: float) -> float:
@@ -198,7 +222,7 @@ def _turn(
 
 
 def _strips(
-    turned: NDArray[np.float32], valid: NDArray[np.bool_], rows: int, *, lean: float
+    turned: NDArray[np.float32], valid: NDArray[np.bool_], rows: int, *, lean: float, trim: bool
 ) -> tuple[FloatArray, NDArray[np.bool_]]:
     """Average every `rows` rows to a profile, rows moved so that lines which lean (px per row) stand upright.
 
@@ -206,16 +230,19 @@ def _strips(
     """
     count = turned.shape[0] // rows
     shape = (count, rows, turned.shape[1])
-    profiles = np.zeros((count, turned.shape[1]))
+    stack = np.empty(shape, dtype=np.float32)
     for row in range(rows):
         moved = turned[row : count * rows : rows]
         shift = lean * (row - (rows - 1) / 2)
         if shift:
             weights = _cubic(-shift)[None, :]
             moved = np.asarray(cv2.filter2D(moved, -1, weights, borderType=cv2.BORDER_REPLICATE), np.float32)
-        profiles += np.asarray(moved, dtype=np.float64) / rows
+        stack[:, row] = moved
     mask = np.asarray(valid[: count * rows].reshape(shape).all(axis=1))
-    return profiles, mask
+    if trim and count:
+        low, high = rows // 4, rows - 1 - rows // 4
+        stack = np.partition(stack, (low, high), axis=1)[:, low : high + 1]
+    return stack.mean(axis=1, dtype=np.float64), mask
 
 
 def _cubic(shift: float) -> FloatArray:
@@ -313,6 +340,30 @@ def _peaks(
     return strip[keep], column[keep], contrast[keep]
 
 
+def _ground_slope(
+    profiles: FloatArray,
+    mask: NDArray[np.bool_],
+    strip: NDArray[np.int64],
+    column: NDArray[np.int64],
+    *,
+    half: float,
+) -> FloatArray:
+    """Slope of the ground under each line, from the middles of the gaps to both sides; NaN at the picture's edge."""
+    smooth = _smooth(np.where(mask, profiles, 0.0), max(0.5, half / 6)) / np.maximum(
+        _smooth(mask.astype(float), max(0.5, half / 6)), 1e-6
+    )
+    levels = []
+    for side in (-half, half):
+        at = column + side
+        low = np.floor(at).astype(int)
+        inside = (low >= 0) & (low + 1 < mask.shape[1])
+        low = np.clip(low, 0, mask.shape[1] - 2)
+        part = at - np.floor(at)
+        level = (1 - part) * smooth[strip, low] + part * smooth[strip, low + 1]
+        levels.append(np.where(inside & mask[strip, low] & mask[strip, low + 1], level, np.nan))
+    return np.asarray((levels[1] - levels[0]) / (2 * half))
+
+
 def refine_profile(
     profiles: FloatArray,
     mask: NDArray[np.bool_],
@@ -320,6 +371,7 @@ def refine_profile(
     column: NDArray[np.int64],
     *,
     sigma: float,
+    slope: FloatArray,
 ) -> tuple[FloatArray, NDArray[np.bool_]]:
     """Place of each maximum of the smoothed profile, between the samples.
 
@@ -333,6 +385,8 @@ def refine_profile(
         Of the maxima.
     sigma : float
         Width of the Gaussian in px.
+    slope : ndarray of float
+        Of the ground under each line, per px; NaN leaves the line out.
 
     Returns
     -------
@@ -356,24 +410,27 @@ def refine_profile(
     # Cut kernels: allowed down to 2.5 sigma, where the lost weight is too small to move the zero.
     near = np.abs(offsets) <= np.ceil(2.5 * sigma)
     fine = (whole | ~near).all(axis=1)
+    known = np.isfinite(slope)
+    values = values - np.where(known, slope, 0.0)[:, None] * offsets[None, :]
     values = np.where(whole, values - values.min(axis=1, keepdims=True), 0.0)
     place = np.zeros(len(column))
     for _ in range(6):
         t = (offsets[None, :] - place[:, None]) / sigma
         bell = np.exp(-0.5 * t * t)
-        slope = (values * t * bell).sum(axis=1)
+        pull = (values * t * bell).sum(axis=1)
         bend = (values * (1 - t * t) * bell).sum(axis=1)
-        step = np.where(bend > 0, sigma * slope / np.where(bend > 0, bend, 1.0), 0.0)
+        step = np.where(bend > 0, sigma * pull / np.where(bend > 0, bend, 1.0), 0.0)
         place += np.clip(step, -0.5 * sigma, 0.5 * sigma)
-    return column + place, fine & (np.abs(place) < 1.0 + 0.5 * sigma)
+    return column + place, fine & known & (np.abs(place) < 1.0 + 0.5 * sigma)
 
 
-def _continuity(
+def _along(
     turned: NDArray[np.float32], first_row: NDArray[np.int64], place: FloatArray, *, rows: int, pitch: float
-) -> float:
-    """How unbroken lines are: 1 less the relative spread of the contrast along them, noise taken out.
+) -> tuple[tuple[float, float], float]:
+    """Usual values on the lines and between them, and how unbroken the lines are.
 
-    A row of dots that fill half of it has 0; a line stays as it is where another crosses it.
+    The latter is 1 less the relative spread of the contrast along them, noise taken out. A row of dots that fill
+    half of it has 0; a line stays as it is where another crosses it.
     """
     pick = np.linspace(0, len(place) - 1, min(len(place), 400)).astype(int)
     centre = np.rint(place[pick]).astype(int)
@@ -384,8 +441,10 @@ def _continuity(
         return np.asarray(turned[row, at[:, None]], dtype=np.float64)
 
     half = max(2, round(pitch / 2))
-    gap = 0.5 * (column(-half) + column(half)).mean(axis=1, keepdims=True)
-    contrast = column(0) - gap
+    line, ground = column(0), 0.5 * (column(-half) + column(half))
+    levels = float(np.median(line)), float(np.median(ground))
+    contrast = (line - ground.mean(axis=1, keepdims=True)) * (1 if levels[0] > levels[1] else -1)
     mean = contrast.mean(axis=1)
     neighbour = (contrast[:, 1:] * contrast[:, :-1]).mean(axis=1) - mean**2
-    return 1 - float(np.median(np.sqrt(np.clip(neighbour, 0, None)) / np.maximum(mean, 1e-9)))
+    spread = np.sqrt(np.clip(neighbour, 0, None)) / np.maximum(mean, 1e-9)
+    return levels, 1 - float(np.median(spread))

@@ -18,8 +18,16 @@ from calibration.lattice import (
     local_gradient,
     without_outliers,
 )
-from calibration.lines import LinePoints, flatten, line_directions, line_points
-from calibration.trust import LEAST_LINES, Refusal, judge_lines, judge_nodes, largest_block
+from calibration.lines import LinePoints, flatten, line_directions, line_points, without_debris
+from calibration.trust import (
+    LEAST_LINES,
+    Refusal,
+    inner_nodes,
+    judge_lines,
+    judge_nodes,
+    largest_block,
+    real_lines,
+)
 
 FloatArray = NDArray[np.float64]
 PATTERNS = ("lines", "grid", "dots")
@@ -92,18 +100,18 @@ def _search_lines(flat: NDArray[np.float32], pattern: str | None) -> Lattice | R
         return None
     refusal = Refusal("no lines, grid or dots stand out from the picture", 0)
     families: list[tuple[LinePoints, Marks]] = []
-    for angle in line_directions(flat):
-        points = line_points(flat, angle)
-        found = _number_lines(points) if points is not None else None
-        if points is None or found is None:
-            continue
-        if isinstance(found, Marks):
-            points, found = _second_look(flat, points, found)
-        if isinstance(found, Refusal):
-            refusal = found if found.progress > refusal.progress else refusal
-            continue
-        families.append((points, found))
-    if not families:
+    angles = line_directions(flat)
+    # Cells of a grid as small as their blurred lines are wide look like dots, whose gradients peak along diagonals.
+    for group in (angles, [(angle + np.pi / 4) % np.pi for angle in angles[:2]]):
+        for angle in group:
+            found = _family(flat, angle)
+            if isinstance(found, Refusal):
+                refusal = found if found.progress > refusal.progress else refusal
+            else:
+                families.append(found)
+        if families:
+            break
+    else:
         return refusal
     first = max(families, key=lambda f: len(f[1].x))
     second = next((f for f in families if _crosses(first[0], f[0])), None)
@@ -116,17 +124,25 @@ def _search_lines(flat: NDArray[np.float32], pattern: str | None) -> Lattice | R
     )
 
 
-def _second_look(
-    flat: NDArray[np.float32], points: LinePoints, marks: Marks
-) -> tuple[LinePoints, Marks | Refusal]:
-    """Locate the lines again with their direction known to 0.01 degree.
+def _family(flat: NDArray[np.float32], angle: float) -> tuple[LinePoints, Marks] | Refusal:
+    """Locate and number the lines of one direction."""
+    points = line_points(flat, angle)
+    if points is None:
+        return Refusal("no lines, grid or dots stand out from the picture", 0)
+    found = _number_lines(points)
+    return found if isinstance(found, Refusal) else _second_look(flat, points, found)
+
+
+def _second_look(flat: NDArray[np.float32], points: LinePoints, marks: Marks) -> tuple[LinePoints, Marks]:
+    """Locate the lines again with their direction known to 0.01 degree and debris kept down.
 
     A line that leans within its strip is shifted where it ends or is covered in mid-strip.
     """
     basis = np.column_stack([np.ones(len(marks.x)), marks.x, marks.y])
     slope = np.linalg.lstsq(basis, marks.index.astype(float), rcond=None)[0][1:]
     angle = float(np.arctan2(slope[1], slope[0]) % np.pi)
-    again = line_points(flat, angle)
+    mark, ground = points.levels
+    again = line_points(without_debris(flat, mark=mark, ground=ground), angle, careful=True)
     if again is None or not 0.8 < again.pitch / points.pitch < 1.25:
         return points, marks
     found = _number_lines(again)
@@ -176,7 +192,7 @@ def _number_lines(points: LinePoints) -> Marks | Refusal:
     problem = judge_lines(coordinate, points.contrast, strips=points.strips)
     if problem is not None:
         return problem
-    near = np.abs(coordinate - np.rint(coordinate)) < SAME
+    near = real_lines(coordinate, points.contrast)
     index = np.rint(coordinate[near]).astype(np.int64)
     weight = np.clip(points.contrast[near] / np.median(points.contrast[near]), 0.3, 1.5)
     return Marks(place[near, 0], place[near, 1], np.zeros_like(index), index, index - index.min(), weight)
@@ -254,11 +270,24 @@ def _number_nodes(flat: NDArray[np.float32], spots: Spots, *, kernel: float) -> 
     problem = judge_nodes(coordinate, block)
     if problem is not None:
         return problem
-    rows = np.flatnonzero(block)
+    rows = np.flatnonzero(inner_nodes(coordinate, block))
     if len(rows) > MOST_DOTS:
         rows = np.sort(np.random.default_rng(0).choice(rows, MOST_DOTS, replace=False))
-    place, fine = refine_spots(flat, spots.place[rows], kernel)
+    place, fine = refine_spots(_clean(flat, spots, steps, spots.place[rows]), spots.place[rows], kernel)
     return _node_marks(place[fine], np.rint(coordinate[rows][fine]).astype(np.int64))
+
+
+def _clean(
+    flat: NDArray[np.float32], spots: Spots, steps: FloatArray, place: FloatArray
+) -> NDArray[np.float32]:
+    """Keep debris down: cut off what is brighter or darker than dots and the middles between four of them."""
+    if spots.fill == 0:
+        return flat
+    limit = np.array(flat.shape[::-1]) - 1
+    middle = np.clip(np.rint(place + steps.sum(axis=0) / 2), 0, limit).astype(int)
+    centre = np.clip(np.rint(place), 0, limit).astype(int)
+    mark, ground = (float(np.median(flat[at[:, 1], at[:, 0]])) for at in (centre, middle))
+    return without_debris(flat, mark=mark, ground=ground)
 
 
 def _node_marks(place: FloatArray, index: NDArray[np.int64]) -> Marks:

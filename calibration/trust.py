@@ -59,6 +59,33 @@ def judge_lines(coordinate: FloatArray, contrast: FloatArray, *, strips: int) ->
     return rival(coordinate[across], contrast[across])
 
 
+def real_lines(coordinate: FloatArray, contrast: FloatArray) -> NDArray[np.bool_]:
+    """Choose the marks that lie on whole numbers, on lines with enough marks, and are no weak ends of lines.
+
+    Parameters
+    ----------
+    coordinate : ndarray of shape (N,)
+        Lattice coordinate of each mark.
+    contrast : ndarray of shape (N,)
+        Of each mark.
+
+    Returns
+    -------
+    real : ndarray of bool of shape (N,)
+        Marks to fit.
+    """
+    index = np.rint(coordinate).astype(np.int64)
+    near = np.abs(coordinate - index) < SAME
+    slot = index - index.min()
+    count = np.bincount(slot[near], minlength=int(slot.max()) + 1)
+    usual = np.median(count[count > 0])
+    real = near & (count >= max(2.0, FEW * usual))[slot]
+    for line in np.unique(slot[real]):
+        own = real & (slot == line)
+        real[own] = contrast[own] > 0.8 * np.median(contrast[own])
+    return real
+
+
 def _uneven(coordinate: FloatArray, usual: float) -> Refusal | None:
     """Name the shorter pitch if the marks off the lattice stand at even places too."""
     for parts in (2, 3):
@@ -146,6 +173,34 @@ def largest_block(coordinate: FloatArray) -> NDArray[np.bool_]:
     largest = 1 + int(np.argmax(np.bincount(parts.ravel(), minlength=count + 1)[1:]))
     block[table[(parts == largest) & (table >= 0)]] = True
     return block
+
+
+def inner_nodes(coordinate: FloatArray, block: NDArray[np.bool_]) -> NDArray[np.bool_]:
+    """Leave out nodes at the rim, which the field stop or the pattern's own edge may cut, if enough are left.
+
+    Parameters
+    ----------
+    coordinate : ndarray of shape (N, 2)
+        Lattice coordinates.
+    block : ndarray of bool of shape (N,)
+        Nodes that were numbered.
+
+    Returns
+    -------
+    inner : ndarray of bool of shape (N,)
+        Those with a neighbour on all four sides; the whole block where fewer than 36 have that or half are lost.
+    """
+    number = np.rint(coordinate[block]).astype(np.int64)
+    number -= number.min(axis=0) - 1
+    table = np.zeros(number.max(axis=0) + 2, dtype=bool)
+    table[number[:, 0], number[:, 1]] = True
+    sides = [table[number[:, 0] + i, number[:, 1] + j] for i, j in ((1, 0), (-1, 0), (0, 1), (0, -1))]
+    all_sides = np.all(sides, axis=0)
+    if all_sides.sum() < max(36, 0.5 * len(number)):
+        return block
+    inner = block.copy()
+    inner[block] = all_sides
+    return inner
 
 
 def judge_nodes(coordinate: FloatArray, block: NDArray[np.bool_]) -> Refusal | None:
