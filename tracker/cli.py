@@ -297,6 +297,33 @@ def simulate(
         typer.echo("\n".join(str(path) for path in written.values()))
 
 
+@app.command(epilog=_example("fallrise budget clip.fallrise --droplet 3 --check"))
+def budget(
+    result: Annotated[Path, typer.Argument(help="Result folder.")],
+    droplet: Annotated[int | None, typer.Option("--droplet", help="Only this droplet; default: all.")] = None,
+    check: Annotated[
+        bool, typer.Option("--check", help="Check by Monte Carlo, a second or so a droplet.")
+    ] = False,
+    out: Annotated[Path | None, typer.Option("--out", help="CSV file for the table.")] = None,
+    as_json: JsonOption = False,
+) -> None:
+    """Show what the uncertainty of each charge is made of: input, value, uncertainty, sensitivity, share."""
+    from tracker.budgeting import budget_table, budgets
+    from tracker.keeping.store import replace_file
+    from tracker.keeping.tables import BUDGET, write_csv
+
+    made = budgets(result, droplet=droplet, check=check)
+    rows = budget_table(made)
+    if out is not None:
+        replace_file(out, lambda part: write_csv(rows, part, BUDGET))
+    if as_json:
+        typer.echo(rows.to_json(orient="records", double_precision=15))
+        return
+    from tracker.showing.terminal import show_budgets
+
+    show_budgets(made)
+
+
 def _progress(label: str, *, hidden: bool = False) -> Any:
     """Give a progress bar on a terminal and nothing when piped; a callable (done, total) inside a context."""
     from tracker.showing.terminal import progress_bar

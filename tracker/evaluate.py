@@ -43,7 +43,7 @@ def evaluate_result(folder: Path | str, *, bench: Bench | Path | str | None = No
         tracks = tracks_from_table(old.tracks)
     except (KeyError, TypeError, ValueError) as error:
         raise ResultError(str(folder), f"is damaged ({error}); measure the recording again") from error
-    loaded = bench if isinstance(bench, Bench) else _present_bench(old, recording, bench)
+    loaded = bench if isinstance(bench, Bench) else present_bench(old, recording, bench)
     loaded = loaded.fitted_to(recording.width, recording.height)
     field = _field(old, tracks, recording, loaded)
     evaluation = evaluate_droplets(
@@ -80,12 +80,32 @@ def decide_and_evaluate(folder: Path | str, **decision: Any) -> Result:
 
 
 def _settings(stored: dict[str, Any]) -> Settings:
-    known = {key: tuple(value) if isinstance(value, list) else value for key, value in stored.items()}
-    return replace(Settings(), **known)
+    known: dict[str, Any] = {k: tuple(v) if isinstance(v, list) else v for k, v in stored.items()}
+    return Settings(**known)
 
 
-def _present_bench(old: Result, recording: Recording, bench: Path | str | None) -> Bench:
-    """The bench as its file says now: the named one, the one used before, or the one by the recording's place."""
+def present_bench(old: Result, recording: Recording, bench: Path | str | None = None) -> Bench:
+    """Read the bench as its file says now: the named one, the one used before, or the one by the recording's place.
+
+    Parameters
+    ----------
+    old : Result
+        Names the file that was used before.
+    recording : Recording
+        Gives the place.
+    bench : Path or str, optional
+        The bench file.
+
+    Returns
+    -------
+    bench : Bench
+        Its scale is not fitted to the recording yet.
+
+    Raises
+    ------
+    ResultError
+        If the file is gone and none can be found.
+    """
     stored = [(old.folder or Path()) / file for file in old.recording["bench"]["files"]]
     if bench is None and stored and stored[0].is_file():
         bench = stored[0].resolve()

@@ -106,6 +106,18 @@ BATCH = (
     Column("reason", "", "why it failed, or warnings", "text"),
 )
 
+BUDGET = (
+    Column(
+        "droplet", "", "number of the droplet; empty for the factor that the bench puts on all charges", "int"
+    ),
+    Column("input", "", "what is uncertain; own: the droplet's own motion", "text"),
+    Column("value", "", "best estimate, in the unit of the row"),
+    Column("unit", "", "unit of value and standard uncertainty", "text"),
+    Column("std", "", "standard uncertainty"),
+    Column("sensitivity", "", "change of the charge in C (bench: of its logarithm) per unit of the input"),
+    Column("share", "", "share of the variance of the charge"),
+)
+
 TABLES = {"tracks": TRACKS, "segments": SEGMENTS, "droplets": DROPLETS, "changes": CHANGES}
 _DTYPES = {"float": "float64", "int": "Int64", "bool": "boolean", "text": "string"}
 

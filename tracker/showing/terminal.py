@@ -3,11 +3,12 @@
 from __future__ import annotations
 
 import sys
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Iterator, Mapping
 from contextlib import contextmanager
 from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
+    from physics.budget import Budget
     from tracker.keeping.store import Result
 
 Progress = Callable[[float, float], None]  # done, total (0: not known)
@@ -106,6 +107,33 @@ def _droplet_table(result: Result) -> Any:
             "" if missing(row.reasons) else str(row.reasons),
         )
     return made
+
+
+def show_budgets(made: Mapping[int | None, Budget]) -> None:
+    """Print budgets, largest share first, and what their check found.
+
+    Parameters
+    ----------
+    made : mapping
+        Droplet number, or None for the bench, to its budget.
+    """
+    from rich import box
+    from rich.console import Console
+    from rich.table import Table
+
+    console = Console(highlight=False, width=None if sys.stdout.isatty() else 160)
+    for number_, budget in made.items():
+        name = "bench, factor on all charges" if number_ is None else f"droplet {number_}, charge"
+        title = f"{name}: {budget.value:.5g} {budget.unit}, standard uncertainty {budget.std:.2g} ({budget.method})"
+        shown = Table(box=box.SIMPLE, pad_edge=False, title=title, title_justify="left")
+        for head in ("input", "value", "unit", "standard uncertainty", "sensitivity", "share / percent"):
+            shown.add_column(head, justify="left" if head in ("input", "unit") else "right")
+        for row in budget.rows:
+            shown.add_row(row.input, f"{row.value:.6g}", row.unit, f"{row.std:.2g}", f"{row.sensitivity:.3g}",
+                          f"{100 * row.share:.2f}")  # fmt: skip
+        console.print(shown)
+        if budget.note:
+            console.print(budget.note, markup=False)
 
 
 def missing(value: object) -> bool:
