@@ -131,7 +131,14 @@ def _best_change(model: _Model, times: FloatArray, conditions: Conditions, trend
     if trend_open:
         candidates.append(_trend(model, times, conditions))
     found = [c for c in candidates if c is not None and c.statistic > c.threshold]
-    return max(found, key=lambda c: c.statistic - c.threshold, default=None)
+    return max(found, key=lambda c: c.statistic - _RANK[c.kind], default=None)
+
+
+# What a test's statistic is worth beside the others: its threshold. Oil does not grow, so what looks like growth is
+# called that only where no switch explains it as well.
+_RANK = {
+    "charge_step": STEP_THRESHOLD, "switch": SWITCH_THRESHOLD, "evaporation": TREND_THRESHOLD, "growth": STEP_THRESHOLD,
+}  # fmt: skip
 
 
 def gains_of_suffix(base: FloatArray, extra: FloatArray, data: FloatArray) -> FloatArray:

@@ -1,0 +1,129 @@
+"""Tracks of droplets to which something happens, and trials of the tests that must find it.
+
+A droplet's speed is piecewise constant, so the exposure average of its mean place is a sum of exact ramps; Brownian
+motion is drawn from its exact joint law, as in `diffusing_droplets`. Nothing of ours is used for the motion but the
+closed forms of speed, mobility and diffusion.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field, replace
+
+import numpy as np
+from diffusing_droplets import CONDITIONS, PIXEL
+from numpy.typing import NDArray
+
+from physics.droplet import ELEMENTARY_CHARGE, Conditions, diffusion, droplet_mobility, fall_speed
+from physics.motion import field_impulse
+from tracker.motion.velocity import Path
+
+Floats = NDArray[np.float64]
+
+
+@dataclass(frozen=True)
+class Life:
+    """What one droplet is and what happens to it; times in s, radii in m."""
+
+    radius: float
+    number: float
+    changes: tuple[tuple[float, float, float], ...] = ()  # (time, new radius, new number)
+    shrinking: float = 0.0  # d ln r / dt in 1/s
+    diffusion_factor: float = 1.0
+    begin: float = 0.0
+    end: float = float("inf")
+
+
+@dataclass(frozen=True)
+class Camera:
+    """How droplets are recorded, and the field."""
+
+    seconds: float = 24.0
+    frame_rate: float = 30.0
+    open_share: float = 0.9
+    noise_px: float = 0.1
+    missing: float = 0.05
+    steps: tuple[tuple[float, float], ...] = field(default=())  # (time in s, field in V/m, downward positive)
+
+    @property
+    def exposure(self) -> float:
+        return self.open_share / self.frame_rate
+
+    @property
+    def times(self) -> Floats:
+        return np.arange(round(self.seconds * self.frame_rate)) / self.frame_rate
+
+
+def schedule(strength: float, *, seconds: float = 24.0, plateau: float = 3.0, signs: tuple[int, ...] = (0, 1, 0, -1),
+             jitter: np.random.Generator | None = None) -> tuple[tuple[float, float], ...]:  # fmt: skip
+    """Field off, on, off, reversed in turn, each for a plateau; jittered toggles by up to a fifth of one."""
+    count = int(np.ceil(seconds / plateau))
+    times = plateau * np.arange(count)
+    if jitter is not None:
+        times[1:] += plateau * jitter.uniform(-0.2, 0.2, count - 1)
+    return tuple((float(t), strength * signs[i % len(signs)]) for i, t in enumerate(times))
+
+
+def ramp(times: Floats, exposure: float, start: float) -> Floats:
+    """Exposure average of max(0, t - start)."""
+    late, early = np.maximum(0.0, times + exposure - start), np.maximum(0.0, times - start)
+    return (late**2 - early**2) / (2 * exposure)
+
+
+def brownian(rng: np.random.Generator, spread: float, camera: Camera) -> Floats:
+    """Exposure averages of a Brownian path whose variance grows by `spread` a second."""
+    count, tau, dt = len(camera.times), camera.exposure, 1 / camera.frame_rate
+    within = np.sqrt(spread * tau) * rng.standard_normal(count)
+    between = np.sqrt(spread * (dt - tau)) * rng.standard_normal(count)
+    start = np.concatenate([[0.0], np.cumsum(within + between)[:-1]])
+    return start + within / 2 + np.sqrt(spread * tau / 12) * rng.standard_normal(count)
+
+
+def mean_place(life: Life, camera: Camera, conditions: Conditions) -> Floats:
+    """Exposure averages of the place without Brownian motion."""
+    edges = {0.0, *(t for t, _ in camera.steps), *(t for t, _, _ in life.changes)}
+    if life.shrinking:
+        edges |= set(np.arange(0.0, camera.seconds, 0.05).tolist())
+    when = np.array(sorted(edges))
+    field_times = np.array([t for t, _ in camera.steps] or [0.0])
+    field_values = np.array([e for _, e in camera.steps] or [0.0])
+    strength = field_values[np.clip(np.searchsorted(field_times, when, side="right") - 1, 0, None)]
+    radius, number = np.full(len(when), life.radius), np.full(len(when), life.number)
+    for time, new_radius, new_number in life.changes:
+        radius[when >= time], number[when >= time] = new_radius, new_number
+    radius = radius * np.exp(life.shrinking * (when + (0.025 if life.shrinking else 0.0)))
+    speed = fall_speed(radius, conditions) + droplet_mobility(radius, conditions) * number * ELEMENTARY_CHARGE * strength
+    place = np.zeros(len(camera.times))
+    for start, height in zip(when, np.diff(speed, prepend=0.0), strict=True):
+        place += height * ramp(camera.times, camera.exposure, start)
+    return place
+
+
+def record_path(
+    rng: np.random.Generator, life: Life, camera: Camera, *, conditions: Conditions = CONDITIONS, number: int = 0
+) -> Path:
+    """Record one droplet as a path along and across gravity."""
+    times, std = camera.times, PIXEL * camera.noise_px
+    spread = 2 * life.diffusion_factor * float(diffusion(life.radius, conditions))
+    noise = std * rng.standard_normal((2, len(times)))
+    down = mean_place(life, camera, conditions) + brownian(rng, spread, camera) + noise[0]
+    side = brownian(rng, spread, camera) + noise[1]
+    seen = (rng.random(len(times)) >= camera.missing) & (times >= life.begin) & (times < life.end)
+    knots, volts = knots_of(camera, conditions)
+    impulse = field_impulse(knots, volts, times[seen], camera.exposure)
+    frames = np.flatnonzero(seen)
+    full = np.full(len(frames), std)
+    return Path(number, np.arange(len(frames)), frames, times[seen], down[seen], side[seen], full, full, impulse,
+                camera.exposure, np.zeros(len(frames) - 1, bool))  # fmt: skip
+
+
+def knots_of(camera: Camera, conditions: Conditions = CONDITIONS) -> tuple[Floats, Floats]:
+    """Voltage knots of the camera's field."""
+    times = np.array([t for t, _ in camera.steps] or [0.0])
+    volts = np.array([e for _, e in camera.steps] or [0.0]) * conditions.plate_gap
+    return np.repeat(times, 2)[1:], np.repeat(volts, 2)[:-1]
+
+
+def evaporated(life: Life, share: float, seconds: float) -> Life:
+    """Let a droplet lose a share of its radius over a time, with its radius at mid time."""
+    rate = float(np.log1p(-share)) / seconds
+    return replace(life, radius=life.radius * float(np.exp(-rate * seconds / 2)), shrinking=rate)
