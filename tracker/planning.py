@@ -132,7 +132,7 @@ def planned_recording(bench: Bench, options: PlanOptions) -> Planned:
     return Planned(
         duration=_typed("--duration", options.duration, "s"), plateau=_typed("--plateau", options.plateau, "s"),
         settling=_typed("--settling", options.settling, "s"),
-        voltage=voltage, pattern=pattern, frame_rate=rate, exposure=min(exposure, 1 / rate), pixel=pixel,
+        voltage=voltage, pattern=pattern, frame_rate=rate, exposure=exposure, pixel=pixel,
         place_std=options.place_noise_px * pixel,
         view_height=_typed("--height", options.view_height, "m", pixel * (bench.scale.height_px or 1080)),
         radii=tuple(_typed("--radii", f"{value} {unit}", "m") for value in values.split(",")), numbers=numbers,

@@ -81,7 +81,7 @@ def made_result(
         changes["after_c"] = changes["before_c"] + seen
         changes["statistic"], changes["threshold"] = (seen / step_std) ** 2, 18.0
     recording = {
-        "file": folder.stem, "sha256": hashlib.sha256(rng.bytes(16)).hexdigest(), "bench": bench_json(bench),
+        "file": folder.stem, "sha256": hashlib.sha256(rng.bytes(16)).hexdigest(), "bench": bench_json(bench, folder),
         "scale": scale_to_json(bench.scale), "field": {"segments": []},
     }  # fmt: skip
     empty = [pd.DataFrame({column.name: [] for column in columns}) for columns in (TRACKS, SEGMENTS)]

@@ -131,7 +131,8 @@ def draw_statistic(axes: Axes, unit: ChargeUnit) -> None:
     ticks = [tick for tick in (0.2, 0.5, 1, 2, 4) if units.size and units.min() <= tick <= units.max()]
     axes.set_xticks(ticks, [f"{tick:g}" for tick in ticks])
     axes.minorticks_off()
-    axes.legend(fontsize="small", loc="upper left")
+    if np.isfinite(unit.best):
+        axes.legend(fontsize="small", loc="upper left")
 
 
 def draw_ratios(axes: Axes, ratios: Sequence[UnitRatio]) -> None:

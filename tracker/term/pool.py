@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import os
 from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass, replace
 from pathlib import Path
@@ -21,7 +22,7 @@ FloatArray = NDArray[np.float64]
 
 COMMON_INPUTS = ("viscosity_model", "slip_model")  # models that err alike on all benches
 EXPLAINING = ("scale", "plate_gap", "voltage", "viscosity_model")  # single errors that a bench is asked for
-DEVIATES_FROM = 2.0  # standard uncertainties off e, from which a bench is told to be off
+AGREES_WITHIN = 2.0  # own standard uncertainties off e, below which nothing needs to be explained
 ODD_FROM = 3.0  # standard uncertainties off the other benches, from which a bench leaves the pool
 _WORDS = {
     "scale": "a scale",
@@ -164,7 +165,7 @@ def pool_of(results: Sequence[Result]) -> Pool:
             skipped.append((name, f"the same recording as {seen[digest]}"))
             continue
         seen[digest] = name
-        by_bench.setdefault(_bench_key(result.recording), []).append(result)
+        by_bench.setdefault(_bench_key(result), []).append(result)
     labels = _labels([members[0] for members in by_bench.values()])
     benches = [_bench(label, members) for label, members in zip(labels, by_bench.values(), strict=True)]
     common = _common_rel_std(benches)
@@ -238,12 +239,12 @@ def _name(result: Result) -> str:
     return str(result.folder) if result.folder is not None else str(result.recording.get("file", "result"))
 
 
-def _bench_key(recording: Mapping[str, Any]) -> tuple[object, ...]:
+def _bench_key(result: Result) -> tuple[object, ...]:
     """What tells one bench from another: its file, its cell and its reference picture."""
-    bench, scale = recording.get("bench", {}), recording.get("scale", {})
-    files = bench.get("files") or [""]
+    bench, scale = result.recording.get("bench", {}), result.recording.get("scale", {})
+    file = os.path.normpath((result.folder or Path()).absolute() / (bench.get("files") or [""])[0])
     gap = bench.get("plate_gap", {}).get("value")
-    return bench.get("name"), files[0], gap, scale.get("picture_sha256") or scale.get("metres_per_pixel_y")
+    return bench.get("name"), file, gap, scale.get("picture_sha256") or scale.get("metres_per_pixel_y")
 
 
 def _labels(results: Sequence[Result]) -> list[str]:
@@ -325,17 +326,15 @@ def _with_sentence(bench: BenchUnit) -> BenchUnit:
     """Say in words what the charge unit says of the bench."""
     if not np.isfinite(bench.ratio):
         return replace(bench, sentence=f"{bench.label}: {bench.unit.reason}")
-    spread = float(np.hypot(bench.ratio_own_std, bench.ratio_shared_std))
     origin = ", given the unit of all benches" if bench.from_pool else ""
     aside = f"; left out of the pooled unit: {bench.left_out}" if bench.left_out else ""
     start = (f"{bench.label}: charge unit over e {bench.ratio:.4f} +/- {bench.ratio_own_std:.4f} (own) "
              f"+/- {bench.ratio_shared_std:.4f} (shared){origin}{aside}")  # fmt: skip
-    if abs(bench.ratio - 1) < 2 * bench.ratio_own_std:
+    if abs(bench.ratio - 1) < AGREES_WITHIN * bench.ratio_own_std:
         return replace(bench, sentence=f"{start}; it agrees with e.")
-    verdict = "more than" if abs(bench.ratio - 1) > DEVIATES_FROM * spread else "within"
     ways = "; ".join(_error_words(name, *error) for name, error in bench.errors.items())
-    return replace(bench, sentence=f"{start}; off by {verdict} {DEVIATES_FROM:.0f} standard uncertainties. "
-                   f"One of these would explain it: {ways}.")  # fmt: skip
+    return replace(bench, sentence=f"{start}; {abs(bench.deviation):.1f} standard uncertainties off e. One of these "
+                   f"would explain it: {ways}.")  # fmt: skip
 
 
 def _error_words(name: str, error: float, std: float) -> str:
