@@ -10,6 +10,7 @@ import cv2
 import numpy as np
 from numpy.typing import NDArray
 
+from tracker.seeing.background import sort_in_time
 from tracker.seeing.fit import Windows
 
 F32 = NDArray[np.float32]
@@ -18,6 +19,12 @@ Candidates = tuple[NDArray[np.int64], NDArray[np.float64], NDArray[np.float64], 
 _COARSE_WIDTH = 0.75  # px, least spot width after binning: costs 0.25 in signal to noise, saves two thirds
 _MAX_BINNING = 8
 _TILE = 32  # px, tiles on which the noise is measured
+_RESTLESS_SAMPLES = 30  # fewer do not tell how restless one place is
+_RESTLESS_DEPTH = (
+    1.4  # standard deviations: quantile 0.12 lies at 1.17, and 2 % of places may exceed this by chance
+)
+_TAIL = (3.5, 3.75, 4.0, 4.25, 4.5, 4.75, 5.0, 5.25, 5.5, 5.75, 6.0)  # classes of heights that tell the tail
+_MOST_RAISED = 1.6  # times the threshold for white noise: more would be droplets taken for noise
 _MAX_CANDIDATES = 4000  # a frame with more shows no droplets but a change of the whole picture
 
 
@@ -136,8 +143,7 @@ def build_detector(
     -----
     Noise is the spread of the *filtered* residual in tiles: compression removes fine noise but leaves the
     part that the filter passes. The threshold for white noise follows from the rate of maxima of a Gaussian
-    random field; minima of the same pictures, which no bright droplet makes, raise it where noise is not
-    Gaussian.
+    random field; the heights of the recording's own low maxima raise it where noise is not Gaussian.
     """
     binning = 1
     while width / (2 * binning) >= _COARSE_WIDTH and 2 * binning <= _MAX_BINNING:
@@ -147,32 +153,49 @@ def build_detector(
     smooth_level = _smooth(level, binning, kernel)
     stack = np.stack([_smooth(p, binning, kernel) for p in samples])
     stack -= smooth_level
-    inverse = np.float32(1) / noise_map(stack, tile=max(8, _TILE // binning))
+    inverse = np.float32(1) / local_noise(stack, tile=max(8, _TILE // binning))
     stack *= inverse
     area = float(smooth_level.size)
     theory = threshold_for(false_alarms, area, sigma)
-    found = _threshold_of_minima(stack, false_alarms, area, sigma)
+    found = min(_threshold_of_tail(stack, false_alarms), _MOST_RAISED * theory)
     threshold = max(theory, found)
     detector = Detector(binning, sigma, smooth_level, inverse, threshold, kernel, area)
-    return detector, {"threshold": threshold, "threshold_white_noise": theory, "threshold_of_minima": found}
+    return detector, {"threshold": threshold, "threshold_white_noise": theory, "threshold_of_tail": found}
+
+
+def _of_tiles(values: F32, tile: int) -> F32:
+    """Median of all pictures in each tile."""
+    _, height, width = values.shape
+    rows, columns = max(1, height // tile), max(1, width // tile)
+    edges_y = np.linspace(0, height, rows + 1).astype(int)
+    edges_x = np.linspace(0, width, columns + 1).astype(int)
+    coarse = np.empty((rows, columns), np.float32)
+    for i in range(rows):
+        for j in range(columns):
+            coarse[i, j] = np.median(values[:, edges_y[i] : edges_y[i + 1], edges_x[j] : edges_x[j + 1]])
+    return coarse
 
 
 def noise_map(stack: F32, *, tile: int) -> F32:
     """Standard deviation of the residual from its median absolute value in tiles, smooth between them."""
     n, height, width = stack.shape
-    step = max(1, n // 12)
-    use = np.abs(stack[::step, ::2, ::2])
-    rows, columns = max(1, height // tile), max(1, width // tile)
-    coarse = np.empty((rows, columns), np.float32)
-    edges_y = np.linspace(0, use.shape[1], rows + 1).astype(int)
-    edges_x = np.linspace(0, use.shape[2], columns + 1).astype(int)
-    for i in range(rows):
-        for j in range(columns):
-            block = use[:, edges_y[i] : edges_y[i + 1], edges_x[j] : edges_x[j + 1]]
-            coarse[i, j] = np.median(block) if block.size else 0
+    coarse: NDArray[Any] = _of_tiles(np.abs(stack[:: max(1, n // 12), ::2, ::2]), max(1, tile // 2))
     floor = max(float(np.median(coarse)) * 0.3, 1e-3)
     coarse = 1.4826 * np.maximum(coarse, floor)
     return np.asarray(cv2.resize(coarse, (width, height), interpolation=cv2.INTER_LINEAR), np.float32)
+
+
+def local_noise(stack: F32, *, tile: int) -> F32:
+    """Noise of tiles, and more where a place itself is more restless: edges of lines, flickering glare.
+
+    A place is judged by how far its low values in time lie below the background, which no bright droplet changes.
+    """
+    smooth = noise_map(stack, tile=tile)
+    if len(stack) < _RESTLESS_SAMPLES:
+        return smooth
+    low = sort_in_time(np.minimum(stack, 0))[round(0.12 * (len(stack) - 1))]
+    own = cv2.blur(-low, (3, 3)) / np.float32(_RESTLESS_DEPTH)
+    return np.asarray(np.maximum(smooth, own), np.float32)
 
 
 def false_alarm_rate(threshold: float, area: float, sigma: float) -> float:
@@ -196,19 +219,30 @@ def threshold_for(rate: float, area: float, sigma: float) -> float:
     return max(2.0, high)
 
 
-def _threshold_of_minima(stack: F32, rate: float, area: float, sigma: float) -> float:
-    """Threshold at which the recording's own minima reach the rate, extended by the tail's shape.
+def _threshold_of_tail(stack: F32, rate: float) -> float:
+    """Threshold at which the recording's own false maxima reach the rate; 0 where there are none to count.
 
-    Few samples hold few rare minima, so the depth reached once a frame is taken from the samples and stretched
-    by the ratio that white noise would have.
+    Heights of maxima between 3.5 and 6 standard deviations follow h exp(-h^2 / 2 c^2) with c = 1 for Gaussian
+    noise; c is fitted, with the even floor that real droplets make, as counted between 7 and 10, taken off.
     """
-    _, _, _, depth = find_peaks(-stack, 2.5, 1)
-    seldom = max(rate, 4.0 / len(stack))
-    count = max(1, round(seldom * len(stack)))
-    if len(depth) <= count:
+    _, _, _, height = find_peaks(stack, _TAIL[0], 1)
+    floor = np.count_nonzero((height >= 7) & (height < 10)) / 3
+    edges = np.array(_TAIL)
+    count = np.histogram(height, edges)[0] - floor * np.diff(edges)
+    middle = 0.5 * (edges[1:] + edges[:-1])
+    used = count >= max(4.0, 0.5 * floor)
+    used &= np.cumprod(used).astype(bool)  # from the lowest class up to the first that is too thin
+    if used.sum() < 2:
         return 0.0
-    reached = float(np.partition(depth, -count)[-count])
-    return reached * threshold_for(rate, area, sigma) / threshold_for(seldom, area, sigma)
+    weight = np.sqrt(count[used])
+    design = np.column_stack([np.ones(used.sum()), -0.5 * middle[used] ** 2]) * weight[:, None]
+    value = np.log(count[used] / middle[used]) * weight
+    (_, inverse_square), *_ = np.linalg.lstsq(design, value, rcond=None)
+    c2 = 1 / max(float(inverse_square), 0.25)
+    above = float(count[used].sum()) / len(stack)
+    low, top = edges[0], edges[1:][used][-1]
+    share = np.exp(-0.5 * low**2 / c2) - np.exp(-0.5 * top**2 / c2)
+    return math.sqrt(max(-2 * c2 * math.log(rate / above * share), low**2)) if above > rate else 0.0
 
 
 def cut_windows(

@@ -7,7 +7,7 @@ equations are moments sum W g^2 u^p v^q and come from two small matrix products 
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, fields
 
 import numpy as np
 from numpy.typing import NDArray
@@ -46,23 +46,29 @@ class Windows:
 
 @dataclass(frozen=True, slots=True)
 class Spots:
-    """Fitted spots, one row a window; covariance of (A, x, y) or (A, x, y, log sx, log sy)."""
+    """Fitted spots, one row a window."""
 
-    amplitude: NDArray[np.float64]  # grey at the centre
-    x: NDArray[np.float64]  # px
-    y: NDArray[np.float64]  # px
-    sx: NDArray[np.float64]  # px
-    sy: NDArray[np.float64]  # px
-    covariance: NDArray[np.float64]  # (N, 3 or 5, 3 or 5)
-    chi2: NDArray[np.float64]  # weighted squares of the residual per used pixel
-    good: NDArray[np.bool_]  # converged inside the window to a bright spot
+    amplitude: NDArray[np.float64]  # (N,) grey at the centre
+    x: NDArray[np.float64]  # (N,) px
+    y: NDArray[np.float64]  # (N,) px
+    sx: NDArray[np.float64]  # (N,) px
+    sy: NDArray[np.float64]  # (N,) px
+    covariance: NDArray[np.float64]  # (N, 3, 3) of amplitude, x, y
+    chi2: NDArray[np.float64]  # (N,) sum of weighted squares of the residual
+    growth: NDArray[np.float64]  # (N, 2) what the residual adds to log sx and log sy, in standard deviations
+    slant: NDArray[np.float64]  # (N,) what it says of a slanting long axis, in standard deviations
+    good: NDArray[np.bool_]  # (N,) converged inside the window to a bright spot
 
     def __len__(self) -> int:
         return len(self.x)
 
+    def take(self, rows: NDArray[np.int64]) -> Spots:
+        """Give the chosen spots."""
+        return Spots(*(getattr(self, f.name)[rows] for f in fields(self)))
 
-# columns of the Jacobian as powers (of u, of v) of the unit coordinates: A, x, y, log sx, log sy
-_POWERS = ((0, 0), (1, 0), (0, 1), (2, 0), (0, 2))
+
+# columns of the Jacobian as powers (of u, of v) of the unit coordinates: A, x, y, log sx, log sy, slant
+_POWERS = ((0, 0), (1, 0), (0, 1), (2, 0), (0, 2), (1, 1))
 _DAMPING = 1.0  # longest step of a centre in px
 _MAX_STEP_WIDTH = 0.35  # longest step of log width
 
@@ -106,15 +112,14 @@ def fit_spots(
     for _ in range(rounds):
         gradient, matrix, _ = _normal_equations(windows, p, camera, columns)
         p[:, :columns] += _limited(_solve(matrix, gradient), p)
-    _, matrix, chi2 = _normal_equations(windows, p, camera, columns)
-    covariance = _inverse(matrix)
+    gradient, matrix, chi2 = _normal_equations(windows, p, camera, 6)
+    covariance = inverses(matrix[:, :columns, :columns])[:, :3, :3]
+    more, doubt = _solve(matrix, gradient), np.sqrt(np.maximum(np.einsum("nii->ni", inverses(matrix)), 1e-30))
     inside = (p[:, 1:3] > -1).all(1) & (p[:, 1:3] < k).all(1)
-    good = (
-        inside & (p[:, 0] > 0) & np.isfinite(p).all(1) & (covariance[:, 1, 1] > 0) & (covariance[:, 2, 2] > 0)
-    )
+    good = inside & (p[:, 0] > 0) & np.isfinite(p).all(1) & (np.einsum("nii->ni", covariance) > 0).all(1)
     return Spots(
         p[:, 0], p[:, 1] + windows.left, p[:, 2] + windows.top, np.exp(p[:, 3]), np.exp(p[:, 4]), covariance,
-        chi2, good,
+        chi2, (more / doubt)[:, 3:5], (more / doubt)[:, 5], good,
     )  # fmt: skip
 
 
@@ -140,7 +145,7 @@ def _first_amplitude(windows: Windows, p: NDArray[np.float64]) -> NDArray[np.flo
 def _normal_equations(
     windows: Windows, p: NDArray[np.float64], camera: Camera, columns: int
 ) -> tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.float64]]:
-    """Gradient, Fisher matrix and chi2 per used pixel at the parameters `p`."""
+    """Gradient, Fisher matrix and chi2 at the parameters `p`."""
     u, v, gx, gy = profiles(p, windows.grey.shape[1])
     model = gy[:, :, None] * gx[:, None, :]
     model *= windows.shade
@@ -154,12 +159,11 @@ def _normal_equations(
     np.subtract(windows.grey, model, out=model)
     residual = weight * model
     model *= residual
-    used = np.maximum(np.count_nonzero(weight, axis=(1, 2)), 1)
-    chi2 = model.sum(axis=(1, 2), dtype=np.float64) / used
+    chi2 = model.sum(axis=(1, 2), dtype=np.float64)
     residual *= windows.shade
     weight *= windows.shade
     weight *= windows.shade
-    order = 3 if columns == 5 else 2
+    order = 3 if columns >= 5 else 2
     first = _moments(residual, gx, gy, u, v, order)
     second = _moments(weight, gx * gx, gy * gy, u, v, 2 * order - 1)
     scale = _scales(p)[:, :columns]
@@ -174,7 +178,7 @@ def _normal_equations(
 def _scales(p: NDArray[np.float64]) -> NDArray[np.float64]:
     """Factors that turn a power of u, v into the derivative of the model."""
     a = p[:, 0]
-    return np.stack([np.ones_like(a), a / np.exp(p[:, 3]), a / np.exp(p[:, 4]), a, a], 1)
+    return np.stack([np.ones_like(a), a / np.exp(p[:, 3]), a / np.exp(p[:, 4]), a, a, a], 1)
 
 
 def _moments(values: F32, fx: F32, fy: F32, u: F32, v: F32, order: int) -> NDArray[np.float64]:
@@ -190,11 +194,11 @@ def _moments(values: F32, fx: F32, fy: F32, u: F32, v: F32, order: int) -> NDArr
 
 def _solve(matrix: NDArray[np.float64], gradient: NDArray[np.float64]) -> NDArray[np.float64]:
     """Steps of all fits; a singular one gives a step of 0."""
-    return np.asarray(np.einsum("nij,nj->ni", _inverse(matrix), gradient))
+    return np.asarray(np.einsum("nij,nj->ni", inverses(matrix), gradient))
 
 
-def _inverse(matrix: NDArray[np.float64]) -> NDArray[np.float64]:
-    """Inverses of positive matrices scaled to unit diagonal; zeros where there is none."""
+def inverses(matrix: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Invert positive matrices, each scaled to unit diagonal first; zeros where there is no inverse."""
     diagonal = np.sqrt(np.maximum(np.einsum("nii->ni", matrix), 1e-30))
     scaled = matrix / (diagonal[:, :, None] * diagonal[:, None, :])
     usable = np.isfinite(scaled).all((1, 2)) & (np.einsum("nii->ni", matrix) > 1e-20).all(1)

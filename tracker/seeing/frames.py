@@ -236,6 +236,33 @@ def open_recording(path: Path | str, *, frame_rate: float | None = None) -> Read
     return Reader(path, open_source(path, frame_rate=frame_rate))
 
 
+def sample_recording(
+    path: Path | str, times: FloatArray, *, frame_rate: float | None = None
+) -> list[tuple[float, Picture]]:
+    """Read single pictures spread over a recording, without decoding what lies between.
+
+    Parameters
+    ----------
+    path : path
+        As for `open_recording`.
+    times : ndarray of shape (n,)
+        Wanted times in s, increasing.
+    frame_rate : float, optional
+        As for `open_recording`.
+
+    Returns
+    -------
+    samples : list of (time, picture)
+        Those that can be read; at the wanted times where every picture is coded by itself, else the key
+        frames before them, each once.
+    """
+    source = open_source(Path(path), frame_rate=frame_rate)
+    try:
+        return [(f.time or 0.0, f.picture) for f in source.sample(times)]
+    finally:
+        source.close()
+
+
 def _same(a: Picture, b: Picture, usual: float) -> bool:
     """Whether two pictures are one: nowhere a change as a droplet makes that has moved on.
 

@@ -20,8 +20,10 @@ F32 = NDArray[np.float32]
 _SCALES = (0.7, 1.0, 1.4, 2.0, 2.8, 4.0, 5.6, 8.0)  # px, spot widths tried
 _DEFAULT_SCALE = 2  # index of the scale taken where nothing is seen
 _COARSE = 2.9  # px, scales up to here must show the noise of finer ones
+_UNSHADED = 0.97  # least shade in the window of a spot that is off the lines
 _FEW = 5  # fewer spots teach nothing
 _SEEN = 6.0  # signal to noise of a spot that teaches
+_CLEAR = 0.3  # of the signal to noise of the clearest: fainter spots may be flecks
 _TEACHERS = 400  # spots that are enough
 _PICTURES = 12  # sample pictures in which teachers are sought
 
@@ -32,10 +34,10 @@ class Eyes:
 
     background: Background
     detector: Detector
-    camera: Camera
+    camera: Camera  # for the weights of fits
     width: float  # px, standard deviation of a sharp spot
     reach: int  # px, half side of the fit's window
-    noise_factor: FloatArray  # (2,) standard deviation of a place against the camera's: faint, bright
+    noise: Camera  # as `camera`, for standard deviations
     report: dict[str, Any]
 
 
@@ -60,18 +62,20 @@ def learn(samples: NDArray[Any], *, black: float, full_scale: float, false_alarm
     residual = chosen - background.level
     guess, noise = scale_search(residual)
     camera = Camera(white_variance(noise, guess), 0.0, black, full_scale)
-    width, spots, windows = find_width(chosen, residual, background, camera, guess=guess)
-    if len(spots) >= _FEW:
-        camera = find_camera(windows, spots, residual, background, camera)
-        width, spots, windows = find_width(chosen, residual, background, camera, guess=width)
+    windows, x, y = find_teachers(chosen, residual, background, camera, guess=guess)
+    width, spots, clear = find_width(windows, (x, y), camera, guess=guess)
+    true = camera
+    if len(clear) >= _FEW:
+        camera, true = find_camera(windows.take(clear), spots.take(clear), residual, background, camera)
+        width, spots, clear = find_width(windows, (x, y), camera, guess=width)
     detector, found = build_detector(samples, background.level, width=width, false_alarms=false_alarms)
     reach = min(max(3, math.ceil(2.8 * width)), (min(samples.shape[1:]) - 1) // 2)
     report = {
-        "spot_width_px": width, "read_noise": math.sqrt(camera.read_variance), "camera_gain": camera.gain,
+        "spot_width_px": width, "read_noise": math.sqrt(camera.read_variance), "camera_gain": true.gain,
         "binning": detector.binning, "background_samples": background.samples,
-        "line_share": background.line_share, "teaching_spots": len(spots), **found,
+        "line_share": background.line_share, "teaching_spots": len(clear), **found,
     }  # fmt: skip
-    return Eyes(background, detector, camera, width, reach, np.ones(2), report)
+    return Eyes(background, detector, camera, width, reach, true, report)
 
 
 def white_variance(noise: float, sigma: float) -> float:
@@ -83,35 +87,53 @@ def white_variance(noise: float, sigma: float) -> float:
     return max(4 * math.pi * sigma**2 * noise**2, 1 / 12)
 
 
-def find_width(
+def find_teachers(
     pictures: NDArray[Any], residual: F32, background: Background, camera: Camera, *, guess: float
-) -> tuple[float, Spots, Windows]:
-    """Width of sharp spots, with the spots that showed it.
-
-    Free fits to the clearest lone spots; the narrower axis counts, as motion widens the other.
-    """
+) -> tuple[Windows, FloatArray, FloatArray]:
+    """Windows around the clearest lone spots of some pictures, and where the spots are in px."""
     frame, x, y = _lone_spots(residual, guess, camera)
     reach = min(max(3, math.ceil(3.2 * guess)), (min(residual.shape[1:]) - 1) // 2)
     windows = cut_windows(
         pictures, frame, x, y, reach=reach, level=background.level, shade=background.shade,
         full_scale=camera.full_scale,
     )  # fmt: skip
-    start = np.full(len(x), guess)
-    spots = fit_spots(windows, (x, y), camera=camera, width=(start, start), free_width=True, rounds=8)
+    return windows, x, y
+
+
+def find_width(
+    windows: Windows, at: tuple[FloatArray, FloatArray], camera: Camera, *, guess: float
+) -> tuple[float, Spots, NDArray[np.int64]]:
+    """Width of sharp spots from free fits to lone ones.
+
+    Parameters
+    ----------
+    windows : Windows
+        Around lone spots.
+    at : tuple of two ndarray
+        Their x and y in px.
+    camera : Camera
+    guess : float
+        First guess of the width in px.
+
+    Returns
+    -------
+    width : float
+        px; the narrower axis counts, as motion widens the other, and spots off the reticle's lines if they are
+        enough. The guess, if too few are clear.
+    spots : Spots
+        All fits.
+    clear : ndarray
+        Rows that fitted well.
+    """
+    start = np.full(len(at[0]), guess)
+    spots = fit_spots(windows, at, camera=camera, width=(start, start), free_width=True, rounds=8)
     clear = spots.good & (np.abs(np.log(spots.sx * spots.sy) / 2 - math.log(guess)) < math.log(2))
-    clear &= np.hypot(spots.x - x, spots.y - y) < 2 * guess
-    rows = np.flatnonzero(clear)
-    spots, windows = _chosen(spots, rows), windows.take(rows)
+    clear &= np.hypot(spots.x - at[0], spots.y - at[1]) < 2 * guess
+    free = clear & (windows.shade.min((1, 2)) > _UNSHADED)
+    rows = np.flatnonzero(free if free.sum() >= 4 * _FEW else clear)
     if len(rows) < _FEW:
-        return guess, spots, windows
-    return float(min(np.median(spots.sx), np.median(spots.sy))), spots, windows
-
-
-def _chosen(s: Spots, rows: NDArray[np.int64]) -> Spots:
-    return Spots(
-        s.amplitude[rows], s.x[rows], s.y[rows], s.sx[rows], s.sy[rows], s.covariance[rows], s.chi2[rows],
-        s.good[rows],
-    )  # fmt: skip
+        return guess, spots, np.flatnonzero(clear)
+    return float(min(np.median(spots.sx[rows]), np.median(spots.sy[rows]))), spots, np.flatnonzero(clear)
 
 
 def scale_search(residual: F32) -> tuple[float, float]:
@@ -161,6 +183,7 @@ def _lone_spots(
     lone = np.ones(len(x), np.bool_)
     pairs = tree.query_pairs(8 * width, output_type="ndarray")
     lone[pairs.ravel()] = False
+    lone &= score > _CLEAR * np.quantile(score, 0.9) if len(score) else lone
     rows = np.flatnonzero(lone)
     rows = rows[np.argsort(-score[rows])[:_TEACHERS]]
     return frame[rows], x[rows], y[rows]
@@ -168,7 +191,7 @@ def _lone_spots(
 
 def find_camera(
     windows: Windows, spots: Spots, residual: F32, background: Background, first: Camera
-) -> Camera:
+) -> tuple[Camera, Camera]:
     """Read variance and gain from what fitted spots leave and from the empty background.
 
     Parameters
@@ -183,7 +206,9 @@ def find_camera(
 
     Returns
     -------
-    camera : Camera
+    weights, noise : Camera
+        For the weights of fits, with no more gain than the empty background allows; and as found, for standard
+        deviations. They differ where a codec makes droplets noisier than the background.
 
     Notes
     -----
@@ -215,5 +240,6 @@ def find_camera(
             0.0,
             float((weight * (square / 0.9733 - empty * power)).sum() / max((weight * excess).sum(), 1e-12)),
         )
-    gain = min(gain, 0.95 * empty / base if base > 0 else gain)
-    return Camera(empty - gain * base, gain, first.black, first.full_scale)
+    true = Camera(max(empty - gain * base, 0.05 * empty), gain, first.black, first.full_scale)
+    gain = min(gain, 0.75 * empty / base if base > 0 else gain)
+    return Camera(empty - gain * base, gain, first.black, first.full_scale), true

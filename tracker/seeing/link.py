@@ -8,10 +8,12 @@ from numpy.typing import NDArray
 from tracker.records import Field, Seen, Settings, Sightings, Tracks
 from tracker.seeing.clocks import Clocks, clocks_of
 from tracker.seeing.stitch import join_pieces
+from tracker.seeing.untangle import untangle
 
 IntArray = NDArray[np.int64]
 
 _CROWDING = 0.06  # other droplets expected within the first gate
+_STEADY = 2  # frames: a droplet is seen at least so often in half of its life; flecks of noise are not
 _LEAST_GATE, _MOST_GATE = 4.0, 60.0  # px
 
 
@@ -46,6 +48,7 @@ def link(seen: Seen, *, field: Field | None, settings: Settings) -> Tracks:
     box = (seen.recording.width, seen.recording.height)
     pieces = link_frames(sightings, clocks, box=box, cuts=seen.cuts)
     pieces = join_pieces(sightings, pieces, clocks, box=box, cuts=seen.cuts)
+    pieces = untangle(sightings, pieces, clocks)
     return _tracks(sightings, pieces, settings.min_frames)
 
 
@@ -110,7 +113,11 @@ def components(n: int, pairs: IntArray) -> IntArray:
 def _tracks(sightings: Sightings, piece: IntArray, least: int) -> Tracks:
     """Pieces that last, numbered by first frame."""
     count = np.bincount(piece)
-    rows = np.flatnonzero(count[piece] >= least)
+    order = np.lexsort((sightings.frame, piece))
+    same = np.diff(piece[order]) == 0
+    steady = np.diff(sightings.frame[order])[same] <= _STEADY
+    share = np.bincount(piece[order][1:][same], steady, len(count)) / np.maximum(count - 1, 1)
+    rows = np.flatnonzero((count >= least)[piece] & ((share >= 0.5) | (count == 1))[piece])
     rows = rows[np.lexsort((sightings.frame[rows], piece[rows]))]
     names, first, number = np.unique(piece[rows], return_index=True, return_inverse=True)
     rank = np.empty(len(names), np.int64)

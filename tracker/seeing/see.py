@@ -10,11 +10,10 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from tracker.records import Flag, FloatArray, Seen, Settings, Sightings
-from tracker.seeing.detect import cut_windows
-from tracker.seeing.fit import fit_spots
-from tracker.seeing.frames import FrameBatch, Reader, open_recording
-from tracker.seeing.learn import Eyes, learn
+from tracker.records import FloatArray, Seen, Settings, Sightings
+from tracker.seeing.frames import FrameBatch, Reader, open_recording, sample_recording
+from tracker.seeing.learn import learn
+from tracker.seeing.look import COLUMNS, look
 
 Progress = Callable[[int, int], None]  # frames done, frames in all (0: unknown)
 Rectangle = tuple[int, int, int, int]
@@ -58,7 +57,7 @@ def see(
     with open_recording(path, frame_rate=frame_rate) as reader:
         batches = iter(reader)
         view = _View(reader, settings, lamp)
-        head = _head(batches, reader, settings)
+        head = _head(batches, view)
         eyes = learn(
             _samples(path, head, view, frame_rate), black=reader.black, full_scale=reader.full_scale,
             false_alarms=settings.false_alarms,
@@ -119,17 +118,20 @@ class _View:
         return np.array([float(p[y : y + height, x : x + width].mean()) for p in batch.pictures])
 
 
-def _head(batches: Iterator[FrameBatch], reader: Reader, settings: Settings) -> list[FrameBatch]:
-    """Batches of the first seconds, as many as memory allows."""
+def _head(batches: Iterator[FrameBatch], view: _View) -> list[FrameBatch]:
+    """Batches to look at before any droplet is sought, as many as memory allows."""
     head: list[FrameBatch] = []
-    size = reader.width * reader.height * (1 if reader.bit_depth <= 8 else 2)
-    begin = settings.start
+    form = view.reader.form
+    begin, count = view.settings.start, 0
     for batch in batches:
         head.append(batch)
+        count += len(batch.times)
         if begin is None:
             begin = float(batch.times[0])
-        enough = batch.times[-1] - begin > _HEAD_SECONDS and batch.first_index >= _SAMPLES
-        if enough or (batch.first_index + len(batch.times)) * size > _HEAD_BYTES:
+        if form.seekable and view.used(batch).any():
+            break
+        enough = batch.times[-1] - begin > _HEAD_SECONDS and count >= _SAMPLES
+        if enough or count * form.picture_bytes > _HEAD_BYTES:
             break
     return head
 
@@ -143,62 +145,32 @@ def _all(head: list[FrameBatch], rest: Iterator[FrameBatch]) -> Iterator[FrameBa
 
 def _samples(path: Path, head: list[FrameBatch], view: _View, frame_rate: float | None) -> NDArray[Any]:
     """Pictures for the background: spread over the head, and over the rest where it can be reached cheaply."""
+    form = view.reader.form
     pictures = [p for b in head for p in view.crop(b.pictures, view.used(b))]
     if not pictures:
         pictures = [p for b in head for p in view.crop(b.pictures, b.usable)]
-    chosen = [pictures[i] for i in np.unique(np.linspace(0, len(pictures) - 1, _SAMPLES).astype(int))]
-    return np.stack(chosen)
-
-
-def look(eyes: Eyes, pictures: list[NDArray[Any]], numbers: NDArray[np.int64]) -> dict[str, NDArray[Any]]:
-    """Sightings of a batch of pictures as columns.
-
-    Parameters
-    ----------
-    eyes : Eyes
-        What was learned of the recording.
-    pictures : list of n ndarray of shape (height, width)
-        Consecutive pictures.
-    numbers : ndarray of shape (n,)
-        Their frame numbers.
-
-    Returns
-    -------
-    columns : dict
-        Columns of `Sightings`, ordered by frame.
-    """
-    if not pictures:
-        return {}
-    frame, x, y, _ = eyes.detector.candidates(pictures)
-    stack = np.stack(pictures)
-    windows = cut_windows(
-        stack, frame, x, y, reach=eyes.reach, level=eyes.background.level, shade=eyes.background.shade,
-        full_scale=eyes.camera.full_scale,
-    )  # fmt: skip
-    width = np.full(len(x), eyes.width)
-    spots = fit_spots(windows, (x, y), camera=eyes.camera, width=(width, width))
-    height, breadth = eyes.background.level.shape
-    std = np.sqrt(np.maximum(np.einsum("nii->ni", spots.covariance), 0))
-    keep = spots.good & (np.hypot(spots.x - x, spots.y - y) < 2 * eyes.width)
-    keep &= spots.amplitude > 3 * std[:, 0]
-    flags = np.where(windows.bad.any((1, 2)), int(Flag.SATURATED), 0)
-    rim = 2 * eyes.width
-    edge = (spots.x < rim) | (spots.y < rim) | (spots.x > breadth - 1 - rim) | (spots.y > height - 1 - rim)
-    flags |= np.where(edge, int(Flag.EDGE), 0)
-    lined = windows.shade[:, eyes.reach, eyes.reach] < 0.97
-    flags |= np.where(lined, int(Flag.LINE), 0)
-    return {
-        "frame": numbers[frame[keep]], "x": spots.x[keep], "y": spots.y[keep], "x_std": std[keep, 1],
-        "y_std": std[keep, 2], "flags": flags[keep], "width": np.sqrt(spots.sx * spots.sy)[keep],
-        "brightness": (2 * np.pi * spots.amplitude * spots.sx * spots.sy)[keep],
-    }  # fmt: skip
+    first = float(head[0].times[0])
+    last = first + form.duration - form.interval
+    low, high = view.settings.start, view.settings.end
+    first, last = max(first, first if low is None else low), min(last, last if high is None else high)
+    many = _SAMPLES if form.seekable else _KEY_FRAMES
+    wanted = first + (last - first) * (np.arange(many) + 0.5) / many
+    if not form.seekable:
+        wanted = wanted[wanted > head[-1].times[-1]]
+    far = [p for _, p in sample_recording(path, wanted, frame_rate=frame_rate)] if len(wanted) else []
+    far = view.crop(far, np.ones(len(far), np.bool_))
+    if not form.seekable or len(far) < _SAMPLES // 2:
+        near = np.unique(np.linspace(0, len(pictures) - 1, _SAMPLES - len(far)).astype(int))
+        far = [pictures[i] for i in near] + far
+    return np.stack(far)
 
 
 def _gather(rows: list[dict[str, NDArray[Any]]], view: _View) -> Sightings:
     """All columns joined, in px of the whole picture."""
     rows = [r for r in rows if r]
-    names = ("frame", "x", "y", "x_std", "y_std", "brightness", "width", "flags")
-    joined: dict[str, Any] = {n: np.concatenate([r[n] for r in rows]) if rows else np.empty(0) for n in names}
+    joined: dict[str, Any] = {
+        n: np.concatenate([r[n] for r in rows]) if rows else np.empty(0) for n in COLUMNS
+    }
     x, y, _, _ = view.box
     joined["x"] = joined["x"] + x
     joined["y"] = joined["y"] + y

@@ -199,7 +199,8 @@ class VideoSource:
             black=float(_LIMITED_BLACK * scale) if limited else 0.0,
             full_scale=float(_LIMITED_WHITE * scale if limited else 2**bits - 1),
             codec=f"{stream.codec_context.name} {frame.format.name}", time_step=0.0 if self._rate else base,
-            interval=1 / rate if rate else 0.0, duration=duration, frames=int(stream.frames or 0), seekable=self._intra and not self._rate and duration > 0,
+            interval=1 / rate if rate else 0.0, duration=duration, frames=int(stream.frames or 0),
+            seekable=self._intra and not self._rate and duration > 0,
         )  # fmt: skip
 
     def _decode(self) -> Iterator[Any]:
