@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 import re
 from functools import lru_cache
+from pathlib import Path
 from typing import Any
 
 from calibration.errors import QuantityError
@@ -104,10 +105,10 @@ def _split(text: str, unit: str) -> tuple[float, float, str, str]:
 
 @lru_cache(maxsize=1)
 def _registry() -> Any:
-    """Give pint's registry, made when the first quantity is read: it takes a quarter of a second."""
+    """Give pint's registry, made when the first quantity is read, with the units of a bench file only."""
     import pint
 
-    return pint.UnitRegistry(autoconvert_offset_to_baseunit=True)
+    return pint.UnitRegistry(Path(__file__).with_name("units.txt"), autoconvert_offset_to_baseunit=True)
 
 
 @lru_cache(maxsize=256)

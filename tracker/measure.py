@@ -7,7 +7,9 @@ from __future__ import annotations
 
 import os
 from collections.abc import Callable
+from importlib import import_module
 from pathlib import Path
+from threading import Thread
 from typing import TYPE_CHECKING
 
 from tracker.errors import RecordingError, ResultError
@@ -15,7 +17,7 @@ from tracker.errors import RecordingError, ResultError
 if TYPE_CHECKING:
     from tracker.bench import Bench
     from tracker.keeping.store import Result
-    from tracker.records import Settings
+    from tracker.records import Seen, Settings
 
 Progress = Callable[[float, float], None]
 
@@ -54,13 +56,9 @@ def measure(
         One line: what, which file, what to do. Nothing that was there before is lost.
     """
     from tracker.bench import Bench, load_bench
-    from tracker.keeping.decisions import read_decisions
-    from tracker.keeping.store import result_folder, write_result
-    from tracker.motion.droplets import evaluate_droplets
-    from tracker.provenance import as_stored, assemble
+    from tracker.keeping.store import result_folder
     from tracker.records import Settings
     from tracker.seeing.see import see
-    from tracker.voltage import field_and_tracks
 
     path = Path(path)
     settings = settings or Settings()
@@ -69,21 +67,38 @@ def measure(
     _require_writable(folder)
     bench = bench if isinstance(bench, Bench) else load_bench(bench, recording=path)
 
+    Thread(target=_import_ahead, daemon=True).start()
     seen = see(path, settings=settings, frame_rate=bench.frame_rate, lamp=bench.field.lamp, progress=progress)
-    bench = bench.fitted_to(seen.recording.width, seen.recording.height)
+    return _evaluated(seen, bench.fitted_to(seen.recording.width, seen.recording.height), settings, folder)
+
+
+def _evaluated(seen: Seen, bench: Bench, settings: Settings, folder: Path) -> Result:
+    """Link, evaluate and write what was seen."""
+    from tracker.keeping.decisions import read_decisions
+    from tracker.keeping.store import write_result
+    from tracker.motion.droplets import evaluate_droplets
+    from tracker.provenance import as_stored, assemble
+    from tracker.voltage import field_and_tracks
+
     field, tracks = field_and_tracks(seen, bench, settings)
     evaluation = evaluate_droplets(
-        as_stored(tracks),
-        seen.recording,
-        field,
-        bench,
-        settings=settings,
-        decisions=read_decisions(folder),
+        as_stored(tracks), seen.recording, field, bench, settings=settings, decisions=read_decisions(folder),
         cuts=seen.cuts,
-    )
-    result = assemble(evaluation, recording=seen.recording, field=field, bench=bench, settings=settings,
-                      seeing={"report": seen.report, "warnings": seen.warnings}, folder=folder)  # fmt: skip
+    )  # fmt: skip
+    result = assemble(
+        evaluation, recording=seen.recording, field=field, bench=bench, settings=settings,
+        seeing={"report": seen.report, "warnings": seen.warnings}, folder=folder,
+    )  # fmt: skip
     return write_result(result, folder, tables=settings.tables)
+
+
+def _import_ahead() -> None:
+    """Import what comes after the seeing while frames are decoded, which needs no interpreter; it saves a second."""
+    import_module("tracker.keeping.decisions")
+    import_module("tracker.motion.droplets")
+    import_module("tracker.voltage")
+    import_module("tracker.provenance")
+    import_module("pyarrow.csv")
 
 
 def _require_recording(path: Path) -> None:
