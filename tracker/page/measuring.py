@@ -1,0 +1,257 @@
+"""From what was dropped on the page to a measurement: a folder for it, the bench file, the job, and clearing up."""
+
+from __future__ import annotations
+
+import contextlib
+import shutil
+from collections.abc import Mapping
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+from physics.errors import FallriseError
+from tracker.benchfile import BENCH_NAME
+from tracker.errors import BenchError
+from tracker.keeping.store import result_folder
+from tracker.page.benchform import Fault, check_pitch, companions, read_form
+from tracker.page.errors import RefusedError
+from tracker.page.jobs import Job
+from tracker.page.library import key_of
+from tracker.page.uploads import Upload, Uploads
+
+MAX_BENCH = 100_000  # characters of a bench file
+PATTERNS = ("", "lines", "grid", "dots")
+LOG_NAME, SCALE_NAME = "voltage.csv", "scale.json"
+
+
+@dataclass(frozen=True, slots=True)
+class Order:
+    """What the page asks to be measured."""
+
+    recording: Upload
+    picture: Upload | None
+    log: Upload | None
+    text: str  # of the bench file
+    log_name: str
+    scale_name: str
+    pitch: str
+    pattern: str
+
+
+def read_order(body: Mapping[str, Any], uploads: Uploads) -> Order:
+    """Check what the page asks for.
+
+    Parameters
+    ----------
+    body : mapping
+        ``recording``, ``picture``, ``log``: numbers of uploads or None; ``bench``: text of a bench file or None;
+        ``values``: fields of the form.
+    uploads : Uploads
+        Files that were sent.
+
+    Returns
+    -------
+    order : Order
+
+    Raises
+    ------
+    RefusedError
+        422 with all `faults`, each beside its field.
+    """
+    held = {
+        role: uploads.get(str(body[role]), kind=role)
+        for role in ("recording", "picture", "log")
+        if body.get(role)
+    }
+    if "recording" not in held:
+        raise RefusedError(422, "there is no recording yet; drop one")
+    values = body.get("values") or {}
+    if not isinstance(values, dict):
+        raise RefusedError(400, "values must be an object")
+    pattern = str(values.get("scale.pattern", ""))
+    if pattern not in PATTERNS:
+        raise RefusedError(400, "scale.pattern must be lines, grid or dots")
+    text = body.get("bench")
+    names: dict[str, str] = {}
+    if text is None:
+        text, faults = read_form(values, has_picture="picture" in held, has_log="log" in held)
+    else:
+        names, faults = _own_bench(text)
+        faults += check_pitch(str(values.get("scale.pitch", ""))) if "picture" in held else []
+    if faults:
+        raise RefusedError(422, "; ".join(fault["message"] for fault in faults), {"faults": faults})
+    return Order(
+        held["recording"], held.get("picture"), held.get("log"), text, names.get("log", LOG_NAME),
+        names.get("scale", SCALE_NAME), str(values.get("scale.pitch", "")), pattern,
+    )  # fmt: skip
+
+
+def _own_bench(text: Any) -> tuple[dict[str, str], list[Fault]]:
+    """Look into a bench file that was dropped."""
+    if not isinstance(text, str) or len(text) > MAX_BENCH:
+        return {}, [Fault("", f"the bench file must be a text of at most {MAX_BENCH} characters")]
+    try:
+        return companions(text), []
+    except ValueError as error:
+        return {}, [Fault("", f"bench file: {error}")]
+
+
+def place_order(order: Order, results: Path) -> Job:
+    """Put the files of an order into a folder of their own and give the job that measures them.
+
+    Parameters
+    ----------
+    order : Order
+        Checked.
+    results : Path
+        Folder that the user chose.
+
+    Returns
+    -------
+    job : Job
+        Not started.
+
+    Raises
+    ------
+    RefusedError
+        422 if the bench file is wrong; the folder is gone again then, and the uploads are still held.
+    """
+    folder = _folder(order.recording, results)
+    recording = order.recording.place(folder)
+    (folder / BENCH_NAME).write_text(order.text, encoding="utf-8")
+    if order.log is not None:
+        order.log.leaf = order.log_name
+        order.log.place(folder)
+    picture = order.picture.place(folder) if order.picture is not None else None
+    _check_bench(order, folder, recording)
+    out = result_folder(recording)
+    task = {
+        "recording": str(recording), "out": str(out), "pitch": order.pitch, "pattern": order.pattern or None,
+        "picture": None if picture is None else str(picture), "scale": str(folder / order.scale_name),
+    }  # fmt: skip
+    job = Job(0, "measure", order.recording.name, task, key=str(out))
+    job.result = {}
+    return job
+
+
+def _folder(recording: Upload, results: Path) -> Path:
+    """Folder of a recording: its own from a try before, or a new one with its name."""
+    if recording.path is not None and recording.path.parent.parent == results:
+        return recording.path.parent
+    stem = Path(recording.leaf).stem
+    for number in range(1, 10_000):
+        folder = results / (stem if number == 1 else f"{stem}_{number}")
+        with contextlib.suppress(FileExistsError):
+            folder.mkdir(parents=True)
+            return folder
+    raise RefusedError(409, f"there are too many recordings called {stem} in {results}")
+
+
+def _check_bench(order: Order, folder: Path, recording: Path) -> None:
+    """Read the bench as the measurement will; a scale that is still to be measured stands in as any scale."""
+    from tracker.bench import load_bench
+
+    bench, trial = folder / BENCH_NAME, None
+    try:
+        if order.picture is not None:
+            trial = folder / "trial.toml"
+            trial.write_text(_with_any_scale(order.text), encoding="utf-8")
+        load_bench(trial or bench, recording=recording)
+    except BenchError as error:
+        fault = Fault(error.key, f"read {error.found}; allowed: {error.allowed}")
+        raise RefusedError(422, str(error), {"faults": [fault]}) from error
+    finally:
+        if trial is not None:
+            trial.unlink(missing_ok=True)
+
+
+def _with_any_scale(text: str) -> str:
+    """The bench with a stated scale in the place of one that the reference picture will give."""
+    lines = [line for line in text.splitlines() if not line.replace(" ", "").startswith("scale=")]
+    for number, line in enumerate(lines):
+        if line.strip() == "[camera]":
+            return "\n".join([*lines[: number + 1], 'metres_per_pixel = "1 um"', *lines[number + 1 :]])
+    return "\n".join([*lines, "[camera]", 'metres_per_pixel = "1 um"'])
+
+
+def finish_order(order: Order, uploads: Uploads, job: Job) -> None:
+    """Clear up when a measurement ended: done keeps all, cancelled removes all, failed waits for another try.
+
+    Parameters
+    ----------
+    order : Order
+        That was measured.
+    uploads : Uploads
+        Where its files are held.
+    job : Job
+        That ended.
+    """
+    files = [held for held in (order.recording, order.picture, order.log) if held is not None]
+    if job.state == "done":
+        job.result = {"id": key_of(Path(job.task["out"]))}
+    if job.state == "cancelled":
+        shutil.rmtree(Path(job.task["out"]).parent, ignore_errors=True)
+    if job.state in ("done", "cancelled"):
+        for held in files:
+            uploads.release(held.number)
+
+
+def remove_upload(number: str, uploads: Uploads, results: Path) -> None:
+    """Drop a file that was sent; if it lies in a folder of a measurement that failed, the folder goes when empty.
+
+    Parameters
+    ----------
+    number : str
+        Of the upload.
+    uploads : Uploads
+        Where it is held.
+    results : Path
+        Folder that the user chose.
+    """
+    held = uploads.take_out(number)
+    if held is None:
+        return
+    held.discard()
+    folder = held.path.parent if held.path is not None else results
+    if folder.parent == results and held.kind == "recording" and not any(folder.glob("*.fallrise")):
+        shutil.rmtree(folder, ignore_errors=True)
+
+
+def measure(
+    *, recording: str, out: str, picture: str | None, scale: str, pitch: str, pattern: str | None, progress: Any
+) -> None:  # fmt: skip
+    """Measure the scale, if there is a picture of a pattern, then the recording.
+
+    Parameters
+    ----------
+    recording, out : str
+        Paths of the recording and the result folder.
+    picture : str or None
+        Path of the reference picture.
+    scale : str
+        Path of the scale file that is made from it.
+    pitch, pattern : str
+        Of the reference pattern.
+    progress : callable
+        Makes a (done, total) callable for a text.
+    """
+    from tracker.measure import measure as measure_recording
+
+    if picture is not None:
+        _measure_scale(Path(picture), Path(scale), pitch, pattern, progress)
+    measure_recording(Path(recording), out=Path(out), progress=progress("measuring"))
+
+
+def _measure_scale(picture: Path, scale: Path, pitch: str, pattern: str | None, progress: Any) -> None:
+    from calibration.measuring import measure_scale
+
+    from calibration.scale import write_scale
+
+    progress("looking at the reference picture")(0, 1)
+    try:
+        found, _ = measure_scale([picture], pitch_text=pitch, pattern=pattern)
+    except FallriseError as error:
+        raise BenchError(
+            str(picture), "scale.pitch", str(error), "a sharp picture of the reference pattern"
+        ) from error
+    write_scale(found, scale)

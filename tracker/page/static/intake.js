@@ -1,0 +1,221 @@
+// A recording comes in: files dropped or chosen, the bench as a file or typed, then the measurement is asked for.
+
+import { bytes, clearNotice, complain, el, notice } from "./dom.js";
+import { post, remove, upload } from "./api.js";
+
+const ROLES = { recording: "Recording", bench: "Bench file", picture: "Reference picture", log: "Voltage log" };
+const SECTIONS = [
+  ["Cell", [["cell.plate_gap", "Plate gap", "6.00(2) mm"], ["cell.voltage", "Field-on voltage", "260.0(5) V"]]],
+  ["Oil and air", [["oil.density", "Oil density", "886(1) kg/m^3"], ["oil.density_temperature", "\u2026 at", "20 degC"], ["air.temperature", "Temperature", "22.0(3) degC"], ["air.pressure", "Pressure", "1008(1) hPa"], ["air.relative_humidity", "Humidity", "45(5) percent"]]],
+  ["Camera and place", [["camera.metres_per_pixel", "Size of a pixel", "2.980(5) um"], ["camera.exposure", "Exposure", "20 ms"], ["camera.frame_rate", "Frame rate", "25 Hz"], ["site.gravity", "Gravity", "9.8100(2) m/s^2"]]],
+];
+const HINTS = {
+  "camera.metres_per_pixel": "left empty when a reference picture is given",
+  "camera.exposure": "empty: half the time between frames",
+  "camera.frame_rate": "only for recordings without times",
+  "oil.density_temperature": "empty: the air's temperature",
+};
+const SOURCES = [["list", "typed list of times and voltages"], ["log", "log of the supply (CSV)"], ["lamp", "lamp in the picture"], ["motion", "the droplets' own motion"]];
+
+export class Intake {
+  constructor(box, shelf, { onStarted }) {
+    Object.assign(this, { shelf, onStarted });
+    this.files = {};
+    this.started = new Map();
+    this.benchText = null;
+    this.values = {};
+    this.error = el("p", { class: "error", role: "alert" });
+    this.drop = this.dropZone();
+    this.list = el("ul", { class: "files" });
+    this.formBox = el("div");
+    this.go = el("button", { type: "submit", class: "main" }, "Measure");
+    this.form = el("form", { noValidate: true, onsubmit: (event) => { event.preventDefault(); this.measure(); } }, this.list, this.formBox, this.error, el("div", { class: "row" }, this.go));
+    box.append(el("section", { class: "card", "aria-labelledby": "intake-title" }, el("h2", { id: "intake-title" }, "Measure a recording"), this.drop, this.form,
+      el("p", { class: "soft" }, "Results are kept in ", el("span", { class: "num" }, shelf.results), "."), this.status = el("p", { class: "hidden", role: "status" })));
+    this.stop = (event) => { if ([...(event.dataTransfer?.types || [])].includes("Files")) event.preventDefault(); };
+    for (const name of ["dragover", "drop"]) window.addEventListener(name, this.stop);
+    this.fillForm();
+    this.refresh();
+  }
+
+  dropZone() {
+    const input = el("input", { type: "file", id: "files", multiple: true, class: "hidden", onchange: () => { this.take([...input.files]); input.value = ""; } });
+    const choose = el("button", { type: "button", onclick: () => input.click() }, "Choose files");
+    input.tabIndex = -1;
+    input.setAttribute("aria-label", "Files of a measurement");
+    const zone = el("div", { class: "drop" }, el("strong", {}, "Drop a recording here"),
+      el("p", { class: "soft" }, "with its bench file, reference picture or voltage log, if there are any"), choose, input);
+    zone.addEventListener("dragover", (event) => { event.preventDefault(); zone.classList.add("over"); });
+    zone.addEventListener("dragleave", () => zone.classList.remove("over"));
+    zone.addEventListener("drop", (event) => { event.preventDefault(); zone.classList.remove("over"); this.take([...event.dataTransfer.files]); });
+    return zone;
+  }
+
+  roleOf(file) {
+    const ending = file.name.toLowerCase().match(/\.[^.]*$/)?.[0] || "";
+    if (ending === ".toml") return "bench";
+    if ([".csv", ".txt"].includes(ending)) return "log";
+    if ([".png", ".jpg", ".jpeg", ".bmp"].includes(ending)) return "picture";
+    if ([".tif", ".tiff"].includes(ending)) return this.files.recording ? "picture" : "recording";
+    return "recording";
+  }
+
+  take(files) {
+    this.error.textContent = "";
+    for (const file of files) {
+      const role = this.roleOf(file);
+      if (role === "bench") this.readBench(file);
+      else this.send(role, file);
+    }
+    this.refresh();
+  }
+
+  async readBench(file) {
+    if (file.size > 100_000) { this.error.textContent = `${file.name} is too large for a bench file`; return; }
+    this.files.bench = { name: file.name, size: file.size, state: "done" };
+    this.benchText = await file.text();
+    this.fillForm();
+    this.refresh();
+  }
+
+  async send(role, file) {
+    if (file.size > this.shelf.limit) { this.error.textContent = `${file.name} is too large: ${bytes(file.size)}, the limit is ${bytes(this.shelf.limit)}`; return; }
+    if (file.size === 0) { this.error.textContent = `${file.name} is empty`; return; }
+    this.drop_(role);
+    const entry = { name: file.name, size: file.size, state: "sending", sent: 0 };
+    this.files[role] = entry;
+    const job = upload(file, role, (sent) => { entry.sent = sent; this.refresh(); });
+    entry.cancel = job.cancel;
+    this.refresh();
+    if (role === "picture") this.fillForm();
+    try {
+      const held = await job.done;
+      entry.state = "done";
+      entry.number = held.number;
+      this.status.textContent = `${file.name} is here`;
+    } catch (error) {
+      if (this.files[role] === entry) delete this.files[role];
+      this.error.textContent = `${file.name}: ${error.message}`;
+    }
+    this.refresh();
+  }
+
+  drop_(role) {
+    const entry = this.files[role];
+    if (!entry) return;
+    if (entry.state === "sending") entry.cancel();
+    else if (entry.number) remove(`/api/uploads/${entry.number}`).catch(() => {});
+    delete this.files[role];
+  }
+
+  removeFile(role) {
+    this.drop_(role);
+    if (role === "bench") this.benchText = null;
+    this.fillForm();
+    this.refresh();
+  }
+
+  refresh() {
+    const roles = Object.keys(ROLES).filter((role) => this.files[role]);
+    this.list.replaceChildren(...roles.map((role) => {
+      const entry = this.files[role];
+      const state = entry.state === "sending" ? `${bytes(entry.sent)} of ${bytes(entry.size)}` : bytes(entry.size);
+      const button = el("button", { type: "button", onclick: () => this.removeFile(role), "aria-label": `Remove ${entry.name}` }, entry.state === "sending" ? "Cancel" : "Remove");
+      return el("li", {}, el("span", { class: "role" }, ROLES[role]), el("span", { class: "leaf" }, entry.name), el("span", { class: "num soft" }, state), button);
+    }));
+    this.form.hidden = !roles.length;
+    const sending = roles.some((role) => this.files[role].state === "sending");
+    this.go.disabled = !this.files.recording || sending || this.busy;
+    this.go.textContent = sending ? "Sending \u2026" : this.busy ? "Starting \u2026" : "Measure";
+  }
+
+  field(key, title, example) {
+    const id = `f-${key.replace(".", "-")}`;
+    const input = el("input", { type: "text", id, name: key, value: this.values[key] || "", placeholder: example, autocomplete: "off", spellcheck: false, "aria-describedby": `${id}-e${HINTS[key] ? ` ${id}-h` : ""}` });
+    input.addEventListener("input", () => { this.values[key] = input.value; this.fault(key, ""); });
+    return el("div", { class: "field" }, el("label", { htmlFor: id }, title), input, el("span", { class: "error", id: `${id}-e` }), HINTS[key] ? el("span", { class: "hint", id: `${id}-h` }, HINTS[key]) : null);
+  }
+
+  fillForm() {
+    const parts = [];
+    if (this.files.picture) parts.push(el("fieldset", {}, el("legend", {}, "Reference picture"), this.field("scale.pitch", "Line spacing", "0.1(0) mm"), this.choice("scale.pattern", "Pattern", [["", "find out"], ["lines", "ruled lines"], ["grid", "square grid"], ["dots", "dots"]])));
+    if (this.benchText === null) {
+      parts.push(el("p", { class: "soft" }, "No bench file yet: type what is known. Uncertainties stand in brackets, as in 6.00(2) mm."));
+      for (const [title, fields] of SECTIONS) {
+        const shown = fields.filter(([key]) => !(key === "camera.metres_per_pixel" && this.files.picture));
+        parts.push(el("fieldset", {}, el("legend", {}, title), ...shown.map((f) => this.field(...f))));
+      }
+      parts.push(this.fieldOfField());
+    }
+    this.formBox.replaceChildren(...parts);
+  }
+
+  choice(key, title, options) {
+    const id = `f-${key.replace(".", "-")}`, select = el("select", { id, name: key, "aria-describedby": `${id}-e` }, ...options.map(([value, text]) => el("option", { value }, text)));
+    select.value = this.values[key] || options[0][0];
+    select.addEventListener("change", () => { this.values[key] = select.value; this.fault(key, ""); if (key === "field.source") { this.fillForm(); document.getElementById(id).focus(); } });
+    return el("div", { class: "field" }, el("label", { htmlFor: id }, title), select, el("span", { class: "error", id: `${id}-e` }));
+  }
+
+  fieldOfField() {
+    const source = this.values["field.source"] || "list";
+    const more = { list: [["field.list", "Voltages", "0 s 0 V, 2 s 260 V, 4.4 s 0 V"]], log: [["field.clock_offset", "Clock offset", "auto"]], lamp: [["field.lamp", "Lamp x y w h", "8 8 16 16"]], motion: [] }[source];
+    return el("fieldset", {}, el("legend", {}, "Field"), this.choice("field.source", "Known from", SOURCES), ...more.map((f) => this.field(...f)),
+      source === "log" ? el("p", { class: "hint soft" }, "Drop the log as a CSV file with the columns time_s and voltage_v.") : "");
+  }
+
+  fault(key, text) {
+    const id = `f-${key.replace(".", "-")}`, place = document.getElementById(`${id}-e`), input = document.getElementById(id);
+    if (!place || !input) return false;
+    place.textContent = text;
+    input.setAttribute("aria-invalid", text ? "true" : "false");
+    return true;
+  }
+
+  showFaults(faults) {
+    const rest = [];
+    for (const { key, message } of faults) if (!this.fault(key, message)) rest.push(key ? `${key}: ${message}` : message);
+    this.error.textContent = rest.join(" ");
+    this.form.querySelector('[aria-invalid="true"]')?.focus();
+  }
+
+  async measure() {
+    this.error.textContent = "";
+    for (const place of this.form.querySelectorAll('[aria-invalid="true"]')) this.fault(place.name, "");
+    this.busy = true;
+    this.refresh();
+    const number = (role) => this.files[role]?.number || null;
+    const values = Object.fromEntries(Object.entries(this.values).filter(([, text]) => text.trim()));
+    const what = { recording: number("recording"), picture: number("picture"), log: number("log"), bench: this.benchText, values };
+    try {
+      const job = await post("/api/measure", what);
+      this.started.set(job.number, { ...this.files });
+      this.status.textContent = `${this.files.recording.name} is being measured`;
+      this.onStarted();
+    } catch (error) {
+      if (error.facts?.faults) this.showFaults(error.facts.faults);
+      else this.error.textContent = error.message;
+    }
+    this.busy = false;
+    this.refresh();
+  }
+
+  // A measurement of this page ended without a result: the files stay, and what was wrong stands beside its field.
+  ended(job) {
+    if (!this.started.delete(job.number)) return;
+    if (job.state === "failed") {
+      const { key, found, allowed, message } = job.error;
+      if (key && this.fault(key, `read ${found}; allowed: ${allowed}`)) return;
+      this.error.textContent = message;
+    } else if (job.state === "cancelled") { this.files = {}; this.benchText = null; this.fillForm(); }
+    this.refresh();
+  }
+
+  close() {
+    for (const name of ["dragover", "drop"]) window.removeEventListener(name, this.stop);
+    for (const entry of Object.values(this.files)) if (entry.state === "sending") entry.cancel();
+    clearNotice("intake");
+  }
+}
+
+export { complain, notice };

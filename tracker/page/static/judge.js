@@ -1,0 +1,107 @@
+// A person's decisions on the chosen droplet: accept, doubt, reject, split, trim, join, set back, undo.
+
+import { el, notice } from "./dom.js";
+import { Refused, post } from "./api.js";
+
+export class Judge {
+  constructor(box, { state, onResult, onStale }) {
+    Object.assign(this, { state, onResult, onStale });
+    this.reason = el("input", { type: "text", id: "reason", maxLength: 400, autocomplete: "off", placeholder: "why, in your words" });
+    this.error = el("div", { class: "error", role: "alert", id: "reason-error" });
+    const act = (text, title, call, key) => {
+      const button = el("button", { type: "button", title: key ? `${title} (key ${key})` : title, onclick: call }, text);
+      if (key) button.setAttribute("aria-keyshortcuts", key);
+      return button;
+    };
+    this.buttons = {
+      keep: act("Accept", "Keep this droplet", () => this.verdict("keep"), "A"),
+      doubt: act("Doubt", "Doubt this droplet", () => this.verdict("doubt"), "D"),
+      reject: act("Reject", "Reject this droplet", () => this.verdict("reject"), "X"),
+      split: act("Split", "Split the track at the frame shown", () => this.split(), "S"),
+      trimStart: act("Trim before", "Leave out everything before the frame shown", () => this.trim("start"), "["),
+      trimEnd: act("Trim after", "Leave out everything after the frame shown", () => this.trim("end"), "]"),
+      reset: act("Set back", "Take all decisions on this droplet back", () => this.decide({ verdict: "reset" })),
+      undo: act("Undo", "Take the last decision of this recording back", () => this.undo(), "U"),
+    };
+    this.other = el("select", { id: "other" });
+    this.join = act("Join", "Join this track with the chosen other one", () => this.joinWith(), null);
+    const { keep, doubt, reject, split, trimStart, trimEnd, reset, undo } = this.buttons;
+    this.target = el("span", { class: "soft" });
+    box.append(
+      el("div", { class: "reason" }, el("label", { htmlFor: "reason" }, "Reason"), this.reason, reset, undo),
+      el("div", { class: "row" },
+        el("div", { class: "row", role: "group", "aria-label": "Verdict of a person" }, keep, doubt, reject), el("span", { class: "sep" }),
+        el("div", { class: "row", role: "group", "aria-label": "Change the track" }, split, trimStart, trimEnd, this.join, el("label", { htmlFor: "other", class: "hidden" }, "Other droplet to join with"), this.other)),
+      this.error,
+    );
+    this.reason.setAttribute("aria-describedby", "reason-error");
+    this.reason.addEventListener("input", () => this.say(""));
+  }
+
+  say(text) {
+    this.error.textContent = text;
+    this.reason.setAttribute("aria-invalid", text ? "true" : "false");
+  }
+
+  refresh() {
+    const { result, chosen } = this.state();
+    const none = chosen === null;
+    for (const [name, button] of Object.entries(this.buttons)) button.disabled = this.busy || (name === "undo" ? !result.can_undo : none);
+    this.join.disabled = this.busy || none;
+    const before = this.other.value;
+    this.other.replaceChildren(el("option", { value: "" }, "with"), ...result.droplets.filter((d) => d.droplet !== chosen).map((d) => el("option", { value: String(d.droplet) }, String(d.droplet))));
+    if ([...this.other.options].some((option) => option.value === before)) this.other.value = before;
+  }
+
+  needReason() {
+    if (this.reason.value.trim()) return true;
+    this.say("Please write the reason first: it is kept with the decision.");
+    this.reason.focus();
+    return false;
+  }
+
+  verdict(verdict) { if (this.needReason()) this.decide({ verdict }); }
+
+  split() { if (this.needReason()) this.decide({ verdict: "split", at: this.state().time }); }
+
+  trim(end) {
+    if (!this.needReason()) return;
+    const { time } = this.state();
+    this.decide(end === "start" ? { verdict: "trim", start: time } : { verdict: "trim", end: time });
+  }
+
+  joinWith() {
+    if (!this.other.value) { this.say("Choose the other droplet first."); this.other.focus(); return; }
+    if (this.needReason()) this.decide({ verdict: "join", other: Number(this.other.value) });
+  }
+
+  async decide(decision) {
+    const { result, chosen } = this.state();
+    if (chosen === null) return;
+    await this.send("decide", { revision: result.revision, droplet: chosen, reason: this.reason.value.trim(), ...decision });
+  }
+
+  async undo() {
+    const { result } = this.state();
+    if (result.can_undo) await this.send("undo", { revision: result.revision });
+  }
+
+  async send(what, body) {
+    if (this.busy) return;
+    this.busy = true;
+    this.refresh();
+    try {
+      const answer = await post(`/api/results/${this.state().result.id}/${what}`, body);
+      this.reason.value = "";
+      this.say("");
+      this.busy = false;
+      await this.onResult(answer, what);
+    } catch (error) {
+      this.busy = false;
+      if (error instanceof Refused && error.status === 409) this.onStale(error);
+      else if (error instanceof Refused && error.status >= 400 && error.status < 500) this.say(error.message);
+      else notice(error.message, { bad: true });
+    }
+    this.refresh();
+  }
+}

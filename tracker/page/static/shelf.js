@@ -1,0 +1,140 @@
+// The start view: a place to drop a recording, all recordings with their state, the worst tracks, work under way.
+
+import { clearNotice, complain, el, fixed, notice, verdictMark } from "./dom.js";
+import { get, post } from "./api.js";
+import { Intake } from "./intake.js";
+
+const ORDERS = [["name", "by name"], ["worst", "worst first"], ["new", "newest first"]];
+
+export class ShelfView {
+  constructor(main, shelf, { tools, trail, update }) {
+    Object.assign(this, { main, shelf, tools, trail, update });
+    this.order = "name";
+    this.reason = "";
+    this.known = new Set(shelf.jobs.filter((job) => job.state !== "running" && job.state !== "waiting").map((job) => job.number));
+  }
+
+  async open() {
+    this.trail.replaceChildren(el("span", { "aria-hidden": "true" }, "/"), el("span", { class: "name", title: this.shelf.place }, this.shelf.place));
+    const left = el("div"), right = el("section", { class: "card", "aria-labelledby": "shelf-title" });
+    this.jobBox = el("section", { class: "card", "aria-labelledby": "jobs-title", hidden: true });
+    const cautions = el("section", { class: "card cautions", "aria-labelledby": "cautions-title" }, el("h2", { id: "cautions-title" }, "Before you switch on"),
+      el("ul", {}, ...this.shelf.cautions.map((text) => el("li", {}, text))));
+    this.intake = new Intake(left, this.shelf, { onStarted: () => this.poll(true) });
+    left.append(this.jobBox, cautions);
+    this.list = el("ul", { class: "shelf" });
+    this.worst = el("div");
+    this.tally = el("p", { class: "soft" });
+    const order = el("select", { id: "order", onchange: () => { this.order = order.value; this.fill(); } }, ...ORDERS.map(([value, text]) => el("option", { value }, text)));
+    this.reasonSelect = el("select", { id: "reason-filter", onchange: () => { this.reason = this.reasonSelect.value; this.fill(); } });
+    right.append(el("h1", { id: "shelf-title" }, "Recordings"), this.tally,
+      el("div", { class: "row shelf-tools" }, el("label", { htmlFor: "order" }, "Order"), order, el("label", { htmlFor: "reason-filter" }, "With reason"), this.reasonSelect),
+      this.list, this.worst);
+    this.main.replaceChildren(el("div", { class: "start" }, left, right));
+    this.fill();
+    this.poll(true);
+  }
+
+  fill() {
+    const codes = new Map();
+    for (const item of this.shelf.items) for (const [code, n] of Object.entries(item.reasons || {})) codes.set(code, (codes.get(code) || 0) + n);
+    this.reasonSelect.replaceChildren(el("option", { value: "" }, "any"), ...[...codes].sort().map(([code, n]) => el("option", { value: code }, `${code.replaceAll("_", " ")} (${n})`)));
+    this.reasonSelect.value = codes.has(this.reason) ? this.reason : "";
+    this.reason = this.reasonSelect.value;
+    const by = { name: (a, b) => a.name.localeCompare(b.name, undefined, { numeric: true }), worst: (a, b) => b.bad - a.bad || a.name.localeCompare(b.name), new: (a, b) => b.when - a.when };
+    const items = this.shelf.items.filter((item) => !this.reason || (item.reasons || {})[this.reason]).sort(by[this.order]);
+    const done = this.shelf.items.filter((item) => item.status === "done").length, failed = this.shelf.items.filter((item) => item.status === "failed").length;
+    this.tally.textContent = this.shelf.items.length ? `${done} measured, ${failed} failed, ${this.shelf.items.length - done - failed} not measured, in ${this.shelf.place}` : "Nothing is measured here yet. Drop a recording to begin.";
+    const key = JSON.stringify(items);
+    if (key !== this.shownKey) {
+      this.shownKey = key;
+      this.list.replaceChildren(...items.map((item) => this.tile(item)));
+    }
+    this.fillWorst();
+    this.fillJobs();
+  }
+
+  tile(item) {
+    const words = [el("div", { class: "name" }, item.name)];
+    if (item.status === "done") {
+      const parts = ["keep", "doubt", "reject"].map((v) => [v, item[v]]), total = Math.max(1, item.droplets);
+      const bar = el("div", { class: "bar", "aria-hidden": "true" }, ...parts.map(([v, n]) => { const part = el("i", { class: v }); part.style.width = `${(100 * n) / total}%`; return part; }));
+      words.push(el("div", { class: "soft" }, `${item.droplets} droplets: ${item.keep} keep, ${item.doubt} doubt, ${item.reject} reject`), bar, item.unit ? el("div", { class: "soft num" }, item.unit) : "");
+      const picture = el("img", { src: `/api/results/${item.id}/small.jpg`, alt: "", loading: "lazy", width: 112, height: 84 });
+      picture.addEventListener("error", () => picture.replaceWith(el("span", { class: "blank" }, "no picture")));
+      const way = this.order === "worst" && item.worst !== null ? `#/${item.id}/${item.worst}` : `#/${item.id}`;
+      return el("li", {}, el("a", { class: "tile", href: way }, picture, el("div", { class: "words" }, ...words)));
+    }
+    words.push(el("div", { class: "soft" }, item.status === "failed" ? `failed: ${item.why}` : item.why || "not measured"));
+    return el("li", {}, el("div", { class: "tile-off card" }, ...words));
+  }
+
+  // The tracks with the most to look at, over all recordings: each opens where it lies.
+  fillWorst() {
+    const rows = this.shelf.items.flatMap((item) => (item.tracks || []).map((t) => ({ ...t, id: item.id, name: item.name })))
+      .filter((t) => !this.reason || t.reasons.includes(this.reason)).sort((a, b) => b.score - a.score).slice(0, 12);
+    if (!rows.length || (this.order !== "worst" && !this.reason)) { this.worst.replaceChildren(); return; }
+    const head = el("tr", {}, ...["Recording", "Droplet", "Verdict", "Reasons"].map((text) => el("th", { scope: "col" }, text)));
+    this.worst.replaceChildren(el("h2", {}, "Tracks to look at first"), el("table", { class: "worst" }, el("thead", {}, head), el("tbody", {}, ...rows.map((t) => el("tr", {},
+      el("td", {}, t.name), el("td", {}, el("a", { href: `#/${t.id}/${t.droplet}`, "aria-label": `droplet ${t.droplet} of ${t.name}` }, String(t.droplet))), el("td", {}, verdictMark(t.verdict)),
+      el("td", {}, t.reasons.map((code) => this.shelf.reasons[code] || code).join(" ")))))));
+  }
+
+  fillJobs() {
+    const jobs = this.shelf.jobs.filter((job) => job.kind === "measure");
+    this.jobBox.hidden = !jobs.length;
+    if (!jobs.length) return;
+    const focus = document.activeElement?.dataset?.job;
+    this.jobBox.replaceChildren(el("h2", { id: "jobs-title" }, "Measurements"), el("ul", { class: "jobs" }, ...jobs.slice(0, 8).map((job) => this.job(job))));
+    if (focus) this.jobBox.querySelector(`[data-job="${focus}"]`)?.focus();
+  }
+
+  job(job) {
+    const state = { waiting: "waits", running: job.text || "measuring", cancelling: "stopping", done: "done", failed: "failed", cancelled: "cancelled" }[job.state];
+    const parts = [el("div", { class: "spread" }, el("strong", {}, job.title), el("span", { class: "num soft" }, `${state}${job.seconds ? `, ${fixed(job.seconds, 0)} s` : ""}`))];
+    if (job.state === "running" || job.state === "waiting") {
+      const bar = el("progress", { max: 1, "aria-label": `progress of ${job.title}` });
+      if (job.progress > 0) bar.value = job.progress;
+      const cancel = el("button", { type: "button", onclick: () => post(`/api/jobs/${job.number}/cancel`).then(() => this.poll(true), complain), "aria-label": `Cancel ${job.title}` }, "Cancel");
+      cancel.dataset.job = job.number;
+      parts.push(el("div", { class: "row" }, el("span", { class: "num" }, `${Math.round(100 * job.progress)} %`), cancel), bar);
+    }
+    if (job.state === "failed") parts.push(el("div", { class: "error" }, job.error.message));
+    if (job.state === "done" && job.result.id) parts.push(el("a", { href: `#/${job.result.id}` }, "Open"));
+    return el("li", {}, ...parts);
+  }
+
+  async poll(now = false) {
+    clearTimeout(this.timer);
+    if (this.closed) return;
+    if (now) {
+      try {
+        this.shelf = await get("/api/shelf");
+        this.update(this.shelf);
+        clearNotice("server");
+      } catch (error) { if (!this.closed) notice(error.message, { bad: true, key: "server" }); }
+      if (this.closed) return;
+      this.fill();
+      for (const job of this.shelf.jobs) {
+        if (job.kind !== "measure" || this.known.has(job.number)) continue;
+        if (job.state === "done" && this.intake.started.has(job.number)) { location.hash = `#/${job.result.id}`; return; }
+        if (job.state === "failed" || job.state === "done" || job.state === "cancelled") {
+          this.known.add(job.number);
+          this.intake.ended(job);
+        }
+      }
+    }
+    const busy = this.shelf.jobs.some((job) => job.state === "running" || job.state === "waiting" || job.state === "cancelling") || this.shelf.items.some((item) => item.status === "unread");
+    this.timer = setTimeout(() => this.poll(true), busy ? 500 : 4000);
+  }
+
+  key() { return false; }
+
+  close() {
+    this.closed = true;
+    clearTimeout(this.timer);
+    this.intake?.close();
+    this.trail.replaceChildren();
+    this.tools.replaceChildren();
+  }
+}

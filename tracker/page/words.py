@@ -1,0 +1,57 @@
+"""Sentences of the page that are made from numbers."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from typing import Any
+
+from physics.droplet import ELEMENTARY_CHARGE
+
+
+def in_brackets(value: float, std: float) -> str:
+    """Write a value with its standard uncertainty in units of the last two digits.
+
+    Parameters
+    ----------
+    value, std : float
+        In the same unit; `std` above 0.
+
+    Returns
+    -------
+    text : str
+        Such as ``1.6021(34)``.
+    """
+    from math import floor, log10
+
+    if not std > 0:
+        return f"{value:.5g}"
+    digits = max(0, 1 - floor(log10(std)))
+    return f"{value:.{digits}f}({round(std * 10**digits)})"
+
+
+def unit_words(unit: Mapping[str, Any] | None, *, short: bool = False) -> str:
+    """Say what charge unit a recording shows, or why none.
+
+    Parameters
+    ----------
+    unit : mapping or None
+        ``charge_unit`` of recording.json.
+    short : bool
+        Only the value; empty if none is resolved.
+
+    Returns
+    -------
+    text : str
+    """
+    if not unit:
+        return "" if short else "No charge unit was looked for."
+    value, std = unit.get("charge_unit_c"), unit.get("charge_unit_std_c")
+    if unit.get("resolved") and value:
+        text = f"charge unit {in_brackets(value * 1e19, (std or 0.0) * 1e19)} \u00d7 10\u207b\u00b9\u2079 C"
+        if short:
+            return text
+        used = unit.get("droplets_used")
+        over_e = f"{value / ELEMENTARY_CHARGE:.4f} e"
+        return f"{text[0].upper()}{text[1:]}, {over_e}, from {used} droplets. No quantum was assumed."
+    reason = unit.get("reason") or "the charges do not show one"
+    return "" if short else f"No charge unit is resolved: {reason}. Charges are shown over e."
