@@ -324,6 +324,22 @@ def budget(
     show_budgets(made)
 
 
+@app.command(epilog=_example("fallrise inspect sample_videos/steady.fallrise"))
+def inspect(
+    target: Annotated[Path | None, typer.Argument(help="A result, a folder of results (such as a batch's), or "
+                                                  "nothing.")] = None,
+    results: Annotated[Path | None, typer.Option("--results", help="Folder for recordings that are dropped on the "
+                                                 "page.")] = None,
+    port: Annotated[int, typer.Option("--port", min=0, max=65535, help="0: any free one.")] = 0,
+    browser: Annotated[bool, typer.Option("--browser/--no-browser", help="Open the page, or only print its "
+                                          "address.")] = True,
+) -> None:  # fmt: skip
+    """Open the inspection page, on this machine only: watch droplets, judge tracks, measure what is dropped."""
+    from tracker.page.server import serve
+
+    serve(target, port=port, open_browser=browser, results=results, say=typer.echo)
+
+
 def _progress(label: str, *, hidden: bool = False) -> Any:
     """Give a progress bar on a terminal and nothing when piped; a callable (done, total) inside a context."""
     from tracker.showing.terminal import progress_bar
