@@ -127,11 +127,16 @@ class _Model:
 
 def _best_change(model: _Model, times: FloatArray, conditions: Conditions, trend_open: bool) -> Change | None:
     """Change whose statistic exceeds its threshold by most."""
-    candidates = [_step(model, times), _switch(model, times)]
-    if trend_open:
-        candidates.append(_trend(model, times, conditions))
+    step, switch = _step(model, times), _switch(model, times)
+    candidates = [step, switch, _trend(model, times, conditions) if trend_open else None]
     found = [c for c in candidates if c is not None and c.statistic > c.threshold]
-    return max(found, key=lambda c: c.statistic - _RANK[c.kind], default=None)
+    best = max(found, key=lambda c: c.statistic - _RANK[c.kind], default=None)
+    if best is switch and step in found and step is not None and switch is not None:
+        # Two charge steps, of which only one is in the model yet, also look like a change of speed.
+        second = _step(replace(model, part=_split(model.part, step.step)), times)
+        if second is not None and second.statistic > max(STEP_THRESHOLD, switch.statistic - step.statistic):
+            return step
+    return best
 
 
 # What a test's statistic is worth beside the others: its threshold. Oil does not grow, so what looks like growth is

@@ -71,7 +71,7 @@ def evaluate_droplets(
     *,
     settings: Settings,
     decisions: Sequence[Decision] = (),
-    cuts: Sequence[int] = (),
+    cuts: Sequence[int] | IntArray = (),
 ) -> Evaluation:
     """Work out speeds, radii, charges and verdicts of all droplets of one recording.
 

@@ -289,13 +289,16 @@ def _lamp_toggle(
     share = (grey[[k - 1, k]] - level[0]) / height  # part of the exposure after the toggle, if it is inside
     half = share_std * 4.0 + 0.02
     inside = [k - 1 + i for i in (0, 1) if half < share[i] < 1 - half]
+    saturated = level.max() >= ceiling
     if not inside:
-        opened, closed = times[k - 1] + exposure, times[k]
+        # A saturated lamp looks fully lit in a frame that it is lit for in part.
+        opened = times[k - 1] + (0.0 if saturated and height < 0 else exposure)
+        closed = times[k] + (exposure if saturated and height > 0 else 0.0)
         # Shares below `half` cannot be told, so the toggle may lie that far inside either exposure.
         width = max(closed - opened, 0.0) + 2 * half * exposure
         return float(0.5 * (opened + closed)), float(width / np.sqrt(12))
     frame = inside[0]
-    if level.max() >= ceiling:
+    if saturated:
         return float(times[frame] + 0.5 * exposure), float(exposure / np.sqrt(12))
     return float(times[frame] + exposure * (1 - share[frame - k + 1])), float(exposure * share_std)
 

@@ -94,7 +94,7 @@ class Path:
 
 def paths(
     tracks: Tracks, recording: Recording, *, field: Field, scale: Scale, exposure: float,
-    orientation: Orientation, cuts: Sequence[int] = (), left_out: np.ndarray | None = None,
+    orientation: Orientation, cuts: Sequence[int] | IntArray = (), left_out: np.ndarray | None = None,
 ) -> list[Path]:  # fmt: skip
     """Bring tracks into metres along and across gravity, without the sightings that cannot be used.
 
@@ -151,7 +151,7 @@ def paths(
 
 
 def _breaks(
-    times: FloatArray, frames: IntArray, *, exposure: float, spans: FloatArray, cuts: Sequence[int]
+    times: FloatArray, frames: IntArray, *, exposure: float, spans: FloatArray, cuts: Sequence[int] | IntArray
 ) -> np.ndarray:
     """Mark steps whose change of voltage is not known, or over which the camera was bumped."""
     broken = np.zeros(max(len(times) - 1, 0), bool)
