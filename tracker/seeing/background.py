@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 from typing import Any
 
@@ -17,6 +18,8 @@ _CLIP = 2.0  # samples within so many standard deviations make the mean
 _LINE_SCALE = 14.0  # px, standard deviation of the smoothing that separates glare from lines
 _LINE_ROUNDS = 6
 _LINE_DEPTH = 0.93  # shade below this is a line
+_RESTLESS = 4.0  # times the usual median deviation from the background
+_MOST_RESTLESS = 0.2  # of the picture; more is a change of light
 _MIN_TEMPORAL = 12  # fewer samples cannot tell a droplet from glare in time
 
 
@@ -129,12 +132,7 @@ def find_shade(level: F32, black: float) -> tuple[F32, float]:
     pixels that are not darker than it.
     """
     light = np.maximum(level - black, 1e-3)
-    mask: NDArray[Any] = np.ones(light.shape, np.float32)
-    smooth: NDArray[Any] = light
-    for _ in range(_LINE_ROUNDS):
-        weight = cv2.GaussianBlur(mask, (0, 0), _LINE_SCALE)
-        smooth = cv2.GaussianBlur(light * mask, (0, 0), _LINE_SCALE) / np.maximum(weight, 1e-3)
-        mask = (light >= smooth - np.maximum(1.5, 0.06 * smooth)).astype(np.float32)
+    smooth = _glare(light)
     ratio = np.minimum(light / smooth, 1).astype(np.float32)
     line: NDArray[Any] = ((ratio < _LINE_DEPTH) & (smooth - light > 1.5)).astype(np.uint8)
     line = cv2.morphologyEx(line, cv2.MORPH_CLOSE, np.ones((3, 3), np.uint8))
@@ -142,6 +140,68 @@ def find_shade(level: F32, black: float) -> tuple[F32, float]:
     near = cv2.dilate(line, np.ones((5, 5), np.uint8)).astype(bool)
     shade = np.where(near, ratio, np.float32(1)).astype(np.float32)
     return np.maximum(shade, 0.02), float(line.mean())
+
+
+def fill_restless(background: Background, samples: NDArray[Any], *, width: float, black: float) -> Background:
+    """Replace places that are occupied most of the time by something that moves.
+
+    Parameters
+    ----------
+    background : Background
+        From `find_background`.
+    samples : ndarray of shape (n, height, width)
+        The same pictures.
+    width : float
+        Standard deviation of a spot in px.
+    black : float
+        Grey value of no light.
+
+    Returns
+    -------
+    background : Background
+        With the smooth surroundings there; the same object if there is no such place.
+
+    Notes
+    -----
+    Glare is there in every sample, and a droplet that passes is there in few. Where half of the samples differ from
+    the background by several times the noise, something slow has been taken for background.
+    """
+    if background.samples < _MIN_TEMPORAL:
+        return background
+    step = max(1, round(width))
+    height, breadth = background.level.shape
+    size = (max(1, breadth // step), max(1, height // step))
+    some = samples[:: max(1, len(samples) // 24)]
+    rest = [cv2.resize(np.abs(_local_mean(p - background.level, 2 * step + 1)), size) for p in some]
+    usual = sort_in_time(np.stack(rest))[len(rest) // 2]
+    restless = (usual > _RESTLESS * max(float(np.median(usual)), 1e-3)).astype(np.uint8)
+    restless = cv2.morphologyEx(restless, cv2.MORPH_OPEN, np.ones((2, 2), np.uint8))
+    share = float(restless.mean())
+    if not 0 < share < _MOST_RESTLESS:
+        return background
+    reach = 2 * math.ceil(4 * width / step) + 1
+    wide = cv2.dilate(restless, cv2.getStructuringElement(cv2.MORPH_ELLIPSE, (reach, reach)))
+    mask = cv2.resize(wide, (breadth, height), interpolation=cv2.INTER_NEAREST).astype(bool)
+    free = (~mask).astype(np.float32)
+    weight = cv2.GaussianBlur(free, (0, 0), 6 * width)
+    around = cv2.GaussianBlur(background.level * free, (0, 0), 6 * width) / np.maximum(weight, 1e-3)
+    level = np.where(mask & (weight > 0.01), around, background.level).astype(np.float32)
+    shade, lines = find_shade(level, black)
+    return Background(level, shade, background.variance, background.samples, lines)
+
+
+def _glare(light: F32) -> F32:
+    """Smooth part of the background, from the pixels not darker than it; at a quarter of the size."""
+    height, width = light.shape
+    size = (max(1, -(-width // 4)), max(1, -(-height // 4)))
+    smooth: NDArray[Any] = light
+    mask: NDArray[Any] = np.ones(light.shape, np.float32)
+    for _ in range(_LINE_ROUNDS):
+        share, part = (cv2.resize(a, size, interpolation=cv2.INTER_AREA) for a in (mask, mask * light))
+        share, part = (cv2.GaussianBlur(a, (0, 0), _LINE_SCALE / 4) for a in (share, part))
+        smooth = cv2.resize(part / np.maximum(share, 1e-3), (width, height), interpolation=cv2.INTER_LINEAR)
+        mask = (light >= smooth - np.maximum(1.5, 0.06 * smooth)).astype(np.float32)
+    return np.asarray(smooth, np.float32)
 
 
 def _long_parts(line: NDArray[Any]) -> NDArray[Any]:

@@ -69,6 +69,7 @@ class Spots:
 
 # columns of the Jacobian as powers (of u, of v) of the unit coordinates: A, x, y, log sx, log sy, slant
 _POWERS = ((0, 0), (1, 0), (0, 1), (2, 0), (0, 2), (1, 1))
+_RIDGE = 1e-9  # added to a unit diagonal
 _DAMPING = 1.0  # longest step of a centre in px
 _MAX_STEP_WIDTH = 0.35  # longest step of log width
 
@@ -114,7 +115,9 @@ def fit_spots(
         p[:, :columns] += _limited(_solve(matrix, gradient), p)
     gradient, matrix, chi2 = _normal_equations(windows, p, camera, 6)
     covariance = inverses(matrix[:, :columns, :columns])[:, :3, :3]
-    more, doubt = _solve(matrix, gradient), np.sqrt(np.maximum(np.einsum("nii->ni", inverses(matrix)), 1e-30))
+    full = inverses(matrix)
+    more = np.einsum("nij,nj->ni", full, gradient)
+    doubt = np.sqrt(np.maximum(np.einsum("nii->ni", full), 1e-30))
     inside = (p[:, 1:3] > -1).all(1) & (p[:, 1:3] < k).all(1)
     good = inside & (p[:, 0] > 0) & np.isfinite(p).all(1) & (np.einsum("nii->ni", covariance) > 0).all(1)
     return Spots(
@@ -199,14 +202,26 @@ def _solve(matrix: NDArray[np.float64], gradient: NDArray[np.float64]) -> NDArra
 
 def inverses(matrix: NDArray[np.float64]) -> NDArray[np.float64]:
     """Invert positive matrices, each scaled to unit diagonal first; zeros where there is no inverse."""
-    diagonal = np.sqrt(np.maximum(np.einsum("nii->ni", matrix), 1e-30))
-    scaled = matrix / (diagonal[:, :, None] * diagonal[:, None, :])
-    usable = np.isfinite(scaled).all((1, 2)) & (np.einsum("nii->ni", matrix) > 1e-20).all(1)
+    power = np.einsum("nii->ni", matrix)
+    root = np.sqrt(np.maximum(power, 1e-30))
+    scale = 1 / (root[:, :, None] * root[:, None, :])
+    scaled = matrix * scale
+    usable = np.isfinite(scaled).all((1, 2)) & (power > 1e-20).all(1)
     scaled[~usable] = np.eye(matrix.shape[1])
-    scaled += 1e-9 * np.eye(matrix.shape[1])
-    inverse: NDArray[np.float64] = np.linalg.inv(scaled) / (diagonal[:, :, None] * diagonal[:, None, :])
+    scaled += _RIDGE * np.eye(matrix.shape[1])
+    inverse = _inverse_of_three(scaled) if matrix.shape[1] == 3 else np.linalg.inv(scaled)
+    inverse *= scale
     inverse[~usable] = 0
-    return inverse
+    return np.asarray(inverse)
+
+
+def _inverse_of_three(m: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Inverse of symmetric 3 x 3 matrices by cofactors."""
+    a, b, c, d, e, f = m[:, 0, 0], m[:, 0, 1], m[:, 0, 2], m[:, 1, 1], m[:, 1, 2], m[:, 2, 2]
+    p, q, r = d * f - e * e, c * e - b * f, b * e - c * d
+    rows = [p, q, r, q, a * f - c * c, b * c - a * e, r, b * c - a * e, a * d - b * b]
+    determinant = np.maximum(a * p + b * q + c * r, 1e-12)  # 1 for orthogonal columns of unit length
+    return np.asarray((np.stack(rows, 1) / determinant[:, None]).reshape(-1, 3, 3))
 
 
 def _limited(step: NDArray[np.float64], p: NDArray[np.float64]) -> NDArray[np.float64]:

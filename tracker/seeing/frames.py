@@ -18,7 +18,8 @@ from tracker.errors import RecordingError
 from tracker.records import FloatArray, Recording
 from tracker.seeing.sources import Form, Picture, RawFrame, Source, natural_order, open_source
 
-BATCH = 16  # pictures handed over at once: fewer switches between decoding and work
+_BATCH_BYTES = 8_000_000  # of pictures handed over at once: fewer switches between decoding and work
+_LEAST_BATCH, _MOST_BATCH = 4, 32  # pictures
 _IN_FLIGHT = 3  # batches that may wait
 _GRID = 8  # every eighth pixel of every eighth row tells a repeated picture
 _REPEAT_SHARE = 0.25  # of the usual difference between frames; copies through a lossy codec reach about 0.15
@@ -54,6 +55,7 @@ class Reader:
         self._untimed = self._unordered = self._damaged = 0
         self._differences: list[float] = []
         self._last: Picture | None = None
+        self._size = min(max(_BATCH_BYTES // source.form.picture_bytes, _LEAST_BATCH), _MOST_BATCH)
 
     @property
     def width(self) -> int:
@@ -114,7 +116,7 @@ class Reader:
             batch: list[RawFrame] = []
             for frame in self._source.frames():
                 batch.append(frame)
-                if len(batch) == BATCH:
+                if len(batch) == self._size:
                     if not self._put(batch):
                         return
                     batch = []

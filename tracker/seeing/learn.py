@@ -11,8 +11,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from tracker.records import FloatArray
-from tracker.seeing.background import Background, find_background
-from tracker.seeing.detect import Detector, build_detector, cut_windows, find_peaks
+from tracker.seeing.background import Background, fill_restless, find_background
+from tracker.seeing.detect import Detector, build_detector, cut_windows, find_peaks, gaussian_kernel
 from tracker.seeing.fit import Camera, Spots, Windows, fit_spots, profiles
 
 F32 = NDArray[np.float32]
@@ -21,6 +21,7 @@ _SCALES = (0.7, 1.0, 1.4, 2.0, 2.8, 4.0, 5.6, 8.0)  # px, spot widths tried
 _DEFAULT_SCALE = 2  # index of the scale taken where nothing is seen
 _COARSE = 2.9  # px, scales up to here must show the noise of finer ones
 _UNSHADED = 0.97  # least shade in the window of a spot that is off the lines
+_LEAST_PICTURES = 2
 _FEW = 5  # fewer spots teach nothing
 _SEEN = 6.0  # signal to noise of a spot that teaches
 _CLEAR = 0.3  # of the signal to noise of the clearest: fainter spots may be flecks
@@ -61,6 +62,14 @@ def learn(samples: NDArray[Any], *, black: float, full_scale: float, false_alarm
     chosen = samples[np.unique(np.linspace(0, len(samples) - 1, _PICTURES).astype(int))]
     residual = chosen - background.level
     guess, noise = scale_search(residual)
+    filled = fill_restless(background, samples, width=guess, black=black)
+    if filled is not background:
+        background, residual = filled, chosen - filled.level
+        guess, noise = scale_search(residual)
+    if (
+        background.variance == 0 and len(samples) >= _LEAST_PICTURES
+    ):  # the surroundings of a spot are no still picture: noise is what changes in time
+        noise = change_noise(samples, guess)
     camera = Camera(white_variance(noise, guess), 0.0, black, full_scale)
     windows, x, y = find_teachers(chosen, residual, background, camera, guess=guess)
     width, spots, clear = find_width(windows, (x, y), camera, guess=guess)
@@ -76,6 +85,12 @@ def learn(samples: NDArray[Any], *, black: float, full_scale: float, false_alarm
         "line_share": background.line_share, "teaching_spots": len(clear), **found,
     }  # fmt: skip
     return Eyes(background, detector, camera, width, reach, true, report)
+
+
+def change_noise(samples: NDArray[Any], sigma: float) -> float:
+    """Standard deviation, from their differences, of single pictures smoothed by a Gaussian."""
+    differences = np.diff(np.stack([smoothed(p.astype(np.float32), sigma) for p in samples]), axis=0)
+    return 1.4826 * float(np.median(np.abs(differences - np.median(differences)))) / math.sqrt(2)
 
 
 def white_variance(noise: float, sigma: float) -> float:
@@ -153,8 +168,8 @@ def scale_search(residual: F32) -> tuple[float, float]:
     """
     pictures = residual[:: max(1, len(residual) // 4)]
     scales = [s for s in _SCALES if 6 * s <= min(residual.shape[1:])] or [_SCALES[0]]
-    smooth = [np.stack([cv2.GaussianBlur(r, (0, 0), s) for r in pictures]) for s in scales]
-    raw = [1.4826 * float(np.median(np.abs(f[:, ::2, ::2]))) * s for f, s in zip(smooth, scales, strict=True)]
+    smooth = [np.stack([smoothed(r, s) for r in pictures]) for s in scales]
+    raw = [1.4826 * float(np.median(np.abs(f[:, ::4, ::4]))) * s for f, s in zip(smooth, scales, strict=True)]
     coarse = [i for i, s in enumerate(scales) if s <= _COARSE]
     noise = [max(raw[i : coarse[-1] + 1] or [raw[i]]) / s for i, s in enumerate(scales)]
     noise = [max(n, 0.02) for n in noise]
@@ -164,8 +179,24 @@ def scale_search(residual: F32) -> tuple[float, float]:
     at = (frame, np.rint(y).astype(int), np.rint(x).astype(int))
     which = ratio[(slice(None), *at)].argmax(0)
     order = np.argsort(-score)[:_TEACHERS]
+    order = order[score[order] > _CLEAR * np.quantile(score, 0.95)] if len(order) else order
     index = _DEFAULT_SCALE if len(order) < _FEW else int(np.median(which[order]))
     return scales[min(index, len(scales) - 1)], noise[min(index, len(scales) - 1)]
+
+
+def smoothed(picture: F32, sigma: float) -> F32:
+    """Gaussian smoothing; wide ones at reduced size, which loses nothing that they leave."""
+    step = 1
+    while sigma / (2 * step) >= _COARSE / 2:
+        step *= 2
+    if step == 1:
+        kernel = gaussian_kernel(sigma)
+        return np.asarray(cv2.sepFilter2D(picture, cv2.CV_32F, kernel, kernel, borderType=cv2.BORDER_REFLECT))
+    height, width = picture.shape
+    small = cv2.resize(picture, (-(-width // step), -(-height // step)), interpolation=cv2.INTER_AREA)
+    kernel = gaussian_kernel(sigma / step)
+    small = cv2.sepFilter2D(small, cv2.CV_32F, kernel, kernel, borderType=cv2.BORDER_REFLECT)
+    return np.asarray(cv2.resize(small, (width, height), interpolation=cv2.INTER_LINEAR), np.float32)
 
 
 def _lone_spots(
@@ -174,7 +205,7 @@ def _lone_spots(
     """Clearest spots without a neighbour within 8 widths."""
     from scipy.spatial import cKDTree
 
-    smooth = np.stack([cv2.GaussianBlur(r, (0, 0), width) for r in residual])
+    smooth = np.stack([smoothed(r, width) for r in residual])
     empty = camera.read_variance + camera.gain * float(np.median(residual))
     smooth /= math.sqrt(empty / (4 * math.pi * width**2))
     frame, x, y, score = find_peaks(smooth, _SEEN, 1)

@@ -159,7 +159,7 @@ def _samples(path: Path, head: list[FrameBatch], view: _View, frame_rate: float 
         wanted = wanted[wanted > head[-1].times[-1]]
     far = [p for _, p in sample_recording(path, wanted, frame_rate=frame_rate)] if len(wanted) else []
     far = view.crop(far, np.ones(len(far), np.bool_))
-    if not form.seekable or len(far) < _SAMPLES // 2:
+    if not form.seekable or len(far) < min(_SAMPLES // 2, form.frames or _SAMPLES):
         near = np.unique(np.linspace(0, len(pictures) - 1, _SAMPLES - len(far)).astype(int))
         far = [pictures[i] for i in near] + far
     return np.stack(far)

@@ -62,6 +62,8 @@ def _meetings(sightings: Sightings, piece: IntArray) -> list[tuple[int, int, int
         return []
     count = np.bincount(piece)
     pairs = pairs[(count[piece[pairs]] > 2 * _APART_FRAMES).all(1)]
+    if len(pairs) == 0:
+        return []
     tracks = np.sort(piece[pairs], axis=1)
     frame = sightings.frame[pairs[:, 0]]
     order = np.lexsort((frame, tracks[:, 1], tracks[:, 0]))
