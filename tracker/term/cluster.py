@@ -107,7 +107,7 @@ class ClusterCrew:
         self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None
     ) -> None:
         if self._executor is not None:
-            self._executor.shutdown(wait=False, cancel_futures=True)
+            self._executor.shutdown(wait=False)  # futures that are not done are cancelled
         self.close()
 
 

@@ -96,8 +96,6 @@ def _same_failure(entry: Entry, stamps: tuple[Stamp, ...]) -> Entry | None:
     """A failure stands while every file has the contents it had."""
     if entry.stamps == stamps:
         return entry
-    if [path for path, _, _ in entry.stamps] != [path for path, _, _ in stamps]:
-        return None
     hashes = tuple(content_hash(Path(path)) for path, _, _ in stamps)
     return replace(entry, stamps=stamps) if hashes == entry.hashes else None
 
