@@ -25,10 +25,11 @@ Shape = LogDensity | LogLikelihood | None
 OUTLIER_SHARE = 0.05  # prior probability that a charge is on no tooth
 FUNCTION_FROM = 0.1  # own standard deviation over e from which a given density replaces the normal one
 PAIR_FROM = 0.25  # the same for a likelihood that is known at whole numbers only
+BLURRED_FROM = 2.0  # own standard deviation over e above which a charge shows no tooth (1e-34)
 _GRID_REACH = 4.0  # prior standard deviations of the factor that are searched
 _LEAST_GRID = 321
 _MOST_GRID = 6001
-_LARGEST_ARRAY = 2_000_000  # elements of one work array
+_LARGEST_ARRAY = 1_000_000  # elements of one work array
 
 
 @dataclass(frozen=True, slots=True)
@@ -39,7 +40,7 @@ class ChargeNumbers:
     probability: FloatArray  # (N,) of that number, for a droplet that carries a whole number
     outlier_probability: FloatArray  # (N,) that the charge is on no tooth: a bad track
     number_values: IntArray  # (N, K) the numbers that were weighed
-    number_probability: FloatArray  # (N, K) rows add up to 1
+    number_probability: FloatArray  # (N, K) rows add up to 1, or less where a blurred charge reaches beyond K
     factor: float  # measured over true charge, posterior mean, for a droplet of typical sensitivity
     factor_std: float
     joint: bool  # the charges narrowed the factor; False: each droplet stands alone under the prior
@@ -92,32 +93,37 @@ def number_probabilities(
     if len(q) == 0:
         return _none()
     grid, prior = _factor_grid(q, s, shared)
-    factor = 1 + grid * shared[:, None]  # (N, G)
-    values = _windows(q, s, shared)  # (N, K)
-    chunks = _chunks(len(q), values.shape[1] * len(grid))
+    values, groups = _windows(q, s, shared, len(grid))
+    shapes = [None] * len(q) if log_likelihoods is None else list(log_likelihoods)
+
+    def wrapped(rows: IntArray, columns: slice, points: FloatArray) -> tuple[FloatArray, FloatArray]:
+        factor = 1 + points * shared[rows, None]
+        return _wrapped(q[rows], s[rows], values[rows, columns], factor, [shapes[i] for i in rows], unit)
+
     log_post = np.log(prior)
-    outlier = np.empty((len(q), len(grid)))
-    for part in chunks:
-        density, _ = _wrapped(
-            q[part], s[part], values[part], factor[part], _part(log_likelihoods, part), unit
-        )
-        mixed = (1 - OUTLIER_SHARE) * density + OUTLIER_SHARE
-        outlier[part] = OUTLIER_SHARE / mixed
-        log_post = log_post + np.log(mixed).sum(axis=0)
+    for rows, columns in groups:
+        density, _ = wrapped(rows, columns, grid)
+        log_post = log_post + np.log((1 - OUTLIER_SHARE) * density + OUTLIER_SHARE).sum(axis=0)
     post = np.exp(log_post - log_post.max())
-    post /= post.sum()
-    probability = np.empty(values.shape)
-    for part in chunks:
-        _, given = _wrapped(q[part], s[part], values[part], factor[part], _part(log_likelihoods, part), unit)
-        probability[part] = given @ post
+    likely = post > 1e-9
+    grid, post = grid[likely], post[likely] / post[likely].sum()
+    mean = float(post @ grid)
+    std = float(np.sqrt(post @ (grid - mean) ** 2))
+    blurred = s > BLURRED_FROM
+    values[blurred] += (np.rint(q / (1 + mean * shared)) - np.rint(q)).astype(np.int64)[blurred, None]
+    probability = _blurred(q, s, values, 1 + mean * shared, std * shared)
+    outlier = np.full(len(q), OUTLIER_SHARE)
+    for rows, columns in groups:
+        density, given = wrapped(rows, columns, grid)
+        outlier[rows] = (OUTLIER_SHARE / ((1 - OUTLIER_SHARE) * density + OUTLIER_SHARE)) @ post
+        probability[rows] = 0.0
+        probability[rows, columns] = given @ post
     best = probability.argmax(axis=1)
     rows = np.arange(len(q))
     typical = float(np.median(shared))
-    mean = float(post @ grid)
-    std = float(np.sqrt(post @ (grid - mean) ** 2))
     return ChargeNumbers(
         number=values[rows, best], probability=probability[rows, best],
-        outlier_probability=outlier @ post, number_values=values, number_probability=probability,
+        outlier_probability=outlier, number_values=values, number_probability=probability,
         factor=1 + typical * mean, factor_std=typical * std, joint=bool(typical > 0 and std < 0.5),
     )  # fmt: skip
 
@@ -154,21 +160,36 @@ def _factor_grid(q: FloatArray, s: FloatArray, shared: FloatArray) -> tuple[Floa
     return grid, prior / prior.sum()
 
 
-def _windows(q: FloatArray, s: FloatArray, shared: FloatArray) -> IntArray:
-    """Whole numbers (N, K) about each charge, as many for all, that hold its probability."""
-    reach = int(np.ceil(np.max(5 * s + _GRID_REACH * shared * np.abs(q)))) + 1
-    return np.rint(q).astype(np.int64)[:, None] + np.arange(-reach, reach + 1)
+_Group = tuple[IntArray, slice]  # droplets (rows), and the columns of the window that they need
 
 
-def _chunks(count: int, each: int) -> list[slice]:
-    """Slices of droplets whose work arrays stay small."""
-    size = max(1, _LARGEST_ARRAY // each)
-    return [slice(start, min(start + size, count)) for start in range(0, count, size)]
+def _windows(q: FloatArray, s: FloatArray, shared: FloatArray, grid: int) -> tuple[IntArray, list[_Group]]:
+    """Whole numbers (N, K) about each charge; groups of droplets with windows of one width and small work arrays.
+
+    Droplets too blurred to tell one number are in no group.
+    """
+    reach = np.ceil(5 * s + _GRID_REACH * shared * np.abs(q)).astype(np.int64) + 1
+    sharp = np.flatnonzero(s <= BLURRED_FROM)
+    widest = int(reach[sharp].max(initial=12))
+    values = np.rint(q).astype(np.int64)[:, None] + np.arange(-widest, widest + 1)
+    groups: list[_Group] = []
+    order = sharp[np.argsort(-reach[sharp], kind="stable")]
+    while len(order):
+        side = int(reach[order[0]])
+        most = max(1, _LARGEST_ARRAY // (grid * (2 * side + 1)))
+        alike = int(np.sum(reach[order] >= 0.6 * side))
+        rows, order = order[: min(most, alike)], order[min(most, alike) :]
+        groups.append((rows, slice(widest - side, widest + side + 1)))
+    return values, groups
 
 
-def _part(given: Sequence[Shape] | None, part: slice) -> Sequence[Shape]:
-    """Log likelihoods of a slice of droplets; nothing if there are none."""
-    return () if given is None else given[part]
+def _blurred(
+    q: FloatArray, s: FloatArray, values: IntArray, factor: FloatArray, factor_std: FloatArray
+) -> FloatArray:
+    """Probabilities (N, K) of numbers so blurred that their sum over all whole numbers is an integral."""
+    width = np.hypot(s, factor_std * q)[:, None] / factor[:, None]
+    z = (q[:, None] / factor[:, None] - values) / width
+    return np.asarray(np.exp(-0.5 * z**2) / (np.sqrt(2 * np.pi) * width))
 
 
 def _wrapped(

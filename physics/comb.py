@@ -148,8 +148,13 @@ def _single_density(sample: ChargeSample, frequency: FloatArray, factor: float, 
     std = sample.floor_std[:, None] * frequency
     if not sample.rel_std.any():
         return _density(np.abs(phase - np.rint(phase)), np.maximum(factor * std, floor))
-    rel = sample.rel_std[:, None]
-    return _density_of_teeth(phase, lambda tooth: np.maximum(factor * np.hypot(std, rel * tooth), floor))
+    fixed, growing = (factor * std) ** 2, factor * sample.rel_std[:, None]
+
+    def width(tooth: FloatArray) -> FloatArray:
+        part = growing * tooth
+        return np.asarray(np.maximum(np.sqrt(fixed + part * part), floor))
+
+    return _density_of_teeth(phase, width)
 
 
 def _pair_density(sample: ChargeSample, frequency: FloatArray, factor: float, floor: float) -> FloatArray:

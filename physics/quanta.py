@@ -42,6 +42,7 @@ SEARCH = (
     0.2 * ELEMENTARY_CHARGE,
     4 * ELEMENTARY_CHARGE,
 )  # C, range of spacings that is searched: no unit is presumed
+BLURRED_FROM = 0.6  # own standard deviation over the spacing above which a charge tells nothing of it (0.2 %)
 UNCHARGED_WITHIN = 2.5  # a charge within so many standard deviations of 0 is compatible with every comb
 _TRIALS = 300.0  # independent combs in the standard search, for which LOG_RATIO_NEEDED was set
 
@@ -59,7 +60,9 @@ class ChargeUnit:
     unit_shared_std: float  # C, from what all droplets of a bench share: does not fall
     resolved: bool
     reason: str
-    droplets_used: int  # charges that differ from 0 by more than 2.5 standard deviations
+    droplets_used: (
+        int  # charges that differ from 0 by more than 2.5 standard deviations and are not all blurred
+    )
     over_e: float
     over_e_std: float
     best: float  # C, spacing of the best comb, resolved or not
@@ -228,7 +231,7 @@ def pooled_charge_unit(
     PhysicsError
         If the search range is empty.
     """
-    used = tuple(sample for sample in samples if len(sample))
+    used = tuple(s for s in (_telling(sample, search) for sample in samples) if len(s))
     if not used:
         return _nothing(search)
     frequency, blurred = comb.coarse_scan(used, *search)
@@ -285,6 +288,15 @@ def unit_ratio(sample: ChargeSample, unit: float, *, prior_rel_std: float) -> tu
     weight /= weight.sum()
     mean = float(weight @ ratio)
     return mean, float(np.sqrt(weight @ (ratio - mean) ** 2))
+
+
+def _telling(sample: ChargeSample, search: tuple[float, float]) -> ChargeSample:
+    """Leave out charges that are so blurred that they fit every spacing of the search alike."""
+    own = np.hypot(sample.floor_std, sample.rel_std * sample.charge)
+    sharp = own < BLURRED_FROM * search[1]
+    both = np.all(np.sqrt(np.einsum("mii->mi", sample.pair_cov)) < BLURRED_FROM * search[1], axis=1)
+    return ChargeSample(sample.charge[sharp], sample.floor_std[sharp], sample.rel_std[sharp], sample.pair[both],
+                        sample.pair_cov[both], sample.shared_rel_std)  # fmt: skip
 
 
 @dataclass(frozen=True, slots=True)

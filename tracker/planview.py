@@ -10,8 +10,8 @@ import numpy as np
 
 from physics.droplet import ELEMENTARY_CHARGE
 from tracker.keeping.store import replace_file
-from tracker.page.words import CAUTIONS
 from tracker.planning import Plan, PlanRow
+from tracker.showing.report import CAUTIONS
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes

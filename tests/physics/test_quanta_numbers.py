@@ -213,3 +213,21 @@ def test_impossible_input_is_named(call, name):
     with pytest.raises(PhysicsError) as caught:
         call()
     assert caught.value.name == name
+
+
+def test_highly_charged_droplets_are_told_to_be_uncertain():
+    """A charge of 5000(100) e has no number, its best one the probability of one step under a normal density.
+
+    It moves neither the factor nor the numbers of the others.
+    """
+    draw = rng(10)
+    number = draw.integers(1, 15, 20)
+    charge = 1.01 * number + 0.08 * draw.standard_normal(20)
+    alone = number_probabilities(charge * E, np.full(20, 0.08 * E), shared_rel_std=0.015)
+    mixed = number_probabilities(np.append(charge, 5000.0) * E, np.append(np.full(20, 0.08), 100.0) * E,
+                                 shared_rel_std=0.015)  # fmt: skip
+    np.testing.assert_allclose(mixed.probability[:20], alone.probability, rtol=1e-9)
+    assert mixed.factor == pytest.approx(alone.factor, rel=1e-9)
+    width = np.hypot(100.0, 5000.0 * mixed.factor_std) / mixed.factor
+    assert mixed.probability[20] == pytest.approx(1 / (np.sqrt(2 * np.pi) * width), rel=1e-3)
+    assert mixed.number[20] == pytest.approx(5000 / mixed.factor, abs=1)

@@ -346,3 +346,15 @@ def test_work_grows_gently_with_the_set():
     assert isinstance(sample, ChargeSample)
     scan = (5 / E - 0.25 / E) * sample.largest / 0.08
     assert scan * len(sample) < 2e5
+
+
+def test_charges_of_a_spray_do_not_hide_the_few_that_tell():
+    """Charges to 10000 e known to 2 % leave the unit to the low ones, and the search to the range of these."""
+    draw = rng(17)
+    number = np.rint(10 ** draw.uniform(0, 4, 300))
+    std = np.hypot(0.08, 0.02 * number)
+    charge = number + std * draw.standard_normal(300)
+    found = charge_unit(charge * E, std * E, rel_stds=np.full(300, 0.02))
+    assert found.resolved
+    assert found.over_e == pytest.approx(1.0, abs=4 * found.over_e_std)
+    assert found.droplets_used < 200  # blurred beyond 0.6 of 4 e: above some 120 e
