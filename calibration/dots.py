@@ -159,7 +159,7 @@ def lattice_vectors(place: FloatArray) -> FloatArray | None:
 
 
 def refine_spots(
-    picture: NDArray[np.float32], place: FloatArray, sigma: float
+    picture: NDArray[np.float32], place: FloatArray, sigma: float, *, steps: FloatArray
 ) -> tuple[FloatArray, NDArray[np.bool_]]:
     """Place of each dot or corner between the pixels.
 
@@ -171,6 +171,9 @@ def refine_spots(
         Starting places in px.
     sigma : float
         Width of the Gaussian in px.
+    steps : ndarray of shape (2, 2)
+        Steps from a node to its neighbours in px; a slope of the ground between the four middles of the cells
+        around a dot is taken off.
 
     Returns
     -------
@@ -186,15 +189,33 @@ def refine_spots(
     """
     moved, fine = place.copy(), np.zeros(len(place), dtype=bool)
     reach = int(np.ceil(3 * sigma)) + 1
+    slope = _ground(picture, place, steps)
     most = max(1, 4_000_000 // (2 * reach + 1) ** 2)
     for first in range(0, len(place), most):
         rows = slice(first, first + most)
-        moved[rows], fine[rows] = _refine(picture, place[rows], sigma, reach)
+        moved[rows], fine[rows] = _refine(picture, place[rows], slope[rows], sigma, reach)
     return moved, fine
 
 
+def _ground(picture: NDArray[np.float32], place: FloatArray, steps: FloatArray) -> FloatArray:
+    """Slope of the ground about each node, per px, from the middles of the four cells around it."""
+    smooth = cv2.GaussianBlur(picture, (0, 0), max(0.5, float(np.hypot(*steps[0])) / 12))
+    arms = np.array([(steps[0] + steps[1]) / 2, (steps[0] - steps[1]) / 2])
+    rises = []
+    for arm in arms:
+        ends = []
+        for sign in (1, -1):
+            at = (place + sign * arm).astype(np.float32)
+            values = cv2.remap(
+                smooth, at[:, None, 0], at[:, None, 1], cv2.INTER_LINEAR, borderMode=cv2.BORDER_REPLICATE
+            )
+            ends.append(values[:, 0].astype(np.float64))
+        rises.append(ends[0] - ends[1])
+    return np.asarray(np.linalg.solve(2 * arms, np.array(rises)).T)
+
+
 def _refine(
-    picture: NDArray[np.float32], place: FloatArray, sigma: float, reach: int
+    picture: NDArray[np.float32], place: FloatArray, slope: FloatArray, sigma: float, reach: int
 ) -> tuple[FloatArray, NDArray[np.bool_]]:
     """Refine one batch of spots."""
     height, width = picture.shape
@@ -203,7 +224,8 @@ def _refine(
     inner = np.clip(centre, reach, np.array([width, height]) - reach - 1)
     offsets = np.arange(-reach, reach + 1)
     patch = picture[inner[:, 1, None, None] + offsets[:, None], inner[:, 0, None, None] + offsets[None, :]]
-    patch = patch.astype(np.float64) - patch.mean(axis=(1, 2), keepdims=True)
+    ground = slope[:, 1, None, None] * offsets[:, None] + slope[:, 0, None, None] * offsets[None, :]
+    patch = patch.astype(np.float64) - patch.mean(axis=(1, 2), keepdims=True) - ground
     start = place - inner
     shift = start.copy()
     for _ in range(6):

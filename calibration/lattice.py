@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import itertools
 from dataclasses import dataclass, replace
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -60,6 +61,10 @@ class LatticeFit:
     radius: float  # px
     residual: FloatArray  # (N,) px across the line
     used: BoolArray  # (N,) False: left out as an outlier
+    hint_radial: (
+        float  # k that shows at two to four standard uncertainties: too little to correct, 0 otherwise
+    )
+    hint_tilt: FloatArray  # (2,): the same of g
     mark_std: float  # px, of one mark against its line
     line_std: float  # px, common to the marks of one cluster
 
@@ -158,14 +163,23 @@ def fit_lattice(marks: Marks, *, width: int, height: int) -> LatticeFit:
     if len(marks.x) < 24:
         return plain
     terms: tuple[str, ...] = ("radial", "tilt")
+    hints: dict[str, Any] = {}
     while terms:
         full = _fit(marks, terms, width, height, line_var=plain.line_std**2)
         strength = {name: _wald(full, name) for name in terms}
         weakest = min(strength, key=lambda name: strength[name])
         if strength[weakest] > 1:
-            return _fit(marks, terms, width, height)
+            return replace(_fit(marks, terms, width, height), **hints)
+        hints |= _hint(full, weakest, strength[weakest])
         terms = tuple(name for name in terms if name != weakest)
-    return plain
+    return replace(plain, **hints)
+
+
+def _hint(fit: LatticeFit, name: str, strength: float) -> dict[str, Any]:
+    """Give a term that is left out, if it shows at more than two standard uncertainties, else nothing."""
+    if strength < 0.25:
+        return {}
+    return {"hint_radial": fit.radial} if name == "radial" else {"hint_tilt": fit.tilt}
 
 
 def _wald(fit: LatticeFit, name: str) -> float:
@@ -212,12 +226,14 @@ def _fit(
     left = marks.take(used)
     variances = _variances(residual[used], left, len(theta), line_var)
     design = decorrelate(jacobian[used] * pitch[used, None], left, *variances)
-    covariance = variances[0] * np.linalg.pinv(design.T @ design, rcond=1e-14)
+    covariance = np.asarray(variances[0] * np.linalg.pinv(design.T @ design, rcond=1e-14), dtype=np.float64)
     radial = float(theta[split]) if "radial" in terms else 0.0
     tilt = theta[-2:].copy() if "tilt" in terms else np.zeros(2)
     stds = float(np.sqrt(variances[0])), float(np.sqrt(variances[1]))
-    shape = theta[:split].reshape(-1, AFFINE)
-    return LatticeFit(shape, radial, tilt, covariance, terms, centre, radius, residual, used, *stds)
+    shape = np.asarray(theta[:split].reshape(-1, AFFINE), dtype=np.float64)
+    return LatticeFit(
+        shape, radial, tilt, covariance, terms, centre, radius, residual, used, 0.0, np.zeros(2), *stds
+    )
 
 
 def _inliers(residual: FloatArray, marks: Marks) -> BoolArray:
@@ -231,9 +247,9 @@ def _inliers(residual: FloatArray, marks: Marks) -> BoolArray:
     own = (residual - middle[marks.cluster]) * marks.weight
     spread = 1.4826 * float(np.median(np.abs(own)))
     all_spread = 1.4826 * float(np.median(np.abs(residual)))
-    return (np.abs(own) < max(4.5 * spread, 0.03)) & (
-        np.abs(residual) < max(4.5 * all_spread, 4.5 * spread, 0.03)
-    )
+    limit = max(4.5 * spread, 0.03)
+    near: BoolArray = (np.abs(own) < limit) & (np.abs(residual) < max(4.5 * all_spread, limit))
+    return near
 
 
 def _affine_start(marks: Marks, q: FloatArray) -> FloatArray:

@@ -273,7 +273,9 @@ def _number_nodes(flat: NDArray[np.float32], spots: Spots, *, kernel: float) -> 
     rows = np.flatnonzero(inner_nodes(coordinate, block))
     if len(rows) > MOST_DOTS:
         rows = np.sort(np.random.default_rng(0).choice(rows, MOST_DOTS, replace=False))
-    place, fine = refine_spots(_clean(flat, spots, steps, spots.place[rows]), spots.place[rows], kernel)
+    place, fine = refine_spots(
+        _clean(flat, spots, steps, spots.place[rows]), spots.place[rows], kernel, steps=steps
+    )
     return _node_marks(place[fine], np.rint(coordinate[rows][fine]).astype(np.int64))
 
 

@@ -6,6 +6,7 @@ import json
 import math
 import os
 import tempfile
+from collections.abc import Mapping
 from dataclasses import asdict, dataclass, replace
 from pathlib import Path
 from typing import Any
@@ -383,35 +384,52 @@ def write_scale(scale: Scale, path: Path | str) -> None:
     ScaleError
         If it cannot be written; an older file is then as it was.
     """
-    text = json.dumps(scale_to_json(scale), indent=1, ensure_ascii=False, allow_nan=False) + "\n"
-    write_whole(Path(path), text.encode("utf-8"))
+    write_whole({Path(path): scale_text(scale).encode("utf-8")})
 
 
-def write_whole(path: Path, content: bytes) -> None:
-    """Write a file to a temporary name beside it and rename it.
+def scale_text(scale: Scale) -> str:
+    """Give the text of a scale file.
 
     Parameters
     ----------
-    path : Path
-        Where to.
-    content : bytes
-        What to write.
+    scale : Scale
+        Any scale.
+
+    Returns
+    -------
+    text : str
+        JSON with a line break at its end.
+    """
+    return json.dumps(scale_to_json(scale), indent=1, ensure_ascii=False, allow_nan=False) + "\n"
+
+
+def write_whole(files: Mapping[Path, bytes]) -> None:
+    """Write files that belong together: each to a temporary name beside its own, then all renamed.
+
+    Parameters
+    ----------
+    files : mapping of Path to bytes
+        What to write where; the last is renamed last.
 
     Raises
     ------
     ScaleError
-        If it cannot be written.
+        If one cannot be written; older files of these names are then as they were.
     """
-    draft = None
+    drafts: list[tuple[Path, Path]] = []
+    target = Path()
     try:
-        handle, draft = tempfile.mkstemp(prefix=f".{path.name}.", suffix=".part", dir=path.parent)
-        with os.fdopen(handle, "wb") as file:
-            file.write(content)
-            file.flush()
-            os.fsync(file.fileno())
-        Path(draft).chmod(0o644)
-        Path(draft).replace(path)
+        for target, content in files.items():
+            handle, draft = tempfile.mkstemp(prefix=f".{target.name}.", suffix=".part", dir=target.parent)
+            drafts.append((Path(draft), target))
+            with os.fdopen(handle, "wb") as file:
+                file.write(content)
+                file.flush()
+                os.fsync(file.fileno())
+            Path(draft).chmod(0o644)
+        for draft_path, target in drafts:
+            draft_path.replace(target)
     except OSError as error:
-        if draft is not None:
-            Path(draft).unlink(missing_ok=True)
-        raise ScaleError(str(path), f"cannot be written: {error.strerror or error}") from error
+        for draft_path, _ in drafts:
+            draft_path.unlink(missing_ok=True)
+        raise ScaleError(str(target), f"cannot be written: {error.strerror or error}") from error

@@ -79,7 +79,7 @@ def real_lines(coordinate: FloatArray, contrast: FloatArray) -> NDArray[np.bool_
     slot = index - index.min()
     count = np.bincount(slot[near], minlength=int(slot.max()) + 1)
     usual = np.median(count[count > 0])
-    real = near & (count >= max(2.0, FEW * usual))[slot]
+    real: NDArray[np.bool_] = near & (count >= max(2.0, FEW * usual))[slot]
     for line in np.unique(slot[real]):
         own = real & (slot == line)
         real[own] = contrast[own] > 0.8 * np.median(contrast[own])

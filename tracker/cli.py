@@ -11,6 +11,7 @@ from typing import TYPE_CHECKING, Annotated, Any
 import typer
 
 from physics.errors import FallriseError
+from tracker.errors import UsageError
 
 if TYPE_CHECKING:
     from tracker.keeping.store import Result
@@ -75,6 +76,30 @@ def measure(
         _print_json([_result_json(result) for result in results], single=len(recordings) == 1)
     if failures:
         raise typer.Exit(max(error.exit_status for error in failures))
+
+
+@app.command(epilog=_example('fallrise scale sample_videos/reticle.png --pitch "0.1000(2) mm" --out scale.json'))
+def scale(
+    pictures: Annotated[list[Path], typer.Argument(help="Pictures of a stage micrometer, ruled reticle, square grid "
+                                                   "or dot grid, or a recording that shows one.")],
+    pitch: Annotated[str, typer.Option("--pitch", help="Distance of neighbouring lines or dots with its uncertainty.")],
+    pattern: Annotated[str | None, typer.Option("--pattern", help="lines, grid or dots; default: found out.")] = None,
+    out: Annotated[Path, typer.Option("--out", help="Scale file; scale.png is drawn beside it.")] = Path("scale.json"),
+    as_json: JsonOption = False,
+) -> None:  # fmt: skip
+    """Measure metres per pixel from pictures of a reference pattern, with an uncertainty that holds."""
+    from calibration.drawing import write_scale_files
+    from calibration.measure import describe, measure_scale
+    from calibration.scale import scale_to_json
+
+    if pattern not in (None, "lines", "grid", "dots"):
+        raise UsageError(f"--pattern {pattern}: must be lines, grid or dots")
+    measured, found = measure_scale(pictures, pitch_text=pitch, pattern=pattern)
+    written = write_scale_files(measured, found, out)
+    if as_json:
+        _print_json([scale_to_json(measured)], single=True)
+        return
+    typer.echo("\n".join([describe(measured), *map(str, written)]))
 
 
 @app.command(epilog=_example("fallrise evaluate sample_videos/steady.fallrise"))

@@ -231,3 +231,12 @@ def random_pattern(rng: np.random.Generator, *, width: int = 640, height: int = 
         radial=float(rng.uniform(-0.02, 0.02)) if bent else 0.0,
         bits=int(rng.choice([8, 8, 12, 16])), colour=bool(rng.random() < 0.3),
     )  # fmt: skip
+
+
+def sample_reticle() -> np.ndarray:
+    """The reference picture among the sample recordings: 0.1 mm pitch at 3.000 um a pixel, turned by 0.4 degrees."""
+    pattern = Pattern(
+        kind="lines", width=512, height=384, pitch=100 / 3.0, rotation=0.4, phase=(0.35, 0.5), duty=0.12, dark=True,
+        contrast=0.5, blur=1.1, noise=0.012, uneven=0.25, dust=14, long_every=5,
+    )  # fmt: skip
+    return render(pattern, np.random.default_rng(20)).picture
