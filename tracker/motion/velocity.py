@@ -66,10 +66,9 @@ class Path:
     def without(self, sighting: int) -> Path:
         """Leave one sighting out; the steps beside it become one."""
         keep = np.arange(len(self)) != sighting
-        inner = 0 < sighting < len(self) - 1
         breaks = np.delete(self.breaks, min(sighting, len(self.breaks) - 1))
-        if inner and self.breaks[sighting - 1]:
-            breaks[sighting - 1] = True
+        if 0 < sighting < len(self) - 1:
+            breaks[sighting - 1] = self.breaks[sighting - 1] | self.breaks[sighting]
         columns = ("rows", "frames", "times", "down", "side", "down_std", "side_std", "impulse")
         return replace(self, **{name: getattr(self, name)[keep] for name in columns}, breaks=breaks)
 
@@ -223,20 +222,25 @@ def fit_orientation(
     With drives b_j = b_j u of equal variance along x and y, the direction u is the principal axis of
     sum_j b_j b_j^T / var_j; its sense is the one in which the droplets fall.
     """
-    picture = Orientation(0.0, 0.0, "picture")
-    found = paths(tracks, recording, field=field, scale=scale, exposure=exposure, orientation=picture)
-    fits = [fit for fit in (_speeds(path) for path in found if len(path) > MIN_INCREMENTS) if fit]
-    drive, significance = _axis([fit.drive for fit in fits], [fit.drive_var for fit in fits])
-    fall = np.sum([fit.fall / fit.fall_var for fit in fits], axis=0) if fits else np.zeros(2)
-    if drive is not None and fall @ drive < 0:
-        drive = -drive
-    seen = None if drive is None else float(np.rad2deg(np.arctan2(drive[1], drive[0])))
+    assumed, seen = Orientation(down_deg or 0.0, 0.0, "picture"), None
+    for _ in range(2):  # the weights of the second look are those of the right axes
+        found = paths(tracks, recording, field=field, scale=scale, exposure=exposure, orientation=assumed)
+        fits = [fit for fit in (_speeds(path) for path in found if len(path) > MIN_INCREMENTS) if fit]
+        drive, significance = _axis([fit.drive for fit in fits], [fit.drive_var for fit in fits])
+        fall = np.sum([fit.fall / fit.fall_var for fit in fits], axis=0) if fits else np.zeros(2)
+        if drive is not None and fall @ drive < 0:
+            drive = -drive
+        turned = 0.0 if drive is None else float(np.rad2deg(np.arctan2(drive[1], drive[0])))
+        seen = None if drive is None else (assumed.down_deg + turned + 180) % 360 - 180
+        if seen is None or significance <= LEAST_DRIVE or abs(turned) < 5:
+            break
+        assumed = Orientation(seen, 0.0, "drive")
     std = float(np.rad2deg(1 / significance)) if significance > 0 else float("inf")
     if down_deg is not None:
         return Orientation(down_deg, 0.0, "bench", _stated_warning(down_deg, seen, std, significance))
     if seen is not None and significance > LEAST_DRIVE:
         return Orientation(seen, std, "drive", _turned_warning(seen))
-    return _from_fall(fits, fall)
+    return _from_fall(fits, fall, assumed.down_deg)
 
 
 def _axis(vectors: list[FloatArray], variances: list[float]) -> tuple[FloatArray | None, float]:
@@ -251,14 +255,15 @@ def _axis(vectors: list[FloatArray], variances: list[float]) -> tuple[FloatArray
     return (axes[:, 1], float(np.sqrt(signal))) if signal > 0 else (None, 0.0)
 
 
-def _from_fall(fits: list[_Speeds], fall: FloatArray) -> Orientation:
+def _from_fall(fits: list[_Speeds], fall: FloatArray, assumed: float) -> Orientation:
     """Direction of the mean fall, if it is sure enough; else the picture's own."""
     weight = float(np.sum([1 / fit.fall_var for fit in fits]))
     length = float(np.hypot(*fall))
     if weight == 0 or length / np.sqrt(weight) < LEAST_DRIVE:
         note = "gravity's direction cannot be told from the motion; straight down in the picture is used"
         return Orientation(0.0, 0.0, "picture", (note,))
-    angle, std = float(np.rad2deg(np.arctan2(fall[1], fall[0]))), float(np.rad2deg(np.sqrt(weight) / length))
+    angle = assumed + float(np.rad2deg(np.arctan2(fall[1], fall[0])))
+    std = float(np.rad2deg(np.sqrt(weight) / length))
     note = (
         "gravity's direction is that of the fall, since no drive is seen; air that drifts sideways turns it"
     )
