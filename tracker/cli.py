@@ -78,7 +78,9 @@ def measure(
         raise typer.Exit(max(error.exit_status for error in failures))
 
 
-@app.command(epilog=_example('fallrise scale sample_videos/reticle.png --pitch "0.1000(2) mm" --out scale.json'))
+@app.command(
+    epilog=_example('fallrise scale sample_videos/reticle.png --pitch "0.1000(2) mm" --out scale.json')
+)
 def scale(
     pictures: Annotated[list[Path], typer.Argument(help="Pictures of a stage micrometer, ruled reticle, square grid "
                                                    "or dot grid, or a recording that shows one.")],
