@@ -18,16 +18,8 @@ from numpy.typing import ArrayLike, NDArray
 from scipy.linalg import lapack
 
 from physics.errors import PhysicsError
-from physics.increments import Axis, FloatArray, Increments, Whitened, whitened
-from physics.likelihood import (
-    MIN_INCREMENTS,
-    Design,
-    Sums,
-    best_log_rho,
-    likelihood_grid,
-    sums_of,
-    whitened_design,
-)
+from physics.increments import Axis, FloatArray, Increments, Whitened, whiten, whitened
+from physics.likelihood import MIN_INCREMENTS, Sums, best_log_rho, likelihood_grid, sums_at
 
 __all__ = [
     "FreeFit",
@@ -94,16 +86,15 @@ def free_fit(steps: Increments) -> FreeFit:
 
 def free_fit_of(steps: Increments, grid: Sums) -> FreeFit:
     """Give the free fit that belongs to the statistics of a likelihood grid."""
-    weight = np.exp(grid.restricted - grid.restricted.max())
+    weight = np.exp(grid.restricted - grid.restricted.max() + grid.log_width)
     weight /= weight.sum()
     log_rho_mean = weight @ grid.log_rho
     log_q = np.log(grid.free_residual)
     log_var = 2 / grid.degrees_of_freedom + weight @ log_q**2 - (weight @ log_q) ** 2
-    design = whitened_design(steps, np.array([best_log_rho(grid)]))
-    best = sums_of(design)
+    best = sums_at(steps, np.array([best_log_rho(grid)]))
     diffusion = float(best.free_residual[0]) / best.degrees_of_freedom
     speeds, covariance = _speeds(best, steps.parts, diffusion)
-    down, side = _residuals(design, best, diffusion)
+    down, side = _residuals(steps, best, diffusion)
     return FreeFit(
         fall_speed=float(speeds[0]), fall_speed_std=float(np.sqrt(covariance[0, 0])),
         drive_per_volt=speeds[1:], drive_per_volt_std=np.sqrt(np.diag(covariance)[1:]), covariance=covariance,
@@ -129,12 +120,16 @@ def _speeds(best: Sums, parts: int, diffusion: float) -> tuple[FloatArray, Float
     return speeds, covariance
 
 
-def _residuals(design: Design, best: Sums, diffusion: float) -> tuple[FloatArray, FloatArray]:
+def _residuals(steps: Increments, best: Sums, diffusion: float) -> tuple[FloatArray, FloatArray]:
     """Whitened residuals of both axes, unit variance."""
     fall = best.drift_data[0] / best.drift[0] if best.separable else 0.0
-    down = np.concatenate([[-fall], fall * best.drive_slope[0] - best.drive[0], [1.0]])
-    side = np.array([-best.side_speed[0], 1.0])
-    return design.down[0] @ down / np.sqrt(diffusion), design.side[0] @ side / np.sqrt(diffusion)
+    drives = np.zeros(steps.parts)
+    drives[best.parts] = best.drive[0] - best.drive_slope[0] * fall
+    down = steps.down - fall * steps.dt - drives[steps.part] * steps.impulse
+    side = steps.side - best.side_speed[0] * steps.dt
+    rho = float(np.exp(best.log_rho[0]))
+    white = (whiten(steps, rho, down[:, None], "down")[0], whiten(steps, rho, side[:, None], "side")[0])
+    return white[0][:, 0] / np.sqrt(diffusion), white[1][:, 0] / np.sqrt(diffusion)
 
 
 @dataclass(frozen=True, slots=True)

@@ -378,34 +378,43 @@ def whitened(
         raise PhysicsError("rho", rho, "0 s or more")
     data = steps.down if axis == "down" else steps.side
     design = np.asarray(columns, dtype=np.float64).reshape(len(steps), -1)
-    white, log_det = whiten_grid(steps, np.array([rho]), np.column_stack([design, data]), axis)
-    scaled = white[0] / np.sqrt(diffusion)
-    return Whitened(scaled[:, :-1], scaled[:, -1], float(log_det[0]) + len(steps) * float(np.log(diffusion)))
+    white, log_det = whiten(steps, rho, np.column_stack([design, data]), axis)
+    scaled = white / np.sqrt(diffusion)
+    return Whitened(scaled[:, :-1], scaled[:, -1], log_det + len(steps) * float(np.log(diffusion)))
 
 
-def whiten_grid(
-    steps: Increments, rho: FloatArray, columns: FloatArray, axis: Axis
-) -> tuple[FloatArray, FloatArray]:
-    """Whiten columns (N, M) by A + rho M for each rho: (rho, N, M) and ln det (rho,).
+def _factor(steps: Increments, rho: FloatArray, axis: Axis) -> tuple[FloatArray, FloatArray]:
+    """Pivots (rho, N) and unit-lower factors (rho * N - 1,) of A + rho M for each rho.
 
     All rho are one long matrix with gaps in the neighbour terms, so LAPACK is entered once.
     """
-    grid, (size, width) = len(rho), columns.shape
+    grid, size = len(rho), len(steps)
     down = axis == "down"
-    noise_diag = steps.noise_diag if down else steps.side_noise_diag
-    noise_off = steps.noise_off if down else steps.side_noise_off
-    diagonal = steps.blur_diag + rho[:, None] * noise_diag
+    diagonal = steps.blur_diag + rho[:, None] * (steps.noise_diag if down else steps.side_noise_diag)
     off = np.zeros((grid, size))
-    off[:, :-1] = steps.blur_off + rho[:, None] * noise_off
+    off[:, :-1] = steps.blur_off + rho[:, None] * (steps.noise_off if down else steps.side_noise_off)
     pivots, lower, info = lapack.dpttrf(diagonal.ravel(), off.ravel()[:-1], overwrite_d=1, overwrite_e=1)
     if info:
         raise PhysicsError("rho", float(rho[(info - 1) // size]), "such that the covariance is positive")
-    band = np.ones((2, grid * size))
+    return pivots.reshape(grid, size), lower
+
+
+def whiten(steps: Increments, rho: float, columns: FloatArray, axis: Axis) -> tuple[FloatArray, float]:
+    """Whiten columns (N, M) by A + rho M; also its ln det."""
+    pivots, lower = _factor(steps, np.array([rho]), axis)
+    band = np.ones((2, len(steps)))
     band[1, :-1] = lower
-    stacked = (
-        np.empty((width, grid, size)).reshape(width, grid * size).T
-    )  # columns contiguous, as LAPACK wants
-    stacked[:] = np.tile(columns, (grid, 1))
-    solved, _ = lapack.dtbtrs(band, stacked, uplo="L", diag="U", overwrite_b=1)
-    white = (solved / np.sqrt(pivots)[:, None]).reshape(grid, size, width)
-    return white, np.log(pivots).reshape(grid, size).sum(axis=1)
+    solved, _ = lapack.dtbtrs(band, columns, uplo="L", diag="U")
+    return solved / np.sqrt(pivots[0])[:, None], float(np.log(pivots).sum())
+
+
+def gram_grid(
+    steps: Increments, rho: FloatArray, columns: FloatArray, axis: Axis
+) -> tuple[FloatArray, FloatArray]:
+    """Sums X' (A + rho M)^-1 X of columns X (N, M) for each rho: (rho, M, M), and ln det (rho,)."""
+    grid, (size, width) = len(rho), columns.shape
+    pivots, lower = _factor(steps, rho, axis)
+    stacked = np.tile(columns.T, grid)  # (M, rho * N): each column is one long right-hand side
+    solved, _ = lapack.dpttrs(pivots.ravel(), lower, stacked.T)
+    gram = (solved.T.reshape(width * grid, size) @ columns).reshape(width, grid, width)
+    return np.ascontiguousarray(np.swapaxes(gram, 0, 1)), np.log(pivots).sum(axis=1)

@@ -12,22 +12,24 @@ import numpy as np
 from numpy.typing import NDArray
 
 from physics.errors import PhysicsError
-from physics.increments import FloatArray, Increments, whiten_grid
+from physics.increments import FloatArray, Increments, gram_grid
 
 __all__ = [
     "MIN_INCREMENTS",
-    "Design",
     "Sums",
     "best_log_rho",
     "likelihood_grid",
-    "sums_of",
-    "whitened_design",
+    "sums_at",
 ]
 
 MIN_INCREMENTS = 8  # fewer leave the variance so few degrees of freedom that no interval would hold
 RHO_POINTS = 9  # over +-3.5 standard deviations the trapezoid rule is exact to 1e-3
 LOG_DROP = 6.125  # nats: 3.5 standard deviations of a normal likelihood
+COARSEST = 1.3  # of ln rho: the flank of the likelihood grows as fast as rho, so wider steps cut it short
 NOISE_RANGE = (1e-3, 1e4)  # of rho over the median step; below 1e-3 the noise changes nothing
+WIDE_POINTS = 17  # of a look at the whole range of ln rho
+FIRST_REACH = 5.0  # of the first look, in ln rho to either side
+LITTLE_NOISE = 0.03  # rho over the median step that counts as hardly any
 FIELD_OFF = 1e-3  # V; below, the field counts as off: sums of volt seconds leave 1e-10 V of round-off
 SINGULAR = 1e-9  # relative: below, drift and drive are one column
 
@@ -42,7 +44,7 @@ class Sums:
 
     count: int  # steps; each axis has as many data
     parts: NDArray[np.int64]  # (P,) numbers of the parts
-    log_rho: FloatArray  # (K,) evenly spaced, ln s
+    log_rho: FloatArray  # (K,) increasing, ln s
     log_det: FloatArray  # (K,) of A + rho M, both axes together
     drift: FloatArray  # (K,) g'g less the drives
     drift_data: FloatArray  # (K,) g'y less the drives
@@ -68,6 +70,12 @@ class Sums:
         return 2 * self.count - len(self.parts) - 1 - int(self.separable)
 
     @property
+    def log_width(self) -> FloatArray:
+        """(K,) ln of the width in ln rho that each point stands for (trapezoid rule)."""
+        gaps = np.diff(self.log_rho)
+        return np.asarray(np.log(0.5 * (np.append(gaps, 0.0) + np.append(0.0, gaps))))
+
+    @property
     def restricted(self) -> FloatArray:
         """(K,) REML log likelihood of rho with D at its best, up to a constant."""
         own = np.log(self.drift) if self.separable else 0.0
@@ -75,48 +83,28 @@ class Sums:
         return np.asarray(-0.5 * (self.degrees_of_freedom * np.log(self.free_residual) + penalty))
 
 
-@dataclass(frozen=True, slots=True)
-class Design:
-    """Whitened columns of both axes for K values of rho; variance D is left in them."""
-
-    parts: NDArray[np.int64]  # (P,) charge parts that saw the field
-    log_rho: FloatArray  # (K,)
-    down: FloatArray  # (K, N, 2 + P) drift, drives, data
-    side: FloatArray  # (K, N, 2) drift, data
-    log_det: FloatArray  # (K,) of both axes
-
-
-def whitened_design(steps: Increments, log_rho: FloatArray) -> Design:
-    """Whiten drift, drives and data of both axes by A + rho M; one factorisation if their noise is the same."""
+def sums_at(steps: Increments, log_rho: FloatArray) -> Sums:
+    """Sufficient statistics for each ln rho; one factorisation serves both axes if their noise is the same."""
     driven = np.abs(steps.impulse) > FIELD_OFF * steps.dt
     seen = [p for p in range(steps.parts) if np.any(driven[steps.part == p])]
     drives = [np.where(steps.part == p, steps.impulse, 0.0) for p in seen]
-    columns = [steps.dt, *drives, steps.down]
-    rho = np.exp(log_rho)
+    columns, rho = [steps.dt, *drives, steps.down], np.exp(log_rho)
     if steps.same_noise:
-        both, log_det = whiten_grid(steps, rho, np.column_stack([*columns, steps.side]), "down")
-        down, side, side_log_det = both[:, :, :-1], both[:, :, [0, -1]], log_det
+        both, log_det = gram_grid(steps, rho, np.column_stack([*columns, steps.side]), "down")
+        gram, side, side_log_det = both[:, :-1, :-1], both[:, [0, -1]][:, :, [0, -1]], log_det
     else:
-        down, log_det = whiten_grid(steps, rho, np.column_stack(columns), "down")
-        side, side_log_det = whiten_grid(steps, rho, np.column_stack([steps.dt, steps.side]), "side")
-    return Design(np.array(seen, dtype=np.int64), log_rho, down, side, log_det + side_log_det)
-
-
-def sums_of(design: Design) -> Sums:
-    """Reduce a whitened design to its sufficient statistics."""
-    gram = np.swapaxes(design.down, 1, 2) @ design.down
-    side = np.swapaxes(design.side, 1, 2) @ design.side
-    inner = gram[:, 1:-1, 1:-1]
-    inverse = np.asarray(np.linalg.inv(inner), dtype=np.float64)
+        gram, log_det = gram_grid(steps, rho, np.column_stack(columns), "down")
+        side, side_log_det = gram_grid(steps, rho, np.column_stack([steps.dt, steps.side]), "side")
+    inverse = np.asarray(np.linalg.inv(gram[:, 1:-1, 1:-1]), dtype=np.float64)
     ends = gram[:, 1:-1][:, :, [0, -1]]  # G'g and G'y
     fitted = inverse @ ends
     schur = gram[:, [0, -1]][:, :, [0, -1]] - np.swapaxes(ends, 1, 2) @ fitted
     side_speed = side[:, 0, 1] / side[:, 0, 0]
     return Sums(
-        count=design.down.shape[1], parts=design.parts, log_rho=design.log_rho, log_det=design.log_det,
+        count=len(steps), parts=np.array(seen, dtype=np.int64), log_rho=log_rho, log_det=log_det + side_log_det,
         drift=schur[:, 0, 0], drift_data=schur[:, 0, 1], data=schur[:, 1, 1],
         drive=fitted[:, :, 1], drive_slope=fitted[:, :, 0], drive_cov=inverse,
-        log_det_drive=np.linalg.slogdet(inner)[1], side_drift=side[:, 0, 0], side_speed=side_speed,
+        log_det_drive=-np.linalg.slogdet(inverse)[1], side_drift=side[:, 0, 0], side_speed=side_speed,
         side_data=side[:, 1, 1] - side_speed * side[:, 0, 1],
         separable=bool(np.all(schur[:, 0, 0] > SINGULAR * gram[:, 0, 0])),
     )  # fmt: skip
@@ -140,48 +128,70 @@ def likelihood_grid(steps: Increments, *, points: int = RHO_POINTS) -> Sums:
     """
     if len(steps) < MIN_INCREMENTS:
         raise PhysicsError("increments", len(steps), f"at least {MIN_INCREMENTS}")
-    low, high = np.log(np.median(steps.dt)) + np.log(NOISE_RANGE)
-    grid = np.linspace(low, high, points + 2)
+    domain = np.log(np.median(steps.dt)) + np.log(NOISE_RANGE)
+    grid = _first_look(steps, domain)
     for _ in range(8):
-        sums = sums_of(whitened_design(steps, grid))
+        sums = sums_at(steps, grid)
         drop = sums.restricted.max() - sums.restricted
         inside = np.flatnonzero(drop < LOG_DROP)
         first, last = max(inside[0] - 1, 0), min(inside[-1] + 1, len(grid) - 1)
-        if len(inside) >= 3 and len(inside) <= points - 2:
+        cut = (inside[0] == 0 and grid[0] > domain[0]) or (
+            inside[-1] == len(grid) - 1 and grid[-1] < domain[1]
+        )
+        if cut:
+            grid = np.linspace(domain[0], domain[1], WIDE_POINTS)
+        elif len(inside) >= 3 and grid[1] - grid[0] < COARSEST:
             break
-        grid = np.linspace(grid[first], grid[last], points)
-    return sums_of(whitened_design(steps, np.linspace(*_limits(sums, first, last), points)))
+        else:
+            grid = np.linspace(grid[first], grid[last], points)
+    low, high = _limits(sums, first, last)
+    # even in ln(rho + c): the likelihood is normal in ln rho where the noise is known, in rho where it is not
+    bend = (np.exp(high) - np.exp(grid[int(np.argmax(sums.restricted))])) / np.sqrt(2 * LOG_DROP)
+    ends = np.log(np.exp([low, high]) + bend)
+    return sums_at(steps, np.log(np.exp(np.linspace(ends[0], ends[1], points)) - bend))
 
 
-def _vertex(grid: FloatArray, value: FloatArray) -> tuple[float, float]:
-    """Place and height of the top of values on an even grid, by the parabola through the highest three."""
-    top = int(np.argmax(value))
-    if top in (0, len(grid) - 1):
-        return float(grid[top]), float(value[top])
-    left, middle, right = value[top - 1 : top + 2]
-    bend = left - 2 * middle + right
-    shift = 0.5 * (left - right) / bend
-    return float(grid[top] + shift * (grid[1] - grid[0])), float(middle - 0.25 * (left - right) * shift)
+def _first_look(steps: Increments, domain: FloatArray) -> FloatArray:
+    """Grid of ln rho about the estimate from the side steps' variance and neighbour covariance."""
+    side = steps.side - steps.dt * (steps.side.sum() / steps.dt.sum())
+    moments = np.array([side @ side, side[:-1] @ (side[1:] * (steps.noise_off != 0))])
+    shares = np.array([
+        [steps.blur_diag.sum(), steps.side_noise_diag.sum()], [steps.blur_off.sum(), steps.side_noise_off.sum()]
+    ])  # fmt: skip
+    if np.linalg.det(shares) == 0:
+        return np.linspace(domain[0], domain[1], WIDE_POINTS)
+    diffusion, noise = np.linalg.solve(shares, moments)
+    floor = LITTLE_NOISE * np.median(steps.dt)
+    guess = np.log(np.maximum(noise / diffusion, floor)) if diffusion > 0 else domain[1]
+    centre = np.clip(guess, domain[0] + FIRST_REACH, domain[1] - FIRST_REACH)
+    return np.asarray(centre + FIRST_REACH * np.linspace(-1, 1, 9))
 
 
 def _limits(sums: Sums, first: int, last: int) -> tuple[float, float]:
-    """Find ln rho where the restricted likelihood has dropped by `LOG_DROP` on either side."""
-    grid, value = sums.log_rho, sums.restricted
-    top, height = _vertex(grid, value)
-    root = np.sign(grid - top) * np.sqrt(2 * np.maximum(height - value, 0.0))  # straight for a parabola
-    bound = np.sqrt(2 * LOG_DROP)
-    below = np.flatnonzero(root <= -bound)
-    above = np.flatnonzero(root >= bound)
+    """Find ln rho where the restricted likelihood has dropped by about `LOG_DROP` on either side.
+
+    The root of the drop is straight in ln rho for a normal likelihood and grows as rho on a flank that leaves a
+    plateau; interpolating its logarithm never ends too early.
+    """
+    grid = sums.log_rho
+    root = np.log(np.sqrt(2 * (sums.restricted.max() - sums.restricted)) + 0.1)
+    bound = np.log(np.sqrt(2 * LOG_DROP) + 0.1)
+    beyond = root >= bound
     low, high = grid[first], grid[last]
-    if len(below) and below[-1] + 1 < len(grid):
-        i = below[-1]
-        low = np.interp(-bound, root[i : i + 2], grid[i : i + 2])
-    if len(above) and above[0] > 0:
-        i = above[0] - 1
-        high = np.interp(bound, root[i : i + 2], grid[i : i + 2])
+    if beyond[first] and first + 1 < len(grid):
+        low = np.interp(bound, root[[first + 1, first]], grid[[first + 1, first]])
+    if beyond[last] and last > 0:
+        high = np.interp(bound, root[[last - 1, last]], grid[[last - 1, last]])
     return float(low), float(high)
 
 
 def best_log_rho(sums: Sums) -> float:
-    """Most likely ln rho, by the parabola through the highest three points."""
-    return _vertex(sums.log_rho, sums.restricted)[0]
+    """Most likely ln rho, by the parabola through the highest three points, which are even in ln(rho + c)."""
+    top = int(np.argmax(sums.restricted))
+    if top in (0, len(sums.log_rho) - 1):
+        return float(sums.log_rho[top])
+    rho, (left, middle, right) = np.exp(sums.log_rho[top - 1 : top + 2]), sums.restricted[top - 1 : top + 2]
+    bend = (rho[1] ** 2 - rho[0] * rho[2]) / (rho[0] + rho[2] - 2 * rho[1])
+    ratio = (rho[2] + bend) / (rho[1] + bend)
+    shift = 0.5 * (left - right) / (left - 2 * middle + right)
+    return float(np.log(max(rho[0], (rho[1] + bend) * ratio**shift - bend)))

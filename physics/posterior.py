@@ -14,7 +14,7 @@ from typing import Any
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
-from scipy.special import logsumexp, ndtr
+from scipy.special import ndtr
 
 from physics.drag import slip_correction, slip_model
 from physics.droplet import BOLTZMANN, ELEMENTARY_CHARGE, Conditions, mass, weight
@@ -163,7 +163,7 @@ def _log_likelihood(
     spread = 1 + sums.drift * air_std**2 / diffusion
     chi2 = data + (sums.drift * speed**2 - 2 * speed * cross - air_std**2 * cross**2 / diffusion) / spread
     parts = len(sums.parts)
-    constant = sums.log_det + sums.log_det_drive + np.log(sums.side_drift)
+    constant = sums.log_det + sums.log_det_drive + np.log(sums.side_drift) - 2 * sums.log_width
     value = (
         -0.5 * (2 * sums.count - parts - 1) * np.log(diffusion) - parts * np.log(law.mobility)[:, None]
         - 0.5 * (constant + np.log(spread) + chi2 / diffusion)
@@ -396,15 +396,17 @@ def _log_density(value: FloatArray, weight: FloatArray, mean: FloatArray, std: F
     """Log density of a mixture of normals at some values."""
     used = weight > 1e-12 * weight.max()
     z = (value[:, None] - mean[used]) / std[used]
-    return np.asarray(logsumexp(np.log(weight[used] / (np.sqrt(2 * np.pi) * std[used])) - 0.5 * z**2, axis=1))
+    terms = np.log(weight[used] / (np.sqrt(2 * np.pi) * std[used])) - 0.5 * z**2
+    top = terms.max(axis=1)
+    return np.asarray(top + np.log(np.exp(terms - top[:, None]).sum(axis=1)))
 
 
 def _charge_quantiles(
     centre: float, width: float, weight: FloatArray, mean: FloatArray, std: FloatArray
 ) -> FloatArray:
     """Bounds of the 68 and 95 % intervals of a mixture of normals."""
-    used = weight > 1e-6 * weight.max()
-    grid = centre + width * np.linspace(-5, 5, 101)
+    used = weight > 1e-4 * weight.max()
+    grid = centre + width * np.linspace(-4, 4, 81)
     cumulative = ndtr((grid[:, None] - mean[used]) / std[used]) @ weight[used]
     levels = np.array(LEVELS_68 + LEVELS_95) * weight[used].sum()
     return np.asarray(np.interp(levels, cumulative, grid))

@@ -84,7 +84,7 @@ def test_posterior_equals_brute_force_integration(radius, number, seed):
     whole = np.arange(-10, 11)
     exact = logsumexp(brute_force(track, log_radius, whole, log_rho), axis=(0, 2))
     ours = result.number_log_likelihood[np.searchsorted(result.number_values, whole)]
-    near = exact > exact.max() - 8
+    near = exact > exact.max() - 5  # farther out the ends of the noise grids decide
     assert (ours - ours[near].max())[near] == pytest.approx((exact - exact.max())[near], abs=0.05)
 
 
