@@ -34,8 +34,10 @@ EVIL = "=cmd&<img src=x onerror=alert(1)>.avi"
 
 @pytest.fixture
 def inline(monkeypatch):
-    """Measure in this process: a batch knows only an executor."""
+    """Measure in this process, since a batch knows only an executor; the report, slow to draw, is left blank."""
     monkeypatch.setattr(batch_room, "_crew", lambda options, lock: small_term.InlineCrew())
+    blank = lambda out, *_: (out / "report.html").write_text("")  # noqa: E731
+    monkeypatch.setattr("tracker.term.report.write_term_report", blank)
 
 
 @pytest.fixture(scope="module")
