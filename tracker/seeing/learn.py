@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any
 
 import cv2
@@ -14,6 +14,7 @@ from tracker.records import FloatArray
 from tracker.seeing.background import Background, fill_restless, find_background
 from tracker.seeing.detect import Detector, build_detector, cut_windows, find_peaks, gaussian_kernel
 from tracker.seeing.fit import Camera, Spots, Windows, fit_spots, profiles
+from tracker.seeing.light import Light, compare, even, light_of
 
 F32 = NDArray[np.float32]
 
@@ -39,6 +40,7 @@ class Eyes:
     width: float  # px, standard deviation of a sharp spot
     reach: int  # px, half side of the fit's window
     noise: Camera  # as `camera`, for standard deviations
+    light: Light
     report: dict[str, Any]
 
 
@@ -58,6 +60,7 @@ def learn(samples: NDArray[Any], *, black: float, full_scale: float, false_alarm
     -------
     eyes : Eyes
     """
+    samples, flickers = _evened(samples, black)
     background = find_background(samples, black=black)
     chosen = samples[np.unique(np.linspace(0, len(samples) - 1, _PICTURES).astype(int))]
     residual = chosen - background.level
@@ -82,9 +85,19 @@ def learn(samples: NDArray[Any], *, black: float, full_scale: float, false_alarm
     report = {
         "spot_width_px": width, "read_noise": math.sqrt(camera.read_variance), "camera_gain": true.gain,
         "binning": detector.binning, "background_samples": background.samples,
-        "line_share": background.line_share, "teaching_spots": len(clear), **found,
+        "line_share": background.line_share, "flickers": flickers, "teaching_spots": len(clear), **found,
     }  # fmt: skip
-    return Eyes(background, detector, camera, width, reach, true, report)
+    light = light_of(samples, background.level, black)
+    return Eyes(background, detector, camera, width, reach, true, replace(light, flickers=flickers), report)
+
+
+def _evened(samples: NDArray[Any], black: float) -> tuple[NDArray[Any], bool]:
+    """Samples at one brightness, and whether they had to be brought there."""
+    light = light_of(samples, np.median(samples[:: max(1, len(samples) // 9)], axis=0), black)
+    if not light.flickers or len(samples) < _LEAST_PICTURES:
+        return samples, False
+    ratio, _ = compare(light, list(samples))
+    return np.stack(even(light, list(samples), ratio / np.median(ratio))).astype(np.float32), True
 
 
 def change_noise(samples: NDArray[Any], sigma: float) -> float:

@@ -5,14 +5,16 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 
-from tracker.records import Field, Seen, Settings, Sightings, Tracks
+from tracker.records import Field, Recording, Seen, Settings, Sightings, Tracks
 from tracker.seeing.clocks import Clocks, clocks_of
+from tracker.seeing.light import common_jumps
 from tracker.seeing.stitch import join_pieces
 from tracker.seeing.untangle import untangle
 
 IntArray = NDArray[np.int64]
 
 _CROWDING = 0.06  # other droplets expected within the first gate
+_FEW_SIGHTINGS = 20  # fewer show no common motion
 _STEADY = 2  # frames: a droplet is seen at least so often in half of its life; flecks of noise are not
 _LEAST_GATE, _MOST_GATE = 4.0, 60.0  # px
 
@@ -50,6 +52,27 @@ def link(seen: Seen, *, field: Field | None, settings: Settings) -> Tracks:
     pieces = join_pieces(sightings, pieces, clocks, box=box, cuts=seen.cuts)
     pieces = untangle(sightings, pieces, clocks)
     return _tracks(sightings, pieces, settings.min_frames)
+
+
+def jumps_of(sightings: Sightings, recording: Recording) -> list[int]:
+    """Frames at which all droplets jump at once because the camera was moved.
+
+    Parameters
+    ----------
+    sightings : Sightings
+    recording : Recording
+
+    Returns
+    -------
+    frames : list of int
+        First frame after each jump.
+    """
+    if len(sightings) < _FEW_SIGHTINGS:
+        return []
+    box = (recording.width, recording.height)
+    clocks = clocks_of(recording, None)
+    pieces = link_frames(sightings, clocks, box=box, cuts=np.empty(0, np.int64))
+    return common_jumps(sightings, pieces, recording.frame_times)
 
 
 def link_frames(sightings: Sightings, clocks: Clocks, *, box: tuple[int, int], cuts: IntArray) -> IntArray:

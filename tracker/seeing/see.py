@@ -3,25 +3,28 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Iterator
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
 
 import numpy as np
-from numpy.typing import NDArray
 
+from tracker.errors import UsageError
 from tracker.records import FloatArray, Seen, Settings, Sightings
-from tracker.seeing.frames import FrameBatch, Reader, open_recording, sample_recording
-from tracker.seeing.learn import learn
-from tracker.seeing.look import COLUMNS, look
+from tracker.seeing.fixed import on_fixed_places
+from tracker.seeing.frames import Reader, open_recording
+from tracker.seeing.learn import Eyes, learn
+from tracker.seeing.light import change_at, compare, even, shift_between, strange
+from tracker.seeing.link import jumps_of
+from tracker.seeing.look import COLUMNS, Columns, look
+from tracker.seeing.sampling import Frames, Source, gather_samples
 
 Progress = Callable[[int, int], None]  # frames done, frames in all (0: unknown)
 Rectangle = tuple[int, int, int, int]
 
-_SAMPLES = 56  # pictures behind the background
-_HEAD_SECONDS = 8.0  # start of a recording that is looked at before any droplet is sought
-_HEAD_BYTES = 160_000_000  # of pictures kept for that
-_KEY_FRAMES = 16  # more samples from further on, where the codec lets them be reached
+_LEAST_SIDE = 24  # px, of the region that is looked at
+_BLIND = 2.0  # times further off than a change of light needs: a single frame that is left out
+_MOST_LIGHTS = 12  # changes of illumination that are followed; a recording with more is not held up
 
 
 def see(
@@ -55,123 +58,120 @@ def see(
     """
     path = Path(path)
     with open_recording(path, frame_rate=frame_rate) as reader:
-        batches = iter(reader)
-        view = _View(reader, settings, lamp)
-        head = _head(batches, view)
-        eyes = learn(
-            _samples(path, head, view, frame_rate), black=reader.black, full_scale=reader.full_scale,
-            false_alarms=settings.false_alarms,
-        )  # fmt: skip
-        rows: list[dict[str, NDArray[Any]]] = []
-        lamp_series: list[FloatArray] = []
-        for batch in _all(head, batches):
-            rows.append(look(eyes, view.crop(batch.pictures, view.used(batch)), view.numbers(batch)))
-            lamp_series.append(view.lamp_grey(batch))
-            if progress is not None:
-                progress(batch.first_index + len(batch.times), reader.form.frames)
+        watch = _Watch(reader, settings, lamp, progress)
+        source = Source(path, watch.frames(), reader.form, watch.box, frame_rate)
+        rows: list[Columns] = []
+        while source.fill(settings):
+            eyes = learn(
+                gather_samples(source, settings), black=reader.black, full_scale=reader.full_scale,
+                false_alarms=settings.false_alarms,
+            )  # fmt: skip
+            watch.learned(eyes, source)
+            rows += _follow(eyes, source, check=len(watch.eyes) < _MOST_LIGHTS)
         recording = reader.recording()
-    sightings = _gather(rows, view)
-    report = {**eyes.report, "sightings_per_frame": len(sightings) / len(recording.frame_times)}
-    grey = np.concatenate(lamp_series) if lamp is not None else None
-    return Seen(recording, sightings, report, grey)
+    sightings = _gather(rows, watch.box)
+    fixed = on_fixed_places(sightings, recording)
+    jumps = jumps_of(sightings, recording)
+    warnings = [*watch.warnings, *(f"all droplets jump at frame {j}: tracks are cut there" for j in jumps)]
+    if fixed.any():
+        sightings = sightings.take(~fixed)
+        warnings.append(f"{int(fixed.sum())} sightings of bright places that never move were left out")
+    grey = np.concatenate(watch.grey) if lamp is not None else None
+    report = watch.report(len(sightings) / len(recording.frame_times))
+    return Seen(
+        recording, sightings, report, grey, np.array(sorted({*watch.cuts, *jumps}), np.int64), tuple(warnings)
+    )
 
 
-@dataclass(frozen=True, slots=True)
-class _View:
-    """Part of the recording that is looked at."""
+@dataclass(slots=True)
+class _Watch:
+    """What goes by while a recording is read."""
 
     reader: Reader
     settings: Settings
     lamp: Rectangle | None
-
-    def used(self, batch: FrameBatch) -> NDArray[np.bool_]:
-        """Frames of a batch within the time window that are neither repeated nor damaged."""
-        low, high = self.settings.start, self.settings.end
-        inside = batch.usable.copy()
-        if low is not None:
-            inside &= batch.times >= low
-        if high is not None:
-            inside &= batch.times <= high
-        return inside
-
-    def numbers(self, batch: FrameBatch) -> NDArray[np.int64]:
-        """Frame numbers of the used frames."""
-        return batch.first_index + np.flatnonzero(self.used(batch))
-
-    def crop(self, pictures: list[NDArray[Any]], used: NDArray[np.bool_]) -> list[NDArray[Any]]:
-        """Used pictures, cut to the region."""
-        x, y, width, height = self.box
-        return [p[y : y + height, x : x + width] for p, u in zip(pictures, used, strict=True) if u]
+    progress: Progress | None
+    grey: list[FloatArray] = field(default_factory=list)  # of the lamp
+    eyes: list[Eyes] = field(default_factory=list)
+    cuts: list[int] = field(default_factory=list)
+    warnings: list[str] = field(default_factory=list)
 
     @property
     def box(self) -> Rectangle:
         """Region in px, within the picture."""
         x, y, width, height = self.settings.roi or (0, 0, self.reader.width, self.reader.height)
         left, top = max(0, x), max(0, y)
-        return left, top, min(x + width, self.reader.width) - left, min(y + height, self.reader.height) - top
+        right, bottom = min(x + width, self.reader.width), min(y + height, self.reader.height)
+        if right - left < _LEAST_SIDE or bottom - top < _LEAST_SIDE:
+            raise UsageError(
+                f"the region {x},{y},{width},{height} leaves less than {_LEAST_SIDE} x {_LEAST_SIDE} px "
+                f"of a picture of {self.reader.width} x {self.reader.height} px"
+            )
+        return left, top, right - left, bottom - top
 
-    def lamp_grey(self, batch: FrameBatch) -> FloatArray:
-        """Mean grey of the lamp's rectangle in every frame of a batch."""
-        if self.lamp is None:
-            return np.empty(0)
-        x, y, width, height = self.lamp
-        return np.array([float(p[y : y + height, x : x + width].mean()) for p in batch.pictures])
+    def frames(self) -> Iterator[Frames]:
+        """Frames within the time window that are neither repeated nor damaged, cut to the region."""
+        low, high = self.settings.start, self.settings.end
+        x, y, width, height = self.box
+        for batch in self.reader:
+            if self.lamp is not None:
+                u, v, w, h = self.lamp
+                self.grey.append(np.array([float(p[v : v + h, u : u + w].mean()) for p in batch.pictures]))
+            used = batch.usable & (batch.times >= (-np.inf if low is None else low))
+            used &= batch.times <= (np.inf if high is None else high)
+            if self.progress is not None:
+                self.progress(batch.first_index + len(batch.times), self.reader.form.frames)
+            rows = np.flatnonzero(used)
+            if len(rows):
+                cut = [batch.pictures[i][y : y + height, x : x + width] for i in rows]
+                yield Frames(batch.first_index + rows, batch.times[rows], cut)
+
+    def learned(self, eyes: Eyes, source: Source) -> None:
+        """Take note of a new illumination, and of a camera that was moved."""
+        if self.eyes:
+            at, time = source.head[0].numbers[0], source.head[0].times[0]
+            shift = shift_between(self.eyes[-1].background.level, eyes.background.level)
+            if shift is None:
+                self.warnings.append(f"the light changes at {time:.2f} s")
+            else:
+                self.cuts.append(int(at))
+                moved = f"({shift[0]:.1f}, {shift[1]:.1f}) px"
+                self.warnings.append(f"the camera was moved by {moved} at {time:.2f} s: tracks are cut there")
+        self.eyes.append(eyes)
+
+    def report(self, per_frame: float) -> dict[str, Any]:
+        """What was found, for provenance; of the first illumination."""
+        first = self.eyes[0].report if self.eyes else {}
+        return {**first, "illuminations": len(self.eyes), "sightings_per_frame": per_frame}
 
 
-def _head(batches: Iterator[FrameBatch], view: _View) -> list[FrameBatch]:
-    """Batches to look at before any droplet is sought, as many as memory allows."""
-    head: list[FrameBatch] = []
-    form = view.reader.form
-    begin, count = view.settings.start, 0
-    for batch in batches:
-        head.append(batch)
-        count += len(batch.times)
-        if begin is None:
-            begin = float(batch.times[0])
-        if form.seekable and view.used(batch).any():
+def _follow(eyes: Eyes, source: Source, *, check: bool) -> list[Columns]:
+    """Look at frames until the recording ends or shows another illumination; what is left goes back."""
+    rows: list[Columns] = []
+    for count, frames in enumerate(source):
+        ratio, mismatch = compare(eyes.light, frames.pictures)
+        odd = strange(eyes.light, ratio, mismatch)
+        if not check or (count == 0 and odd.all()):
+            odd[:] = False
+        change = change_at(odd) if count or not odd[0] else None
+        blind = odd & strange(eyes.light, ratio, mismatch, times=_BLIND)
+        keep = np.flatnonzero(~blind[:change])
+        pictures = [frames.pictures[i] for i in keep]
+        if eyes.light.flickers:
+            pictures = even(eyes.light, pictures, ratio[keep])
+        rows.append(look(eyes, pictures, frames.numbers[keep]))
+        if change is not None:
+            source.put_back(frames.part(slice(change, None)))
             break
-        enough = batch.times[-1] - begin > _HEAD_SECONDS and count >= _SAMPLES
-        if enough or count * form.picture_bytes > _HEAD_BYTES:
-            break
-    return head
+    return rows
 
 
-def _all(head: list[FrameBatch], rest: Iterator[FrameBatch]) -> Iterator[FrameBatch]:
-    """All batches; those of the head are let go as they are given out."""
-    while head:
-        yield head.pop(0)
-    yield from rest
-
-
-def _samples(path: Path, head: list[FrameBatch], view: _View, frame_rate: float | None) -> NDArray[Any]:
-    """Pictures for the background: spread over the head, and over the rest where it can be reached cheaply."""
-    form = view.reader.form
-    pictures = [p for b in head for p in view.crop(b.pictures, view.used(b))]
-    if not pictures:
-        pictures = [p for b in head for p in view.crop(b.pictures, b.usable)]
-    first = float(head[0].times[0])
-    last = first + form.duration - form.interval
-    low, high = view.settings.start, view.settings.end
-    first, last = max(first, first if low is None else low), min(last, last if high is None else high)
-    many = _SAMPLES if form.seekable else _KEY_FRAMES
-    wanted = first + (last - first) * (np.arange(many) + 0.5) / many
-    if not form.seekable:
-        wanted = wanted[wanted > head[-1].times[-1]]
-    far = [p for _, p in sample_recording(path, wanted, frame_rate=frame_rate)] if len(wanted) else []
-    far = view.crop(far, np.ones(len(far), np.bool_))
-    if not form.seekable or len(far) < min(_SAMPLES // 2, form.frames or _SAMPLES):
-        near = np.unique(np.linspace(0, len(pictures) - 1, _SAMPLES - len(far)).astype(int))
-        far = [pictures[i] for i in near] + far
-    return np.stack(far)
-
-
-def _gather(rows: list[dict[str, NDArray[Any]]], view: _View) -> Sightings:
+def _gather(rows: list[Columns], box: Rectangle) -> Sightings:
     """All columns joined, in px of the whole picture."""
     rows = [r for r in rows if r]
     joined: dict[str, Any] = {
         n: np.concatenate([r[n] for r in rows]) if rows else np.empty(0) for n in COLUMNS
     }
-    x, y, _, _ = view.box
-    joined["x"] = joined["x"] + x
-    joined["y"] = joined["y"] + y
+    joined["x"] = joined["x"] + box[0]
+    joined["y"] = joined["y"] + box[1]
     return Sightings(**joined)
