@@ -228,7 +228,7 @@ def fit_orientation(
         fits = [fit for fit in (_speeds(path) for path in found if len(path) > MIN_INCREMENTS) if fit]
         drive, significance = _axis([fit.drive for fit in fits], [fit.drive_var for fit in fits])
         fall = np.sum([fit.fall / fit.fall_var for fit in fits], axis=0) if fits else np.zeros(2)
-        if drive is not None and fall @ drive < 0:
+        if drive is not None and _falls_along(fits, drive) < 0:
             drive = -drive
         turned = 0.0 if drive is None else float(np.rad2deg(np.arctan2(drive[1], drive[0])))
         seen = None if drive is None else (assumed.down_deg + turned + 180) % 360 - 180
@@ -241,6 +241,11 @@ def fit_orientation(
     if seen is not None and significance > LEAST_DRIVE:
         return Orientation(seen, std, "drive", _turned_warning(seen))
     return _from_fall(fits, fall, assumed.down_deg)
+
+
+def _falls_along(fits: list[_Speeds], axis: FloatArray) -> float:
+    """Sum of the droplets' votes for the sense of an axis; one strange track has one vote."""
+    return float(sum(np.clip(fit.fall @ axis / np.sqrt(fit.fall_var), -5, 5) for fit in fits))
 
 
 def _axis(vectors: list[FloatArray], variances: list[float]) -> tuple[FloatArray | None, float]:
