@@ -21,6 +21,7 @@ if TYPE_CHECKING:
     import pandas as pd
 
 VERDICTS = ("keep", "doubt", "reject", "split", "trim", "join", "reset", "undo")
+_FIRST_KEY = '{"time"'  # how every line begins
 SAMPLES = 25  # points of a track that a decision carries
 
 
@@ -70,7 +71,8 @@ def read_decisions(folder: Path | str) -> tuple[Decision, ...]:
 
 def _is_broken_tail(line: str) -> bool:
     """Whether a line is the beginning of a decision that was cut off, closed later by the next append."""
-    return line.startswith('{"time"') and not line.rstrip().endswith("}")
+    begins = line.startswith(_FIRST_KEY) or _FIRST_KEY.startswith(line)
+    return begins and not line.rstrip().endswith("}")
 
 
 def append_decision(folder: Path | str, decision: Decision) -> None:
