@@ -96,8 +96,13 @@ def _check(key: str, text: str) -> Fault | None:
     try:
         value, _ = parse_quantity(text, unit)
     except QuantityError as error:
-        return Fault(key, f"{error.problem}; allowed: {words}")
-    return None if low <= value <= high else Fault(key, f"is out of range; allowed: {words}")
+        return Fault(key, f"{text!r}: must be {words}" + _why(error))
+    return None if low <= value <= high else Fault(key, f"{text!r} is out of range: must be {words}")
+
+
+def _why(error: QuantityError) -> str:
+    """The part of the problem that the allowed form does not say by itself."""
+    return "" if "dimension" in error.problem else f" ({error.problem})"
 
 
 def _field(given: Mapping[str, str], *, has_log: bool) -> tuple[dict[str, Any], list[Fault]]:
@@ -150,7 +155,7 @@ def _toml(given: Mapping[str, str], field: Mapping[str, Any]) -> str:
     lines = []
     for name, keys in sections.items():
         lines.append(f"[{name}]")
-        lines += [f"{key} = {json.dumps(value).replace(chr(127), '')}" for key, value in keys.items()]
+        lines += [f"{key} = {json.dumps(value)}" for key, value in keys.items()]
     return "\n".join(lines) + "\n"
 
 

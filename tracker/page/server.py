@@ -13,6 +13,7 @@ from importlib import resources
 from pathlib import Path
 from typing import TYPE_CHECKING
 
+import uvicorn
 from starlette.applications import Starlette
 from starlette.exceptions import HTTPException
 from starlette.requests import Request
@@ -133,7 +134,7 @@ def serve(
         If the port is taken.
     """
     site = _site(target, results)
-    with contextlib.closing(_listen(port)) as listener:
+    with contextlib.closing(listen(port)) as listener:
         number = int(listener.getsockname()[1])
         token = secrets.token_urlsafe(24)
         address = f"http://{HOST}:{number}/?token={token}"
@@ -142,17 +143,32 @@ def serve(
         if open_browser:
             threading.Thread(target=webbrowser.open, args=(address,), daemon=True).start()
         threading.Thread(target=_warm_up, daemon=True).start()
-        _run(make_app(site, token=token, port=number), listener)
+        uvicorn.Server(server_config(make_app(site, token=token, port=number))).run([listener])
 
 
-def _run(app: ASGIApp, listener: socket.socket) -> None:
-    import uvicorn
+def server_config(app: ASGIApp) -> uvicorn.Config:
+    """Give uvicorn's settings: quiet, no websockets, limits on what one request may hold.
 
-    config = uvicorn.Config(
-        app, log_level=logging.ERROR, access_log=False, server_header=False, ws="none", lifespan="on",
-        timeout_graceful_shutdown=2, limit_concurrency=200, h11_max_incomplete_event_size=64 * 1024,
-    )  # fmt: skip
-    uvicorn.Server(config).run(sockets=[listener])
+    Parameters
+    ----------
+    app : ASGI application
+        As `make_app` gives it.
+
+    Returns
+    -------
+    config : uvicorn.Config
+    """
+    return uvicorn.Config(
+        app,
+        log_level=logging.ERROR,
+        access_log=False,
+        server_header=False,
+        ws="none",
+        lifespan="on",
+        timeout_graceful_shutdown=2,
+        limit_concurrency=200,
+        h11_max_incomplete_event_size=64 * 1024,
+    )
 
 
 def _warm_up() -> None:
@@ -174,8 +190,23 @@ def _site(target: Path | str | None, results: Path | str | None) -> Site:
     return Site.make(place, chosen)
 
 
-def _listen(port: int) -> socket.socket:
-    """Open the listening socket on the loopback address only."""
+def listen(port: int) -> socket.socket:
+    """Open the listening socket, on the loopback address only.
+
+    Parameters
+    ----------
+    port : int
+        0 for any free one.
+
+    Returns
+    -------
+    listener : socket
+
+    Raises
+    ------
+    UsageError
+        If the port is taken.
+    """
     listener = socket.socket(socket.AF_INET, socket.SOCK_STREAM)
     try:
         listener.setsockopt(socket.SOL_SOCKET, socket.SO_REUSEADDR, 1)

@@ -53,5 +53,5 @@ def unit_words(unit: Mapping[str, Any] | None, *, short: bool = False) -> str:
         used = unit.get("droplets_used")
         over_e = f"{value / ELEMENTARY_CHARGE:.4f} e"
         return f"{text[0].upper()}{text[1:]}, {over_e}, from {used} droplets. No quantum was assumed."
-    reason = unit.get("reason") or "the charges do not show one"
-    return "" if short else f"No charge unit is resolved: {reason}. Charges are shown over e."
+    reason = str(unit.get("reason") or "the charges do not show one").rstrip(". ")
+    return "" if short else f"Charge unit {reason}. Charges are shown over e."

@@ -122,10 +122,11 @@ export class Details {
   }
 
   fillHistory() {
-    const { decisions } = this.view.result;
+    const { decisions, warnings } = this.view.result;
     const items = decisions.map((d) => el("li", { class: d.undone ? "undone" : "" },
       el("span", { class: "num" }, d.time), " \u00b7 ", el("b", {}, d.what), d.reason ? `: ${d.reason}` : "", d.undone ? " (taken back)" : "", d.lost ? " (its track is no longer found)" : ""));
-    this.panels.history.replaceChildren(items.length ? el("ol", { class: "history", reversed: true }, ...items.reverse()) : el("p", { class: "caption" }, "No decisions yet. They are kept in decisions.jsonl, appended, never rewritten."));
+    const told = warnings.length ? el("ul", { class: "history" }, ...warnings.map((text) => el("li", {}, text))) : "";
+    this.panels.history.replaceChildren(warnings.length ? el("h3", { class: "caption" }, "Warnings of this recording") : "", told, el("h3", { class: "caption" }, "Decisions"), items.length ? el("ol", { class: "history", reversed: true }, ...items.reverse()) : el("p", { class: "caption" }, "No decisions yet. They are kept in decisions.jsonl, appended, never rewritten."));
   }
 
   close() {

@@ -56,7 +56,7 @@ export class InspectView {
     this.details = new Details(this.detailBox, this);
     this.judge = new Judge(this.decideBox, {
       state: () => ({ result: this.result, chosen: this.chosen, time: this.result.times[this.frames.wanted] }),
-      onResult: (answer, what) => this.decided(answer, what),
+      onResult: (answer) => this.decided(answer),
       onStale: (error) => this.stale(error.message),
     });
     this.header(result);
@@ -86,7 +86,8 @@ export class InspectView {
     if (first) {
       this.stage.setPicture(result.width, result.height);
       this.player.setTimes(result.times, result.segments);
-      for (const warning of result.warnings) notice(warning, { key: "warning:" + warning });
+      const [warning, ...more] = result.warnings;
+      if (warning) notice(more.length ? `${warning} (and ${more.length} more, under History)` : warning, { key: "warning" });
     }
     this.fillFilter();
     this.table.set(result.droplets);
@@ -121,9 +122,9 @@ export class InspectView {
       const times = this.result.times, span = [times[track.frame[0]], times[track.frame[track.frame.length - 1]]];
       this.timebar.span = span;
       this.timebar.draw();
-      // A droplet that is not in the picture now is shown where it first appears.
-      const row = rowAt(track, this.frames.wanted);
-      if (this.frames.wanted > track.frame[track.frame.length - 1] || row < 0) this.player.go(track.frame[0]);
+      // A droplet that is not in the picture now is shown where it is seen nearest in time.
+      const first = track.frame[0], last = track.frame[track.frame.length - 1];
+      if (this.frames.wanted < first || this.frames.wanted > last) this.player.go(Math.min(last, Math.max(first, this.frames.wanted)));
       const at = Math.max(0, rowAt(track, this.frames.wanted));
       this.stage.lookAt(track.x[at], track.y[at]);
     }
@@ -154,7 +155,7 @@ export class InspectView {
     );
   }
 
-  async decided(answer, what) {
+  async decided(answer) {
     const before = this.chosen;
     await this.take(answer.result);
     const still = this.result.droplets.some((d) => d.droplet === before);
@@ -162,8 +163,6 @@ export class InspectView {
     if (next !== undefined) this.choose(next);
     else { this.chosen = null; this.fillFacts(); }
     clearNotice("stale");
-    const unit = this.result.charge_unit_text;
-    notice(`${what === "undo" ? "Taken back" : "Kept in decisions.jsonl"}; evaluated again in ${answer.seconds.toFixed(2)} s. ${unit}`, { key: "decided" });
   }
 
   stale(text) {

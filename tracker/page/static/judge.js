@@ -7,7 +7,7 @@ export class Judge {
   constructor(box, { state, onResult, onStale }) {
     Object.assign(this, { state, onResult, onStale });
     this.reason = el("input", { type: "text", id: "reason", maxLength: 400, autocomplete: "off", placeholder: "why, in your words" });
-    this.error = el("div", { class: "error", role: "alert", id: "reason-error" });
+    this.outcome = el("div", { class: "outcome", role: "status", id: "outcome" });
     const act = (text, title, call, key) => {
       const button = el("button", { type: "button", title: key ? `${title} (key ${key})` : title, onclick: call }, text);
       if (key) button.setAttribute("aria-keyshortcuts", key);
@@ -32,15 +32,16 @@ export class Judge {
       el("div", { class: "row" },
         el("div", { class: "row", role: "group", "aria-label": "Verdict of a person" }, keep, doubt, reject), el("span", { class: "sep" }),
         el("div", { class: "row", role: "group", "aria-label": "Change the track" }, split, trimStart, trimEnd, this.join, el("label", { htmlFor: "other", class: "hidden" }, "Other droplet to join with"), this.other)),
-      this.error,
+      this.outcome,
     );
-    this.reason.setAttribute("aria-describedby", "reason-error");
+    this.reason.setAttribute("aria-describedby", "outcome");
     this.reason.addEventListener("input", () => this.say(""));
   }
 
-  say(text) {
-    this.error.textContent = text;
-    this.reason.setAttribute("aria-invalid", text ? "true" : "false");
+  say(text, wrong = true) {
+    this.outcome.textContent = text;
+    this.outcome.classList.toggle("error", wrong);
+    this.reason.setAttribute("aria-invalid", wrong && text ? "true" : "false");
   }
 
   refresh() {
@@ -93,7 +94,7 @@ export class Judge {
     try {
       const answer = await post(`/api/results/${this.state().result.id}/${what}`, body);
       this.reason.value = "";
-      this.say("");
+      this.say(`${what === "undo" ? "Taken back" : "Kept in decisions.jsonl"}; evaluated again in ${answer.seconds.toFixed(2)} s.`, false);
       this.busy = false;
       await this.onResult(answer, what);
     } catch (error) {

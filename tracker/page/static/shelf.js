@@ -20,8 +20,8 @@ export class ShelfView {
     this.jobBox = el("section", { class: "card", "aria-labelledby": "jobs-title", hidden: true });
     const cautions = el("section", { class: "card cautions", "aria-labelledby": "cautions-title" }, el("h2", { id: "cautions-title" }, "Before you switch on"),
       el("ul", {}, ...this.shelf.cautions.map((text) => el("li", {}, text))));
-    this.intake = new Intake(left, this.shelf, { onStarted: () => this.poll(true) });
-    left.append(this.jobBox, cautions);
+    this.intake = new Intake(left, this.shelf, { onStarted: () => { this.main.scrollTop = 0; this.poll(true); } });
+    left.append(cautions);
     this.list = el("ul", { class: "shelf" });
     this.worst = el("div");
     this.tally = el("p", { class: "soft" });
@@ -30,7 +30,7 @@ export class ShelfView {
     right.append(el("h1", { id: "shelf-title" }, "Recordings"), this.tally,
       el("div", { class: "row shelf-tools" }, el("label", { htmlFor: "order" }, "Order"), order, el("label", { htmlFor: "reason-filter" }, "With reason"), this.reasonSelect),
       this.list, this.worst);
-    this.main.replaceChildren(el("div", { class: "start" }, left, right));
+    this.main.replaceChildren(el("div", { class: "start" }, left, el("div", {}, this.jobBox, right)));
     this.fill();
     this.poll(true);
   }

@@ -1,0 +1,245 @@
+"""What is dropped on the page: uploads, bench form, measurements as jobs, and that nothing half made is left."""
+
+from __future__ import annotations
+
+import os
+import signal
+import tomllib
+from pathlib import Path
+
+import psutil
+import pytest
+from httpx import Client, RemoteProtocolError
+from page_server import Server, simulated_recording, wait_for
+
+from tracker.bench import load_bench
+from tracker.keeping.store import read_result
+from tracker.page.benchform import companions, read_form
+from tracker.page.errors import RefusedError
+from tracker.page.site import Site
+from tracker.page.uploads import SPARE, clean_leaf
+
+FORM = {
+    "cell.plate_gap": "6.00(2) mm", "cell.voltage": "260.0(5) V", "oil.density": "886(1) kg/m^3",
+    "air.temperature": "22.0(3) degC", "air.pressure": "1008(1) hPa", "air.relative_humidity": "45(5) percent",
+    "camera.metres_per_pixel": "3.000(6) um", "camera.exposure": "25 ms", "site.gravity": "9.8100(2) m/s^2",
+    "field.list": "0 s 0 V, 2 s 260 V, 4.4 s 0 V, 6.8 s 260 V",
+}  # fmt: skip
+
+
+def send(page: Client, path: Path, *, kind: str = "recording", name: str | None = None) -> str:
+    """Upload a file as the page does; gives its number."""
+    headers = {"x-kind": kind, "x-name": name or path.name}
+    answer = page.post("/api/uploads", content=path.read_bytes(), headers=headers)
+    assert answer.status_code == 200, answer.text
+    return str(answer.json()["number"])
+
+
+def ended(page: Client, number: int) -> dict[str, object]:
+    """Wait for the end of a job."""
+    over = ("done", "failed", "cancelled")
+    job: dict[str, object] = wait_for(
+        lambda: (said := page.get(f"/api/jobs/{number}").json())["state"] in over and said, seconds=90
+    )
+    return job
+
+
+def test_form_becomes_the_bench_that_was_typed(tmp_path: Path) -> None:
+    """Every quantity typed into the form is that of the bench read from the file made of it."""
+    text, faults = read_form(FORM, has_picture=False, has_log=False)
+    assert faults == []
+    (tmp_path / "bench.toml").write_text(text)
+    bench = load_bench(tmp_path / "bench.toml")
+    assert (bench.plate_gap.value, bench.plate_gap.std) == pytest.approx((6e-3, 2e-5), rel=1e-12)
+    assert bench.temperature.value == pytest.approx(295.15, rel=1e-12)
+    assert bench.scale.metres_per_pixel_y == pytest.approx(3e-6, rel=1e-12)
+    assert bench.field.entries == ((0, 0), (2, 260), (4.4, 0), (6.8, 260))
+
+
+def test_form_names_every_fault_at_its_field() -> None:
+    """All faults come at once, each under the key of its field."""
+    wrong = {
+        **FORM,
+        "cell.plate_gap": "6 V",
+        "air.temperature": "300 degC",
+        "oil.density": "",
+        "field.list": "soon",
+    }
+    wrong |= {"air.pressure": "1008", "hack.key": "1", "camera.metres_per_pixel": ""}
+    _, faults = read_form(wrong, has_picture=False, has_log=False)
+    named = {fault["key"] for fault in faults}
+    assert named == {
+        "cell.plate_gap", "air.temperature", "oil.density", "field.list", "air.pressure", "hack.key",
+        "camera.metres_per_pixel",
+    }  # fmt: skip
+    _, faults = read_form({**FORM, "field.source": "log"}, has_picture=True, has_log=False)
+    assert {fault["key"] for fault in faults} == {"field.source", "scale.pitch"}
+
+
+def test_text_of_the_form_cannot_leave_its_place() -> None:
+    """Quotes, line breaks and control characters stay inside the value that they were typed into."""
+    evil = 'x"\n[cell]\nplate_gap = "1 mm\x7f\\'
+    text, _ = read_form({**FORM, "air.pressure": evil}, has_picture=False, has_log=False)
+    assert tomllib.loads(text)["air"]["pressure"] == evil
+    assert tomllib.loads(text)["cell"]["plate_gap"] == "6.00(2) mm"
+
+
+def test_bench_file_names_only_files_beside_it() -> None:
+    """A bench file that points elsewhere is refused."""
+    assert companions('[field]\nlog = "supply.csv"\n[camera]\nscale = "s.json"') == {
+        "log": "supply.csv", "scale": "s.json",
+    }  # fmt: skip
+    for name in ("../supply.csv", "/etc/passwd", "a/b.csv", "..", "c:\\\\x.csv", ".hidden"):
+        with pytest.raises(ValueError, match="beside the bench file"):
+            companions(f'[field]\nlog = "{name}"')
+
+
+def test_names_are_cleaned_and_endings_checked() -> None:
+    """No path, markup or reserved name survives; what is no recording is refused."""
+    assert clean_leaf("../../\u00e9tude 1.AVI", kind="recording") == "etude_1.avi"
+    assert clean_leaf("<img src=x onerror=alert(1)>.avi", kind="recording") == "img_src_x_onerror_alert_1.avi"
+    assert clean_leaf("C:\\temp\\con.mp4", kind="recording") == "con_.mp4"
+    assert clean_leaf("\u98db.mkv", kind="recording") == "recording.mkv"
+    assert len(clean_leaf("x" * 500 + ".avi", kind="recording")) < 80
+    for name in ("clip.exe", "clip", ".avi/..", "clip.avi.sh"):
+        with pytest.raises(RefusedError):
+            clean_leaf(name, kind="recording")
+
+
+def test_dropped_recording_becomes_a_result(page: Client, place: Path, tmp_path: Path) -> None:
+    """Upload, form, measurement: the result lies in the chosen folder and its droplets are those of the command."""
+    number = send(page, place / "clip.avi", name="../<b>night 3.avi")
+    wrong = page.post("/api/measure", json={"recording": number, "values": {**FORM, "oil.density": "9 mm"}})
+    assert wrong.status_code == 422
+    assert [fault["key"] for fault in wrong.json()["faults"]] == ["oil.density"]
+    assert list((tmp_path / "results").iterdir()) == []
+    job = page.post("/api/measure", json={"recording": number, "values": FORM}).json()
+    assert job["title"] == "../<b>night 3.avi"
+    done = ended(page, job["number"])
+    assert done["state"] == "done", done
+    folder = tmp_path / "results" / "b_night_3"
+    assert sorted(path.name for path in folder.iterdir()) == [
+        "b_night_3.avi",
+        "b_night_3.fallrise",
+        "bench.toml",
+    ]
+    found = page.get(f"/api/results/{done['result']['id']}").json()
+    assert len(found["droplets"]) == len(read_result(place / "clip.fallrise").droplets)
+    assert "b_night_3" in [item["name"] for item in page.get("/api/shelf").json()["items"]]
+
+
+def test_wrong_bench_file_is_told_before_the_measurement(page: Client, place: Path, tmp_path: Path) -> None:
+    """A key that the bench file lacks or misspells comes back under its name, and no folder is left."""
+    number = send(page, place / "clip.avi")
+    text = (place / "bench.toml").read_text().replace("plate_gap", "plate_gpa")
+    answer = page.post("/api/measure", json={"recording": number, "bench": text})
+    assert answer.status_code == 422
+    assert answer.json()["faults"][0]["key"].startswith("cell.plate_g")
+    answer = page.post("/api/measure", json={"recording": number, "bench": "[cell\n"})
+    assert answer.status_code == 422
+    for body in (
+        {"recording": "none"},
+        {},
+        {"recording": number, "values": []},
+        {"recording": number, "bench": 3},
+    ):
+        assert 400 <= page.post("/api/measure", json=body).status_code < 500
+    assert page.delete(f"/api/uploads/{number}").status_code == 200
+    assert [path for path in (tmp_path / "results").rglob("*") if path.is_file()] == []
+
+
+def test_failed_measurement_can_be_tried_again(page: Client, tmp_path: Path) -> None:
+    """A text renamed to .avi fails with its message; after Remove nothing is left."""
+    fake = tmp_path / "fake.avi"
+    fake.write_text("no video at all\n" * 50)
+    number = send(page, fake)
+    job = page.post("/api/measure", json={"recording": number, "values": FORM}).json()
+    done = ended(page, job["number"])
+    assert done["state"] == "failed"
+    assert "fake.avi" in done["error"]["message"]
+    again = page.post("/api/measure", json={"recording": number, "values": FORM})
+    assert again.status_code == 200
+    ended(page, again.json()["number"])
+    page.delete(f"/api/uploads/{number}")
+    assert list((tmp_path / "results").iterdir()) == []
+
+
+@pytest.fixture(scope="module")
+def recording(tmp_path_factory: pytest.TempPathFactory) -> Path:
+    """Recording whose measurement takes a while."""
+    return simulated_recording(tmp_path_factory.mktemp("long"), seconds=60.0)
+
+
+def test_cancelled_measurement_leaves_nothing(page: Client, recording: Path, tmp_path: Path) -> None:
+    """Cancel ends the child and removes the folder of the recording."""
+    number = send(page, recording)
+    job = page.post("/api/measure", json={"recording": number, "values": FORM}).json()
+    assert wait_for(lambda: page.get(f"/api/jobs/{job['number']}").json()["text"] == "measuring")
+    page.post(f"/api/jobs/{job['number']}/cancel", json={})
+    assert ended(page, job["number"])["state"] == "cancelled"
+    assert list((tmp_path / "results").iterdir()) == []
+
+
+def test_uploads_stop_at_the_limit(page: Client, site: Site, tmp_path: Path) -> None:
+    """Past the limit: 413, announced or not, and no byte is left; wrong kinds and empty files are refused."""
+    headers = {"x-kind": "recording", "x-name": "big.avi"}
+    big = b"\0" * (site.uploads.limit + 1)
+    assert page.post("/api/uploads", content=big, headers=headers).status_code == 413
+    pieces = (big[i : i + 65536] for i in range(0, len(big), 65536))
+    try:
+        assert page.post("/api/uploads", content=pieces, headers=headers).status_code == 413
+    except RemoteProtocolError:  # the server hangs up on a sender that does not stop
+        pass
+    assert page.post("/api/uploads", content=b"", headers=headers).status_code == 400
+    for wrong in ({"x-kind": "secret"}, {"x-name": "x.sh"}, {"x-name": ""}):
+        assert 400 <= page.post("/api/uploads", content=b"x", headers=headers | wrong).status_code < 500
+    assert list((tmp_path / "results").iterdir()) == []
+
+
+def test_full_disk_refuses_uploads(page: Client, tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    """Without free space the answer is 507 before anything is written."""
+    import shutil
+
+    usage = shutil.disk_usage(tmp_path)
+    monkeypatch.setattr(shutil, "disk_usage", lambda _: usage._replace(free=SPARE // 2))
+    headers = {"x-kind": "recording", "x-name": "clip.avi"}
+    assert page.post("/api/uploads", content=b"x" * 100, headers=headers).status_code == 507
+    assert list((tmp_path / "results").iterdir()) == []
+
+
+def test_killed_server_leaves_no_process_and_no_half_file(recording: Path, tmp_path: Path) -> None:
+    """SIGKILL in the middle of an upload and a measurement: the children end, and only whole files are there."""
+    results = tmp_path / "results"
+    with Server(None, results, cache=tmp_path / "cache") as server, server.http() as page:
+        number = send(page, recording)
+        send(page, recording, name="waiting.avi")
+        job = page.post("/api/measure", json={"recording": number, "values": FORM}).json()
+        assert wait_for(lambda: page.get(f"/api/jobs/{job['number']}").json()["text"] == "measuring")
+        children = server.children()
+        assert children
+        os.kill(server.process.pid, signal.SIGKILL)
+        assert wait_for(lambda: not any(_alive(child) for child in children), seconds=15)
+    left = {path.name: path for path in results.rglob("*") if path.is_file()}
+    assert set(left) == {"clip.avi", "bench.toml"}
+    assert left["clip.avi"].read_bytes() == recording.read_bytes()
+
+
+def test_stopped_server_leaves_no_process(recording: Path, tmp_path: Path) -> None:
+    """Ctrl+C ends jobs and server; uploads that were not measured are gone."""
+    results = tmp_path / "results"
+    with Server(None, results, cache=tmp_path / "cache") as server, server.http() as page:
+        number = send(page, recording)
+        page.post("/api/measure", json={"recording": number, "values": FORM})
+        assert wait_for(server.children)
+        children = server.children()
+        os.kill(server.process.pid, signal.SIGINT)
+        server.process.wait(20)
+        assert not any(_alive(child) for child in children)
+    assert [path for path in results.rglob("*") if path.is_file()] == []
+
+
+def _alive(process: psutil.Process) -> bool:
+    try:
+        return process.is_running() and process.status() != psutil.STATUS_ZOMBIE
+    except psutil.NoSuchProcess:
+        return False
