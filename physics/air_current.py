@@ -89,6 +89,8 @@ def _log_likelihood(fit: FreeFit, table: Law, air_speeds: FloatArray, log_diffus
         return np.zeros_like(air_speeds)
     span = np.log(fit.diffusion) + SPAN * log_diffusion_std * np.array([1.0, -1.0])
     ends = np.interp(-span, -np.log(table.diffusion), table.log_radius)
+    if not ends[1] > ends[0]:  # beyond all radii of the table
+        return np.zeros_like(air_speeds)
     reach = np.interp(ends, table.log_radius, table.speed)
     points = int(np.clip((reach[1] - reach[0]) / (0.7 * fit.fall_speed_std), 60, 2000))
     log_radius = np.linspace(ends[0], ends[1], points)

@@ -31,6 +31,7 @@ WIDE_POINTS = 17  # of a look at the whole range of ln rho
 FIRST_REACH = 5.0  # of the first look, in ln rho to either side
 LITTLE_NOISE = 0.03  # rho over the median step that counts as hardly any
 FIELD_OFF = 1e-3  # V; below, the field counts as off: sums of volt seconds leave 1e-10 V of round-off
+LEAST_DIFFUSION = 1e-20  # m^2/s; a droplet of 20 m would diffuse like this
 SINGULAR = 1e-9  # relative: below, drift and drive are one column
 
 
@@ -62,7 +63,8 @@ class Sums:
     def free_residual(self) -> FloatArray:
         """(K,) sum of squares that the free fit leaves, both axes."""
         explained = self.drift_data**2 / self.drift if self.separable else 0.0
-        return np.asarray(self.data - explained + self.side_data)
+        least = LEAST_DIFFUSION * self.degrees_of_freedom  # a spot that stands still to the last digit
+        return np.maximum(self.data - explained + self.side_data, least)
 
     @property
     def degrees_of_freedom(self) -> int:

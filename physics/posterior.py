@@ -30,6 +30,7 @@ NO_CHARGE_REASONS: Mapping[str, str] = {
     "too_few_steps": f"fewer than {MIN_INCREMENTS} steps between sightings",
     "never_field_on": "never seen with the field on",
     "not_falling": "does not fall: its speed without field is not downward within 5 standard deviations",
+    "out_of_range": "falls or diffuses like no droplet from 0.03 to 15 um",
 }
 RADIUS_RANGE = (3e-8, 1.5e-5)  # m; below, a droplet diffuses out of sight, above, Stokes' law has ended
 RADIUS_POINTS = 120
@@ -279,8 +280,8 @@ def droplet_posterior(
     fit = free_fit_of(steps, sums)
     table = law_table(conditions)
     span = radius_span(fit, table, air_speed, air_speed_std)
-    if span is None:
-        return _empty("not_falling", steps.parts, fit)
+    if span is None or not span[1] > span[0]:
+        return _empty("not_falling" if span is None else "out_of_range", steps.parts, fit)
     law, mixture = _settled_mixture(sums, span[:2], conditions, air_speed, air_speed_std)
     result = replace(
         _empty("" if len(sums.parts) else "never_field_on", steps.parts, fit), inconsistent=span[2],

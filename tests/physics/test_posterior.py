@@ -297,7 +297,23 @@ def test_too_few_steps_give_a_reason():
     result = droplet_posterior(track.steps(breaks=np.arange(len(track.times) - 1) >= 7), CONDITIONS)
     assert result.reason == "too_few_steps"
     assert result.free is None
-    assert set(NO_CHARGE_REASONS) == {"too_few_steps", "never_field_on", "not_falling"}
+    assert set(NO_CHARGE_REASONS) == {"too_few_steps", "never_field_on", "not_falling", "out_of_range"}
+
+
+@pytest.mark.parametrize(
+    ("down", "reason"),
+    [(0.0, "not_falling"), (1e-4, ""), (0.1, "out_of_range")],
+    ids=["still", "ruled", "fast"],
+)
+def test_motion_that_no_droplet_makes_gives_a_reason(down, reason):
+    """A spot that stands still, one drawn with a ruler and one at 10 cm/s pass through without an error."""
+    track = record(np.random.default_rng(24), 6e-7, 5, plan=Plan(seconds=6.0))
+    ruled = replace(track, down=down * track.times, side=np.zeros_like(track.times))
+    result = droplet_posterior(ruled.steps(), CONDITIONS)
+    assert result.reason == reason
+    assert result.free.diffusion < 1e-17
+    if not reason:  # only the fall speed is believable: diffusion contradicts it
+        assert result.inconsistent
 
 
 def test_one_voltage_all_the_time_still_gives_a_charge():
