@@ -259,22 +259,27 @@ def _cubic(shift: float) -> FloatArray:
 
 def _smooth(profiles: FloatArray, sigma: float) -> FloatArray:
     """Smooth each profile with a Gaussian."""
-    from scipy.ndimage import gaussian_filter1d
-
-    return np.asarray(gaussian_filter1d(profiles, sigma, axis=1, mode="nearest", truncate=4.0))
+    size = (2 * int(np.ceil(4 * sigma)) + 1, 1)
+    return np.asarray(
+        cv2.GaussianBlur(profiles, size, sigma, borderType=cv2.BORDER_REPLICATE), dtype=np.float64
+    )
 
 
 def _level(profiles: FloatArray, mask: NDArray[np.bool_]) -> FloatArray:
     """Smooth level of each profile over its valid part, wide against any pitch that is allowed."""
+    strips, columns = profiles.shape
     wide = max(8.0, float(mask.sum(axis=1).max()) / 4)
-    weight = _smooth(mask.astype(float), wide)
-    return _smooth(np.where(mask, profiles, 0.0), wide) / np.maximum(weight, 1e-6)
+    small = max(2, round(8 * columns / wide)), strips
+    sums = [
+        _smooth(np.asarray(cv2.resize(v, small, interpolation=cv2.INTER_AREA), dtype=np.float64), 8.0)
+        for v in (np.where(mask, profiles, 0.0), mask.astype(np.float64))
+    ]
+    level = cv2.resize(sums[0] / np.maximum(sums[1], 1e-6), (columns, strips), interpolation=cv2.INTER_LINEAR)
+    return np.asarray(level, dtype=np.float64)
 
 
 def _repeat(profiles: FloatArray, mask: NDArray[np.bool_]) -> tuple[float, float] | None:
     """Distance at which the profiles repeat and half the width of what repeats, from their autocorrelation."""
-    from scipy.signal import find_peaks
-
     size = 1 << int(2 * profiles.shape[1] - 1).bit_length()
     power = (np.abs(np.fft.rfft(profiles, size, axis=1)) ** 2).sum(axis=0)
     shared = (np.abs(np.fft.rfft(mask.astype(float), size, axis=1)) ** 2).sum(axis=0)
@@ -288,8 +293,10 @@ def _repeat(profiles: FloatArray, mask: NDArray[np.bool_]) -> tuple[float, float
     if curve[0] <= 0:
         return None
     curve = curve / curve[0]
-    peaks, _ = find_peaks(curve, prominence=0.06)
-    peaks = peaks[peaks >= 4]
+    top = np.flatnonzero((curve[1:-1] >= curve[:-2]) & (curve[1:-1] > curve[2:])) + 1
+    # A repeat stands out from the lags up to half of it shorter and longer.
+    stands = [curve[n] - max(curve[n // 2 : n].min(), curve[n : n + n // 2 + 1].min()) > 0.06 for n in top]
+    peaks = top[np.array(stands, dtype=bool) & (top >= 4)]
     heights = curve[peaks]
     if len(peaks) == 0 or heights.max() < 0.08:
         return None
@@ -429,8 +436,10 @@ def _along(
 ) -> tuple[tuple[float, float], float]:
     """Usual values on the lines and between them, and how unbroken the lines are.
 
-    The latter is 1 less the relative spread of the contrast along them, noise taken out. A row of dots that fill
-    half of it has 0; a line stays as it is where another crosses it.
+    The latter is the lower of two numbers near 1 for lines. One is 1 less the relative spread of the contrast
+    along them, noise taken out: 0 for a row of dots that fill half of it; a line stays as it is where another crosses
+    it. The other tells lines from the gaps between rows of dots, which are unbroken too: the usual depth of the
+    ground over its greatest, which for dots is small, as most of a row of dots is gap.
     """
     pick = np.linspace(0, len(place) - 1, min(len(place), 400)).astype(int)
     centre = np.rint(place[pick]).astype(int)
@@ -441,10 +450,13 @@ def _along(
         return np.asarray(turned[row, at[:, None]], dtype=np.float64)
 
     half = max(2, round(pitch / 2))
-    line, ground = column(0), 0.5 * (column(-half) + column(half))
+    line, ground = column(0), column(half)
     levels = float(np.median(line)), float(np.median(ground))
-    contrast = (line - ground.mean(axis=1, keepdims=True)) * (1 if levels[0] > levels[1] else -1)
+    sign = 1 if line.mean() > ground.mean() else -1
+    contrast = (line - ground.mean(axis=1, keepdims=True)) * sign
     mean = contrast.mean(axis=1)
     neighbour = (contrast[:, 1:] * contrast[:, :-1]).mean(axis=1) - mean**2
     spread = np.sqrt(np.clip(neighbour, 0, None)) / np.maximum(mean, 1e-9)
-    return levels, 1 - float(np.median(spread))
+    depth = (line.mean(axis=1, keepdims=True) - ground) * sign
+    usual = np.median(depth, axis=1) / np.maximum(np.percentile(depth, 90, axis=1), 1e-9)
+    return levels, min(1 - float(np.median(spread)), float(np.median(usual)))

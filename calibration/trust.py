@@ -156,7 +156,7 @@ def largest_block(coordinate: FloatArray) -> NDArray[np.bool_]:
     block : ndarray of bool of shape (N,)
         At most one node for each place of the lattice: the nearest.
     """
-    from scipy.ndimage import label
+    import cv2
 
     number = np.rint(coordinate)
     distance = np.abs(coordinate - number).max(axis=1)
@@ -169,8 +169,8 @@ def largest_block(coordinate: FloatArray) -> NDArray[np.bool_]:
     site = number[rows].astype(np.int64) - number[rows].min(axis=0).astype(np.int64)
     table = np.full(site.max(axis=0) + 1, -1, dtype=np.int64)
     table[site[:, 0], site[:, 1]] = rows  # the nearest comes last and stays
-    parts, count = label(table >= 0, structure=np.ones((3, 3), dtype=int))
-    largest = 1 + int(np.argmax(np.bincount(parts.ravel(), minlength=count + 1)[1:]))
+    count, parts = cv2.connectedComponents((table >= 0).astype(np.uint8), connectivity=8)
+    largest = 1 + int(np.argmax(np.bincount(parts.ravel(), minlength=count)[1:]))
     block[table[(parts == largest) & (table >= 0)]] = True
     return block
 

@@ -95,7 +95,7 @@ def render(pattern: Pattern, rng: np.random.Generator) -> Reference:
     i, j, gradient = lattice_coordinates(pattern, gx, gy)
     marks = _coverage(pattern, i, j, s, rng)
     marks = marks.reshape(pattern.height, s, pattern.width, s).mean(axis=(1, 3))
-    if pattern.part < 1:
+    if pattern.part < 1 and pattern.kind != "dots":
         marks = marks * _window(pattern, rng)
     level = 0.2 + pattern.contrast * (1 - marks if pattern.dark else marks)
     level *= _light(pattern, rng)
@@ -130,6 +130,11 @@ def _coverage(pattern, i, j, s, rng):
         dx, dy = dx - table[0][slot], dy - table[1][slot]
     radius = pattern.duty * pattern.pitch / 2
     disc = ndtr((radius - np.hypot(dx, dy)) / pattern.blur)
+    if pattern.part < 1:  # a dot grid ends with whole dots
+        half = pattern.part * np.array([pattern.width, pattern.height]) / (2.2 * pattern.pitch)
+        spare = (1 - pattern.part) * min(pattern.width, pattern.height) / (2.2 * pattern.pitch)
+        ci, cj = rng.uniform(-spare, spare, 2) / 1.5 + np.array(pattern.phase)
+        disc = disc * ((np.abs(ni - ci) <= half.min()) & (np.abs(nj - cj) <= half.max()))
     if pattern.missing:
         keep = rng.random((997,)) >= pattern.missing
         disc = disc * keep[((ni * 61 + nj * 17).astype(int)) % 997]
