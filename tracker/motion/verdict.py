@@ -36,6 +36,8 @@ _ALL = (
            "share of the drive that is not drift", "below 1e-9", "none: known from the voltage", "reject"),
     Reason("not_falling", "Does not fall with the field off, so it has no radius.",
            "fall speed less 5 standard uncertainties", "below 0 on the upper side", "3e-7", "reject"),
+    Reason("out_of_range", "Falls or diffuses like no droplet from 0.03 to 15 um radius.",
+           "fall speed and diffusion", "beyond those of both ends", "below 1e-6", "reject"),
     Reason("imprecise", "The fall speed is too uncertain for a radius that can be used.",
            "standard uncertainty of ln radius", "above 0.3", "none: an uncertainty, not a test", "doubt"),
     Reason("charge_step", "Changed its charge; the row holds the charge of its longest part, changes.csv all of them.",
