@@ -243,8 +243,7 @@ def measure(
 
 
 def _measure_scale(picture: Path, scale: Path, pitch: str, pattern: str | None, progress: Any) -> None:
-    from calibration.measuring import measure_scale
-
+    from calibration.measure import measure_scale
     from calibration.scale import write_scale
 
     progress("looking at the reference picture")(0, 1)
