@@ -47,7 +47,10 @@ def field_and_tracks(seen: Seen, bench: Bench, settings: Settings) -> tuple[Fiel
         field = field_of_tracks(link(seen, field=None, settings=settings), seen.recording, bench)
     for other in _other_sources(bench, seen):
         compare_fields(field, known_field(other, seen.recording, bench, lamp=seen.lamp), seen.recording)
-    return field, link(seen, field=field, settings=settings)
+    from tracker.motion.fieldmotion import sharpened
+
+    tracks = link(seen, field=field, settings=settings)
+    return sharpened(field, tracks, seen.recording, bench), tracks
 
 
 def known_field(source: str, recording: Recording, bench: Bench, *, lamp: object = None) -> Field:

@@ -48,7 +48,9 @@ class History:
     trend: Change | None  # evaporation or growth; radius and charge hold at its time
 
 
-def find_changes(steps: Increments, times: FloatArray, conditions: Conditions) -> History:
+def find_changes(
+    steps: Increments, times: FloatArray, conditions: Conditions, *, fit: FreeFit | None = None
+) -> History:
     """Look for charge steps, evaporation and a switch to another droplet, until nothing more is found.
 
     Parameters
@@ -59,6 +61,8 @@ def find_changes(steps: Increments, times: FloatArray, conditions: Conditions) -
         Start of exposure in s of the sightings that `steps` were made from.
     conditions : Conditions
         Of the bench, for what a change of radius does to speed and drive.
+    fit : FreeFit, optional
+        Of the steps, if it was made already.
 
     Returns
     -------
@@ -76,7 +80,7 @@ def find_changes(steps: Increments, times: FloatArray, conditions: Conditions) -
     trend: Change | None = None
     column = np.empty((len(steps), 0))
     part = np.zeros(len(steps), np.int64)
-    fit = free_fit(steps)
+    fit = free_fit(steps) if fit is None else fit
     for _ in range(MOST_CHANGES):
         if not np.all(np.isfinite(fit.drive_per_volt)) or len(steps) < 2 * MIN_INCREMENTS:
             break

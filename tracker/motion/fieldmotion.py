@@ -70,6 +70,9 @@ def field_from_motion(tracks: Tracks, recording: Recording, bench: Bench) -> Fie
         raise FieldError(str(recording.path), "toggles from motion need cell.voltage in the bench file")
     exposure = exposure_of(bench, recording)
     droplets = _droplets(tracks, recording, bench, exposure)
+    if not droplets:
+        problem = f"no droplet is tracked for {LEAST_DROPLET} frames, so the motion cannot tell when the field was on"
+        raise FieldError(str(recording.path), problem)
     edges = segments_of_motion(*_scaled_steps(droplets, recording))
     if len(edges) < 2:
         raise FieldError(
@@ -134,11 +137,7 @@ def _droplets(tracks: Tracks, recording: Recording, bench: Bench, exposure: floa
     found = paths(
         tracks, recording, field=idle, scale=bench.scale, exposure=exposure, orientation=orientation
     )
-    usable = [path for path in found if len(path) > LEAST_DROPLET and len(path.steps()) >= LEAST_DROPLET]
-    if not usable:
-        problem = f"no droplet is tracked for {LEAST_DROPLET} frames, so the motion cannot tell when the field was on"
-        raise FieldError(str(recording.path), problem)
-    return usable
+    return [path for path in found if len(path) > LEAST_DROPLET and len(path.steps()) >= LEAST_DROPLET]
 
 
 def _scaled_steps(droplets: Sequence[Path], recording: Recording) -> tuple[FloatArray, np.ndarray]:

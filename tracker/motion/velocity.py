@@ -11,6 +11,7 @@ import numpy as np
 from calibration.scale import Scale, to_metres
 from physics.motion import (
     MIN_INCREMENTS,
+    FreeFit,
     Increments,
     field_impulse,
     free_fit,
@@ -295,7 +296,7 @@ def _stated_warning(stated: float, seen: float | None, std: float, significance:
     )
 
 
-def without_outliers(path: Path) -> tuple[Path, int, tuple[int, ...]]:
+def without_outliers(path: Path) -> tuple[Path, int, tuple[int, ...], FreeFit | None]:
     """Leave out single sightings, and steps, that do not belong to the droplet's motion.
 
     Parameters
@@ -311,27 +312,31 @@ def without_outliers(path: Path) -> tuple[Path, int, tuple[int, ...]]:
         Sightings that were left out.
     hops : tuple of int
         Frames at which the droplet's place jumped for good: the step is left out, the sightings stay.
+    fit : FreeFit or None
+        Of what is left; None if the steps are too few.
 
     Notes
     -----
     Sightings by `physics.freefit.robust_increments`. A whitened residual beyond 5 that is left after that is a
     lasting jump; chance gives one step in 1.7 million.
     """
-    if len(path.steps()) < 2 * MIN_INCREMENTS:
-        return path, 0, ()
-    _, marked = robust_increments(path.steps())
+    steps = path.steps()
+    hops: list[int] = []
+    if len(steps) < MIN_INCREMENTS:
+        return path, 0, (), None
+    _, marked = robust_increments(steps)
     for sighting in marked[::-1]:
         path = path.without(int(sighting))
-    hops = []
-    for _ in range(MOST_HOPS):
+    fit = None
+    for _ in range(MOST_HOPS + 1):
         steps = path.steps()
         if len(steps) < MIN_INCREMENTS:
-            break
+            return path, len(marked), tuple(sorted(hops)), None
         fit = free_fit(steps)
         size = np.maximum(np.abs(fit.down_residuals), np.abs(fit.side_residuals))
         worst = int(np.argmax(size))
-        if size[worst] <= OUTLIER:
+        if size[worst] <= OUTLIER or len(hops) == MOST_HOPS:
             break
         hops.append(int(path.frames[steps.first[worst] + 1]))
         path = path.cut(int(steps.first[worst]))
-    return path, len(marked), tuple(sorted(hops))
+    return path, len(marked), tuple(sorted(hops)), fit

@@ -127,7 +127,7 @@ def test_a_single_wrong_sighting_is_left_out_and_a_lasting_jump_breaks_the_track
     down = path.down.copy()
     down[100] += 8e-6
     down[300:] += 10e-6
-    cleaned, outliers, hops = without_outliers(replace(path, down=down))
+    cleaned, outliers, hops, _ = without_outliers(replace(path, down=down))
     assert outliers == 1
     assert path.rows[100] not in cleaned.rows
     assert hops == (int(path.frames[300]),)
@@ -139,7 +139,7 @@ def test_clean_tracks_lose_nothing():
     rng = np.random.default_rng(60)
     for _ in range(100):
         path = record_path(rng, Life(float(rng.uniform(0.3e-6, 1.2e-6)), int(rng.integers(-9, 10))), CAMERA)
-        cleaned, outliers, hops = without_outliers(path)
+        cleaned, outliers, hops, _ = without_outliers(path)
         assert (len(cleaned), outliers, hops) == (len(path), 0, ())
 
 

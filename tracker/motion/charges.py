@@ -1,0 +1,177 @@
+"""What the charges of a recording share: the bench's part of their uncertainty, charge numbers, the charge unit."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+
+from physics.budget import SHARED_INPUTS, bench_budget, shared_errors
+from physics.quanta import ChargeNumbers, ChargeUnit, charge_sample, number_probabilities, pooled_charge_unit
+from tracker.bench import Bench
+from tracker.motion.droplet import Droplet
+from tracker.motion.rows import NAN, DropletRow
+from tracker.records import FloatArray, IntArray
+
+
+@dataclass(frozen=True, slots=True)
+class SharedPart:
+    """What the bench's inputs put on all charges of a recording alike."""
+
+    errors: FloatArray  # (10,) of SHARED_INPUTS
+    sensitivities: FloatArray  # (droplets, 10) d ln charge; nan without charge
+    std: FloatArray  # (droplets,) C
+    bench: Bench
+
+    @classmethod
+    def of(cls, droplets: list[Droplet], bench: Bench) -> SharedPart:
+        """Gather the sensitivities of all droplets."""
+        errors = shared_errors(bench.shared_inputs)
+        table = np.full((len(droplets), len(SHARED_INPUTS)), np.nan)
+        charge = np.array([d.charge for d in droplets]).reshape(-1, 2)
+        for i, droplet in enumerate(droplets):
+            p = droplet.posterior
+            if p is not None and p.main_part >= 0:
+                table[i] = [p.sensitivities[name][1] for name in SHARED_INPUTS]
+        # As in the sensitivities, a charge of 0 counts as one standard deviation.
+        size = np.maximum(np.abs(charge[:, 0]), charge[:, 1])
+        return cls(errors, table, size * np.sqrt(np.sum((table * errors) ** 2, axis=1)), bench)
+
+    @property
+    def relative(self) -> FloatArray:
+        """(droplets,) relative standard uncertainty of the charge."""
+        return np.asarray(np.sqrt(np.sum((self.sensitivities * self.errors) ** 2, axis=1)))
+
+    def budget(self, droplets: list[Droplet], rows: list[DropletRow]) -> dict[str, Any]:
+        """Budget of the factor on all charges, and the sensitivities from which all covariances follow."""
+        plain: dict[str, Any] = {
+            "inputs": list(SHARED_INPUTS), "errors": self.errors.tolist(),
+            "log_charge_sensitivities": {
+                str(row.droplet): line.tolist()
+                for row, line in zip(rows, self.sensitivities, strict=True) if np.all(np.isfinite(line))
+            },
+        }  # fmt: skip
+        charge = np.array([d.charge for d in droplets]).reshape(-1, 2)
+        good = np.all(np.isfinite(self.sensitivities), axis=1) & (np.abs(charge[:, 0]) > 0)
+        if np.any(good):
+            weights = (charge[good, 0] / charge[good, 1]) ** 2
+            made = bench_budget(self.sensitivities[good], self.bench.shared_inputs, weights=weights)
+            plain["charge_factor_std"] = made.std
+            plain["charge_factor"] = [
+                {"input": r.input, "value": r.value, "unit": r.unit, "std": r.std, "sensitivity": r.sensitivity,
+                 "share": r.share} for r in made.rows if r.input != "own"
+            ]  # fmt: skip
+        return plain
+
+
+@dataclass(frozen=True, slots=True)
+class Number:
+    """Charge number of one droplet."""
+
+    number: int | None = None
+    probability: float = NAN
+    none: float = NAN  # probability that the charge is on no whole number
+
+
+def charge_numbers(droplets: list[Droplet], shared: SharedPart) -> list[Number]:
+    """Find the charge numbers of all droplets together with the factor that they share.
+
+    Parameters
+    ----------
+    droplets : list of Droplet
+        With posteriors.
+    shared : SharedPart
+        Of the same droplets.
+
+    Returns
+    -------
+    numbers : list of Number
+        One for each droplet; empty where there is no charge.
+    """
+    charge = np.array([d.charge for d in droplets]).reshape(-1, 2)
+    good = np.flatnonzero(np.all(np.isfinite(charge), axis=1) & (charge[:, 1] > 0))
+    found = [Number() for _ in droplets]
+    if len(good) == 0:
+        return found
+    posteriors = [droplets[i].posterior for i in good]
+    numbers: ChargeNumbers = number_probabilities(
+        charge[good, 0], charge[good, 1], shared_rel_std=np.minimum(shared.relative[good], 0.24),
+        log_likelihoods=[None if p is None else p.charge_log_density for p in posteriors],
+    )  # fmt: skip
+    for k, i in enumerate(good):
+        found[i] = Number(
+            int(numbers.number[k]), float(numbers.probability[k]), float(numbers.outlier_probability[k])
+        )
+    return found
+
+
+def charge_unit_of(droplets: list[Droplet], rows: list[DropletRow], shared: SharedPart) -> ChargeUnit:
+    """Find the charge unit of a recording, without assuming the elementary charge.
+
+    Parameters
+    ----------
+    droplets : list of Droplet
+        With posteriors.
+    rows : list of DropletRow
+        Of the same droplets; only those that are kept take part.
+    shared : SharedPart
+        Of the same droplets.
+
+    Returns
+    -------
+    unit : ChargeUnit
+        A droplet that changed its charge gives two charges with their covariance.
+    """
+    singles, pairs = [], []
+    for droplet, row in zip(droplets, rows, strict=True):
+        p = droplet.posterior
+        if row.verdict != "keep" or p is None or not np.isfinite(row.charge_c):
+            continue
+        seen = np.flatnonzero(np.isfinite(p.charge))
+        if len(seen) > 1:
+            two = _two_longest(droplet, seen)
+            pairs.append((p.charge[two], p.charge_cov[np.ix_(two, two)]))
+        else:
+            by_radius = np.sqrt(p.radius_weight @ (p.charge_at_radius[:, p.main_part] - row.charge_c) ** 2)
+            singles.append((row.charge_c, row.charge_own_std_c, by_radius / max(abs(row.charge_c), 1e-30)))
+    table = np.array(singles).reshape(-1, 3)
+    relative = shared.relative[np.isfinite(shared.relative)]
+    sample = charge_sample(
+        table[:, 0], table[:, 1], rel_stds=np.minimum(table[:, 2], 1.0),
+        shared_rel_std=float(np.median(relative)) if len(relative) else 0.0,
+        pairs=(np.array([q for q, _ in pairs]), np.array([c for _, c in pairs])) if pairs else None,
+    )  # fmt: skip
+    return pooled_charge_unit((sample,))
+
+
+def _two_longest(droplet: Droplet, seen: IntArray) -> IntArray:
+    """Two charge parts with the most steps, in order of time."""
+    part = np.empty(0, np.int64) if droplet.history is None else droplet.history.steps.part
+    length = np.bincount(part, minlength=int(seen.max()) + 1)
+    return np.sort(seen[np.argsort(length[seen])[::-1][:2]])
+
+
+def unit_json(unit: ChargeUnit) -> dict[str, Any]:
+    """Give a charge unit as plain values.
+
+    Parameters
+    ----------
+    unit : ChargeUnit
+        Of one recording.
+
+    Returns
+    -------
+    values : dict
+        None where it is not resolved.
+    """
+    values = {
+        "charge_unit_c": unit.unit, "charge_unit_std_c": unit.unit_std, "charge_unit_own_std_c": unit.unit_own_std,
+        "charge_unit_shared_std_c": unit.unit_shared_std, "over_e": unit.over_e, "over_e_std": unit.over_e_std,
+        "best_c": unit.best, "log_ratio": unit.log_ratio, "margin": unit.margin,
+    }  # fmt: skip
+    plain: dict[str, Any] = {key: value if np.isfinite(value) else None for key, value in values.items()}
+    return plain | {
+        "resolved": unit.resolved, "reason": unit.reason, "droplets_used": unit.droplets_used,
+        "rivals": [list(rival) for rival in unit.rivals],
+    }  # fmt: skip

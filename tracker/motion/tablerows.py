@@ -1,0 +1,221 @@
+"""From droplets to the rows of the tables."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import replace
+from typing import Any
+
+import numpy as np
+
+from physics.motion import segment_occupancy, segment_speeds
+from tracker.motion.aircurrent import AirCurrent
+from tracker.motion.charges import Number
+from tracker.motion.droplet import Droplet
+from tracker.motion.judge import Balance
+from tracker.motion.rows import NAN, ChangeRow, DropletRow, SegmentRow
+from tracker.motion.verdict import ordered, verdict_of
+from tracker.records import Field, Recording, Tracks
+
+
+def droplet_row(
+    droplet: Droplet, tracks: Tracks, recording: Recording, air: AirCurrent, shared_std: float, number: Number,
+    reasons: Sequence[str],
+) -> DropletRow:  # fmt: skip
+    """Give the row of one droplet; empty where a value could not be had.
+
+    Parameters
+    ----------
+    droplet : Droplet
+        With all that is known of it.
+    tracks, recording : Tracks, Recording
+        For the times at which it was seen.
+    air : AirCurrent
+        Taken off the fall speed.
+    shared_std : float
+        Part of the charge's uncertainty that all droplets share, in C.
+    number : Number
+        Charge number.
+    reasons : sequence of str
+        Codes of its reasons.
+
+    Returns
+    -------
+    row : DropletRow
+        With the verdict that follows from the reasons.
+    """
+    rows = tracks.rows(droplet.path.droplet)
+    times = recording.frame_times[tracks.sightings.frame[rows]]
+    codes = ordered(reasons)
+    row = DropletRow(
+        droplet.path.droplet,
+        verdict_of(codes),
+        codes,
+        len(droplet.used_rows),
+        float(times[0]),
+        float(times[-1]),
+    )
+    p = droplet.posterior
+    if p is None or droplet.history is None:
+        return row
+    if not np.isfinite(p.radius):
+        fit = droplet.history.fit
+        std = float(np.hypot(fit.fall_speed_std, air.down_std))
+        return replace(row, fall_speed_m_s=fit.fall_speed - air.down, fall_speed_std_m_s=std)
+    row = replace(
+        row, fall_speed_m_s=p.fall_speed, fall_speed_std_m_s=p.fall_speed_std, radius_m=p.radius,
+        radius_std_m=p.radius_std, mass_kg=p.mass, diffusion_ratio=p.diffusion_ratio,
+    )  # fmt: skip
+    charge, own = droplet.charge
+    if not np.isfinite(charge) or "one_voltage" in reasons:
+        return row
+    return replace(
+        row, charge_c=charge, charge_std_c=float(np.hypot(own, shared_std)), charge_own_std_c=own,
+        charge_shared_std_c=float(shared_std), charge_number=number.number,
+        charge_number_probability=number.probability,
+    )  # fmt: skip
+
+
+def decided_row(row: DropletRow, verdict: tuple[str, str] | None, trimmed: bool) -> DropletRow:
+    """Let a person's verdict stand before what the tool thinks; its reasons stay listed.
+
+    Parameters
+    ----------
+    row : DropletRow
+        As measured.
+    verdict : tuple of str or None
+        Verdict and reason of a person.
+    trimmed : bool
+        A person left out part of the track.
+
+    Returns
+    -------
+    row : DropletRow
+        As decided.
+    """
+    codes = set(row.reasons)
+    if trimmed:
+        codes.add("trimmed")
+    if verdict is not None:
+        codes.add("decided")
+        row = replace(row, verdict=verdict[0])
+    return replace(row, reasons=ordered(codes))
+
+
+def segment_rows(droplet: Droplet, field: Field) -> list[SegmentRow]:
+    """Give the speeds of one droplet in each segment that it was seen in.
+
+    Parameters
+    ----------
+    droplet : Droplet
+        With a history; without one there are no rows.
+    field : Field
+        With the segments.
+
+    Returns
+    -------
+    rows : list of SegmentRow
+        In order of time.
+    """
+    if droplet.history is None:
+        return []
+    path, fit = droplet.path, droplet.history.fit
+    steps = path.steps()
+    seen = [
+        (i, s) for i, s in enumerate(field.segments) if s.end > path.times[0] and s.start < path.times[-1]
+    ]
+    if not seen:
+        return []
+    occupancy = segment_occupancy(
+        [s.start for _, s in seen], [s.end for _, s in seen], path.times, path.exposure
+    )[steps.first]
+    # A segment of which one step or less was seen has no speed of its own.
+    whole = np.flatnonzero(np.sum(occupancy > 0.5 * steps.dt[:, None], axis=0) >= 2)
+    seen, occupancy = [seen[k] for k in whole], occupancy[:, whole]
+    if not seen:
+        return []
+    speeds = segment_speeds(steps, occupancy, diffusion=fit.diffusion, rho=float(np.exp(fit.log_rho)))
+    inside = field.segment_of(path.times)
+    return [
+        SegmentRow(
+            path.droplet, i, s.voltage, s.start, s.end, int(np.sum(inside == i)), float(speeds.down[k]),
+            float(speeds.down_std[k]), float(speeds.side[k]), float(speeds.side_std[k]),
+        )
+        for k, (i, s) in enumerate(seen) if np.isfinite(speeds.down[k])
+    ]  # fmt: skip
+
+
+def change_rows(droplet: Droplet, rests: list[Balance]) -> list[ChangeRow]:
+    """Give what happened to one droplet.
+
+    Parameters
+    ----------
+    droplet : Droplet
+        With history and posterior; without there are no rows.
+    rests : list of Balance
+        Where it rests with the field on.
+
+    Returns
+    -------
+    rows : list of ChangeRow
+        In order of time.
+    """
+    history, p = droplet.history, droplet.posterior
+    if history is None or p is None:
+        return []
+    rows, part = [], 0
+    for change in history.changes:
+        before = after = float(p.charge[min(part, len(p.charge) - 1)])
+        if change.kind == "charge_step":
+            after = float(p.charge[min(part + 1, len(p.charge) - 1)])
+            part += 1
+        elif change.kind == "switch":
+            before = after = NAN
+        rows.append(ChangeRow(
+            droplet.path.droplet, change.kind, change.time, change.time_std, before, after, change.statistic,
+            change.threshold,
+        ))  # fmt: skip
+    charge = droplet.charge[0]
+    rows += [
+        ChangeRow(
+            droplet.path.droplet, "balance", r.time, r.time_std, charge, charge, r.statistic, r.threshold
+        )
+        for r in rests
+    ]
+    return sorted(rows, key=lambda row: row.time_s)
+
+
+def details(droplets: list[Droplet], rests: list[list[Balance]]) -> dict[str, Any]:
+    """Give balance voltages, rates of evaporation and charges of all parts as plain values.
+
+    Parameters
+    ----------
+    droplets : list of Droplet
+        With posteriors.
+    rests : list of list of Balance
+        Of the same droplets.
+
+    Returns
+    -------
+    values : dict
+        Lists of balances and trends; charges of the parts of droplets that changed, by droplet number.
+    """
+    plain: dict[str, Any] = {"balances": [], "trends": [], "charge_parts": {}}
+    for droplet, rest in zip(droplets, rests, strict=True):
+        number = droplet.path.droplet
+        plain["balances"] += [
+            {"droplet": number, "segment": r.segment, "voltage_v": r.voltage, "voltage_std_v": r.voltage_std}
+            for r in rest
+        ]  # fmt: skip
+        history, p = droplet.history, droplet.posterior
+        if history is not None and history.trend is not None:
+            plain["trends"].append({
+                "droplet": number, "kind": history.trend.kind, "time_s": history.trend.time,
+                "log_radius_rate_1_s": history.trend.rate, "log_radius_rate_std_1_s": history.trend.rate_std,
+            })  # fmt: skip
+        if p is not None and len(p.charge) > 1:
+            plain["charge_parts"][str(number)] = {
+                "charge_c": [value if np.isfinite(value) else None for value in p.charge.tolist()],
+                "covariance_c2": np.where(np.isfinite(p.charge_cov), p.charge_cov, 0.0).tolist(),
+            }
+    return plain
