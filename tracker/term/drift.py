@@ -22,9 +22,7 @@ FloatArray = NDArray[np.float64]
 CALLED_DRIFT = (
     3.0  # standard uncertainties of the slope; 0.3 % of steady benches are called drifting by chance
 )
-_PRIOR = (
-    0.03  # relative: how far a week may lie from its bench's mean before a charge jumps to the next number
-)
+_PRIOR = 0.06  # relative: how far a week may lie from its bench; wide, so that a drift is not held back
 _FEWEST = 4  # charges in a week
 _EXPLAINED_BY = ("voltage", "plate_gap", "scale")
 
