@@ -141,35 +141,6 @@ def _write_truth(
     """Write the truth files: settings and droplets as JSON, motion as NPZ."""
     drops, motion, looks, written, repeated = made
     air = scene_air(scene)
-    speeds = fall_speed(drops.radius, scene_conditions(scene))
-    droplets = [
-        {
-            "droplet": j,
-            "radius_m": r,
-            "charge_number": int(n),
-            "fall_speed_m_s": v,
-            "peak_grey": p,
-            "spot_px": w,
-        }
-        for j, (r, n, v, p, w) in enumerate(
-            zip(
-                drops.radius.tolist(),
-                drops.number,
-                np.atleast_1d(speeds).tolist(),
-                looks.peak.tolist(),
-                looks.width.tolist(),
-                strict=True,
-            )
-        )
-    ]
-    changes = [
-        {"droplet": int(j), "kind": "charge", "time_s": float(drops.step_time[j]), "step": int(drops.step[j])}
-        for j in np.flatnonzero(drops.step)
-    ]
-    frames, columns = np.nonzero(motion.returned)
-    changes += [
-        {"droplet": int(j), "kind": "return", "frame": int(k)} for k, j in zip(frames, columns, strict=True)
-    ]
     truth = {
         "recording": out.name, "seed": seed, "version": version("fallrise"),
         "scene": asdict(scene), "schedule": [list(p) for p in scene.plan],
@@ -177,7 +148,8 @@ def _write_truth(
         "frames": {
             "written": int(written.sum()), "lost": int((~written).sum()), "repeated": int(repeated.sum()),
         },
-        "droplets": droplets, "changes": changes, "stuck_px": looks.stuck.tolist(),
+        "droplets": _true_droplets(scene, drops, looks), "changes": _true_changes(drops, motion),
+        "stuck_px": looks.stuck.tolist(),
     }  # fmt: skip
     arrays: dict[str, Any] = {
         "time_s": motion.starts, "written": written, "repeated": repeated, "voltage_v": motion.voltage,
@@ -189,6 +161,33 @@ def _write_truth(
     with _whole(npz_path) as part:
         np.savez_compressed(part, **arrays)
     return json_path, npz_path
+
+
+def _true_droplets(scene: Scene, drops: Drops, looks: Looks) -> list[dict[str, Any]]:
+    """What each droplet is, at the start of the recording."""
+    speeds = np.atleast_1d(fall_speed(drops.radius, scene_conditions(scene)))
+    columns = (
+        drops.radius.tolist(),
+        drops.number.tolist(),
+        speeds.tolist(),
+        looks.peak.tolist(),
+        looks.width.tolist(),
+    )
+    return [
+        {"droplet": j, "radius_m": r, "charge_number": n, "fall_speed_m_s": v, "peak_grey": p, "spot_px": w}
+        for j, (r, n, v, p, w) in enumerate(zip(*columns, strict=True))
+    ]
+
+
+def _true_changes(drops: Drops, motion: Motion) -> list[dict[str, Any]]:
+    """Charge steps and returns of the droplets."""
+    changes: list[dict[str, Any]] = [
+        {"droplet": int(j), "kind": "charge", "time_s": float(drops.step_time[j]), "step": int(drops.step[j])}
+        for j in np.flatnonzero(drops.step)
+    ]
+    frames, columns = np.nonzero(motion.returned)
+    back = zip(frames.tolist(), columns.tolist(), strict=True)
+    return changes + [{"droplet": j, "kind": "return", "frame": k} for k, j in back]
 
 
 def bench_text(scene: Scene, *, video: bool = True) -> str:
