@@ -96,13 +96,19 @@ def find_air_current(
     stds = np.array([fit.side_speed_std for fit in fits])
     side, side_std = robust_mean(speeds, stds)
     prior = max(float(np.hypot(side, side_std)), LEAST_PRIOR)
-    sound = [s for s, fit in zip(steps, fits, strict=True) if _is_sound(fit, prior, conditions)]
+    # a droplet's own std of ln D is large when its D came out low, and would excuse it
+    spread = float(np.sqrt(np.median([fit.dof * fit.log_diffusion_std**2 for fit in fits])))
+    sound = [s for s, fit in zip(steps, fits, strict=True) if _is_sound(fit, prior, conditions, spread)]
     down, down_std = air_current(sound, conditions, prior_std=prior)
     return AirCurrent(down, down_std, side, side_std, len(sound))
 
 
-def _is_sound(fit: FreeFit, prior: float, conditions: Conditions) -> bool:
-    """Whether Brownian motion and fall speed can belong to one sphere of the oil in air within the prior."""
+def _is_sound(fit: FreeFit, prior: float, conditions: Conditions, spread: float) -> bool:
+    """Whether Brownian motion and fall speed can belong to one sphere of the oil in air within the prior.
+
+    `spread` is the standard deviation of ln D times the root of the degrees of freedom, typical of all droplets.
+    """
+    log_diffusion_std = min(fit.log_diffusion_std, spread / np.sqrt(max(fit.dof, 1)))
     try:
         law = float(diffusion(radius_from_fall_speed(fit.fall_speed, conditions), conditions))
     except PhysicsError:
@@ -110,7 +116,7 @@ def _is_sound(fit: FreeFit, prior: float, conditions: Conditions) -> bool:
     vague = (
         0.6 * float(np.hypot(fit.fall_speed_std, 2 * prior)) / fit.fall_speed
     )  # d ln D / d ln v is 0.5 to 0.6
-    return bool(abs(np.log(fit.diffusion / law)) < SOUND * float(np.hypot(fit.log_diffusion_std, vague)))
+    return bool(abs(np.log(fit.diffusion / law)) < SOUND * float(np.hypot(log_diffusion_std, vague)))
 
 
 def robust_mean(values: FloatArray, stds: FloatArray) -> tuple[float, float]:
