@@ -85,7 +85,7 @@ def _nearest(place: FloatArray) -> float:
     return float(np.median(distance[:, 1]))
 
 
-def find_corners(flat: NDArray[np.float32], sigma: float) -> Spots | None:
+def find_corners(flat: NDArray[np.float32], sigma: float, *, least: float) -> Spots | None:
     """Find the corners of a chessboard: saddles where two dark and two bright squares meet.
 
     Parameters
@@ -94,6 +94,8 @@ def find_corners(flat: NDArray[np.float32], sigma: float) -> Spots | None:
         Flattened picture.
     sigma : float
         Width of the smoothing in px.
+    least : float
+        Saddles weaker than this fraction of the twentieth strongest are left out.
 
     Returns
     -------
@@ -114,7 +116,10 @@ def find_corners(flat: NDArray[np.float32], sigma: float) -> Spots | None:
     if len(x) < 9:
         return None
     strength = saddle[y, x]
-    keep = strength > 0.15 * np.sort(strength)[-max(9, min(len(strength), 40) // 2)]
+    if len(x) > MOST_DOTS:
+        strongest = np.argpartition(-strength, MOST_DOTS)[:MOST_DOTS]
+        x, y, strength = x[strongest], y[strongest], strength[strongest]
+    keep = strength > least * np.sort(strength)[-max(9, min(len(strength), 40) // 2)]
     place = np.stack([x[keep], y[keep]], axis=1).astype(float)
     return Spots(place, sigma, 0.0) if len(place) >= 9 else None
 

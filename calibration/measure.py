@@ -21,6 +21,7 @@ FloatArray = NDArray[np.float64]
 # What marks at opposite ends of a pattern may share for reasons that no fit sees: the light's slope under a line,
 # the bend of a line within its strip, the camera's own grid. Simulated pictures without noise show up to this.
 FLOOR_PX = 0.01
+WORST_STD = 0.5  # relative: beyond this nothing is measured
 LEAST_AGREEMENT = 1e-3  # probability below which several pictures do not agree
 CLEAR = 1e-3  # probability of chance below which a difference or drift is told
 
@@ -139,6 +140,9 @@ def scale_of(picture: Picture, lattice: Lattice, *, pitch: float, notes: tuple[s
     bend = _distortion(lattice)
     spread = bend.remaining_variation if bend is not None else 0.0
     stds = [float(np.hypot(std, spread)) for std in relative]
+    if max(stds) > WORST_STD:
+        raise PatternError(str(picture.path), f"the pattern is tilted or bent so far that its scale is uncertain by "
+                           f"{100 * max(stds):.0f} %; lay it flat and square to the camera")  # fmt: skip
     warnings = [*notes, *_warnings(lattice, gradient, relative, bend)]
     if bend is not None and not bend.corrected and bend.remaining_variation == 0:
         bend = None

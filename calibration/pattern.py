@@ -23,6 +23,7 @@ from calibration.trust import (
     LEAST_LINES,
     Refusal,
     inner_nodes,
+    is_board,
     judge_lines,
     judge_nodes,
     largest_block,
@@ -33,7 +34,13 @@ FloatArray = NDArray[np.float64]
 PATTERNS = ("lines", "grid", "dots")
 
 UNBROKEN = 0.4  # continuity below which "lines" are rows of dots or squares
-WORST_RESIDUAL = 0.06  # of the pitch: rms above which marks are no lattice
+WORST_RESIDUAL = 0.04  # of the pitch: rms above which marks are no lattice
+WORST_MARK = (
+    0.015  # of the pitch: scatter of marks along a line, above which it is not ruled; noise may do 0.3 px
+)
+WORST_LINE = (
+    0.006  # of the pitch: scatter of lines, six times what a stage micrometer may have; debris may do 0.2 px
+)
 
 
 @dataclass(frozen=True, slots=True)
@@ -84,7 +91,8 @@ def find_pattern(
         raise PatternError(name, "the picture is one flat grey; is the lamp on and the pattern in focus?")
     flat = flatten(grey)
     refusals = []
-    for search in (_search_lines, _search_dots, _search_corners):
+    # Diagonals of a board pass for lines, rows of fine dots for lines along diagonals: the order keeps them apart.
+    for search in (_search_corners, _search_lines, _search_dots, _search_diagonals):
         found = search(flat, pattern)
         if isinstance(found, Lattice):
             return found
@@ -96,22 +104,30 @@ def find_pattern(
 
 def _search_lines(flat: NDArray[np.float32], pattern: str | None) -> Lattice | Refusal | None:
     """Look for one or two families of ruled lines."""
-    if pattern == "dots":
-        return None
+    return None if pattern == "dots" else _lines_along(flat, line_directions(flat), pattern)
+
+
+def _search_diagonals(flat: NDArray[np.float32], pattern: str | None) -> Lattice | Refusal | None:
+    """Look for lines at 45 degrees to the gradients.
+
+    Cells of a grid that are as small as its blurred lines are wide look like dots, whose gradients peak along the
+    diagonals.
+    """
+    angles = [(angle + np.pi / 4) % np.pi for angle in line_directions(flat)[:2]]
+    return None if pattern == "dots" else _lines_along(flat, angles, pattern)
+
+
+def _lines_along(flat: NDArray[np.float32], angles: list[float], pattern: str | None) -> Lattice | Refusal:
+    """Look for families of lines in given directions."""
     refusal = Refusal("no lines, grid or dots stand out from the picture", 0)
     families: list[tuple[LinePoints, Marks]] = []
-    angles = line_directions(flat)
-    # Cells of a grid as small as their blurred lines are wide look like dots, whose gradients peak along diagonals.
-    for group in (angles, [(angle + np.pi / 4) % np.pi for angle in angles[:2]]):
-        for angle in group:
-            found = _family(flat, angle)
-            if isinstance(found, Refusal):
-                refusal = found if found.progress > refusal.progress else refusal
-            else:
-                families.append(found)
-        if families:
-            break
-    else:
+    for angle in angles:
+        found = _family(flat, angle)
+        if isinstance(found, Refusal):
+            refusal = found if found.progress > refusal.progress else refusal
+        else:
+            families.append(found)
+    if not families:
         return refusal
     first = max(families, key=lambda f: len(f[1].x))
     second = next((f for f in families if _crosses(first[0], f[0])), None)
@@ -238,11 +254,14 @@ def _search_corners(flat: NDArray[np.float32], pattern: str | None) -> Lattice |
     if pattern in ("lines", "dots"):
         return None
     best = Refusal("no grid stands out from the picture", 0)
-    for sigma in (2.0, 4.0):
-        spots = find_corners(flat, sigma)
+    # Around a board a room may show corners too: at first only the strongest are taken.
+    for sigma, least in ((2.0, 0.4), (2.0, 0.15), (4.0, 0.4), (4.0, 0.15)):
+        spots = find_corners(flat, sigma, least=least)
         if spots is None:
             continue
         found = _number_nodes(flat, spots, kernel=sigma)
+        if isinstance(found, Marks) and not is_board(flat, found):
+            found = Refusal("no grid stands out from the picture", 0)
         result = _accept("grid", "corners", found, flat) if isinstance(found, Marks) else found
         if isinstance(result, Lattice):
             return result
@@ -326,9 +345,12 @@ def _accept(pattern: str, features: str, marks: Marks, flat: NDArray[np.float32]
     if max(counts) < LEAST_LINES or min(counts) < LEAST_LINES - 1:
         return Refusal(f"only {max(counts)} lines are in the picture; at least {LEAST_LINES} are needed", 6)
     pitch = 1 / np.hypot(*local_gradient(fit, np.array([fit.centre[0]]), np.array([fit.centre[1]]))[0].T)
+    scatter = max(
+        fit.mark_std / max(0.3, WORST_MARK * pitch.min()), fit.line_std / max(0.2, WORST_LINE * pitch.min())
+    )
+    if scatter > 1 and features != "corners":
+        return Refusal("lines or dots stand too unevenly for a reference pattern", 6)
     rms = float(np.sqrt(np.mean(fit.residual**2)))
     if rms > WORST_RESIDUAL * pitch.min():
-        return Refusal(
-            f"lines or dots scatter by {100 * rms / pitch.min():.0f} % of the pitch about the best lattice", 6
-        )
+        return Refusal("lines or dots scatter too far about the best lattice for a reference pattern", 6)
     return Lattice(pattern, features, marks, fit, tuple(counts), width, height)

@@ -7,7 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from calibration.lattice import SAME
+from calibration.lattice import SAME, Marks
 
 FloatArray = NDArray[np.float64]
 
@@ -252,3 +252,46 @@ def _strays(coordinate: FloatArray, found: int) -> Refusal | None:
     if midway.sum() > 0.34 * found:
         return Refusal("the pitch has a rival at half its value: dots stand midway between the dots", 5)
     return None
+
+
+def is_board(flat: NDArray[np.float32], marks: Marks) -> bool:
+    """Tell a chessboard, whose squares are of one grey to their edges, from dots or cells that also have saddles.
+
+    Parameters
+    ----------
+    flat : ndarray of float32
+        Flattened picture.
+    marks : Marks
+        Of the corners, both coordinates.
+
+    Returns
+    -------
+    board : bool
+        True if squares differ from their neighbours near the middles of their edges (at 0.15 of their width) by at
+        least 0.6 of what their middles do.
+    """
+    first = marks.axis == 0
+    count = int(first.sum())
+    index = np.stack([marks.index[:count], marks.index[count:]], axis=1)
+    index = index - index.min(axis=0)
+    place = np.full((*(index.max(axis=0) + 2), 2), np.nan)
+    place[index[:, 0], index[:, 1]] = np.stack([marks.x[:count], marks.y[:count]], axis=1)
+    corner = place[:-1, :-1], place[1:, :-1], place[:-1, 1:], place[1:, 1:]
+    whole = np.isfinite(np.sum(corner, axis=0)).all(axis=-1)
+    parity = np.add.outer(np.arange(place.shape[0] - 1), np.arange(place.shape[1] - 1))[whole] % 2 * 2 - 1
+    if len(parity) < 6 or abs(parity.sum()) == len(parity):
+        return False
+    differences = []
+    for u, v in ((0.5, 0.5), (0.15, 0.5), (0.85, 0.5), (0.5, 0.15), (0.5, 0.85)):
+        at = (
+            (1 - u) * (1 - v) * corner[0]
+            + u * (1 - v) * corner[1]
+            + (1 - u) * v * corner[2]
+            + u * v * corner[3]
+        )
+        at = np.rint(at[whole]).astype(int)
+        grey = flat[at[:, 1].clip(0, flat.shape[0] - 1), at[:, 0].clip(0, flat.shape[1] - 1)].astype(
+            np.float64
+        )
+        differences.append(float(np.median(grey[parity > 0]) - np.median(grey[parity < 0])))
+    return all(edge * np.sign(differences[0]) > 0.6 * abs(differences[0]) for edge in differences[1:])
