@@ -56,6 +56,7 @@ def made_result(
     steps: int = 0,
     shared: float = 0.012,
     rejected: int = 0,
+    air_std: float = 0.0,
 ) -> Result:
     """Write a result folder; measured charge = factor x number x e + noise, `own` in units of e."""
     bench = load_bench(bench_file)
@@ -66,6 +67,7 @@ def made_result(
     table["droplet"] = np.arange(droplets)
     table["verdict"] = ["reject"] * rejected + ["keep"] * (droplets - rejected)
     table["reasons"] = ""
+    table["fall_speed_m_s"] = 4e-5
     table["radius_m"], table["radius_std_m"] = 6e-7, 2e-9
     table["charge_c"], table["charge_own_std_c"] = charge, std * ELEMENTARY_CHARGE
     table["charge_shared_std_c"] = shared * np.abs(charge)
@@ -83,6 +85,7 @@ def made_result(
     recording = {
         "file": folder.stem, "sha256": hashlib.sha256(rng.bytes(16)).hexdigest(), "bench": bench_json(bench, folder),
         "scale": scale_to_json(bench.scale), "field": {"segments": []},
+        "air_current": {"down_std_m_s": air_std},
     }  # fmt: skip
     empty = [pd.DataFrame({column.name: [] for column in columns}) for columns in (TRACKS, SEGMENTS)]
     changes = changes.astype({c.name: "string" if c.kind == "text" else "float64" for c in CHANGES})

@@ -262,6 +262,7 @@ def _bench(label: str, results: Sequence[Result]) -> _Bench:
     charges = bench_charges(results)
     budget = factor_budget(results, charges)
     shared = charges.shared_rel_std if np.isfinite(charges.shared_rel_std) else budget.shared_std
+    shared = float(np.hypot(shared, charges.air_rel_std))
     sample = charge_sample(
         charges.charge, charges.own_std, rel_stds=charges.rel_std, shared_rel_std=shared,
         steps=(charges.step, charges.step_std), pairs=(charges.pair, charges.pair_cov),

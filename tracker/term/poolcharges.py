@@ -38,6 +38,7 @@ class BenchCharges:
     pair: FloatArray  # (K, 2) C
     pair_cov: FloatArray  # (K, 2, 2) C^2
     shared_rel_std: float  # of the common factor; nan if the results do not say
+    air_rel_std: float  # of the mean of all recordings by their air currents, each common to one recording
 
 
 def bench_charges(results: Sequence[Result]) -> BenchCharges:
@@ -55,13 +56,14 @@ def bench_charges(results: Sequence[Result]) -> BenchCharges:
     """
     import pandas as pd
 
-    tables, steps, pairs = [], [], []
+    tables, steps, pairs, air = [], [], [], []
     for result in results:
         kept = kept_droplets(result.droplets)
         paired = charge_pairs(result.recording, kept)
         alone = kept[~kept["droplet"].isin(list(paired))]
         pairs += list(paired.values())
         steps.append(charge_steps(result.changes, alone))
+        air.append(_air_part(result.recording, kept))
         tables.append(alone.assign(sensitivity=_stored_sensitivities(result.recording, alone)))
     table = pd.concat(tables, ignore_index=True)
     charge, own = (table[name].to_numpy(float) for name in ("charge_c", "charge_own_std_c"))
@@ -74,8 +76,27 @@ def bench_charges(results: Sequence[Result]) -> BenchCharges:
         charge, own, table["rel_std"].to_numpy(float), table["radius_m"].to_numpy(float),
         np.array([none if row is None else row for row in table["sensitivity"]]).reshape(-1, len(SHARED_INPUTS)),
         step, step_std, np.array([q for q, _ in pairs]).reshape(-1, 2),
-        np.array([c for _, c in pairs]).reshape(-1, 2, 2), float(shared),
+        np.array([c for _, c in pairs]).reshape(-1, 2, 2), float(shared), _mean_std(air),
     )  # fmt: skip
+
+
+def _air_part(recording: Mapping[str, Any], kept: pd.DataFrame) -> tuple[float, float]:
+    """Relative effect of the air current's uncertainty on a recording's charges, and the recording's weight.
+
+    An unknown current adds to all fall speeds; the charge goes with the fall speed to the power 0.6.
+    """
+    weight = ((kept["charge_c"] / kept["charge_own_std_c"]) ** 2).to_numpy(float)
+    std = float((recording.get("air_current") or {}).get("down_std_m_s") or 0.0)
+    relative = 0.6 * std / kept["fall_speed_m_s"].to_numpy(float)
+    good = np.isfinite(relative) & (relative > 0)
+    part = float(np.average(relative[good], weights=weight[good])) if good.any() else 0.0
+    return part, float(weight.sum())
+
+
+def _mean_std(parts: Sequence[tuple[float, float]]) -> float:
+    """Standard deviation of a weighted mean of independent parts (std, weight)."""
+    std, weight = np.array(parts).T
+    return float(np.sqrt(np.sum((weight * std) ** 2)) / weight.sum()) if weight.sum() > 0 else 0.0
 
 
 def _stored_sensitivities(recording: Mapping[str, Any], kept: pd.DataFrame) -> list[list[float] | None]:

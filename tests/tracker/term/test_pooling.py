@@ -137,6 +137,21 @@ def test_recording_measured_twice_counts_once(tmp_path):
     assert "same recording" in pool.skipped[0][1]
 
 
+def test_air_current_of_a_recording_is_shared_by_its_droplets(tmp_path):
+    """An air current known to 2 % of the fall speed moves the charges of a recording by 1.2 %, of four by half."""
+    made = []
+    for count in (1, 4):
+        bench = made_bench(tmp_path / str(count) / "bench A")
+        rng = np.random.default_rng(9)
+        for i in range(count):
+            made_result(bench.parent / f"clip{i}.fallrise", bench, rng, droplets=60, air_std=0.02 * 4e-5)
+        made.append(pool_results([tmp_path / str(count)]).unit)
+    relative = [unit.unit_shared_std / unit.unit for unit in made]
+    # The four recordings' weights differ by chance, a few per cent of the part.
+    assert relative[0] == pytest.approx(np.hypot(0.012, 0.012), rel=1e-3)
+    assert relative[1] == pytest.approx(np.hypot(0.012, 0.006), rel=0.02)
+
+
 def test_damaged_result_is_left_out_and_told(tmp_path):
     """A folder whose table was cut does not stop the others."""
     make_term(tmp_path, {"bench A": 1.0}, results=2, droplets=30)
