@@ -20,8 +20,9 @@ from tracker.motion.rows import ChangeRow, DropletRow, SegmentRow
 from tracker.motion.tablerows import change_rows, decided_row, details, droplet_row, segment_rows
 from tracker.motion.velocity import Orientation, fit_orientation, paths
 from tracker.motion.verdict import REASONS
-from tracker.records import Decision, Field, IntArray, Recording, Settings, Tracks, readonly
+from tracker.records import Decision, Field, Flag, IntArray, Recording, Settings, Tracks, readonly
 
+NEAR_FRAMES = 3  # about a jump, in which a neighbour or a line excuses it
 LAMP_RIM = 4.0  # px about the lamp's rectangle that its light blurs into
 
 
@@ -161,9 +162,13 @@ def _air(droplets: list[Droplet], conditions: Conditions) -> AirCurrent:
 
 def _facts(droplet: Droplet, tracks: Tracks, conditions: Conditions, number: Number) -> Facts:
     """Gather what the verdict rests on."""
-    flags = np.asarray(tracks.sightings.flags[tracks.rows(droplet.path.droplet)])
+    rows = tracks.rows(droplet.path.droplet)
+    flags = np.asarray(tracks.sightings.flags[rows])
+    # Beside a neighbour or a line of the reticle a place may be off for some frames: no jump of the droplet.
+    uneasy = tracks.sightings.frame[rows][(flags & int(Flag.CROWDED | Flag.MERGED | Flag.LINE)) != 0]
+    hops = sum(bool(np.all(np.abs(uneasy - frame) > NEAR_FRAMES)) for frame in droplet.hops)
     return Facts(
-        path=droplet.path, flags=flags, outliers=droplet.outliers, hops=len(droplet.hops), history=droplet.history,
+        path=droplet.path, flags=flags, outliers=droplet.outliers, hops=hops, history=droplet.history,
         posterior=droplet.posterior, conditions=conditions, number=number.number,
         number_probability=number.probability, on_no_number=number.none,
     )  # fmt: skip

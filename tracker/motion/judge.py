@@ -19,7 +19,8 @@ from tracker.records import Flag, IntArray, Settings
 Z_LIMIT = 3.29  # two-sided 1 in 1000
 LARGEST_RADIUS = 5e-6  # m, of a droplet that must not be taken for dirt
 STUCK_SHARE = 0.1  # of that droplet's diffusion
-MOST_APART = 4  # frames between sightings, in the median
+LONG_GAP = 25  # frames: a droplet may leave the picture and come back
+LEAST_FILLED, LEAST_FILLED_NEAR = 0.2, 0.9  # shares of frames with a sighting: of all, and without long gaps
 SURE = 0.95  # probability from which a charge number is called certain
 SHARES = (
     ("merged", Flag.MERGED, 0.2), ("out_of_focus", Flag.SOFT, 0.5), ("saturated", Flag.SATURATED, 0.5),
@@ -81,7 +82,7 @@ def reasons_of(facts: Facts, air: AirCurrent, rests: Sequence[Balance], settings
     history, posterior = facts.history, facts.posterior
     if len(facts.path) < settings.min_frames or history is None or posterior is None:
         return [*codes, "too_short"]
-    if np.median(np.diff(facts.path.frames)) > MOST_APART:
+    if _sparse(facts.path):
         codes.append("sparse")
     if facts.hops:
         codes.append("hop")
@@ -97,6 +98,14 @@ def reasons_of(facts: Facts, air: AirCurrent, rests: Sequence[Balance], settings
 
 def _share(flags: IntArray, flag: Flag) -> float:
     return float(np.mean((flags & int(flag)) != 0)) if len(flags) else 0.0
+
+
+def _sparse(path: Path) -> bool:
+    """Whether a track is held together by chance detections."""
+    gaps = np.diff(path.frames)
+    near = gaps[gaps <= LONG_GAP]
+    filled = len(gaps) < LEAST_FILLED * np.sum(gaps)
+    return bool(filled and len(near) < LEAST_FILLED_NEAR * max(np.sum(near), 1))
 
 
 def is_stuck(path: Path, conditions: Conditions) -> bool:
