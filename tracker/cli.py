@@ -22,6 +22,11 @@ app = typer.Typer(
     no_args_is_help=True, add_completion=False, pretty_exceptions_enable=False, rich_markup_mode=None,
 )  # fmt: skip
 
+_STOPPED = 130  # exit status after Ctrl-C, as shells have it
+
+# Of click, or of the copy of it that newer versions of typer carry within.
+_WrongUsage: Any = next(c for c in typer.BadParameter.__mro__ if c.__name__ == "ClickException")
+
 BenchOption = Annotated[
     Path | None, typer.Option("--bench", help="Bench file; default: beside or above the recording.")
 ]
@@ -413,22 +418,22 @@ def main(arguments: list[str] | None = None) -> None:
 
 
 def _run(arguments: list[str], *, debug: bool) -> int:
-    import click
-
     try:
         status = app(args=arguments, prog_name="fallrise", standalone_mode=False)
+        if status == _STOPPED:  # some versions of typer turn Ctrl-C into this status themselves
+            raise KeyboardInterrupt
         return status if isinstance(status, int) else 0
     except FallriseError as error:
         if debug:
             traceback.print_exc()
         _complain(error)
         return error.exit_status
-    except click.ClickException as error:
+    except _WrongUsage as error:
         error.show()
         return 2
-    except (KeyboardInterrupt, click.Abort):
+    except (KeyboardInterrupt, typer.Abort):
         typer.echo("fallrise: stopped; finished work is kept", err=True)
-        return 130
+        return _STOPPED
     except Exception as error:
         if debug:
             traceback.print_exc()

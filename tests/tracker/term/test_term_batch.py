@@ -26,6 +26,7 @@ from tracker.term.batch import Options, run_batch
 from tracker.term.ledger import LEDGER, read_ledger
 from tracker.term.lock import locked
 from tracker.term.resume import made_entry, settings_key, task_stamps
+from tracker.term.terminal import batch_bar
 from tracker.term.walk import find_tasks
 from tracker.term.work import Outcome
 
@@ -292,6 +293,17 @@ def test_folder_without_recordings_is_one_line(tmp_path, capsys):
     assert "no recordings" in lines[0]
 
 
+@pytest.mark.parametrize(
+    "arguments", [[], ["--nonsense"], ["a", "b"], ["a", "--workers", "0"], ["a", "--tables", "x"]]
+)
+def test_wrong_usage_ends_with_status_2(arguments, tmp_path, monkeypatch):
+    """A missing, unknown or impossible option is wrong usage, not a failure."""
+    monkeypatch.chdir(tmp_path)
+    (tmp_path / "a").mkdir()
+    (tmp_path / "a/clip.avi").write_bytes(b"x")
+    assert cli_status(["batch", *arguments]) == 2
+
+
 def test_readme_describes_every_column(original):
     """The README beside the tables names each column of each table with its unit."""
     text = (original / "out/README.md").read_text()
@@ -319,6 +331,23 @@ def test_thousand_recordings_with_nothing_to_do_take_seconds(tmp_path, inline):
     taken = time.perf_counter() - start
     assert (made.measured, made.changed, len(made.entries)) == (0, False, 1000)
     assert taken < 5.0  # the bar of the job, on any machine
+
+
+def test_bar_shows_on_a_terminal_only(monkeypatch, capsys):
+    """On a terminal one bar tells done, all and failed; into a pipe nothing is written."""
+    with batch_bar() as progress:
+        assert progress is None
+    assert capsys.readouterr().err == ""
+    ours, theirs = os.openpty()
+    with os.fdopen(theirs, "w") as screen:
+        monkeypatch.setattr(sys, "stderr", screen)
+        with batch_bar() as progress:
+            progress(3, 8, 2)
+        monkeypatch.undo()
+        told = os.read(ours, 10_000).decode()
+    os.close(ours)
+    assert "3/8" in told
+    assert "2 failed" in told
 
 
 def test_progress_counts_recordings_and_failures(original, tmp_path, inline):

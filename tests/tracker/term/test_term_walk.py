@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import os
-from datetime import date
+from datetime import date, datetime
 
 import cv2
 import numpy as np
@@ -96,6 +96,24 @@ def test_inputs_are_bench_own_keys_scale_and_log(tmp_path):
     (folder / "named.json").write_text("{}")
     assert folder / "named.json" in input_files(task)
     assert folder / "scale.json" not in input_files(task)
+
+
+def test_scale_valid_at_the_recordings_date_is_used(tmp_path):
+    """Of several scales the newest that is not newer than the recording counts; before all of them, the oldest."""
+    (tmp_path / "bench.toml").write_text('[cell]\nplate_gap = "6 mm"\n')
+    for name, text in (
+        ("scale-1.json", '{"date": "2026-09-01"}'),
+        ("scale-2.json", '{"date": "2026-10-15"}'),
+    ):
+        (tmp_path / name).write_text(text)
+    used = {}
+    for name, day in (("a.avi", "2026-08-01"), ("b.avi", "2026-10-14"), ("c.avi", "2026-10-16")):
+        (tmp_path / name).write_bytes(b"x")
+        moment = datetime.fromisoformat(day).timestamp()
+        os.utime(tmp_path / name, (moment, moment))
+    for task in find_tasks(tmp_path, tmp_path / "out"):
+        used[task.name] = [p.name for p in input_files(task) if p.name.startswith("scale")]
+    assert used == {"a.avi": ["scale-1.json"], "b.avi": ["scale-1.json"], "c.avi": ["scale-2.json"]}
 
 
 def test_hash_of_a_recording_is_that_of_its_result(tmp_path):
