@@ -80,6 +80,10 @@ def run_batch(
     FallriseError
         If there is no such folder, another batch holds the output folder, the disk is full, or the cluster
         cannot be used. Finished work is kept.
+
+    Notes
+    -----
+    Worker processes import the script that calls this: guard the call by ``if __name__ == "__main__":``.
     """
     folder = Path(folder)
     out = Path(out) if out is not None else folder / DEFAULT_OUT

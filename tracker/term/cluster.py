@@ -11,6 +11,7 @@ from physics.errors import FallriseError
 from tracker.errors import UsageError
 from tracker.term.work import WorkerVersionError, current_version
 
+_SENT_AHEAD = 64
 _PATIENCE = 20.0  # s to find the scheduler and its first worker
 
 
@@ -87,7 +88,6 @@ class ClusterCrew:
 
     def _check_workers(self) -> None:
         """Refuse workers with another version or another view of the files."""
-        threads: dict[str, int] = self._client.nthreads()
         for worker, (found, sees) in self._client.run(_look, str(self.shared)).items():
             if found != current_version():
                 raise WorkerVersionError(worker, found, current_version())
@@ -95,7 +95,8 @@ class ClusterCrew:
                 raise ClusterError(
                     worker, f"does not see {self.shared.parent}; share the folder under one name"
                 )
-        self.slots = sum(threads.values())
+        # The scheduler hands out the work: more is sent than runs now, so that workers that join find some.
+        self.slots = max(_SENT_AHEAD, sum(self._client.nthreads().values()))
 
     def close(self) -> None:
         """Leave the cluster; its workers go on for others."""
