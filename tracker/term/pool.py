@@ -15,7 +15,7 @@ from physics.budget import Budget, explaining_errors
 from physics.droplet import ELEMENTARY_CHARGE
 from physics.quanta import SEARCH, ChargeSample, ChargeUnit, charge_sample, pooled_charge_unit, unit_ratio
 from tracker.errors import ResultError, UsageError
-from tracker.keeping.store import PROVENANCE, SUFFIX, Result, read_result
+from tracker.keeping.store import PROVENANCE, Result, read_result
 from tracker.term.poolcharges import bench_charges, factor_budget
 
 FloatArray = NDArray[np.float64]
@@ -100,7 +100,8 @@ def find_results(paths: Iterable[Path | str]) -> list[Path]:
         if (path / PROVENANCE).is_file():
             found[path] = None
             continue
-        below = sorted(p.parent for p in path.rglob(PROVENANCE) if p.parent.name.endswith(SUFFIX))
+        inside = (p.parent for p in path.rglob(PROVENANCE) if (p.parent / "droplets.csv").is_file())
+        below = sorted(folder for folder in inside if not folder.name.startswith("."))  # no drafts
         if not below:
             raise UsageError(f"{path}: neither a result folder nor a folder that holds one; measure first")
         found.update(dict.fromkeys(below))

@@ -232,6 +232,19 @@ def test_folder_without_results_is_a_usage_error(tmp_path, capsys):
     assert len(capsys.readouterr().err.splitlines()) == 1
 
 
+def test_results_are_found_below_a_folder_and_drafts_are_not(tmp_path):
+    """Any folder with provenance and droplets is a result, whatever its name; a draft that a crash left is none."""
+    bench = made_bench(tmp_path)
+    rng = np.random.default_rng(10)
+    for name in ("a/clip.fallrise", "b/named by hand", "b/.clip.fallrise.x1.part"):
+        made_result(tmp_path / name, bench, rng)
+    found = find_results([tmp_path, tmp_path / "a" / "clip.fallrise"])
+    assert [folder.relative_to(tmp_path).as_posix() for folder in found] == [
+        "a/clip.fallrise",
+        "b/named by hand",
+    ]
+
+
 def test_picture_names_its_axes_and_counts_what_it_leaves_out(tmp_path):
     """Charges above 30 units are left out of the picture and told; bench names are no mathematics."""
     from matplotlib.figure import Figure
