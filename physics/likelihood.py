@@ -27,8 +27,11 @@ RHO_POINTS = 9  # over +-3.5 standard deviations the trapezoid rule is exact to 
 LOG_DROP = 6.125  # nats: 3.5 standard deviations of a normal likelihood
 COARSEST = 1.3  # of ln rho: the flank of the likelihood grows as fast as rho, so wider steps cut it short
 NOISE_RANGE = (1e-3, 1e4)  # of rho over the median step; below 1e-3 the noise changes nothing
+FLANK_DROP = (
+    25.0  # nats: where few points are inside, the next ones must be no farther for the ends to be found
+)
 WIDE_POINTS = 17  # of a look at the whole range of ln rho
-FIRST_REACH = 5.0  # of the first look, in ln rho to either side
+FIRST_REACH = 3.0  # of the first look, in ln rho to either side
 LITTLE_NOISE = 0.03  # rho over the median step that counts as hardly any
 FIELD_OFF = 1e-3  # V; below, the field counts as off: sums of volt seconds leave 1e-10 V of round-off
 LEAST_DIFFUSION = 1e-20  # m^2/s; a droplet of 20 m would diffuse like this
@@ -142,7 +145,7 @@ def likelihood_grid(steps: Increments, *, points: int = RHO_POINTS) -> Sums:
         )
         if cut:
             grid = np.linspace(domain[0], domain[1], WIDE_POINTS)
-        elif len(inside) >= 3 and grid[1] - grid[0] < COARSEST:
+        elif grid[1] - grid[0] < COARSEST and (len(inside) >= 3 or max(drop[first], drop[last]) < FLANK_DROP):
             break
         else:
             grid = np.linspace(grid[first], grid[last], points)
@@ -165,8 +168,8 @@ def _first_look(steps: Increments, domain: FloatArray) -> FloatArray:
     diffusion, noise = np.linalg.solve(shares, moments)
     floor = LITTLE_NOISE * np.median(steps.dt)
     guess = np.log(np.maximum(noise / diffusion, floor)) if diffusion > 0 else domain[1]
-    centre = np.clip(guess, domain[0] + FIRST_REACH, domain[1] - FIRST_REACH)
-    return np.asarray(centre + FIRST_REACH * np.linspace(-1, 1, 9))
+    low = guess - FIRST_REACH if guess - FIRST_REACH > domain[0] + 1.0 else domain[0]
+    return np.linspace(low, min(guess + FIRST_REACH, domain[1]), 9)
 
 
 def _limits(sums: Sums, first: int, last: int) -> tuple[float, float]:

@@ -33,7 +33,7 @@ NO_CHARGE_REASONS: Mapping[str, str] = {
     "out_of_range": "falls or diffuses like no droplet from 0.03 to 15 um",
 }
 RADIUS_RANGE = (3e-8, 1.5e-5)  # m; below, a droplet diffuses out of sight, above, Stokes' law has ended
-RADIUS_POINTS = 120
+RADIUS_POINTS = 80  # an eighth of a standard deviation apart; the sum is exact to round-off at one
 SPEED_SPAN, DIFFUSION_SPAN = 5.0, 6.0  # standard deviations of either that the radius grid holds
 MOST_NUMBERS = 2000  # charge numbers beyond are never resolved
 RATIO_LIMIT = 0.3  # relative uncertainty of the fall speed up to which diffusion is compared with it
