@@ -46,6 +46,8 @@ class History:
     fit: FreeFit  # of `steps`
     changes: tuple[Change, ...]  # in order of time
     trend: Change | None  # evaporation or growth; radius and charge hold at its time
+    size_rate: float = float("nan")  # d ln r / dt in 1/s, significant or not; nan where it cannot be had
+    size_rate_std: float = float("nan")
 
 
 def find_changes(
@@ -78,13 +80,15 @@ def find_changes(
     kept = np.arange(len(steps))
     changes: list[Change] = []
     trend: Change | None = None
+    last: Change | None = None
     column = np.empty((len(steps), 0))
     part = np.zeros(len(steps), np.int64)
     fit = free_fit(steps) if fit is None else fit
     for _ in range(MOST_CHANGES):
         if not np.all(np.isfinite(fit.drive_per_volt)) or len(steps) < 2 * MIN_INCREMENTS:
             break
-        found = _best_change(_Model(steps, part, column, fit), times, conditions, trend is None)
+        last = _trend(_Model(steps, part, column, fit), times, conditions) if trend is None else None
+        found = _best_change(_Model(steps, part, column, fit), times, last)
         if found is None:
             break
         changes.append(found)
@@ -98,7 +102,11 @@ def find_changes(
             trend = found
             column = _trend_column(_Model(steps, part, column, fit), times, conditions)
         steps, fit, trend = _refit(steps, part, column, trend)
-    return History(_take_out(steps, column, trend), kept, fit, tuple(sorted(changes, key=_by_time)), trend)
+    rate = trend or last
+    size = (float("nan"), float("nan")) if rate is None else (rate.rate, rate.rate_std)
+    return History(
+        _take_out(steps, column, trend), kept, fit, tuple(sorted(changes, key=_by_time)), trend, *size
+    )
 
 
 def _by_time(change: Change) -> float:
@@ -129,10 +137,10 @@ class _Model:
         return both.columns[:, : base.shape[1]], both.columns[:, base.shape[1] :], both.data
 
 
-def _best_change(model: _Model, times: FloatArray, conditions: Conditions, trend_open: bool) -> Change | None:
+def _best_change(model: _Model, times: FloatArray, trend: Change | None) -> Change | None:
     """Change whose statistic exceeds its threshold by most."""
     step, switch = _step(model, times), _switch(model, times)
-    candidates = [step, switch, _trend(model, times, conditions) if trend_open else None]
+    candidates = [step, switch, trend]
     found = [c for c in candidates if c is not None and c.statistic > c.threshold]
     best = max(found, key=lambda c: c.statistic - _RANK[c.kind], default=None)
     if best is switch and step in found and step is not None and switch is not None:

@@ -15,9 +15,17 @@ from tracker.motion.charges import Number, SharedPart, charge_numbers, charge_un
 from tracker.motion.decided import Decided, apply_decisions
 from tracker.motion.droplet import Droplet, cleaned, with_history, with_posteriors
 from tracker.motion.field import exposure_of
+from tracker.motion.fieldclock import clock_warnings
 from tracker.motion.judge import Facts, balances, is_stuck, reasons_of
 from tracker.motion.rows import ChangeRow, DropletRow, SegmentRow
-from tracker.motion.tablerows import change_rows, decided_row, details, droplet_row, segment_rows
+from tracker.motion.tablerows import (
+    change_rows,
+    decided_row,
+    details,
+    droplet_row,
+    segment_rows,
+    shrinking_warnings,
+)
 from tracker.motion.velocity import Orientation, fit_orientation, paths
 from tracker.motion.verdict import REASONS
 from tracker.records import Decision, Field, Flag, IntArray, Recording, Settings, Tracks, readonly
@@ -109,8 +117,9 @@ def evaluate_droplets(
         tuple(row for part in segments for row in part),
         tuple(row for d, rest in zip(droplets, rests, strict=True) for row in change_rows(d, rest)),
         _orientation_json(orientation), air.plain(), exposure, unit_json(charge_unit_of(droplets, rows, shared)),
-        shared.budget(droplets, rows), details(droplets, rests),
-        (*orientation.warnings, *decided.warnings, *_exposure_warning(bench, exposure)),
+        shared.budget(droplets, rows), details(droplets, rests) | _decisions_json(decided),
+        (*orientation.warnings, *decided.warnings, *_exposure_warning(bench, exposure), *shrinking_warnings(droplets),
+         *clock_warnings(field, decided.tracks, recording, bench)),
     )  # fmt: skip
 
 
@@ -128,6 +137,14 @@ def _tracked(
         cuts=cuts, left_out=decided.trimmed | _in_lamp(decided.tracks, bench),
     )  # fmt: skip
     return orientation, [cleaned(path, settings) for path in found]
+
+
+def _decisions_json(decided: Decided) -> dict[str, Any]:
+    """Give what a person decided on the droplets of the present numbering."""
+    return {"decisions": {
+        str(droplet): {"verdict": verdict, "reason": reason}
+        for droplet, (verdict, reason) in sorted(decided.verdicts.items())
+    }}  # fmt: skip
 
 
 def _orientation_json(orientation: Orientation) -> dict[str, Any]:

@@ -21,6 +21,7 @@ RATE_GAIN = 10.83  # chi-square by which a rate must improve the fit, 1 in 1000
 LEAST_MARGIN = 30.0  # chi-square by which the best offset must beat any other
 LEAST_RELATIVE_MARGIN = 0.005  # of the gain; what charge steps and mistaken links may cost the right offset
 LEAST_GAIN = 40.0  # chi-square that the log must explain: one in 1e7 by chance over 1000 offsets
+CLOCK_GAIN = 60.0  # chi-square by which another clock must be better before it is told
 MOST_DROPLETS = 30  # longest tracks that are used; more narrow the offset below what matters
 STEPS_AT_ONCE = 4_000_000  # numbers held at once in the first search
 
@@ -81,6 +82,50 @@ def fit_clock_offset(tracks: Tracks, log: Log, recording: Recording, bench: Benc
         usable = [path for path in oriented if path.droplet in chosen]
     fit = _Fit(usable, log, recording, exposure)
     return fit.field([float(offsets[i]) for i in peaks])
+
+
+def clock_warnings(field: Field, tracks: Tracks, recording: Recording, bench: Bench) -> tuple[str, ...]:
+    """Say if the droplets see the field change at other times than a list or a stated clock says.
+
+    Parameters
+    ----------
+    field : Field
+        From a list or a log.
+    tracks : Tracks
+        Linked.
+    recording : Recording
+        Frame times.
+    bench : Bench
+        Scale, exposure and gravity's direction if stated.
+
+    Returns
+    -------
+    warnings : tuple of str
+        One line, if the field moved by two frames or more (one second at most) explains the droplets' motion
+        better by a chi-square of 60; empty otherwise.
+    """
+    if field.source not in ("list", "log") or len(field.segments) < 2:
+        return ()
+    exposure, step = exposure_of(bench, recording), recording.frame_interval
+    span = recording_span(recording)
+    idle = field_of_steps("log", [span[0]], [0.0], span=span)
+    picture = Orientation(bench.down_deg or 0.0, 0.0, "picture")
+    found = paths(tracks, recording, field=idle, scale=bench.scale, exposure=exposure, orientation=picture)
+    usable = sorted((p for p in found if len(p) > 2 * MIN_INCREMENTS), key=len, reverse=True)[:MOST_DROPLETS]
+    usable = [path for path in usable if len(path.steps()) >= 2 * MIN_INCREMENTS]
+    if not usable:
+        return ()
+    log = Log(field.knot_times, field.knot_volts, True, recording.path)
+    offsets: FloatArray = step * np.arange(-int(1 / step), int(1 / step) + 1).astype(np.float64)
+    gain = _coarse_gain(usable, log, offsets)
+    best, here = int(np.argmax(gain)), len(offsets) // 2
+    if abs(offsets[best]) < 1.5 * step or gain[best] - gain[here] < CLOCK_GAIN:
+        return ()
+    late = "later" if offsets[best] > 0 else "earlier"
+    return (
+        f"the droplets see the field change about {abs(offsets[best]):.2f} s {late} than the {field.source} says;"
+        " check its times",
+    )
 
 
 def _search_range(log: Log, span: tuple[float, float]) -> FloatArray:

@@ -221,6 +221,84 @@ def test_what_the_detector_saw_becomes_a_reason(tmp_path, flag, code, share):
     assert all(code not in codes[number] for number in (1, 2))
 
 
+def test_chance_detections_are_no_droplet(tmp_path):
+    """Spots here and there over the whole recording are rejected; a droplet that leaves and comes back is not."""
+    rng = np.random.default_rng(92)
+    lives = [Life(0.7e-6, 4), Life(0.8e-6, -3), Life(0.6e-6, 2)]
+    tracks, recording = made_tracks(rng, lives, CAMERA)
+    frames = tracks.sightings.frame
+    chance = (tracks.droplet == 0) & (rng.random(len(tracks)) < 0.05)
+    visits = (tracks.droplet == 1) & ((frames < 40) | (frames > 640))
+    stay = np.flatnonzero(chance | visits | (tracks.droplet == 2))
+    bench = made_bench(tmp_path, CAMERA)
+    found = evaluate_droplets(
+        replace(tracks, droplet=tracks.droplet[stay], sightings=tracks.sightings.take(stay)), recording,
+        field_from_list(bench.field.entries, recording), bench, settings=Settings(),
+    )  # fmt: skip
+    assert "sparse" in reasons(found)[0]
+    assert "sparse" not in reasons(found)[1]
+    assert found.droplets[0].verdict == "reject"
+
+
+def test_a_jump_beside_a_neighbour_is_excused(tmp_path):
+    """The same lasting jump is a hop in the open, and none where a neighbour was fitted jointly."""
+    for crowded in (False, True):
+        tracks, recording = made_tracks(
+            np.random.default_rng(93), cluster(np.random.default_rng(94), 3), CAMERA
+        )
+        row = tracks.rows(0).start + 300
+        y, flags = tracks.sightings.y.copy(), tracks.sightings.flags.copy()
+        y[row : tracks.rows(0).stop] += 6.0
+        flags[row] = int(Flag.CROWDED) if crowded else 0
+        bench = made_bench(tmp_path, CAMERA)
+        found = evaluate_droplets(
+            replace(tracks, sightings=replace(tracks.sightings, y=y, flags=flags)), recording,
+            field_from_list(bench.field.entries, recording), bench, settings=Settings(),
+        )  # fmt: skip
+        assert ("hop" in reasons(found)[0]) is not crowded
+
+
+def test_light_of_the_lamp_is_no_droplet(tmp_path):
+    """Sightings inside the lamp's rectangle are not used, whatever they do."""
+    tracks, recording = made_tracks(np.random.default_rng(95), cluster(np.random.default_rng(96), 3), CAMERA)
+    bench = made_bench(tmp_path, CAMERA)
+    rows = tracks.rows(0)
+    x, y = tracks.sightings.x[rows], tracks.sightings.y[rows]
+    lamp = (int(x.min()), int(y.min()), int(np.ptp(x)) + 2, int(np.ptp(y)) + 2)
+    bench = replace(bench, field=replace(bench.field, lamp=lamp))
+    found = evaluate_droplets(
+        tracks, recording, field_from_list(bench.field.entries, recording), bench, settings=Settings()
+    )
+    assert not found.used[rows].any()
+    assert found.droplets[0].verdict == "reject"
+
+
+def test_droplets_that_shrink_together_are_told_with_their_rate(tmp_path):
+    """Each shrinks too little to show; all together give d(r^2)/dt within its uncertainty, and still ones give none."""
+    rate = -1.5e-15
+    lives = [replace(life, shrinking=rate / (2 * life.radius**2), radius=life.radius * float(
+        np.exp(-rate / (2 * life.radius**2) * 12))) for life in cluster(np.random.default_rng(97), 16)]  # fmt: skip
+    found = evaluate(tmp_path, np.random.default_rng(98), lives)
+    shrink = found.details["shrinking"]
+    assert shrink["radius2_rate_m2_s"] == pytest.approx(rate, abs=4 * shrink["radius2_rate_std_m2_s"])
+    assert any("shrink together" in warning for warning in found.warnings)
+    still = evaluate(tmp_path, np.random.default_rng(99), cluster(np.random.default_rng(97), 16))
+    assert not any("together" in warning for warning in still.warnings)
+
+
+def test_a_list_whose_times_are_off_is_told(tmp_path):
+    """A list 0.2 s early is told with size and sense; the right one is not."""
+    lives = cluster(np.random.default_rng(100), 4)
+    tracks, recording = made_tracks(np.random.default_rng(101), lives, CAMERA)
+    bench = made_bench(tmp_path, CAMERA)
+    early = [(max(t - 0.2, 0.0) if t else 0.0, v) for t, v in bench.field.entries]
+    for entries, told in ((bench.field.entries, False), (early, True)):
+        found = evaluate_droplets(
+            tracks, recording, field_from_list(entries, recording), bench, settings=Settings()
+        )
+        assert any("0.20 s later than the list" in warning for warning in found.warnings) is told
+
+
 def test_a_droplet_at_balance_is_told_with_its_voltage(tmp_path):
     """A droplet that hangs still at 200 V reports that balance voltage within its uncertainty."""
     camera = Camera(
