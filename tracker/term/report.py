@@ -27,7 +27,7 @@ from tracker.showing.report import (
 from tracker.showing.units import unit_figure
 from tracker.term.drift import Drift, bench_drifts, monday_of
 from tracker.term.ledger import LEDGER, Entry, read_ledger
-from tracker.term.pool import Pool, pool_of
+from tracker.term.pool import DEVIATES_FROM, Pool, pool_of
 from tracker.term.poolfiles import bench_ratios, charge_groups
 
 if TYPE_CHECKING:
@@ -150,12 +150,36 @@ def term_page(entries: Sequence[Entry], results: Mapping[str, Result]) -> str:
     lead = [f"{len(entries)} recordings{span}: {len(entries) - len(failed)} measured, {len(failed)} failed; "
             f"{0 if droplets is None else len(droplets)} droplets, {kept} of them kept."]  # fmt: skip
     sections = [Section("What was measured", (), (coverage_grid(entries),))]
+    findings = (
+        [f"{len(failed)} of {len(entries)} recordings failed; the list below says why."] if failed else []
+    )
     if results:
-        sections += _unit_sections(results, days)
+        pool, drifts = _pool_and_drifts(results, days)
+        findings = [*notable(pool, drifts), *findings]
+        sections += _unit_sections(pool, drifts)
     if droplets is not None:
         sections += [_reasons_section(droplets), _distribution_section(droplets)]
-    sections += [failed_section(failed), cautions()]
-    return render("Report of a term", lead, sections)
+    first = Section("What to look at", tuple(findings) or ("Nothing stands out.",))
+    return render("Report of a term", lead, [first, *sections, failed_section(failed), cautions()])
+
+
+def notable(pool: Pool, drifts: Sequence[Drift]) -> list[str]:
+    """Say which benches a head of laboratory should look at.
+
+    Parameters
+    ----------
+    pool : Pool
+        Charge unit of the benches.
+    drifts : sequence of Drift
+        The same benches over the weeks.
+
+    Returns
+    -------
+    findings : list of str
+        Benches off e by more than two standard uncertainties, and benches that drift.
+    """
+    off = [bench.sentence for bench in pool.benches if abs(bench.deviation) > DEVIATES_FROM]
+    return [*off, *(drift.sentence for drift in drifts if drift.drifts)]
 
 
 def coverage_grid(entries: Sequence[Entry]) -> Grid:
@@ -199,23 +223,29 @@ def week_name(monday: date) -> str:
     return monday.isoformat()
 
 
-def _unit_sections(results: Mapping[str, Result], days: Mapping[str, date]) -> list[Section]:
-    """Charge unit, benches, weeks and budget: the functions of `fallrise pool`."""
+def _pool_and_drifts(results: Mapping[str, Result], days: Mapping[str, date]) -> tuple[Pool, list[Drift]]:
+    """Charge unit as `fallrise pool` finds it, and the benches over the weeks."""
     pool = pool_of(list(results.values()))
     by_folder = {str(result.folder): name for name, result in results.items()}
     named = {folder: results[name] for folder, name in by_folder.items()}
-    drifts = bench_drifts(pool, named, {folder: days[name] for folder, name in by_folder.items()})
+    return pool, bench_drifts(pool, named, {folder: days[name] for folder, name in by_folder.items()})
+
+
+def _unit_sections(pool: Pool, drifts: Sequence[Drift]) -> list[Section]:
+    """Charge unit, benches, weeks and budget."""
     unit = pool.unit
     value = (f"Charge unit {unit.unit:.5e} C, own uncertainty {unit.unit_own_std:.1e} C, shared "
              f"{unit.unit_shared_std:.1e} C; {unit.over_e:.4f} of e "
              f"with a standard uncertainty of {unit.over_e_std:.4f}.")  # fmt: skip
     reason = f"{unit.reason[:1].upper()}{unit.reason[1:]}."
     told = (value, reason) if unit.resolved else (reason,)
-    skipped = tuple(f"Left out {Path(name).name}: {reason}." for name, reason in pool.skipped)
+    aside = [f"{b.label} drifts and is part of this unit." for b, d in zip(pool.benches, drifts, strict=True)
+             if d.drifts and not b.left_out]  # fmt: skip
+    aside += [f"Left out {Path(name).name}: {why}." for name, why in pool.skipped]
     comb = Picture("Charges over the unit, the comb, and the statistic",
                    unit_figure(unit, charge_groups(pool), bench_ratios(pool)), " ".join(told))  # fmt: skip
     return [
-        Section("Charge unit", told + skipped, (comb,)),
+        Section("Charge unit", (*told, *aside), (comb,)),
         Section("What it says of each bench", tuple(bench.sentence for bench in pool.benches), (bench_grid(pool),)),
         drift_section(drifts),
         Section("Uncertainty budget", ("Relative standard uncertainty of all charges of a bench by what its droplets "

@@ -174,6 +174,7 @@ def test_page_shows_all_that_a_head_of_laboratory_asks_for(page):
     found = Page(page)
     text = " ".join(found.text)
     for words in ("32 recordings, 2026-09-07 to 2026-11-11: 30 measured, 2 failed; 660 droplets, 600 of them kept",
+                  "What to look at", "west drifts and is part of this unit.",
                   "Recordings by bench and week", "2026-11-09", "Charge unit of each bench", "south: charge unit",
                   "west: DRIFTS", "too_short", "Seen too briefly for a charge.", "Distribution of the radius",
                   "Distribution of the charge", "Recordings that failed", "the file is <empty>", "plate gap",
