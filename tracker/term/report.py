@@ -27,13 +27,14 @@ from tracker.showing.report import (
 from tracker.showing.units import unit_figure
 from tracker.term.drift import Drift, bench_drifts, monday_of
 from tracker.term.ledger import LEDGER, Entry, read_ledger
-from tracker.term.pool import DEVIATES_FROM, Pool, pool_of
+from tracker.term.pool import Pool, pool_of
 from tracker.term.poolfiles import bench_ratios, charge_groups
 
 if TYPE_CHECKING:
     import pandas as pd
 
 REPORT = "report.html"
+_OFF_FROM = 2.0  # standard uncertainties off e, from which a bench is named at the top
 
 
 def write_report(folder: Path | str) -> Path:
@@ -178,7 +179,7 @@ def notable(pool: Pool, drifts: Sequence[Drift]) -> list[str]:
     findings : list of str
         Benches off e by more than two standard uncertainties, and benches that drift.
     """
-    off = [bench.sentence for bench in pool.benches if abs(bench.deviation) > DEVIATES_FROM]
+    off = [bench.sentence for bench in pool.benches if abs(bench.deviation) > _OFF_FROM]
     return [*off, *(drift.sentence for drift in drifts if drift.drifts)]
 
 
