@@ -23,7 +23,7 @@ __all__ = [
 ]
 
 MIN_INCREMENTS = 8  # fewer leave the variance so few degrees of freedom that no interval would hold
-RHO_POINTS = 9  # over +-3.5 standard deviations the trapezoid rule is exact to 1e-3
+RHO_POINTS = 11  # where the law pins D, rho is known twice as well as in the free fit: still two points a deviation
 LOG_DROP = 6.125  # nats: 3.5 standard deviations of a normal likelihood
 COARSEST = 1.3  # of ln rho: the flank of the likelihood grows as fast as rho, so wider steps cut it short
 NOISE_RANGE = (1e-3, 1e4)  # of rho over the median step; below 1e-3 the noise changes nothing
