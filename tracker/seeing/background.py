@@ -16,6 +16,7 @@ _LOW = 0.3  # quantile that a droplet in place for half the samples hardly moves
 _LOW_OFFSET = 0.5244  # standard deviations of a normal distribution from that quantile to its mean
 _CLIP = 2.0  # samples within so many standard deviations make the mean
 _LINE_SCALE = 14.0  # px, standard deviation of the smoothing that separates glare from lines
+_MOST_LINES = 0.4  # of the picture; more is no reticle but an uneven background
 _LINE_ROUNDS = 6
 _LINE_DEPTH = 0.93  # shade below this is a line
 _RESTLESS = 4.0  # times the usual median deviation from the background
@@ -70,8 +71,7 @@ def temporal_level(samples: NDArray[Any]) -> F32:
     spread = centre - ordered[lower]
     # Both quantiles at the ranks that were taken, so that the offset is right for any number of samples.
     z_low, z_lower = _z((low + 0.625) / (n + 0.25)), _z((lower + 0.625) / (n + 0.25))
-    sigma = _local_mean(spread, 31) / (z_low - z_lower)
-    sigma = np.maximum(sigma, 0.3)
+    sigma = np.maximum(_local_mean(spread, 31) / np.float32(z_low - z_lower), _change_sigma(samples))
     centre -= z_low * sigma
     half = _CLIP * sigma + 0.5
     bottom, top = centre - half, centre + half
@@ -82,6 +82,12 @@ def temporal_level(samples: NDArray[Any]) -> F32:
         count += inside
         total += inside * picture
     return np.where(count > 0, total / np.maximum(count, 1), centre).astype(np.float32)
+
+
+def _change_sigma(samples: NDArray[Any]) -> float:
+    """Noise of a pixel from the changes between samples; where black is cut off, low values in time hide it."""
+    chosen = samples[:: max(1, len(samples) // 9), ::5, ::5].astype(np.float32)
+    return max(float(np.abs(np.diff(chosen, axis=0)).mean(0).mean()) / 1.1284 * 0.9, 0.3)  # 2 / sqrt(pi)
 
 
 def sort_in_time(samples: NDArray[Any]) -> NDArray[Any]:
@@ -129,7 +135,7 @@ def find_shade(level: F32, black: float) -> tuple[F32, float]:
     Notes
     -----
     A dark line dims the glare and a droplet behind it alike. The smooth part is a Gaussian mean over the
-    pixels that are not darker than it.
+    pixels that are near it.
     """
     light = np.maximum(level - black, 1e-3)
     smooth = _glare(light)
@@ -137,6 +143,8 @@ def find_shade(level: F32, black: float) -> tuple[F32, float]:
     line: NDArray[Any] = ((ratio < _LINE_DEPTH) & (smooth - light > 1.5)).astype(np.uint8)
     line = cv2.morphologyEx(line, cv2.MORPH_CLOSE, np.ones((3, 3), np.uint8))
     line = _long_parts(line)
+    if line.mean() > _MOST_LINES:
+        return np.ones_like(ratio), 0.0
     near = cv2.dilate(line, np.ones((5, 5), np.uint8)).astype(bool)
     shade = np.where(near, ratio, np.float32(1)).astype(np.float32)
     return np.maximum(shade, 0.02), float(line.mean())
@@ -191,7 +199,7 @@ def fill_restless(background: Background, samples: NDArray[Any], *, width: float
 
 
 def _glare(light: F32) -> F32:
-    """Smooth part of the background, from the pixels not darker than it; at a quarter of the size."""
+    """Smooth part of the background, from the pixels near it; at a quarter of the size."""
     height, width = light.shape
     size = (max(1, -(-width // 4)), max(1, -(-height // 4)))
     smooth: NDArray[Any] = light
@@ -200,7 +208,7 @@ def _glare(light: F32) -> F32:
         share, part = (cv2.resize(a, size, interpolation=cv2.INTER_AREA) for a in (mask, mask * light))
         share, part = (cv2.GaussianBlur(a, (0, 0), _LINE_SCALE / 4) for a in (share, part))
         smooth = cv2.resize(part / np.maximum(share, 1e-3), (width, height), interpolation=cv2.INTER_LINEAR)
-        mask = (light >= smooth - np.maximum(1.5, 0.06 * smooth)).astype(np.float32)
+        mask = (np.abs(light - smooth) <= np.maximum(1.5, 0.06 * smooth)).astype(np.float32)
     return np.asarray(smooth, np.float32)
 
 

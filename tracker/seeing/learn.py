@@ -103,7 +103,7 @@ def _evened(samples: NDArray[Any], black: float) -> tuple[NDArray[Any], bool]:
 def change_noise(samples: NDArray[Any], sigma: float) -> float:
     """Standard deviation, from their differences, of single pictures smoothed by a Gaussian."""
     differences = np.diff(np.stack([smoothed(p.astype(np.float32), sigma) for p in samples]), axis=0)
-    return 1.4826 * float(np.median(np.abs(differences - np.median(differences)))) / math.sqrt(2)
+    return _spread(differences) / math.sqrt(2)
 
 
 def white_variance(noise: float, sigma: float) -> float:
@@ -182,7 +182,7 @@ def scale_search(residual: F32) -> tuple[float, float]:
     pictures = residual[:: max(1, len(residual) // 4)]
     scales = [s for s in _SCALES if 6 * s <= min(residual.shape[1:])] or [_SCALES[0]]
     smooth = [np.stack([smoothed(r, s) for r in pictures]) for s in scales]
-    raw = [1.4826 * float(np.median(np.abs(f[:, ::4, ::4]))) * s for f, s in zip(smooth, scales, strict=True)]
+    raw = [_spread(f[:, ::4, ::4]) * s for f, s in zip(smooth, scales, strict=True)]
     coarse = [i for i, s in enumerate(scales) if s <= _COARSE]
     noise = [max(raw[i : coarse[-1] + 1] or [raw[i]]) / s for i, s in enumerate(scales)]
     noise = [max(n, 0.02) for n in noise]
@@ -195,6 +195,11 @@ def scale_search(residual: F32) -> tuple[float, float]:
     order = order[score[order] > _CLEAR * np.quantile(score, 0.95)] if len(order) else order
     index = _DEFAULT_SCALE if len(order) < _FEW else int(np.median(which[order]))
     return scales[min(index, len(scales) - 1)], noise[min(index, len(scales) - 1)]
+
+
+def _spread(values: NDArray[Any]) -> float:
+    """Standard deviation from the median absolute deviation."""
+    return 1.4826 * float(np.median(np.abs(values - np.median(values))))
 
 
 def smoothed(picture: F32, sigma: float) -> F32:

@@ -13,6 +13,7 @@ from tracker.seeing.crowd import Pairs, fit_pairs, near_pairs, split_starts
 from tracker.seeing.detect import cut_windows
 from tracker.seeing.fit import Spots, Windows, fit_spots
 from tracker.seeing.learn import Eyes
+from tracker.seeing.streak import Streaks, fit_streaks
 
 Rows = NDArray[np.int64]
 Columns = dict[str, NDArray[Any]]
@@ -20,12 +21,14 @@ Columns = dict[str, NDArray[Any]]
 COLUMNS = ("frame", "x", "y", "x_std", "y_std", "brightness", "width", "flags")
 _NEIGHBOUR = 5.6  # widths: nearer spots are fitted jointly
 _ODD = 5.0  # standard deviations of a width or slant that one sharp spot would not show
+_MOST_SPREAD = 2.5  # standard deviations; more is no noise of a codec but many fast or soft droplets
 _ENOUGH = 40  # spots that tell the spread
 _SPLIT_GAIN = 30.0  # fall of chi2 that makes two spots of one
 _SPLIT_CLOSE = 2.2  # widths: nearer ones look like one wide spot and need more proof
 _SPLIT_APART = 1.2  # widths, least distance of two spots found in one blob
 _SPLIT_SHARE = 0.15  # least amplitude of the fainter against the brighter
 _SOFT = 1.3  # widths: a spot this wide along both axes is out of focus
+_MISFIT = 0.35  # share of light unexplained: a lamp or a scratch, no spot
 _HALF_LIGHT = 0.4  # of the amplitude: mean of a spot's light over its slopes, which tell the place
 _STREAK = 1.21  # widths: way within the exposure equal to the full width at half maximum widens to this
 
@@ -59,21 +62,30 @@ def look(eyes: Eyes, pictures: list[NDArray[Any]], numbers: Rows) -> Columns:
     rows = np.flatnonzero(sound)
     frame, spots, windows = frame[rows], spots.take(rows), windows.take(rows)
     table = _table(spots, frame)
+    table["misfit"] = _misfit(spots, windows)
     table["flags"] |= np.where(windows.bad.any((1, 2)), int(Flag.SATURATED), 0)
     crowded = near_pairs(frame, spots.x, spots.y, reach=_NEIGHBOUR * eyes.width)
     table = _fit_neighbours(eyes, stack, table, crowded)
     alone = np.ones(len(frame), np.bool_)
     alone[crowded.ravel()] = False
     table = _fit_odd(eyes, stack, table, spots, np.flatnonzero(_is_odd(spots) & alone))
-    return _finish(eyes, table, numbers)
+    spotlike = table["misfit"] < _MISFIT
+    return _finish(eyes, {k: v[spotlike] for k, v in table.items()}, numbers)
+
+
+def _misfit(spots: Spots, windows: Windows) -> NDArray[np.float64]:
+    """Light that a fit leaves against the light it explains, beyond noise."""
+    used = np.count_nonzero(~windows.bad, axis=(1, 2))
+    power = spots.amplitude**2 / np.maximum(spots.covariance[:, 0, 0], 1e-12)
+    return np.asarray(np.maximum(spots.chi2 - 1.5 * used, 0) / np.maximum(power, 1e-12))
 
 
 def _is_odd(spots: Spots) -> NDArray[np.bool_]:
     """Whether a spot's width or slant is none of a single sharp spot, judged by the spread among its batch."""
     shape = np.column_stack([spots.growth, spots.slant])
     if len(shape) >= _ENOUGH:
-        shape = shape - np.median(shape, axis=0)
-        shape /= np.maximum(1.4826 * np.median(np.abs(shape), axis=0), 1)
+        shape = shape - np.clip(np.median(shape, axis=0), -_MOST_SPREAD, _MOST_SPREAD)
+        shape /= np.clip(1.4826 * np.median(np.abs(shape), axis=0), 1, _MOST_SPREAD)
     shape[:, 2] = np.abs(shape[:, 2])
     return np.asarray(shape.max(1, initial=0) > _ODD)
 
@@ -116,16 +128,13 @@ def _fit_neighbours(eyes: Eyes, stack: NDArray[Any], table: Columns, pairs: Rows
         for rows, first in ((i, 0), (j, 3)):
             _write(table, rows[fine], fitted.take(fine), first)
     table["flags"][np.unique(pairs)] |= int(Flag.CROWDED)
+    table["misfit"][np.unique(pairs)] = 0  # the neighbour's light was counted as misfit
     return table
 
 
 def _pair_reach(eyes: Eyes) -> int:
     most = int(min(eyes.background.level.shape) - 1) // 2
     return min(eyes.reach + math.ceil(_NEIGHBOUR * eyes.width / 2), most)
-
-
-def _wide_reach(eyes: Eyes) -> int:
-    return min(math.ceil(1.5 * eyes.reach), _pair_reach(eyes))
 
 
 def _write(table: Columns, rows: Rows, fitted: Pairs, first: int) -> None:
@@ -161,32 +170,66 @@ def _without_others(windows: Windows, table: Columns, pairs: Rows, width: float)
 
 
 def _fit_odd(eyes: Eyes, stack: NDArray[Any], table: Columns, spots: Spots, rows: Rows) -> Columns:
-    """Fit spots that are no single sharp ones: with their own widths, or as two."""
+    """Fit spots that are no single sharp ones: as streaks, with their own widths, or as two."""
     if len(rows) == 0:
         return table
     table = {k: v.copy() for k, v in table.items()}
     x, y = table["x"][rows], table["y"][rows]
-    windows = _cut(eyes, stack, table["frame"][rows], x, y, _wide_reach(eyes))
+    windows = _cut(eyes, stack, table["frame"][rows], x, y, _pair_reach(eyes))
     start = np.full(len(rows), eyes.width)
     wide = fit_spots(windows, (x, y), camera=eyes.camera, width=(start, start), free_width=True, rounds=8)
     fine = wide.good & (np.hypot(wide.x - x, wide.y - y) < 2 * eyes.width)
     fine &= (np.maximum(wide.sx, wide.sy) < 4 * eyes.width) & (
         np.minimum(wide.sx, wide.sy) > 0.4 * eyes.width
     )
+    streaks = _streaks(eyes, windows, wide)
+    moved = np.hypot(streaks.values[:, 1] - x, streaks.values[:, 2] - y)
+    swept = fine & (streaks.chi2 < wide.chi2) & (moved < 3 * eyes.width)
     both = _best_split(eyes, windows, wide, spots.slant[rows] > 0)
-    split = _is_two(eyes, both, wide)
-    use = np.flatnonzero(fine & ~split)
-    at = rows[use]
-    for name in ("amplitude", "x", "y", "sx", "sy"):
-        table[name][at] = getattr(wide, name)[use]
-    table["x_var"][at], table["y_var"][at] = wide.covariance[use, 1, 1], wide.covariance[use, 2, 2]
-    table["flags"][at[np.abs(wide.slant[use]) > _ODD]] |= int(Flag.MERGED)
+    split = _is_two(eyes, both, wide, np.where(swept, streaks.chi2, wide.chi2))
+    _write_wide(table, rows, wide, windows, np.flatnonzero(fine & ~split & ~swept))
+    _write_streaks(table, rows, streaks, np.flatnonzero(swept & ~split), eyes.width)
     two = np.flatnonzero(split)
     _write(table, rows[two], both.take(two), 0)
+    table["misfit"][rows[two]] = 0
     table["flags"][rows[two]] |= int(Flag.CROWDED)
     more = {k: v[rows[two]].copy() for k, v in table.items()}
     _write(more, np.arange(len(two)), both.take(two), 3)
     return {k: np.concatenate([table[k], more[k]]) for k in table}
+
+
+def _streaks(eyes: Eyes, windows: Windows, wide: Spots) -> Streaks:
+    """Blobs fitted as streaks along their longer axis."""
+    along_x = wide.sx > wide.sy
+    half = np.sqrt(
+        3 * np.maximum(np.maximum(wide.sx, wide.sy) ** 2 - eyes.width**2, 0)
+    )  # way^2 / 12 adds to s^2
+    peak = wide.amplitude * np.maximum(wide.sx, wide.sy) / eyes.width
+    return fit_streaks(
+        windows, (peak, wide.x, wide.y), half=half, along_x=along_x, camera=eyes.camera, width=eyes.width
+    )
+
+
+def _write_wide(table: Columns, rows: Rows, wide: Spots, windows: Windows, use: Rows) -> None:
+    """Put fits with free width into the table."""
+    at = rows[use]
+    for name in ("amplitude", "x", "y", "sx", "sy"):
+        table[name][at] = getattr(wide, name)[use]
+    table["misfit"][at] = _misfit(wide, windows)[use]
+    table["x_var"][at], table["y_var"][at] = wide.covariance[use, 1, 1], wide.covariance[use, 2, 2]
+    table["flags"][at[np.abs(wide.slant[use]) > _ODD]] |= int(Flag.MERGED)
+
+
+def _write_streaks(table: Columns, rows: Rows, streaks: Streaks, use: Rows, width: float) -> None:
+    """Put streaks into the table, as a spot of the same light and second moments."""
+    at, values = rows[use], streaks.values[use]
+    long = np.sqrt(width**2 + values[:, 3] ** 2 / 3)
+    lying = streaks.along_x[use]
+    table["x"][at], table["y"][at] = values[:, 1], values[:, 2]
+    table["sx"][at], table["sy"][at] = np.where(lying, long, width), np.where(lying, width, long)
+    table["amplitude"][at] = values[:, 0] * width / long
+    table["x_var"][at], table["y_var"][at] = streaks.covariance[use, 1, 1], streaks.covariance[use, 2, 2]
+    table["misfit"][at] = 0
 
 
 def _best_split(eyes: Eyes, windows: Windows, wide: Spots, slant: NDArray[np.bool_]) -> Pairs:
@@ -204,13 +247,13 @@ def _best_split(eyes: Eyes, windows: Windows, wide: Spots, slant: NDArray[np.boo
     )  # fmt: skip
 
 
-def _is_two(eyes: Eyes, both: Pairs, wide: Spots) -> NDArray[np.bool_]:
-    """Whether two sharp spots explain a blob clearly better than one wide one does."""
+def _is_two(eyes: Eyes, both: Pairs, wide: Spots, chi2: NDArray[np.float64]) -> NDArray[np.bool_]:
+    """Whether two sharp spots explain a blob clearly better than one wide or swept one does."""
     amplitude, apart = both.values[:, [0, 3]], both.separation / eyes.width
     needed = _SPLIT_GAIN * (1 + (_SPLIT_CLOSE / np.maximum(apart, 0.1)) ** 4)
     near = np.hypot(both.values[:, [1, 4]] - wide.x[:, None], both.values[:, [2, 5]] - wide.y[:, None])
     return np.asarray(
-        (both.chi2 < wide.chi2 - needed)
+        (both.chi2 < chi2 - needed)
         & (amplitude.min(1) > _SPLIT_SHARE * amplitude.max(1))
         & (apart > _SPLIT_APART)
         & (near.max(1) < _NEIGHBOUR * eyes.width)
