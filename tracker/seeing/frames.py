@@ -202,7 +202,7 @@ class Reader:
     def _told(self) -> list[str]:
         told = list(self._source.warnings)
         stated, read = self.form.frames, len(self._times)
-        if stated > read and not any("as far as it goes" in w for w in told):
+        if stated > read and not told:
             told.append(f"the file states {stated} frames and gives {read}: measured as far as it goes")
         if self._damaged:
             told.append(f"{self._damaged} damaged pictures were left out")
