@@ -106,7 +106,9 @@ def _same_result(task: Task, entry: Entry | None, stamps: tuple[Stamp, ...], key
         provenance = read_provenance(task.out)
         settings = {**provenance["settings"]}
         version = provenance["versions"]["fallrise"]
-        digest = load_bench(task.bench, recording=task.recording).digest
+        frames = provenance["frames"]
+        bench = load_bench(task.bench, recording=task.recording)
+        digest = bench.fitted_to(frames["width_px"], frames["height_px"]).digest
     except (FallriseError, KeyError, TypeError):
         return None
     wanted = json.dumps([settings, version], sort_keys=True)

@@ -10,6 +10,7 @@ import signal
 import subprocess
 import sys
 import time
+from dataclasses import replace
 from pathlib import Path
 
 import pandas as pd
@@ -174,6 +175,25 @@ def test_damaged_result_is_measured_again(term, inline):
     os.utime(path / "recording.json")
     assert run_batch(term / "term", out=term / "out").measured == 1
     assert (path / "droplets.csv").read_bytes() == whole
+
+
+def test_scale_of_a_binned_camera_is_recognised(original, tmp_path, inline):
+    """Results whose scale was fitted to a binned recording are taken over, and renewed when the scale changes."""
+    from calibration.scale import Scale, read_scale, write_scale
+
+    folder = tmp_path / "term"
+    shutil.copytree(original / "term/south", folder)
+    scale = Scale.from_metres_per_pixel(1.5e-6, 3e-9)
+    write_scale(replace(scale, width_px=288, height_px=320, picture="reticle.png"), folder / "scale.json")
+    text = (folder / "bench.toml").read_text()
+    (folder / "bench.toml").write_text(text.replace('metres_per_pixel = "3.000(6) um"', "binning = 2"))
+    first = run_batch(folder, out=tmp_path / "out")
+    assert [entry.status for entry in first.entries] == ["done", "done"], first.entries
+    (tmp_path / "out" / LEDGER).unlink()
+    assert run_batch(folder, out=tmp_path / "out").measured == 0
+    changed = replace(read_scale(folder / "scale.json"), metres_per_pixel_y=1.52e-6)
+    write_scale(changed, folder / "scale.json")
+    assert run_batch(folder, out=tmp_path / "out").measured == 2
 
 
 def test_other_settings_are_other_results(term, inline):
