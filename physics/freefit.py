@@ -18,7 +18,7 @@ from numpy.typing import ArrayLike, NDArray
 from scipy.linalg import lapack
 
 from physics.errors import PhysicsError
-from physics.increments import Axis, FloatArray, Increments, Whitened, whiten, whitened
+from physics.increments import Axis, FloatArray, Increments, Whitened, freeze_arrays, whiten, whitened
 from physics.likelihood import MIN_INCREMENTS, Sums, best_log_rho, likelihood_grid, sums_at
 
 __all__ = [
@@ -55,6 +55,12 @@ class FreeFit:
     dof: int
     down_residuals: FloatArray  # (steps,) whitened: standard normal if the model holds
     side_residuals: FloatArray  # (steps,)
+
+    def __post_init__(self) -> None:
+        freeze_arrays(self, _FIT_ARRAYS)
+
+
+_FIT_ARRAYS = ("drive_per_volt", "drive_per_volt_std", "covariance", "down_residuals", "side_residuals")
 
 
 def free_fit(steps: Increments) -> FreeFit:
@@ -143,6 +149,9 @@ class SegmentSpeeds:
     side_std: FloatArray  # (S,) m/s
     side_cov: FloatArray  # (S, S)
     steps: NDArray[np.int64]  # (S,) steps that lie in each segment for the most part
+
+    def __post_init__(self) -> None:
+        freeze_arrays(self, ("down", "down_std", "down_cov", "side", "side_std", "side_cov", "steps"))
 
 
 def segment_speeds(steps: Increments, segments: ArrayLike, *, diffusion: float, rho: float) -> SegmentSpeeds:

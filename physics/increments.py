@@ -152,9 +152,9 @@ class Increments:
 
     def __post_init__(self) -> None:
         for name in _FLOAT_COLUMNS:
-            object.__setattr__(self, name, _readonly(getattr(self, name), np.float64))
+            object.__setattr__(self, name, readonly(getattr(self, name), np.float64))
         for name in ("part", "first", "last"):
-            object.__setattr__(self, name, _readonly(getattr(self, name), np.int64))
+            object.__setattr__(self, name, readonly(getattr(self, name), np.int64))
 
     def __len__(self) -> int:
         return len(self.dt)
@@ -216,11 +216,17 @@ def _sum_groups(values: FloatArray, start: NDArray[np.int64]) -> FloatArray:
     return np.asarray(np.add.reduceat(values, start)) if len(start) else values
 
 
-def _readonly(values: ArrayLike, dtype: DTypeLike) -> NDArray[Any]:
+def readonly(values: ArrayLike, dtype: DTypeLike | None = None) -> NDArray[Any]:
     """Give a read-only view of the values."""
     array: NDArray[Any] = np.asarray(values, dtype=dtype).view()
     array.flags.writeable = False
     return array
+
+
+def freeze_arrays(record: object, names: tuple[str, ...]) -> None:
+    """Make the named arrays of a frozen record read-only."""
+    for name in names:
+        object.__setattr__(record, name, readonly(getattr(record, name)))
 
 
 def increments(  # noqa: PLR0913 - one sighting has that many columns
@@ -339,6 +345,9 @@ class Whitened:
     columns: FloatArray  # (N, M)
     data: FloatArray  # (N,)
     log_det: float  # ln det of the covariance C
+
+    def __post_init__(self) -> None:
+        freeze_arrays(self, ("columns", "data"))
 
 
 def whitened(

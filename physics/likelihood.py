@@ -23,13 +23,13 @@ __all__ = [
 ]
 
 MIN_INCREMENTS = 8  # fewer leave the variance so few degrees of freedom that no interval would hold
-RHO_POINTS = 11  # where the law pins D, rho is known twice as well as in the free fit: still two points a deviation
+RHO_POINTS = (
+    11  # where the law pins D, rho is known twice as well as in the free fit: still two points a deviation
+)
 LOG_DROP = 6.125  # nats: 3.5 standard deviations of a normal likelihood
 COARSEST = 1.3  # of ln rho: the flank of the likelihood grows as fast as rho, so wider steps cut it short
 NOISE_RANGE = (1e-3, 1e4)  # of rho over the median step; below 1e-3 the noise changes nothing
-FLANK_DROP = (
-    25.0  # nats: where few points are inside, the next ones must be no farther for the ends to be found
-)
+FLANK_DROP = 10.0  # nats: with few points inside, the next ones must be this near for the ends to be found
 WIDE_POINTS = 17  # of a look at the whole range of ln rho
 FIRST_REACH = 3.0  # of the first look, in ln rho to either side
 LITTLE_NOISE = 0.03  # rho over the median step that counts as hardly any
@@ -140,10 +140,8 @@ def likelihood_grid(steps: Increments, *, points: int = RHO_POINTS) -> Sums:
         drop = sums.restricted.max() - sums.restricted
         inside = np.flatnonzero(drop < LOG_DROP)
         first, last = max(inside[0] - 1, 0), min(inside[-1] + 1, len(grid) - 1)
-        cut = (inside[0] == 0 and grid[0] > domain[0]) or (
-            inside[-1] == len(grid) - 1 and grid[-1] < domain[1]
-        )
-        if cut:
+        cut_low = inside[0] == 0 and grid[0] > domain[0]
+        if cut_low or (inside[-1] == len(grid) - 1 and grid[-1] < domain[1]):
             grid = np.linspace(domain[0], domain[1], WIDE_POINTS)
         elif grid[1] - grid[0] < COARSEST and (len(inside) >= 3 or max(drop[first], drop[last]) < FLANK_DROP):
             break

@@ -20,7 +20,7 @@ from physics.drag import slip_correction, slip_model
 from physics.droplet import BOLTZMANN, ELEMENTARY_CHARGE, Conditions, mass, weight
 from physics.errors import PhysicsError
 from physics.freefit import FreeFit, free_fit_of
-from physics.increments import FloatArray, Increments
+from physics.increments import FloatArray, Increments, freeze_arrays
 from physics.likelihood import MIN_INCREMENTS, Sums, likelihood_grid
 from physics.responses import STEP, input_responses
 
@@ -73,9 +73,12 @@ class DropletPosterior:
     radius_weight: FloatArray  # (R,) posterior probability, sum 1
     charge_at_radius: FloatArray  # (R, parts) C, mean of the charge given the radius
     charge_std_at_radius: FloatArray  # (R, parts) C
-    sensitivities: Mapping[str, tuple[float, float]]  # input -> d ln r, d ln q of the main part; see Notes of
-    charge_sensitivities: Mapping[str, FloatArray]  # input -> (parts,) d ln q      `input_responses`
+    sensitivities: Mapping[str, tuple[float, float]]  # `input_responses` -> d ln r, d ln q of the main part
+    charge_sensitivities: Mapping[str, FloatArray]  # `input_responses` -> (parts,) d ln q
     free: FreeFit | None  # the fit without the law; None with too few steps
+
+    def __post_init__(self) -> None:
+        freeze_arrays(self, _POSTERIOR_ARRAYS)
 
     def charge_log_density(self, charge: ArrayLike, *, part: int | None = None) -> FloatArray:
         """Log posterior density of a charge: the mixture itself, no normal approximation.
@@ -99,6 +102,13 @@ class DropletPosterior:
         return _log_density(
             value, self.radius_weight, self.charge_at_radius[:, chosen], self.charge_std_at_radius[:, chosen]
         )
+
+
+_POSTERIOR_ARRAYS = (
+    "charge", "charge_std", "charge_cov", "charge_interval_68", "charge_interval_95", "number_values",
+    "number_log_likelihood", "part_number_log_likelihood", "log_radius", "radius_weight", "charge_at_radius",
+    "charge_std_at_radius",
+)  # fmt: skip
 
 
 @dataclass(frozen=True, slots=True)

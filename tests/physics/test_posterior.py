@@ -358,6 +358,8 @@ def test_result_pickles_and_numbers_reach_as_far_as_asked():
     steps = record(np.random.default_rng(16), 6e-7, 5).steps()
     result = droplet_posterior(steps, CONDITIONS, charge_number_max=40)
     assert result.number_values.tolist() == list(range(-40, 41))
+    with pytest.raises(ValueError, match="read-only"):
+        result.charge[0] = 0.0
     again = pickle.loads(pickle.dumps(result))
     assert np.array_equal(again.number_log_likelihood, result.number_log_likelihood)
     assert len(droplet_posterior(steps, CONDITIONS).number_values) == 21
