@@ -48,7 +48,7 @@ export class InspectView {
       wrap, this.detailBox, this.decideBox);
     this.main.replaceChildren(el("h1", { class: "hidden" }, `Recording ${result.name}`), el("div", { class: "inspect" }, watch, judge));
     this.table = new DropletTable(wrap, { onChoose: (d) => this.choose(d), reasons: this.reasons });
-    this.stage = new Stage(this.stageBox, { onChoose: (d) => this.choose(d), onView: () => this.player.refreshZoom() });
+    this.stage = new Stage(this.stageBox, { onChoose: (d) => this.choose(d, false), onView: () => this.player.refreshZoom() });
     this.timebar = new TimeBar(this.timeBox, { onScrub: (frame) => this.player.go(frame) });
     this.frames = new Frames(`/api/results/${this.id}/frames/${result.recording_hash}`, (frame, bitmap, half) => this.stage.show(frame, bitmap, half));
     this.player = new Player(watch, { frames: this.frames, stage: this.stage, timebar: this.timebar, stageBox: this.stageBox, timeBox: this.timeBox });
@@ -113,7 +113,8 @@ export class InspectView {
     this.count.textContent = `${all.length} found, ${kept} kept${this.filter.value ? `, ${this.table.shown.length} shown` : ""}`;
   }
 
-  choose(droplet) {
+  // `look` brings the droplet into view; not after a click on it, as the picture must not move under the pointer.
+  choose(droplet, look = true) {
     this.chosen = droplet;
     this.stage.chosen = droplet;
     this.table.choose(droplet);
@@ -126,7 +127,7 @@ export class InspectView {
       const first = track.frame[0], last = track.frame[track.frame.length - 1];
       if (this.frames.wanted < first || this.frames.wanted > last) this.player.go(Math.min(last, Math.max(first, this.frames.wanted)));
       const at = Math.max(0, rowAt(track, this.frames.wanted));
-      this.stage.lookAt(track.x[at], track.y[at]);
+      if (look) this.stage.lookAt(track.x[at], track.y[at]);
     }
     this.stage.draw();
     this.fillFacts();
