@@ -9,7 +9,7 @@ import numpy as np
 
 from physics.droplet import Conditions, diffusion, radius_from_fall_speed
 from physics.errors import PhysicsError
-from physics.motion import MIN_INCREMENTS, FreeFit, Increments, air_current, free_fit, whitened
+from physics.motion import MIN_INCREMENTS, FreeFit, Increments, air_current, whitened
 from tracker.motion.velocity import Path
 from tracker.records import FloatArray
 
@@ -146,13 +146,15 @@ def robust_mean(values: FloatArray, stds: FloatArray) -> tuple[float, float]:
     return mean, std
 
 
-def find_drift(paths: Sequence[Path]) -> Drift:
+def find_drift(paths: Sequence[Path], fits: Sequence[FreeFit]) -> Drift:
     """Find how the air's speed changes over a recording, if it does.
 
     Parameters
     ----------
     paths : sequence of Path
         Of all droplets.
+    fits : sequence of FreeFit
+        Of the same paths.
 
     Returns
     -------
@@ -166,17 +168,15 @@ def find_drift(paths: Sequence[Path]) -> Drift:
     speed of the air that runs in straight lines between knots about 3 s apart. Its mean over the recording
     cannot be told from the fall speeds and is 0 here.
     """
-    usable = [
-        path for path in paths if len(path) >= MIN_INCREMENTS and len(path.steps()) >= 2 * MIN_INCREMENTS
-    ]
+    usable = [(path, fit) for path, fit in zip(paths, fits, strict=True) if len(path) > 2 * MIN_INCREMENTS]
     if len(usable) < LEAST_DROPLETS:
         return Drift()
-    begin, end = min(path.times[0] for path in usable), max(path.times[-1] for path in usable)
+    begin, end = min(path.times[0] for path, _ in usable), max(path.times[-1] for path, _ in usable)
     count = int((end - begin) / KNOTS_APART) + 1
     if count < 3:
         return Drift()
     knots = np.linspace(begin, end, count)
-    terms = [_terms(path, knots) for path in usable]
+    terms = [_terms(path, fit, knots) for path, fit in usable]
     side = _Shared.of([term[1] for term in terms])
     own = np.array([term[0].chi_square() for term in terms])
     calm = np.argsort(own)[: max(LEAST_DROPLETS, int(0.75 * len(own)))]
@@ -223,10 +223,9 @@ class _Shared:
         return rank > 0 and bool(chi2.sf(self.chi_square(), rank) < CHANGING)
 
 
-def _terms(path: Path, knots: FloatArray) -> tuple[_Shared, _Shared]:
+def _terms(path: Path, fit: FreeFit, knots: FloatArray) -> tuple[_Shared, _Shared]:
     """Give one droplet's equations along and across gravity."""
     steps = path.steps()
-    fit = free_fit(steps)
     rho = float(np.exp(fit.log_rho))
     hats = _hats(steps, np.asarray(path.times), knots)
     own = np.column_stack([steps.dt, steps.impulse]) if np.any(steps.impulse) else steps.dt[:, None]

@@ -89,9 +89,10 @@ def evaluate_droplets(
     """
     decided = apply_decisions(tracks, recording, decisions)
     orientation, droplets = _tracked(decided, recording, field, bench, settings=settings, cuts=cuts)
-    drift = find_drift(
-        [d.path for d in droplets if d.fit is not None and not is_stuck(d.path, bench.conditions)]
-    )
+    moving = [
+        (d.path, d.fit) for d in droplets if d.fit is not None and not is_stuck(d.path, bench.conditions)
+    ]
+    drift = find_drift([path for path, _ in moving], [fit for _, fit in moving])
     droplets = [with_history(droplet, bench.conditions, settings, drift) for droplet in droplets]
     air = replace(_air(droplets, bench.conditions), drift=drift)
     droplets = with_posteriors(droplets, bench, air)

@@ -25,10 +25,14 @@ def recorded(tmp_path, rng, count=12, **motion):
                  orientation=Orientation(0.0, 0.0, "bench"))  # fmt: skip
 
 
+def drift_of(given):
+    return find_drift(given, [free_fit(path.steps()) for path in given])
+
+
 def test_still_air_has_no_changing_current(tmp_path):
     """Of 60 recordings in steady air at most two show a change: two tests at 1 in 1000 each."""
     rng = np.random.default_rng(71)
-    found = [find_drift(recorded(tmp_path, rng, count=6, air=(2e-6, -5e-6))) for _ in range(60)]
+    found = [drift_of(recorded(tmp_path, rng, count=6, air=(2e-6, -5e-6))) for _ in range(60)]
     assert sum(len(drift.times) > 0 for drift in found) <= 2
 
 
@@ -36,7 +40,7 @@ def test_a_swinging_current_is_found_and_taken_out(tmp_path):
     """A gust of 8 um/s amplitude along and across gravity: its course is followed, and the steps lose it."""
     rng = np.random.default_rng(72)
     given = recorded(tmp_path, rng, gust=(8e-6, -8e-6))
-    drift = find_drift(given)
+    drift = drift_of(given)
     truth = np.sin(2 * np.pi * drift.times / 20.0)
     truth -= truth.mean()
     # Straight lines between knots 3 s apart miss a swing of 20 s by 5 %; each knot is known to about 1 um/s.
@@ -58,14 +62,14 @@ def test_one_droplet_that_changes_its_charge_is_no_air(tmp_path):
     rng = np.random.default_rng(73)
     lives = [Life(0.7e-6, 3), Life(0.8e-6, -4), Life(0.6e-6, 2), Life(0.9e-6, 5), Life(0.7e-6, -6),
              Life(0.8e-6, 2, changes=((15.0, 0.8e-6, 9),))]  # fmt: skip
-    drift = find_drift([record_path(rng, life, CAMERA) for life in lives])
+    drift = drift_of([record_path(rng, life, CAMERA) for life in lives])
     assert len(drift.times) == 0
 
 
 def test_few_droplets_or_short_recordings_have_no_changing_current():
     """With three droplets nothing can be told apart, and the empty drift leaves steps as they are."""
     path = record_path(np.random.default_rng(74), Life(0.7e-6, 3), CAMERA)
-    assert len(find_drift([path] * 3).times) == 0
+    assert len(drift_of([path] * 3).times) == 0
     steps = path.steps()
     assert Drift().taken_out(steps, np.asarray(path.times)) is steps
     assert Drift().std_of_mean(steps, np.asarray(path.times)) == 0.0
