@@ -178,7 +178,7 @@ def line_points(flat: NDArray[np.float32], angle: float, *, careful: bool = Fals
     strip, column, contrast = _peaks(sign * profiles, mask, sigma=sigma, pitch=pitch)
     if len(strip) < 4:
         return None
-    slope = _ground_slope(sign * profiles, mask, strip, column, half=pitch / 2)
+    slope = _ground_slope(sign * profiles, mask, strip, column, half=pitch / 2, least=2.5 * sigma)
     place, fine = refine_profile(sign * profiles, mask, strip, column, sigma=sigma, slope=slope)
     strip, place, contrast = strip[fine], place[fine], contrast[fine]
     middle = (strip + 0.5) * rows - 0.5
@@ -354,21 +354,28 @@ def _ground_slope(
     column: NDArray[np.int64],
     *,
     half: float,
+    least: float,
 ) -> FloatArray:
-    """Slope of the ground under each line, from the middles of the gaps to both sides; NaN at the picture's edge."""
+    """Slope of the ground under each line, from the middles of the gaps to both sides.
+
+    Near the picture's edge it is taken closer to the line, down to a distance `least`; NaN where that is cut too.
+    """
     smooth = _smooth(np.where(mask, profiles, 0.0), max(0.5, half / 6)) / np.maximum(
         _smooth(mask.astype(float), max(0.5, half / 6)), 1e-6
     )
-    levels = []
-    for side in (-half, half):
-        at = column + side
-        low = np.floor(at).astype(int)
-        inside = (low >= 0) & (low + 1 < mask.shape[1])
-        low = np.clip(low, 0, mask.shape[1] - 2)
-        part = at - np.floor(at)
-        level = (1 - part) * smooth[strip, low] + part * smooth[strip, low + 1]
-        levels.append(np.where(inside & mask[strip, low] & mask[strip, low + 1], level, np.nan))
-    return np.asarray((levels[1] - levels[0]) / (2 * half))
+    slope = np.full(len(column), np.nan)
+    for reach in (half, max(0.6 * half, least), min(half, least)):
+        levels = []
+        for side in (-reach, reach):
+            at = column + side
+            low = np.floor(at).astype(int)
+            inside = (low >= 0) & (low + 1 < mask.shape[1])
+            low = np.clip(low, 0, mask.shape[1] - 2)
+            part = at - np.floor(at)
+            level = (1 - part) * smooth[strip, low] + part * smooth[strip, low + 1]
+            levels.append(np.where(inside & mask[strip, low] & mask[strip, low + 1], level, np.nan))
+        slope = np.where(np.isfinite(slope), slope, (levels[1] - levels[0]) / (2 * reach))
+    return slope
 
 
 def refine_profile(

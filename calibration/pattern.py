@@ -34,7 +34,6 @@ FloatArray = NDArray[np.float64]
 PATTERNS = ("lines", "grid", "dots")
 
 UNBROKEN = 0.4  # continuity below which "lines" are rows of dots or squares
-WORST_RESIDUAL = 0.04  # of the pitch: rms above which marks are no lattice
 WORST_MARK = (
     0.015  # of the pitch: scatter of marks along a line, above which it is not ruled; noise may do 0.3 px
 )
@@ -120,7 +119,7 @@ def _search_diagonals(flat: NDArray[np.float32], pattern: str | None) -> Lattice
 def _lines_along(flat: NDArray[np.float32], angles: list[float], pattern: str | None) -> Lattice | Refusal:
     """Look for families of lines in given directions."""
     refusal = Refusal("no lines, grid or dots stand out from the picture", 0)
-    families: list[tuple[LinePoints, Marks]] = []
+    families: list[_Family] = []
     for angle in angles:
         found = _family(flat, angle)
         if isinstance(found, Refusal):
@@ -129,24 +128,38 @@ def _lines_along(flat: NDArray[np.float32], angles: list[float], pattern: str | 
             families.append(found)
     if not families:
         return refusal
-    first = max(families, key=lambda f: len(f[1].x))
-    second = next((f for f in families if _crosses(first[0], f[0])), None)
+    # A chance direction may collect marks of true lines, but it scatters.
+    sharpest = min(family.scatter for family in families)
+    families = [family for family in families if family.scatter <= max(3 * sharpest, 0.05)]
+    first = max(families, key=lambda family: len(family.marks.x))
+    second = next((family for family in families if _crosses(first.points, family.points)), None)
     if second is None or pattern == "lines":
         if pattern == "grid":
             return Refusal("lines run in one direction only; for a ruled scale use --pattern lines", 6)
-        return _accept("lines", "lines", first[1], flat)
-    return _accept(
-        "grid", "lines", _join(*sorted((first, second), key=lambda f: abs(np.sin(f[0].angle)))), flat
-    )
+        return _accept("lines", "lines", first.marks, flat)
+    return _accept("grid", "lines", _join(first, second), flat)
 
 
-def _family(flat: NDArray[np.float32], angle: float) -> tuple[LinePoints, Marks] | Refusal:
+@dataclass(frozen=True, slots=True)
+class _Family:
+    """Lines of one direction."""
+
+    points: LinePoints
+    marks: Marks
+    scatter: float  # px, of marks along a line
+
+
+def _family(flat: NDArray[np.float32], angle: float) -> _Family | Refusal:
     """Locate and number the lines of one direction."""
     points = line_points(flat, angle)
     if points is None:
         return Refusal("no lines, grid or dots stand out from the picture", 0)
     found = _number_lines(points)
-    return found if isinstance(found, Refusal) else _second_look(flat, points, found)
+    if isinstance(found, Refusal):
+        return found
+    points, marks = _second_look(flat, points, found)
+    fit = fit_lattice(marks, width=flat.shape[1], height=flat.shape[0])
+    return _uneven(fit) or _Family(points, marks, fit.mark_std)
 
 
 def _second_look(flat: NDArray[np.float32], points: LinePoints, marks: Marks) -> tuple[LinePoints, Marks]:
@@ -171,9 +184,10 @@ def _crosses(one: LinePoints, other: LinePoints) -> bool:
     return crossing < np.deg2rad(15) and 0.7 < one.pitch / other.pitch < 1.43
 
 
-def _join(first: tuple[LinePoints, Marks], second: tuple[LinePoints, Marks]) -> Marks:
-    """Give the marks of both families of a grid as one."""
-    one, two = first[1], second[1]
+def _join(first: _Family, second: _Family) -> Marks:
+    """Give the marks of both families of a grid as one, the one whose lines are crossed along the rows first."""
+    families = sorted((first, second), key=lambda family: abs(np.sin(family.points.angle)))
+    one, two = (family.marks for family in families)
     shift = int(one.cluster.max()) + 1
     return Marks(
         np.concatenate([one.x, two.x]),
@@ -295,6 +309,8 @@ def _number_nodes(flat: NDArray[np.float32], spots: Spots, *, kernel: float) -> 
     place, fine = refine_spots(
         _clean(flat, spots, steps, spots.place[rows]), spots.place[rows], kernel, steps=steps
     )
+    if fine.sum() < 9:
+        return Refusal("dots are there, but too few of them can be located", 3)
     return _node_marks(place[fine], np.rint(coordinate[rows][fine]).astype(np.int64))
 
 
@@ -344,13 +360,16 @@ def _accept(pattern: str, features: str, marks: Marks, flat: NDArray[np.float32]
         counts.append(int(index.max() - index.min()) + 1)
     if max(counts) < LEAST_LINES or min(counts) < LEAST_LINES - 1:
         return Refusal(f"only {max(counts)} lines are in the picture; at least {LEAST_LINES} are needed", 6)
-    pitch = 1 / np.hypot(*local_gradient(fit, np.array([fit.centre[0]]), np.array([fit.centre[1]]))[0].T)
-    scatter = max(
-        fit.mark_std / max(0.3, WORST_MARK * pitch.min()), fit.line_std / max(0.2, WORST_LINE * pitch.min())
-    )
-    if scatter > 1 and features != "corners":
-        return Refusal("lines or dots stand too unevenly for a reference pattern", 6)
-    rms = float(np.sqrt(np.mean(fit.residual**2)))
-    if rms > WORST_RESIDUAL * pitch.min():
-        return Refusal("lines or dots scatter too far about the best lattice for a reference pattern", 6)
+    problem = _uneven(fit) if features != "corners" else None
+    if problem is not None:
+        return problem
     return Lattice(pattern, features, marks, fit, tuple(counts), width, height)
+
+
+def _uneven(fit: LatticeFit) -> Refusal | None:
+    """Say if marks scatter more about the best lattice than those of a reference pattern do."""
+    centre = np.array([fit.centre[0]]), np.array([fit.centre[1]])
+    pitch = float((1 / np.linalg.norm(local_gradient(fit, *centre)[0], axis=1)).min())
+    if fit.mark_std > max(0.3, WORST_MARK * pitch) or fit.line_std > max(0.2, WORST_LINE * pitch):
+        return Refusal("lines or dots stand too unevenly for a reference pattern", 6)
+    return None

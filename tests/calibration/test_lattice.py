@@ -193,9 +193,8 @@ def test_neither_missing_nor_false_lines_shift_the_count(seed, pitch, missing, f
         [u + bend * pitch * ((u - 300) / 100) ** 2, np.tile(np.arange(12) * 32.0, keep.sum())], axis=1
     )
     true = true + rng.normal(0, 0.02 * pitch, true.shape) * np.array([1.0, 0.0])
-    assert np.median(stds) == pytest.approx(closed, rel=0.15)  # one scatters by 17 % (18 degrees of freedom)
-                               or [np.empty((0, 2))])  # fmt: skip
-    place = np.concatenate([true, scratches])
+    along = np.tile(np.arange(12) * 32.0, false)
+    place = np.concatenate([true, np.stack([np.repeat(rng.uniform(0, 600, false), 12), along], axis=1)])
     seed_mark = int(np.flatnonzero(index == lines // 2)[6])
     found = grow_numbers(
         place, np.array([[1 / pitch, 0.0]]), seed=seed_mark, unit=np.array([pitch, max(pitch, 32.0)])

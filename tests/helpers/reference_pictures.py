@@ -95,7 +95,7 @@ def render(pattern: Pattern, rng: np.random.Generator) -> Reference:
     i, j, gradient = lattice_coordinates(pattern, gx, gy)
     marks = _coverage(pattern, i, j, s, rng)
     marks = marks.reshape(pattern.height, s, pattern.width, s).mean(axis=(1, 3))
-    if pattern.part < 1 and pattern.kind != "dots":
+    if pattern.part < 1 and pattern.kind not in ("dots", "board"):
         marks = marks * _window(pattern, rng)
     level = 0.2 + pattern.contrast * (1 - marks if pattern.dark else marks)
     level *= _light(pattern, rng)
@@ -121,7 +121,17 @@ def _coverage(pattern, i, j, s, rng):
         second = _family(pattern, j, i, 1 / grad_i[1], rng)
         return 1 - (1 - first) * (1 - second)
     if pattern.kind == "board":
-        return 0.5 + 0.5 * _square_wave(pattern, i, 1 / grad_i[0]) * _square_wave(pattern, j, 1 / grad_i[1])
+        squares = 0.5 + 0.5 * _square_wave(pattern, i, 1 / grad_i[0]) * _square_wave(
+            pattern, j, 1 / grad_i[1]
+        )
+        if pattern.part == 1:
+            return squares
+        # Eight by six squares in a white room.
+        return (
+            squares
+            * ndtr((4 - np.abs(i)) / grad_i[0] / pattern.blur)
+            * ndtr((3 - np.abs(j)) / grad_i[1] / pattern.blur)
+        )
     ni, nj = np.rint(i), np.rint(j)
     dx, dy = (i - ni) / grad_i[0], (j - nj) / grad_i[1]
     if pattern.jitter:
