@@ -48,9 +48,8 @@ class Source:
     head: list[Frames] = field(default_factory=list)
 
     def __iter__(self) -> Iterator[Frames]:
-        while self.head:
-            yield self.head.pop(0)
-        yield from self.frames
+        while frames := self.head.pop(0) if self.head else next(self.frames, None):
+            yield frames  # not `yield from`, which would close the frames with this generator
 
     def put_back(self, frames: Frames) -> None:
         """Have frames come first again."""
