@@ -18,6 +18,7 @@ from tracker.records import FloatArray, IntArray
 STEP_THRESHOLD = 18.0  # one false step in 1000 droplets
 SWITCH_THRESHOLD = 22.0  # one false switch in 1000 droplets
 TREND_THRESHOLD = 10.83  # chi-square with one degree of freedom, 1 in 1000
+Z_LIMIT = 3.29  # two-sided 1 in 1000
 LEAST_SHARE = 0.04  # of the information on the drive that must lie on either side of a change
 LEAST_DETERMINANT = 0.02  # relative: below, speed and drive of one side cannot be told apart
 MOST_CHANGES = 8  # in one track
@@ -51,8 +52,9 @@ class History:
 
 
 def find_changes(
-    steps: Increments, times: FloatArray, conditions: Conditions, *, fit: FreeFit | None = None
-) -> History:
+    steps: Increments, times: FloatArray, conditions: Conditions, *, fit: FreeFit | None = None,
+    shared_rate: tuple[float, float] | None = None,
+) -> History:  # fmt: skip
     """Look for charge steps, evaporation and a switch to another droplet, until nothing more is found.
 
     Parameters
@@ -65,6 +67,9 @@ def find_changes(
         Of the bench, for what a change of radius does to speed and drive.
     fit : FreeFit, optional
         Of the steps, if it was made already.
+    shared_rate : tuple of float, optional
+        d(r^2)/dt that the droplets of the recording share, with its standard uncertainty, in m^2/s. A trend that
+        contradicts it is called one only where no charge step explains the track as well.
 
     Returns
     -------
@@ -88,7 +93,9 @@ def find_changes(
         if not np.all(np.isfinite(fit.drive_per_volt)) or len(steps) < 2 * MIN_INCREMENTS:
             break
         last = _trend(_Model(steps, part, column, fit), times, conditions) if trend is None else None
-        found = _best_change(_Model(steps, part, column, fit), times, last)
+        found = _best_change(
+            _Model(steps, part, column, fit), times, last, _is_odd(last, fit, conditions, shared_rate)
+        )
         if found is None:
             break
         changes.append(found)
@@ -137,12 +144,55 @@ class _Model:
         return both.columns[:, : base.shape[1]], both.columns[:, base.shape[1] :], both.data
 
 
-def _best_change(model: _Model, times: FloatArray, trend: Change | None) -> Change | None:
+def size_rate(
+    steps: Increments, times: FloatArray, conditions: Conditions, fit: FreeFit
+) -> tuple[float, float] | None:
+    """Rate at which the square of a droplet's radius changes, as if nothing else happened to it.
+
+    Parameters
+    ----------
+    steps : Increments
+        Of one droplet.
+    times : ndarray of shape (sightings,)
+        Start of exposure in s.
+    conditions : Conditions
+        Of the bench.
+    fit : FreeFit
+        Of the steps.
+
+    Returns
+    -------
+    rate, std : float
+        d(r^2)/dt in m^2/s with its standard uncertainty; None in place of both where it cannot be had.
+    """
+    if not np.all(np.isfinite(fit.drive_per_volt)):
+        return None
+    trend = _trend(
+        _Model(steps, np.zeros(len(steps), np.int64), np.empty((len(steps), 0)), fit), times, conditions
+    )
+    if trend is None or not trend.rate_std > 0:
+        return None
+    area = 2 * float(radius_from_fall_speed(fit.fall_speed, conditions)) ** 2
+    return area * trend.rate, area * trend.rate_std
+
+
+def _is_odd(
+    trend: Change | None, fit: FreeFit, conditions: Conditions, shared: tuple[float, float] | None
+) -> bool:
+    """Whether a trend contradicts what all droplets share."""
+    if trend is None or shared is None:
+        return False
+    area = 2 * float(radius_from_fall_speed(fit.fall_speed, conditions)) ** 2
+    return abs(area * trend.rate - shared[0]) > Z_LIMIT * float(np.hypot(area * trend.rate_std, shared[1]))
+
+
+def _best_change(model: _Model, times: FloatArray, trend: Change | None, odd: bool) -> Change | None:
     """Change whose statistic exceeds its threshold by most."""
     step, switch = _step(model, times), _switch(model, times)
     candidates = [step, switch, trend]
     found = [c for c in candidates if c is not None and c.statistic > c.threshold]
-    best = max(found, key=lambda c: c.statistic - _RANK[c.kind], default=None)
+    rank = _RANK | ({"evaporation": STEP_THRESHOLD} if odd else {})
+    best = max(found, key=lambda c: c.statistic - rank[c.kind], default=None)
     if best is switch and step in found and step is not None and switch is not None:
         # Two charge steps, of which only one is in the model yet, also look like a change of speed.
         second = _step(replace(model, part=_split(model.part, step.step)), times)

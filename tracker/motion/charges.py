@@ -72,6 +72,8 @@ class Number:
     number: int | None = None
     probability: float = NAN
     none: float = NAN  # probability that the charge is on no whole number
+    values: IntArray | None = None  # (K,) the numbers that were weighed
+    shares: FloatArray | None = None  # (K,) their probabilities
 
 
 def charge_numbers(droplets: list[Droplet], shared: SharedPart) -> list[Number]:
@@ -101,8 +103,9 @@ def charge_numbers(droplets: list[Droplet], shared: SharedPart) -> list[Number]:
     )  # fmt: skip
     for k, i in enumerate(good):
         found[i] = Number(
-            int(numbers.number[k]), float(numbers.probability[k]), float(numbers.outlier_probability[k])
-        )
+            int(numbers.number[k]), float(numbers.probability[k]), float(numbers.outlier_probability[k]),
+            numbers.number_values[k], numbers.number_probability[k],
+        )  # fmt: skip
     return found
 
 

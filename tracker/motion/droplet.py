@@ -7,14 +7,16 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from physics.droplet import Conditions
-from physics.motion import MIN_INCREMENTS, DropletPosterior, FreeFit, droplet_posterior, input_responses
+from physics.motion import DropletPosterior, FreeFit, Increments, droplet_posterior, free_fit, input_responses
 from tracker.bench import Bench
-from tracker.motion.aircurrent import AirCurrent, Drift
-from tracker.motion.changes import History, find_changes
+from tracker.motion.aircurrent import AirCurrent, Drift, robust_mean
+from tracker.motion.changes import History, find_changes, size_rate
 from tracker.motion.judge import is_stuck
 from tracker.motion.rows import NAN
 from tracker.motion.velocity import Path, without_outliers
 from tracker.records import IntArray, Settings
+
+LEAST_SHARING = 5  # droplets whose rates of shrinking are compared
 
 
 @dataclass(frozen=True, slots=True)
@@ -62,38 +64,54 @@ def cleaned(path: Path, settings: Settings) -> Droplet:
     """
     if len(path) < max(settings.min_frames, 2):
         return Droplet(path)
-    return Droplet(*without_outliers(path))
+    left = Droplet(*without_outliers(path))
+    return left if len(left.path) >= settings.min_frames else replace(left, fit=None)
 
 
-def with_history(droplet: Droplet, conditions: Conditions, settings: Settings, drift: Drift) -> Droplet:
-    """Look for what happened to a droplet, the air's change of speed taken out.
+def with_histories(droplets: list[Droplet], conditions: Conditions, drift: Drift) -> list[Droplet]:
+    """Look for what happened to the droplets, the air's change of speed taken out.
 
     Parameters
     ----------
-    droplet : Droplet
+    droplets : list of Droplet
         Cleaned.
     conditions : Conditions
         Of the bench.
-    settings : Settings
-        Least number of sightings.
     drift : Drift
         Of the air.
 
     Returns
     -------
-    droplet : Droplet
-        Without a history if it is too short or does not move.
+    droplets : list of Droplet
+        In the same order; without a history where a droplet is too short or does not move.
     """
-    path = droplet.path
-    if len(path) < max(settings.min_frames, 2) or is_stuck(path, conditions):
-        return droplet
-    steps = path.steps()
-    if len(steps) < MIN_INCREMENTS:
-        return droplet
-    times = np.asarray(path.times)
-    still = drift.taken_out(steps, times)
-    fit = droplet.fit if still is steps else None
-    return replace(droplet, history=find_changes(still, times, conditions, fit=fit))
+    ready: dict[int, tuple[Increments, FreeFit]] = {}
+    for i, droplet in enumerate(droplets):
+        if droplet.fit is None or is_stuck(droplet.path, conditions):
+            continue
+        steps = droplet.path.steps()
+        still = drift.taken_out(steps, np.asarray(droplet.path.times))
+        ready[i] = (still, droplet.fit if still is steps else free_fit(still))
+    shared = _shared_rate(droplets, ready, conditions)
+    done = list(droplets)
+    for i, (steps, fit) in ready.items():
+        times = np.asarray(droplets[i].path.times)
+        history = find_changes(steps, times, conditions, fit=fit, shared_rate=shared)
+        done[i] = replace(droplets[i], history=history)
+    return done
+
+
+def _shared_rate(
+    droplets: list[Droplet], ready: dict[int, tuple[Increments, FreeFit]], conditions: Conditions
+) -> tuple[float, float] | None:
+    """Find d(r^2)/dt common to all droplets in m^2/s; None if they are too few to say."""
+    rates = [
+        size_rate(s, np.asarray(droplets[i].path.times), conditions, fit) for i, (s, fit) in ready.items()
+    ]
+    known = [rate for rate in rates if rate is not None]
+    if len(known) < LEAST_SHARING:
+        return None
+    return robust_mean(*np.array(known).T)
 
 
 def with_posteriors(droplets: list[Droplet], bench: Bench, air: AirCurrent) -> list[Droplet]:

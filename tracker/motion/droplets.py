@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import hashlib
 from collections.abc import Sequence
 from dataclasses import dataclass, field, replace
 from typing import Any
@@ -13,7 +14,7 @@ from tracker.bench import Bench
 from tracker.motion.aircurrent import AirCurrent, find_air_current, find_drift
 from tracker.motion.charges import Number, SharedPart, charge_numbers, charge_unit_of, unit_json
 from tracker.motion.decided import Decided, apply_decisions
-from tracker.motion.droplet import Droplet, cleaned, with_history, with_posteriors
+from tracker.motion.droplet import Droplet, cleaned, with_histories, with_posteriors
 from tracker.motion.field import exposure_of
 from tracker.motion.fieldclock import clock_warnings
 from tracker.motion.judge import Facts, balances, is_stuck, reasons_of
@@ -53,6 +54,26 @@ class Evaluation:
     warnings: tuple[str, ...] = ()
 
 
+@dataclass(frozen=True, slots=True)
+class Analysis:
+    """Fits of all droplets of one recording: all that a person's verdicts do not change."""
+
+    orientation: Orientation
+    droplets: list[Droplet]
+    air: AirCurrent
+    shared: SharedPart
+    numbers: list[Number]
+    segments: list[list[SegmentRow]]
+
+
+@dataclass(slots=True)
+class Memo:
+    """The last analysis and what it was made from, for someone who evaluates one recording again and again."""
+
+    key: str = ""
+    analysis: Analysis | None = None
+
+
 def evaluate_droplets(
     tracks: Tracks,
     recording: Recording,
@@ -62,6 +83,7 @@ def evaluate_droplets(
     settings: Settings,
     decisions: Sequence[Decision] = (),
     cuts: Sequence[int] | IntArray = (),
+    memo: Memo | None = None,
 ) -> Evaluation:
     """Work out speeds, radii, charges and verdicts of all droplets of one recording.
 
@@ -81,6 +103,8 @@ def evaluate_droplets(
         Of a person, in the order in which they were made.
     cuts : sequence of int, optional
         Frames at which the camera was bumped.
+    memo : Memo, optional
+        Its analysis is used again if tracks, field, bench and settings are still the same; else it is replaced.
 
     Returns
     -------
@@ -88,20 +112,18 @@ def evaluate_droplets(
         One row for every droplet number; what could not be measured is empty and has a reason.
     """
     decided = apply_decisions(tracks, recording, decisions)
-    orientation, droplets = _tracked(decided, recording, field, bench, settings=settings, cuts=cuts)
-    moving = [
-        (d.path, d.fit) for d in droplets if d.fit is not None and not is_stuck(d.path, bench.conditions)
-    ]
-    drift = find_drift([path for path, _ in moving], [fit for _, fit in moving])
-    droplets = [with_history(droplet, bench.conditions, settings, drift) for droplet in droplets]
-    air = replace(_air(droplets, bench.conditions), drift=drift)
-    droplets = with_posteriors(droplets, bench, air)
-    shared = SharedPart.of(droplets, bench)
-    numbers = charge_numbers(droplets, shared)
-    segments = [segment_rows(droplet, field) for droplet in droplets]
+    memo = Memo() if memo is None else memo
+    key = _input_key(decided, recording, field, bench, settings=settings, cuts=cuts)
+    if memo.analysis is None or memo.key != key:
+        memo.analysis = _analyse(decided, recording, field, bench, settings=settings, cuts=cuts)
+        memo.key = key
+    made = memo.analysis
+    orientation, droplets, air, shared, numbers = (
+        made.orientation, made.droplets, made.air, made.shared, made.numbers,
+    )  # fmt: skip
     rests = [
         [] if d.history is None else balances(rows, d.history)
-        for d, rows in zip(droplets, segments, strict=True)
+        for d, rows in zip(droplets, made.segments, strict=True)
     ]
     rows = []
     for i, droplet in enumerate(droplets):
@@ -115,13 +137,49 @@ def evaluate_droplets(
     exposure = exposure_of(bench, recording)
     return Evaluation(
         decided.tracks, readonly(decided.linked, np.int64), readonly(used, np.bool_), tuple(rows),
-        tuple(row for part in segments for row in part),
+        tuple(row for part in made.segments for row in part),
         tuple(row for d, rest in zip(droplets, rests, strict=True) for row in change_rows(d, rest)),
         _orientation_json(orientation), air.plain(), exposure, unit_json(charge_unit_of(droplets, rows, shared)),
         shared.budget(droplets, rows), details(droplets, rests) | _decisions_json(decided),
         (*orientation.warnings, *decided.warnings, *_exposure_warning(bench, exposure), *shrinking_warnings(droplets),
          *clock_warnings(field, decided.tracks, recording, bench)),
     )  # fmt: skip
+
+
+def _analyse(
+    decided: Decided, recording: Recording, field: Field, bench: Bench, *, settings: Settings,
+    cuts: Sequence[int] | IntArray,
+) -> Analysis:  # fmt: skip
+    """Fit all droplets, the air that carries them and the charge numbers that they share."""
+    orientation, droplets = _tracked(decided, recording, field, bench, settings=settings, cuts=cuts)
+    moving = [
+        (d.path, d.fit) for d in droplets if d.fit is not None and not is_stuck(d.path, bench.conditions)
+    ]
+    drift = find_drift([path for path, _ in moving], [fit for _, fit in moving])
+    droplets = with_histories(droplets, bench.conditions, drift)
+    air = replace(_air(droplets, bench.conditions), drift=drift)
+    droplets = with_posteriors(droplets, bench, air)
+    shared = SharedPart.of(droplets, bench)
+    numbers = charge_numbers(droplets, shared)
+    segments = [segment_rows(droplet, field) for droplet in droplets]
+    return Analysis(orientation, droplets, air, shared, numbers, segments)
+
+
+def _input_key(
+    decided: Decided, recording: Recording, field: Field, bench: Bench, *, settings: Settings,
+    cuts: Sequence[int] | IntArray,
+) -> str:  # fmt: skip
+    """Hash of all that an analysis depends on."""
+    seen = decided.tracks.sightings
+    arrays = (
+        decided.tracks.droplet, seen.frame, seen.x, seen.y, seen.x_std, seen.y_std, seen.brightness, seen.width,
+        seen.flags, decided.trimmed, recording.frame_times, recording.repeated, field.knot_times, field.knot_volts,
+        field.toggle_std, np.asarray(cuts, np.int64),
+    )  # fmt: skip
+    made = hashlib.blake2b(repr((bench.digest, settings, field.segments)).encode(), digest_size=16)
+    for array in arrays:
+        made.update(np.ascontiguousarray(array).tobytes())
+    return made.hexdigest()
 
 
 def _tracked(

@@ -14,7 +14,8 @@ from diffusing_droplets import CONDITIONS
 from happening_droplets import Camera, Life, evaporated, record_path, schedule
 
 from physics.droplet import ELEMENTARY_CHARGE, droplet_mobility, fall_speed
-from tracker.motion.changes import STEP_THRESHOLD, find_changes, gains_of_suffix
+from physics.motion import free_fit
+from tracker.motion.changes import STEP_THRESHOLD, find_changes, gains_of_suffix, size_rate
 
 STRONG = Camera(steps=schedule(4e4))
 WEAK = Camera(steps=schedule(1.5e4))
@@ -45,6 +46,40 @@ def test_one_elementary_charge_at_mid_track_is_found_and_called_a_step(radius):
     found = kinds(np.random.default_rng(22), Life(radius, 5, changes=((12.0, radius, 6),)), STRONG, 40)
     # At power 0.99 and class 0.98, 4 or more of 40 fail in 0.8 % of seeds.
     assert sum("charge_step" in k for k in found) >= 37
+
+
+def test_what_all_droplets_share_tells_a_step_from_evaporation():
+    """Among droplets that keep their size a step of 0.4 um is never called evaporation; real evaporation still is."""
+    rng, radius = np.random.default_rng(31), 0.4e-6
+    life = Life(radius, 5, changes=((12.0, radius, 6),))
+    shrinking = evaporated(Life(1.0e-6, 5), 0.1, 24.0)
+    for _ in range(40):
+        path = record_path(rng, life, STRONG)
+        found = find_changes(path.steps(), np.asarray(path.times), CONDITIONS, shared_rate=(0.0, 1e-16))
+        assert found.changes[0].kind == "charge_step"
+    shared = (2 * (1.0e-6) ** 2 * shrinking.shrinking, 3e-16)
+    kinds = Counter()
+    for _ in range(20):
+        path = record_path(rng, shrinking, STRONG)
+        found = find_changes(path.steps(), np.asarray(path.times), CONDITIONS, shared_rate=shared)
+        kinds.update(change.kind for change in found.changes)
+    assert kinds["evaporation"] >= 18  # power 0.99 and class 1.0, as without what others share
+    assert kinds["charge_step"] <= 1  # false steps at 2 in 1000: two of 20 happen in 0.1 % of seeds
+
+
+def test_the_rate_of_shrinking_is_had_with_its_uncertainty_whether_it_shows_or_not():
+    """d(r^2)/dt pulls about the truth, for droplets that shrink a little and for those that do not."""
+    rng, pulls = np.random.default_rng(32), []
+    for share in (0.0, 0.02):
+        for radius in (0.5e-6, 0.9e-6):
+            life = evaporated(Life(radius, 4), share, 24.0)
+            for _ in range(25):
+                path = record_path(rng, life, STRONG)
+                steps = path.steps()
+                rate, std = size_rate(steps, np.asarray(path.times), CONDITIONS, free_fit(steps))
+                pulls.append((rate - 2 * radius**2 * life.shrinking) / std)
+    # 100 pulls of unit variance; the radius that scales the rate is itself known to a few per cent.
+    assert np.sqrt(np.mean(np.square(pulls))) == pytest.approx(1.0, abs=4 / np.sqrt(200))
 
 
 def test_a_step_is_placed_in_time_and_both_charges_are_those_before_and_after():
