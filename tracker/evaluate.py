@@ -10,12 +10,14 @@ from tracker.bench import Bench, load_bench
 from tracker.errors import BenchError, ResultError
 from tracker.keeping.decisions import append_decision, make_decision, read_decisions
 from tracker.keeping.store import Result, read_result, write_result
-from tracker.motion.droplets import evaluate_droplets
+from tracker.motion.droplets import Analysis, Memo, evaluate_droplets
 from tracker.provenance import assemble, field_from_json, recording_from_json, tracks_from_table
 from tracker.records import Field, Recording, Settings, Tracks
 
 
-def evaluate_result(folder: Path | str, *, bench: Bench | Path | str | None = None) -> Result:
+def evaluate_result(
+    folder: Path | str, *, bench: Bench | Path | str | None = None, memo: Memo | None = None
+) -> Result:
     """Evaluate a result again and write it in place.
 
     Parameters
@@ -24,6 +26,9 @@ def evaluate_result(folder: Path | str, *, bench: Bench | Path | str | None = No
         Result folder.
     bench : Bench, Path or str, optional
         The bench or its file; if not given, the file that was used before, or one found by the recording's place.
+    memo : Memo, optional
+        Kept by someone who evaluates the same result again and again: fits are done again only if their input
+        changed.
 
     Returns
     -------
@@ -35,8 +40,19 @@ def evaluate_result(folder: Path | str, *, bench: Bench | Path | str | None = No
     FallriseError
         If the folder, the bench or a decision cannot be used; the old result stays.
     """
-    folder = Path(folder)
-    old = read_result(folder)
+    return _evaluate_again(read_result(folder), Path(folder), bench, memo)
+
+
+def _evaluate_again(
+    old: Result, folder: Path, bench: Bench | Path | str | None = None, memo: Memo | None = None
+) -> Result:
+    """Work out a result that was just read again and write it in place."""
+    result = _evaluated(old, folder, bench, memo)
+    return write_result(result, folder, tables=result.recording["settings"]["tables"])
+
+
+def _evaluated(old: Result, folder: Path, bench: Bench | Path | str | None, memo: Memo | None) -> Result:
+    """Work out a stored result again; nothing is written."""
     try:
         recording = recording_from_json(old.recording, (folder / old.recording["path"]).resolve())
         settings = _settings(old.recording["settings"])
@@ -48,24 +64,51 @@ def evaluate_result(folder: Path | str, *, bench: Bench | Path | str | None = No
     field = _field(old, tracks, recording, loaded)
     evaluation = evaluate_droplets(
         tracks, recording, field, loaded, settings=settings, decisions=read_decisions(folder),
-        cuts=old.recording["seeing"].get("cuts", ()),
+        cuts=old.recording["seeing"].get("cuts", ()), memo=memo,
     )  # fmt: skip
     seeing = {
         "report": old.recording["seeing"],
         "warnings": tuple(old.recording["seeing"].get("warnings", ())),
     }
-    result = assemble(evaluation, recording=recording, field=field, bench=loaded, settings=settings, seeing=seeing,
-                      folder=folder)  # fmt: skip
-    return write_result(result, folder, tables=settings.tables)
+    return assemble(evaluation, recording=recording, field=field, bench=loaded, settings=settings, seeing=seeing,
+                    folder=folder)  # fmt: skip
 
 
-def decide_and_evaluate(folder: Path | str, **decision: Any) -> Result:
+def analyse_result(result: Result, memo: Memo) -> Analysis:
+    """Give the fits behind a result, with the present bench and decisions; nothing is written.
+
+    Parameters
+    ----------
+    result : Result
+        Read from its folder.
+    memo : Memo
+        Keeps the fits for the next evaluation.
+
+    Returns
+    -------
+    analysis : Analysis
+        Droplets with their paths, histories and posteriors, in the order of their numbers.
+
+    Raises
+    ------
+    FallriseError
+        If the bench or a decision cannot be used.
+    """
+    _evaluated(result, result.folder or Path(), None, memo)
+    if memo.analysis is None:
+        raise ResultError(str(result.folder), "gives no analysis; measure the recording again")
+    return memo.analysis
+
+
+def decide_and_evaluate(folder: Path | str, *, memo: Memo | None = None, **decision: Any) -> Result:
     """Append a person's decision to a result and evaluate it again.
 
     Parameters
     ----------
     folder : Path or str
         Result folder.
+    memo : Memo, optional
+        As for `evaluate_result`.
     **decision
         As `tracker.keeping.decisions.make_decision` takes it.
 
@@ -74,9 +117,9 @@ def decide_and_evaluate(folder: Path | str, **decision: Any) -> Result:
     result : Result
         With the decision obeyed.
     """
-    made = make_decision(read_result(folder), **decision)
-    append_decision(Path(folder), made)
-    return evaluate_result(folder)
+    old = read_result(folder)
+    append_decision(Path(folder), make_decision(old, **decision))
+    return _evaluate_again(old, Path(folder), memo=memo)
 
 
 def _settings(stored: dict[str, Any]) -> Settings:

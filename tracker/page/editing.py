@@ -97,8 +97,11 @@ def _apply(results: Results, key: str, body: Mapping[str, Any], make: Any) -> Op
         if body.get("revision") != current:
             text = "This result was changed elsewhere since this page read it; nothing was overwritten."
             raise RefusedError(409, text, {"revision": current})
-        decide_and_evaluate(folder, **make(results.read(key, folder)))
-        return results.read(key, folder)
+        decision = make(results.read(key, folder))
+        keeper = results.keeper(key)
+        with keeper.lock:
+            written = decide_and_evaluate(folder, memo=keeper.memo, **decision)
+        return results.hold(key, folder, written)
 
 
 def _whole(body: Mapping[str, Any], name: str) -> int | None:

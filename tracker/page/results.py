@@ -15,6 +15,7 @@ from tracker.errors import ResultError
 from tracker.keeping.decisions import read_decisions
 from tracker.keeping.store import Result, read_result
 from tracker.motion.decided import effective
+from tracker.motion.droplets import Analysis, Memo
 from tracker.page.library import Library, revision_of
 from tracker.page.words import unit_words
 from tracker.records import Decision
@@ -22,6 +23,14 @@ from tracker.records import Decision
 KEPT = 4  # results held in memory
 NEAR = 6.0  # px within which a track is that of a decision
 JUDGEMENTS = ("keep", "doubt", "reject")
+
+
+@dataclass(slots=True)
+class Keeper:
+    """Fits of one result, kept from one evaluation to the next; the lock is held while they are worked out."""
+
+    memo: Memo = field(default_factory=Memo)
+    lock: threading.Lock = field(default_factory=threading.Lock)
 
 
 @dataclass(slots=True)
@@ -34,8 +43,8 @@ class Opened:
     revision: str
     result: Result
     decisions: tuple[Decision, ...]
-    analysis: Any = None  # fits for the plots, once they were asked for
-    working: threading.Lock = field(default_factory=threading.Lock)  # held while they are worked out
+    keeper: Keeper
+    analysis: Analysis | None = None  # fits for the plots, once they were asked for
 
     @property
     def recording(self) -> dict[str, Any]:
@@ -54,6 +63,7 @@ class Results:
 
     library: Library
     _held: OrderedDict[str, Opened] = field(default_factory=OrderedDict)
+    _keepers: dict[str, Keeper] = field(default_factory=dict)
     _locks: dict[str, threading.Lock] = field(default_factory=dict)
     _guard: threading.Lock = field(default_factory=threading.Lock)
 
@@ -75,11 +85,24 @@ class Results:
         if held is not None and held.revision == revision:
             self._held.move_to_end(key)
             return held
-        result, decisions = read_result(folder), read_decisions(folder)
-        opened = Opened(key, self.library.name(key), folder, revision, result, decisions)
+        return self._hold(key, folder, revision, read_result(folder))
+
+    def hold(self, key: str, folder: Path, result: Result) -> Opened:
+        """Take in a result that was just written; the caller holds its lock."""
+        return self._hold(key, folder, revision_of(folder), result)
+
+    def keeper(self, key: str) -> Keeper:
+        """Kept fits of one result."""
+        with self._guard:
+            return self._keepers.setdefault(key, Keeper())
+
+    def _hold(self, key: str, folder: Path, revision: str, result: Result) -> Opened:
+        name, decisions = self.library.name(key), read_decisions(folder)
+        opened = Opened(key, name, folder, revision, result, decisions, self.keeper(key))
         self._held[key] = opened
         while len(self._held) > KEPT:
-            self._held.popitem(last=False)
+            gone, _ = self._held.popitem(last=False)
+            self._keepers.pop(gone, None)
         return opened
 
 

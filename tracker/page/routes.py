@@ -16,7 +16,7 @@ from starlette.responses import FileResponse, JSONResponse, Response
 from starlette.routing import BaseRoute, Route
 
 from tracker.page import exports
-from tracker.page.detail import droplet_detail, droplet_numbers
+from tracker.page.detail import droplet_detail, droplet_fits
 from tracker.page.editing import decide, undo
 from tracker.page.errors import RefusedError
 from tracker.page.jobs import Job
@@ -103,9 +103,9 @@ async def droplet(request: Request) -> Response:
     return await _of_droplet(request, droplet_detail)
 
 
-async def numbers(request: Request) -> Response:
-    """Give the charge numbers of one droplet."""
-    return await _of_droplet(request, droplet_numbers)
+async def fits(request: Request) -> Response:
+    """Give residuals and charge numbers of one droplet."""
+    return await _of_droplet(request, droplet_fits)
 
 
 async def _of_droplet(request: Request, give: Callable[[Opened, int], dict[str, Any]]) -> Response:
@@ -292,7 +292,7 @@ ROUTES: list[BaseRoute] = [
     Route(_ONE + "/revision", revision),
     Route(_ONE + "/tracks", tracks),
     Route(_ONE + "/droplets/{droplet}", droplet),
-    Route(_ONE + "/droplets/{droplet}/numbers", numbers),
+    Route(_ONE + "/droplets/{droplet}/fits", fits),
     Route(_ONE + "/pack", pack, methods=["POST"]),
     Route(_ONE + "/frames/{hash}/{variant}/{frame}.jpg", frame),
     Route(_ONE + "/small.jpg", small),

@@ -67,27 +67,36 @@ export class Details {
     this.draw();
   }
 
-  // Heights come at once; the charge numbers need all droplets of the recording and come when they are worked out.
+  // Heights come at once; residuals and charge numbers need the fits of all droplets and come when these are done.
   async setDroplet(droplet) {
     const revision = this.view.result.revision, here = `/api/results/${this.view.id}/droplets/${droplet}`;
     const current = () => this.wanted === droplet && !this.view.closed && this.view.result.revision === revision;
     this.wanted = droplet;
     this.cropsOf = null;
     if (this.tab === "crops") this.crops();
+    let said = "";
     try {
       const detail = await get(`${here}?revision=${revision}`);
       if (!current()) return;
-      this.detail = detail;
-      this.motionText.textContent = detail.motion_text;
-      this.numbers = null;
+      const before = this.detail?.droplet === droplet ? this.detail : { residual_time: [], residual: [] };
+      this.detail = { ...detail, residual_time: before.residual_time, residual: before.residual };
+      if (before.droplet !== droplet) this.numbers = null;
+      said = detail.text;
+      this.motionText.textContent = said;
       this.numberText.textContent = "Being worked out \u2026";
       this.draw();
-      const found = await get(`${here}/numbers?revision=${revision}`);
+      const fits = await get(`${here}/fits?revision=${revision}`);
       if (!current()) return;
-      this.numbers = found.numbers;
-      this.numberText.textContent = found.text;
+      Object.assign(this.detail, { residual_time: fits.residual_time, residual: fits.residual });
+      this.numbers = fits.numbers;
+      this.motionText.textContent = `${said} ${fits.residual_text}`;
+      this.numberText.textContent = fits.number_text;
       this.draw();
-    } catch (error) { if (current() && error.status !== 409) complain(error); }
+    } catch (error) {
+      if (!current() || error.status === 409) return;
+      this.motionText.textContent = `${said} No residuals: ${error.message}`;
+      this.numberText.textContent = error.message;
+    }
   }
 
   setTime(frame) {

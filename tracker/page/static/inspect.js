@@ -38,13 +38,14 @@ export class InspectView {
     this.timeBox = el("div", { class: "timebar", tabIndex: 0, role: "slider", "aria-label": "Time" });
     const watch = el("section", { class: "watch", "aria-label": "Watch" }, this.stageBox, this.timeBox);
     this.count = el("span", { class: "count" });
+    this.warned = el("button", { type: "button", class: "warned", onclick: () => { this.details.open("history"); document.getElementById("tab-history").focus(); } });
     this.filter = el("select", { id: "filter", onchange: () => { this.table.setFilter(this.filter.value); this.sayCount(); } });
     const wrap = el("div", { class: "table-wrap", tabIndex: -1 });
     this.facts = el("div", { class: "facts" });
     this.detailBox = el("div", { class: "detail" }, this.facts);
     this.decideBox = el("section", { class: "decide", "aria-label": "Decide" });
     const judge = el("section", { class: "judge", "aria-label": "Judge" },
-      el("div", { class: "table-head" }, el("h2", {}, "Droplets"), this.count, el("label", { htmlFor: "filter" }, "Show"), this.filter),
+      el("div", { class: "table-head" }, el("h2", {}, "Droplets"), this.count, this.warned, el("label", { htmlFor: "filter" }, "Show"), this.filter),
       wrap, this.detailBox, this.decideBox);
     this.main.replaceChildren(el("h1", { class: "hidden" }, `Recording ${result.name}`), el("div", { class: "inspect" }, watch, judge));
     this.table = new DropletTable(wrap, { onChoose: (d) => this.choose(d), reasons: this.reasons });
@@ -86,9 +87,11 @@ export class InspectView {
     if (first) {
       this.stage.setPicture(result.width, result.height);
       this.player.setTimes(result.times, result.segments);
-      const [warning, ...more] = result.warnings;
-      if (warning) notice(more.length ? `${warning} (and ${more.length} more, under History)` : warning, { key: "warning" });
     }
+    const told = result.warnings.length;
+    this.warned.hidden = !told;
+    this.warned.textContent = told === 1 ? "1 warning" : `${told} warnings`;
+    this.warned.title = result.warnings.join("\n");
     this.fillFilter();
     this.table.set(result.droplets);
     this.sayCount();
