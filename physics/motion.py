@@ -4,6 +4,7 @@
 `physics.likelihood`: restricted likelihood of the place noise, sufficient statistics.
 `physics.freefit`: speeds, diffusion and place noise without any law; speeds of segments; stray sightings.
 `physics.posterior`: radius and charges with the law. `physics.air_current`: vertical speed of the air.
+`physics.population`: diffusion of many droplets as a check of the scale.
 `physics.responses`: how the bench's shared inputs act on the law.
 """
 
@@ -24,6 +25,7 @@ from physics.increments import (
     whitened,
 )
 from physics.likelihood import MIN_INCREMENTS
+from physics.population import PopulationRatio, population_diffusion
 from physics.posterior import NO_CHARGE_REASONS, DropletPosterior, droplet_posterior
 from physics.responses import input_responses
 
@@ -33,6 +35,7 @@ __all__ = [
     "DropletPosterior",
     "FreeFit",
     "Increments",
+    "PopulationRatio",
     "SegmentSpeeds",
     "Whitened",
     "air_current",
@@ -41,6 +44,7 @@ __all__ = [
     "free_fit",
     "increments",
     "input_responses",
+    "population_diffusion",
     "robust_increments",
     "segment_occupancy",
     "segment_speeds",

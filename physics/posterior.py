@@ -64,6 +64,7 @@ class DropletPosterior:
     mass_std: float  # kg
     diffusion_ratio: float  # free D over that of the radius from the fall speed; NaN if the latter is vague
     diffusion_z: float  # ln(diffusion_ratio) over its standard deviation
+    diffusion_speed_std: float  # part of that standard deviation that comes from the fall speed
     inconsistent: bool  # fall speed and Brownian motion point to radii that do not overlap
     main_part: int  # longest part that saw the field; -1 if none
     number_values: NDArray[np.int64]  # (M,) charge numbers, -nmax..nmax
@@ -311,7 +312,7 @@ def _empty(reason: str, parts: int, fit: FreeFit | None) -> DropletPosterior:
         radius_interval_95=(nan, nan), charge=np.full(parts, nan), charge_std=np.full(parts, nan),
         charge_cov=np.full((parts, parts), nan), charge_interval_68=np.full((parts, 2), nan),
         charge_interval_95=np.full((parts, 2), nan), fall_speed=nan, fall_speed_std=nan, mass=nan, mass_std=nan,
-        diffusion_ratio=nan, diffusion_z=nan, inconsistent=False, main_part=-1,
+        diffusion_ratio=nan, diffusion_z=nan, diffusion_speed_std=nan, inconsistent=False, main_part=-1,
         number_values=np.empty(0, np.int64), number_log_likelihood=none,
         part_number_log_likelihood=np.empty((parts, 0)), log_radius=none, radius_weight=none,
         charge_at_radius=np.empty((0, parts)), charge_std_at_radius=np.empty((0, parts)),
@@ -363,9 +364,14 @@ def _diffusion_check(fit: FreeFit, table: Law, air_speed: float, air_std: float)
     variance = fit.fall_speed_std**2 * law_diffusion / fit.diffusion + air_std**2
     if variance > (RATIO_LIMIT * speed) ** 2:
         return {}
-    ratio = fit.diffusion / law_diffusion
-    spread = np.sqrt(fit.log_diffusion_std**2 + slope**2 * variance / speed**2)
-    return {"diffusion_ratio": ratio, "diffusion_z": float(np.log(ratio) / spread)}
+    log_ratio, by_speed = (
+        float(np.log(fit.diffusion / law_diffusion)),
+        abs(slope) * float(np.sqrt(variance)) / speed,
+    )
+    return {
+        "diffusion_ratio": float(np.exp(log_ratio)), "diffusion_speed_std": by_speed,
+        "diffusion_z": log_ratio / float(np.hypot(fit.log_diffusion_std, by_speed)),
+    }  # fmt: skip
 
 
 def _charge_results(
