@@ -11,7 +11,6 @@ from tracker.seeing.fit import Camera, Windows, inverses
 
 Float = NDArray[np.float64]
 
-_ROUNDS = 8
 _CHUNK = 256  # pairs at a time: the Jacobian is kept whole
 _DAMPING = 0.02  # share added to the diagonal, after Levenberg: near pairs are almost singular
 
@@ -39,7 +38,7 @@ class Pairs:
         return Pairs(self.values[rows], self.covariance[rows], self.chi2[rows])
 
 
-def fit_pairs(windows: Windows, start: Float, *, camera: Camera, width: float) -> Pairs:
+def fit_pairs(windows: Windows, start: Float, *, camera: Camera, width: float, rounds: int = 8) -> Pairs:
     """Fit two spots of one width to each window.
 
     Parameters
@@ -52,6 +51,8 @@ def fit_pairs(windows: Windows, start: Float, *, camera: Camera, width: float) -
         Noise of a pixel.
     width : float
         Standard deviation of a spot in px.
+    rounds : int
+        Gauss-Newton steps.
 
     Returns
     -------
@@ -60,17 +61,19 @@ def fit_pairs(windows: Windows, start: Float, *, camera: Camera, width: float) -
         the light is shared.
     """
     parts = [slice(i, i + _CHUNK) for i in range(0, len(start), _CHUNK)]
-    done = [_fit(windows.take(np.arange(len(start))[s]), start[s], camera, width) for s in parts]
+    done = [_fit(windows.take(np.arange(len(start))[s]), start[s], (camera, width, rounds)) for s in parts]
     if not done:
         return Pairs(np.empty((0, 6)), np.empty((0, 6, 6)), np.empty(0))
     return Pairs(*(np.concatenate([getattr(d, n) for d in done]) for n in ("values", "covariance", "chi2")))
 
 
-def _fit(windows: Windows, start: Float, camera: Camera, width: float) -> Pairs:
+def _fit(windows: Windows, start: Float, how: tuple[Camera, float, int]) -> Pairs:
+    """Fit one chunk."""
+    camera, width, rounds = how
     p = start.copy()
     p[:, [1, 4]] -= windows.left[:, None]
     p[:, [2, 5]] -= windows.top[:, None]
-    for _ in range(_ROUNDS):
+    for _ in range(rounds):
         gradient, matrix, _ = _equations(windows, p, camera, width)
         matrix = matrix * (1 + _DAMPING * np.eye(6))
         step = np.einsum("nij,nj->ni", inverses(matrix), gradient)

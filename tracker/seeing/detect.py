@@ -10,10 +10,11 @@ import cv2
 import numpy as np
 from numpy.typing import NDArray
 
-from tracker.seeing.background import sort_in_time
+from tracker.seeing.background import Background, sort_in_time
 from tracker.seeing.fit import Windows
 
 F32 = NDArray[np.float32]
+Places = tuple[NDArray[np.int64], NDArray[np.float64], NDArray[np.float64]]
 Candidates = tuple[NDArray[np.int64], NDArray[np.float64], NDArray[np.float64], NDArray[np.float64]]
 
 _COARSE_WIDTH = 0.75  # px, least spot width after binning: costs 0.25 in signal to noise, saves two thirds
@@ -246,21 +247,20 @@ def _threshold_of_tail(stack: F32, rate: float) -> float:
 
 
 def cut_windows(
-    pictures: NDArray[Any], frame: NDArray[np.int64], x: NDArray[np.float64], y: NDArray[np.float64], *,
-    reach: int, level: F32, shade: F32, full_scale: float,
-) -> Windows:  # fmt: skip
+    pictures: NDArray[Any], at: Places, *, reach: int, background: Background, full_scale: float
+) -> Windows:
     """Cut squares of side 2 reach + 1 around places; at the edge of the picture they are moved inward.
 
     Parameters
     ----------
     pictures : ndarray of shape (n, height, width)
         A batch.
-    frame, x, y : ndarray of shape (N,)
-        Picture of the batch, and place in px.
+    at : tuple of three ndarray of shape (N,)
+        Picture of the batch, x and y in px.
     reach : int
         px.
-    level, shade : ndarray of shape (height, width)
-        Background and the reticle's shade.
+    background : Background
+        Its level is taken off.
     full_scale : float
         Grey values from here on are marked bad.
 
@@ -268,7 +268,8 @@ def cut_windows(
     -------
     windows : Windows
     """
-    side = 2 * reach + 1
+    frame, x, y = at
+    level, shade, side = background.level, background.shade, 2 * reach + 1
     height, width = level.shape
     left = np.clip(np.rint(x).astype(np.int64) - reach, 0, width - side)
     top = np.clip(np.rint(y).astype(np.int64) - reach, 0, height - side)

@@ -76,7 +76,7 @@ _MAX_STEP_WIDTH = 0.35  # longest step of log width
 
 def fit_spots(
     windows: Windows, start: tuple[NDArray[np.float64], NDArray[np.float64]], *, camera: Camera,
-    width: tuple[NDArray[np.float64], NDArray[np.float64]], free_width: bool = False, rounds: int = 4,
+    width: tuple[NDArray[np.float64], NDArray[np.float64]], free_width: bool = False, rounds: int = 3,
 ) -> Spots:  # fmt: skip
     """Fit one spot to each window.
 
@@ -93,7 +93,7 @@ def fit_spots(
     free_width : bool
         Fit both widths too.
     rounds : int
-        Gauss-Newton steps.
+        Gauss-Newton steps before the last one.
 
     Returns
     -------
@@ -114,7 +114,10 @@ def fit_spots(
         gradient, matrix, _ = _normal_equations(windows, p, camera, columns)
         p[:, :columns] += _limited(_solve(matrix, gradient), p)
     gradient, matrix, chi2 = _normal_equations(windows, p, camera, 6)
-    covariance = inverses(matrix[:, :columns, :columns])[:, :3, :3]
+    inner = inverses(matrix[:, :columns, :columns])
+    last = np.einsum("nij,nj->ni", inner, gradient[:, :columns])
+    p[:, :columns] += _limited(last, p)
+    covariance = inner[:, :3, :3]
     full = inverses(matrix)
     more = np.einsum("nij,nj->ni", full, gradient)
     doubt = np.sqrt(np.maximum(np.einsum("nii->ni", full), 1e-30))

@@ -122,9 +122,8 @@ def find_teachers(
     frame, x, y = _lone_spots(residual, guess, camera)
     reach = min(max(3, math.ceil(3.2 * guess)), (min(residual.shape[1:]) - 1) // 2)
     windows = cut_windows(
-        pictures, frame, x, y, reach=reach, level=background.level, shade=background.shade,
-        full_scale=camera.full_scale,
-    )  # fmt: skip
+        pictures, (frame, x, y), reach=reach, background=background, full_scale=camera.full_scale
+    )
     return windows, x, y
 
 

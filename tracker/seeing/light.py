@@ -14,7 +14,8 @@ from tracker.records import FloatArray, Sightings
 F32 = NDArray[np.float32]
 IntArray = NDArray[np.int64]
 
-_GRID, _OFFSET = 8, 4  # every eighth pixel of every eighth row, starting at the fourth
+_GRID = 8  # px, least distance of the pixels that are compared
+_ACROSS = 28  # of them along the shorter side
 _MISMATCH, _MISMATCH_GREY = 1.5, 0.3  # of the usual mismatch, and grey: more is another picture
 _SWING = 1.6  # ratio of light beyond which a frame belongs to another illumination
 _LASTING = 4  # frames that make a change of illumination
@@ -38,8 +39,9 @@ class Light:
 
 
 def coarse(picture: NDArray[Any], black: float) -> F32:
-    """Grid of a picture, grey over black."""
-    return np.asarray(picture[_OFFSET::_GRID, _OFFSET::_GRID], np.float32) - np.float32(black)
+    """Every so manieth pixel of every so manieth row, about a thousand in all; grey over black."""
+    step = max(_GRID, int(min(picture.shape) / _ACROSS))
+    return np.asarray(picture[step // 2 :: step, step // 2 :: step], np.float32) - np.float32(black)
 
 
 def light_of(samples: NDArray[Any], level: F32, black: float) -> Light:
@@ -80,15 +82,14 @@ def compare(light: Light, pictures: list[NDArray[Any]]) -> tuple[FloatArray, Flo
     mismatch : ndarray of shape (n,)
         Mean absolute difference after that, grey.
     """
-    bright = light.grid > _LEAST_LIGHT
-    told = int(bright.sum()) > light.grid.size // 4
-    ratio, mismatch = np.ones(len(pictures)), np.empty(len(pictures))
-    for i, picture in enumerate(pictures):
-        grid = coarse(picture, light.black)
-        if told:
-            ratio[i] = max(float(np.median(grid[bright] / light.grid[bright])), 1e-3)
-        mismatch[i] = float(np.abs(grid - np.float32(ratio[i]) * light.grid).mean())
-    return ratio, mismatch
+    grids = np.stack([coarse(p, light.black) for p in pictures]).reshape(len(pictures), -1)
+    ground = light.grid.reshape(-1)
+    bright = ground > _LEAST_LIGHT
+    ratio = np.ones(len(pictures))
+    if np.count_nonzero(bright) > ground.size // 4:
+        ratio = np.maximum(np.median(grids[:, bright] / ground[bright], axis=1), 1e-3).astype(np.float64)
+    rest = grids - ratio[:, None].astype(np.float32) * ground
+    return ratio, np.abs(rest).mean(1, dtype=np.float64)
 
 
 def even(light: Light, pictures: list[NDArray[Any]], ratio: FloatArray) -> list[NDArray[Any]]:
@@ -165,20 +166,23 @@ def common_jumps(sightings: Sightings, piece: IntArray, times: FloatArray) -> li
     bend = way[1:] - way[:-1] * (step[1:] / step[:-1])
     whole = (number[2:] == number[:-2]) & (frame[2:] - frame[:-2] == 2)
     bend, last = bend[whole], frame[2:][whole]
-    by = np.argsort(last, kind="stable")
-    bend, last = bend[by], last[by]
-    frames, begin, count = np.unique(last, return_index=True, return_counts=True)
-    many = count >= _JUMP_DROPLETS
-    middle = {
-        int(f): np.median(bend[b : b + c], axis=0)
-        for f, b, c in zip(frames[many], begin[many], count[many], strict=True)
-    }
-    found = []
-    for f, jump in middle.items():
-        size = float(np.hypot(*jump))
-        if size < _JUMP or f + 1 not in middle or np.hypot(*(jump + middle[f + 1])) > 0.5 * size:
-            continue
-        rows = slice(*np.searchsorted(last, [f, f + 1]))
-        if size > _JUMP_CLEAR * float(np.median(np.abs(bend[rows] - jump))):
-            found.append(f)
-    return found
+    frames, middle, spread, count = _medians(last, bend)
+    size = np.hypot(*middle.T)
+    follows = np.append(np.diff(frames) == 1, False)
+    back = np.roll(middle, -1, axis=0)
+    jumped = (count >= _JUMP_DROPLETS) & follows & (size > _JUMP) & (size > _JUMP_CLEAR * spread)
+    jumped &= np.hypot(*(middle + back).T) < 0.5 * size
+    return [int(f) for f in frames[jumped]]
+
+
+def _medians(group: IntArray, values: FloatArray) -> tuple[IntArray, FloatArray, FloatArray, IntArray]:
+    """Groups, medians of both columns, median absolute deviation (the larger of both), and count."""
+    groups, number, count = np.unique(group, return_inverse=True, return_counts=True)
+    middle_row = np.cumsum(count) - count + (count - 1) // 2
+
+    def median(column: FloatArray) -> FloatArray:
+        return np.asarray(column[np.lexsort((column, number))][middle_row])
+
+    middle = np.stack([median(values[:, i]) for i in range(2)], 1)
+    spread = np.stack([median(np.abs(values[:, i] - middle[number, i])) for i in range(2)], 1)
+    return groups, middle, spread.max(1), count

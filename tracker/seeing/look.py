@@ -56,7 +56,7 @@ def look(eyes: Eyes, pictures: list[NDArray[Any]], numbers: Rows) -> Columns:
     stack = np.stack(pictures)
     windows = _cut(eyes, stack, frame, x, y, eyes.reach)
     width = np.full(len(x), eyes.width)
-    spots = fit_spots(windows, (x, y), camera=eyes.camera, width=(width, width), rounds=3)
+    spots = fit_spots(windows, (x, y), camera=eyes.camera, width=(width, width), rounds=2)
     sound = spots.good & (np.hypot(spots.x - x, spots.y - y) < 2 * eyes.width)
     sound &= spots.amplitude > 3 * np.sqrt(np.maximum(spots.covariance[:, 0, 0], 0))
     rows = np.flatnonzero(sound)
@@ -94,9 +94,8 @@ def _cut(
     eyes: Eyes, stack: NDArray[Any], frame: Rows, x: NDArray[np.float64], y: NDArray[np.float64], reach: int
 ) -> Windows:
     return cut_windows(
-        stack, frame, x, y, reach=reach, level=eyes.background.level, shade=eyes.background.shade,
-        full_scale=eyes.camera.full_scale,
-    )  # fmt: skip
+        stack, (frame, x, y), reach=reach, background=eyes.background, full_scale=eyes.camera.full_scale
+    )
 
 
 def _table(spots: Spots, frame: Rows) -> Columns:
@@ -120,13 +119,15 @@ def _fit_neighbours(eyes: Eyes, stack: NDArray[Any], table: Columns, pairs: Rows
     for _ in range(2):
         start = np.stack([table[c][k] for k in (i, j) for c in ("amplitude", "x", "y")], 1)
         cleared = _without_others(windows, table, pairs, eyes.width)
-        fitted = fit_pairs(cleared, start, camera=eyes.camera, width=eyes.width)
+        fitted = fit_pairs(cleared, start, camera=eyes.camera, width=eyes.width, rounds=4)
         moved = np.hypot(
             fitted.values[:, [1, 4]] - start[:, [1, 4]], fitted.values[:, [2, 5]] - start[:, [2, 5]]
         )
         fine = (moved < eyes.width).all(1) & (fitted.values[:, [0, 3]] > 0.02).all(1)
         for rows, first in ((i, 0), (j, 3)):
             _write(table, rows[fine], fitted.take(fine), first)
+        if cleared is windows:
+            break
     table["flags"][np.unique(pairs)] |= int(Flag.CROWDED)
     table["misfit"][np.unique(pairs)] = 0  # the neighbour's light was counted as misfit
     return table
