@@ -14,7 +14,7 @@ export class Frames {
     this.clear = false;      // what stands still taken away
     this.wanted = 0;
     this.shown = -1;
-    this.step = 1;           // direction of the last move
+    this.step = 1;           // the last move
     this.bitmaps = new Map();
     this.blobs = new Map();
     this.waiting = new Map();
@@ -25,7 +25,8 @@ export class Frames {
   key(frame, half) { return `${half ? "half" : "full"}${this.clear ? "-clear" : ""}/${frame}`; }
 
   want(frame) {
-    if (frame !== this.wanted) this.step = Math.sign(frame - this.wanted) || 1;
+    // Frames are fetched ahead in the strides of the movement: in a fast drag its neighbours would come too late.
+    if (frame !== this.wanted) this.step = frame - this.wanted;
     this.wanted = frame;
     clearTimeout(this.rest);
     this.rest = setTimeout(() => this.load(this.wanted, false), REST);
@@ -41,7 +42,8 @@ export class Frames {
   }
 
   pump() {
-    for (let k = 0; k <= AHEAD && this.waiting.size < AT_ONCE; k++) {
+    const ahead = Math.abs(this.step) > 20 ? 0 : AHEAD;
+    for (let k = 0; k <= ahead && this.waiting.size < AT_ONCE; k++) {
       const frame = this.wanted + k * this.step;
       if (frame >= 0 && frame < this.ready && !this.bitmaps.has(this.key(frame, false))) this.load(frame, true);
     }

@@ -4,6 +4,7 @@
 
 import { placeAt, rowAt } from "./tracks.js";
 import { LETTER } from "./dom.js";
+import { rootScale } from "./timebar.js";
 
 // Okabe and Ito's palette, as in tracker/showing/overlay.py.
 export const COLOURS = { keep: "#56b4e9", doubt: "#e69f00", reject: "#cc79a7" };
@@ -193,7 +194,7 @@ export class Stage {
   drawMarks(context) {
     const frame = this.state.frame;
     context.lineJoin = "round";
-    context.font = `600 ${Math.round(11 * Math.min(2, parseFloat(getComputedStyle(document.documentElement).fontSize) / 16))}px system-ui, sans-serif`;
+    context.font = `600 ${Math.round(11 * rootScale())}px system-ui, sans-serif`;
     for (const track of this.tracks.values()) if (track.droplet !== this.chosen) this.drawOne(context, track, frame, false);
     const chosen = this.tracks.get(this.chosen);
     if (chosen) this.drawOne(context, chosen, frame, true);

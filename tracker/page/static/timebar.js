@@ -18,6 +18,7 @@ export class TimeBar {
     this.trim = null;
     this.frame = 0;
     this.ready = 0;
+    this.still = document.createElement("canvas");   // all but the playhead, drawn only when it changes
     this.watcher = new ResizeObserver(() => this.draw());
     this.watcher.observe(box);
     box.addEventListener("pointerdown", (event) => {
@@ -35,17 +36,24 @@ export class TimeBar {
     this.segments = segments;
     this.box.setAttribute("aria-valuemin", "0");
     this.box.setAttribute("aria-valuemax", String(times.length - 1));
-    this.setFrame(this.frame);
+    this.draw();
+    this.tell();
   }
 
   segmentAt(time) { return this.segments.find((s) => time >= s.start && time < s.end); }
 
   setFrame(frame) {
     this.frame = frame;
-    const time = this.times[frame] ?? 0, segment = this.segmentAt(time);
-    this.box.setAttribute("aria-valuenow", String(frame));
-    this.box.setAttribute("aria-valuetext", `frame ${frame}, ${time.toFixed(2)} seconds, field ${segment ? volts(segment.voltage) : "changing"}`);
-    this.draw();
+    this.drawHead();
+    // Screen readers are told where the playhead rests, not every place that it passes.
+    clearTimeout(this.telling);
+    this.telling = setTimeout(() => this.tell(), 150);
+  }
+
+  tell() {
+    const time = this.times[this.frame] ?? 0, segment = this.segmentAt(time);
+    this.box.setAttribute("aria-valuenow", String(this.frame));
+    this.box.setAttribute("aria-valuetext", `frame ${this.frame}, ${time.toFixed(2)} seconds, field ${segment ? volts(segment.voltage) : "changing"}`);
   }
 
   get range() {
@@ -78,7 +86,22 @@ export class TimeBar {
       c.fillRect(from, 2, width - 7 - from, low - 2);
     }
     this.drawSpan(c, low);
-    const x = this.at(this.times[this.frame] ?? 0);
+    Object.assign(this.still, { width: this.canvas.width, height: this.canvas.height });
+    this.still.getContext("2d").drawImage(this.canvas, 0, 0);
+    this.size = [width, height];
+    this.drawHead();
+  }
+
+  drawHead() {
+    if (!this.size) return;
+    const [width, height] = this.size, c = this.canvas.getContext("2d");
+    c.save();
+    c.setTransform(1, 0, 0, 1, 0, 0);
+    c.clearRect(0, 0, this.canvas.width, this.canvas.height);
+    c.drawImage(this.still, 0, 0);
+    c.restore();
+    const [first, last] = this.range, time = this.times[this.frame] ?? 0;
+    const x = 7 + ((time - first) / (last - first)) * (width - 14);
     c.fillStyle = "#fff";
     c.fillRect(x - 1, 0, 2, height - 3);
     c.beginPath();
@@ -112,10 +135,23 @@ export class TimeBar {
     c.strokeRect(t0, 1, t1 - t0, low - 1);
   }
 
-  close() { this.watcher.disconnect(); }
+  close() {
+    this.watcher.disconnect();
+    clearTimeout(this.telling);
+  }
 }
 
-export const rootScale = () => Math.min(2, parseFloat(getComputedStyle(document.documentElement).fontSize) / 16);
+// Size of the reader's text against the usual 16 px. Asking for it makes the browser work out all styles, so the
+// answer is kept for half a second.
+let known = 1, asked = -1e9;
+export function rootScale() {
+  const now = performance.now();
+  if (now - asked > 500) {
+    known = Math.min(2, parseFloat(getComputedStyle(document.documentElement).fontSize) / 16);
+    asked = now;
+  }
+  return known;
+}
 
 export function hatch(c, x, y, width, height, colour, step = 7) {
   c.save();
