@@ -11,7 +11,7 @@ from physics.motion import DropletPosterior, FreeFit, Increments, droplet_poster
 from tracker.bench import Bench
 from tracker.motion.aircurrent import AirCurrent, Drift, robust_mean
 from tracker.motion.changes import History, find_changes, size_rate
-from tracker.motion.judge import is_stuck
+from tracker.motion.judge import is_sparse, is_stuck
 from tracker.motion.rows import NAN
 from tracker.motion.velocity import Path, without_outliers
 from tracker.records import IntArray, Settings
@@ -66,6 +66,24 @@ def cleaned(path: Path, settings: Settings) -> Droplet:
         return Droplet(path)
     left = Droplet(*without_outliers(path))
     return left if len(left.path) >= settings.min_frames else replace(left, fit=None)
+
+
+def is_one_droplet(droplet: Droplet, conditions: Conditions) -> bool:
+    """Tell whether a track may say something of what all droplets share.
+
+    Parameters
+    ----------
+    droplet : Droplet
+        Cleaned.
+    conditions : Conditions
+        Of the bench.
+
+    Returns
+    -------
+    sound : bool
+        False for dirt, for chance detections and for tracks whose place jumps.
+    """
+    return not (droplet.hops or is_sparse(droplet.path) or is_stuck(droplet.path, conditions))
 
 
 def with_histories(droplets: list[Droplet], conditions: Conditions, drift: Drift) -> list[Droplet]:

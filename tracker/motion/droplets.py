@@ -14,10 +14,10 @@ from tracker.bench import Bench
 from tracker.motion.aircurrent import AirCurrent, find_air_current, find_drift
 from tracker.motion.charges import Number, SharedPart, charge_numbers, charge_unit_of, unit_json
 from tracker.motion.decided import Decided, apply_decisions
-from tracker.motion.droplet import Droplet, cleaned, with_histories, with_posteriors
+from tracker.motion.droplet import Droplet, cleaned, is_one_droplet, with_histories, with_posteriors
 from tracker.motion.field import exposure_of
 from tracker.motion.fieldclock import clock_warnings
-from tracker.motion.judge import Facts, balances, is_stuck, reasons_of
+from tracker.motion.judge import Facts, balances, reasons_of
 from tracker.motion.rows import ChangeRow, DropletRow, SegmentRow
 from tracker.motion.tablerows import (
     change_rows,
@@ -27,7 +27,7 @@ from tracker.motion.tablerows import (
     segment_rows,
     shrinking_warnings,
 )
-from tracker.motion.velocity import Orientation, fit_orientation, paths
+from tracker.motion.velocity import Orientation, Path, fit_orientation, paths
 from tracker.motion.verdict import REASONS
 from tracker.records import Decision, Field, Flag, IntArray, Recording, Settings, Tracks, readonly
 
@@ -142,7 +142,7 @@ def evaluate_droplets(
         _orientation_json(orientation), air.plain(), exposure, unit_json(charge_unit_of(droplets, rows, shared)),
         shared.budget(droplets, rows), details(droplets, rests) | _decisions_json(decided),
         (*orientation.warnings, *decided.warnings, *_exposure_warning(bench, exposure), *shrinking_warnings(droplets),
-         *clock_warnings(field, decided.tracks, recording, bench)),
+         *clock_warnings(field, _trusted(droplets, rows), recording)),
     )  # fmt: skip
 
 
@@ -152,9 +152,7 @@ def _analyse(
 ) -> Analysis:  # fmt: skip
     """Fit all droplets, the air that carries them and the charge numbers that they share."""
     orientation, droplets = _tracked(decided, recording, field, bench, settings=settings, cuts=cuts)
-    moving = [
-        (d.path, d.fit) for d in droplets if d.fit is not None and not is_stuck(d.path, bench.conditions)
-    ]
+    moving = [(d.path, d.fit) for d in droplets if d.fit is not None and is_one_droplet(d, bench.conditions)]
     drift = find_drift([path for path, _ in moving], [fit for _, fit in moving])
     droplets = with_histories(droplets, bench.conditions, drift)
     air = replace(_air(droplets, bench.conditions), drift=drift)
@@ -198,6 +196,11 @@ def _tracked(
     return orientation, [cleaned(path, settings) for path in found]
 
 
+def _trusted(droplets: list[Droplet], rows: list[DropletRow]) -> list[Path]:
+    """Paths of the droplets that are not rejected."""
+    return [droplet.path for droplet, row in zip(droplets, rows, strict=True) if row.verdict != "reject"]
+
+
 def _decisions_json(decided: Decided) -> dict[str, Any]:
     """Give what a person decided on the droplets of the present numbering."""
     return {"decisions": {
@@ -231,8 +234,8 @@ def _in_lamp(tracks: Tracks, bench: Bench) -> np.ndarray:
 
 def _air(droplets: list[Droplet], conditions: Conditions) -> AirCurrent:
     """Speed of the air that all droplets share."""
-    usable = [d.history for d in droplets if d.history is not None and np.isfinite(d.history.fit.fall_speed)]
-    moving = [h for h in usable if h.fit.fall_speed > 0]
+    usable = [d.history for d in droplets if d.history is not None and is_one_droplet(d, conditions)]
+    moving = [h for h in usable if np.isfinite(h.fit.fall_speed) and h.fit.fall_speed > 0]
     return find_air_current([h.steps for h in moving], [h.fit for h in moving], conditions)
 
 

@@ -167,7 +167,7 @@ def uncertain_spans(field: Field, *, frame_interval: float, coverage: float = 3.
     field : Field
         Its `toggle_std` and `clock_offset_std` say how well each toggle is known.
     frame_interval : float
-        In s. A toggle known to a tenth of it moves the places by less than Brownian motion in one frame does,
+        In s. A toggle known to a quarter of it moves the places by less than Brownian motion in one frame does,
         and gives no stretch.
     coverage : float, optional
         Half width of a stretch in standard uncertainties.

@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -21,7 +22,11 @@ RATE_GAIN = 10.83  # chi-square by which a rate must improve the fit, 1 in 1000
 LEAST_MARGIN = 30.0  # chi-square by which the best offset must beat any other
 LEAST_RELATIVE_MARGIN = 0.005  # of the gain; what charge steps and mistaken links may cost the right offset
 LEAST_GAIN = 40.0  # chi-square that the log must explain: one in 1e7 by chance over 1000 offsets
-CLOCK_GAIN = 60.0  # chi-square by which another clock must be better before it is told
+LONG_SEARCH, FEW_DROPLETS = 3000, 8  # offsets of a log of many minutes, for which fewer droplets must do
+CLOCK_GAIN, MOST_OF_ONE = (
+    60.0,
+    50.0,
+)  # chi-square by which another clock must be better to be told; of one droplet
 MOST_DROPLETS = 30  # longest tracks that are used; more narrow the offset below what matters
 STEPS_AT_ONCE = 4_000_000  # numbers held at once in the first search
 
@@ -68,7 +73,8 @@ def fit_clock_offset(tracks: Tracks, log: Log, recording: Recording, bench: Benc
         raise FieldError(str(log.path), "no droplet is tracked long enough to set the log's clock; state it")
     usable = sorted(usable, key=len, reverse=True)[:MOST_DROPLETS]
     offsets = _search_range(log, span)
-    gain = _coarse_gain(usable, log, offsets)
+    searched = usable if len(offsets) < LONG_SEARCH else usable[:FEW_DROPLETS]
+    gain = _coarse_gain(searched, log, offsets, recording)
     peaks = _peaks(offsets, gain)
     coarse = field_from_log(log, recording, offset=float(offsets[peaks[0]]))
     turned = fit_orientation(
@@ -84,42 +90,38 @@ def fit_clock_offset(tracks: Tracks, log: Log, recording: Recording, bench: Benc
     return fit.field([float(offsets[i]) for i in peaks])
 
 
-def clock_warnings(field: Field, tracks: Tracks, recording: Recording, bench: Bench) -> tuple[str, ...]:
+def clock_warnings(field: Field, droplets: Sequence[Path], recording: Recording) -> tuple[str, ...]:
     """Say if the droplets see the field change at other times than a list or a stated clock says.
 
     Parameters
     ----------
     field : Field
         From a list or a log.
-    tracks : Tracks
-        Linked.
+    droplets : sequence of Path
+        That are not rejected.
     recording : Recording
         Frame times.
-    bench : Bench
-        Scale, exposure and gravity's direction if stated.
 
     Returns
     -------
     warnings : tuple of str
-        One line, if the field moved by two frames or more (one second at most) explains the droplets' motion
-        better by a chi-square of 60; empty otherwise.
+        One line, if the field moved by two frames or more (one second at most) explains the motion of most of
+        the droplets better, and of all by a chi-square of 60, of which one droplet gives 50 at most.
     """
-    if field.source not in ("list", "log") or len(field.segments) < 2:
-        return ()
-    exposure, step = exposure_of(bench, recording), recording.frame_interval
-    span = recording_span(recording)
-    idle = field_of_steps("log", [span[0]], [0.0], span=span)
-    picture = Orientation(bench.down_deg or 0.0, 0.0, "picture")
-    found = paths(tracks, recording, field=idle, scale=bench.scale, exposure=exposure, orientation=picture)
-    usable = sorted((p for p in found if len(p) > 2 * MIN_INCREMENTS), key=len, reverse=True)[:MOST_DROPLETS]
+    usable = sorted(droplets, key=len, reverse=True)[:MOST_DROPLETS]
     usable = [path for path in usable if len(path.steps()) >= 2 * MIN_INCREMENTS]
-    if not usable:
+    if field.source not in ("list", "log") or len(field.segments) < 2 or not usable:
         return ()
+    step = recording.frame_interval
     log = Log(field.knot_times, field.knot_volts, True, recording.path)
     offsets: FloatArray = step * np.arange(-int(1 / step), int(1 / step) + 1).astype(np.float64)
-    gain = _coarse_gain(usable, log, offsets)
-    best, here = int(np.argmax(gain)), len(offsets) // 2
-    if abs(offsets[best]) < 1.5 * step or gain[best] - gain[here] < CLOCK_GAIN:
+    here = len(offsets) // 2
+    gains = np.array([_coarse_gain([path], log, offsets, recording) for path in usable])
+    votes = gains - gains[:, here, None]
+    votes *= np.minimum(1.0, MOST_OF_ONE / np.maximum(votes.max(axis=1), 1e-9))[:, None]
+    best = int(np.argmax(votes.sum(axis=0)))
+    agreed = np.mean(votes[:, best] > 0) > 0.5 and votes[:, best].sum() > CLOCK_GAIN
+    if abs(offsets[best]) < 1.5 * step or not agreed:
         return ()
     late = "later" if offsets[best] > 0 else "earlier"
     return (
@@ -139,7 +141,7 @@ def _search_range(log: Log, span: tuple[float, float]) -> FloatArray:
     return np.arange(low, high + COARSE, COARSE)
 
 
-def _coarse_gain(usable: list[Path], log: Log, offsets: FloatArray) -> FloatArray:
+def _coarse_gain(usable: Sequence[Path], log: Log, offsets: FloatArray, recording: Recording) -> FloatArray:
     """Chi-square that the drive explains at each offset, steps taken as independent."""
     from scipy.integrate import cumulative_trapezoid
 
@@ -147,25 +149,30 @@ def _coarse_gain(usable: list[Path], log: Log, offsets: FloatArray) -> FloatArra
     if not log.sampled:
         times, volts = np.repeat(times, 2)[1:], np.repeat(volts, 2)[:-1]
     total = cumulative_trapezoid(volts, times, initial=0.0)
+    middle = recording.frame_times + 0.5 * usable[0].exposure
+    rows = max(1, STEPS_AT_ONCE // len(middle))
     gain = np.zeros(len(offsets))
-    for path in usable:
-        steps = path.steps()
-        weight = 1 / np.sqrt(steps.dt)
-        drift = np.sqrt(steps.dt) / np.linalg.norm(np.sqrt(steps.dt))
-        begin = path.times[steps.first] + 0.5 * path.exposure
-        rows = max(1, STEPS_AT_ONCE // len(steps))
-        for first in range(0, len(offsets), rows):
-            at = begin - offsets[first : first + rows, None]
-            impulse = (
-                _integral(at + steps.dt, times, volts, total) - _integral(at, times, volts, total)
-            ) * weight
-            impulse -= (impulse @ drift)[:, None] * drift
-            power = np.einsum("ij,ij->i", impulse, impulse)
-            for data in (steps.down, steps.side):
-                score = impulse @ (data * weight)
-                part = score**2 / np.maximum(power, 1e-300) / _step_variance(data * weight)
-                gain[first : first + rows] += np.where(power > 1e-9 * float(power.max() + 1e-300), part, 0.0)
+    for first in range(0, len(offsets), rows):
+        part = slice(first, first + rows)
+        at_frame = _integral(middle - offsets[part, None], times, volts, total)
+        for path in usable:
+            gain[part] += _white_gain(path, at_frame)
     return gain
+
+
+def _white_gain(path: Path, at_frame: FloatArray) -> FloatArray:
+    """Chi-square that one droplet's drive explains, for each row of volt seconds at the frames."""
+    steps = path.steps()
+    weight = 1 / np.sqrt(steps.dt)
+    drift = np.sqrt(steps.dt) / np.linalg.norm(np.sqrt(steps.dt))
+    impulse = (at_frame[:, path.frames[steps.last]] - at_frame[:, path.frames[steps.first]]) * weight
+    impulse -= (impulse @ drift)[:, None] * drift
+    power = np.einsum("ij,ij->i", impulse, impulse)
+    gain = np.zeros(len(at_frame))
+    for data in (steps.down, steps.side):
+        score = impulse @ (data * weight)
+        gain += score**2 / np.maximum(power, 1e-300) / _step_variance(data * weight)
+    return np.where(power > 1e-9 * float(power.max() + 1e-300), gain, 0.0)
 
 
 def _integral(at: FloatArray, times: FloatArray, volts: FloatArray, total: FloatArray) -> FloatArray:
@@ -320,6 +327,4 @@ def _explained(drift: FloatArray, drive: FloatArray, data: FloatArray) -> float:
 
 def _with_impulse(steps: Increments, impulse: FloatArray) -> Increments:
     """Give steps whose volt seconds are those of the sightings."""
-    from dataclasses import replace
-
     return replace(steps, impulse=np.diff(impulse)[steps.first])

@@ -82,7 +82,7 @@ def reasons_of(facts: Facts, air: AirCurrent, rests: Sequence[Balance], settings
     history, posterior = facts.history, facts.posterior
     if len(facts.path) < settings.min_frames or history is None or posterior is None:
         return [*codes, "too_short"]
-    if _sparse(facts.path):
+    if is_sparse(facts.path):
         codes.append("sparse")
     if facts.hops:
         codes.append("hop")
@@ -100,8 +100,19 @@ def _share(flags: IntArray, flag: Flag) -> float:
     return float(np.mean((flags & int(flag)) != 0)) if len(flags) else 0.0
 
 
-def _sparse(path: Path) -> bool:
-    """Whether a track is held together by chance detections."""
+def is_sparse(path: Path) -> bool:
+    """Tell whether a track is held together by chance detections.
+
+    Parameters
+    ----------
+    path : Path
+        Of one track.
+
+    Returns
+    -------
+    sparse : bool
+        Seen in few of its frames, also without the long gaps of a droplet that left the picture and came back.
+    """
     gaps = np.diff(path.frames)
     near = gaps[gaps <= LONG_GAP]
     filled = len(gaps) < LEAST_FILLED * np.sum(gaps)

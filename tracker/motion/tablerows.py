@@ -44,8 +44,9 @@ def droplet_row(
     row : DropletRow
         With the verdict that follows from the reasons.
     """
-    rows = tracks.rows(droplet.path.droplet)
-    times = recording.frame_times[tracks.sightings.frame[rows]]
+    rows = droplet.used_rows
+    seen = rows if len(rows) else np.arange(len(tracks))[tracks.rows(droplet.path.droplet)]
+    times = recording.frame_times[tracks.sightings.frame[seen]]
     codes = ordered(reasons)
     row = DropletRow(
         droplet.path.droplet,
