@@ -101,11 +101,11 @@ def with_histories(droplets: list[Droplet], conditions: Conditions, drift: Drift
     Returns
     -------
     droplets : list of Droplet
-        In the same order; without a history where a droplet is too short or does not move.
+        In the same order; without a history where a track is too short, does not move or is no droplet.
     """
     ready: dict[int, tuple[Increments, FreeFit]] = {}
     for i, droplet in enumerate(droplets):
-        if droplet.fit is None or is_stuck(droplet.path, conditions):
+        if droplet.fit is None or is_sparse(droplet.path) or is_stuck(droplet.path, conditions):
             continue
         steps = droplet.path.steps()
         still = drift.taken_out(steps, np.asarray(droplet.path.times))

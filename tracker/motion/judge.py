@@ -79,11 +79,11 @@ def reasons_of(facts: Facts, air: AirCurrent, rests: Sequence[Balance], settings
     codes = [code for code, flag, most in SHARES if _share(facts.flags, flag) > most]
     if is_stuck(facts.path, facts.conditions):
         return [*codes, "stuck"]
+    if is_sparse(facts.path):
+        return [*codes, "sparse"]
     history, posterior = facts.history, facts.posterior
     if len(facts.path) < settings.min_frames or history is None or posterior is None:
         return [*codes, "too_short"]
-    if is_sparse(facts.path):
-        codes.append("sparse")
     if facts.hops:
         codes.append("hop")
     if facts.outliers > max(2, 0.05 * len(facts.flags)):

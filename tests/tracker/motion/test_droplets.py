@@ -235,7 +235,8 @@ def test_chance_detections_are_no_droplet(tmp_path):
         replace(tracks, droplet=tracks.droplet[stay], sightings=tracks.sightings.take(stay)), recording,
         field_from_list(bench.field.entries, recording), bench, settings=Settings(),
     )  # fmt: skip
-    assert "sparse" in reasons(found)[0]
+    assert reasons(found)[0] == {"sparse"}
+    assert np.isnan(found.droplets[0].charge_c)
     assert "sparse" not in reasons(found)[1]
     assert found.droplets[0].verdict == "reject"
 
