@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, fields
 
 import numpy as np
 from numpy.typing import NDArray
@@ -22,6 +22,7 @@ class Pairs:
     values: Float  # (N, 6)
     covariance: Float  # (N, 6, 6)
     chi2: Float  # (N,)
+    excess: Float  # (N,) light that the fit leaves in the window, over the light of both
 
     def __len__(self) -> int:
         return len(self.values)
@@ -35,7 +36,7 @@ class Pairs:
 
     def take(self, rows: NDArray[np.int64] | NDArray[np.bool_]) -> Pairs:
         """Give the chosen pairs."""
-        return Pairs(self.values[rows], self.covariance[rows], self.chi2[rows])
+        return Pairs(self.values[rows], self.covariance[rows], self.chi2[rows], self.excess[rows])
 
 
 def fit_pairs(windows: Windows, start: Float, *, camera: Camera, width: float, rounds: int = 8) -> Pairs:
@@ -63,8 +64,8 @@ def fit_pairs(windows: Windows, start: Float, *, camera: Camera, width: float, r
     parts = [slice(i, i + _CHUNK) for i in range(0, len(start), _CHUNK)]
     done = [_fit(windows.take(np.arange(len(start))[s]), start[s], (camera, width, rounds)) for s in parts]
     if not done:
-        return Pairs(np.empty((0, 6)), np.empty((0, 6, 6)), np.empty(0))
-    return Pairs(*(np.concatenate([getattr(d, n) for d in done]) for n in ("values", "covariance", "chi2")))
+        return Pairs(np.empty((0, 6)), np.empty((0, 6, 6)), np.empty(0), np.empty(0))
+    return Pairs(*(np.concatenate([getattr(d, f.name) for d in done]) for f in fields(Pairs)))
 
 
 def _fit(windows: Windows, start: Float, how: tuple[Camera, float, int]) -> Pairs:
@@ -85,7 +86,9 @@ def _fit(windows: Windows, start: Float, how: tuple[Camera, float, int]) -> Pair
     _, matrix, chi2 = _equations(windows, p, camera, width)
     p[:, [1, 4]] += windows.left[:, None]
     p[:, [2, 5]] += windows.top[:, None]
-    return Pairs(p, inverses(matrix), chi2)
+    light = np.maximum(2 * np.pi * width**2 * (p[:, 0] + p[:, 3]), 1e-9)
+    all_light = np.where(windows.bad, 0, windows.grey).sum((1, 2), dtype=np.float64)
+    return Pairs(p, inverses(matrix), chi2, all_light / light - 1)
 
 
 def _equations(windows: Windows, p: Float, camera: Camera, width: float) -> tuple[Float, Float, Float]:

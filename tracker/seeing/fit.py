@@ -55,6 +55,7 @@ class Spots:
     sy: NDArray[np.float64]  # (N,) px
     covariance: NDArray[np.float64]  # (N, 3, 3) of amplitude, x, y
     chi2: NDArray[np.float64]  # (N,) sum of weighted squares of the residual
+    excess: NDArray[np.float64]  # (N,) light that the fit leaves in the window, over the light of the spot
     growth: NDArray[np.float64]  # (N, 2) what the residual adds to log sx and log sy, in standard deviations
     slant: NDArray[np.float64]  # (N,) what it says of a slanting long axis, in standard deviations
     good: NDArray[np.bool_]  # (N,) converged inside the window to a bright spot
@@ -123,9 +124,12 @@ def fit_spots(
     doubt = np.sqrt(np.maximum(np.einsum("nii->ni", full), 1e-30))
     inside = (p[:, 1:3] > -1).all(1) & (p[:, 1:3] < k).all(1)
     good = inside & (p[:, 0] > 0) & np.isfinite(p).all(1) & (np.einsum("nii->ni", covariance) > 0).all(1)
+    sx, sy = np.exp(p[:, 3]), np.exp(p[:, 4])
+    light = np.maximum(2 * np.pi * p[:, 0] * sx * sy, 1e-9)
+    all_light = np.where(windows.bad, 0, windows.grey).sum((1, 2), dtype=np.float64)
     return Spots(
-        p[:, 0], p[:, 1] + windows.left, p[:, 2] + windows.top, np.exp(p[:, 3]), np.exp(p[:, 4]), covariance,
-        chi2, (more / doubt)[:, 3:5], (more / doubt)[:, 5], good,
+        p[:, 0], p[:, 1] + windows.left, p[:, 2] + windows.top, sx, sy, covariance, chi2, all_light / light - 1,
+        (more / doubt)[:, 3:5], (more / doubt)[:, 5], good,
     )  # fmt: skip
 
 

@@ -7,7 +7,7 @@ from numpy.typing import NDArray
 
 from tracker.records import Recording, Sightings
 
-_SPAN = 10.0  # s between the first and last sighting; in less, a slow droplet may stay in place
+_SPAN = 8.0  # s between the first and last sighting; in less, a slow droplet may stay in place
 _LEAST = 30  # sightings at the place
 _CELL = 1.0  # px
 _STILL = 0.12  # px: more between its earlier and later sightings is motion
@@ -29,7 +29,7 @@ def on_fixed_places(sightings: Sightings, recording: Recording) -> NDArray[np.bo
 
     Notes
     -----
-    Brownian motion carries a droplet of 1 um radius some 15 um in 10 s, so what stays within a tenth of a pixel is
+    Brownian motion carries a droplet of 1 um radius some 10 um in 8 s, so what stays within a tenth of a pixel is
     none. Two grids, shifted by half a cell, catch a place at the border of a cell.
     """
     fixed = np.zeros(len(sightings), np.bool_)

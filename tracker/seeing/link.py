@@ -16,6 +16,8 @@ IntArray = NDArray[np.int64]
 _CROWDING = 0.06  # other droplets expected within the first gate
 _FEW_SIGHTINGS = 20  # fewer show no common motion
 _STEADY = 2  # frames: a droplet is seen at least so often in half of its life; flecks of noise are not
+_FAINT = 1.6  # times the brightness that a hundredth of the sightings does not reach
+_RESTING = 0.7  # of the usual mean root of the way between frames
 _LEAST_GATE, _MOST_GATE = 4.0, 60.0  # px
 
 
@@ -136,11 +138,8 @@ def components(n: int, pairs: IntArray) -> IntArray:
 def _tracks(sightings: Sightings, piece: IntArray, least: int) -> Tracks:
     """Pieces that last, numbered by first frame."""
     count = np.bincount(piece)
-    order = np.lexsort((sightings.frame, piece))
-    same = np.diff(piece[order]) == 0
-    steady = np.diff(sightings.frame[order])[same] <= _STEADY
-    share = np.bincount(piece[order][1:][same], steady, len(count)) / np.maximum(count - 1, 1)
-    rows = np.flatnonzero((count >= least)[piece] & ((share >= 0.5) | (count == 1))[piece])
+    kept = (count >= least) & ~_flecks(sightings, piece)
+    rows = np.flatnonzero(kept[piece])
     rows = rows[np.lexsort((sightings.frame[rows], piece[rows]))]
     names, first, number = np.unique(piece[rows], return_index=True, return_inverse=True)
     rank = np.empty(len(names), np.int64)
@@ -148,3 +147,30 @@ def _tracks(sightings: Sightings, piece: IntArray, least: int) -> Tracks:
     droplet = rank[number]
     order = np.argsort(droplet, kind="stable")
     return Tracks(droplet[order], sightings.take(rows[order]))
+
+
+def _flecks(sightings: Sightings, piece: IntArray) -> NDArray[np.bool_]:
+    """Which pieces are flecks of noise or what a codec leaves behind.
+
+    A droplet is seen in most frames of its life. What is as faint as the faintest sightings must also be seen in half
+    of the frames from its first to its last, and move from frame to frame as droplets do.
+    """
+    count = np.bincount(piece)
+    order = np.lexsort((sightings.frame, piece))
+    number, frame = piece[order], sightings.frame[order]
+    same = np.diff(number) == 0
+    owner = number[1:][same]
+    steps = np.diff(frame)[same]
+    often = np.bincount(owner, steps <= _STEADY, len(count)) >= 0.5 * (count - 1)
+    span = np.bincount(owner, steps, len(count)) + 1
+    way = np.hypot(np.diff(sightings.x[order]), np.diff(sightings.y[order]))[same]
+    next_to = steps == 1
+    root = np.bincount(owner[next_to], np.sqrt(way[next_to]), len(count)) / np.maximum(
+        np.bincount(owner[next_to], minlength=len(count)), 1
+    )  # mean root of the way: a robust measure of its size
+    brightness = np.bincount(piece, sightings.brightness, len(count)) / count
+    faint = brightness < _FAINT * np.quantile(sightings.brightness, 0.01)
+    usual = np.median(np.sqrt(way[next_to])) if next_to.any() else 0.0
+    noise = np.sqrt(2 * float(np.median(sightings.x_std)))
+    resting = (root < _RESTING * usual) & (usual > noise)
+    return np.asarray(~often | (faint & ((count < 0.5 * span) | resting)))

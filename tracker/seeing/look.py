@@ -28,7 +28,7 @@ _SPLIT_CLOSE = 2.2  # widths: nearer ones look like one wide spot and need more 
 _SPLIT_APART = 1.2  # widths, least distance of two spots found in one blob
 _SPLIT_SHARE = 0.15  # least amplitude of the fainter against the brighter
 _SOFT = 1.3  # widths: a spot this wide along both axes is out of focus
-_MISFIT = 0.35  # share of light unexplained: a lamp or a scratch, no spot
+_MOST_EXCESS = 1.0  # light beside a spot over its own: more is a lamp or a scratch
 _HALF_LIGHT = 0.4  # of the amplitude: mean of a spot's light over its slopes, which tell the place
 _STREAK = 1.21  # widths: way within the exposure equal to the full width at half maximum widens to this
 
@@ -62,22 +62,14 @@ def look(eyes: Eyes, pictures: list[NDArray[Any]], numbers: Rows) -> Columns:
     rows = np.flatnonzero(sound)
     frame, spots, windows = frame[rows], spots.take(rows), windows.take(rows)
     table = _table(spots, frame)
-    table["misfit"] = _misfit(spots, windows)
     table["flags"] |= np.where(windows.bad.any((1, 2)), int(Flag.SATURATED), 0)
     crowded = near_pairs(frame, spots.x, spots.y, reach=_NEIGHBOUR * eyes.width)
     table = _fit_neighbours(eyes, stack, table, crowded)
     alone = np.ones(len(frame), np.bool_)
     alone[crowded.ravel()] = False
     table = _fit_odd(eyes, stack, table, spots, np.flatnonzero(_is_odd(spots) & alone))
-    spotlike = table["misfit"] < _MISFIT
+    spotlike = table["excess"] < _MOST_EXCESS
     return _finish(eyes, {k: v[spotlike] for k, v in table.items()}, numbers)
-
-
-def _misfit(spots: Spots, windows: Windows) -> NDArray[np.float64]:
-    """Light that a fit leaves against the light it explains, beyond noise."""
-    used = np.count_nonzero(~windows.bad, axis=(1, 2))
-    power = spots.amplitude**2 / np.maximum(spots.covariance[:, 0, 0], 1e-12)
-    return np.asarray(np.maximum(spots.chi2 - 1.5 * used, 0) / np.maximum(power, 1e-12))
 
 
 def _is_odd(spots: Spots) -> NDArray[np.bool_]:
@@ -103,7 +95,8 @@ def _table(spots: Spots, frame: Rows) -> Columns:
     return {
         "frame": frame, "amplitude": spots.amplitude.copy(), "x": spots.x.copy(), "y": spots.y.copy(),
         "x_var": spots.covariance[:, 1, 1].copy(), "y_var": spots.covariance[:, 2, 2].copy(),
-        "sx": spots.sx.copy(), "sy": spots.sy.copy(), "flags": np.zeros(len(frame), np.int64),
+        "excess": spots.excess.copy(), "sx": spots.sx.copy(), "sy": spots.sy.copy(),
+        "flags": np.zeros(len(frame), np.int64),
     }  # fmt: skip
 
 
@@ -129,7 +122,6 @@ def _fit_neighbours(eyes: Eyes, stack: NDArray[Any], table: Columns, pairs: Rows
         if cleared is windows:
             break
     table["flags"][np.unique(pairs)] |= int(Flag.CROWDED)
-    table["misfit"][np.unique(pairs)] = 0  # the neighbour's light was counted as misfit
     return table
 
 
@@ -142,6 +134,7 @@ def _write(table: Columns, rows: Rows, fitted: Pairs, first: int) -> None:
     """Put one spot of each pair into the table."""
     for i, name in enumerate(("amplitude", "x", "y")):
         table[name][rows] = fitted.values[:, first + i]
+    table["excess"][rows] = fitted.excess
     table["x_var"][rows] = fitted.covariance[:, first + 1, first + 1]
     table["y_var"][rows] = fitted.covariance[:, first + 2, first + 2]
 
@@ -188,11 +181,10 @@ def _fit_odd(eyes: Eyes, stack: NDArray[Any], table: Columns, spots: Spots, rows
     swept = fine & (streaks.chi2 < wide.chi2) & (moved < 3 * eyes.width)
     both = _best_split(eyes, windows, wide, spots.slant[rows] > 0)
     split = _is_two(eyes, both, wide, np.where(swept, streaks.chi2, wide.chi2))
-    _write_wide(table, rows, wide, windows, np.flatnonzero(fine & ~split & ~swept))
+    _write_wide(table, rows, wide, np.flatnonzero(fine & ~split & ~swept))
     _write_streaks(table, rows, streaks, np.flatnonzero(swept & ~split), eyes.width)
     two = np.flatnonzero(split)
     _write(table, rows[two], both.take(two), 0)
-    table["misfit"][rows[two]] = 0
     table["flags"][rows[two]] |= int(Flag.CROWDED)
     more = {k: v[rows[two]].copy() for k, v in table.items()}
     _write(more, np.arange(len(two)), both.take(two), 3)
@@ -211,12 +203,12 @@ def _streaks(eyes: Eyes, windows: Windows, wide: Spots) -> Streaks:
     )
 
 
-def _write_wide(table: Columns, rows: Rows, wide: Spots, windows: Windows, use: Rows) -> None:
+def _write_wide(table: Columns, rows: Rows, wide: Spots, use: Rows) -> None:
     """Put fits with free width into the table."""
     at = rows[use]
     for name in ("amplitude", "x", "y", "sx", "sy"):
         table[name][at] = getattr(wide, name)[use]
-    table["misfit"][at] = _misfit(wide, windows)[use]
+    table["excess"][at] = wide.excess[use]
     table["x_var"][at], table["y_var"][at] = wide.covariance[use, 1, 1], wide.covariance[use, 2, 2]
     table["flags"][at[np.abs(wide.slant[use]) > _ODD]] |= int(Flag.MERGED)
 
@@ -230,7 +222,7 @@ def _write_streaks(table: Columns, rows: Rows, streaks: Streaks, use: Rows, widt
     table["sx"][at], table["sy"][at] = np.where(lying, long, width), np.where(lying, width, long)
     table["amplitude"][at] = values[:, 0] * width / long
     table["x_var"][at], table["y_var"][at] = streaks.covariance[use, 1, 1], streaks.covariance[use, 2, 2]
-    table["misfit"][at] = 0
+    table["excess"][at] = 0
 
 
 def _best_split(eyes: Eyes, windows: Windows, wide: Spots, slant: NDArray[np.bool_]) -> Pairs:
@@ -244,7 +236,7 @@ def _best_split(eyes: Eyes, windows: Windows, wide: Spots, slant: NDArray[np.boo
     rows = np.arange(len(best))
     return Pairs(
         np.stack([t.values for t in tries])[best, rows], np.stack([t.covariance for t in tries])[best, rows],
-        np.stack([t.chi2 for t in tries])[best, rows],
+        np.stack([t.chi2 for t in tries])[best, rows], np.stack([t.excess for t in tries])[best, rows],
     )  # fmt: skip
 
 

@@ -70,6 +70,8 @@ def see(
             rows += _follow(eyes, source, check=len(watch.eyes) < _MOST_LIGHTS)
         recording = reader.recording()
     sightings = _gather(rows, watch.box)
+    if lamp is not None:
+        sightings = sightings.take(~_within(sightings, lamp))
     fixed = on_fixed_places(sightings, recording)
     jumps = jumps_of(sightings, recording)
     warnings = [*watch.warnings, *(f"all droplets jump at frame {j}: tracks are cut there" for j in jumps)]
@@ -164,6 +166,13 @@ def _follow(eyes: Eyes, source: Source, *, check: bool) -> list[Columns]:
             source.put_back(frames.part(slice(change, None)))
             break
     return rows
+
+
+def _within(sightings: Sightings, lamp: Rectangle) -> NDArray[np.bool_]:
+    """Which sightings lie in a rectangle or within 3 px of it."""
+    x, y, width, height = lamp
+    across = np.abs(sightings.x - (x + 0.5 * (width - 1))) < 0.5 * width + 3
+    return np.asarray(across & (np.abs(sightings.y - (y + 0.5 * (height - 1))) < 0.5 * height + 3))
 
 
 def _gather(rows: list[Columns], box: Rectangle) -> Sightings:
