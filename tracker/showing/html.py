@@ -34,6 +34,8 @@ td.l { min-width: 16rem; }
   .wide { overflow: visible; } th { background: none; } figure img { min-width: 0; } td.l { min-width: 0; } }
 """
 
+_LARGEST_SVG = 400_000  # bytes; a larger figure is shown as pixels
+
 
 @dataclass(frozen=True, slots=True)
 class Picture:
@@ -118,11 +120,21 @@ def _cell(text: str) -> str:
 
 
 def _picture(picture: Picture) -> str:
-    data = base64.b64encode(svg_of(picture.figure)).decode()
+    image, kind = svg_of(picture.figure), "svg+xml"
+    if len(image) > _LARGEST_SVG:
+        image, kind = _png_of(picture.figure), "png"
+    data = base64.b64encode(image).decode()
     return (
         f"<figure><figcaption>{escape(picture.title)}</figcaption>\n"
-        f'<div class="wide"><img alt="{escape(picture.text)}" src="data:image/svg+xml;base64,{data}"></div></figure>\n'
+        f'<div class="wide"><img alt="{escape(picture.text)}" src="data:image/{kind};base64,{data}"></div></figure>\n'
     )
+
+
+def _png_of(figure: Figure) -> bytes:
+    """Pixels instead of lines, for figures of very many parts."""
+    stream = io.BytesIO()
+    figure.savefig(stream, format="png", dpi=150, metadata={"Software": None})
+    return stream.getvalue()
 
 
 def svg_of(figure: Figure) -> bytes:

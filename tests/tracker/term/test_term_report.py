@@ -188,7 +188,9 @@ def test_page_is_one_file_without_scripts_or_requests(page):
     """Pictures lie in the page, each with a text alternative; nothing is fetched, nothing runs."""
     found = Page(page)
     assert "script" not in found.tags
-    assert all(link.startswith(("data:image/svg+xml;base64,", "#")) for link in found.links)
+    assert all(
+        link.startswith(("data:image/svg+xml;base64,", "data:image/png;base64,", "#")) for link in found.links
+    )
     assert all(len(picture["alt"]) > 20 for picture in found.pictures)
     assert "default-src 'none'" in page
     assert 'name="viewport"' in page
