@@ -26,6 +26,7 @@ from tracker.motion.tablerows import (
     droplet_row,
     segment_rows,
     shrinking_warnings,
+    swap_warnings,
 )
 from tracker.motion.velocity import Orientation, Path, fit_orientation, paths
 from tracker.motion.verdict import REASONS
@@ -142,7 +143,7 @@ def evaluate_droplets(
         _orientation_json(orientation), air.plain(), exposure, unit_json(charge_unit_of(droplets, rows, shared)),
         shared.budget(droplets, rows), details(droplets, rests) | _decisions_json(decided),
         (*orientation.warnings, *decided.warnings, *_exposure_warning(bench, exposure), *shrinking_warnings(droplets),
-         *clock_warnings(field, _trusted(droplets, rows), recording)),
+         *swap_warnings(droplets), *clock_warnings(field, _trusted(droplets, rows), recording)),
     )  # fmt: skip
 
 

@@ -17,6 +17,9 @@ from tracker.motion.rows import NAN, ChangeRow, DropletRow, SegmentRow
 from tracker.motion.verdict import ordered, verdict_of
 from tracker.records import Field, Recording, Tracks
 
+SWAP_REACH = 1e-4  # m between two tracks that may have been swapped
+SWAP_TIME = 0.5  # s beyond their uncertainties
+
 
 def droplet_row(
     droplet: Droplet, tracks: Tracks, recording: Recording, air: AirCurrent, shared_std: float, number: Number,
@@ -274,4 +277,54 @@ def shrinking_warnings(droplets: list[Droplet]) -> tuple[str, ...]:
     what = "shrink" if rate < 0 else "seem to grow"
     return (
         f"the droplets {what} together: d(r^2)/dt = {rate:.2g} +/- {std:.1g} m^2/s; radii hold at mid track",
+    )
+
+
+def swaps(droplets: list[Droplet]) -> list[tuple[int, int, float]]:
+    """Find pairs of tracks that may have taken each other's droplet.
+
+    Parameters
+    ----------
+    droplets : list of Droplet
+        With histories.
+
+    Returns
+    -------
+    pairs : list of (droplet, droplet, time)
+        Both switch at one time, within their uncertainty, at nearly one place; the time is in s.
+    """
+    seen = []
+    for droplet in droplets:
+        for change in () if droplet.history is None else droplet.history.changes:
+            if change.kind == "switch":
+                path = droplet.path
+                at = int(np.argmin(np.abs(path.times - change.time)))
+                seen.append(
+                    (path.droplet, change.time, change.time_std, float(path.down[at]), float(path.side[at]))
+                )
+    pairs = []
+    for i, (one, t1, s1, y1, x1) in enumerate(seen):
+        for two, t2, s2, y2, x2 in seen[i + 1 :]:
+            near = float(np.hypot(y1 - y2, x1 - x2)) < SWAP_REACH
+            if one != two and near and abs(t1 - t2) < 3 * float(np.hypot(s1, s2)) + SWAP_TIME:
+                pairs.append((one, two, 0.5 * (t1 + t2)))
+    return pairs
+
+
+def swap_warnings(droplets: list[Droplet]) -> tuple[str, ...]:
+    """Say which tracks may have been swapped.
+
+    Parameters
+    ----------
+    droplets : list of Droplet
+        With histories.
+
+    Returns
+    -------
+    warnings : tuple of str
+        One line a pair, with what a person can do.
+    """
+    return tuple(
+        f"droplets {one} and {two} may have been swapped at {time:.2f} s: split both there and join them crosswise"
+        for one, two, time in swaps(droplets)
     )

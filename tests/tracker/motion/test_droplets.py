@@ -300,6 +300,35 @@ def test_a_list_whose_times_are_off_is_told(tmp_path):
         assert any("0.20 s later than the list" in warning for warning in found.warnings) is told
 
 
+def test_two_swapped_tracks_are_told_as_a_pair(tmp_path):
+    """Two droplets that cross and take each other's track at 12 s both switch, and the warning names both."""
+    rng = np.random.default_rng(102)
+    lives = [Life(0.6e-6, 5), Life(1.0e-6, -6), Life(0.8e-6, 3)]
+    tracks, recording = made_tracks(rng, lives, CAMERA)
+    times = recording.frame_times[tracks.sightings.frame]
+    x, y = tracks.sightings.x.copy(), tracks.sightings.y.copy()
+    for number in (0, 1):  # let them meet at 12 s
+        rows = np.arange(len(tracks))[tracks.rows(number)]
+        at = rows[np.searchsorted(times[rows], 12.0)]
+        x[rows] += 300.0 - x[at]
+        y[rows] += 200.0 - y[at]
+    swapped = tracks.droplet.copy()
+    late = times >= 12.0
+    swapped[late & (tracks.droplet == 0)], swapped[late & (tracks.droplet == 1)] = 1, 0
+    order = np.lexsort((tracks.sightings.frame, swapped))
+    seen = replace(tracks.sightings, x=x, y=y).take(order)
+    bench = made_bench(tmp_path, CAMERA)
+    found = evaluate_droplets(
+        replace(tracks, droplet=swapped[order], sightings=seen), recording,
+        field_from_list(bench.field.entries, recording), bench, settings=Settings(),
+    )  # fmt: skip
+    assert [row.verdict for row in found.droplets] == ["doubt", "doubt", "keep"]
+    assert all("switch" in reasons(found)[number] for number in (0, 1))
+    told = [warning for warning in found.warnings if "swapped" in warning]
+    assert len(told) == 1
+    assert "droplets 0 and 1" in told[0]
+
+
 def test_a_droplet_at_balance_is_told_with_its_voltage(tmp_path):
     """A droplet that hangs still at 200 V reports that balance voltage within its uncertainty."""
     camera = Camera(
