@@ -224,6 +224,8 @@ def study(folder: Path, count: int, kills: int) -> str:
         "its first week's voltage each week. In brackets: standard uncertainties (of the scale: own and shared, "
         "without its own stated one; of the drift: own).", "",
         "## Time and memory", "", grid(("what", "figure"), times), "",
+        *(["Other work ran on the machine at the same time: the wall times are not those of a quiet one.", ""]
+          if load > 1 else []),
         "## Batches killed with SIGKILL at random moments", "", grid(kill_heads, rows), "",
         "Half files that a kill leaves are removed by the next batch. Lost would be a result that was whole before a "
         "kill and was made again later.", "",
