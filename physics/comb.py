@@ -31,6 +31,7 @@ COARSE_PHASE_STD = (
 COARSE_PHASE_STEP = 0.08  # step of the scan: phase that the largest charge gains in it
 _SERIES_FROM = 0.2  # phase std above which the Fourier series is shorter than the sum over teeth of one width
 _TEETH_TO = 0.3  # the same where each tooth has its own width, and only the sum is exact
+HALF_TOLD = 0.24  # phase std; 13 kinds of simulated sets are then off by less than half their std
 _GROUP = 32  # factors multiplied before a logarithm is taken; densities stay far below 1e9, so no overflow
 _CHUNK = 24_000  # elements of one work array
 
@@ -258,7 +259,12 @@ def relative_precision(sample: ChargeSample) -> float:
 
 
 def pooled_log_ratio(
-    samples: tuple[ChargeSample, ...], centre: float, half_width: float, points: int
+    samples: tuple[ChargeSample, ...],
+    centre: float,
+    half_width: float,
+    points: int,
+    *,
+    one_comb: bool = False,
 ) -> tuple[FloatArray, FloatArray]:
     """Log likelihood ratio near one frequency, each bench's common factor integrated over its prior.
 
@@ -272,6 +278,10 @@ def pooled_log_ratio(
         Of the window, relative, above 0.
     points : int
         Of the result; odd.
+    one_comb : bool, optional
+        True where the window holds one comb and its spacing is wanted: the likelihood of the charges given
+        their numbers. The ratio to a smooth distribution, right for the choice between combs, carries one
+        factor of the spacing for each charge that tells its number, and so draws a wide mode to large spacings.
 
     Returns
     -------
@@ -298,8 +308,16 @@ def pooled_log_ratio(
             np.arange((points - 1) * over + 1 + 2 * side) - (points // 2) * over - side
         )
         values = log_ratios(sample, np.exp(fine))
+        if one_comb:
+            values = values + _numbers_told(sample, centre) * (fine - np.log(centre))
         total += _smooth(values, side, step / over / sample.shared_rel_std if side else 0.0)[:, ::over]
     return np.exp(log_f), log_mean_exp(total)
+
+
+def _numbers_told(sample: ChargeSample, frequency: float) -> float:
+    """Count the charges that tell their number: sharp ones are 1, blurred ones 0, half at 0.24 of the spacing."""
+    _, std = sample.independent
+    return float(np.sum(1 / (1 + (std * frequency / HALF_TOLD) ** 6)))
 
 
 def _smooth(values: FloatArray, side: int, step: float) -> FloatArray:

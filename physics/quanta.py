@@ -281,7 +281,7 @@ def unit_ratio(sample: ChargeSample, unit: float, *, prior_rel_std: float) -> tu
         raise PhysicsError("prior_rel_std", prior_rel_std, "above 0 and below 0.1, the unit above 0 C")
     half = 4 * prior_rel_std
     points = 2 * int(np.clip(np.ceil(half / (0.4 * comb.relative_precision(sample))), 200, 4000)) + 1
-    f, value = comb.pooled_log_ratio((sample,), 1 / unit, half, points)
+    f, value = comb.pooled_log_ratio((sample,), 1 / unit, half, points, one_comb=True)
     ratio = 1 / (f * unit)
     value = value - 0.5 * (np.log(ratio) / prior_rel_std) ** 2
     weight = np.exp(value - value.max())
@@ -380,7 +380,7 @@ def _resolved(
     own, shared = _pooled_shared(samples, verdict.best.frequency)
     single = len(samples) == 1
     reach = min(40 * (own if single else np.hypot(own, shared)), 1.2 * width)
-    f, value = comb.pooled_log_ratio(samples, verdict.best.frequency, reach, 801)
+    f, value = comb.pooled_log_ratio(samples, verdict.best.frequency, reach, 801, one_comb=True)
     weight = np.exp(value - value.max())
     weight /= weight.sum()
     unit = 1 / f
@@ -398,7 +398,7 @@ def _resolved(
         f"{verdict.best.log_ratio:.0f} nats and than any other comb by {verdict.margin:.1f} nats; "
         "it is the largest comb compatible with them"
     )
-    bands = [_interval(f, weight, level, extra, z) for level, z in ((0.6827, 1.0), (0.9545, 2.0))]
+    bands = [_interval(f, weight, level, extra, z) for level, z in ((0.6827, 1.0), (0.95, 1.96))]
     return ChargeUnit(
         unit=mean, unit_std=total, unit_own_std=own_std, unit_shared_std=shared_std, resolved=True, reason=reason,
         droplets_used=count, over_e=mean / ELEMENTARY_CHARGE, over_e_std=total / ELEMENTARY_CHARGE, best=mean,

@@ -118,6 +118,24 @@ def test_likelihood_ratio_of_smooth_charges_has_mean_one():
 
 @pytest.mark.parametrize(
     ("setting", "sets"),
+    [(Setting(400, 0.2, largest=3), 25), (Setting(1000, 0.15, largest=6), 12)],
+    ids=["400 at 0.20 up to 3", "1000 at 0.15 up to 6"],
+)
+def test_many_small_numbers_do_not_draw_the_unit_to_large_spacings(setting, sets):
+    """Where many charges carry few different numbers the unit is still as near to e as its uncertainty says.
+
+    The mean of errors over own uncertainties is 0 within 3.3 / sqrt(sets), plus 0.2 for the approximate count
+    of charges that tell their number; the likelihood ratio to a smooth distribution alone is 1.5 off.
+    """
+    found = count_units(setting, sets, rng(3))
+    assert found.wrong == 0
+    assert abs(found.bias) < 3.3 / np.sqrt(sets) + 0.2
+    good = round(found.resolved * sets)
+    assert found.cover_95 * good >= binom.ppf(0.001, good, 0.92)
+
+
+@pytest.mark.parametrize(
+    ("setting", "sets"),
     [(Setting(30, 0.1), 40), (Setting(100, 0.15), 20), (Setting(60, (0.03, 0.3)), 30)],
     ids=["30 at 0.10", "100 at 0.15", "60 mixed"],
 )

@@ -213,7 +213,8 @@ def shared_inputs(recording: Mapping[str, Any]) -> dict[str, Measured]:
     per_pixel = scale["metres_per_pixel_y"]
     volts = bench.get("voltage", {}).get("value") or _largest_voltage(recording)
     viscosity, slip = bench["viscosity"], slip_model(bench["slip"])
-    inputs["scale"] = Measured(per_pixel, scale["metres_per_pixel_y_std"], scale.get("picture") or "stated")
+    worse = max(scale[f"metres_per_pixel_{axis}_std"] / scale[f"metres_per_pixel_{axis}"] for axis in "xy")
+    inputs["scale"] = Measured(per_pixel, per_pixel * worse, scale.get("picture") or "stated")
     inputs["voltage"] = Measured(
         abs(volts), abs(volts) * bench["voltage_rel_std"], "cell.voltage or field.list"
     )
