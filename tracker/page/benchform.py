@@ -26,15 +26,15 @@ class Fault(dict[str, str]):
         super().__init__(key=key, message=message)
 
 
-def read_form(values: Mapping[str, Any], *, has_picture: bool, has_log: bool) -> tuple[str, list[Fault]]:
+def read_form(values: Mapping[str, Any], *, has_scale: bool, has_log: bool) -> tuple[str, list[Fault]]:
     """Turn the fields of the form into a bench file.
 
     Parameters
     ----------
     values : mapping of str to str
         Dotted key of the bench file -> what was typed; empty fields are left out.
-    has_picture : bool
-        Whether a reference picture gives the scale.
+    has_scale : bool
+        Whether a reference picture or a scale file gives the scale.
     has_log : bool
         Whether a voltage log was sent; it lies beside the bench file as ``voltage.csv``.
 
@@ -54,12 +54,10 @@ def read_form(values: Mapping[str, Any], *, has_picture: bool, has_log: bool) ->
             given[key] = value.strip()
     faults += [fault for key, text in given.items() if (fault := _check(key, text)) is not None]
     faults += [Fault(key, f"is missing; {QUANTITIES[key][3]}") for key in REQUIRED if key not in given]
-    if not has_picture and "camera.metres_per_pixel" not in given:
+    if not has_scale and "camera.metres_per_pixel" not in given:
         faults.append(Fault("camera.metres_per_pixel", "is missing; type it, or drop a reference picture"))
     if "site.gravity" not in given:
         faults.append(Fault("site.gravity", f"is missing; {QUANTITIES['site.gravity'][3]}"))
-    if has_picture:
-        faults += check_pitch(given.get("scale.pitch", ""))
     field, wrong = _field(given, has_log=has_log)
     return _toml(given, field), faults + wrong
 

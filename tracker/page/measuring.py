@@ -32,6 +32,8 @@ class Order:
     picture: Upload | None
     log: Upload | None
     text: str  # of the bench file
+    own: str | None  # text of the recording's own file, which overrides keys of the bench
+    scale: str | None  # text of a scale file
     log_name: str
     scale_name: str
     pitch: str
@@ -44,8 +46,8 @@ def read_order(body: Mapping[str, Any], uploads: Uploads) -> Order:
     Parameters
     ----------
     body : mapping
-        ``recording``, ``picture``, ``log``: numbers of uploads or None; ``bench``: text of a bench file or None;
-        ``values``: fields of the form.
+        ``recording``, ``picture``, ``log``: numbers of uploads or None; ``bench``, ``own``, ``scale``: texts of
+        a bench file, of the recording's own file and of a scale file, or None; ``values``: fields of the form.
     uploads : Uploads
         Files that were sent.
 
@@ -71,27 +73,47 @@ def read_order(body: Mapping[str, Any], uploads: Uploads) -> Order:
     pattern = str(values.get("scale.pattern", ""))
     if pattern not in PATTERNS:
         raise RefusedError(400, "scale.pattern must be lines, grid or dots")
-    text = body.get("bench")
     names: dict[str, str] = {}
+    faults: list[Fault] = []
+    texts = {role: _text(body, role) for role in ("bench", "own", "scale")}
+    text = texts["bench"]
     if text is None:
-        text, faults = read_form(values, has_picture="picture" in held, has_log="log" in held)
-    else:
-        names, faults = _own_bench(text)
-        faults += check_pitch(str(values.get("scale.pitch", ""))) if "picture" in held else []
+        with_scale = "picture" in held or texts["scale"] is not None
+        text, faults = read_form(values, has_scale=with_scale, has_log="log" in held)
+    for given in (texts["bench"], texts["own"]):
+        found, wrong = _names(given)
+        names |= found
+        faults += wrong
+    if "picture" in held:
+        faults += check_pitch(str(values.get("scale.pitch", "")))
     if faults:
         raise RefusedError(422, "; ".join(fault["message"] for fault in faults), {"faults": faults})
     return Order(
-        held["recording"], held.get("picture"), held.get("log"), text, names.get("log", LOG_NAME),
-        names.get("scale", SCALE_NAME), str(values.get("scale.pitch", "")), pattern,
-    )  # fmt: skip
+        held["recording"],
+        held.get("picture"),
+        held.get("log"),
+        text,
+        texts["own"],
+        texts["scale"],
+        names.get("log", LOG_NAME),
+        names.get("scale", SCALE_NAME),
+        str(values.get("scale.pitch", "")),
+        pattern,
+    )
 
 
-def _own_bench(text: Any) -> tuple[dict[str, str], list[Fault]]:
-    """Look into a bench file that was dropped."""
-    if not isinstance(text, str) or len(text) > MAX_BENCH:
-        return {}, [Fault("", f"the bench file must be a text of at most {MAX_BENCH} characters")]
+def _text(body: Mapping[str, Any], role: str) -> str | None:
+    """Text of a small file in a request."""
+    text = body.get(role)
+    if text is not None and (not isinstance(text, str) or len(text) > MAX_BENCH):
+        raise RefusedError(422, f"the {role} file must be a text of at most {MAX_BENCH} characters")
+    return text
+
+
+def _names(text: str | None) -> tuple[dict[str, str], list[Fault]]:
+    """Files that a bench file names beside itself."""
     try:
-        return companions(text), []
+        return ({} if text is None else companions(text)), []
     except ValueError as error:
         return {}, [Fault("", f"bench file: {error}")]
 
@@ -119,6 +141,10 @@ def place_order(order: Order, results: Path) -> Job:
     folder = _folder(order.recording, results)
     recording = order.recording.place(folder)
     (folder / BENCH_NAME).write_text(order.text, encoding="utf-8")
+    if order.own is not None:
+        recording.with_suffix(".toml").write_text(order.own, encoding="utf-8")
+    if order.scale is not None:
+        (folder / order.scale_name).write_text(order.scale, encoding="utf-8")
     if order.log is not None:
         order.log.leaf = order.log_name
         order.log.place(folder)

@@ -160,7 +160,7 @@ def server_config(app: ASGIApp) -> uvicorn.Config:
     """
     return uvicorn.Config(
         app,
-        log_level=logging.ERROR,
+        log_level=logging.CRITICAL,
         access_log=False,
         server_header=False,
         ws="none",

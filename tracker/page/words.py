@@ -26,6 +26,8 @@ def in_brackets(value: float, std: float) -> str:
     if not std > 0:
         return f"{value:.5g}"
     digits = max(0, 1 - floor(log10(std)))
+    if round(std * 10**digits) >= 100 and digits > 0:  # 0.00996 is 0.0100: two digits of it are 0.010
+        digits -= 1
     return f"{value:.{digits}f}({round(std * 10**digits)})"
 
 

@@ -89,7 +89,7 @@ def rest_on(page: Page, frame: int) -> None:
 def places(page: Page) -> list[dict[str, float]]:
     """Droplets in the shown frame: number, image place, page place."""
     found: list[dict[str, float]] = page.evaluate("""() => {
-      const { stage } = fallrise.view, rect = stage.over.getBoundingClientRect();
+      const { stage } = fallrise.view, rect = stage.canvas.getBoundingClientRect();
       return [...stage.tracks.values()].flatMap((t) => {
         const row = t.frame.indexOf(stage.state.frame);
         if (row < 0) return [];

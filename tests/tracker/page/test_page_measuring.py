@@ -15,11 +15,12 @@ from page_server import Server, simulated_recording, wait_for
 
 from tracker.bench import load_bench
 from tracker.keeping.store import read_result
-from tracker.page.benchform import companions, read_form
+from tracker.page.benchform import check_pitch, companions, read_form
 from tracker.page.errors import RefusedError
 from tracker.page.site import Site
 from tracker.page.uploads import SPARE, clean_leaf
 
+SAMPLES = Path(__file__).resolve().parents[3] / "sample_videos"
 FORM = {
     "cell.plate_gap": "6.00(2) mm", "cell.voltage": "260.0(5) V", "oil.density": "886(1) kg/m^3",
     "air.temperature": "22.0(3) degC", "air.pressure": "1008(1) hPa", "air.relative_humidity": "45(5) percent",
@@ -47,7 +48,7 @@ def ended(page: Client, number: int) -> dict[str, object]:
 
 def test_form_becomes_the_bench_that_was_typed(tmp_path: Path) -> None:
     """Every quantity typed into the form is that of the bench read from the file made of it."""
-    text, faults = read_form(FORM, has_picture=False, has_log=False)
+    text, faults = read_form(FORM, has_scale=False, has_log=False)
     assert faults == []
     (tmp_path / "bench.toml").write_text(text)
     bench = load_bench(tmp_path / "bench.toml")
@@ -67,20 +68,23 @@ def test_form_names_every_fault_at_its_field() -> None:
         "field.list": "soon",
     }
     wrong |= {"air.pressure": "1008", "hack.key": "1", "camera.metres_per_pixel": ""}
-    _, faults = read_form(wrong, has_picture=False, has_log=False)
+    _, faults = read_form(wrong, has_scale=False, has_log=False)
     named = {fault["key"] for fault in faults}
     assert named == {
         "cell.plate_gap", "air.temperature", "oil.density", "field.list", "air.pressure", "hack.key",
         "camera.metres_per_pixel",
     }  # fmt: skip
-    _, faults = read_form({**FORM, "field.source": "log"}, has_picture=True, has_log=False)
-    assert {fault["key"] for fault in faults} == {"field.source", "scale.pitch"}
+    _, faults = read_form({**FORM, "field.source": "log"}, has_scale=True, has_log=False)
+    assert {fault["key"] for fault in faults} == {"field.source"}
+    assert [fault["key"] for fault in check_pitch("0.1 s") + check_pitch("") + check_pitch("-1 mm")] == [
+        "scale.pitch"
+    ] * 3
 
 
 def test_text_of_the_form_cannot_leave_its_place() -> None:
     """Quotes, line breaks and control characters stay inside the value that they were typed into."""
     evil = 'x"\n[cell]\nplate_gap = "1 mm\x7f\\'
-    text, _ = read_form({**FORM, "air.pressure": evil}, has_picture=False, has_log=False)
+    text, _ = read_form({**FORM, "air.pressure": evil}, has_scale=False, has_log=False)
     assert tomllib.loads(text)["air"]["pressure"] == evil
     assert tomllib.loads(text)["cell"]["plate_gap"] == "6.00(2) mm"
 
@@ -127,6 +131,36 @@ def test_dropped_recording_becomes_a_result(page: Client, place: Path, tmp_path:
     found = page.get(f"/api/results/{done['result']['id']}").json()
     assert len(found["droplets"]) == len(read_result(place / "clip.fallrise").droplets)
     assert "b_night_3" in [item["name"] for item in page.get("/api/shelf").json()["items"]]
+
+
+def test_reference_picture_gives_the_scale(page: Client, tmp_path: Path) -> None:
+    """A sample recording with bench file, own file and reference picture: its droplets have the measured scale."""
+    recording = send(page, SAMPLES / "steady.avi")
+    picture = send(page, SAMPLES / "reticle.png", kind="picture")
+    order = {
+        "recording": recording, "picture": picture, "bench": (SAMPLES / "bench.toml").read_text(),
+        "own": (SAMPLES / "steady.toml").read_text(), "values": {"scale.pitch": "0.1 s"},
+    }  # fmt: skip
+    wrong = page.post("/api/measure", json=order)
+    assert [fault["key"] for fault in wrong.json()["faults"]] == ["scale.pitch"]
+    order["values"] = {"scale.pitch": "0.1000(2) mm"}
+    job = page.post("/api/measure", json=order).json()
+    done = ended(page, job["number"])
+    assert done["state"] == "done", done
+    result = read_result(tmp_path / "results" / "steady" / "steady.fallrise")
+    stored = result.recording["scale"]
+    # The picture was simulated at 3 um a pixel.
+    assert stored["metres_per_pixel_y"] == pytest.approx(3e-6, abs=4 * stored["metres_per_pixel_y_std"])
+    assert result.recording["field"]["source"] == "list"
+    names = {path.name for path in (tmp_path / "results" / "steady").iterdir()}
+    assert names == {
+        "steady.avi",
+        "steady.toml",
+        "bench.toml",
+        "reticle.png",
+        "scale.json",
+        "steady.fallrise",
+    }
 
 
 def test_wrong_bench_file_is_told_before_the_measurement(page: Client, place: Path, tmp_path: Path) -> None:

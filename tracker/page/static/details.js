@@ -113,7 +113,7 @@ export class Details {
   draw() {
     const { result, chosen } = this.view;
     if (!result) return;
-    if (this.tab === "motion") this.motion.draw(this.detail, result.times[this.frame] ?? null, null);
+    if (this.tab === "motion") this.motion.draw(this.detail, result.times[this.frame] ?? null);
     if (this.tab === "number") drawNumbers(this.numberCanvas, this.numbers);
     if (this.tab === "charges") this.charges.draw(result.droplets, result.charge_unit, chosen);
   }

@@ -27,7 +27,8 @@ export function withDoubt(value, std, factor = 1) {
   if (value === null || value === undefined) return "";
   const v = value * factor, s = std === null || std === undefined ? 0 : Math.abs(std * factor);
   if (!(s > 0)) return minus(Number(v.toPrecision(4)).toString());
-  const digits = Math.max(0, Math.min(9, 1 - Math.floor(Math.log10(s))));
+  let digits = Math.max(0, Math.min(9, 1 - Math.floor(Math.log10(s))));
+  if (digits > 0 && Math.round(s * 10 ** digits) >= 100) digits -= 1;
   const doubt = digits > 0 ? Math.round(s * 10 ** digits) : Math.round(s);
   return minus(`${v.toFixed(digits)}(${doubt})`);
 }

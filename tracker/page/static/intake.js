@@ -3,7 +3,8 @@
 import { bytes, clearNotice, complain, el, notice } from "./dom.js";
 import { post, remove, upload } from "./api.js";
 
-const ROLES = { recording: "Recording", bench: "Bench file", picture: "Reference picture", log: "Voltage log" };
+const ROLES = { recording: "Recording", bench: "Bench file", own: "Recording\u2019s own file", scale: "Scale file", picture: "Reference picture", log: "Voltage log" };
+const TEXTS = ["bench", "own", "scale"];   // small files that are read here and sent with the request
 const SECTIONS = [
   ["Cell", [["cell.plate_gap", "Plate gap", "6.00(2) mm"], ["cell.voltage", "Field-on voltage", "260.0(5) V"]]],
   ["Oil and air", [["oil.density", "Oil density", "886(1) kg/m^3"], ["oil.density_temperature", "\u2026 at", "20 degC"], ["air.temperature", "Temperature", "22.0(3) degC"], ["air.pressure", "Pressure", "1008(1) hPa"], ["air.relative_humidity", "Humidity", "45(5) percent"]]],
@@ -22,7 +23,7 @@ export class Intake {
     Object.assign(this, { shelf, onStarted });
     this.files = {};
     this.started = new Map();
-    this.benchText = null;
+    this.texts = {};
     this.values = {};
     this.error = el("p", { class: "error", role: "alert" });
     this.drop = this.dropZone();
@@ -53,7 +54,10 @@ export class Intake {
 
   roleOf(file) {
     const ending = file.name.toLowerCase().match(/\.[^.]*$/)?.[0] || "";
-    if (ending === ".toml") return "bench";
+    // STEM.toml beside STEM.avi overrides single keys of the bench; any other is the bench file.
+    const stem = (name) => name.replace(/\.[^.]*$/, "");
+    if (ending === ".toml") return this.files.recording && stem(file.name) === stem(this.files.recording.name) ? "own" : "bench";
+    if (ending === ".json") return "scale";
     if ([".csv", ".txt"].includes(ending)) return "log";
     if ([".png", ".jpg", ".jpeg", ".bmp"].includes(ending)) return "picture";
     if ([".tif", ".tiff"].includes(ending)) return this.files.recording ? "picture" : "recording";
@@ -62,18 +66,20 @@ export class Intake {
 
   take(files) {
     this.error.textContent = "";
-    for (const file of files) {
+    // Recordings first: the role of a .toml or .tif depends on them.
+    const late = (file) => (/\.(toml|json|png|jpe?g|bmp|csv|txt)$/i.test(file.name) ? 1 : 0);
+    for (const file of files.sort((a, b) => late(a) - late(b))) {
       const role = this.roleOf(file);
-      if (role === "bench") this.readBench(file);
+      if (TEXTS.includes(role)) this.readText(role, file);
       else this.send(role, file);
     }
     this.refresh();
   }
 
-  async readBench(file) {
-    if (file.size > 100_000) { this.error.textContent = `${file.name} is too large for a bench file`; return; }
-    this.files.bench = { name: file.name, size: file.size, state: "done" };
-    this.benchText = await file.text();
+  async readText(role, file) {
+    if (file.size > 100_000) { this.error.textContent = `${file.name} is too large for a ${ROLES[role].toLowerCase()}`; return; }
+    this.files[role] = { name: file.name, size: file.size, state: "done" };
+    this.texts[role] = await file.text();
     this.fillForm();
     this.refresh();
   }
@@ -110,7 +116,7 @@ export class Intake {
 
   removeFile(role) {
     this.drop_(role);
-    if (role === "bench") this.benchText = null;
+    delete this.texts[role];
     this.fillForm();
     this.refresh();
   }
@@ -139,10 +145,10 @@ export class Intake {
   fillForm() {
     const parts = [];
     if (this.files.picture) parts.push(el("fieldset", {}, el("legend", {}, "Reference picture"), this.field("scale.pitch", "Line spacing", "0.1(0) mm"), this.choice("scale.pattern", "Pattern", [["", "find out"], ["lines", "ruled lines"], ["grid", "square grid"], ["dots", "dots"]])));
-    if (this.benchText === null) {
+    if (this.texts.bench === undefined) {
       parts.push(el("p", { class: "soft" }, "No bench file yet: type what is known. Uncertainties stand in brackets, as in 6.00(2) mm."));
       for (const [title, fields] of SECTIONS) {
-        const shown = fields.filter(([key]) => !(key === "camera.metres_per_pixel" && this.files.picture));
+        const shown = fields.filter(([key]) => !(key === "camera.metres_per_pixel" && (this.files.picture || this.files.scale)));
         parts.push(el("fieldset", {}, el("legend", {}, title), ...shown.map((f) => this.field(...f))));
       }
       parts.push(this.fieldOfField());
@@ -186,7 +192,7 @@ export class Intake {
     this.refresh();
     const number = (role) => this.files[role]?.number || null;
     const values = Object.fromEntries(Object.entries(this.values).filter(([, text]) => text.trim()));
-    const what = { recording: number("recording"), picture: number("picture"), log: number("log"), bench: this.benchText, values };
+    const what = { recording: number("recording"), picture: number("picture"), log: number("log"), bench: this.texts.bench ?? null, own: this.texts.own ?? null, scale: this.texts.scale ?? null, values };
     try {
       const job = await post("/api/measure", what);
       this.started.set(job.number, { ...this.files });
@@ -207,7 +213,7 @@ export class Intake {
       const { key, found, allowed, message } = job.error;
       if (key && this.fault(key, `read ${found}; allowed: ${allowed}`)) return;
       this.error.textContent = message;
-    } else if (job.state === "cancelled") { this.files = {}; this.benchText = null; this.fillForm(); }
+    } else if (job.state === "cancelled") { this.files = {}; this.texts = {}; this.fillForm(); }
     this.refresh();
   }
 

@@ -37,6 +37,7 @@ function span(values, margin = 0.06) {
 export class MotionPlot {
   constructor(canvas, { onScrub }) {
     this.canvas = canvas;
+    this.still = document.createElement("canvas");
     this.onScrub = onScrub;
     canvas.addEventListener("pointerdown", (event) => { canvas.setPointerCapture(event.pointerId); this.dragging = true; this.scrub(event); });
     canvas.addEventListener("pointermove", (event) => { if (this.dragging) this.scrub(event); });
@@ -47,22 +48,48 @@ export class MotionPlot {
     if (this.upper) this.onScrub(this.upper.valueX(event.clientX - this.canvas.getBoundingClientRect().left));
   }
 
-  draw(detail, time, trim) {
-    const { context: c, width, height } = fitCanvas(this.canvas);
-    if (!detail || width < 60) return;
+  // All but the cursor is drawn once for each droplet and size, and copied while the time moves.
+  draw(detail, time) {
+    const ratio = window.devicePixelRatio || 1, { clientWidth: width, clientHeight: height } = this.canvas;
+    const key = [detail, detail?.residual, width, height, ratio, fontSize()];
+    if (!this.key || key.some((part, i) => part !== this.key[i])) {
+      const { context } = fitCanvas(this.canvas);
+      this.upper = null;
+      if (detail && width >= 60) this.drawStill(context, width, height, detail);
+      Object.assign(this.still, { width: this.canvas.width, height: this.canvas.height });
+      this.still.getContext("2d").drawImage(this.canvas, 0, 0);
+      this.key = key;
+    }
+    const c = this.canvas.getContext("2d");
+    c.setTransform(1, 0, 0, 1, 0, 0);
+    c.clearRect(0, 0, this.canvas.width, this.canvas.height);
+    c.drawImage(this.still, 0, 0);
+    c.setTransform(ratio, 0, 0, ratio, 0, 0);
+    if (!this.upper || time === null || time < this.upper.x[0] || time > this.upper.x[1]) return;
+    c.strokeStyle = INK;
+    c.lineWidth = 1.2;
+    line(c, this.upper.px(time), this.upper.area.top, this.upper.px(time), this.bottom);
+  }
+
+  drawStill(c, width, height, detail) {
     const size = fontSize(), left = size * 4.6, right = width - 10, bottom = height - size * 1.9, gap = 8;
     const cut = Math.round(10 + (bottom - 10) * 0.64);
     const x = span(detail.time, 0.02);
     const upper = new Axes(c, { left, top: 8, right, bottom: cut }, x, span(detail.height));
     const lower = new Axes(c, { left, top: cut + gap, right, bottom }, x, [-4.4, 4.4]);
     this.upper = upper;
+    this.bottom = bottom;
     for (const axes of [upper, lower]) shade(axes, detail.segments, axes === upper);
     const xTicks = ticks(...x, Math.max(3, width / 90));
     upper.frame({ xLabel: null, yLabel: "height / \u00b5m", xTicks, yTicks: ticks(...upper.y, 5) });
     lower.frame({ xLabel: "time / s", yLabel: "residual / \u03c3", xTicks, yTicks: [-3, 0, 3] });
     upper.clip(() => this.drawHeights(c, upper, detail));
     lower.clip(() => this.drawResiduals(c, lower, detail));
-    this.drawTimes(c, upper, lower, time, trim, detail);
+    c.setLineDash([6, 3]);
+    c.strokeStyle = "#6b2a86";
+    c.lineWidth = 1.5;
+    for (const change of detail.changes) if (change.time !== null) line(c, upper.px(change.time), upper.area.top, upper.px(change.time), bottom);
+    c.setLineDash([]);
   }
 
   drawHeights(c, axes, detail) {
@@ -95,26 +122,6 @@ export class MotionPlot {
         c.beginPath(); c.moveTo(x, y); c.lineTo(x - 4, y + way); c.lineTo(x + 4, y + way); c.fill();
       } else if (Math.abs(z) > 3) c.fillRect(x - 2, axes.py(z) - 2, 4, 4);
       else c.fillRect(x - 0.9, axes.py(z) - 0.9, 1.8, 1.8);
-    }
-  }
-
-  drawTimes(c, upper, lower, time, trim, detail) {
-    const top = upper.area.top, bottom = lower.area.bottom;
-    c.setLineDash([6, 3]);
-    c.strokeStyle = "#6b2a86";
-    c.lineWidth = 1.5;
-    for (const change of detail.changes) if (change.time !== null) line(c, upper.px(change.time), top, upper.px(change.time), bottom);
-    c.setLineDash([]);
-    if (trim) {
-      c.fillStyle = "rgba(80,80,80,.28)";
-      const a = Math.max(upper.area.left, upper.px(trim[0])), b = Math.min(upper.area.right, upper.px(trim[1]));
-      c.fillRect(upper.area.left, top, Math.max(0, a - upper.area.left), bottom - top);
-      c.fillRect(b, top, Math.max(0, upper.area.right - b), bottom - top);
-    }
-    if (time !== null && time >= upper.x[0] && time <= upper.x[1]) {
-      c.strokeStyle = INK;
-      c.lineWidth = 1.2;
-      line(c, upper.px(time), top, upper.px(time), bottom);
     }
   }
 }

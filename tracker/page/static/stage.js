@@ -1,5 +1,4 @@
-// The picture with its tracks. Two canvases of one size in one box: below the picture, on which brightness and
-// contrast act, above the marks. Both are drawn in one call, so that they never show two frames.
+// The picture with its tracks, both drawn on one canvas in one call, so that they never show two frames.
 // Image points have the centre of the first pixel at (0, 0): on the screen it lies half a pixel in.
 
 import { placeAt, rowAt } from "./tracks.js";
@@ -15,11 +14,10 @@ export class Stage {
     this.box = box;
     this.onChoose = onChoose;
     this.onView = onView;
-    this.under = document.createElement("canvas");
-    this.over = document.createElement("canvas");
-    this.under.setAttribute("aria-hidden", "true");
-    this.over.setAttribute("aria-hidden", "true");
-    box.prepend(this.under, this.over);
+    this.canvas = document.createElement("canvas");
+    this.canvas.setAttribute("aria-hidden", "true");
+    this.context = this.canvas.getContext("2d", { alpha: false });
+    box.prepend(this.canvas);
     this.size = [1, 1];
     this.zoom = 1;                 // relative to the whole picture in view
     this.centre = null;            // image point in the middle of the box
@@ -52,11 +50,9 @@ export class Stage {
     const left = Math.ceil(rect.left / 4) * 4 - rect.left, top = Math.ceil(rect.top / 4) * 4 - rect.top;
     const width = Math.max(4, Math.floor((rect.width - left) / 4) * 4), height = Math.max(4, Math.floor((rect.height - top) / 4) * 4);
     const ratio = window.devicePixelRatio || 1;
-    for (const canvas of [this.under, this.over]) {
-      Object.assign(canvas.style, { left: `${left}px`, top: `${top}px`, width: `${width}px`, height: `${height}px` });
-      canvas.width = Math.round(width * ratio);
-      canvas.height = Math.round(height * ratio);
-    }
+    Object.assign(this.canvas.style, { left: `${left}px`, top: `${top}px`, width: `${width}px`, height: `${height}px` });
+    this.canvas.width = Math.round(width * ratio);
+    this.canvas.height = Math.round(height * ratio);
     this.width = width;
     this.height = height;
     this.draw();
@@ -74,13 +70,16 @@ export class Stage {
   }
 
   pointer(event) {
-    const rect = this.over.getBoundingClientRect();
+    const rect = this.canvas.getBoundingClientRect();
     return [event.clientX - rect.left, event.clientY - rect.top];
   }
 
+  // Brightness and contrast act on the picture alone where the browser can, else on the marks too.
   setLook(brightness, contrast) {
-    const plain = brightness === 1 && contrast === 1;
-    this.under.style.filter = plain ? "none" : `brightness(${brightness}) contrast(${contrast})`;
+    const look = brightness === 1 && contrast === 1 ? "none" : `brightness(${brightness}) contrast(${contrast})`;
+    if ("filter" in this.context) this.look = look === "none" ? null : look;
+    else this.canvas.style.filter = look;
+    this.draw();
   }
 
   zoomBy(factor, at = [this.width / 2, this.height / 2]) {
@@ -164,12 +163,10 @@ export class Stage {
 
   draw() {
     if (!this.centre || !this.width) return;
-    const ratio = window.devicePixelRatio || 1;
-    const under = this.under.getContext("2d", { alpha: false }), over = this.over.getContext("2d");
-    this.drawPicture(under, ratio);
-    over.setTransform(ratio, 0, 0, ratio, 0, 0);
-    over.clearRect(0, 0, this.width, this.height);
-    if (this.marks) this.drawMarks(over);
+    const ratio = window.devicePixelRatio || 1, context = this.context;
+    this.drawPicture(context, ratio);
+    context.setTransform(ratio, 0, 0, ratio, 0, 0);
+    if (this.marks) this.drawMarks(context);
     this.drawn = this.state.frame;
     if (this.onDrawn) this.onDrawn(this.state);
   }
@@ -178,7 +175,7 @@ export class Stage {
     const { bitmap, half } = this.state;
     context.setTransform(1, 0, 0, 1, 0, 0);
     context.fillStyle = "#10181c";
-    context.fillRect(0, 0, this.under.width, this.under.height);
+    context.fillRect(0, 0, this.canvas.width, this.canvas.height);
     const [left, top] = this.toScreen(-0.5, -0.5);
     context.setTransform(ratio * this.scale, 0, 0, ratio * this.scale, ratio * left, ratio * top);
     if (!bitmap) {
@@ -188,7 +185,9 @@ export class Stage {
     }
     context.imageSmoothingEnabled = this.scale * ratio < 4;
     const grow = half ? 2 : 1;
+    if (this.look) context.filter = this.look;
     context.drawImage(bitmap, 0, 0, bitmap.width * grow, bitmap.height * grow);
+    if (this.look) context.filter = "none";
   }
 
   drawMarks(context) {

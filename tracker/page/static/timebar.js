@@ -15,7 +15,6 @@ export class TimeBar {
     this.times = [0];
     this.segments = [];
     this.span = null;
-    this.trim = null;
     this.frame = 0;
     this.ready = 0;
     this.still = document.createElement("canvas");   // all but the playhead, drawn only when it changes
@@ -128,11 +127,6 @@ export class TimeBar {
     const a = this.at(this.span[0]), b = this.at(this.span[1]);
     c.fillStyle = "#ffffff";
     c.fillRect(a, low + 2, Math.max(2, b - a), 3);
-    if (!this.trim) return;
-    c.strokeStyle = "#ffc58a";
-    c.lineWidth = 2;
-    const t0 = this.at(this.trim[0]), t1 = this.at(this.trim[1]);
-    c.strokeRect(t0, 1, t1 - t0, low - 1);
   }
 
   close() {
