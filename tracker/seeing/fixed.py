@@ -5,21 +5,23 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 
-from tracker.records import Recording, Sightings
+from tracker.records import FloatArray, IntArray, Recording, Sightings
 
-_SPAN = 8.0  # s between the first and last sighting; in less, a slow droplet may stay in place
+_WANDER = 2.0  # px that a droplet would wander between the first and last sighting of the place
 _LEAST = 30  # sightings at the place
 _CELL = 1.0  # px
 _STILL = 0.12  # px: more between its earlier and later sightings is motion
 _SCATTER = 0.4  # px, standard deviation within a place
 
 
-def on_fixed_places(sightings: Sightings, recording: Recording) -> NDArray[np.bool_]:
+def on_fixed_places(sightings: Sightings, piece: IntArray, recording: Recording) -> NDArray[np.bool_]:
     """Which sightings lie at places that are seen again and again without any motion.
 
     Parameters
     ----------
     sightings : Sightings
+    piece : ndarray of shape (N,)
+        Piece of a track of each, for the usual diffusion.
     recording : Recording
         For the times of its frames.
 
@@ -29,13 +31,16 @@ def on_fixed_places(sightings: Sightings, recording: Recording) -> NDArray[np.bo
 
     Notes
     -----
-    Brownian motion carries a droplet of 1 um radius some 10 um in 8 s, so what stays within a tenth of a pixel is
-    none. Two grids, shifted by half a cell, catch a place at the border of a cell.
+    A place counts after the time in which the recording's own droplets diffuse by 2 px; where nothing moves, nothing
+    is left out. Two grids, shifted by half a cell, catch a place at the border of a cell.
     """
     fixed = np.zeros(len(sightings), np.bool_)
     if len(sightings) < _LEAST:
         return fixed
     times = recording.frame_times[sightings.frame]
+    diffusion = _usual_diffusion(sightings, piece, times)
+    if diffusion <= 0:
+        return fixed
     for shift in (0.0, 0.5):
         column = np.floor(sightings.x / _CELL + shift).astype(np.int64)
         row = np.floor(sightings.y / _CELL + shift).astype(np.int64)
@@ -44,10 +49,24 @@ def on_fixed_places(sightings: Sightings, recording: Recording) -> NDArray[np.bo
         _, begin, count = np.unique(cell[order], return_index=True, return_counts=True)
         for b, c in zip(begin[count >= _LEAST], count[count >= _LEAST], strict=True):
             rows = order[b : b + c]
-            if times[rows[-1]] - times[rows[0]] < _SPAN:
-                continue
-            fixed[rows] |= _never_moves(sightings, rows)
+            if times[rows[-1]] - times[rows[0]] > _WANDER**2 / (2 * diffusion):
+                fixed[rows] |= _never_moves(sightings, rows)
     return fixed
+
+
+def _usual_diffusion(sightings: Sightings, piece: IntArray, times: FloatArray) -> float:
+    """Median diffusion in px^2/s from second differences along pieces, which steady motion does not change."""
+    order = np.lexsort((times, piece))
+    number, frame = piece[order], sightings.frame[order]
+    whole = (number[2:] == number[:-2]) & (frame[2:] - frame[:-2] == 2)
+    if np.count_nonzero(whole) < _LEAST:
+        return 0.0
+    x = sightings.x[order]
+    bend = (x[2:] - 2 * x[1:-1] + x[:-2])[whole]
+    step = float(np.median(np.diff(times[order])[1:][whole]))
+    noise = float(np.median(sightings.x_std**2))
+    # a second difference holds two steps of 2 D dt each and six places' noise; 0.4549: median of a squared normal
+    return (float(np.median(bend**2)) / 0.4549 - 6 * noise) / (4 * step)
 
 
 def _never_moves(sightings: Sightings, rows: NDArray[np.int64]) -> bool:

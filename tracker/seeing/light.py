@@ -24,6 +24,7 @@ _LEAST_LIGHT = 2.0  # grey over black; a darker background tells no ratio
 _MOVED = 0.6  # px, least shift of the background that is a moved camera
 _ALIKE = 0.15  # least response of the phase correlation that means anything
 _JUMP = 1.0  # px, least common jump of all droplets
+_FEW_SIGHTINGS = 20  # fewer show no common motion
 _JUMP_CLEAR = 4.0  # times the median deviation among droplets
 _JUMP_DROPLETS = 4
 
@@ -158,6 +159,8 @@ def common_jumps(sightings: Sightings, piece: IntArray, times: FloatArray) -> li
     A jump shows twice in second differences, forth and back; a change of the field shows once, and with the sign
     of each droplet's charge.
     """
+    if len(sightings) < _FEW_SIGHTINGS:
+        return []
     order = np.lexsort((sightings.frame, piece))
     number, frame = piece[order], sightings.frame[order]
     at = np.column_stack([sightings.x, sightings.y])[order]
@@ -166,6 +169,8 @@ def common_jumps(sightings: Sightings, piece: IntArray, times: FloatArray) -> li
     bend = way[1:] - way[:-1] * (step[1:] / step[:-1])
     whole = (number[2:] == number[:-2]) & (frame[2:] - frame[:-2] == 2)
     bend, last = bend[whole], frame[2:][whole]
+    if len(last) == 0:
+        return []
     frames, middle, spread, count = _medians(last, bend)
     size = np.hypot(*middle.T)
     follows = np.append(np.diff(frames) == 1, False)

@@ -7,14 +7,12 @@ from numpy.typing import NDArray
 
 from tracker.records import Field, Recording, Seen, Settings, Sightings, Tracks
 from tracker.seeing.clocks import Clocks, clocks_of
-from tracker.seeing.light import common_jumps
 from tracker.seeing.stitch import join_pieces
 from tracker.seeing.untangle import untangle
 
 IntArray = NDArray[np.int64]
 
 _CROWDING = 0.06  # other droplets expected within the first gate
-_FEW_SIGHTINGS = 20  # fewer show no common motion
 _STEADY = 2  # frames: a droplet is seen at least so often in half of its life; flecks of noise are not
 _FAINT = 1.6  # times the brightness that a hundredth of the sightings does not reach
 _RESTING = 0.7  # of the usual mean root of the way between frames
@@ -56,8 +54,8 @@ def link(seen: Seen, *, field: Field | None, settings: Settings) -> Tracks:
     return _tracks(sightings, pieces, settings.min_frames)
 
 
-def jumps_of(sightings: Sightings, recording: Recording) -> list[int]:
-    """Frames at which all droplets jump at once because the camera was moved.
+def first_pieces(sightings: Sightings, recording: Recording) -> IntArray:
+    """Pieces of tracks from links that leave no choice, before anything else is known.
 
     Parameters
     ----------
@@ -66,15 +64,12 @@ def jumps_of(sightings: Sightings, recording: Recording) -> list[int]:
 
     Returns
     -------
-    frames : list of int
-        First frame after each jump.
+    piece : ndarray of shape (N,)
     """
-    if len(sightings) < _FEW_SIGHTINGS:
-        return []
-    box = (recording.width, recording.height)
+    if len(sightings) == 0:
+        return np.empty(0, np.int64)
     clocks = clocks_of(recording, None)
-    pieces = link_frames(sightings, clocks, box=box, cuts=np.empty(0, np.int64))
-    return common_jumps(sightings, pieces, recording.frame_times)
+    return link_frames(sightings, clocks, box=(recording.width, recording.height), cuts=np.empty(0, np.int64))
 
 
 def link_frames(sightings: Sightings, clocks: Clocks, *, box: tuple[int, int], cuts: IntArray) -> IntArray:

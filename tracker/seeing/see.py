@@ -8,14 +8,15 @@ from pathlib import Path
 from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
 from tracker.errors import UsageError
 from tracker.records import FloatArray, Seen, Settings, Sightings
 from tracker.seeing.fixed import on_fixed_places
 from tracker.seeing.frames import Reader, open_recording
 from tracker.seeing.learn import Eyes, learn
-from tracker.seeing.light import change_at, compare, even, shift_between, strange
-from tracker.seeing.link import jumps_of
+from tracker.seeing.light import change_at, common_jumps, compare, even, shift_between, strange
+from tracker.seeing.link import first_pieces
 from tracker.seeing.look import COLUMNS, Columns, look
 from tracker.seeing.sampling import Frames, Source, gather_samples
 
@@ -72,8 +73,9 @@ def see(
     sightings = _gather(rows, watch.box)
     if lamp is not None:
         sightings = sightings.take(~_within(sightings, lamp))
-    fixed = on_fixed_places(sightings, recording)
-    jumps = jumps_of(sightings, recording)
+    pieces = first_pieces(sightings, recording)
+    jumps = common_jumps(sightings, pieces, recording.frame_times)
+    fixed = on_fixed_places(sightings, pieces, recording)
     warnings = [*watch.warnings, *(f"all droplets jump at frame {j}: tracks are cut there" for j in jumps)]
     if fixed.any():
         sightings = sightings.take(~fixed)
