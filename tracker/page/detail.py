@@ -17,6 +17,7 @@ from tracker.motion.droplet import Droplet
 from tracker.motion.droplets import Analysis
 from tracker.page.errors import RefusedError
 from tracker.page.results import Opened
+from tracker.page.words import in_brackets
 from tracker.records import FloatArray
 from tracker.showing.plots import track_path
 
@@ -184,7 +185,9 @@ def _number_text(numbers: dict[str, Any] | None) -> str:
     if numbers is None:
         return "This droplet has no charge, so no charge number; its reasons say why."
     best = int(np.argmax(numbers["p"]))
+    charge = in_brackets(numbers["charge"], numbers["std"]).replace("-", "\u2212")
+    number = f"{numbers['n'][best]:+d}".replace("-", "\u2212")
     return (
-        f"Measured {numbers['charge']:+.2f}({numbers['std']:.2f}) e, own uncertainty (dot and bar). "
-        f"Most probable number {numbers['n'][best]:+d}, probability {numbers['p'][best]:.3f} with all that is shared."
+        f"Measured {charge} e, own uncertainty (dot and bar). Most probable number {number}, "
+        f"probability {numbers['p'][best]:.3f} with all that is shared."
     )

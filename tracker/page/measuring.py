@@ -151,10 +151,11 @@ def place_order(order: Order, results: Path) -> Job:
     picture = order.picture.place(folder) if order.picture is not None else None
     _check_bench(order, folder, recording)
     out = result_folder(recording)
-    task = {
-        "recording": str(recording), "out": str(out), "pitch": order.pitch, "pattern": order.pattern or None,
-        "picture": None if picture is None else str(picture), "scale": str(folder / order.scale_name),
+    reference = None if picture is None else {
+        "picture": str(picture), "scale": str(folder / order.scale_name), "pitch": order.pitch,
+        "pattern": order.pattern or None,
     }  # fmt: skip
+    task = {"recording": str(recording), "out": str(out), "reference": reference}
     job = Job(0, "measure", order.recording.name, task, key=str(out))
     job.result = {}
     return job
@@ -243,40 +244,35 @@ def remove_upload(number: str, uploads: Uploads, results: Path) -> None:
         shutil.rmtree(folder, ignore_errors=True)
 
 
-def measure(
-    *, recording: str, out: str, picture: str | None, scale: str, pitch: str, pattern: str | None, progress: Any
-) -> None:  # fmt: skip
+def measure(*, recording: str, out: str, reference: dict[str, Any] | None, progress: Any) -> None:
     """Measure the scale, if there is a picture of a pattern, then the recording.
 
     Parameters
     ----------
     recording, out : str
         Paths of the recording and the result folder.
-    picture : str or None
-        Path of the reference picture.
-    scale : str
-        Path of the scale file that is made from it.
-    pitch, pattern : str
-        Of the reference pattern.
+    reference : dict or None
+        ``picture`` and ``scale``: paths of the reference picture and of the file that is made from it; ``pitch``
+        and ``pattern`` of the reference pattern.
     progress : callable
         Makes a (done, total) callable for a text.
     """
     from tracker.measure import measure as measure_recording
 
-    if picture is not None:
-        _measure_scale(Path(picture), Path(scale), pitch, pattern, progress)
+    if reference is not None:
+        progress("looking at the reference picture")(0, 1)
+        _measure_scale(**reference)
     measure_recording(Path(recording), out=Path(out), progress=progress("measuring"))
 
 
-def _measure_scale(picture: Path, scale: Path, pitch: str, pattern: str | None, progress: Any) -> None:
+def _measure_scale(*, picture: str, scale: str, pitch: str, pattern: str | None) -> None:
     from calibration.measure import measure_scale
     from calibration.scale import write_scale
 
-    progress("looking at the reference picture")(0, 1)
     try:
         found, _ = measure_scale([picture], pitch_text=pitch, pattern=pattern)
     except FallriseError as error:
         raise BenchError(
-            str(picture), "scale.pitch", str(error), "a sharp picture of the reference pattern"
+            picture, "scale.pitch", str(error), "a sharp picture of the reference pattern"
         ) from error
     write_scale(found, scale)

@@ -23,13 +23,13 @@ export class ShelfView {
     this.intake = new Intake(left, this.shelf, { onStarted: () => { this.main.scrollTop = 0; this.poll(true); } });
     left.append(cautions);
     this.list = el("ul", { class: "shelf" });
-    this.worst = el("div");
+    this.worst = el("div", { class: "worst-box" });
     this.tally = el("p", { class: "soft" });
     const order = el("select", { id: "order", onchange: () => { this.order = order.value; this.fill(); } }, ...ORDERS.map(([value, text]) => el("option", { value }, text)));
     this.reasonSelect = el("select", { id: "reason-filter", onchange: () => { this.reason = this.reasonSelect.value; this.fill(); } });
     right.append(el("h1", { id: "shelf-title" }, "Recordings"), this.tally,
       el("div", { class: "row shelf-tools" }, el("label", { htmlFor: "order" }, "Order"), order, el("label", { htmlFor: "reason-filter" }, "With reason"), this.reasonSelect),
-      this.list, this.worst);
+      this.worst, this.list);
     this.main.replaceChildren(el("div", { class: "start" }, left, el("div", {}, this.jobBox, right)));
     this.fill();
     this.poll(true);
@@ -75,7 +75,7 @@ export class ShelfView {
       .filter((t) => !this.reason || t.reasons.includes(this.reason)).sort((a, b) => b.score - a.score).slice(0, 12);
     if (!rows.length || (this.order !== "worst" && !this.reason)) { this.worst.replaceChildren(); return; }
     const head = el("tr", {}, ...["Recording", "Droplet", "Verdict", "Reasons"].map((text) => el("th", { scope: "col" }, text)));
-    this.worst.replaceChildren(el("h2", {}, "Tracks to look at first"), el("table", { class: "worst" }, el("thead", {}, head), el("tbody", {}, ...rows.map((t) => el("tr", {},
+    this.worst.replaceChildren(el("h2", { id: "worst-title" }, "Tracks to look at first"), el("table", { class: "worst", "aria-labelledby": "worst-title" }, el("thead", {}, head), el("tbody", {}, ...rows.map((t) => el("tr", {},
       el("td", {}, t.name), el("td", {}, el("a", { href: `#/${t.id}/${t.droplet}`, "aria-label": `droplet ${t.droplet} of ${t.name}` }, String(t.droplet))), el("td", {}, verdictMark(t.verdict)),
       el("td", {}, t.reasons.map((code) => this.shelf.reasons[code] || code).join(" ")))))));
   }
