@@ -7,7 +7,6 @@ shift the count; the map is then fitted to all marks at once.
 
 from __future__ import annotations
 
-import itertools
 from dataclasses import dataclass, replace
 from typing import Any
 
@@ -19,6 +18,7 @@ IntArray = NDArray[np.int64]
 BoolArray = NDArray[np.bool_]
 
 SAME = 0.2  # of the pitch: a mark farther from a whole number belongs to no line
+ENOUGH = 3000  # marks that fix a polynomial of third degree to far better than half a pitch
 AFFINE = 3  # parameters for one coordinate of a map without lens or tilt
 
 
@@ -113,7 +113,8 @@ def grow_numbers(
             )
             basis = _powers(steps / min(radius, scale), degree)
             if good.sum() >= 2 * basis.shape[1] + 2:
-                solution = np.linalg.lstsq(basis[good], np.rint(coordinate[good]), rcond=None)[0]
+                some = np.flatnonzero(good)[:: 1 + int(good.sum()) // ENOUGH]
+                solution = np.linalg.lstsq(basis[some], np.rint(coordinate[some]), rcond=None)[0]
                 coordinate = basis @ solution
         if radius >= scale:
             break
@@ -238,12 +239,11 @@ def _fit(
 
 def _inliers(residual: FloatArray, marks: Marks) -> BoolArray:
     """Marks within 4.5 robust standard deviations of their line's middle, and lines within 4.5 of theirs."""
-    count = int(marks.cluster.max()) + 1
-    order = np.argsort(marks.cluster, kind="stable")
-    bounds = np.searchsorted(marks.cluster[order], np.arange(count + 1))
-    middle = np.array(
-        [np.median(residual[order[a:b]]) if b > a else 0.0 for a, b in itertools.pairwise(bounds)]
-    )
+    order = np.lexsort((residual, marks.cluster))
+    bounds = np.searchsorted(marks.cluster[order], np.arange(int(marks.cluster.max()) + 2))
+    last = np.maximum(bounds[1:], 1) - 1
+    low, high = np.minimum((bounds[:-1] + last) // 2, last), np.minimum((bounds[:-1] + bounds[1:]) // 2, last)
+    middle = 0.5 * (residual[order[low]] + residual[order[high]])  # medians; of empty clusters never used
     own = (residual - middle[marks.cluster]) * marks.weight
     spread = 1.4826 * float(np.median(np.abs(own)))
     all_spread = 1.4826 * float(np.median(np.abs(residual)))

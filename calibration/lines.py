@@ -14,6 +14,9 @@ from numpy.typing import NDArray
 
 FloatArray = NDArray[np.float64]
 
+MOST_STRIPS = (
+    64  # of a large picture; more would sharpen nothing that the pattern's tolerance has not blunted
+)
 STRIP_ROWS = 32  # long enough to average noise, short enough that a line that leans by 1 degree stays sharp
 
 
@@ -102,13 +105,11 @@ def line_directions(flat: NDArray[np.float32], *, most: int = 3) -> list[float]:
     Peaks of the histogram of gradient directions, weighted with the squared gradient, over the level that noise
     and debris give to all directions alike.
     """
-    smooth = cv2.GaussianBlur(flat, (0, 0), 1.2)
-    gx, gy = cv2.Sobel(smooth, cv2.CV_32F, 1, 0, ksize=3), cv2.Sobel(smooth, cv2.CV_32F, 0, 1, ksize=3)
-    power = (gx**2 + gy**2).ravel()
-    # Debris is few pixels of large gradient; past the 99.5th percentile a pixel counts as much as one at it.
-    power = np.minimum(power, np.percentile(power[:: max(1, power.size // 200_000)], 99.5))
-    bins = (cv2.phase(gx, gy).ravel() * (360 / np.pi)).astype(np.int32) % 360
-    histogram = np.bincount(bins, weights=power, minlength=360)
+    # Of a large picture, bands of 128 rows that hold three million pixels are looked at.
+    step = 128 * max(1, round(flat.size / 3e6))
+    histogram = np.sum(
+        [_gradient_histogram(flat[top : top + 128]) for top in range(0, flat.shape[0], step)], axis=0
+    )
     kernel = np.exp(-0.5 * (np.arange(-8, 9) / 3.0) ** 2)
     smoothed = np.convolve(
         np.concatenate([histogram[-8:], histogram, histogram[:8]]), kernel / kernel.sum(), "valid"
@@ -123,6 +124,17 @@ def line_directions(flat: NDArray[np.float32], *, most: int = 3) -> list[float]:
         if all(abs((angle - other + np.pi / 2) % np.pi - np.pi / 2) > np.deg2rad(12) for other in found):
             found.append(angle)
     return found[:most]
+
+
+def _gradient_histogram(band: NDArray[np.float32]) -> FloatArray:
+    """Squared gradient over its direction, in half degrees from 0 to 180."""
+    smooth = cv2.GaussianBlur(band, (0, 0), 1.2)
+    gx, gy = cv2.Sobel(smooth, cv2.CV_32F, 1, 0, ksize=3), cv2.Sobel(smooth, cv2.CV_32F, 0, 1, ksize=3)
+    power = (gx**2 + gy**2).ravel()
+    # Debris is few pixels of large gradient; past the 99.5th percentile a pixel counts as much as one at it.
+    power = np.minimum(power, np.percentile(power[:: max(1, power.size // 50_000)], 99.5))
+    bins = (cv2.phase(gx, gy).ravel() * (360 / np.pi)).astype(np.int32) % 360
+    return np.bincount(bins, weights=power, minlength=360).astype(np.float64)
 
 
 def without_debris(flat: NDArray[np.float32], *, mark: float, ground: float) -> NDArray[np.float32]:
@@ -163,11 +175,10 @@ def line_points(flat: NDArray[np.float32], angle: float, *, careful: bool = Fals
         None if the profiles across this direction repeat nowhere.
     """
     turning = _turning(angle)
-    turned, valid, back = _turn(flat, turning)
     rows = min(STRIP_ROWS, max(4, min(flat.shape) // 8))
-    profiles, mask = _strips(turned, valid, rows, lean=float(np.tan(angle - turning)), trim=careful)
-    if len(profiles) == 0:
-        return None
+    stack, mask, first_row, back = _strips(flat, turning, rows)
+    _straighten(stack, lean=float(np.tan(angle - turning)))
+    profiles = _average(stack, trim=careful)
     profiles = np.where(mask, profiles - _level(profiles, mask), 0.0)
     repeat = _repeat(profiles, mask)
     if repeat is None:
@@ -181,10 +192,10 @@ def line_points(flat: NDArray[np.float32], angle: float, *, careful: bool = Fals
     slope = _ground_slope(sign * profiles, mask, strip, column, half=pitch / 2, least=2.5 * sigma)
     place, fine = refine_profile(sign * profiles, mask, strip, column, sigma=sigma, slope=slope)
     strip, place, contrast = strip[fine], place[fine], contrast[fine]
-    middle = (strip + 0.5) * rows - 0.5
+    middle = first_row[strip] + (rows - 1) / 2
     x = back[0, 0] * place + back[0, 1] * middle + back[0, 2]
     y = back[1, 0] * place + back[1, 1] * middle + back[1, 2]
-    levels, unbroken = _along(turned, strip * rows, place, rows=rows, pitch=pitch)
+    levels, unbroken = _along(stack, strip, place, pitch=pitch)
     return LinePoints(x, y, place, middle, contrast, pitch, angle, sigma, len(profiles), unbroken, levels)
 
 
@@ -198,51 +209,54 @@ def _turning(angle: float) -> float:
     return upright if abs(angle - upright) < np.deg2rad(3) else angle
 
 
-def _turn(
-    flat: NDArray[np.float32], angle: float
-) -> tuple[NDArray[np.float32], NDArray[np.bool_], FloatArray]:
-    """Turn the picture so that the direction `angle` is +x; also where it is valid, and the way back."""
+def _strips(
+    flat: NDArray[np.float32], angle: float, rows: int
+) -> tuple[NDArray[np.float32], NDArray[np.bool_], NDArray[np.int64], FloatArray]:
+    """Cut the picture, turned so that the direction `angle` is +x, into strips of some rows.
+
+    Gives the strips (strip, row, column), where their columns lie in the picture with all rows, the first row of each,
+    and the way from a place (column, row) in the turned picture back to the picture.
+    """
     height, width = flat.shape
     c, s = np.round([np.cos(angle), np.sin(angle)], 15)
-    corners = np.array([[0, 0], [width - 1, 0], [0, height - 1], [width - 1, height - 1]]) @ np.array(
-        [[c, -s], [s, c]]
-    )
+    corners = np.array([[0, 0], [width - 1, 0], [0, height - 1], [width - 1, height - 1]]) @ [[c, -s], [s, c]]
     low = np.floor(corners.min(axis=0))
     size = np.ceil(corners.max(axis=0) - low).astype(int) + 1
-    # place in the turned picture (u, v) -> place in the picture
     back = np.array([[c, -s, c * low[0] - s * low[1]], [s, c, s * low[0] + c * low[1]]])
+    count = max(1, int(size[1]) // rows)
+    first_row = rows * np.unique(np.linspace(0, count - 1, min(count, MOST_STRIPS)).round().astype(np.int64))
+    stack = np.empty((len(first_row), rows, int(size[0])), dtype=np.float32)
     way = cv2.INTER_CUBIC | cv2.WARP_INVERSE_MAP
-    turned = cv2.warpAffine(
-        flat, back, (int(size[0]), int(size[1])), flags=way, borderMode=cv2.BORDER_REPLICATE
-    )
-    u, v = np.arange(size[0])[None, :], np.arange(size[1])[:, None]
-    x, y = back[0, 0] * u + back[0, 1] * v + back[0, 2], back[1, 0] * u + back[1, 1] * v + back[1, 2]
-    inside: NDArray[np.bool_] = (x > -0.5) & (x < width - 0.5) & (y > -0.5) & (y < height - 0.5)
-    return np.asarray(turned, dtype=np.float32), inside, back
+    for n, row in enumerate(first_row):
+        there = back + np.array([[0, 0, back[0, 1] * row], [0, 0, back[1, 1] * row]])
+        shape = stack.shape[2], rows
+        stack[n] = cv2.warpAffine(flat, there, shape, flags=way, borderMode=cv2.BORDER_REPLICATE)
+    inside = np.ones((len(first_row), stack.shape[2]), dtype=bool)
+    u = np.arange(stack.shape[2])[None, :]
+    for row in (0, rows - 1):  # the picture is convex: what holds for the outer rows holds between them
+        v = (first_row + row)[:, None]
+        x, y = (back[k, 0] * u + back[k, 1] * v + back[k, 2] for k in (0, 1))
+        inside &= (x > -0.5) & (x < width - 0.5) & (y > -0.5) & (y < height - 0.5)
+    return stack, inside, first_row, back
 
 
-def _strips(
-    turned: NDArray[np.float32], valid: NDArray[np.bool_], rows: int, *, lean: float, trim: bool
-) -> tuple[FloatArray, NDArray[np.bool_]]:
-    """Average every `rows` rows to a profile, rows moved so that lines which lean (px per row) stand upright.
-
-    A column counts only where all its rows are in the picture.
-    """
-    count = turned.shape[0] // rows
-    shape = (count, rows, turned.shape[1])
-    stack = np.empty(shape, dtype=np.float32)
+def _straighten(stack: NDArray[np.float32], *, lean: float) -> None:
+    """Move the rows of each strip, in place, so that lines which lean (px per row) stand upright in it."""
+    rows = stack.shape[1]
     for row in range(rows):
-        moved = turned[row : count * rows : rows]
         shift = lean * (row - (rows - 1) / 2)
         if shift:
             weights = _cubic(-shift)[None, :]
-            moved = np.asarray(cv2.filter2D(moved, -1, weights, borderType=cv2.BORDER_REPLICATE), np.float32)
-        stack[:, row] = moved
-    mask = np.asarray(valid[: count * rows].reshape(shape).all(axis=1))
-    if trim and count:
+            stack[:, row] = cv2.filter2D(stack[:, row].copy(), -1, weights, borderType=cv2.BORDER_REPLICATE)
+
+
+def _average(stack: NDArray[np.float32], *, trim: bool) -> FloatArray:
+    """Average the rows of each strip, or with `trim` the middle half of their values in each column."""
+    if trim:
+        rows = stack.shape[1]
         low, high = rows // 4, rows - 1 - rows // 4
         stack = np.partition(stack, (low, high), axis=1)[:, low : high + 1]
-    return stack.mean(axis=1, dtype=np.float64), mask
+    return np.asarray(stack.mean(axis=1, dtype=np.float64))
 
 
 def _cubic(shift: float) -> FloatArray:
@@ -439,7 +453,7 @@ def refine_profile(
 
 
 def _along(
-    turned: NDArray[np.float32], first_row: NDArray[np.int64], place: FloatArray, *, rows: int, pitch: float
+    stack: NDArray[np.float32], strip: NDArray[np.int64], place: FloatArray, *, pitch: float
 ) -> tuple[tuple[float, float], float]:
     """Usual values on the lines and between them, and how unbroken the lines are.
 
@@ -450,11 +464,10 @@ def _along(
     """
     pick = np.linspace(0, len(place) - 1, min(len(place), 400)).astype(int)
     centre = np.rint(place[pick]).astype(int)
-    row = first_row[pick][:, None] + np.arange(rows)[None, :]
 
     def column(shift: int) -> FloatArray:
-        at = np.clip(centre + shift, 0, turned.shape[1] - 1)
-        return np.asarray(turned[row, at[:, None]], dtype=np.float64)
+        at = np.clip(centre + shift, 0, stack.shape[2] - 1)
+        return np.asarray(stack[strip[pick], :, at], dtype=np.float64)
 
     half = max(2, round(pitch / 2))
     line, ground = column(0), column(half)

@@ -273,7 +273,7 @@ def _search_corners(flat: NDArray[np.float32], pattern: str | None) -> Lattice |
         spots = find_corners(flat, sigma, least=least)
         if spots is None:
             continue
-        found = _number_nodes(flat, spots, kernel=sigma)
+        found = _number_nodes(flat, spots, kernel=spots.size)
         if isinstance(found, Marks) and not is_board(flat, found):
             found = Refusal("no grid stands out from the picture", 0)
         result = _accept("grid", "corners", found, flat) if isinstance(found, Marks) else found

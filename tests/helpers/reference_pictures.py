@@ -235,7 +235,8 @@ def random_pattern(rng: np.random.Generator, *, width: int = 640, height: int = 
     return Pattern(
         kind=kind, width=width, height=height, pitch=pitch, rotation=rotation, part=part, duty=duty,
         aspect=float(rng.choice([1.0, rng.uniform(0.92, 1.08)])),
-        phase=(float(rng.uniform(0, 1)), float(rng.uniform(0, 1))),
+        # Few lines lie evenly about the middle, so that four are in the picture as wholes.
+        phase=(float(rng.uniform(0, 1)) if least / pitch >= 5 else 0.5, float(rng.uniform(0, 1))),
         dark=bool(rng.random() < 0.5), contrast=float(rng.uniform(0.15, 0.6)),
         blur=min(float(rng.uniform(0.6, 1.6)), pitch / 7), noise=float(rng.uniform(0.003, 0.03)),
         uneven=float(rng.uniform(0, 0.6)), dust=int(rng.integers(0, 40)), droplets=int(rng.integers(0, 30)),
