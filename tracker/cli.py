@@ -33,9 +33,22 @@ BenchOption = Annotated[
 JsonOption = Annotated[bool, typer.Option("--json", help="Print the result for machines.")]
 
 
+def _print_version(wanted: bool) -> None:
+    """Print the version of the installed package if it was asked for."""
+    if wanted:
+        from importlib.metadata import version
+
+        typer.echo(f"fallrise {version('fallrise')}")
+        raise typer.Exit
+
+
 @app.callback()
 def _options(
     debug: Annotated[bool, typer.Option("--debug", help="Show a traceback when something fails.")] = False,
+    version: Annotated[
+        bool,
+        typer.Option("--version", help="Print the version and end.", callback=_print_version, is_eager=True),
+    ] = False,
 ) -> None:
     """Take the options that hold for every command."""
 

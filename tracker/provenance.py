@@ -5,6 +5,7 @@ from __future__ import annotations
 import os
 import platform
 from dataclasses import replace
+from functools import lru_cache
 from importlib.metadata import PackageNotFoundError, version
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -309,6 +310,7 @@ def stored_scale(provenance: dict[str, Any]) -> Scale:
     return scale_from_json(provenance["scale"])
 
 
+@lru_cache(maxsize=1)
 def versions() -> dict[str, str]:
     """Give the versions of what was at work.
 
