@@ -289,9 +289,12 @@ def bench_json(bench: Bench, folder: Path) -> dict[str, Any]:
                 "unit": unit,
                 "origin": measured.origin,
             }
-    return {"name": bench.name, "files": [os.path.relpath(Path(file).absolute(), folder.absolute()) for file in bench.files], "digest": bench.digest,
-            "slip": bench.slip, "down_deg": bench.down_deg, "binning": bench.binning,
-            "frame_rate_hz": bench.frame_rate, "voltage_rel_std": bench.voltage_rel_std, **quantities}  # fmt: skip
+    files = [os.path.relpath(Path(file).absolute(), folder.absolute()) for file in bench.files]
+    return {
+        "name": bench.name, "files": files, "digest": bench.digest, "slip": bench.slip, "down_deg": bench.down_deg,
+        "binning": bench.binning, "frame_rate_hz": bench.frame_rate, "voltage_rel_std": bench.voltage_rel_std,
+        **quantities,
+    }  # fmt: skip
 
 
 def stored_scale(provenance: dict[str, Any]) -> Scale:

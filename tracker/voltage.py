@@ -12,7 +12,7 @@ from tracker.errors import FieldError
 from tracker.motion.field import compare_fields, exposure_of, field_from_lamp, field_from_list
 from tracker.motion.fieldclock import fit_clock_offset
 from tracker.motion.fieldlog import field_from_log, read_log
-from tracker.records import Field, Recording, Seen, Settings, Tracks
+from tracker.records import Field, FloatArray, Recording, Seen, Settings, Tracks
 from tracker.seeing.link import link
 
 
@@ -53,7 +53,7 @@ def field_and_tracks(seen: Seen, bench: Bench, settings: Settings) -> tuple[Fiel
     return sharpened(field, tracks, seen.recording, bench), tracks
 
 
-def known_field(source: str, recording: Recording, bench: Bench, *, lamp: object = None) -> Field:
+def known_field(source: str, recording: Recording, bench: Bench, *, lamp: FloatArray | None = None) -> Field:
     """Give the field of a source that does not need the droplets.
 
     Parameters
