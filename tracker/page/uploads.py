@@ -120,6 +120,11 @@ class Uploads:
         self.folder, self.limit = folder, limit
         self._held: dict[str, Upload] = {}
 
+    @property
+    def held(self) -> int:
+        """How many files wait for a measurement."""
+        return len(self._held)
+
     def get(self, number: str, *, kind: str) -> Upload:
         """Give an upload of a kind, or refuse."""
         found = self._held.get(number)

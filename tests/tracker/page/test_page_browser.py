@@ -228,6 +228,38 @@ def test_picture_and_marks_are_of_one_frame_while_scrubbing(page: Page) -> None:
         assert picture in (None, frame)
 
 
+def test_picture_can_be_played_brightened_and_cleared(page: Page) -> None:
+    """Play follows the recording's own time; brightness changes the picture and not the marks; the background goes."""
+    rest_on(page, 40)
+    place = places(page)[0]
+    at = (int(place["py"]), int(place["px"]))
+    on_stage(page, "s.marks = false; s.draw();")
+    plain = screenshot(page).astype(int)
+    page.get_by_role("slider", name="Brightness").fill("2")
+    bright = screenshot(page).astype(int)
+    # Brightness 2 doubles grey values up to white; the browser rounds to whole ones, before and after scaling.
+    assert np.abs(bright[at] - np.minimum(255, 2 * plain[at])).max() <= 3
+    on_stage(page, "s.marks = true; s.chosen = null; s.draw();")
+    marked = screenshot(page).astype(int)
+    ring = np.abs(marked - np.array([86, 180, 233])).max(axis=2) < 12  # pixels that a mark covers wholly
+    assert ring.sum() > 50
+    page.get_by_role("button", name="Plain").click()
+    page.get_by_role("button", name="Background off").click()
+    wait_for(
+        lambda: (screenshot(page).astype(int)[at[0] + 40 : at[0] + 60, at[1] - 10 : at[1] + 10, 0]).std() < 4
+    )
+    assert page.evaluate("fallrise.view.frames.clear")
+    page.get_by_role("button", name="Background off").click()
+    page.evaluate("fallrise.view.player.go(0)")
+    began = page.evaluate("() => { fallrise.view.player.start(); return performance.now(); }")
+    page.wait_for_timeout(1500)
+    frame, now = page.evaluate(
+        "() => { fallrise.view.player.stop(); return [fallrise.view.frames.wanted, performance.now()]; }"
+    )
+    # 20 frames a second of the recording; the browser's own clock tells how long it played, to a few drawings.
+    assert frame == pytest.approx(20 * (now - began) / 1000, abs=4)
+
+
 def test_rejection_holds_after_reload_and_can_be_undone(page: Page, server: Server) -> None:
     """Reject with a reason: table and charge unit change, a reload shows it, undo takes it back."""
     keep = page.locator(".droplets tr:has(.verdict.keep)").first

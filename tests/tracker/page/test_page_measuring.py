@@ -5,13 +5,14 @@ from __future__ import annotations
 import contextlib
 import os
 import signal
+import socket
 import tomllib
 from pathlib import Path
 
 import psutil
 import pytest
 from httpx import Client, RemoteProtocolError
-from page_server import Server, simulated_recording, wait_for
+from page_server import TOKEN, Page, Server, simulated_recording, wait_for
 
 from tracker.bench import load_bench
 from tracker.keeping.store import read_result
@@ -227,6 +228,29 @@ def test_uploads_stop_at_the_limit(page: Client, site: Site, tmp_path: Path) -> 
     for wrong in ({"x-kind": "secret"}, {"x-name": "x.sh"}, {"x-name": ""}):
         assert 400 <= page.post("/api/uploads", content=b"x", headers=headers | wrong).status_code < 500
     assert list((tmp_path / "results").iterdir()) == []
+
+
+def test_upload_that_breaks_off_leaves_nothing(running: Page, site: Site, tmp_path: Path) -> None:
+    """A page that is closed in the middle of an upload: no file, and no upload is held."""
+    head = (
+        f"POST /api/uploads HTTP/1.1\r\nHost: 127.0.0.1:{running.port}\r\nx-kind: recording\r\nx-name: a.avi\r\n"
+        f"Cookie: fallrise-{running.port}={TOKEN}\r\nContent-Length: 1000000\r\n\r\n"
+    )
+    with socket.create_connection(("127.0.0.1", running.port)) as sender:
+        sender.sendall(head.encode() + b"x" * 200_000)
+        assert wait_for((tmp_path / "results").is_dir)
+    assert wait_for(lambda: not [line for line in _open_files() if str(tmp_path / "results") in line])
+    assert list((tmp_path / "results").iterdir()) == []
+    assert site.uploads.held == 0
+
+
+def _open_files() -> list[str]:
+    """Files that this process holds open, those without a name too."""
+    found = []
+    for entry in Path("/proc/self/fd").iterdir():
+        with contextlib.suppress(OSError):
+            found.append(str(entry.readlink()))
+    return found
 
 
 def test_full_disk_refuses_uploads(page: Client, tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:

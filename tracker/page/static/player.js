@@ -10,8 +10,9 @@ export class Player {
     this.times = [0];
     this.playing = false;
     const press = (text, label, call, key) => {
-      const button = el("button", { type: "button", title: key ? `${label} (key ${key})` : label, "aria-label": label, onclick: call }, text);
-      return button;
+      // A word on a button is its name; a sign needs one.
+      const name = /[a-z]{2}/i.test(text) ? undefined : label;
+      return el("button", { type: "button", title: key ? `${label} (key ${key})` : label, "aria-label": name, onclick: call }, text);
     };
     this.play = press("\u25b6\ufe0e", "Play", () => this.toggle(), "Space");
     this.speed = el("select", { id: "speed", onchange: () => this.restart() }, ...[0.1, 0.25, 0.5, 1, 2, 4].map((s) => el("option", { value: String(s), selected: s === 1 }, `\u00d7 ${s}`)));
