@@ -155,7 +155,9 @@ def pool_of(results: Sequence[Result]) -> Pool:
     -----
     Each bench has one unknown factor on its charges, with the uncertainty of scale, gap, voltage, air and
     oil; the charges of one bench fix the comb, and benches are joined with their factors integrated out. The
-    models of viscosity and slip err alike on all benches and are added at the end.
+    models of viscosity and slip err alike on all benches and are added at the end, and so is the tolerance of the
+    reference pattern, or the density of the oil, where all benches state the same one: it is then taken to be one
+    and the same slide, or batch.
     """
     by_bench: dict[tuple[object, ...], list[Result]] = {}
     seen: dict[str, str] = {}
@@ -168,7 +170,10 @@ def pool_of(results: Sequence[Result]) -> Pool:
         seen[digest] = name
         by_bench.setdefault(_bench_key(result), []).append(result)
     labels = _labels([members[0] for members in by_bench.values()])
-    benches = [_bench(label, members) for label, members in zip(labels, by_bench.values(), strict=True)]
+    standards = _same_standards([members[0].recording for members in by_bench.values()])
+    benches = [
+        _bench(label, members, standards) for label, members in zip(labels, by_bench.values(), strict=True)
+    ]
     common = _common_rel_std(benches)
     own = [_without_common(bench, common) for bench in benches]
     alone = [pooled_charge_unit((bench.sample,), search=SEARCH) for bench in benches]
@@ -258,7 +263,19 @@ def _labels(results: Sequence[Result]) -> list[str]:
     return labels
 
 
-def _bench(label: str, results: Sequence[Result]) -> _Bench:
+def _same_standards(recordings: Sequence[Mapping[str, Any]]) -> frozenset[str]:
+    """What all benches rest on alike: inputs whose value and uncertainty are the same on every bench."""
+    scales = [recording.get("scale") or {} for recording in recordings]
+    oils = [recording.get("bench", {}).get("oil_density") or {} for recording in recordings]
+    pitches = {(scale.get("pitch_m"), scale.get("pitch_std_m")) for scale in scales}
+    densities = {(oil.get("value"), oil.get("std")) for oil in oils}
+    stated = {"scale": pitches, "oil_density": densities}
+    return frozenset(
+        name for name, pairs in stated.items() if len(pairs) == 1 and all(v for v in next(iter(pairs)))
+    )
+
+
+def _bench(label: str, results: Sequence[Result], standards: frozenset[str]) -> _Bench:
     """Gather the charges of one bench and the budget of their common factor."""
     charges = bench_charges(results)
     budget = factor_budget(results, charges)
@@ -268,16 +285,22 @@ def _bench(label: str, results: Sequence[Result]) -> _Bench:
         charges.charge, charges.own_std, rel_stds=charges.rel_std, shared_rel_std=shared,
         steps=(charges.step, charges.step_std), pairs=(charges.pair, charges.pair_cov),
     )  # fmt: skip
-    common = min(_models_part(budget, results[0].recording), shared)
+    common = min(_common_part(budget, results[0].recording, standards), shared)
     return _Bench(label, tuple(_name(result) for result in results), sample, budget, common)
 
 
-def _models_part(budget: Budget, recording: Mapping[str, Any]) -> float:
-    """Part of the models of viscosity and slip in the uncertainty of the factor; a stated viscosity is no model."""
+def _common_part(budget: Budget, recording: Mapping[str, Any], standards: frozenset[str]) -> float:
+    """Part of what errs alike on all benches in the uncertainty of the factor; a stated viscosity is no model."""
     stated = "air.viscosity" in str(recording["bench"]["viscosity"].get("origin"))
-    common = [name for name in COMMON_INPUTS if not (stated and name == "viscosity_model")]
-    rows = [row for row in budget.rows if row.input in common]
-    return float(np.sqrt(sum((row.sensitivity * row.std) ** 2 for row in rows)))
+    common = {name for name in COMMON_INPUTS if not (stated and name == "viscosity_model")} | standards
+    parts = []
+    for row in budget.rows:
+        if row.input in common:
+            std = row.std
+            if row.input == "scale":  # of the scale only the pattern's tolerance is common, not the fit
+                std = min(std, row.value * recording["scale"]["pitch_std_m"] / recording["scale"]["pitch_m"])
+            parts.append(row.sensitivity * std)
+    return float(np.sqrt(np.sum(np.square(parts))))
 
 
 def _common_rel_std(benches: Sequence[_Bench]) -> float:
