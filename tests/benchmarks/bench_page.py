@@ -167,7 +167,11 @@ def measured(result: Path, cache: Path, results: Path) -> list[Row]:
         rows.append(("frame pack", f"{size / 1e6:.0f} MB"))
         page.goto("about:blank")
         asked: list[Any] = []
-        page.on("requestfinished", asked.append)
+
+        def note(request: Any) -> None:
+            asked.append(request)
+
+        page.on("requestfinished", note)
         rows.append(("later opening, until picture, marks and table", f"{opened(page, server)[0]:.2f} s"))
         sizes = [request.sizes()["responseBodySize"] for request in list(asked)]
         rows.append(("requests and bytes of a later opening", f"{len(sizes)}, {sum(sizes) / 1e6:.1f} MB"))
