@@ -86,7 +86,7 @@ def write_scale_files(scale: Scale, found: Sequence[Found], path: Path) -> tuple
 def _title(scale: Scale) -> str:
     """Say the scale in two lines."""
     x, y = (
-        f"{axis}: {1e6 * getattr(scale, f'metres_per_pixel_{axis}'):.6g} "
+        f"{axis}: {1e6 * getattr(scale, f'metres_per_pixel_{axis}'):#.7g} "
         f"± {1e6 * getattr(scale, f'metres_per_pixel_{axis}_std'):.2g} µm/px"
         for axis in "xy"
     )
