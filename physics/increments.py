@@ -238,6 +238,7 @@ def increments(  # noqa: PLR0913 - one sighting has that many columns
     side_std: ArrayLike,
     impulse: ArrayLike,
     exposure: float,
+    blur: float | None = None,
     breaks: ArrayLike | None = None,
     part: ArrayLike | None = None,
 ) -> Increments:
@@ -257,6 +258,10 @@ def increments(  # noqa: PLR0913 - one sighting has that many columns
     exposure : float
         In s; at least 0. The covariance is exact up to the shortest step; up to 1.25 times the shortest step is
         taken too, so that rounded frame times of an always open shutter pass.
+    blur : float, optional
+        Exposure in s that the blur of Brownian motion is worked out with; `exposure` if not given. An exposure
+        longer than the true one is exact for places of equal noise: A(tau) = A(tau') + (tau' - tau)/3 M, so the
+        difference is place noise, which every fit leaves free. A shorter one is not, since noise is never negative.
     breaks : array_like, optional
         Steps to leave out (a toggle whose time is uncertain, a bumped camera, a cut): a mask of shape (N,) or
         indices. The steps on both sides are then uncorrelated.
@@ -277,8 +282,10 @@ def increments(  # noqa: PLR0913 - one sighting has that many columns
     time, y, x, y_std, x_std, volt_seconds = columns
     count = len(time) - 1
     dt = np.diff(time)
-    if not exposure >= 0 or np.any(exposure > 1.25 * dt):
-        raise PhysicsError("exposure", exposure, "from 0 s to 1.25 times the shortest step")
+    blurred = exposure if blur is None else blur
+    for name, value in (("exposure", exposure), ("blur", blurred)):
+        if not value >= 0 or np.any(value > 1.25 * dt):
+            raise PhysicsError(name, value, "from 0 s to 1.25 times the shortest step")
     keep = ~_mask(breaks, count)
     first = np.flatnonzero(keep)
     joined = np.diff(first) == 1
@@ -289,7 +296,7 @@ def increments(  # noqa: PLR0913 - one sighting has that many columns
         raise PhysicsError("part", numbers.shape, f"{count} numbers from 0, one a step")
     return Increments(
         dt=dt[first], down=np.diff(y)[first], side=np.diff(x)[first], impulse=np.diff(volt_seconds)[first],
-        blur_diag=2 * dt[first] - 2 * exposure / 3, blur_off=joined * (exposure / 3),
+        blur_diag=2 * dt[first] - 2 * blurred / 3, blur_off=joined * (blurred / 3),
         noise_diag=noise[0][0], noise_off=noise[0][1], side_noise_diag=noise[1][0], side_noise_off=noise[1][1],
         part=numbers[first], first=first, last=first + 1, typical_std=typical, exposure=float(exposure),
     )  # fmt: skip

@@ -58,7 +58,7 @@ class Bench:
     gravity: Measured  # m/s^2
     slip: str
     scale: Scale
-    exposure: Measured | None  # s; None: half the frame interval
+    exposure: Measured | None  # s; None: half the frame interval for the field, the blur is fitted
     down_deg: float | None  # gravity in the picture, from straight down toward +x; None: from the motion
     frame_rate: float | None  # Hz, only for recordings without times
     binning: int | None  # of the recording against the scale's picture; None: not stated

@@ -341,3 +341,18 @@ def test_generalised_least_squares_reads_the_same_from_whitened_columns():
     assert ours[0] == pytest.approx(values, rel=1e-8)
     assert float(ours[1][0]) == pytest.approx(rest, rel=1e-8)
     assert np.linalg.inv(white.columns.T @ white.columns) == pytest.approx(spread, rel=1e-7)
+
+
+def test_a_longer_exposure_is_place_noise_less():
+    """A(tau) + rho M = A(tau') + (rho - (tau' - tau)/3) M for every tau, with gaps and uneven frames."""
+    rng = np.random.default_rng(31)
+    times = np.cumsum(rng.uniform(0.04, 0.09, 30))
+    zeros = np.zeros(30)
+    short, long = (
+        increments(times, zeros, zeros, down_std=1.0, side_std=1.0, impulse=zeros, exposure=0.01, blur=blur,
+                   breaks=[7, 20])
+        for blur in (0.01, 0.04)
+    )  # fmt: skip
+    true = dense(short, diffusion=1.0, noise_var=0.002)
+    assert dense(long, diffusion=1.0, noise_var=0.002 + 0.03 / 3) == pytest.approx(true, abs=1e-15)
+    assert short.exposure == long.exposure == 0.01

@@ -15,7 +15,7 @@ from tracker.motion.aircurrent import AirCurrent, find_air_current, find_drift
 from tracker.motion.charges import Number, SharedPart, charge_numbers, charge_unit_of, unit_json
 from tracker.motion.decided import Decided, apply_decisions
 from tracker.motion.droplet import Droplet, cleaned, is_one_droplet, with_histories, with_posteriors
-from tracker.motion.field import exposure_of
+from tracker.motion.field import blur_of, exposure_of
 from tracker.motion.fieldclock import clock_warnings
 from tracker.motion.judge import Facts, balances, reasons_of
 from tracker.motion.rows import ChangeRow, DropletRow, SegmentRow
@@ -33,6 +33,8 @@ from tracker.motion.verdict import REASONS
 from tracker.records import Decision, Field, Flag, IntArray, Recording, Settings, Tracks, readonly
 
 NEAR_FRAMES = 3  # about a jump, in which a neighbour or a line excuses it
+NO_NOISE = 2e-3  # of the frame interval: noise of the places over D that is as good as none
+TOO_SHORT = 1e-3  # false alarms per recording of an exposure that is stated too short
 LAMP_RIM = 4.0  # px about the lamp's rectangle that its light blurs into
 
 
@@ -142,8 +144,9 @@ def evaluate_droplets(
         tuple(row for d, rest in zip(droplets, rests, strict=True) for row in change_rows(d, rest)),
         _orientation_json(orientation), air.plain(), exposure, unit_json(charge_unit_of(droplets, rows, shared)),
         shared.budget(droplets, rows), details(droplets, rests) | _decisions_json(decided),
-        (*orientation.warnings, *decided.warnings, *_exposure_warning(bench, exposure), *shrinking_warnings(droplets),
-         *swap_warnings(droplets), *clock_warnings(field, _trusted(droplets, rows), recording)),
+        (*orientation.warnings, *decided.warnings, *_exposure_warning(bench, exposure, droplets),
+         *shrinking_warnings(droplets), *swap_warnings(droplets),
+         *clock_warnings(field, _trusted(droplets, rows), recording)),
     )  # fmt: skip
 
 
@@ -192,7 +195,7 @@ def _tracked(
     )
     found = paths(
         decided.tracks, recording, field=field, scale=bench.scale, exposure=exposure, orientation=orientation,
-        cuts=cuts, left_out=decided.trimmed | _in_lamp(decided.tracks, bench),
+        blur=blur_of(bench, recording), cuts=cuts, left_out=decided.trimmed | _in_lamp(decided.tracks, bench),
     )  # fmt: skip
     return orientation, [cleaned(path, settings) for path in found]
 
@@ -216,11 +219,24 @@ def _orientation_json(orientation: Orientation) -> dict[str, Any]:
             "origin": orientation.origin}  # fmt: skip
 
 
-def _exposure_warning(bench: Bench, exposure: float) -> tuple[str, ...]:
-    """Say where the exposure comes from if nobody stated it."""
-    if bench.exposure is not None:
+def _exposure_warning(bench: Bench, exposure: float, droplets: Sequence[Droplet]) -> tuple[str, ...]:
+    """Say where the exposure comes from if nobody stated it, or that the stated one is too short."""
+    if bench.exposure is None:
+        return (
+            f"camera.exposure is not stated: half the frame interval, {exposure * 1e3:.3g} ms, is taken for the times"
+            " of the field; the blur of Brownian motion is fitted together with the place noise",
+        )
+    from scipy.stats import binom
+
+    usable = [d.history for d in droplets if d.history is not None and is_one_droplet(d, bench.conditions)]
+    bare = sum(h.fit.log_rho < np.log(NO_NOISE * np.median(h.steps.dt)) for h in usable)
+    # With the right blur, chance leaves a droplet without place noise in at most one case of two.
+    if binom.sf(bare - 1, len(usable), 0.5) > TOO_SHORT:
         return ()
-    return (f"camera.exposure is not stated: half the frame interval, {exposure * 1e3:.3g} ms, is assumed",)
+    return (
+        f"{bare} of {len(usable)} droplets seem to have no place noise: camera.exposure, {exposure * 1e3:.3g} ms, is"
+        " shorter than the camera's, or the noise of the places is far below Brownian motion",
+    )
 
 
 def _in_lamp(tracks: Tracks, bench: Bench) -> np.ndarray:

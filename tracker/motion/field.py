@@ -41,7 +41,7 @@ def recording_span(recording: Recording) -> tuple[float, float]:
 
 
 def exposure_of(bench: Bench, recording: Recording) -> float:
-    """Exposure of each frame.
+    """Exposure of each frame, for the times at which the field acts.
 
     Parameters
     ----------
@@ -55,10 +55,35 @@ def exposure_of(bench: Bench, recording: Recording) -> float:
     exposure : float
         In s; never longer than the shortest frame interval.
     """
-    if bench.exposure is None:
-        return 0.5 * recording.frame_interval
-    shortest = float(np.min(np.diff(recording.frame_times))) if len(recording.frame_times) > 1 else np.inf
-    return min(bench.exposure.value, shortest)
+    stated = 0.5 * recording.frame_interval if bench.exposure is None else bench.exposure.value
+    return min(stated, _shortest_interval(recording))
+
+
+def blur_of(bench: Bench, recording: Recording) -> float:
+    """Exposure that the blur of Brownian motion is worked out with.
+
+    Parameters
+    ----------
+    bench : Bench
+        May state the exposure.
+    recording : Recording
+        Else its shortest frame interval is taken: no exposure is longer, and what a shorter one blurs less is
+        fitted as place noise, exactly. Half the interval in place of the whole would make D of a shutter that is
+        always open too small by a third.
+
+    Returns
+    -------
+    blur : float
+        In s.
+    """
+    if bench.exposure is not None:
+        return exposure_of(bench, recording)
+    return min(recording.frame_interval, _shortest_interval(recording))
+
+
+def _shortest_interval(recording: Recording) -> float:
+    """Shortest frame interval in s; infinite for a single frame."""
+    return float(np.min(np.diff(recording.frame_times), initial=np.inf))
 
 
 def field_from_list(

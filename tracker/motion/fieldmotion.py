@@ -12,7 +12,7 @@ from physics.errors import PhysicsError
 from physics.motion import MIN_INCREMENTS, Increments, field_impulse, free_fit, whitened
 from tracker.bench import Bench
 from tracker.errors import FieldError
-from tracker.motion.field import exposure_of, field_of_steps, recording_span
+from tracker.motion.field import blur_of, exposure_of, field_of_steps, recording_span
 from tracker.motion.fieldclock import fit_clock_offset
 from tracker.motion.velocity import Orientation, Path, paths
 from tracker.records import Field, FloatArray, IntArray, Recording, Tracks
@@ -68,8 +68,7 @@ def field_from_motion(tracks: Tracks, recording: Recording, bench: Bench) -> Fie
     voltage = bench.voltage
     if voltage is None:
         raise FieldError(str(recording.path), "toggles from motion need cell.voltage in the bench file")
-    exposure = exposure_of(bench, recording)
-    droplets = _droplets(tracks, recording, bench, exposure)
+    droplets = _droplets(tracks, recording, bench)
     if not droplets:
         problem = f"no droplet is tracked for {LEAST_DROPLET} frames, so the motion cannot tell when the field was on"
         raise FieldError(str(recording.path), problem)
@@ -117,7 +116,7 @@ def sharpened(field: Field, tracks: Tracks, recording: Recording, bench: Bench) 
     open_ones = np.flatnonzero(jumps & (field.toggle_std > 0.01 * recording.frame_interval))
     if len(open_ones) == 0:
         return field
-    droplets = _droplets(tracks, recording, bench, exposure_of(bench, recording))
+    droplets = _droplets(tracks, recording, bench)
     return _refined(field, droplets, recording, open_ones)
 
 
@@ -129,14 +128,15 @@ def _sign_warning(voltage: float, states: FloatArray) -> tuple[str, ...]:
     )
 
 
-def _droplets(tracks: Tracks, recording: Recording, bench: Bench, exposure: float) -> list[Path]:
+def _droplets(tracks: Tracks, recording: Recording, bench: Bench) -> list[Path]:
     """Paths along the stated or the picture's vertical, of droplets seen long enough."""
     span = recording_span(recording)
     idle = field_of_steps("motion", [span[0]], [0.0], span=span)
     orientation = Orientation(bench.down_deg or 0.0, 0.0, "picture")
     found = paths(
-        tracks, recording, field=idle, scale=bench.scale, exposure=exposure, orientation=orientation
-    )
+        tracks, recording, field=idle, scale=bench.scale, exposure=exposure_of(bench, recording),
+        orientation=orientation, blur=blur_of(bench, recording),
+    )  # fmt: skip
     return [path for path in found if len(path) > LEAST_DROPLET and len(path.steps()) >= LEAST_DROPLET]
 
 

@@ -51,6 +51,7 @@ class Path:
     impulse: FloatArray  # (N,) V s, exposure average of the time integral of the voltage
     exposure: float  # s
     breaks: np.ndarray  # (N - 1,) bool: steps over an uncertain toggle, a bump of the camera or a hop
+    blur: float | None = None  # s, exposure for the blur of Brownian motion; None: `exposure`
 
     def __post_init__(self) -> None:
         for name in ("times", "down", "side", "down_std", "side_std", "impulse"):
@@ -81,7 +82,7 @@ class Path:
         """Give the steps between neighbouring sightings; `part` is the charge part of each of N - 1 steps."""
         return increments(
             self.times, self.down, self.side, down_std=self.down_std, side_std=self.side_std,
-            impulse=self.impulse, exposure=self.exposure, breaks=self.breaks, part=part,
+            impulse=self.impulse, exposure=self.exposure, blur=self.blur, breaks=self.breaks, part=part,
         )  # fmt: skip
 
     def used_rows(self) -> IntArray:
@@ -90,9 +91,10 @@ class Path:
         return self.rows[~alone]
 
 
-def paths(
+def paths(  # noqa: PLR0913 - one recording has that many sides
     tracks: Tracks, recording: Recording, *, field: Field, scale: Scale, exposure: float,
-    orientation: Orientation, cuts: Sequence[int] | IntArray = (), left_out: np.ndarray | None = None,
+    orientation: Orientation, blur: float | None = None, cuts: Sequence[int] | IntArray = (),
+    left_out: np.ndarray | None = None,
 ) -> list[Path]:  # fmt: skip
     """Bring tracks into metres along and across gravity, without the sightings that cannot be used.
 
@@ -110,6 +112,8 @@ def paths(
         Of a frame in s.
     orientation : Orientation
         Gravity in the picture.
+    blur : float, optional
+        Exposure in s that the blur of Brownian motion is worked out with; `exposure` if not given.
     cuts : sequence of int, optional
         Frames at which the camera was bumped: the step that reaches such a frame is left out.
     left_out : ndarray of bool, shape (len(tracks),), optional
@@ -143,7 +147,7 @@ def paths(
             int(droplet), rows, frames, times[frames],
             y[rows] * cos + x[rows] * sin, x[rows] * cos - y[rows] * sin,
             np.hypot(y_std[rows] * cos, x_std[rows] * sin), np.hypot(x_std[rows] * cos, y_std[rows] * sin),
-            impulse[frames], exposure, breaks,
+            impulse[frames], exposure, breaks, blur,
         ))  # fmt: skip
     return found
 

@@ -1,0 +1,71 @@
+"""Whether stated uncertainties hold where what is not known enters: exposure, air, evaporation, the bench."""
+
+from __future__ import annotations
+
+from dataclasses import replace
+
+import numpy as np
+import pytest
+from happening_droplets import Camera, Life, made_bench, made_tracks, schedule
+
+from physics.droplet import ELEMENTARY_CHARGE
+from tracker.motion.droplets import evaluate_droplets
+from tracker.motion.field import field_from_list
+from tracker.records import Settings
+
+CAMERA = Camera(seconds=24.0, steps=schedule(4e4))
+
+
+def cluster(rng, count, radii=(0.5e-6, 1.0e-6)):
+    numbers = rng.integers(1, 7, count) * rng.choice([-1, 1], count)
+    return [Life(float(r), int(n)) for r, n in zip(rng.uniform(*radii, count), numbers, strict=True)]
+
+
+def evaluated(folder, rng, lives, *, camera=CAMERA, bench=None, **motion):
+    """Evaluate droplets in air; `bench` changes the bench of the camera."""
+    tracks, recording = made_tracks(rng, lives, camera, **motion)
+    made = made_bench(folder, camera)
+    made = made if bench is None else bench(made)
+    return evaluate_droplets(
+        tracks, recording, field_from_list(made.field.entries, recording), made, settings=Settings()
+    )
+
+
+def charge_pulls(lives, found):
+    return [(row.charge_c - life.number * ELEMENTARY_CHARGE) / row.charge_own_std_c
+            for life, row in zip(lives, found.droplets, strict=True)]  # fmt: skip
+
+
+@pytest.mark.parametrize("share", [1.0, 0.5, 0.1])
+def test_an_exposure_that_is_not_stated_does_not_bias(tmp_path, share):
+    """Whatever the shutter did, diffusion and charges hold: the blur is fitted, and the result says so."""
+    rng = np.random.default_rng(401)
+    camera = replace(CAMERA, open_share=share)
+    lives = cluster(rng, 30, radii=(0.35e-6, 0.6e-6))
+    found = evaluated(
+        tmp_path, rng, lives, camera=camera, bench=lambda b: replace(b, exposure=None), noise_px=0.03
+    )
+    ratio = [row.diffusion_ratio for row in found.droplets]
+    # ln D of one droplet is known to 0.08 in 24 s; the mean of 30 within four of its standard deviations. Blur by
+    # half the interval would make it 0.17 too small at an open shutter.
+    assert np.mean(np.log(ratio)) == pytest.approx(0.0, abs=4 * 0.1 / np.sqrt(30))
+    # rms of 30 pulls of unit variance within four standard deviations of 1.
+    assert np.sqrt(np.mean(np.square(charge_pulls(lives, found)))) < 1 + 4 / np.sqrt(60)
+    told = [line for line in found.warnings if "camera.exposure" in line]
+    assert len(told) == 1
+    assert "half the frame interval, 16.7 ms" in told[0]
+    assert "fitted" in told[0]
+    assert found.exposure == pytest.approx(1 / 60)
+
+
+@pytest.mark.parametrize(("stated", "warned"), [(0.2, True), (1.0, False)])
+def test_an_exposure_that_is_stated_too_short_is_told(tmp_path, stated, warned):
+    """With a shutter that is always open, a fifth of it leaves nearly all droplets without place noise."""
+    rng = np.random.default_rng(402)
+    camera = replace(CAMERA, open_share=1.0)
+    exposure = stated / camera.frame_rate
+    found = evaluated(
+        tmp_path, rng, cluster(rng, 14), camera=camera, noise_px=0.05,
+        bench=lambda b: replace(b, exposure=replace(b.exposure, value=exposure)),
+    )  # fmt: skip
+    assert any("no place noise" in line for line in found.warnings) is warned
