@@ -37,7 +37,7 @@ def true_gradient(pattern: Pattern, lattice: Lattice) -> np.ndarray:
     for dx, dy in steps:
         high = lattice_coordinates(pattern, x + dx, y + dy)[:2]
         low = lattice_coordinates(pattern, x - dx, y - dy)[:2]
-        columns.append([float(np.mean(h - l)) for h, l in zip(high, low, strict=True)])
+        columns.append([float(np.mean(up - down)) for up, down in zip(high, low, strict=True)])
     return np.array(columns).T
 
 
