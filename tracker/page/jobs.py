@@ -127,11 +127,16 @@ class Jobs:
 
     async def _run(self, job: Job) -> None:
         """Run one job's child to its end."""
-        process = await asyncio.create_subprocess_exec(
-            sys.executable, "-P", "-m", "tracker.page.work",
-            stdin=asyncio.subprocess.PIPE, stdout=asyncio.subprocess.PIPE,
-            stderr=asyncio.subprocess.PIPE, limit=LINE_LIMIT,
-        )  # fmt: skip
+        try:
+            process = await asyncio.create_subprocess_exec(
+                sys.executable, "-P", "-m", "tracker.page.work",
+                stdin=asyncio.subprocess.PIPE, stdout=asyncio.subprocess.PIPE,
+                stderr=asyncio.subprocess.PIPE, limit=LINE_LIMIT,
+            )  # fmt: skip
+        except OSError as error:  # too many processes, no memory
+            job.error = {"message": f"the work cannot be started ({error.strerror})"}
+            self._end(job, "failed")
+            return
         job.process = process
         to_child = cast(asyncio.StreamWriter, process.stdin)
         errors = asyncio.ensure_future(cast(asyncio.StreamReader, process.stderr).read())

@@ -11,7 +11,7 @@ from typing import Any
 
 import numpy as np
 
-from tracker.errors import ResultError
+from physics.errors import FallriseError
 from tracker.export import find_recording
 from tracker.page.errors import RefusedError
 from tracker.page.jobs import Job, Jobs
@@ -70,11 +70,8 @@ class Pictures:
             frames = opened.recording["frames"]
             wanted = frames["count"] * frames["width_px"] * frames["height_px"] * BYTES_PER_PIXEL
             make_room(path.parent, int(wanted))
-        except (RefusedError, ResultError, OSError) as error:
-            held.message = str(error)
-            return
-        except Exception as error:
-            held.message = " ".join(str(error).split()) or type(error).__name__
+        except (FallriseError, OSError) as error:
+            held.message = " ".join(str(error).split())
             return
         task = {
             "recording": str(recording), "path": str(path), "sha256": str(opened.recording.get("sha256") or ""),

@@ -51,6 +51,7 @@ class Upload:
         if self.path == target:
             return target
         if self.path is not None:
+            self.drop_stream()  # some systems rename no file that is open
             self.path.rename(target)
         elif self.stream is not None:
             # Only with a folder descriptor does Python ask the system to follow the link to the open file.
