@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from typing import Literal
 
 import numpy as np
 from scipy.special import logsumexp
@@ -17,30 +18,41 @@ from physics.posterior import Law, law_table, moments
 __all__ = ["air_current"]
 
 AIR_POINTS = 41
+CAUCHY_POINTS = 161
+CAUCHY_REACH = 60.0  # scales of a Cauchy prior that are looked at: 1 % of it lies beyond
+LEAST_REACH = 6e-5  # m/s that are looked at in any case
+BEND = 6.0  # of the sinh that spaces them: 3 % of the scale apart in the middle, 7 % of the speed outside
+HALF_WIDTH = float(np.tan(np.pi / 2 * 0.6827))  # scales of a Cauchy density to either side that hold 68 %
 SPAN = 5.0  # standard deviations of ln D that each droplet's radius may lie from its diffusion
 
 
 def air_current(
-    droplets: Sequence[Increments], conditions: Conditions, *, prior_std: float
+    droplets: Sequence[Increments | FreeFit],
+    conditions: Conditions,
+    *,
+    prior_std: float,
+    tails: Literal["normal", "cauchy"] = "normal",
 ) -> tuple[float, float]:
     """Vertical speed of the air common to all droplets, from Brownian motion against fall speed.
 
     Parameters
     ----------
-    droplets : sequence of Increments
-        Each of one droplet; those with too few steps or without fall speed add nothing.
+    droplets : sequence of Increments or FreeFit
+        Steps, or their fit, each of one droplet; those with too few steps or without fall speed add nothing.
     conditions : Conditions
         Air, oil, gravity, slip model.
     prior_std : float
-        Standard deviation of the air speed before looking, in m/s (for example from the sideways drift);
-        above 0.
+        Standard deviation of the air speed before looking, in m/s; above 0. Of a Cauchy prior its scale.
+    tails : {"normal", "cauchy"}, optional
+        Shape of the prior. Where its width is itself only one sample, such as the sideways speed of the same
+        air, the prior is Cauchy: that of the ratio of two normal speeds of equal variance.
 
     Returns
     -------
     speed : float
         In m/s, downward; posterior mean.
     std : float
-        In m/s; `prior_std` when the droplets tell nothing.
+        In m/s; when the droplets tell nothing, `prior_std`, and of a Cauchy prior the half width that holds 68 %.
 
     Raises
     ------
@@ -61,22 +73,41 @@ def air_current(
     if not prior_std > 0:
         raise PhysicsError("prior_std", prior_std, "above 0 m/s")
     table = law_table(conditions)
-    fits = [free_fit(steps) for steps in droplets if len(steps) >= MIN_INCREMENTS]
+    fits = [
+        each if isinstance(each, FreeFit) else free_fit(each)
+        for each in droplets if isinstance(each, FreeFit) or len(each) >= MIN_INCREMENTS
+    ]  # fmt: skip
+    fits = [fit for fit in fits if np.isfinite(fit.fall_speed)]
+    if not fits:
+        return 0.0, prior_std * (HALF_WIDTH if tails == "cauchy" else 1.0)
     # a droplet's own std of ln D is small when its D came out high, so as a weight it would draw u upward
-    spread = float(np.sqrt(np.median([fit.dof * fit.log_diffusion_std**2 for fit in fits]))) if fits else 0.0
-    speeds = prior_std * np.linspace(-5, 5, AIR_POINTS)
+    spread = float(np.sqrt(np.median([fit.dof * fit.log_diffusion_std**2 for fit in fits])))
+    speeds = _first_speeds(prior_std, tails)
     mean, std = 0.0, prior_std
     for _ in range(6):
-        total = -0.5 * (speeds / prior_std) ** 2
+        total = _log_prior(speeds / prior_std, tails)
         for fit in fits:
             total = total + _log_likelihood(fit, table, speeds, spread / np.sqrt(fit.dof))
-        weights = np.exp(total - total.max())
+        weights = np.exp(total - total.max()) * np.gradient(speeds)
         mean, std = moments(weights / weights.sum(), speeds)
-        step = speeds[1] - speeds[0]
+        step = float(np.interp(mean, speeds, np.gradient(speeds)))
         if std > 2 * step:
             break
         speeds = mean + max(5 * std, 2 * step) * np.linspace(-1, 1, AIR_POINTS)
     return mean, std
+
+
+def _first_speeds(width: float, tails: str) -> FloatArray:
+    """Air speeds that are looked at first: even for a normal prior, dense in the middle of a Cauchy prior."""
+    if tails == "normal":
+        return width * np.linspace(-5, 5, AIR_POINTS)
+    reach = max(CAUCHY_REACH * width, LEAST_REACH)
+    return np.asarray(reach / np.sinh(BEND) * np.sinh(np.linspace(-BEND, BEND, CAUCHY_POINTS)))
+
+
+def _log_prior(ratio: FloatArray, tails: str) -> FloatArray:
+    """Log density of an air speed over the width of its prior, up to a constant."""
+    return np.asarray(-0.5 * ratio**2 if tails == "normal" else -np.log1p(ratio**2))
 
 
 def _log_likelihood(fit: FreeFit, table: Law, air_speeds: FloatArray, log_diffusion_std: float) -> FloatArray:
@@ -85,8 +116,6 @@ def _log_likelihood(fit: FreeFit, table: Law, air_speeds: FloatArray, log_diffus
     With ln D known to s_D and the speed w to s_w, the parameter orthogonal to the air speed has the density
     v' + (s_w / s_r)^2 / v' in ln r, where v' = dv/dln r and s_r = s_D / |dln D/dln r|.
     """
-    if not np.isfinite(fit.fall_speed):
-        return np.zeros_like(air_speeds)
     span = np.log(fit.diffusion) + SPAN * log_diffusion_std * np.array([1.0, -1.0])
     ends = np.interp(-span, -np.log(table.diffusion), table.log_radius)
     if not ends[1] > ends[0]:  # beyond all radii of the table

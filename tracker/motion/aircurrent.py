@@ -7,6 +7,7 @@ from dataclasses import dataclass, field, replace
 
 import numpy as np
 
+from physics.air_current import HALF_WIDTH
 from physics.droplet import Conditions, diffusion, radius_from_fall_speed
 from physics.errors import PhysicsError
 from physics.motion import MIN_INCREMENTS, FreeFit, Increments, air_current, whitened
@@ -18,6 +19,7 @@ KNOTS_APART = 3.0  # s between the knots of a changing current: convection in a 
 LEAST_DROPLETS = 4  # with fewer, what they share cannot be told from what each does
 CHANGING = 1e-3  # false alarms per recording of a changing current
 RIDGE = 1e-4  # m/s, prior width of the change of the current
+LOOKS = 3  # at which droplets take part
 SOUND = (
     4.0  # standard deviations by which Brownian motion may miss the fall speed in a droplet that takes part
 )
@@ -68,17 +70,13 @@ class AirCurrent:
         }  # fmt: skip
 
 
-def find_air_current(
-    steps: Sequence[Increments], fits: Sequence[FreeFit], conditions: Conditions
-) -> AirCurrent:
+def find_air_current(fits: Sequence[FreeFit], conditions: Conditions) -> AirCurrent:
     """Find the air's steady speed from what all droplets share.
 
     Parameters
     ----------
-    steps : sequence of Increments
-        Of each droplet.
     fits : sequence of FreeFit
-        The same droplets.
+        One of each droplet, which falls.
     conditions : Conditions
         Of the bench.
 
@@ -87,8 +85,9 @@ def find_air_current(
     current : AirCurrent
         Across gravity the weighted mean of the droplets' side speeds. Along gravity the air adds to every fall
         speed; only Brownian motion tells the two apart, and weakly, so the side speed serves as the prior's
-        width: air in a cell moves about as fast along as across. Droplets whose Brownian motion contradicts
-        their fall speed by more than the prior allows take no part.
+        width: air in a cell moves about as fast along as across. It is one sample of that width, so the prior is
+        Cauchy: air that happens to stand still across may well move along. Droplets whose Brownian motion
+        contradicts their fall speed take no part, first for any air that the prior allows, then for that found.
     """
     if not fits:
         return AirCurrent(0.0, 0.0, 0.0, 0.0, 0)
@@ -96,26 +95,30 @@ def find_air_current(
     stds = np.array([fit.side_speed_std for fit in fits])
     side, side_std = robust_mean(speeds, stds)
     prior = max(float(np.hypot(side, side_std)), LEAST_PRIOR)
+    wide = (0.0, 2 * HALF_WIDTH * prior)
     # a droplet's own std of ln D is large when its D came out low, and would excuse it
     spread = float(np.sqrt(np.median([fit.dof * fit.log_diffusion_std**2 for fit in fits])))
-    sound = [s for s, fit in zip(steps, fits, strict=True) if _is_sound(fit, prior, conditions, spread)]
-    down, down_std = air_current(sound, conditions, prior_std=prior)
-    return AirCurrent(down, down_std, side, side_std, len(sound))
+    sound = [fit for fit in fits if _is_sound(fit, wide, conditions, spread)]
+    for _ in range(LOOKS):
+        found = air_current(sound, conditions, prior_std=prior, tails="cauchy")
+        last, sound = sound, [fit for fit in fits if _is_sound(fit, found, conditions, spread)]
+        if len(last) == len(sound) and all(a is b for a, b in zip(last, sound, strict=True)):
+            break
+    return AirCurrent(*found, side, side_std, len(last))
 
 
-def _is_sound(fit: FreeFit, prior: float, conditions: Conditions, spread: float) -> bool:
-    """Whether Brownian motion and fall speed can belong to one sphere of the oil in air within the prior.
+def _is_sound(fit: FreeFit, air: tuple[float, float], conditions: Conditions, spread: float) -> bool:
+    """Whether Brownian motion and fall speed can belong to one sphere of the oil in air of a speed known to a std.
 
     `spread` is the standard deviation of ln D times the root of the degrees of freedom, typical of all droplets.
     """
     log_diffusion_std = min(fit.log_diffusion_std, spread / np.sqrt(max(fit.dof, 1)))
     try:
-        law = float(diffusion(radius_from_fall_speed(fit.fall_speed, conditions), conditions))
+        law = float(diffusion(radius_from_fall_speed(fit.fall_speed - air[0], conditions), conditions))
     except PhysicsError:
         return False
-    vague = (
-        0.6 * float(np.hypot(fit.fall_speed_std, 2 * prior)) / fit.fall_speed
-    )  # d ln D / d ln v is 0.5 to 0.6
+    # d ln D / d ln v is 0.5 to 0.6
+    vague = 0.6 * float(np.hypot(fit.fall_speed_std, air[1])) / (fit.fall_speed - air[0])
     return bool(abs(np.log(fit.diffusion / law)) < SOUND * float(np.hypot(log_diffusion_std, vague)))
 
 

@@ -253,7 +253,7 @@ def _air(droplets: list[Droplet], conditions: Conditions) -> AirCurrent:
     """Speed of the air that all droplets share."""
     usable = [d.history for d in droplets if d.history is not None and is_one_droplet(d, conditions)]
     moving = [h for h in usable if np.isfinite(h.fit.fall_speed) and h.fit.fall_speed > 0]
-    return find_air_current([h.steps for h in moving], [h.fit for h in moving], conditions)
+    return find_air_current([h.fit for h in moving], conditions)
 
 
 def _facts(droplet: Droplet, tracks: Tracks, conditions: Conditions, number: Number) -> Facts:
