@@ -12,8 +12,9 @@ from numpy.typing import NDArray
 
 from tracker.records import FloatArray
 from tracker.seeing.background import Background, fill_restless, find_background
+from tracker.seeing.camera import find_camera
 from tracker.seeing.detect import Detector, build_detector, cut_windows, find_peaks, gaussian_kernel
-from tracker.seeing.fit import Camera, Spots, Windows, fit_spots, profiles
+from tracker.seeing.fit import Camera, Spots, Windows, fit_spots
 from tracker.seeing.light import Light, compare, even, light_of
 
 F32 = NDArray[np.float32]
@@ -27,7 +28,7 @@ _FEW = 5  # fewer spots teach nothing
 _SEEN = 6.0  # signal to noise of a spot that teaches
 _CLEAR = 0.3  # of the signal to noise of the clearest: fainter spots may be flecks
 _TEACHERS = 400  # spots that are enough
-_PICTURES = 12  # sample pictures in which teachers are sought
+_PICTURES = 20  # sample pictures in which teachers are sought
 
 
 @dataclass(frozen=True, slots=True)
@@ -235,59 +236,3 @@ def _lone_spots(
     rows = np.flatnonzero(lone)
     rows = rows[np.argsort(-score[rows])[:_TEACHERS]]
     return frame[rows], x[rows], y[rows]
-
-
-def find_camera(
-    windows: Windows, spots: Spots, residual: F32, background: Background, first: Camera
-) -> tuple[Camera, Camera]:
-    """Read variance and gain from what fitted spots leave and from the empty background.
-
-    Parameters
-    ----------
-    windows, spots
-        Lone spots, fitted with free width.
-    residual : ndarray of shape (n, height, width)
-        Pictures less the background.
-    background : Background
-    first : Camera
-        With the variance of the empty background as `read_variance` and no gain.
-
-    Returns
-    -------
-    weights, noise : Camera
-        For the weights of fits, with no more gain than the empty background allows; and as found, for standard
-        deviations. They differ where a codec makes droplets noisier than the background.
-
-    Notes
-    -----
-    Each spot's residual is projected on the pattern u v g(u) g(v), which no fitted parameter touches and which
-    has the spot's own fineness: its square has the mean sum T^2 (read^2 + gain * grey). So the gain is right
-    for the noise that matters, compressed or not.
-    """
-    p = np.stack(
-        [spots.amplitude, spots.x - windows.left, spots.y - windows.top, np.log(spots.sx), np.log(spots.sy)],
-        1,
-    )
-    u, v, gx, gy = profiles(p, windows.grey.shape[1])
-    shape = gy[:, :, None] * gx[:, None, :] * windows.shade
-    model = shape * spots.amplitude[:, None, None].astype(np.float32)
-    left = np.where(windows.bad, 0, windows.grey - model)
-    pattern = np.where(windows.bad, 0, shape * u[:, None, :] * v[:, :, None])
-    square = np.einsum("nij,nij->n", left, pattern).astype(np.float64) ** 2
-    power = np.einsum("nij,nij->n", pattern, pattern).astype(np.float64)
-    base = max(float(np.median(background.level)) - first.black, 0.0)
-    light = windows.background - np.float32(first.black) + model - np.float32(base)
-    excess = np.einsum("nij,nij,nij->n", light, pattern, pattern).astype(np.float64)
-    empty = first.read_variance
-    gain = 0.0
-    for _ in range(20):  # mean of squares by weighted least squares, outliers cut at 3 standard deviations
-        expected = empty * power + gain * excess
-        kept = square < 9 * expected
-        weight = kept * excess / expected**2
-        gain = max(
-            0.0,
-            float((weight * (square / 0.9733 - empty * power)).sum() / max((weight * excess).sum(), 1e-12)),
-        )
-    true = Camera(max(empty - gain * base, 0.05 * empty), gain, first.black, first.full_scale)
-    gain = min(gain, 0.75 * empty / base if base > 0 else gain)
-    return Camera(empty - gain * base, gain, first.black, first.full_scale), true

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 from typing import Any
 
@@ -15,7 +16,7 @@ F32 = NDArray[np.float32]
 IntArray = NDArray[np.int64]
 
 _GRID = 8  # px, least distance of the pixels that are compared
-_ACROSS = 28  # of them along the shorter side
+_ACROSS = 40  # of them along the shorter side
 _MISMATCH, _MISMATCH_GREY = 1.5, 0.3  # of the usual mismatch, and grey: more is another picture
 _SWING = 1.6  # ratio of light beyond which a frame belongs to another illumination
 _LASTING = 4  # frames that make a change of illumination
@@ -40,7 +41,7 @@ class Light:
 
 
 def coarse(picture: NDArray[Any], black: float) -> F32:
-    """Every so manieth pixel of every so manieth row, about a thousand in all; grey over black."""
+    """Every so manieth pixel of every so manieth row, some thousand in all; grey over black."""
     step = max(_GRID, int(min(picture.shape) / _ACROSS))
     return np.asarray(picture[step // 2 :: step, step // 2 :: step], np.float32) - np.float32(black)
 
@@ -63,9 +64,10 @@ def light_of(samples: NDArray[Any], level: F32, black: float) -> Light:
     first = Light(coarse(level, black), black, np.inf, False)
     ratio, mismatch = compare(first, list(samples))
     spread = 1.4826 * float(np.median(np.abs(ratio - np.median(ratio))))
-    return Light(
-        first.grid, black, float(np.median(mismatch)), max(spread, float(ratio.std()) / 2) > _FLICKER
-    )
+    usual = float(np.median(mismatch))
+    # standard error of a median of n ratios, from the mean absolute difference of the pictures
+    doubt = 1.25 * 1.25 * usual / max(float(np.median(first.grid)), 1e-3) / math.sqrt(first.grid.size)
+    return Light(first.grid, black, usual, max(spread, float(ratio.std()) / 2) > max(_FLICKER, 3 * doubt))
 
 
 def compare(light: Light, pictures: list[NDArray[Any]]) -> tuple[FloatArray, FloatArray]:

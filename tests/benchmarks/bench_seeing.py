@@ -1,0 +1,324 @@
+"""Accuracy, links and speed of the frame pipeline on fresh simulated recordings, with plain peers in the same run.
+
+Run ``python tests/benchmarks/bench_seeing.py`` (half an hour; ``--quick`` for the small part). It prints the tables
+and the machine and writes both to ``tests/benchmarks/seeing.md``. Peers: a plain script of trackpy.batch and
+trackpy.link on the same recordings, and OpenCV's plain reading in one thread.
+"""
+
+from __future__ import annotations
+
+import argparse
+import os
+import platform
+import subprocess
+import sys
+import tempfile
+import time
+import warnings
+from collections.abc import Callable
+from dataclasses import replace
+from pathlib import Path
+
+import cv2
+import numpy as np
+
+sys.path.insert(0, str(Path(__file__).parents[1] / "helpers"))
+
+from tracking_scores import Track, as_tracks, score, switches
+
+from tracker.records import Field, Segment, Settings, Tracks
+from tracker.seeing.frames import open_recording
+from tracker.seeing.link import link
+from tracker.seeing.see import see
+from tracker.simulate import Scene, simulate
+
+SEED = 20_000
+RIM = 4.0  # px that are not scored at the picture's edge
+BASE = Scene(seconds=20, codec="ffv1")
+CROWD = Scene(droplets=60, seconds=16, width=960, height=720, metres_per_pixel=2e-6)
+DENSE = replace(CROWD, droplets=200, width=1280, height=960)
+SWARM = replace(DENSE, droplets=500)
+ACCURACY = {
+    **{f"lossless, spot {s:g} px": (replace(BASE, spot=s), "mkv") for s in (1.0, 1.4, 1.7, 2.2, 3.0)},
+    "Motion-JPEG": (replace(BASE, codec="mjpeg"), "avi"),
+    "H.264": (replace(BASE, codec="h264"), "mp4"),
+    "dark lines, lossless": (replace(BASE, lines=9, down_deg=2.0), "mkv"),
+    "peak 25 grey, lossless": (replace(BASE, peak=25.0), "mkv"),
+}
+LINKS = {
+    "60 droplets, H.264": (replace(CROWD, codec="h264"), "mp4"),
+    "200 droplets, Motion-JPEG": (replace(DENSE, codec="mjpeg", seconds=10), "avi"),
+    "500 droplets, Motion-JPEG": (replace(SWARM, codec="mjpeg", seconds=6), "avi"),
+    "returning, Motion-JPEG": (replace(BASE, codec="mjpeg", droplets=20, seconds=40), "avi"),
+}
+SPEED = {
+    "640 x 480, Motion-JPEG, a minute": (
+        replace(BASE, codec="mjpeg", width=640, height=480, seconds=60),
+        "avi",
+    ),
+    "640 x 480, H.264, a minute": (replace(BASE, codec="h264", width=640, height=480, seconds=60), "mp4"),
+    "960 x 720, 60 droplets, H.264": (replace(CROWD, codec="h264", seconds=40), "mp4"),
+}
+
+
+def make(folder: Path, scene: Scene, ending: str, seed: int) -> tuple[Path, dict[str, np.ndarray]]:
+    """A recording and its truth, one row a written frame."""
+    path = folder / f"clip-{seed}.{ending}"
+    files = simulate(scene, path, seed=seed)
+    truth = dict(np.load(files.truth_npz))
+    return path, {k: v[truth["written"]] for k, v in truth.items()}
+
+
+def field_of(scene: Scene) -> Field:
+    """The schedule as a field."""
+    times = [t for t, _ in scene.plan] + [scene.seconds]
+    segments = tuple(Segment(t, times[i + 1], v) for i, (t, v) in enumerate(scene.plan))
+    knots = np.repeat(times, 2)[1:-1]
+    return Field(
+        "list", segments, knots, np.repeat([v for _, v in scene.plan], 2), np.zeros(len(segments) - 1)
+    )
+
+
+def inside(scene: Scene, x: np.ndarray, y: np.ndarray) -> np.ndarray:
+    """Which places are scored."""
+    return (x > RIM) & (x < scene.width - RIM) & (y > RIM) & (y < scene.height - RIM)
+
+
+def true_tracks(scene: Scene, truth: dict[str, np.ndarray]) -> list[Track]:
+    """Truth as tracks, within the rim."""
+    x, y = truth["x_px"], truth["y_px"]
+    frame, number = (i.ravel() for i in np.indices(x.shape))
+    use = inside(scene, x, y).ravel()
+    return as_tracks(number[use], frame[use], x.ravel()[use], y.ravel()[use])
+
+
+def owners(
+    truth: dict[str, np.ndarray], frame: np.ndarray, x: np.ndarray, y: np.ndarray
+) -> tuple[np.ndarray, np.ndarray]:
+    """Nearest droplet of each point, -1 beyond 4 px, and the distance."""
+    d = np.hypot(truth["x_px"][frame] - x[:, None], truth["y_px"][frame] - y[:, None])
+    own, near = d.argmin(1), d.min(1)
+    own[near > 4] = -1
+    return own, near
+
+
+def bound(scene: Scene, peak: np.ndarray) -> np.ndarray:
+    """Cramer-Rao bound of a place in px for droplets at rest: sums over the pixels, shot, read and rounding noise."""
+    reach = int(np.ceil(4 * scene.spot))
+    at = np.arange(-reach, reach + 1)
+    shape = np.exp(-0.5 * (at[:, None] ** 2 + at**2) / scene.spot**2)
+    ground = scene.background + 0.5 * scene.gradient
+    light = peak[:, None, None] * shape
+    variance = scene.read_noise**2 + 1 / 12 + scene.gain * (ground + light)
+    return 1 / np.sqrt(((light * at / scene.spot**2) ** 2 / variance).sum((1, 2)))
+
+
+def accuracy_row(name: str, scene: Scene, ending: str, folder: Path) -> str:
+    """One recording: found, false sightings, rms, rms over bound, pulls."""
+    path, truth = make(folder, scene, ending, SEED + len(name))
+    seen = see(path, settings=Settings())
+    s = seen.sightings
+    own, near = owners(truth, s.frame, s.x, s.y)
+    visible = inside(scene, truth["x_px"], truth["y_px"])
+    hit = np.zeros(visible.shape, np.bool_)
+    hit[s.frame[own >= 0], own[own >= 0]] = True
+    d = np.hypot(truth["x_px"][s.frame] - s.x[:, None], truth["y_px"][s.frame] - s.y[:, None])
+    lone = (near < 1.5) & (np.partition(d, 1, axis=1)[:, 1] > 15) & inside(scene, s.x, s.y)
+    dx = s.x[lone] - truth["x_px"][s.frame[lone], own[lone]]
+    dy = s.y[lone] - truth["y_px"][s.frame[lone], own[lone]]
+    limits = bound(scene, looks(path))
+    ratio = np.sqrt(np.mean((dx / limits[own[lone]]) ** 2))
+    pulls = [np.std(e / std[lone]) for e, std in ((dx, s.x_std), (dy, s.y_std))]
+    return (
+        f"| {name} | {hit[visible].mean():.4f} | {np.count_nonzero(near > 4) / len(visible):.3f} | "
+        f"{seen.report['spot_width_px']:.2f} | {dx.std():.4f} / {dy.std():.4f} | {ratio:.2f} | "
+        f"{pulls[0]:.2f} / {pulls[1]:.2f} |"
+    )
+
+
+def looks(path: Path) -> np.ndarray:
+    """Peaks of the droplets from the truth file."""
+    import json
+
+    truth = json.loads(path.with_name(f"{path.stem}.truth.json").read_text())
+    return np.array([d["peak_grey"] for d in truth["droplets"]])
+
+
+def link_row(name: str, scene: Scene, ending: str, folder: Path) -> str:
+    """One recording: Jaccard similarity, alpha, switches, tracks; with and without the voltage, and the peer."""
+    path, truth = make(folder, scene, ending, SEED + len(name))
+    begin = time.process_time()
+    seen = see(path, settings=Settings())
+    linked = link(seen, field=field_of(scene), settings=Settings())
+    own_time = time.process_time() - begin
+    blind = link(seen, field=None, settings=Settings())
+    true = true_tracks(scene, truth)
+    cells = [_scored(scene, truth, true, _columns(t)) for t in (linked, blind)]
+    begin = time.process_time()
+    peer, frames = peer_tracks(path)
+    peer_time = (time.process_time() - begin) * len(truth["x_px"]) / frames
+    part = {k: v[:frames] for k, v in truth.items()}
+    cells.append(_scored(scene, part, true_tracks(scene, part), peer))
+    return f"| {name} | {len(true)} | {' | '.join(cells)} | {own_time:.1f} s, {peer_time:.0f} s |"
+
+
+def _columns(tracks: Tracks) -> tuple[np.ndarray, ...]:
+    t = tracks.sightings
+    return tracks.droplet, t.frame, t.x, t.y
+
+
+def _scored(
+    scene: Scene, truth: dict[str, np.ndarray], true: list[Track], columns: tuple[np.ndarray, ...]
+) -> str:
+    number, frame, x, y = columns
+    use = inside(scene, x, y)
+    number, frame, x, y = number[use], frame[use], x[use], y[use]
+    result = score(true, as_tracks(number, frame, x, y))
+    swapped = switches(number, owners(truth, frame, x, y)[0])
+    return f"{result.jaccard:.3f}, {result.alpha:.3f}, {swapped}, {len(np.unique(number))}, {result.rms:.3f}"
+
+
+def peer_tracks(path: Path, *, most: int = 40) -> tuple[tuple[np.ndarray, ...], int]:
+    """A plain script of trackpy on at most `most` frames: locate in batch, link with memory, drop stubs."""
+    import trackpy
+
+    trackpy.quiet()
+    with open_recording(path) as reader:
+        pictures = []
+        for batch in reader:
+            pictures += [p.copy() for p in batch.pictures]
+            if len(pictures) >= most:
+                break
+    pictures = pictures[:most]
+    with warnings.catch_warnings():
+        warnings.simplefilter("ignore")
+        found = trackpy.batch(pictures, 9, minmass=300, processes=1)
+        linked = trackpy.filter_stubs(trackpy.link(found, 12, memory=3), 15)
+    return tuple(linked[c].to_numpy() for c in ("particle", "frame", "x", "y")), len(pictures)
+
+
+def speed_row(name: str, scene: Scene, ending: str, folder: Path) -> str:
+    """One recording: OpenCV's plain reading, our reading, our whole pass with links; interleaved, medians of five."""
+    path, _ = make(folder, scene, ending, SEED + len(name))
+
+    def opencv() -> None:
+        capture = cv2.VideoCapture(str(path), cv2.CAP_FFMPEG, [cv2.CAP_PROP_N_THREADS, 1])
+        while capture.read()[0]:
+            pass
+
+    def read() -> None:
+        with open_recording(path) as reader:
+            for _ in reader:
+                pass
+
+    def whole() -> None:
+        link(see(path, settings=Settings()), field=field_of(scene), settings=Settings())
+
+    walls = np.array([[_timed(job) for job in (opencv, read, whole)] for _ in range(5)])
+    plain, own, all_ = np.median(walls, axis=0)
+    return f"| {name} | {plain:.2f} s | {own:.2f} s | {all_:.2f} s | {np.median(walls[:, 2] / walls[:, 0]):.2f} |"
+
+
+def _timed(job: Callable[[], None]) -> float:
+    begin = time.perf_counter()
+    job()
+    return time.perf_counter() - begin
+
+
+def memory_row(folder: Path) -> str:
+    """Peak memory of a fresh process over a recording and over one four times as long."""
+    peaks = []
+    for seconds in (15, 60):
+        path, _ = make(
+            folder,
+            replace(BASE, codec="mjpeg", width=640, height=480, seconds=seconds),
+            "avi",
+            SEED + seconds,
+        )
+        code = (
+            "import resource; from tracker.records import Settings; from tracker.seeing.see import see; "
+            "from tracker.seeing.link import link; "
+            f"s = see({str(path)!r}, settings=Settings()); link(s, field=None, settings=Settings()); "
+            "print(resource.getrusage(resource.RUSAGE_SELF).ru_maxrss)"
+        )
+        done = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=True)
+        peaks.append(int(done.stdout) / 1024)
+    growth = 100 * (peaks[1] / peaks[0] - 1)
+    return f"| 640 x 480, Motion-JPEG | {peaks[0]:.0f} MB | {peaks[1]:.0f} MB | {growth:+.0f} % |"
+
+
+def machine() -> str:
+    """Processor, cores and versions."""
+    names = [
+        t.split(":")[1].strip() for t in Path("/proc/cpuinfo").read_text().splitlines() if "model name" in t
+    ]
+    versions = f"Python {platform.python_version()}, numpy {np.__version__}, OpenCV {cv2.__version__}"
+    return f"{names[0] if names else platform.processor()}, {os.cpu_count()} cores; {versions}"
+
+
+TABLES: list[tuple[str, list[str], dict[str, tuple[Scene, str]], Callable[..., str]]] = [
+    (
+        "Places and detection",
+        [
+            "recording",
+            "found",
+            "false a frame (asked 0.05)",
+            "width px",
+            "rms px x / y",
+            "rms / bound",
+            "pulls x / y",
+        ],
+        ACCURACY,
+        accuracy_row,
+    ),
+    (
+        "Links: Jaccard, alpha, switches, tracks, rms px",
+        [
+            "recording",
+            "droplets",
+            "voltage known",
+            "voltage unknown",
+            "trackpy, first 40 frames",
+            "CPU: ours, peer",
+        ],
+        LINKS,
+        link_row,
+    ),
+    (
+        "Speed",
+        ["recording", "OpenCV, one thread", "our reading", "see and link", "ratio to OpenCV"],
+        SPEED,
+        speed_row,
+    ),
+]
+
+
+def main() -> None:
+    """Print the tables and write them down."""
+    parser = argparse.ArgumentParser(description=__doc__)
+    parser.add_argument("--quick", action="store_true", help="the first two recordings of each table")
+    quick = parser.parse_args().quick
+    lines = ["# The frame pipeline, measured", "", f"Seeds from {SEED}. {machine()}.", ""]
+    for title, heads, scenes, row in TABLES:
+        lines += [f"## {title}", "", f"| {' | '.join(heads)} |", "|" + "---|" * len(heads)]
+        print("\n".join(lines[-4:]), flush=True)
+        for name, (scene, ending) in list(scenes.items())[: 2 if quick else None]:
+            with tempfile.TemporaryDirectory() as folder:
+                lines.append(row(name, scene, ending, Path(folder)))
+            print(lines[-1], flush=True)
+        lines.append("")
+    lines += [
+        "## Memory",
+        "",
+        "| recording | a quarter of a minute | a minute | growth |",
+        "|---|---|---|---|",
+    ]
+    with tempfile.TemporaryDirectory() as folder:
+        lines.append(memory_row(Path(folder)))
+    print("\n".join(lines[-2:]))
+    if not quick:
+        Path(__file__).with_name("seeing.md").write_text("\n".join(lines) + "\n")
+
+
+if __name__ == "__main__":
+    main()
