@@ -16,7 +16,7 @@ from tracker.motion.charges import Number
 from tracker.motion.droplet import Droplet
 from tracker.motion.droplets import Analysis
 from tracker.page.errors import RefusedError
-from tracker.page.results import Opened
+from tracker.page.results import Opened, field_segments
 from tracker.page.words import in_brackets
 from tracker.records import FloatArray
 from tracker.showing.plots import track_path
@@ -52,8 +52,7 @@ def droplet_detail(opened: Opened, droplet: int) -> dict[str, Any]:
     return {
         "droplet": droplet, "time": path["time"].tolist(), "height": np.round(path["height"] * 1e6, 3).tolist(),
         "used": path["used"].astype(int).tolist(), "fits": fits,
-        "segments": [{"start": s["start_s"], "end": s["end_s"], "voltage": s["voltage_v"]}
-                     for s in opened.recording["field"]["segments"]],
+        "segments": field_segments(opened.recording),
         "changes": [{"kind": str(kind), "time": float(time) if np.isfinite(time) else None}
                     for kind, time in zip(changes["kind"], changes["time_s"].to_numpy(float), strict=True)],
         "text": _motion_text(path, fits),

@@ -21,6 +21,7 @@ from tracker.page.words import unit_words
 from tracker.records import Decision
 
 KEPT = 4  # results held in memory
+OFF = 0.01  # of the largest voltage: what a log shows below it is an offset
 NEAR = 6.0  # px within which a track is that of a decision
 JUDGEMENTS = ("keep", "doubt", "reject")
 
@@ -129,8 +130,7 @@ def shown(opened: Opened) -> dict[str, Any]:
         values = {
             "width": int(frames["width_px"]), "height": int(frames["height_px"]),
             "times": [float(time) for time in recording["frame_times_s"]],
-            "segments": [{"start": s["start_s"], "end": s["end_s"], "voltage": s["voltage_v"]}
-                         for s in recording["field"]["segments"]],
+            "segments": field_segments(recording),
         }  # fmt: skip
     except (KeyError, TypeError, ValueError) as error:
         raise ResultError(
@@ -145,6 +145,30 @@ def shown(opened: Opened) -> dict[str, Any]:
         "charge_unit": resolved or ELEMENTARY_CHARGE, "charge_unit_text": unit_words(unit),
         "decisions": history(opened.decisions), "can_undo": bool(_standing(opened.decisions)),
     }  # fmt: skip
+
+
+def field_segments(recording: dict[str, Any]) -> list[dict[str, float]]:
+    """Give the field's segments; `way` is 0 where the field is off to what a supply's log can tell, else its sign.
+
+    Parameters
+    ----------
+    recording : dict
+        What recording.json holds.
+
+    Returns
+    -------
+    segments : list of dict
+        ``start``, ``end`` in s, ``voltage`` in V, ``way``.
+    """
+    stored = recording["field"]["segments"]
+    largest = max((abs(s["voltage_v"]) for s in stored), default=0.0)
+    return [
+        {
+            "start": s["start_s"], "end": s["end_s"], "voltage": s["voltage_v"],
+            "way": 0 if abs(s["voltage_v"]) <= OFF * largest else int(np.sign(s["voltage_v"])),
+        }
+        for s in stored
+    ]  # fmt: skip
 
 
 def droplets(opened: Opened) -> list[dict[str, Any]]:

@@ -1,6 +1,6 @@
 // What is known of the chosen droplet and of all charges, in tabs below the table.
 
-import { complain, el, signed } from "./dom.js";
+import { el } from "./dom.js";
 import { get } from "./api.js";
 import { fillCrops, markCrop } from "./crops.js";
 import { ChargesPlot, MotionPlot, drawNumbers } from "./plots.js";
@@ -143,5 +143,3 @@ export class Details {
     clearTimeout(this.due);
   }
 }
-
-export { signed };

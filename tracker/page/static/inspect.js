@@ -7,7 +7,7 @@ import { Judge } from "./judge.js";
 import { Player } from "./player.js";
 import { Stage } from "./stage.js";
 import { DropletTable } from "./table.js";
-import { TimeBar, volts } from "./timebar.js";
+import { TimeBar } from "./timebar.js";
 import { Details } from "./details.js";
 import { readTracks, rowAt } from "./tracks.js";
 import { exportMenu } from "./exporting.js";
@@ -254,5 +254,3 @@ export class InspectView {
     this.trail.replaceChildren();
   }
 }
-
-export { volts };

@@ -1,6 +1,6 @@
 // A recording comes in: files dropped or chosen, the bench as a file or typed, then the measurement is asked for.
 
-import { bytes, clearNotice, complain, el, notice } from "./dom.js";
+import { bytes, clearNotice, el } from "./dom.js";
 import { post, remove, upload } from "./api.js";
 
 const ROLES = { recording: "Recording", bench: "Bench file", own: "Recording\u2019s own file", scale: "Scale file", picture: "Reference picture", log: "Voltage log" };
@@ -223,5 +223,3 @@ export class Intake {
     clearNotice("intake");
   }
 }
-
-export { complain, notice };

@@ -124,7 +124,7 @@ export class Player {
   // The numbers always belong to the picture that was drawn.
   drawn(state) {
     const time = this.times[state.frame] ?? 0, segment = this.timebar.segmentAt(time);
-    this.clock.textContent = `${time.toFixed(3)} s \u00b7 frame ${state.frame} \u00b7 ${segment ? volts(segment.voltage) : "field changing"}`;
+    this.clock.textContent = `${time.toFixed(3)} s \u00b7 frame ${state.frame} \u00b7 ${segment ? volts(segment) : "field changing"}`;
     if (!this.zoomText.textContent) this.refreshZoom();
   }
 

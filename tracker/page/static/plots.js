@@ -12,15 +12,15 @@ function shade(axes, segments, labels) {
   for (const s of segments) {
     const a = Math.max(left, axes.px(s.start)), b = Math.min(right, axes.px(s.end));
     if (b <= a) continue;
-    if (s.voltage !== 0) {
-      c.fillStyle = s.voltage > 0 ? ON : REVERSED;
+    if (s.way !== 0) {
+      c.fillStyle = s.way > 0 ? ON : REVERSED;
       c.fillRect(a, top, b - a, bottom - top);
-      if (s.voltage < 0) hatch(c, a, top, b - a, bottom - top, "rgba(120,90,40,.16)", 9);
+      if (s.way < 0) hatch(c, a, top, b - a, bottom - top, "rgba(120,90,40,.16)", 9);
     }
     if (!labels) continue;
     c.font = `${fontSize()}px system-ui, sans-serif`;
     c.fillStyle = SOFT;
-    const text = [volts(s.voltage), volts(s.voltage).replace(" V", ""), s.voltage > 0 ? "+" : s.voltage < 0 ? "\u2212" : "0"].find((t) => c.measureText(t).width < b - a - 3);
+    const text = [volts(s), volts(s).replace(" V", ""), s.way > 0 ? "+" : s.way < 0 ? "\u2212" : "0"].find((t) => c.measureText(t).width < b - a - 3);
     if (text) c.fillText(text, a + 3, top + fontSize() + 2);
   }
 }

@@ -3,7 +3,8 @@
 import { fitCanvas } from "./dom.js";
 import { nearestFrame } from "./tracks.js";
 
-export const volts = (v) => (v === 0 ? "off" : `${v > 0 ? "+" : "\u2212"}${Math.abs(v) >= 100 ? Math.abs(v).toFixed(0) : Math.abs(v).toPrecision(3)} V`);
+export const volts = (s) => (s.way === 0 ? "off" : number(s.voltage));
+const number = (v) => `${v > 0 ? "+" : "\u2212"}${Math.abs(v) >= 100 ? Math.abs(v).toFixed(0) : Math.abs(v).toPrecision(3)} V`;
 
 export class TimeBar {
   constructor(box, { onScrub }) {
@@ -52,7 +53,7 @@ export class TimeBar {
   tell() {
     const time = this.times[this.frame] ?? 0, segment = this.segmentAt(time);
     this.box.setAttribute("aria-valuenow", String(this.frame));
-    this.box.setAttribute("aria-valuetext", `frame ${this.frame}, ${time.toFixed(2)} seconds, field ${segment ? volts(segment.voltage) : "changing"}`);
+    this.box.setAttribute("aria-valuetext", `frame ${this.frame}, ${time.toFixed(2)} seconds, field ${segment ? volts(segment) : "changing"}`);
   }
 
   get range() {
@@ -112,13 +113,13 @@ export class TimeBar {
     const [first, last] = this.range;
     const a = this.at(Math.max(first, s.start)), b = this.at(Math.min(last, s.end));
     if (b <= a) return;
-    c.fillStyle = s.voltage > 0 ? "#2c6b75" : s.voltage < 0 ? "#74562c" : "#2b383e";
+    c.fillStyle = s.way > 0 ? "#2c6b75" : s.way < 0 ? "#74562c" : "#2b383e";
     c.fillRect(a, 2, b - a, low - 2);
-    if (s.voltage < 0) hatch(c, a, 2, b - a, low - 2, "rgba(255,255,255,.16)");
+    if (s.way < 0) hatch(c, a, 2, b - a, low - 2, "rgba(255,255,255,.16)");
     c.fillStyle = "#0f171b";
     c.fillRect(b - 0.5, 2, 1, low - 2);
     c.fillStyle = "#eaf1ef";
-    const text = [volts(s.voltage), volts(s.voltage).replace(" V", ""), s.voltage > 0 ? "+" : s.voltage < 0 ? "\u2212" : "0"].find((t) => c.measureText(t).width < b - a - 6);
+    const text = [volts(s), volts(s).replace(" V", ""), s.way > 0 ? "+" : s.way < 0 ? "\u2212" : "0"].find((t) => c.measureText(t).width < b - a - 6);
     if (text) c.fillText(text, a + 4, 2 + (low + 6) / 2);
   }
 
