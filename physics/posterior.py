@@ -76,6 +76,7 @@ class DropletPosterior:
     charge_std_at_radius: FloatArray  # (R, parts) C
     sensitivities: Mapping[str, tuple[float, float]]  # `input_responses` -> d ln r, d ln q of the main part
     charge_sensitivities: Mapping[str, FloatArray]  # `input_responses` -> (parts,) d ln q
+    charge_per_air_speed: FloatArray  # (parts,) C per m/s, change of the charge with the air speed assumed
     free: FreeFit | None  # the fit without the law; None with too few steps
 
     def __post_init__(self) -> None:
@@ -108,7 +109,7 @@ class DropletPosterior:
 _POSTERIOR_ARRAYS = (
     "charge", "charge_std", "charge_cov", "charge_interval_68", "charge_interval_95", "number_values",
     "number_log_likelihood", "part_number_log_likelihood", "log_radius", "radius_weight", "charge_at_radius",
-    "charge_std_at_radius",
+    "charge_std_at_radius", "charge_per_air_speed",
 )  # fmt: skip
 
 
@@ -301,6 +302,9 @@ def droplet_posterior(
     )  # fmt: skip
     changes = _primitive_changes(sums, law, mixture, conditions, air_speed, air_speed_std)
     result = replace(result, **_charge_results(result, steps, sums, mixture, charge_number_max))
+    by_air = result.charge_per_air_speed.copy()
+    by_air[sums.parts] = changes.pop("air")[1] / float(mixture.weight @ law.speed)
+    result = replace(result, charge_per_air_speed=by_air)
     return replace(result, **_sensitivities(result, sums, changes, responses or input_responses(conditions)))
 
 
@@ -316,7 +320,7 @@ def _empty(reason: str, parts: int, fit: FreeFit | None) -> DropletPosterior:
         number_values=np.empty(0, np.int64), number_log_likelihood=none,
         part_number_log_likelihood=np.empty((parts, 0)), log_radius=none, radius_weight=none,
         charge_at_radius=np.empty((0, parts)), charge_std_at_radius=np.empty((0, parts)),
-        sensitivities={}, charge_sensitivities={}, free=fit,
+        sensitivities={}, charge_sensitivities={}, charge_per_air_speed=np.full(parts, nan), free=fit,
     )  # fmt: skip
 
 
@@ -432,7 +436,10 @@ def _charge_quantiles(
 def _primitive_changes(
     sums: Sums, law: Law, base: _Mixture, conditions: Conditions, air_speed: float, air_std: float
 ) -> dict[str, tuple[float, FloatArray]]:
-    """Derivatives of (ln r, q) by the logarithm of each primitive, by a small change of the whole posterior."""
+    """Derivatives of (ln r, q) by the logarithm of each primitive, by a small change of the whole posterior.
+
+    "air" is the air speed in units of the droplet's mean fall speed: only their sum is seen.
+    """
     up = 1 + STEP
     laws = {
         "scale": law,
@@ -440,6 +447,7 @@ def _primitive_changes(
         "weight": replace(law, speed=law.speed * up),
         "thermal": replace(law, diffusion=law.diffusion * up),
         "slip": law_at(law.log_radius, conditions, slip_factor=up),
+        "air": replace(law, speed=law.speed + STEP * float(base.weight @ law.speed)),
         "path": law_at(law.log_radius, replace(conditions, mean_free_path=conditions.mean_free_path * up)),
     }
     size, columns = len(law.log_radius), [f.name for f in fields(Law)]

@@ -534,3 +534,26 @@ def test_a_droplet_takes_milliseconds():
         droplet_posterior(steps, CONDITIONS)
         spent.append(time.process_time() - start)
     assert min(spent) < 0.015
+
+
+def test_the_part_of_the_air_in_a_charge_is_its_slope_times_the_airs_uncertainty():
+    """In air one standard deviation off what is assumed, charges shift by the slope and scatter by what is left."""
+    std = 3e-6
+    below, above = (
+        [
+            droplet_posterior(
+                record(np.random.default_rng(seed), 5e-7, 4, plan=Plan(air_speed=air)).steps(), CONDITIONS,
+                air_speed_std=std,
+            )
+            for seed in range(80)
+        ]
+        for air in (-std, std)
+    )  # fmt: skip
+    low, high = (np.array([p.charge[0] for p in made]) for made in (below, above))
+    by_air = np.mean([p.charge_per_air_speed[0] for p in [*below, *above]]) * std
+    left = np.sqrt(np.mean([p.charge_std[0] ** 2 for p in [*below, *above]]) - by_air**2)
+    assert abs(by_air) > 0.25 * left
+    # the same Brownian motion in both airs, so that the difference is known to a few per cent; third order 5 %
+    assert (high - low).mean() / 2 == pytest.approx(-by_air, rel=0.1)
+    # the scatter of 80 to 8 %; four standard deviations
+    assert high.std() == pytest.approx(left, rel=4 / np.sqrt(160))

@@ -14,18 +14,21 @@ from tracker.motion.droplet import Droplet
 from tracker.motion.rows import NAN, DropletRow
 from tracker.records import FloatArray, IntArray
 
+LEAST_LEFT = 0.1  # of a variance when the part of the air is taken out
+
 
 @dataclass(frozen=True, slots=True)
 class SharedPart:
-    """What the bench's inputs put on all charges of a recording alike."""
+    """What the bench's inputs, and the air that carries them, put on all charges of a recording alike."""
 
     errors: FloatArray  # (10,) of SHARED_INPUTS
     sensitivities: FloatArray  # (droplets, 10) d ln charge; nan without charge
     std: FloatArray  # (droplets,) C
     bench: Bench
+    air_std: float = 0.0  # m/s, of the air current; it is in the droplets' own uncertainty
 
     @classmethod
-    def of(cls, droplets: list[Droplet], bench: Bench) -> SharedPart:
+    def of(cls, droplets: list[Droplet], bench: Bench, air_std: float) -> SharedPart:
         """Gather the sensitivities of all droplets."""
         errors = shared_errors(bench.shared_inputs)
         table = np.full((len(droplets), len(SHARED_INPUTS)), np.nan)
@@ -36,7 +39,7 @@ class SharedPart:
                 table[i] = [p.sensitivities[name][1] for name in SHARED_INPUTS]
         # As in the sensitivities, a charge of 0 counts as one standard deviation.
         size = np.maximum(np.abs(charge[:, 0]), charge[:, 1])
-        return cls(errors, table, size * np.sqrt(np.sum((table * errors) ** 2, axis=1)), bench)
+        return cls(errors, table, size * np.sqrt(np.sum((table * errors) ** 2, axis=1)), bench, air_std)
 
     @property
     def relative(self) -> FloatArray:
@@ -125,27 +128,48 @@ def charge_unit_of(droplets: list[Droplet], rows: list[DropletRow], shared: Shar
     -------
     unit : ChargeUnit
         A droplet that changed its charge gives two charges with their covariance.
+
+    Notes
+    -----
+    The air current is common to all droplets: with the change g of a charge with the air speed, (g std)^2 is taken
+    out of the own variance, exactly so for normal errors, and the mean of g std / charge, weighted as the charges
+    are, joins the shared uncertainty, which does not fall with the number of droplets.
     """
-    singles, pairs = [], []
+    singles, pairs, weights, by_air = [], [], [], []
     for droplet, row in zip(droplets, rows, strict=True):
         p = droplet.posterior
         if row.verdict != "keep" or p is None or not np.isfinite(row.charge_c):
             continue
         seen = np.flatnonzero(np.isfinite(p.charge))
+        air = p.charge_per_air_speed * shared.air_std
+        size = max(abs(row.charge_c), 1e-30)
+        weights.append((row.charge_c / row.charge_own_std_c) ** 2)
+        by_air.append(abs(air[p.main_part]) / size)
         if len(seen) > 1:
             two = _two_longest(droplet, seen)
-            pairs.append((p.charge[two], p.charge_cov[np.ix_(two, two)]))
+            pairs.append((p.charge[two], _without_air(p.charge_cov[np.ix_(two, two)], air[two])))
         else:
-            by_radius = np.sqrt(p.radius_weight @ (p.charge_at_radius[:, p.main_part] - row.charge_c) ** 2)
-            singles.append((row.charge_c, row.charge_own_std_c, by_radius / max(abs(row.charge_c), 1e-30)))
+            by_radius = p.radius_weight @ (p.charge_at_radius[:, p.main_part] - row.charge_c) ** 2
+            own = float(_without_air(np.array([[row.charge_own_std_c**2]]), air[[p.main_part]])[0, 0])
+            rest = max(by_radius - air[p.main_part] ** 2, 0.0)
+            singles.append((row.charge_c, np.sqrt(own), np.sqrt(rest) / size))
     table = np.array(singles).reshape(-1, 3)
     relative = shared.relative[np.isfinite(shared.relative)]
+    common = float(np.median(relative)) if len(relative) else 0.0
+    current = float(np.average(by_air, weights=weights)) if np.sum(weights) > 0 else 0.0
     sample = charge_sample(
         table[:, 0], table[:, 1], rel_stds=np.minimum(table[:, 2], 1.0),
-        shared_rel_std=float(np.median(relative)) if len(relative) else 0.0,
+        shared_rel_std=float(np.hypot(common, current)),
         pairs=(np.array([q for q, _ in pairs]), np.array([c for _, c in pairs])) if pairs else None,
     )  # fmt: skip
     return pooled_charge_unit((sample,))
+
+
+def _without_air(covariance: FloatArray, air: FloatArray) -> FloatArray:
+    """Own covariance of charges without the air current's part; at least a tenth of every variance stays."""
+    share = float(air @ np.linalg.solve(covariance, air))  # of the variance along the air's direction
+    part = min(1.0, (1 - LEAST_LEFT) / share) if share > 0 else 0.0
+    return np.asarray(covariance - part * np.outer(air, air))
 
 
 def _two_longest(droplet: Droplet, seen: IntArray) -> IntArray:

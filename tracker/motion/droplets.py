@@ -161,7 +161,7 @@ def _analyse(
     droplets = with_histories(droplets, bench.conditions, drift)
     air = replace(_air(droplets, bench.conditions), drift=drift)
     droplets = with_posteriors(droplets, bench, air)
-    shared = SharedPart.of(droplets, bench)
+    shared = SharedPart.of(droplets, bench, air.down_std)
     numbers = charge_numbers(droplets, shared)
     segments = [segment_rows(droplet, field) for droplet in droplets]
     return Analysis(orientation, droplets, air, shared, numbers, segments)

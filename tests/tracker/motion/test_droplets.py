@@ -83,10 +83,10 @@ def test_own_and_shared_parts_add_in_quadrature_and_the_shared_one_moves_all_ali
         assert slopes.shape == (10, 10)
         assert slopes[:, found.budget["inputs"].index("plate_gap")] == pytest.approx(np.ones(10))
         # d ln q / d ln scale is 1.6 where the fall speed alone gives the radius and -1 where Brownian motion does;
-        # at 0.75 um and more the latter has less than a tenth of the say.
+        # at 0.75 um and more the latter has less than a fifth of the say, in air known to 1 um/s or so.
         large = np.array([row.radius_m > 0.75e-6 for row in found.droplets])
         scale = slopes[:, found.budget["inputs"].index("scale")]
-        assert np.all(scale[large] == pytest.approx(1.6, abs=0.27))
+        assert np.all(scale[large] == pytest.approx(1.6, abs=0.2 * 2.6))
         assert np.all((scale > -1) & (scale < 1.75))
 
 

@@ -69,3 +69,24 @@ def test_an_exposure_that_is_stated_too_short_is_told(tmp_path, stated, warned):
         bench=lambda b: replace(b, exposure=replace(b.exposure, value=exposure)),
     )  # fmt: skip
     assert any("no place noise" in line for line in found.warnings) is warned
+
+
+def test_the_air_current_is_a_shared_part_of_the_charge_unit(tmp_path):
+    """Twice as many droplets in air that moves do not make the unit better known than the air lets it be."""
+    rng = np.random.default_rng(403)
+    lives = cluster(rng, 40, radii=(0.6e-6, 1.0e-6))
+    found = evaluated(tmp_path, rng, lives, air=(0.0, 3e-5), noise_px=0.05)
+    unit, std = found.charge_unit, found.air_current["down_std_m_s"]
+    assert unit["resolved"]
+    speed = np.array([row.fall_speed_m_s for row in found.droplets])
+    weight = np.array([(row.charge_c / row.charge_own_std_c) ** 2 for row in found.droplets])
+    bench = found.budget["charge_factor_std"]
+    # The charge goes with the fall speed to the power 0.6 (1.5 of Stokes' law less slip and drive); Brownian motion
+    # takes a tenth of it at these sizes.
+    by_air = 0.6 * float(np.average(std / speed, weights=weight))
+    shared = np.sqrt((unit["charge_unit_shared_std_c"] / unit["charge_unit_c"]) ** 2 - bench**2)
+    assert by_air > 0.5 * bench
+    assert shared == pytest.approx(by_air, rel=0.3)
+    own = unit["charge_unit_own_std_c"] / unit["charge_unit_c"]
+    assert own < 1.3 / np.sqrt(weight.sum())  # the own part holds no more than the droplets' own doubt
+    assert unit["charge_unit_std_c"] > np.hypot(own, shared) * unit["charge_unit_c"]
