@@ -15,6 +15,7 @@ IntArray = NDArray[np.int64]
 _CROWDING = 0.06  # other droplets expected within the first gate
 _STEADY = 2  # frames: a droplet is seen at least so often in half of its life; flecks of noise are not
 _FAINT = 1.6  # times the brightness that a hundredth of the sightings does not reach
+_WEAK = 8.0  # signal to noise: the width of a spot over the standard deviation of its place
 _RESTING = 0.7  # of the usual mean root of the way between frames
 _LEAST_GATE, _MOST_GATE = 4.0, 60.0  # px
 
@@ -147,7 +148,7 @@ def _tracks(sightings: Sightings, piece: IntArray, least: int) -> Tracks:
 def _flecks(sightings: Sightings, piece: IntArray) -> NDArray[np.bool_]:
     """Which pieces are flecks of noise or what a codec leaves behind.
 
-    A droplet is seen in most frames of its life. What is as faint as the faintest sightings must also be seen in half
+    A droplet is seen in most frames of its life. What is near the threshold must also be seen in half
     of the frames from its first to its last, and move from frame to frame as droplets do.
     """
     count = np.bincount(piece)
@@ -165,6 +166,7 @@ def _flecks(sightings: Sightings, piece: IntArray) -> NDArray[np.bool_]:
     )  # mean root of the way: a robust measure of its size
     brightness = np.bincount(piece, sightings.brightness, len(count)) / count
     faint = brightness < _FAINT * np.quantile(sightings.brightness, 0.01)
+    faint &= np.bincount(piece, sightings.width / sightings.x_std, len(count)) / count < _WEAK
     usual = np.median(np.sqrt(way[next_to])) if next_to.any() else 0.0
     noise = np.sqrt(2 * float(np.median(sightings.x_std)))
     resting = (root < _RESTING * usual) & (usual > noise)

@@ -115,6 +115,25 @@ def test_light_switched_on_in_the_middle_is_followed(tmp_path):
     assert len(seen.cuts) == 0
 
 
+def test_droplet_held_for_half_the_recording_is_followed(tmp_path):
+    """A droplet that sits at one place for the first half is seen in every frame of it, and is one track."""
+    rng = np.random.default_rng(1)
+    y, x = np.mgrid[:120, :160]
+    pictures = []
+    for i in range(200):
+        light = 30 + 90 * np.exp(-((x - 30 - 0.3 * i) ** 2 + (y - 30) ** 2) / (2 * 1.7**2))
+        if i < 100:
+            light += 90 * np.exp(-((x - 100.3) ** 2 + (y - 70.4) ** 2) / (2 * 1.7**2))
+        pictures.append(np.clip(rng.normal(light, 2), 0, 255).astype(np.uint8))
+    tifffile.imwrite(tmp_path / "held.tif", np.stack(pictures))
+    seen = see(tmp_path / "held.tif", settings=Settings(), frame_rate=25.0)
+    tracks = link(seen, field=None, settings=Settings())
+    t = tracks.sightings
+    held = np.hypot(t.x - 100.3, t.y - 70.4) < 0.5
+    assert len(np.unique(t.frame[held])) == 100
+    assert len(np.unique(tracks.droplet[held])) == 1
+
+
 def test_moved_camera_is_told_and_cuts(tmp_path):
     """A shift of the whole picture with its lines is a cut and a warning."""
     rng = np.random.default_rng(1)
