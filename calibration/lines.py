@@ -179,13 +179,14 @@ def line_points(flat: NDArray[np.float32], angle: float, *, careful: bool = Fals
     stack, mask, first_row, back = _strips(flat, turning, rows)
     _straighten(stack, lean=float(np.tan(angle - turning)))
     profiles = _average(stack, trim=careful)
-    profiles = np.where(mask, profiles - _level(profiles, mask), 0.0)
-    repeat = _repeat(profiles, mask)
+    even = np.where(mask, profiles - _level(profiles, mask), 0.0)
+    repeat = _repeat(even, mask)
     if repeat is None:
         return None
     pitch, half_width = repeat
     sigma = float(np.clip(0.8 * half_width, 0.8, pitch / 4.5))
-    sign = _polarity(profiles, mask, sigma)
+    sign = _polarity(even, mask, sigma)
+    profiles = np.where(mask, profiles, 0.0)
     strip, column, contrast = _peaks(sign * profiles, mask, sigma=sigma, pitch=pitch)
     if len(strip) < 4:
         return None
@@ -422,7 +423,8 @@ def refine_profile(
     place : ndarray of float
         In px along the profile.
     fine : ndarray of bool
-        False where the maximum wandered off or the picture's edge cuts the kernel.
+        False where the maximum wandered off, the picture's edge cuts the kernel, or the line is much sharper or
+        blunter than the others: a line cut by a field stop, or debris.
 
     Notes
     -----
@@ -450,7 +452,10 @@ def refine_profile(
         bend = (values * (1 - t * t) * bell).sum(axis=1)
         step = np.where(bend > 0, sigma * pull / np.where(bend > 0, bend, 1.0), 0.0)
         place += np.clip(step, -0.5 * sigma, 0.5 * sigma)
-    return column + place, fine & known & (np.abs(place) < 1.0 + 0.5 * sigma)
+    fine &= known & (np.abs(place) < 1.0 + 0.5 * sigma)
+    sharpness = bend / np.maximum((values * bell).sum(axis=1), 1e-12)
+    usual = float(np.median(sharpness[fine])) if fine.any() else 0.0
+    return column + place, fine & (np.abs(sharpness - usual) < 0.35 * abs(usual))
 
 
 def _along(
