@@ -28,6 +28,7 @@ _FEW = 5  # fewer spots teach nothing
 _SEEN = 6.0  # signal to noise of a spot that teaches
 _CLEAR = 0.3  # of the signal to noise of the clearest: fainter spots may be flecks
 _TEACHERS = 400  # spots that are enough
+_PIXELS = 20_000_000  # of sample pictures in which teachers are sought, at most
 _PICTURES = 20  # sample pictures in which teachers are sought
 
 
@@ -63,7 +64,8 @@ def learn(samples: NDArray[Any], *, black: float, full_scale: float, false_alarm
     """
     samples, flickers = _evened(samples, black)
     background = find_background(samples, black=black)
-    chosen = samples[np.unique(np.linspace(0, len(samples) - 1, _PICTURES).astype(int))]
+    many = int(np.clip(_PIXELS // samples[0].size, _LEAST_PICTURES, _PICTURES))
+    chosen = samples[np.unique(np.linspace(0, len(samples) - 1, many).astype(int))]
     residual = chosen - background.level
     guess, noise = scale_search(residual)
     filled = fill_restless(background, samples, width=guess, black=black)
@@ -179,7 +181,8 @@ def scale_search(residual: F32) -> tuple[float, float]:
     White noise falls as 1 / width. A compressed recording has less of it in fine detail; there the noise of the
     coarser scales is carried down, or every fleck would look like a very small spot.
     """
-    pictures = residual[:: max(1, len(residual) // 4)]
+    few = int(np.clip(_PIXELS // (8 * residual[0].size), 1, 4))
+    pictures = residual[:: max(1, len(residual) // few)][:few]
     scales = [s for s in _SCALES if 6 * s <= min(residual.shape[1:])] or [_SCALES[0]]
     smooth = [np.stack([smoothed(r, s) for r in pictures]) for s in scales]
     raw = [_spread(f[:, ::4, ::4]) * s for f, s in zip(smooth, scales, strict=True)]
