@@ -49,6 +49,7 @@ class History:
     trend: Change | None  # evaporation or growth; radius and charge hold at its time
     size_rate: float = float("nan")  # d ln r / dt in 1/s, significant or not; nan where it cannot be had
     size_rate_std: float = float("nan")
+    doubt: FloatArray | None = None  # (N,) m in `steps.down` by one standard uncertainty of the rate
 
 
 def find_changes(
@@ -111,8 +112,9 @@ def find_changes(
         steps, fit, trend = _refit(steps, part, column, trend)
     rate = trend or last
     size = (float("nan"), float("nan")) if rate is None else (rate.rate, rate.rate_std)
+    doubt = None if trend is None or column.shape[1] == 0 else trend.rate_std * column[:, 0]
     return History(
-        _take_out(steps, column, trend), kept, fit, tuple(sorted(changes, key=_by_time)), trend, *size
+        _take_out(steps, column, trend), kept, fit, tuple(sorted(changes, key=_by_time)), trend, *size, doubt
     )
 
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, replace
+from functools import partial
 
 import numpy as np
 
@@ -14,7 +15,7 @@ from tracker.motion.changes import History, find_changes, size_rate
 from tracker.motion.judge import is_sparse, is_stuck
 from tracker.motion.rows import NAN
 from tracker.motion.velocity import Path, without_outliers
-from tracker.records import IntArray, Settings
+from tracker.records import FloatArray, IntArray, Settings
 
 LEAST_SHARING = 5  # droplets whose rates of shrinking are compared
 
@@ -157,9 +158,48 @@ def with_posteriors(droplets: list[Droplet], bench: Bench, air: AirCurrent) -> l
             std = float(
                 np.hypot(air.down_std, air.drift.std_of_mean(d.history.steps, np.asarray(d.path.times)))
             )
-            found = droplet_posterior(
-                d.history.steps, conditions, air_speed=air.down, air_speed_std=std, responses=responses
-            )
+            of_steps = partial(
+                droplet_posterior, conditions=conditions, air_speed=air.down, air_speed_std=std, responses=responses
+            )  # fmt: skip
+            steps, doubt = d.history.steps, d.history.doubt
+            found = of_steps(steps)
+            if doubt is not None and np.isfinite(found.radius):
+                found = _widened(found, of_steps(replace(steps, down=steps.down + doubt)))
             d = replace(d, posterior=found)  # noqa: PLW2901 - the same droplet, known better
         done.append(d)
     return done
+
+
+def _widened(found: DropletPosterior, other: DropletPosterior) -> DropletPosterior:
+    """Add to all uncertainties what one standard uncertainty of a trend's rate does, as `other` shows.
+
+    The rate is fitted together with speed and drives, so values at the best rate are those of the joint fit, and the
+    rate's part adds in quadrature.
+    """
+    shift = np.where(np.isfinite(other.charge), other.charge - found.charge, 0.0)
+    if not np.isfinite(other.radius):
+        return found
+    grown = float(np.hypot(1.0, np.log(other.radius / found.radius) / found.log_radius_std))
+    return replace(
+        found, radius_std=grown * found.radius_std, log_radius_std=grown * found.log_radius_std,
+        radius_interval_68=_stretched(found.radius_interval_68, found.radius, grown),
+        radius_interval_95=_stretched(found.radius_interval_95, found.radius, grown),
+        fall_speed_std=float(np.hypot(found.fall_speed_std, other.fall_speed - found.fall_speed)),
+        mass_std=float(np.hypot(found.mass_std, other.mass - found.mass)),
+        charge_std=np.hypot(found.charge_std, shift), charge_cov=found.charge_cov + np.outer(shift, shift),
+        charge_std_at_radius=np.hypot(found.charge_std_at_radius, shift),
+        charge_interval_68=_charge_bands(found.charge_interval_68, found, shift),
+        charge_interval_95=_charge_bands(found.charge_interval_95, found, shift),
+    )  # fmt: skip
+
+
+def _stretched(interval: tuple[float, float], centre: float, factor: float) -> tuple[float, float]:
+    """Move both ends of an interval away from a value by a factor."""
+    return centre + factor * (interval[0] - centre), centre + factor * (interval[1] - centre)
+
+
+def _charge_bands(bands: FloatArray, found: DropletPosterior, shift: FloatArray) -> FloatArray:
+    """Intervals of the charges, stretched as their standard uncertainties grow."""
+    factor = np.hypot(1.0, shift / found.charge_std)[:, None]
+    centre = found.charge[:, None]
+    return np.asarray(centre + factor * (bands - centre))

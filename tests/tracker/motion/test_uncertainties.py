@@ -6,9 +6,11 @@ from dataclasses import replace
 
 import numpy as np
 import pytest
-from happening_droplets import Camera, Life, made_bench, made_tracks, schedule
+from happening_droplets import Camera, Life, evaporated, made_bench, made_tracks, record_path, schedule
 
 from physics.droplet import ELEMENTARY_CHARGE
+from tracker.motion.aircurrent import AirCurrent, Drift
+from tracker.motion.droplet import cleaned, with_histories, with_posteriors
 from tracker.motion.droplets import evaluate_droplets
 from tracker.motion.field import field_from_list
 from tracker.records import Settings
@@ -90,3 +92,25 @@ def test_the_air_current_is_a_shared_part_of_the_charge_unit(tmp_path):
     own = unit["charge_unit_own_std_c"] / unit["charge_unit_c"]
     assert own < 1.3 / np.sqrt(weight.sum())  # the own part holds no more than the droplets' own doubt
     assert unit["charge_unit_std_c"] > np.hypot(own, shared) * unit["charge_unit_c"]
+
+
+def test_the_rate_of_evaporation_blurs_what_holds_at_mid_track(tmp_path):
+    """With the field on in the second half alone, charge and rate are tied: pulls still have unit variance."""
+    rng = np.random.default_rng(404)
+    camera = Camera(seconds=24.0, missing=0.0, steps=((0.0, 0.0), (12.0, 4e4)))
+    bench, air = made_bench(tmp_path, camera), AirCurrent(0.0, 0.0, 0.0, 0.0, 0)
+    life = evaporated(Life(0.9e-6, 3), 0.2, 24.0)
+    droplets = [cleaned(record_path(rng, life, camera), Settings()) for _ in range(40)]
+    made = with_posteriors(with_histories(droplets, bench.conditions, Drift()), bench, air)
+    with_trend = [d for d in made if d.history.trend is not None and len(d.posterior.charge) == 1]
+    assert len(with_trend) > 20
+    charge = [(d.charge[0] - 3 * ELEMENTARY_CHARGE) / d.charge[1] for d in with_trend]
+    radius = [np.log(d.posterior.radius / 0.9e-6) / d.posterior.log_radius_std for d in with_trend]
+    # rms of 20 to 40 pulls within three of its standard deviations; the rate taken as exact gives 1.7 and 1.8.
+    assert np.sqrt(np.mean(np.square(charge))) == pytest.approx(1.0, abs=3 / np.sqrt(2 * 20))
+    assert np.sqrt(np.mean(np.square(radius))) == pytest.approx(1.0, abs=3 / np.sqrt(2 * 20))
+    for d in with_trend:
+        density = np.exp(d.posterior.charge_log_density(d.charge[0] + d.charge[1] * np.linspace(-6, 6, 241)))
+        assert np.sum(density) * 0.05 * d.charge[1] == pytest.approx(1.0, abs=1e-3)
+        low, high = d.posterior.charge_interval_68[0]
+        assert high - low == pytest.approx(2 * d.charge[1], rel=0.1)
