@@ -96,7 +96,7 @@ def learn(samples: NDArray[Any], *, black: float, full_scale: float, false_alarm
 
 def _evened(samples: NDArray[Any], black: float) -> tuple[NDArray[Any], bool]:
     """Samples at one brightness, and whether they had to be brought there."""
-    light = light_of(samples, np.median(samples[:: max(1, len(samples) // 9)], axis=0), black)
+    light = light_of(samples, None, black)
     if not light.flickers or len(samples) < _LEAST_PICTURES:
         return samples, False
     ratio, _ = compare(light, list(samples))

@@ -46,14 +46,14 @@ def coarse(picture: NDArray[Any], black: float) -> F32:
     return np.asarray(picture[step // 2 :: step, step // 2 :: step], np.float32) - np.float32(black)
 
 
-def light_of(samples: NDArray[Any], level: F32, black: float) -> Light:
+def light_of(samples: NDArray[Any], level: F32 | None, black: float) -> Light:
     """Set up from sample pictures and their background.
 
     Parameters
     ----------
     samples : ndarray of shape (n, height, width)
-    level : ndarray of shape (height, width)
-        Background.
+    level : ndarray of shape (height, width) or None
+        Background; the samples' median, if it is not known yet.
     black : float
         Grey value of no light.
 
@@ -61,7 +61,11 @@ def light_of(samples: NDArray[Any], level: F32, black: float) -> Light:
     -------
     light : Light
     """
-    first = Light(coarse(level, black), black, np.inf, False)
+    if level is None:
+        grid = np.asarray(np.median([coarse(p, black) for p in samples], axis=0), np.float32)
+    else:
+        grid = coarse(level, black)
+    first = Light(grid, black, np.inf, False)
     ratio, mismatch = compare(first, list(samples))
     spread = 1.4826 * float(np.median(np.abs(ratio - np.median(ratio))))
     usual = float(np.median(mismatch))
