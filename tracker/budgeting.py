@@ -23,6 +23,7 @@ from tracker.evaluate import present_bench
 from tracker.keeping.store import Result, read_result
 from tracker.keeping.tables import BUDGET, table
 from tracker.provenance import recording_from_json
+from tracker.term.poolcharges import own_radius_stds
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -57,6 +58,7 @@ def budgets(
     recording = recording_from_json(result.recording, Path(folder) / result.recording["path"])
     bench = present_bench(result, recording).fitted_to(recording.width, recording.height)
     stored = {int(n): np.array(s) for n, s in result.recording["budget"]["log_charge_sensitivities"].items()}
+    radii = own_radius_stds(result.recording)
     rows = result.droplets.set_index("droplet")
     if droplet is not None and droplet not in stored:
         raise ResultError(str(folder), f"droplet {droplet} has no charge, and so no budget")
@@ -65,7 +67,10 @@ def budgets(
     for number in wanted:
         row = rows.loc[number]
         budget = droplet_budget(row.charge_c, row.charge_own_std_c, stored[number], bench.shared_inputs)
-        made[number] = _checked(budget, row, stored[number], bench) if check else budget
+        if check:
+            own = radii.get(number, row.radius_std_m / row.radius_m)
+            budget = _checked(budget, row, stored[number], bench, own_radius=own)
+        made[number] = budget
     if droplet is None and stored:
         made[None] = _bench_budget(result, stored, bench)
     return made
@@ -78,11 +83,15 @@ def _bench_budget(result: Result, stored: dict[int, np.ndarray], bench: Bench) -
     return bench_budget(np.array([stored[n] for n in sorted(stored)]), bench.shared_inputs, weights=weights)
 
 
-def _checked(budget: Budget, row: pd.Series, sensitivities: np.ndarray, bench: Bench) -> Budget:
+def _checked(
+    budget: Budget, row: pd.Series, sensitivities: np.ndarray, bench: Bench, *, own_radius: float
+) -> Budget:
     """Check by Monte Carlo, with the weight of Brownian motion that the stored sensitivity to the scale shows."""
+    stated = bench.viscosity.value if "air.viscosity" in bench.viscosity.origin else None
     air = moist_air(
-        bench.temperature.value, bench.pressure.value, relative_humidity=bench.relative_humidity.value
-    )
+        bench.temperature.value, bench.pressure.value, relative_humidity=bench.relative_humidity.value,
+        viscosity=stated,
+    )  # fmt: skip
 
     def model(weight: float) -> DropletModel:
         return DropletModel(row.radius_m, row.charge_c, bench.conditions, air, diffusion_weight=weight)
@@ -90,7 +99,7 @@ def _checked(budget: Budget, row: pd.Series, sensitivities: np.ndarray, bench: B
     scale = SHARED_INPUTS.index("scale")
     by_speed, by_motion = (shared_sensitivities(model(w))[1][scale] for w in (0.0, 1.0))
     weight = float(np.clip((sensitivities[scale] - by_speed) / (by_motion - by_speed), 0.0, 1.0))
-    own = np.diag([(row.radius_std_m / row.radius_m) ** 2, row.charge_own_std_c**2])
+    own = np.diag([own_radius**2, row.charge_own_std_c**2])
     return checked_budget(budget, model(weight), own, bench.shared_inputs, np.random.default_rng(0))
 
 

@@ -59,9 +59,17 @@ SEGMENTS = (
     Column("end_s", "s", "end of the segment"),
     Column("frames", "", "sightings of the droplet used in the segment", "int"),
     Column("down_speed_m_s", "m/s", "speed along gravity, downward positive"),
-    Column("down_speed_std_m_s", "m/s", "own standard uncertainty: Brownian motion and localisation"),
+    Column(
+        "down_speed_std_m_s",
+        "m/s",
+        "own standard uncertainty, of Brownian motion and places, not of the scale",
+    ),
     Column("side_speed_m_s", "m/s", "speed across gravity, to the right of someone who faces the picture"),
-    Column("side_speed_std_m_s", "m/s", "own standard uncertainty: Brownian motion and localisation"),
+    Column(
+        "side_speed_std_m_s",
+        "m/s",
+        "own standard uncertainty, of Brownian motion and places, not of the scale",
+    ),
 )
 
 DROPLETS = (
@@ -72,14 +80,16 @@ DROPLETS = (
     Column("first_s", "s", "time of the first sighting"),
     Column("last_s", "s", "time of the last sighting"),
     Column("fall_speed_m_s", "m/s", "terminal speed with the field off, downward positive"),
-    Column("fall_speed_std_m_s", "m/s", "own standard uncertainty"),
+    Column("fall_speed_std_m_s", "m/s", "standard uncertainty, own and shared (of the scale)"),
     Column("radius_m", "m", "radius, with slip and buoyancy, from fall speed and Brownian motion"),
-    Column("radius_std_m", "m", "own standard uncertainty"),
+    Column("radius_std_m", "m", "standard uncertainty, own and shared"),
     Column("mass_kg", "kg", "mass of the oil"),
     Column("charge_c", "C", "signed charge; no quantum is assumed"),
     Column("charge_std_c", "C", "standard uncertainty, own and shared"),
-    Column("charge_own_std_c", "C", "part of this droplet alone"),
-    Column("charge_shared_std_c", "C", "part common to all droplets of the bench"),
+    Column("charge_own_std_c", "C", "part of this droplet alone and of the recording's air current"),
+    Column(
+        "charge_shared_std_c", "C", "part common to all droplets of the bench: scale, gap, voltage, models"
+    ),
     Column("charge_number", "", "most probable whole number of elementary charges, signed", "int"),
     Column("charge_number_probability", "", "its probability"),
     Column("diffusion_ratio", "", "diffusion seen over diffusion at the radius of the fall speed"),

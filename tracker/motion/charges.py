@@ -18,11 +18,21 @@ LEAST_LEFT = 0.1  # of a variance when the part of the air is taken out
 
 
 @dataclass(frozen=True, slots=True)
+class SharedStds:
+    """Shared parts of the standard uncertainties of one droplet."""
+
+    charge: float  # C
+    log_radius: float
+    log_speed: float
+
+
+@dataclass(frozen=True, slots=True)
 class SharedPart:
     """What the bench's inputs, and the air that carries them, put on all charges of a recording alike."""
 
     errors: FloatArray  # (10,) of SHARED_INPUTS
     sensitivities: FloatArray  # (droplets, 10) d ln charge; nan without charge
+    radius_sensitivities: FloatArray  # (droplets, 10) d ln radius; nan without radius
     std: FloatArray  # (droplets,) C
     bench: Bench
     air_std: float = 0.0  # m/s, of the air current; it is in the droplets' own uncertainty
@@ -31,28 +41,41 @@ class SharedPart:
     def of(cls, droplets: list[Droplet], bench: Bench, air_std: float) -> SharedPart:
         """Gather the sensitivities of all droplets."""
         errors = shared_errors(bench.shared_inputs)
-        table = np.full((len(droplets), len(SHARED_INPUTS)), np.nan)
+        table, radius = np.full((2, len(droplets), len(SHARED_INPUTS)), np.nan)
         charge = np.array([d.charge for d in droplets]).reshape(-1, 2)
         for i, droplet in enumerate(droplets):
             p = droplet.posterior
+            if p is not None and p.sensitivities:
+                radius[i] = [p.sensitivities[name][0] for name in SHARED_INPUTS]
             if p is not None and p.main_part >= 0:
                 table[i] = [p.sensitivities[name][1] for name in SHARED_INPUTS]
         # As in the sensitivities, a charge of 0 counts as one standard deviation.
         size = np.maximum(np.abs(charge[:, 0]), charge[:, 1])
-        return cls(errors, table, size * np.sqrt(np.sum((table * errors) ** 2, axis=1)), bench, air_std)
+        std = size * np.sqrt(np.sum((table * errors) ** 2, axis=1))
+        return cls(errors, table, radius, std, bench, air_std)
 
     @property
     def relative(self) -> FloatArray:
         """(droplets,) relative standard uncertainty of the charge."""
         return np.asarray(np.sqrt(np.sum((self.sensitivities * self.errors) ** 2, axis=1)))
 
+    def of_droplet(self, i: int) -> SharedStds:
+        """Shared standard uncertainties of one droplet: charge in C, radius and fall speed relative."""
+        radius = float(np.sqrt(np.sum((self.radius_sensitivities[i] * self.errors) ** 2)))
+        return SharedStds(float(self.std[i]), radius, float(self.errors[SHARED_INPUTS.index("scale")]))
+
     def budget(self, droplets: list[Droplet], rows: list[DropletRow]) -> dict[str, Any]:
-        """Budget of the factor on all charges, and the sensitivities from which all covariances follow."""
+        """Budget of the factor on all charges, sensitivities from which covariances follow, own part of radii."""
         plain: dict[str, Any] = {
             "inputs": list(SHARED_INPUTS), "errors": self.errors.tolist(),
             "log_charge_sensitivities": {
                 str(row.droplet): line.tolist()
                 for row, line in zip(rows, self.sensitivities, strict=True) if np.all(np.isfinite(line))
+            },
+            "log_radius_own_stds": {
+                str(row.droplet): droplet.posterior.log_radius_std
+                for row, droplet in zip(rows, droplets, strict=True)
+                if droplet.posterior is not None and np.isfinite(droplet.posterior.log_radius_std)
             },
         }  # fmt: skip
         charge = np.array([d.charge for d in droplets]).reshape(-1, 2)

@@ -132,7 +132,7 @@ def evaluate_droplets(
     for i, droplet in enumerate(droplets):
         facts = _facts(droplet, decided.tracks, bench.conditions, numbers[i])
         reasons = reasons_of(facts, air, rests[i], settings)
-        row = droplet_row(droplet, decided.tracks, recording, air, float(shared.std[i]), numbers[i], reasons)
+        row = droplet_row(droplet, decided.tracks, recording, air, shared.of_droplet(i), numbers[i], reasons)
         trimmed = bool(np.any(decided.trimmed[decided.tracks.rows(row.droplet)]))
         rows.append(decided_row(row, decided.verdicts.get(row.droplet), trimmed))
     used = np.zeros(len(decided.tracks), bool)

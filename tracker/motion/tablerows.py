@@ -10,7 +10,7 @@ import numpy as np
 
 from physics.motion import segment_occupancy, segment_speeds
 from tracker.motion.aircurrent import AirCurrent, robust_mean
-from tracker.motion.charges import Number
+from tracker.motion.charges import Number, SharedStds
 from tracker.motion.droplet import Droplet
 from tracker.motion.judge import Balance
 from tracker.motion.rows import NAN, ChangeRow, DropletRow, SegmentRow
@@ -22,7 +22,7 @@ SWAP_TIME = 0.5  # s beyond their uncertainties
 
 
 def droplet_row(
-    droplet: Droplet, tracks: Tracks, recording: Recording, air: AirCurrent, shared_std: float, number: Number,
+    droplet: Droplet, tracks: Tracks, recording: Recording, air: AirCurrent, shared: SharedStds, number: Number,
     reasons: Sequence[str],
 ) -> DropletRow:  # fmt: skip
     """Give the row of one droplet; empty where a value could not be had.
@@ -35,8 +35,8 @@ def droplet_row(
         For the times at which it was seen.
     air : AirCurrent
         Taken off the fall speed.
-    shared_std : float
-        Part of the charge's uncertainty that all droplets share, in C.
+    shared : SharedStds
+        Parts of its uncertainties that all droplets share.
     number : Number
         Charge number.
     reasons : sequence of str
@@ -64,18 +64,21 @@ def droplet_row(
         return row
     if not np.isfinite(p.radius):
         fit = droplet.history.fit
-        std = float(np.hypot(fit.fall_speed_std, air.down_std))
-        return replace(row, fall_speed_m_s=fit.fall_speed - air.down, fall_speed_std_m_s=std)
+        speed, own = fit.fall_speed - air.down, float(np.hypot(fit.fall_speed_std, air.down_std))
+        std = float(np.hypot(own, speed * shared.log_speed))
+        return replace(row, fall_speed_m_s=speed, fall_speed_std_m_s=std)
     row = replace(
-        row, fall_speed_m_s=p.fall_speed, fall_speed_std_m_s=p.fall_speed_std, radius_m=p.radius,
-        radius_std_m=p.radius_std, mass_kg=p.mass, diffusion_ratio=p.diffusion_ratio,
+        row, fall_speed_m_s=p.fall_speed, radius_m=p.radius,
+        fall_speed_std_m_s=float(np.hypot(p.fall_speed_std, p.fall_speed * shared.log_speed)),
+        radius_std_m=float(np.hypot(p.radius_std, p.radius * shared.log_radius)),
+        mass_kg=p.mass, diffusion_ratio=p.diffusion_ratio,
     )  # fmt: skip
     charge, own = droplet.charge
     if not np.isfinite(charge) or "one_voltage" in reasons:
         return row
     return replace(
-        row, charge_c=charge, charge_std_c=float(np.hypot(own, shared_std)), charge_own_std_c=own,
-        charge_shared_std_c=float(shared_std), charge_number=number.number,
+        row, charge_c=charge, charge_std_c=float(np.hypot(own, shared.charge)), charge_own_std_c=own,
+        charge_shared_std_c=shared.charge, charge_number=number.number,
         charge_number_probability=number.probability,
     )  # fmt: skip
 

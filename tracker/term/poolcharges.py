@@ -58,7 +58,7 @@ def bench_charges(results: Sequence[Result]) -> BenchCharges:
 
     tables, steps, pairs, air = [], [], [], []
     for result in results:
-        kept = kept_droplets(result.droplets)
+        kept = kept_droplets(result.droplets, own_radius_stds(result.recording))
         paired = charge_pairs(result.recording, kept)
         alone = kept[~kept["droplet"].isin(list(paired))]
         pairs += list(paired.values())
@@ -108,13 +108,32 @@ def _stored_sensitivities(recording: Mapping[str, Any], kept: pd.DataFrame) -> l
     return [stored.get(str(droplet)) for droplet in kept["droplet"]]
 
 
-def kept_droplets(droplets: pd.DataFrame) -> pd.DataFrame:
+def own_radius_stds(recording: Mapping[str, Any]) -> dict[int, float]:
+    """Own standard uncertainties of ln radius, without what all droplets of the bench share.
+
+    Parameters
+    ----------
+    recording : mapping
+        As in ``recording.json``.
+
+    Returns
+    -------
+    stds : dict of int to float
+        By droplet number; empty if the result does not hold them.
+    """
+    stored = (recording.get("budget") or {}).get("log_radius_own_stds") or {}
+    return {int(droplet): float(std) for droplet, std in stored.items()}
+
+
+def kept_droplets(droplets: pd.DataFrame, own_radius: Mapping[int, float] | None = None) -> pd.DataFrame:
     """Rows of droplets that are kept and have a charge, with the part of its uncertainty that grows with the charge.
 
     Parameters
     ----------
     droplets : DataFrame
         As in ``droplets.csv``.
+    own_radius : mapping of int to float, optional
+        As `own_radius_stds` gives it; for a droplet that is not there the radius's whole uncertainty counts.
 
     Returns
     -------
@@ -124,7 +143,8 @@ def kept_droplets(droplets: pd.DataFrame) -> pd.DataFrame:
     """
     good = (droplets["verdict"] == "keep") & droplets["charge_c"].notna() & (droplets["charge_own_std_c"] > 0)
     kept = droplets[good.fillna(False)].copy()
-    kept["rel_std"] = (1.1 * kept["radius_std_m"] / kept["radius_m"]).fillna(0.0)
+    own = kept["droplet"].map(dict(own_radius or {})).astype("float64")
+    kept["rel_std"] = (1.1 * own.fillna(kept["radius_std_m"] / kept["radius_m"])).fillna(0.0)
     return kept
 
 

@@ -8,11 +8,15 @@ import numpy as np
 import pytest
 from happening_droplets import Camera, Life, evaporated, made_bench, made_tracks, record_path, schedule
 
+from calibration.scale import Scale
+from physics.budget import SHARED_INPUTS
 from physics.droplet import ELEMENTARY_CHARGE
 from tracker.motion.aircurrent import AirCurrent, Drift
+from tracker.motion.charges import SharedPart
 from tracker.motion.droplet import cleaned, with_histories, with_posteriors
 from tracker.motion.droplets import evaluate_droplets
 from tracker.motion.field import field_from_list
+from tracker.motion.velocity import Orientation, paths
 from tracker.records import Settings
 
 CAMERA = Camera(seconds=24.0, steps=schedule(4e4))
@@ -114,3 +118,52 @@ def test_the_rate_of_evaporation_blurs_what_holds_at_mid_track(tmp_path):
         assert np.sum(density) * 0.05 * d.charge[1] == pytest.approx(1.0, abs=1e-3)
         low, high = d.posterior.charge_interval_68[0]
         assert high - low == pytest.approx(2 * d.charge[1], rel=0.1)
+
+
+def with_scale(bench, factor, rel_std):
+    size = factor * bench.scale.metres_per_pixel_x
+    return replace(bench, scale=Scale.from_metres_per_pixel(size, rel_std * size))
+
+
+def test_radius_and_fall_speed_hold_what_the_scale_may_do_to_them(tmp_path):
+    """Where the scale is known to 2 %, that and the droplet's own part are joined in both; the own part is stored."""
+    lives = cluster(np.random.default_rng(405), 6)
+    sharp, vague = (
+        evaluated(
+            tmp_path, np.random.default_rng(406), lives, bench=lambda b, std=std: with_scale(b, 1.0, std)
+        )
+        for std in (1e-6, 0.02)
+    )
+    for a, b in zip(sharp.droplets, vague.droplets, strict=True):
+        assert (b.radius_m, b.fall_speed_m_s) == (a.radius_m, a.fall_speed_m_s)
+        grown = np.sqrt(b.fall_speed_std_m_s**2 - a.fall_speed_std_m_s**2)
+        assert grown == pytest.approx(0.02 * a.fall_speed_m_s, rel=0.01)
+        assert b.radius_std_m > a.radius_std_m
+        own = vague.budget["log_radius_own_stds"][str(b.droplet)]
+        assert own == sharp.budget["log_radius_own_stds"][str(a.droplet)]
+        assert own * b.radius_m == pytest.approx(a.radius_std_m, rel=0.05)  # all else is known to 0.1 %
+
+
+def test_the_shared_part_of_a_radius_is_how_far_a_wrong_scale_moves_it(tmp_path):
+    """The same tracks at a scale 1 % larger, the air known: the radius moves by its shared uncertainty for 1 %."""
+    tracks, recording = made_tracks(
+        np.random.default_rng(407), cluster(np.random.default_rng(408), 6), CAMERA
+    )
+    bench, air = made_bench(tmp_path, CAMERA), AirCurrent(0.0, 0.0, 0.0, 0.0, 0)
+    field = field_from_list(bench.field.entries, recording)
+
+    def posteriors(bench):
+        found = paths(tracks, recording, field=field, scale=bench.scale, exposure=CAMERA.exposure,
+                      orientation=Orientation(0.0, 0.0, "bench"))  # fmt: skip
+        made = [cleaned(path, Settings()) for path in found]
+        return with_posteriors(with_histories(made, bench.conditions, Drift()), bench, air)
+
+    here, there = posteriors(bench), posteriors(with_scale(bench, 1.01, 0.0))
+    only_scale = SharedPart.of(here, with_scale(bench, 1.0, 0.01), 0.0)
+    errors = np.where(np.array(SHARED_INPUTS) == "scale", only_scale.errors, 0.0)
+    only_scale = replace(only_scale, errors=errors)
+    for i, (a, b) in enumerate(zip(here, there, strict=True)):
+        moved = abs(np.log(b.posterior.radius / a.posterior.radius))
+        # second order of 1 % is 1 % of it; the least moves where fall speed and Brownian motion pull apart
+        assert only_scale.of_droplet(i).log_radius == pytest.approx(moved, rel=0.05, abs=1e-4)
+        assert only_scale.of_droplet(i).log_speed == pytest.approx(0.01)

@@ -16,7 +16,7 @@ from tracker.errors import UsageError
 from tracker.keeping.store import read_result
 from tracker.showing.units import HIGHEST_NUMBER, ChargeGroup, draw_charges
 from tracker.term.pool import find_results, pool_results
-from tracker.term.poolcharges import charge_pairs, charge_steps, kept_droplets, shared_inputs
+from tracker.term.poolcharges import charge_pairs, charge_steps, kept_droplets, own_radius_stds, shared_inputs
 from tracker.term.poolfiles import pool_text, write_pool
 
 E = ELEMENTARY_CHARGE
@@ -138,6 +138,10 @@ def test_steps_help_and_only_kept_droplets_count(tmp_path):
     assert len(change) == 6
     radius_part = 1.1 * 2e-9 / 6e-7 * np.abs(change)
     np.testing.assert_allclose(std, np.hypot(0.08 * E, radius_part), rtol=1e-9)
+    # Where the result holds the own part of the radius, that counts: what all share moves no charge against another.
+    own = own_radius_stds({"budget": {"log_radius_own_stds": {str(kept["droplet"].iloc[0]): 1e-3}}})
+    told = kept_droplets(result.droplets, own)["rel_std"].to_numpy()
+    np.testing.assert_allclose(told, [1.1e-3, *[1.1 * 2e-9 / 6e-7] * 15], rtol=1e-9)
     assert pool_results([tmp_path]).unit.droplets_used == 22
 
 
