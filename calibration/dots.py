@@ -191,20 +191,23 @@ def refine_spots(
     place : ndarray of shape (N, 2)
         Refined, px.
     fine : ndarray of bool of shape (N,)
-        False where the picture's edge cuts the kernel or the place wandered off.
+        False where the picture's edge cuts the kernel, the place wandered off, or the spot is 1.6 times as far from
+        its own mirror image as usual: debris lies on it or beside it.
 
     Notes
     -----
     Zero of the gradient of the picture smoothed by a Gaussian, by Newton's method on the exact kernel: for a dot
     the least-squares place of a spot of that profile, for a corner the saddle.
     """
-    moved, fine = place.copy(), np.zeros(len(place), dtype=bool)
+    moved, fine, uneven = place.copy(), np.zeros(len(place), dtype=bool), np.zeros(len(place))
     reach = int(np.ceil(3 * sigma)) + 1
     slope = _ground(picture, place, steps)
     most = max(1, 4_000_000 // (2 * reach + 1) ** 2)
     for first in range(0, len(place), most):
         rows = slice(first, first + most)
-        moved[rows], fine[rows] = _refine(picture, place[rows], slope[rows], sigma, reach)
+        moved[rows], fine[rows], uneven[rows] = _refine(picture, place[rows], slope[rows], sigma, reach)
+    if fine.any():
+        fine &= uneven < 1.6 * np.median(uneven[fine])
     return moved, fine
 
 
@@ -227,8 +230,8 @@ def _ground(picture: NDArray[np.float32], place: FloatArray, steps: FloatArray) 
 
 def _refine(
     picture: NDArray[np.float32], place: FloatArray, slope: FloatArray, sigma: float, reach: int
-) -> tuple[FloatArray, NDArray[np.bool_]]:
-    """Refine one batch of spots."""
+) -> tuple[FloatArray, NDArray[np.bool_], FloatArray]:
+    """Refine one batch of spots; also how far each is from its mirror image, in grey values."""
     height, width = picture.shape
     centre = np.rint(place).astype(int)
     whole = (centre >= reach).all(axis=1) & (centre < np.array([width, height]) - reach).all(axis=1)
@@ -249,7 +252,18 @@ def _refine(
         step = -np.stack([yy * gx - xy * gy, xx * gy - xy * gx], axis=1) / det[:, None]
         shift += np.clip(step, -0.5 * sigma, 0.5 * sigma)
     stayed = np.hypot(*(shift - start).T) < max(1.5, 0.7 * sigma)
-    return inner + shift, whole & stayed
+    return inner + shift, whole & stayed, _unevenness(patch, shift, offsets, sigma)
+
+
+def _unevenness(patch: FloatArray, shift: FloatArray, offsets: NDArray[np.int64], sigma: float) -> FloatArray:
+    """Rms difference of each patch from itself turned by half a turn about its refined place, near that place."""
+    size = len(offsets)
+    # To half a pixel: the mirror image of pixel n about place s is pixel 2 s - n.
+    turned = np.clip(np.rint(2 * shift).astype(int)[:, :, None] - offsets + size // 2, 0, size - 1)
+    mirror = patch[np.arange(len(patch))[:, None, None], turned[:, 1, :, None], turned[:, 0, None, :]]
+    bells = [np.exp(-0.5 * ((offsets - shift[:, k, None]) / (1.5 * sigma)) ** 2) for k in (1, 0)]
+    weight = bells[0][:, :, None] * bells[1][:, None, :]
+    return np.asarray(np.sqrt((weight * (patch - mirror) ** 2).sum(axis=(1, 2)) / weight.sum(axis=(1, 2))))
 
 
 def _kernels(
