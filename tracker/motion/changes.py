@@ -29,7 +29,7 @@ class Change:
     """One thing that happened to a droplet."""
 
     kind: str  # charge_step, evaporation, growth or switch
-    step: int  # first step after the change; for a trend, the one at mid time
+    step: int  # first step after the change, of all steps of the track; for a trend, the one at mid time
     time: float  # s
     time_std: float  # s
     statistic: float
@@ -50,6 +50,20 @@ class History:
     size_rate: float = float("nan")  # d ln r / dt in 1/s, significant or not; nan where it cannot be had
     size_rate_std: float = float("nan")
     doubt: FloatArray | None = None  # (N,) m in `steps.down` by one standard uncertainty of the rate
+    begins: FloatArray | None = None  # (N,) s at which the steps begin
+
+    def part_at(self, time: float) -> int | None:
+        """Number of the charge part that holds at a time; None where the track is of another droplet."""
+        if self.begins is None or not len(self.begins) or not self.begins[0] <= time <= self.begins[-1]:
+            return None
+        return int(self.steps.part[np.searchsorted(self.begins, time, side="right") - 1])
+
+    def parts_about(self, change: Change) -> tuple[int, int] | None:
+        """Numbers of the charge parts before and after a charge step; None on a side that a switch left out."""
+        after = int(np.searchsorted(self.kept, change.step))
+        if not 0 < after < len(self.kept):
+            return None
+        return int(self.steps.part[after - 1]), int(self.steps.part[after])
 
 
 def find_changes(
@@ -99,7 +113,7 @@ def find_changes(
         )
         if found is None:
             break
-        changes.append(found)
+        changes.append(replace(found, step=int(kept[found.step])))
         if found.kind == "charge_step":
             part = _split(part, found.step)
         elif found.kind == "switch":
@@ -114,8 +128,9 @@ def find_changes(
     size = (float("nan"), float("nan")) if rate is None else (rate.rate, rate.rate_std)
     doubt = None if trend is None or column.shape[1] == 0 else trend.rate_std * column[:, 0]
     return History(
-        _take_out(steps, column, trend), kept, fit, tuple(sorted(changes, key=_by_time)), trend, *size, doubt
-    )
+        _take_out(steps, column, trend), kept, fit, tuple(sorted(changes, key=_by_time)), trend, *size, doubt,
+        times[steps.first],
+    )  # fmt: skip
 
 
 def _by_time(change: Change) -> float:

@@ -17,7 +17,7 @@ from tracker.motion.decided import Decided, apply_decisions
 from tracker.motion.droplet import Droplet, cleaned, is_one_droplet, with_histories, with_posteriors
 from tracker.motion.field import blur_of, exposure_of
 from tracker.motion.fieldclock import clock_warnings
-from tracker.motion.judge import Facts, balances, reasons_of
+from tracker.motion.judge import Facts, balances, fastest_of, reasons_of
 from tracker.motion.rows import ChangeRow, DropletRow, SegmentRow
 from tracker.motion.tablerows import (
     change_rows,
@@ -130,7 +130,7 @@ def evaluate_droplets(
     ]
     rows = []
     for i, droplet in enumerate(droplets):
-        facts = _facts(droplet, decided.tracks, bench.conditions, numbers[i])
+        facts = _facts(droplet, decided.tracks, bench.conditions, numbers[i], made.segments[i])
         reasons = reasons_of(facts, air, rests[i], settings)
         row = droplet_row(droplet, decided.tracks, recording, air, shared.of_droplet(i), numbers[i], reasons)
         trimmed = bool(np.any(decided.trimmed[decided.tracks.rows(row.droplet)]))
@@ -256,7 +256,9 @@ def _air(droplets: list[Droplet], conditions: Conditions) -> AirCurrent:
     return find_air_current([h.fit for h in moving], conditions)
 
 
-def _facts(droplet: Droplet, tracks: Tracks, conditions: Conditions, number: Number) -> Facts:
+def _facts(
+    droplet: Droplet, tracks: Tracks, conditions: Conditions, number: Number, segments: Sequence[SegmentRow]
+) -> Facts:
     """Gather what the verdict rests on."""
     rows = tracks.rows(droplet.path.droplet)
     flags = np.asarray(tracks.sightings.flags[rows])
@@ -266,7 +268,7 @@ def _facts(droplet: Droplet, tracks: Tracks, conditions: Conditions, number: Num
     return Facts(
         path=droplet.path, flags=flags, outliers=droplet.outliers, hops=hops, history=droplet.history,
         posterior=droplet.posterior, conditions=conditions, number=number.number,
-        number_probability=number.probability, on_no_number=number.none,
+        number_probability=number.probability, on_no_number=number.none, fastest=fastest_of(segments, droplet.history),
     )  # fmt: skip
 
 

@@ -7,7 +7,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from physics.drag import reynolds_number
+from physics.drag import reynolds_number, stokes_check
 from physics.droplet import Conditions, diffusion
 from physics.motion import MIN_INCREMENTS, DropletPosterior
 from tracker.motion.aircurrent import AirCurrent
@@ -21,6 +21,7 @@ LARGEST_RADIUS = 5e-6  # m, of a droplet that must not be taken for dirt
 STUCK_SHARE = 0.1  # of that droplet's diffusion
 LONG_GAP = 25  # frames: a droplet may leave the picture and come back
 LEAST_FILLED, LEAST_FILLED_NEAR = 0.2, 0.9  # shares of frames with a sighting: of all, and without long gaps
+LITTLE_INERTIA, MUCH_INERTIA = 1e-3, 1e-2  # excess of the drag that is noted, and that is doubted
 SURE = 0.95  # probability from which a charge number is called certain
 SHARES = (
     ("merged", Flag.MERGED, 0.2), ("out_of_focus", Flag.SOFT, 0.5), ("saturated", Flag.SATURATED, 0.5),
@@ -42,6 +43,7 @@ class Facts:
     number: int | None
     number_probability: float
     on_no_number: float  # probability that the charge is on no whole number
+    fastest: float  # m/s, largest speed of a segment
 
 
 @dataclass(frozen=True, slots=True)
@@ -154,17 +156,54 @@ def _speed_codes(facts: Facts, history: History, posterior: DropletPosterior, ai
         codes.append("inconsistent")
     if posterior.log_radius_std > 0.3:
         codes.append("imprecise")
-    if np.isfinite(posterior.radius):
-        fastest = float(np.max(np.abs(history.steps.down / history.steps.dt)))
-        number = reynolds_number(
-            posterior.radius,
-            fastest,
-            air_density=facts.conditions.air_density,
-            viscosity=facts.conditions.viscosity,
-        )
-        if float(number) > 0.1:
-            codes.append("inertia")
-    return codes
+    return codes + inertia_codes(posterior.radius, facts.fastest, facts.conditions)
+
+
+def inertia_codes(radius: float, speed: float, conditions: Conditions) -> list[str]:
+    """Tell how far the inertia of the air lets the drag exceed Stokes' law.
+
+    Parameters
+    ----------
+    radius : float
+        In m; nan gives no code.
+    speed : float
+        Largest speed in m/s.
+    conditions : Conditions
+        Of the bench.
+
+    Returns
+    -------
+    codes : list of str
+        None up to 0.1 % of the drag, ``slight_inertia`` up to 1 %, then ``inertia``.
+    """
+    if not np.isfinite(radius):
+        return []
+    number = reynolds_number(
+        radius, speed, air_density=conditions.air_density, viscosity=conditions.viscosity
+    )  # fmt: skip
+    if stokes_check(number, tolerance=LITTLE_INERTIA).holds:
+        return []
+    return ["slight_inertia" if stokes_check(number, tolerance=MUCH_INERTIA).holds else "inertia"]
+
+
+def fastest_of(segments: Sequence[SegmentRow], history: History | None) -> float:
+    """Largest speed along gravity that the fits show; single steps are mostly Brownian motion.
+
+    Parameters
+    ----------
+    segments : sequence of SegmentRow
+        Of one droplet; speeds uncertain by more than a fifth do not count.
+    history : History or None
+        Its fall speed counts, too.
+
+    Returns
+    -------
+    speed : float
+        In m/s, 0 or more.
+    """
+    sure = [abs(s.down_speed_m_s) for s in segments if s.down_speed_std_m_s < 0.2 * abs(s.down_speed_m_s)]
+    fall = 0.0 if history is None or not np.isfinite(history.fit.fall_speed) else abs(history.fit.fall_speed)
+    return float(max([fall, *sure]))
 
 
 def _charge_codes(facts: Facts, history: History, posterior: DropletPosterior) -> list[str]:
@@ -207,12 +246,14 @@ def balances(segments: Sequence[SegmentRow], history: History) -> list[Balance]:
         if row.voltage_v == 0 or not small or abs(row.down_speed_m_s) > 2 * row.down_speed_std_m_s:
             continue
         middle = 0.5 * (row.start_s + row.end_s)
-        part = sum(change.kind == "charge_step" and change.time < middle for change in history.changes)
-        drive = float(fit.drive_per_volt[min(part, len(fit.drive_per_volt) - 1)])
+        part = history.part_at(middle)
+        if part is None:
+            continue  # the part of a track that a switch left out
+        drive = float(fit.drive_per_volt[part])
         if not abs(drive * row.voltage_v) > 0.5 * abs(fit.fall_speed):
             continue  # a slow droplet without drive rests nowhere
         voltage = -fit.fall_speed / drive
-        i = 1 + min(part, len(fit.drive_per_volt) - 1)
+        i = 1 + part
         slope = np.zeros(len(fit.covariance))
         slope[0], slope[i] = -1 / drive, fit.fall_speed / drive**2
         covariance = np.where(np.isfinite(fit.covariance), fit.covariance, 0.0)

@@ -165,19 +165,16 @@ def change_rows(droplet: Droplet, rests: list[Balance]) -> list[ChangeRow]:
     Returns
     -------
     rows : list of ChangeRow
-        In order of time.
+        In order of time. What lies on the side that a switch left out has no charges.
     """
     history, p = droplet.history, droplet.posterior
     if history is None or p is None:
         return []
-    rows, part = [], 0
+    rows = []
     for change in history.changes:
-        before = after = float(p.charge[min(part, len(p.charge) - 1)])
-        if change.kind == "charge_step":
-            after = float(p.charge[min(part + 1, len(p.charge) - 1)])
-            part += 1
-        elif change.kind == "switch":
-            before = after = NAN
+        part = None if change.kind == "switch" else history.part_at(change.time)
+        sides = (part, part) if change.kind != "charge_step" else history.parts_about(change) or (None, None)
+        before, after = (NAN if side is None else float(p.charge[side]) for side in sides)
         rows.append(ChangeRow(
             droplet.path.droplet, change.kind, change.time, change.time_std, before, after, change.statistic,
             change.threshold,
