@@ -53,11 +53,11 @@ def read_form(values: Mapping[str, Any], *, has_scale: bool, has_log: bool) -> t
         elif value.strip():
             given[key] = value.strip()
     faults += [fault for key, text in given.items() if (fault := _check(key, text)) is not None]
-    faults += [Fault(key, f"is missing; {QUANTITIES[key][3]}") for key in REQUIRED if key not in given]
+    faults += [Fault(key, f"Missing: {QUANTITIES[key][3]}") for key in REQUIRED if key not in given]
     if not has_scale and "camera.metres_per_pixel" not in given:
-        faults.append(Fault("camera.metres_per_pixel", "is missing; type it, or drop a reference picture"))
+        faults.append(Fault("camera.metres_per_pixel", "Missing: type it, or drop a reference picture"))
     if "site.gravity" not in given:
-        faults.append(Fault("site.gravity", f"is missing; {QUANTITIES['site.gravity'][3]}"))
+        faults.append(Fault("site.gravity", f"Missing: {QUANTITIES['site.gravity'][3]}"))
     field, wrong = _field(given, has_log=has_log)
     return _toml(given, field), faults + wrong
 
@@ -75,11 +75,14 @@ def check_pitch(text: str) -> list[Fault]:
     faults : list of Fault
         Empty if it is a length above 0.
     """
+    words = 'a length such as "0.1(0) mm", up to 100 mm'
+    if not text.strip():
+        return [Fault("scale.pitch", f"Missing: {words}")]
     try:
         value, _ = parse_quantity(text, "m")
     except QuantityError as error:
-        return [Fault("scale.pitch", f"{error}")]
-    return [] if 0 < value < 0.1 else [Fault("scale.pitch", 'must be a length such as "0.1(0) mm"')]
+        return [Fault("scale.pitch", f"{text!r} must be {words}{_why(error)}")]
+    return [] if 0 < value < 0.1 else [Fault("scale.pitch", f"{text!r} must be {words}")]
 
 
 def _check(key: str, text: str) -> Fault | None:
@@ -94,8 +97,8 @@ def _check(key: str, text: str) -> Fault | None:
     try:
         value, _ = parse_quantity(text, unit)
     except QuantityError as error:
-        return Fault(key, f"{text!r}: must be {words}" + _why(error))
-    return None if low <= value <= high else Fault(key, f"{text!r} is out of range: must be {words}")
+        return Fault(key, f"{text!r} must be {words}" + _why(error))
+    return None if low <= value <= high else Fault(key, f"{text!r} is out of range; it must be {words}")
 
 
 def _why(error: QuantityError) -> str:
@@ -114,32 +117,32 @@ def _field(given: Mapping[str, str], *, has_log: bool) -> tuple[dict[str, Any], 
         section["list"], faults = _entries(given.get("field.list", ""))
     if source == "log":
         section |= {"log": "voltage.csv", "clock_offset": given.get("field.clock_offset", "auto")}
-        faults = [] if has_log else [Fault("field.source", "the log is missing; drop its CSV file")]
+        faults = [] if has_log else [Fault("field.source", "the log is missing: drop its CSV file")]
     if source == "lamp":
         numbers = [int(part) for part in re.findall(r"\d+", given.get("field.lamp", ""))]
         section["lamp"] = numbers
         wrong = Fault("field.lamp", "must be x y width height in px: 8 8 16 16")
         faults = [] if len(numbers) == 4 else [wrong]
     if source in ("lamp", "motion") and "cell.voltage" not in given:
-        faults = [*faults, Fault("cell.voltage", f"is missing; the {source} says only on and off")]
+        faults = [*faults, Fault("cell.voltage", f"Missing: the {source} tells only on from off")]
     return section, faults
 
 
 def _entries(text: str) -> tuple[list[list[str]], list[Fault]]:
     """Read ``0 s 0 V, 2 s 260 V``."""
-    words = "must be times and voltages: 0 s 0 V, 2 s 260 V"
+    words = "times and voltages such as 0 s 0 V, 2 s 260 V"
     entries = []
     for part in filter(str.strip, re.split(r"[,;\n]", text)):
         match = _ENTRY.match(part)
         if match is None:
-            return [], [Fault("field.list", f"{part.strip()!r}: {words}")]
+            return [], [Fault("field.list", f"{part.strip()!r} must be {words}")]
         for quantity, unit in zip(match.groups(), ("s", "V"), strict=True):
             try:
                 parse_quantity(quantity, unit)
             except QuantityError as error:
                 return [], [Fault("field.list", f"{part.strip()!r}: {error.problem}")]
         entries.append(list(match.groups()))
-    return (entries, []) if entries else ([], [Fault("field.list", f"is empty; {words}")])
+    return (entries, []) if entries else ([], [Fault("field.list", f"Missing: {words}")])
 
 
 def _toml(given: Mapping[str, str], field: Mapping[str, Any]) -> str:

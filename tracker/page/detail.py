@@ -160,15 +160,22 @@ def _residuals(droplet: Droplet | None) -> tuple[FloatArray, FloatArray]:
 def _motion_text(path: dict[str, Any], fits: list[dict[str, float]]) -> str:
     """Say what the plot of heights shows."""
     left_out = int((~path["used"]).sum())
-    parts = [f"{len(path['time'])} places, {left_out} left out (crosses)."]
+    said = f"{left_out} left out (crosses)" if left_out else "none left out"
+    parts = [f"{len(path['time'])} places, {said}."]
     speeds: dict[float, list[float]] = {}
     for fit in fits:
         speeds.setdefault(round(fit["voltage"]), []).append(fit["speed"])
     for voltage, values in sorted(speeds.items()):
         mean = float(np.mean(values))
         way = "down" if mean >= 0 else "up"
-        parts.append(f"At {voltage:.0f} V: {abs(mean):.1f} \u00b5m/s {way} ({len(values)}\u00a0\u00d7).")
+        how = f"mean of {len(values)} segments" if len(values) > 1 else "one segment"
+        parts.append(f"At {_volts(voltage)}: {abs(mean):.1f} \u00b5m/s {way} ({how}).")
     return " ".join(parts)
+
+
+def _volts(voltage: float) -> str:
+    """A voltage with its sign, 0 without one."""
+    return f"{voltage:+.0f} V".replace("-", "\u2212") if voltage else "0 V"
 
 
 def _residual_text(residual: FloatArray) -> str:
@@ -176,7 +183,9 @@ def _residual_text(residual: FloatArray) -> str:
     if not len(residual):
         return "No residuals: too few steps for a fit."
     rms, share = float(np.sqrt(np.mean(residual**2))), float(np.mean(np.abs(residual) < 1))
-    return f"Residuals of the steps: rms {rms:.2f} \u03c3, {share:.0%} within 1 \u03c3 (68 % expected)."
+    return (
+        f"Residuals of the steps: rms {rms:.2f} \u03c3, {100 * share:.0f} % within 1 \u03c3 (68 % expected)."
+    )
 
 
 def _number_text(numbers: dict[str, Any] | None) -> str:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import asyncio
 import hmac
 from collections.abc import Iterable
 from urllib.parse import parse_qs
@@ -10,6 +11,7 @@ from starlette.responses import PlainTextResponse, RedirectResponse, Response
 from starlette.types import ASGIApp, Message, Receive, Scope, Send
 
 MAX_BODY = 256 * 1024  # bytes of a request that is no upload
+PATIENCE = 1.0  # s that the rest of a refused body is read and dropped
 
 POLICY = (
     "default-src 'none'; script-src 'self'; style-src 'self'; img-src 'self' blob:; connect-src 'self'; "
@@ -64,6 +66,8 @@ class Guard:
             return
         refusal = self._refusal(scope)
         if refusal is not None:
+            if refusal.status_code == 413:
+                await _drop_rest(receive)
             await refusal(scope, receive, _with_headers(send))
             return
         limit = None if scope["path"] == self._upload_path else MAX_BODY
@@ -141,10 +145,26 @@ def _limited(receive: Receive, limit: int | None) -> Receive:
         message = await receive()
         seen += len(message.get("body", b""))
         if seen > limit:
+            if message.get("more_body"):
+                await _drop_rest(receive)
             raise BodyTooLargeError
         return message
 
     return counted
+
+
+async def _drop_rest(receive: Receive) -> None:
+    """Read on for a while: an answer that meets a sender still sending is lost with the connection."""
+    dropped = 0
+    try:
+        async with asyncio.timeout(PATIENCE):
+            while dropped < 4 * MAX_BODY:
+                message = await receive()
+                dropped += len(message.get("body", b""))
+                if not message.get("more_body"):
+                    return
+    except TimeoutError:
+        return
 
 
 def _with_headers(send: Send) -> Send:

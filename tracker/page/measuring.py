@@ -186,6 +186,10 @@ def _check_bench(order: Order, folder: Path, recording: Path) -> None:
         load_bench(trial or bench, recording=recording)
     except BenchError as error:
         fault = Fault(error.key, f"read {error.found}; allowed: {error.allowed}")
+        named = {"camera.scale": (order.scale, order.scale_name), "field.log": (order.log, order.log_name)}
+        given, name = named.get(error.key, ("", ""))
+        if given is None and name in error.found:
+            fault = Fault("", f"the bench names the file {name}, which is not here yet: drop it too")
         raise RefusedError(422, str(error), {"faults": [fault]}) from error
     finally:
         if trial is not None:

@@ -53,7 +53,15 @@ def unit_words(unit: Mapping[str, Any] | None, *, short: bool = False) -> str:
         if short:
             return text
         used = unit.get("droplets_used")
-        over_e = f"{value / ELEMENTARY_CHARGE:.4f} e"
-        return f"{text[0].upper()}{text[1:]}, {over_e}, from {used} droplets. No quantum was assumed."
+        over_e = f"{in_brackets(value / ELEMENTARY_CHARGE, (std or 0.0) / ELEMENTARY_CHARGE)} e"
+        parts = _parts(unit.get("charge_unit_own_std_c"), unit.get("charge_unit_shared_std_c"))
+        return f"{text[0].upper()}{text[1:]}{parts}, {over_e}, from {used} droplets. No quantum was assumed."
     reason = str(unit.get("reason") or "the charges do not show one").rstrip(". ")
     return "" if short else f"Charge unit {reason}. Charges are shown over e."
+
+
+def _parts(own: float | None, shared: float | None) -> str:
+    """Say what of a charge's standard uncertainty is its own and what all droplets of the bench share."""
+    if own is None or shared is None:
+        return ""
+    return f" (own {own * 1e19:#.2g}, shared {shared * 1e19:#.2g})"

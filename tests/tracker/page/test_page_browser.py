@@ -18,7 +18,7 @@ import pandas as pd
 import pytest
 from numpy.typing import NDArray
 from page_server import CHROMIUM, CHROMIUM_FLAGS, Server, wait_for
-from playwright.sync_api import Browser, BrowserContext, Page, expect, sync_playwright
+from playwright.sync_api import Browser, BrowserContext, Page, Route, expect, sync_playwright
 
 pytestmark = pytest.mark.skipif(CHROMIUM is None, reason="no Chromium is installed")
 
@@ -243,7 +243,7 @@ def test_picture_can_be_played_brightened_and_cleared(page: Page) -> None:
     marked = screenshot(page).astype(int)
     ring = np.abs(marked - np.array([86, 180, 233])).max(axis=2) < 12  # pixels that a mark covers wholly
     assert ring.sum() > 50
-    page.get_by_role("button", name="Plain").click()
+    page.get_by_role("button", name="As recorded").click()
     page.get_by_role("button", name="Background off").click()
     wait_for(
         lambda: (screenshot(page).astype(int)[at[0] + 40 : at[0] + 60, at[1] - 10 : at[1] + 10, 0]).std() < 4
@@ -265,6 +265,7 @@ def test_rejection_holds_after_reload_and_can_be_undone(page: Page, server: Serv
     keep = page.locator(".droplets tr:has(.verdict.keep)").first
     number = keep.get_attribute("data-droplet")
     keep.click()
+    expect(page.locator(".facts")).to_contain_text(re.compile(r"C \(own \d\S*, shared \d\S*\)"))
     before = page.evaluate("fallrise.view.result.charge_unit_text")
     reject = page.get_by_role("button", name="Reject", exact=True)
     reject.click()
@@ -279,8 +280,15 @@ def test_rejection_holds_after_reload_and_can_be_undone(page: Page, server: Serv
     expect(row.locator(".verdict.reject")).to_be_visible()
     row.click()
     expect(page.locator(".facts")).to_contain_text("<i>two</i> droplets")
+    held: list[Route] = []
+    page.route("**/undo", lambda route: held.append(route))  # noqa: PLW0108 -- the driver marks the handler
     page.get_by_role("button", name="Undo").click()
+    expect(page.locator("#outcome")).to_contain_text("Evaluating again")
+    page.get_by_label("Reason", exact=True).fill("begun in the meantime")
+    assert wait_for(lambda: page.evaluate("true") and held)
+    held[0].continue_()
     expect(row.locator(".verdict.keep")).to_be_visible()
+    expect(page.get_by_label("Reason", exact=True)).to_have_value("begun in the meantime")
     assert page.evaluate("fallrise.view.result.charge_unit_text") == before
 
 
@@ -310,6 +318,7 @@ def test_keyboard_alone_is_enough(context: BrowserContext, server: Server) -> No
     expect(page.locator("a.tile").first).to_be_visible()
     tab_to(page, "a.tile")
     page.keyboard.press("Enter")
+    expect(page.locator(".droplets tbody tr[data-droplet]").first).to_be_visible()
     expect(page.locator(".says")).to_be_hidden()
     tab_to(page, ".stage")
     for key in ("End", "Home", "Shift+ArrowRight", "ArrowRight"):
@@ -398,6 +407,7 @@ def test_form_shows_each_error_beside_its_field(
     told = (gap.get_attribute("aria-describedby") or "").split()[0]
     expect(page.locator(f"#{told}")).to_contain_text("length")
     expect(page.get_by_label("Oil density")).to_have_attribute("aria-invalid", "true")
+    expect(page.locator("form > .error")).to_contain_text("fields need another look.")
     too_large = page.evaluate("""async () => {
       const { ShelfView } = await import("/static/shelf.js");
       const view = fallrise.view;

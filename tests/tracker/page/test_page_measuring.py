@@ -144,6 +144,10 @@ def test_reference_picture_gives_the_scale(page: Client, tmp_path: Path) -> None
     }  # fmt: skip
     wrong = page.post("/api/measure", json=order)
     assert [fault["key"] for fault in wrong.json()["faults"]] == ["scale.pitch"]
+    without = page.post("/api/measure", json={**order, "picture": None})
+    assert [fault["message"] for fault in without.json()["faults"]] == [
+        "the bench names the file scale.json, which is not here yet: drop it too"
+    ]
     order["values"] = {"scale.pitch": "0.1000(2) mm"}
     job = page.post("/api/measure", json=order).json()
     done = ended(page, job["number"])

@@ -142,3 +142,15 @@ def test_values_are_written_with_two_digits_of_doubt() -> None:
     assert unit_words({"resolved": False, "reason": "not resolved from 3 charges."}).startswith(
         "Charge unit not resolved from 3 charges. "
     )
+
+
+def test_charge_unit_tells_own_from_shared_uncertainty() -> None:
+    """The sentence holds value, both parts in the unit of the value, and the value over e = 1.602176634e-19 C (SI)."""
+    unit = {
+        "resolved": True, "charge_unit_c": 1.61e-19, "charge_unit_std_c": 2.5e-21, "droplets_used": 14,
+        "charge_unit_own_std_c": 2.0e-21, "charge_unit_shared_std_c": 1.5e-21,
+    }  # fmt: skip
+    assert unit_words(unit) == (
+        "Charge unit 1.610(25) \u00d7 10\u207b\u00b9\u2079 C (own 0.020, shared 0.015), 1.005(16) e, "
+        "from 14 droplets. No quantum was assumed."
+    )

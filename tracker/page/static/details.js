@@ -1,6 +1,6 @@
 // What is known of the chosen droplet and of all charges, in tabs below the table.
 
-import { el } from "./dom.js";
+import { el, sentence } from "./dom.js";
 import { get } from "./api.js";
 import { fillCrops, markCrop } from "./crops.js";
 import { ChargesPlot, MotionPlot, drawNumbers } from "./plots.js";
@@ -63,7 +63,7 @@ export class Details {
   setResult() {
     this.fillHistory();
     const r = this.view.result;
-    this.chargesText.textContent = r.charge_unit_text;
+    this.chargesText.textContent = `${r.charge_unit_text} Bars: own uncertainty.`;
     this.draw();
   }
 
@@ -80,7 +80,10 @@ export class Details {
       if (!current()) return;
       const before = this.detail?.droplet === droplet ? this.detail : { residual_time: [], residual: [] };
       this.detail = { ...detail, residual_time: before.residual_time, residual: before.residual };
-      if (before.droplet !== droplet) this.numbers = null;
+      if (before.droplet !== droplet) {
+        this.numbers = null;
+        this.panels.number.classList.add("empty");
+      }
       said = detail.text;
       this.motionText.textContent = said;
       this.numberText.textContent = "Being worked out \u2026";
@@ -89,6 +92,7 @@ export class Details {
       if (!current()) return;
       Object.assign(this.detail, { residual_time: fits.residual_time, residual: fits.residual });
       this.numbers = fits.numbers;
+      this.panels.number.classList.toggle("empty", !fits.numbers);
       this.motionText.textContent = `${said} ${fits.residual_text}`;
       this.numberText.textContent = fits.number_text;
       this.draw();
@@ -134,7 +138,7 @@ export class Details {
     const { decisions, warnings } = this.view.result;
     const items = decisions.map((d) => el("li", { class: d.undone ? "undone" : "" },
       el("span", { class: "num" }, d.time), " \u00b7 ", el("b", {}, d.what), d.reason ? `: ${d.reason}` : "", d.undone ? " (taken back)" : "", d.lost ? " (its track is no longer found)" : ""));
-    const told = warnings.length ? el("ul", { class: "history" }, ...warnings.map((text) => el("li", {}, text))) : "";
+    const told = warnings.length ? el("ul", { class: "history" }, ...warnings.map((text) => el("li", {}, sentence(text)))) : "";
     this.panels.history.replaceChildren(warnings.length ? el("h3", { class: "caption" }, "Warnings of this recording") : "", told, el("h3", { class: "caption" }, "Decisions"), items.length ? el("ol", { class: "history", reversed: true }, ...items.reverse()) : el("p", { class: "caption" }, "No decisions yet. They are kept in decisions.jsonl, appended, never rewritten."));
   }
 

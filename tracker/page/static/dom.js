@@ -39,6 +39,9 @@ export function signed(value) {
   return value === null || value === undefined ? "" : value > 0 ? `+${value}` : minus(String(value));
 }
 
+// A message as a sentence: a capital first, unless it begins with a name, and a full stop last.
+export const sentence = (text) => text.replace(/^[a-z]+(?= )/, (word) => word[0].toUpperCase() + word.slice(1)).replace(/[^.!?\u2026]$/, "$&.");
+
 export function bytes(size) {
   return size > 1e9 ? `${(size / 1e9).toFixed(1)} GB` : size > 1e6 ? `${(size / 1e6).toFixed(1)} MB` : `${Math.ceil(size / 1e3)} kB`;
 }
@@ -46,13 +49,18 @@ export function bytes(size) {
 export const LETTER = { keep: "K", doubt: "D", reject: "R" };
 
 // The same three shapes as in the picture: circle, square, cross.
-export function verdictMark(verdict, byHand = false) {
+export function verdictShape(verdict) {
   const line = { fill: "none", stroke: "currentColor", "stroke-width": 2.4 };
   const shape = svg("svg", { viewBox: "0 0 20 20", "aria-hidden": "true" });
   if (verdict === "keep") shape.append(svg("circle", { cx: 10, cy: 10, r: 7, ...line }));
   else if (verdict === "doubt") shape.append(svg("rect", { x: 3.5, y: 3.5, width: 13, height: 13, ...line }));
   else shape.append(svg("path", { d: "M3 3L8 8M12 12L17 17M17 3L12 8M8 12L3 17", ...line }));
-  return el("span", { class: `verdict ${verdict}` }, shape, verdict,
+  shape.setAttribute("class", `shape ${verdict}`);
+  return shape;
+}
+
+export function verdictMark(verdict, byHand = false) {
+  return el("span", { class: `verdict ${verdict}` }, verdictShape(verdict), verdict,
     byHand ? el("span", { class: "hand", title: "decided by a person" }, "by hand") : null);
 }
 

@@ -1,11 +1,11 @@
 // Export: this frame as PNG, a video, the tables, the short report. Everything is made by the server's own drawing.
 
-import { clearNotice, complain, el, notice, showDialog } from "./dom.js";
+import { clearNotice, complain, el, notice, sentence, showDialog } from "./dom.js";
 import { get, post } from "./api.js";
 
 export function exportMenu(view) {
   const base = `/api/results/${view.id}/export`, frame = view.frames.wanted, last = view.result.times.length - 1;
-  const link = (href, text, about) => el("p", {}, el("a", { href, download: "" }, text), el("span", { class: "soft" }, ` ${about}`));
+  const link = (href, text, about) => el("p", {}, el("a", { href, download: "" }, text), el("span", { class: "soft" }, ` \u2013 ${about}`));
   const number = (id, text, value) => el("label", { htmlFor: id }, `${text} `, el("input", { type: "text", inputMode: "numeric", id, value: String(value), size: 6 }));
   const error = el("p", { class: "error", role: "alert" });
   const from = number("video-from", "from frame", 0), to = number("video-to", "to frame", last);
@@ -22,7 +22,7 @@ export function exportMenu(view) {
       const job = await post(`${base}/video`, { first, last: end });
       dialog.close();
       await follow(job.number, view);
-    } catch (problem) { error.textContent = problem.message; }
+    } catch (problem) { error.textContent = sentence(problem.message); }
   });
 }
 

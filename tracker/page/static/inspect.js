@@ -144,17 +144,19 @@ export class InspectView {
   fillFacts() {
     const d = this.droplet;
     if (!d) { this.facts.replaceChildren(el("p", { class: "soft" }, "Choose a droplet in the picture or in the table.")); return; }
-    const value = (name, text) => (text ? el("span", {}, `${name} `, el("b", { class: "num" }, text)) : null);
+    const value = (name, text, more = "") => (text ? el("span", {}, `${name} `, el("b", { class: "num" }, text), more) : null);
+    // What of the charge's uncertainty is the droplet's own, and what all droplets of the bench share.
+    const parts = ({ charge_own_std_c: own, charge_shared_std_c: shared }) => (own === null || shared === null ? "" : ` (own ${(own * 1e19).toPrecision(2)}, shared ${(shared * 1e19).toPrecision(2)})`);
     const probability = d.charge_number_probability;
     this.facts.replaceChildren(
-      el("div", { class: "row" }, el("h2", {}, `Droplet ${d.droplet}`), verdictMark(d.verdict, d.by_hand)),
+      el("div", { class: "row" }, el("h2", {}, `Droplet ${d.droplet}`), verdictMark(d.verdict, d.by_hand),
+        el("span", { class: "soft num" }, `${d.frames} of ${this.tracks.get(d.droplet)?.frame.length ?? 0} frames used, ${fixed(d.first_s, 1)} to ${fixed(d.last_s, 1)} s`)),
       el("div", { class: "values" },
         value("falls", d.fall_speed_m_s === null ? "" : `${withDoubt(d.fall_speed_m_s, d.fall_speed_std_m_s, 1e6)} \u00b5m/s`),
         value("radius", d.radius_m === null ? "" : `${withDoubt(d.radius_m, d.radius_std_m, 1e6)} \u00b5m`),
-        value("charge", d.charge_c === null ? "" : `${withDoubt(d.charge_c, d.charge_std_c, 1e19)} \u00d7 10\u207b\u00b9\u2079 C`),
         value("number", d.charge_number === null ? "" : `${signed(d.charge_number)}, P ${probability > 0.9995 ? "> 0.999" : fixed(probability, 3)}`),
-        value("diffusion ratio", fixed(d.diffusion_ratio, 2)),
-        value("seen", `${d.frames} frames, ${fixed(d.first_s, 1)} to ${fixed(d.last_s, 1)} s`)),
+        value("charge", d.charge_c === null ? "" : `${withDoubt(d.charge_c, d.charge_std_c, 1e19)} \u00d7 10\u207b\u00b9\u2079 C`, parts(d)),
+        value("diffusion ratio", fixed(d.diffusion_ratio, 2))),
       d.reasons.length || d.decision ? el("ul", {}, ...d.reasons.map((code) => el("li", {}, this.reasons[code] || code)), d.decision ? el("li", {}, d.decision) : null) : "",
     );
   }

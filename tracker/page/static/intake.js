@@ -1,17 +1,19 @@
 // A recording comes in: files dropped or chosen, the bench as a file or typed, then the measurement is asked for.
 
-import { bytes, clearNotice, el } from "./dom.js";
+import { bytes, clearNotice, el, sentence } from "./dom.js";
 import { post, remove, upload } from "./api.js";
 
 const ROLES = { recording: "Recording", bench: "Bench file", own: "Recording\u2019s own file", scale: "Scale file", picture: "Reference picture", log: "Voltage log" };
 const TEXTS = ["bench", "own", "scale"];   // small files that are read here and sent with the request
 const SECTIONS = [
   ["Cell", [["cell.plate_gap", "Plate gap", "6.00(2) mm"], ["cell.voltage", "Field-on voltage", "260.0(5) V"]]],
-  ["Oil and air", [["oil.density", "Oil density", "886(1) kg/m^3"], ["oil.density_temperature", "\u2026 at", "20 degC"], ["air.temperature", "Temperature", "22.0(3) degC"], ["air.pressure", "Pressure", "1008(1) hPa"], ["air.relative_humidity", "Humidity", "45(5) percent"]]],
+  ["Oil and air", [["oil.density", "Oil density", "886(1) kg/m^3"], ["oil.density_temperature", "\u2026 measured at", "20 degC"], ["air.temperature", "Temperature", "22.0(3) degC"], ["air.pressure", "Pressure", "1008(1) hPa"], ["air.relative_humidity", "Humidity", "45(5) percent"]]],
   ["Camera and place", [["camera.metres_per_pixel", "Size of a pixel", "2.980(5) um"], ["camera.exposure", "Exposure", "20 ms"], ["camera.frame_rate", "Frame rate", "25 Hz"], ["site.gravity", "Gravity", "9.8100(2) m/s^2"]]],
 ];
 const HINTS = {
-  "camera.metres_per_pixel": "left empty when a reference picture is given",
+  "cell.voltage": "needed where the field is known only as on and off",
+  "air.relative_humidity": "empty: dry air, 0 percent",
+  "camera.metres_per_pixel": "or drop a reference picture or scale.json",
   "camera.exposure": "empty: half the time between frames",
   "camera.frame_rate": "only for recordings without times",
   "oil.density_temperature": "empty: the air's temperature",
@@ -45,7 +47,7 @@ export class Intake {
     input.tabIndex = -1;
     input.setAttribute("aria-label", "Files of a measurement");
     const zone = el("div", { class: "drop" }, el("strong", {}, "Drop a recording here"),
-      el("p", { class: "soft" }, "with its bench file, reference picture or voltage log, if there are any"), choose, input);
+      el("p", { class: "soft" }, "with its bench file, reference picture or voltage log"), choose, input);
     zone.addEventListener("dragover", (event) => { event.preventDefault(); zone.classList.add("over"); });
     zone.addEventListener("dragleave", () => zone.classList.remove("over"));
     zone.addEventListener("drop", (event) => { event.preventDefault(); zone.classList.remove("over"); this.take([...event.dataTransfer.files]); });
@@ -77,7 +79,7 @@ export class Intake {
   }
 
   async readText(role, file) {
-    if (file.size > 100_000) { this.error.textContent = `${file.name} is too large for a ${ROLES[role].toLowerCase()}`; return; }
+    if (file.size > 100_000) { this.error.textContent = `${file.name} is too large for a ${ROLES[role].toLowerCase()}.`; return; }
     this.files[role] = { name: file.name, size: file.size, state: "done" };
     this.texts[role] = await file.text();
     this.fillForm();
@@ -85,8 +87,8 @@ export class Intake {
   }
 
   async send(role, file) {
-    if (file.size > this.shelf.limit) { this.error.textContent = `${file.name} is too large: ${bytes(file.size)}, the limit is ${bytes(this.shelf.limit)}`; return; }
-    if (file.size === 0) { this.error.textContent = `${file.name} is empty`; return; }
+    if (file.size > this.shelf.limit) { this.error.textContent = `${file.name} is too large: ${bytes(file.size)}, the limit is ${bytes(this.shelf.limit)}.`; return; }
+    if (file.size === 0) { this.error.textContent = `${file.name} is empty.`; return; }
     this.drop_(role);
     const entry = { name: file.name, size: file.size, state: "sending", sent: 0 };
     this.files[role] = entry;
@@ -101,7 +103,7 @@ export class Intake {
       this.status.textContent = `${file.name} is here`;
     } catch (error) {
       if (this.files[role] === entry) delete this.files[role];
-      this.error.textContent = `${file.name}: ${error.message}`;
+      this.error.textContent = sentence(`the file ${file.name} was not taken: ${error.message}`);
     }
     this.refresh();
   }
@@ -137,16 +139,16 @@ export class Intake {
 
   field(key, title, example) {
     const id = `f-${key.replace(".", "-")}`;
-    const input = el("input", { type: "text", id, name: key, value: this.values[key] || "", placeholder: example, autocomplete: "off", spellcheck: false, "aria-describedby": `${id}-e${HINTS[key] ? ` ${id}-h` : ""}` });
+    const input = el("input", { type: "text", id, name: key, value: this.values[key] || "", placeholder: `such as ${example}`, autocomplete: "off", spellcheck: false, "aria-describedby": `${id}-e${HINTS[key] ? ` ${id}-h` : ""}` });
     input.addEventListener("input", () => { this.values[key] = input.value; this.fault(key, ""); });
     return el("div", { class: "field" }, el("label", { htmlFor: id }, title), input, el("span", { class: "error", id: `${id}-e` }), HINTS[key] ? el("span", { class: "hint", id: `${id}-h` }, HINTS[key]) : null);
   }
 
   fillForm() {
     const parts = [];
-    if (this.files.picture) parts.push(el("fieldset", {}, el("legend", {}, "Reference picture"), this.field("scale.pitch", "Line spacing", "0.1(0) mm"), this.choice("scale.pattern", "Pattern", [["", "find out"], ["lines", "ruled lines"], ["grid", "square grid"], ["dots", "dots"]])));
+    if (this.files.picture) parts.push(el("fieldset", {}, el("legend", {}, "Reference picture"), this.field("scale.pitch", "Spacing", "0.1(0) mm"), this.choice("scale.pattern", "Pattern", [["", "find out"], ["lines", "ruled lines"], ["grid", "square grid"], ["dots", "dots"]])));
     if (this.texts.bench === undefined) {
-      parts.push(el("p", { class: "soft" }, "No bench file yet: type what is known. Uncertainties stand in brackets, as in 6.00(2) mm."));
+      parts.push(el("p", { class: "soft" }, "No bench file yet: drop one, or type what is known. Give units; a standard uncertainty stands in brackets and counts in the last digits: 6.00(2) mm is 6.00 mm \u00b1 0.02 mm."));
       for (const [title, fields] of SECTIONS) {
         const shown = fields.filter(([key]) => !(key === "camera.metres_per_pixel" && (this.files.picture || this.files.scale)));
         parts.push(el("fieldset", {}, el("legend", {}, title), ...shown.map((f) => this.field(...f))));
@@ -173,15 +175,17 @@ export class Intake {
   fault(key, text) {
     const id = `f-${key.replace(".", "-")}`, place = document.getElementById(`${id}-e`), input = document.getElementById(id);
     if (!place || !input) return false;
-    place.textContent = text;
+    place.textContent = text && sentence(text);
     input.setAttribute("aria-invalid", text ? "true" : "false");
     return true;
   }
 
   showFaults(faults) {
     const rest = [];
-    for (const { key, message } of faults) if (!this.fault(key, message)) rest.push(key ? `${key}: ${message}` : message);
-    this.error.textContent = rest.join(" ");
+    for (const { key, message } of faults) if (!this.fault(key, message)) rest.push(key ? `the bench\u2019s ${key}: ${message}` : message);
+    const marked = this.form.querySelectorAll('[aria-invalid="true"]').length;
+    if (marked) rest.unshift(marked === 1 ? "One field needs another look" : `${marked} fields need another look`);
+    this.error.textContent = rest.map(sentence).join(" ");
     this.form.querySelector('[aria-invalid="true"]')?.focus();
   }
 
@@ -200,7 +204,7 @@ export class Intake {
       this.onStarted();
     } catch (error) {
       if (error.facts?.faults) this.showFaults(error.facts.faults);
-      else this.error.textContent = error.message;
+      else this.error.textContent = sentence(error.message);
     }
     this.busy = false;
     this.refresh();
@@ -212,7 +216,7 @@ export class Intake {
     if (job.state === "failed") {
       const { key, found, allowed, message } = job.error;
       if (key && this.fault(key, `read ${found}; allowed: ${allowed}`)) return;
-      this.error.textContent = message;
+      this.error.textContent = sentence(message);
     } else if (job.state === "cancelled") { this.files = {}; this.texts = {}; this.fillForm(); }
     this.refresh();
   }

@@ -1,6 +1,6 @@
 // A person's decisions on the chosen droplet: accept, doubt, reject, split, trim, join, set back, undo.
 
-import { el, notice } from "./dom.js";
+import { el, notice, sentence, verdictShape } from "./dom.js";
 import { Refused, post } from "./api.js";
 
 export class Judge {
@@ -26,17 +26,20 @@ export class Judge {
     this.other = el("select", { id: "other" });
     this.join = act("Join", "Join this track with the chosen other one", () => this.joinWith(), null);
     const { keep, doubt, reject, split, trimStart, trimEnd, reset, undo } = this.buttons;
-    this.target = el("span", { class: "soft" });
+    for (const verdict of ["keep", "doubt", "reject"]) this.buttons[verdict].prepend(verdictShape(verdict));
     box.append(
       el("div", { class: "reason" }, el("label", { htmlFor: "reason" }, "Reason"), this.reason, reset, undo),
       el("div", { class: "row" },
-        el("div", { class: "row", role: "group", "aria-label": "Verdict of a person" }, keep, doubt, reject), el("span", { class: "sep" }),
+        el("div", { class: "row", role: "group", "aria-label": "Verdict of a person" }, keep, doubt, reject),
         el("div", { class: "row", role: "group", "aria-label": "Change the track" }, split, trimStart, trimEnd, this.join, el("label", { htmlFor: "other", class: "hidden" }, "Other droplet to join with"), this.other)),
       this.outcome,
     );
     this.reason.setAttribute("aria-describedby", "outcome");
-    this.reason.addEventListener("input", () => this.say(""));
+    this.reason.addEventListener("input", () => this.hint());
+    this.hint();
   }
+
+  hint() { this.say("Write the reason, then decide. Split and trim act at the frame shown.", false); }
 
   say(text, wrong = true) {
     this.outcome.textContent = text;
@@ -90,17 +93,20 @@ export class Judge {
   async send(what, body) {
     if (this.busy) return;
     this.busy = true;
+    this.say("Evaluating again \u2026", false);
     this.refresh();
     try {
       const answer = await post(`/api/results/${this.state().result.id}/${what}`, body);
-      this.reason.value = "";
+      // A reason that was begun in the meantime belongs to the next decision.
+      if (this.reason.value.trim() === body.reason) this.reason.value = "";
       this.say(`${what === "undo" ? "Taken back" : "Kept in decisions.jsonl"}; evaluated again in ${answer.seconds.toFixed(2)} s.`, false);
       this.busy = false;
       await this.onResult(answer, what);
     } catch (error) {
       this.busy = false;
+      this.hint();
       if (error instanceof Refused && error.status === 409) this.onStale(error);
-      else if (error instanceof Refused && error.status >= 400 && error.status < 500) this.say(error.message);
+      else if (error instanceof Refused && error.status >= 400 && error.status < 500) this.say(sentence(error.message));
       else notice(error.message, { bad: true });
     }
     this.refresh();

@@ -1,6 +1,6 @@
 // Which view is shown, by the part of the address behind the #: none for the start, a recording, a droplet in it.
 
-import { complain, el, notice } from "./dom.js";
+import { complain, el, notice, sentence } from "./dom.js";
 import { get } from "./api.js";
 import { InspectView } from "./inspect.js";
 import { lettersOn, showKeys } from "./keys.js";
@@ -26,7 +26,7 @@ async function route() {
     await view.open();
     document.title = id ? `${view.result?.name ?? "recording"} \u2013 fallrise` : "fallrise";
   } catch (error) {
-    main.replaceChildren(el("div", { class: "plain" }, el("h1", {}, "This cannot be shown"), el("p", {}, error.message), el("p", {}, el("a", { href: "#/" }, "All recordings"))));
+    main.replaceChildren(el("div", { class: "plain" }, el("h1", {}, "This cannot be shown"), el("p", {}, sentence(error.message)), el("p", {}, el("a", { href: "#/" }, "All recordings"))));
     if (!error.status && error.status !== 0) throw error;
   }
 }

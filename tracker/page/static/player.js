@@ -26,12 +26,12 @@ export class Player {
     const brightness = slider("brightness", "Brightness"), contrast = slider("contrast", "Contrast");
     this.brightness = brightness.querySelector("input");
     this.contrast = contrast.querySelector("input");
-    const plain = press("Plain", "Brightness and contrast as recorded", () => { this.brightness.value = this.contrast.value = "1"; this.look(); });
+    const plain = press("As recorded", "Brightness and contrast as recorded", () => { this.brightness.value = this.contrast.value = "1"; this.look(); });
     this.row = el("div", { class: "transport" },
       press("\u2039", "One frame back", () => this.step(-1), "Left"), this.play, press("\u203a", "One frame on", () => this.step(1), "Right"),
       el("label", { htmlFor: "speed", class: "hidden" }, "Speed"), this.speed, this.clock, el("span", { class: "sep" }),
-      press("\u2212", "Zoom out", () => stage.zoomBy(1 / 1.5), "-"), this.zoomText, press("+", "Zoom in", () => this.zoomIn(), "+"), press("Whole", "Whole picture", () => stage.whole(), "0"),
-      el("span", { class: "sep" }), this.marks, this.clearButton, brightness, contrast, plain);
+      press("\u2212", "Zoom out", () => stage.zoomBy(1 / 1.5), "-"), this.zoomText, press("+", "Zoom in", () => this.zoomIn(), "+"), press("Fit", "Fit the whole picture", () => stage.whole(), "0"),
+      el("span", { class: "sep" }), this.marks, this.clearButton, el("span", { class: "look" }, brightness, contrast, plain));
     watch.append(this.row);
     for (const box of [stageBox, timeBox]) {
       box.addEventListener("keydown", (event) => { if (this.key(event)) { event.preventDefault(); event.stopPropagation(); } });

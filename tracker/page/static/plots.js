@@ -75,7 +75,9 @@ export class MotionPlot {
     const size = fontSize(), left = size * 4.6, right = width - 10, bottom = height - size * 1.9, gap = 8;
     const cut = Math.round(10 + (bottom - 10) * 0.64);
     const x = span(detail.time, 0.02);
-    const upper = new Axes(c, { left, top: 8, right, bottom: cut }, x, span(detail.height));
+    // The segments' names stand in a strip of their own above the heights.
+    const [least, most] = span(detail.height), strip = (size + 8) / (cut - 8);
+    const upper = new Axes(c, { left, top: 8, right, bottom: cut }, x, [least, most + (most - least) * strip / (1 - strip)]);
     const lower = new Axes(c, { left, top: cut + gap, right, bottom }, x, [-4.4, 4.4]);
     this.upper = upper;
     this.bottom = bottom;

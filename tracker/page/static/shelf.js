@@ -1,10 +1,14 @@
 // The start view: a place to drop a recording, all recordings with their state, the worst tracks, work under way.
 
-import { clearNotice, complain, el, fixed, notice, verdictMark } from "./dom.js";
+import { clearNotice, complain, el, fixed, notice, sentence, verdictMark } from "./dom.js";
 import { get, post } from "./api.js";
 import { Intake } from "./intake.js";
 
 const ORDERS = [["name", "by name"], ["worst", "worst first"], ["new", "newest first"]];
+
+const STEPS = ["Drop a recording, best with the bench file that says what is known of cell, oil, air and camera.", "Watch its droplets and judge the doubtful ones; each decision is kept with its reason.", "Export tables, pictures and a short report."];
+
+const counted = (parts) => parts.filter(([, n]) => n).map(([word, n]) => `${n} ${word}`).join(", ");
 
 export class ShelfView {
   constructor(main, shelf, { tools, trail, update }) {
@@ -25,11 +29,12 @@ export class ShelfView {
     this.list = el("ul", { class: "shelf" });
     this.worst = el("div", { class: "worst-box" });
     this.tally = el("p", { class: "soft" });
+    this.firstSteps = el("ol", { class: "steps" }, ...STEPS.map((text) => el("li", {}, text)));
     const order = el("select", { id: "order", onchange: () => { this.order = order.value; this.fill(); } }, ...ORDERS.map(([value, text]) => el("option", { value }, text)));
     this.reasonSelect = el("select", { id: "reason-filter", onchange: () => { this.reason = this.reasonSelect.value; this.fill(); } });
     right.append(el("h1", { id: "shelf-title" }, "Recordings"), this.tally,
-      el("div", { class: "row shelf-tools" }, el("label", { htmlFor: "order" }, "Order"), order, el("label", { htmlFor: "reason-filter" }, "With reason"), this.reasonSelect),
-      this.worst, this.list);
+      this.sorting = el("div", { class: "row shelf-tools" }, el("label", { htmlFor: "order" }, "Order"), order, el("label", { htmlFor: "reason-filter" }, "With reason"), this.reasonSelect),
+      this.worst, this.list, this.firstSteps);
     this.main.replaceChildren(el("div", { class: "start" }, left, el("div", {}, this.jobBox, right)));
     this.fill();
     this.poll(true);
@@ -44,7 +49,9 @@ export class ShelfView {
     const by = { name: (a, b) => a.name.localeCompare(b.name, undefined, { numeric: true }), worst: (a, b) => b.bad - a.bad || a.name.localeCompare(b.name), new: (a, b) => b.when - a.when };
     const items = this.shelf.items.filter((item) => !this.reason || (item.reasons || {})[this.reason]).sort(by[this.order]);
     const done = this.shelf.items.filter((item) => item.status === "done").length, failed = this.shelf.items.filter((item) => item.status === "failed").length;
-    this.tally.textContent = this.shelf.items.length ? `${done} measured, ${failed} failed, ${this.shelf.items.length - done - failed} not measured, in ${this.shelf.place}` : "Nothing is measured here yet. Drop a recording to begin.";
+    this.tally.textContent = this.shelf.items.length ? `${counted([["measured", done], ["failed", failed], ["not measured", this.shelf.items.length - done - failed]])}, in ${this.shelf.place}` : "Nothing is measured here yet.";
+    this.sorting.hidden = !this.shelf.items.length;
+    this.firstSteps.hidden = !this.sorting.hidden;
     const key = JSON.stringify(items);
     if (key !== this.shownKey) {
       this.shownKey = key;
@@ -59,13 +66,13 @@ export class ShelfView {
     if (item.status === "done") {
       const parts = ["keep", "doubt", "reject"].map((v) => [v, item[v]]), total = Math.max(1, item.droplets);
       const bar = el("div", { class: "bar", "aria-hidden": "true" }, ...parts.map(([v, n]) => { const part = el("i", { class: v }); part.style.width = `${(100 * n) / total}%`; return part; }));
-      words.push(el("div", { class: "soft" }, `${item.droplets} droplets: ${item.keep} keep, ${item.doubt} doubt, ${item.reject} reject`), bar, item.unit ? el("div", { class: "soft num" }, item.unit) : "");
+      words.push(el("div", { class: "soft" }, item.droplets ? `${item.droplets} ${item.droplets === 1 ? "droplet" : "droplets"}: ${counted(parts)}` : "no droplets"), bar, item.unit ? el("div", { class: "soft num" }, item.unit) : "");
       const picture = el("img", { src: `/api/results/${item.id}/small.jpg`, alt: "", loading: "lazy", width: 112, height: 84 });
       picture.addEventListener("error", () => picture.replaceWith(el("span", { class: "blank" }, "no picture")));
       const way = this.order === "worst" && item.worst !== null ? `#/${item.id}/${item.worst}` : `#/${item.id}`;
       return el("li", {}, el("a", { class: "tile", href: way }, picture, el("div", { class: "words" }, ...words)));
     }
-    words.push(el("div", { class: "soft" }, item.status === "failed" ? `failed: ${item.why}` : item.why || "not measured"));
+    words.push(el("div", { class: "soft" }, sentence(item.status === "failed" ? `Failed: ${item.why}` : item.why || "not measured")));
     return el("li", {}, el("div", { class: "tile-off card" }, ...words));
   }
 
@@ -90,8 +97,8 @@ export class ShelfView {
   }
 
   job(job) {
-    const state = { waiting: "waits", running: job.text || "measuring", cancelling: "stopping", done: "done", failed: "failed", cancelled: "cancelled" }[job.state];
-    const parts = [el("div", { class: "spread" }, el("strong", {}, job.title), el("span", { class: "num soft" }, `${state}${job.seconds ? `, ${fixed(job.seconds, 0)} s` : ""}`))];
+    const state = { waiting: "waits", running: job.text || "measuring", cancelling: "stopping", done: "done", failed: "failed", cancelled: "cancelled, nothing was kept" }[job.state];
+    const parts = [el("div", { class: "spread" }, el("strong", {}, job.title), el("span", { class: "num soft" }, job.seconds && job.state !== "cancelled" ? `${state}, ${fixed(job.seconds, 0)} s` : state))];
     if (job.state === "running" || job.state === "waiting") {
       const bar = el("progress", { max: 1, "aria-label": `progress of ${job.title}` });
       if (job.progress > 0) bar.value = job.progress;
@@ -99,7 +106,7 @@ export class ShelfView {
       cancel.dataset.job = job.number;
       parts.push(el("div", { class: "row" }, el("span", { class: "num" }, `${Math.round(100 * job.progress)} %`), cancel), bar);
     }
-    if (job.state === "failed") parts.push(el("div", { class: "error" }, job.error.message));
+    if (job.state === "failed") parts.push(el("div", { class: "error" }, sentence(job.error.message)));
     if (job.state === "done" && job.result.id) parts.push(el("a", { href: `#/${job.result.id}` }, "Open"));
     return el("li", {}, ...parts);
   }

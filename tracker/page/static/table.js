@@ -15,6 +15,8 @@ const COLUMNS = [
   { key: "worst", title: "Reasons", unit: "", value: (d) => RANK[d.verdict] * 100 - d.reasons.length, text: null },
 ];
 
+const why = (text) => el("td", { class: "why", title: text }, el("span", {}, text));
+
 export class DropletTable {
   constructor(box, { onChoose, reasons }) {
     this.onChoose = onChoose;
@@ -28,7 +30,7 @@ export class DropletTable {
       const button = el("button", { type: "button", onclick: () => this.sortBy(column.key) }, column.title,
         column.label ? el("span", { class: "hidden" }, `, ${column.label}`) : null,
         column.unit ? el("small", {}, ` / ${column.unit}`) : null, el("span", { "aria-hidden": "true" }, ""));
-      return el("th", { scope: "col", class: `${column.right ? "r" : ""}${column.spare ? " spare" : ""}` }, button);
+      return el("th", { scope: "col", title: column.label, class: `${column.right ? "r" : ""}${column.spare ? " spare" : ""}` }, button);
     });
     const head = el("thead", {}, el("tr", {}, ...this.heads));
     box.append(el("table", { class: "droplets", "aria-label": "Droplets of this recording", role: "grid" }, head, this.body));
@@ -71,7 +73,7 @@ export class DropletTable {
   row(d) {
     const cells = COLUMNS.map((column) => {
       if (column.key === "verdict") return el("td", {}, verdictMark(d.verdict, d.by_hand));
-      if (column.key === "worst") return el("td", { class: "why" }, el("span", {}, d.reasons.map((code) => this.reasons[code] || code).join(" ")));
+      if (column.key === "worst") return why(d.reasons.map((code) => this.reasons[code] || code).join(" "));
       return el("td", { class: `num${column.right ? " r" : ""}${column.spare ? " spare" : ""}` }, column.text(d));
     });
     const row = el("tr", { tabIndex: -1, onclick: () => this.onChoose(d.droplet) }, ...cells);
