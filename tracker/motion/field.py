@@ -19,7 +19,7 @@ LEAST_SEPARABILITY = (
 )
 LEAST_RUN = 3  # frames; a lamp that changes for less is flicker
 SAME_VOLTAGE = 0.1  # of the largest voltage: nearer voltages of two sources are the same
-SHARP = 0.25  # of the frame interval: a toggle known so well counts as known
+SHARP = 0.1  # of the frame interval: a toggle known so well counts as known
 SATURATED = 0.98  # of full scale: a lit lamp above does not tell how long it was lit
 
 
@@ -192,8 +192,8 @@ def uncertain_spans(field: Field, *, frame_interval: float, coverage: float = 3.
     field : Field
         Its `toggle_std` and `clock_offset_std` say how well each toggle is known.
     frame_interval : float
-        In s. A toggle known to a quarter of it moves the places by less than Brownian motion in one frame does,
-        and gives no stretch.
+        In s. A toggle known to a tenth of it misplaces the droplets by at most a tenth of what the drive moves them
+        in one frame, and gives no stretch.
     coverage : float, optional
         Half width of a stretch in standard uncertainties.
 

@@ -161,3 +161,12 @@ def test_a_description_names_source_and_first_segments(recording):
     """More than six segments are counted, not listed."""
     many = [(2.0 * i, 260.0 * (i % 2)) for i in range(9)]
     assert describe(field_from_list(many, recording)).endswith("and 3 more")
+
+
+def test_a_toggle_known_to_a_tenth_of_a_frame_counts_as_known(recording):
+    """From 0.1 of the frame interval on, the steps about a toggle are left out, three uncertainties to either side."""
+    sharp = field_from_list(STEPS, recording, toggle_std=0.09 * 0.04)
+    assert len(uncertain_spans(sharp, frame_interval=0.04)) == 0
+    vague = field_from_list(STEPS, recording, toggle_std=0.15 * 0.04)
+    spans = uncertain_spans(vague, frame_interval=0.04)
+    assert spans[0] == pytest.approx([2.0 - 0.018, 2.0 + 0.018])
