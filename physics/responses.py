@@ -13,7 +13,11 @@ STEP = 1e-4  # relative change of an input for its sensitivity; second order sta
 
 
 def input_responses(
-    conditions: Conditions, *, expansion: float = 0.0, viscosity_given: bool = False
+    conditions: Conditions,
+    *,
+    relative_humidity: float = 0.5,
+    expansion: float = 0.0,
+    viscosity_given: bool = False,
 ) -> dict[str, dict[str, float]]:
     """Relative change of what the law uses for a change of each shared input.
 
@@ -21,6 +25,8 @@ def input_responses(
     ----------
     conditions : Conditions
         The state at which to differentiate.
+    relative_humidity : float
+        Of the air, 0 to 1; at which to differentiate.
     expansion : float
         Of the oil in 1/K, where its density follows the air's temperature.
     viscosity_given : bool
@@ -46,7 +52,8 @@ def input_responses(
         for value, limits in ((kelvin, air.TEMPERATURE_RANGE), (pressure, air.PRESSURE_RANGE))
     )
     most = air.highest_humidity(kelvin * (1 + STEP), pressure)  # below 1 in hot and thin air
-    damp, damper = min(0.5, 0.8 * most), min(0.6, 0.96 * most)
+    damp = min(relative_humidity, 0.8 * most)
+    damper = min(damp + 0.1, 0.96 * most)
     base = air.moist_air(kelvin, pressure, relative_humidity=damp)
     moved = {
         "temperature": (air.moist_air(kelvin * (1 + STEP), pressure, relative_humidity=damp), STEP),

@@ -20,7 +20,7 @@ from physics.drag import slip_model
 from physics.droplet import Conditions
 from physics.errors import PhysicsError
 from physics.oil import oil_density
-from physics.site import local_gravity
+from physics.site import NORMAL_GRAVITY_STD, local_gravity
 from tracker.benchfile import QUANTITIES, Keys, bench_text
 from tracker.records import Measured
 
@@ -49,6 +49,7 @@ class Bench:
     plate_gap: Measured  # m
     voltage: Measured | None  # V, of the field-on state
     oil_density: Measured  # kg/m^3, at the air's temperature
+    oil_expansion: float  # 1/K, with which it was brought there; 0: it was not
     temperature: Measured  # K
     pressure: Measured  # Pa
     relative_humidity: Measured  # 0..1
@@ -158,13 +159,15 @@ def load_bench(bench: Path | str | None = None, *, recording: Path | str | None 
     temperature = air_values["temperature"]
     spec = _field(keys)
     voltage = _voltage(keys, spec)
+    oil = _oil(keys, temperature, air_values["air_density"].value)
     return Bench(
         name=str(label.get("name", (keys.files[0].absolute().parent.name, None))[0]),
         files=tuple(str(file) for file in keys.files),
         plate_gap=keys.required("cell.plate_gap"),
         voltage=voltage,
-        voltage_rel_std=_entries(keys)[1] or (abs(voltage.std / voltage.value) if voltage else 0.0),
-        oil_density=_oil(keys, temperature, air_values["air_density"].value),
+        voltage_rel_std=_voltage_rel_std(keys, spec, voltage),
+        oil_density=oil[0],
+        oil_expansion=oil[1],
         gravity=_gravity(keys),
         slip=keys.raw("air.slip") or "kim2005",
         scale=_scale(keys, recording),
@@ -199,19 +202,23 @@ def _air(keys: Keys) -> dict[str, Measured]:
     }  # fmt: skip
 
 
-def _oil(keys: Keys, temperature: Measured, air_density: float) -> Measured:
+def _oil(keys: Keys, temperature: Measured, air_density: float) -> tuple[Measured, float]:
+    """Density at the air's temperature, and the expansion that brought it there."""
     stated = keys.required("oil.density")
     at, expansion = keys.measured("oil.density_temperature"), keys.measured("oil.expansion")
     if stated.value <= air_density:
         raise keys.error("oil.density", repr(keys.raw("oil.density")), QUANTITIES["oil.density"][3])
     if at is None or expansion is None:
-        return stated
-    warm = oil_density(stated.value, density_temperature=at.value, temperature=temperature.value,
-                       expansion=expansion.value)  # fmt: skip
+        return stated, 0.0
+    try:
+        warm = oil_density(stated.value, density_temperature=at.value, temperature=temperature.value,
+                           expansion=expansion.value)  # fmt: skip
+    except PhysicsError as error:
+        raise keys.error("oil.density_temperature", error, "near the air's, for an expansion") from error
     by_expansion = stated.value * abs(temperature.value - at.value) * expansion.std
     by_temperature = stated.value * expansion.value * at.std
     std = (stated.std**2 + by_expansion**2 + by_temperature**2) ** 0.5
-    return Measured(warm, std, stated.origin)
+    return Measured(warm, std, stated.origin), expansion.value
 
 
 def _gravity(keys: Keys) -> Measured:
@@ -221,8 +228,8 @@ def _gravity(keys: Keys) -> Measured:
     latitude, altitude = keys.measured("site.latitude"), keys.measured("site.altitude")
     if latitude is None or altitude is None:
         raise keys.error("site.gravity", "nothing", 'gravity = "9.8100(2) m/s^2", or latitude and altitude')
-    # Gravity anomalies of the ground, which the formula leaves out, stay below 1e-3 m/s^2 nearly everywhere.
-    return Measured(local_gravity(latitude.value, altitude.value), 5e-4, "latitude and altitude")
+    gravity = local_gravity(latitude.value, altitude.value)
+    return Measured(gravity, NORMAL_GRAVITY_STD, "latitude and altitude")
 
 
 def _scale(keys: Keys, recording: Path | str | None) -> Scale:
@@ -298,6 +305,12 @@ def _voltage(keys: Keys, spec: FieldSpec) -> Measured | None:
             "cell.voltage", "nothing", f"{QUANTITIES['cell.voltage'][3]}; {spec.source} needs it"
         )
     return voltage
+
+
+def _voltage_rel_std(keys: Keys, spec: FieldSpec, voltage: Measured | None) -> float:
+    """Relative uncertainty of the voltage that the field's source gives; a list that is only compared has no say."""
+    stated = abs(voltage.std / voltage.value) if voltage else 0.0
+    return _entries(keys)[1] or stated if spec.source == "list" else stated
 
 
 def _field(keys: Keys) -> FieldSpec:

@@ -60,6 +60,8 @@ def budgets(
     stored = {int(n): np.array(s) for n, s in result.recording["budget"]["log_charge_sensitivities"].items()}
     radii = own_radius_stds(result.recording)
     rows = result.droplets.set_index("droplet")
+    if droplet is not None and droplet not in rows.index:
+        raise ResultError(str(folder), f"there is no droplet {droplet}")
     if droplet is not None and droplet not in stored:
         raise ResultError(str(folder), f"droplet {droplet} has no charge, and so no budget")
     wanted = sorted(stored) if droplet is None else [droplet]
@@ -94,7 +96,10 @@ def _checked(
     )  # fmt: skip
 
     def model(weight: float) -> DropletModel:
-        return DropletModel(row.radius_m, row.charge_c, bench.conditions, air, diffusion_weight=weight)
+        return DropletModel(
+            row.radius_m, row.charge_c, bench.conditions, air, diffusion_weight=weight,
+            expansion=bench.oil_expansion,
+        )  # fmt: skip
 
     scale = SHARED_INPUTS.index("scale")
     by_speed, by_motion = (shared_sensitivities(model(w))[1][scale] for w in (0.0, 1.0))

@@ -46,7 +46,7 @@ def assemble(
     recording, field, bench, settings
         What it was found from.
     seeing : dict
-        ``report`` and ``warnings`` of the seeing wing.
+        ``report``, ``cuts`` and ``warnings`` of the seeing wing.
     folder : Path
         Result folder, to which the recording's path is written relative.
 
@@ -82,7 +82,7 @@ def assemble(
         "charge_unit": evaluation.charge_unit,
         "budget": evaluation.budget,
         "details": evaluation.details,
-        "seeing": seeing["report"],
+        "seeing": {**seeing["report"], "cuts": seeing["cuts"], "warnings": seeing["warnings"]},
         "settings": settings.as_dict(),
         "versions": versions(),
         "warnings": list(dict.fromkeys(warnings)),
@@ -293,7 +293,7 @@ def bench_json(bench: Bench, folder: Path) -> dict[str, Any]:
     return {
         "name": bench.name, "files": files, "digest": bench.digest, "slip": bench.slip, "down_deg": bench.down_deg,
         "binning": bench.binning, "frame_rate_hz": bench.frame_rate, "voltage_rel_std": bench.voltage_rel_std,
-        **quantities,
+        "oil_expansion_1_k": bench.oil_expansion, **quantities,
     }  # fmt: skip
 
 

@@ -15,7 +15,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 from scipy.special import logsumexp
 
-from physics.air import moist_air
+from physics.air import dry_mean_free_path, moist_air
 from physics.budget import SHARED_INPUTS
 from physics.droplet import (
     BOLTZMANN,
@@ -28,7 +28,7 @@ from physics.droplet import (
     radius_from_fall_speed,
 )
 from physics.errors import PhysicsError
-from physics.motion import NO_CHARGE_REASONS, droplet_posterior, free_fit
+from physics.motion import NO_CHARGE_REASONS, droplet_posterior, free_fit, input_responses
 
 # --- against brute force -----------------------------------------------------------------------------------------
 
@@ -557,3 +557,19 @@ def test_the_part_of_the_air_in_a_charge_is_its_slope_times_the_airs_uncertainty
     assert (high - low).mean() / 2 == pytest.approx(-by_air, rel=0.1)
     # the scatter of 80 to 8 %; four standard deviations
     assert high.std() == pytest.approx(left, rel=4 / np.sqrt(160))
+
+
+def test_humidity_and_expansion_move_the_inputs_responses():
+    """Damp air bends the viscosity's slope; an oil that expands loses weight with the air's temperature."""
+    dry = input_responses(CONDITIONS, relative_humidity=0.0)
+    damp = input_responses(CONDITIONS, relative_humidity=0.9, expansion=7e-4)
+    pressure = 101_325.0 * dry_mean_free_path(CONDITIONS.temperature, 101_325.0) / CONDITIONS.mean_free_path
+    for made, humidity in ((dry, 0.0), (damp, 0.9)):
+        low, high = (
+            moist_air(CONDITIONS.temperature, pressure, relative_humidity=humidity + h).viscosity for h in (0.0, 0.1)
+        )  # fmt: skip
+        assert made["relative_humidity"]["friction"] == pytest.approx(10 * np.log(high / low), rel=0.02)
+    weight = damp["temperature"]["weight"] - dry["temperature"]["weight"]
+    # d ln weight / d ln T by expansion is -alpha T rho / (rho - rho_air); damp air's own density adds 1e-4
+    expected = -7e-4 * CONDITIONS.temperature * CONDITIONS.oil_density / CONDITIONS.density_excess
+    assert weight == pytest.approx(expected, rel=0.01)

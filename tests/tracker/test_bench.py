@@ -10,6 +10,7 @@ import pytest
 from bench_files import write_bench
 
 from calibration.scale import Scale, write_scale
+from physics.site import NORMAL_GRAVITY_STD
 from tracker.bench import load_bench
 from tracker.errors import BenchError
 
@@ -56,12 +57,29 @@ def test_a_field_on_voltage_carries_one_relative_uncertainty(tmp_path):
     assert load_bench(own).voltage_rel_std == pytest.approx(1 / 260)
 
 
+def test_a_list_that_is_only_compared_does_not_say_how_well_the_voltage_is_known(tmp_path):
+    """With the lamp as source the voltage is cell.voltage, and so is its uncertainty."""
+    both = write_bench(
+        tmp_path, ('"2 s", "260 V"', '"2 s", "260(10) V"'),
+        ('source = "list"', 'source = "lamp"\nlamp = [8, 8, 16, 16]'),
+    )  # fmt: skip
+    assert load_bench(both).voltage_rel_std == pytest.approx(0.5 / 260)
+
+
 def test_oil_is_brought_to_the_temperature_of_the_air(tmp_path):
     """Density falls by the stated expansion between its own temperature and the air's."""
     extra = 'density = "886(1) kg/m^3"\ndensity_temperature = "20 degC"\nexpansion = "7e-4 1/K"'
     bench = load_bench(write_bench(tmp_path, ('density = "886(1) kg/m^3"', extra)))
     # 2 K at 7e-4 /K is 0.14 %; the two usual forms of the law, rho (1 - a dT) and rho / (1 + a dT), differ by 2e-6.
     assert bench.oil_density.value == pytest.approx(886 * (1 - 7e-4 * 2), rel=3e-6)
+
+
+def test_the_expansion_is_kept_where_it_was_used(tmp_path):
+    """A density stated at the air's temperature does not follow it; one that was brought there does."""
+    assert load_bench(write_bench(tmp_path)).oil_expansion == 0.0
+    extra = 'density = "886(1) kg/m^3"\ndensity_temperature = "20 degC"\nexpansion = "7e-4 1/K"'
+    bench = load_bench(write_bench(tmp_path, ('density = "886(1) kg/m^3"', extra)))
+    assert bench.oil_expansion == pytest.approx(7e-4)
 
 
 def test_gravity_from_latitude_and_altitude(tmp_path):
@@ -72,6 +90,7 @@ def test_gravity_from_latitude_and_altitude(tmp_path):
     place = 'latitude = "51.5 deg"\naltitude = "80 m"'
     bench = load_bench(write_bench(tmp_path, ('gravity = "9.8100(2) m/s^2"', place)))
     assert bench.gravity.value == pytest.approx(9.81203358 - 80 * 3.086e-6, abs=2e-6)
+    assert bench.gravity.std == NORMAL_GRAVITY_STD
 
 
 MISTAKES = {
@@ -84,6 +103,10 @@ MISTAKES = {
     "negative gap": (('"6.00(2) mm"', '"-6 mm"'), "cell.plate_gap", "-6 mm"),
     "absolute zero": (('"22.0(3) degC"', '"-273.15 degC"'), "air.temperature", "-273.15 degC"),
     "kelvin typed as celsius": (('"22.0(3) degC"', '"295 degC"'), "air.temperature", "295 degC"),
+    "density too far from the air's temperature": (
+        ('"886(1) kg/m^3"', '"886(1) kg/m^3"\ndensity_temperature = "90 degC"\nexpansion = "7e-4 1/K"'),
+        "oil.density_temperature", "within 60 K",
+    ),
     "density below air": (('"886(1) kg/m^3"', '"0.9 kg/m^3"'), "oil.density", "0.9 kg/m^3"),
     "humidity above one": (
         ('pressure = "1008(1) hPa"', 'pressure = "1008(1) hPa"\nrelative_humidity = "120 percent"'),

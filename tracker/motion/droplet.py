@@ -151,7 +151,10 @@ def with_posteriors(droplets: list[Droplet], bench: Bench, air: AirCurrent) -> l
         In the same order.
     """
     conditions = bench.conditions
-    responses = input_responses(conditions, viscosity_given="air.viscosity" in bench.viscosity.origin)
+    responses = input_responses(
+        conditions, relative_humidity=bench.relative_humidity.value, expansion=bench.oil_expansion,
+        viscosity_given="air.viscosity" in bench.viscosity.origin,
+    )  # fmt: skip
     done = []
     for d in droplets:
         if d.history is not None:

@@ -145,7 +145,7 @@ def evaluate_droplets(
         _orientation_json(orientation), air.plain(), exposure, unit_json(charge_unit_of(droplets, rows, shared)),
         shared.budget(droplets, rows), details(droplets, rests) | _decisions_json(decided),
         (*orientation.warnings, *decided.warnings, *_exposure_warning(bench, exposure, droplets),
-         *shrinking_warnings(droplets), *swap_warnings(droplets),
+         *_voltage_warning(bench), *shrinking_warnings(droplets), *swap_warnings(droplets),
          *clock_warnings(field, _trusted(droplets, rows), recording)),
     )  # fmt: skip
 
@@ -236,6 +236,16 @@ def _exposure_warning(bench: Bench, exposure: float, droplets: Sequence[Droplet]
     return (
         f"{bare} of {len(usable)} droplets seem to have no place noise: camera.exposure, {exposure * 1e3:.3g} ms, is"
         " shorter than the camera's, or the noise of the places is far below Brownian motion",
+    )
+
+
+def _voltage_warning(bench: Bench) -> tuple[str, ...]:
+    """Say if nobody stated how well the voltage is known."""
+    if bench.voltage is not None or bench.voltage_rel_std > 0:
+        return ()
+    return (
+        f"field.source is {bench.field.source} and cell.voltage is not stated: its voltages count as exact; state one"
+        ' with its uncertainty, such as voltage = "260.0(5) V"',
     )
 
 

@@ -167,3 +167,12 @@ def test_the_shared_part_of_a_radius_is_how_far_a_wrong_scale_moves_it(tmp_path)
         # second order of 1 % is 1 % of it; the least moves where fall speed and Brownian motion pull apart
         assert only_scale.of_droplet(i).log_radius == pytest.approx(moved, rel=0.05, abs=1e-4)
         assert only_scale.of_droplet(i).log_speed == pytest.approx(0.01)
+
+
+def test_voltages_that_count_as_exact_are_told(tmp_path):
+    """Without cell.voltage and without brackets nothing says how well the voltage is known: the result does."""
+    rng = np.random.default_rng(409)
+    made = [evaluated(tmp_path, rng, [Life(0.8e-6, 4)], bench=lambda b, c=change: replace(b, **c))
+            for change in ({"voltage": None, "voltage_rel_std": 0.0}, {})]  # fmt: skip
+    told = [any("count as exact" in line for line in found.warnings) for found in made]
+    assert told == [True, False]
