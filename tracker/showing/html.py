@@ -20,18 +20,18 @@ h1 { font-size: 1.6rem; line-height: 1.2; margin: .5rem 0; }
 h2 { font-size: 1.25rem; margin: 2rem 0 .5rem; border-bottom: 1px solid #888; }
 nav ul { padding-left: 1.2rem; columns: 2 14rem; }
 figure { margin: 1rem 0; break-inside: avoid; }
-figure img { width: 100%; min-width: 34rem; height: auto; }
+figure img { width: 100%; height: auto; }
 figcaption { font-weight: 600; }
 .wide { overflow-x: auto; }
-table { border-collapse: collapse; margin: .75rem 0; font-variant-numeric: tabular-nums; overflow-wrap: normal; }
-caption { text-align: left; font-weight: 600; padding: .25rem 0; }
+table { border-collapse: collapse; margin: .25rem 0 .75rem; font-variant-numeric: tabular-nums; overflow-wrap: normal; }
+.title { font-weight: 600; margin: .75rem 0 0; }
 th, td { border: 1px solid #999; padding: .2rem .5rem; text-align: left; vertical-align: top; }
 th { background: #eee; }
 td.n { text-align: right; white-space: nowrap; }
 td.l { min-width: 16rem; }
 @media print { body { max-width: none; padding: 0; font-size: 10pt; } nav { display: none; }
   h2 { break-after: avoid; } tr { break-inside: avoid; } thead { display: table-header-group; }
-  .wide { overflow: visible; } th { background: none; } figure img { min-width: 0; } td.l { min-width: 0; } }
+  .wide { overflow: visible; } th { background: none; } td.l { min-width: 0; } }
 """
 
 _LARGEST_SVG = 400_000  # bytes; a larger figure is shown as pixels
@@ -105,10 +105,13 @@ def _section(section: Section, name: str) -> str:
 
 
 def _grid(grid: Grid) -> str:
+    if not grid.rows:
+        return f"<p>{escape(grid.title)}: none.</p>\n"
     heads = "".join(f'<th scope="col">{escape(head)}</th>' for head in grid.heads)
     rows = "".join(f"<tr>{''.join(map(_cell, row))}</tr>\n" for row in grid.rows)
+    name = escape(grid.title)
     return (
-        f'<div class="wide"><table><caption>{escape(grid.title)}</caption>\n<thead><tr>{heads}</tr></thead>\n'
+        f'<p class="title">{name}</p>\n<div class="wide"><table aria-label="{name}">\n<thead><tr>{heads}</tr></thead>\n'
         f"<tbody>\n{rows}</tbody></table></div>\n"
     )
 
@@ -126,7 +129,7 @@ def _picture(picture: Picture) -> str:
     data = base64.b64encode(image).decode()
     return (
         f"<figure><figcaption>{escape(picture.title)}</figcaption>\n"
-        f'<div class="wide"><img alt="{escape(picture.text)}" src="data:image/{kind};base64,{data}"></div></figure>\n'
+        f'<img alt="{escape(picture.text)}" src="data:image/{kind};base64,{data}"></figure>\n'
     )
 
 

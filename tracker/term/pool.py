@@ -16,6 +16,7 @@ from physics.droplet import ELEMENTARY_CHARGE
 from physics.quanta import SEARCH, ChargeSample, ChargeUnit, charge_sample, pooled_charge_unit, unit_ratio
 from tracker.errors import ResultError, UsageError
 from tracker.keeping.store import PROVENANCE, Result, read_result
+from tracker.term.duplicates import duplicates, result_name
 from tracker.term.poolcharges import bench_charges, factor_budget
 
 FloatArray = NDArray[np.float64]
@@ -144,7 +145,7 @@ def pool_of(results: Sequence[Result]) -> Pool:
     Parameters
     ----------
     results : sequence of Result
-        Their tracks are not needed. A recording that comes twice counts once.
+        Their tracks are not needed. A recording that comes twice counts once, by the result with more kept droplets.
 
     Returns
     -------
@@ -160,15 +161,11 @@ def pool_of(results: Sequence[Result]) -> Pool:
     and the same slide, or batch.
     """
     by_bench: dict[tuple[object, ...], list[Result]] = {}
-    seen: dict[str, str] = {}
-    skipped = []
-    for result in results:
-        name, digest = _name(result), str(result.recording.get("sha256", ""))
-        if digest and digest in seen:
-            skipped.append((name, f"the same recording as {seen[digest]}"))
-            continue
-        seen[digest] = name
-        by_bench.setdefault(_bench_key(result), []).append(result)
+    twice = {one.left_out: one for one in duplicates(results)}
+    skipped = [(result_name(results[place]), one.sentence) for place, one in twice.items()]
+    for place, result in enumerate(results):
+        if place not in twice:
+            by_bench.setdefault(_bench_key(result), []).append(result)
     labels = _labels([members[0] for members in by_bench.values()])
     standards = _same_standards([members[0].recording for members in by_bench.values()])
     benches = [
@@ -240,11 +237,6 @@ def _widened(unit: ChargeUnit, alone: Sequence[ChargeUnit], shared: Sequence[flo
     )  # fmt: skip
 
 
-def _name(result: Result) -> str:
-    """Name of a result for people."""
-    return str(result.folder) if result.folder is not None else str(result.recording.get("file", "result"))
-
-
 def _bench_key(result: Result) -> tuple[object, ...]:
     """What tells one bench from another: its file, its cell and its reference picture."""
     bench, scale = result.recording.get("bench", {}), result.recording.get("scale", {})
@@ -286,7 +278,7 @@ def _bench(label: str, results: Sequence[Result], standards: frozenset[str]) -> 
         steps=(charges.step, charges.step_std), pairs=(charges.pair, charges.pair_cov),
     )  # fmt: skip
     common = min(_common_part(budget, results[0].recording, standards), shared)
-    return _Bench(label, tuple(_name(result) for result in results), sample, budget, common)
+    return _Bench(label, tuple(result_name(result) for result in results), sample, budget, common)
 
 
 def _common_part(budget: Budget, recording: Mapping[str, Any], standards: frozenset[str]) -> float:

@@ -14,7 +14,7 @@ from tracker.term.pool import BenchUnit, Pool
 
 
 def charge_groups(pool: Pool) -> list[ChargeGroup]:
-    """Give the charges for the pictures, one group a bench; changes of charge are charges too.
+    """Give the charges for the pictures, one group a bench, as many as the unit counts.
 
     Parameters
     ----------
@@ -24,10 +24,33 @@ def charge_groups(pool: Pool) -> list[ChargeGroup]:
     Returns
     -------
     groups : list of ChargeGroup
-        For `tracker.showing.units`.
+        For `tracker.showing.units`; a droplet whose charge changed gives two, its first charge and the change.
     """
-    samples = [(bench.label, bench.sample) for bench in pool.benches]
-    return [ChargeGroup(label, s.charge, np.hypot(s.floor_std, s.rel_std * s.charge)) for label, s in samples]
+    return [ChargeGroup(bench.label, *bench.sample.independent) for bench in pool.benches]
+
+
+def counted(pool: Pool) -> str:
+    """Say what the charges are that are counted and drawn.
+
+    Parameters
+    ----------
+    pool : Pool
+        As found.
+
+    Returns
+    -------
+    text : str
+        One sentence.
+    """
+    drawn = sum(len(bench.sample) for bench in pool.benches)
+    changed = sum(len(bench.sample.pair) for bench in pool.benches)
+    aside = drawn - pool.unit.droplets_used
+    text = f"Of kept droplets there are {drawn} charges that differ from 0"
+    if changed:
+        text += f"; {changed} droplets whose charge changed give two each, a charge and its change"
+    if aside:
+        text += f"; {aside} do not count in the unit, being too blurred or of a bench that is left out"
+    return f"{text}."
 
 
 def bench_ratios(pool: Pool) -> list[UnitRatio]:
@@ -153,6 +176,7 @@ def pool_text(pool: Pool) -> str:
     if unit.resolved:
         lines.insert(0, f"charge unit {unit.unit:.5e} C +/- {unit.unit_own_std:.1e} C (own) +/- "
                      f"{unit.unit_shared_std:.1e} C (shared), {unit.over_e:.4f}({unit.over_e_std:.4f}) e")  # fmt: skip
+    lines.append(counted(pool))
     lines += [bench.sentence for bench in pool.benches]
     lines += [f"left out {name}: {reason}" for name, reason in pool.skipped]
     return "\n".join(lines)

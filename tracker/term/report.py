@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections import Counter, defaultdict
 from collections.abc import Mapping, Sequence
+from dataclasses import replace
 from datetime import date
 from pathlib import Path
 from typing import TYPE_CHECKING
@@ -26,9 +27,11 @@ from tracker.showing.report import (
 )
 from tracker.showing.units import unit_figure
 from tracker.term.drift import Drift, bench_drifts, monday_of
+from tracker.term.duplicates import duplicates
+from tracker.term.findings import doubtful
 from tracker.term.ledger import LEDGER, Entry, read_ledger
 from tracker.term.pool import Pool, pool_of
-from tracker.term.poolfiles import bench_ratios, charge_groups
+from tracker.term.poolfiles import bench_ratios, charge_groups, counted
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -137,6 +140,9 @@ def term_page(entries: Sequence[Entry], results: Mapping[str, Result]) -> str:
     """
     import pandas as pd
 
+    twice = repeated_recordings(results)
+    results = {name: result for name, result in results.items() if name not in twice}
+    entries = [replace(entry, droplets=0, kept=0) if entry.recording in twice else entry for entry in entries]
     days = {entry.recording: date.fromisoformat(entry.day) for entry in entries}
     benches = {entry.recording: entry.bench or "not known" for entry in entries}
     tables = [
@@ -150,10 +156,12 @@ def term_page(entries: Sequence[Entry], results: Mapping[str, Result]) -> str:
     span = f", {min(days.values())} to {max(days.values())}" if days else ""
     lead = [f"{len(entries)} recordings{span}: {len(entries) - len(failed)} measured, {len(failed)} failed; "
             f"{0 if droplets is None else len(droplets)} droplets, {kept} of them kept."]  # fmt: skip
+    lead += [f"{name}: {why}. Its droplets are not counted again." for name, why in twice.items()]
     sections = [Section("What was measured", (), (coverage_grid(entries),))]
     findings = (
         [f"{len(failed)} of {len(entries)} recordings failed; the list below says why."] if failed else []
     )
+    findings = [*doubtful(results), *findings]
     if results:
         pool, drifts = _pool_and_drifts(results, days)
         findings = [*notable(pool, drifts), *findings]
@@ -181,6 +189,23 @@ def notable(pool: Pool, drifts: Sequence[Drift]) -> list[str]:
     """
     off = [bench.sentence for bench in pool.benches if abs(bench.deviation) > _OFF_FROM]
     return [*off, *(drift.sentence for drift in drifts if drift.drifts)]
+
+
+def repeated_recordings(results: Mapping[str, Result]) -> dict[str, str]:
+    """Name the recordings that another one repeats, told by their contents.
+
+    Parameters
+    ----------
+    results : mapping of str to Result
+        By the recording's path.
+
+    Returns
+    -------
+    repeated : dict of str to str
+        Path of a recording that does not count -> which one counts, and why.
+    """
+    names = list(results)
+    return {names[one.left_out]: one.sentence for one in duplicates(list(results.values()), names)}
 
 
 def coverage_grid(entries: Sequence[Entry]) -> Grid:
@@ -242,11 +267,11 @@ def _unit_sections(pool: Pool, drifts: Sequence[Drift]) -> list[Section]:
     told = (value, reason) if unit.resolved else (reason,)
     aside = [f"{b.label} drifts and is part of this unit." for b, d in zip(pool.benches, drifts, strict=True)
              if d.drifts and not b.left_out]  # fmt: skip
-    aside += [f"Left out {Path(name).name}: {why}." for name, why in pool.skipped]
+    aside += [f"Left out {name}: {why}." for name, why in pool.skipped]
     comb = Picture("Charges over the unit, the comb, and the statistic",
                    unit_figure(unit, charge_groups(pool), bench_ratios(pool)), " ".join(told))  # fmt: skip
     return [
-        Section("Charge unit", (*told, *aside), (comb,)),
+        Section("Charge unit", (*told, counted(pool), *aside), (comb,)),
         Section("What it says of each bench", tuple(bench.sentence for bench in pool.benches), (bench_grid(pool),)),
         drift_section(drifts),
         Section("Uncertainty budget", ("Relative standard uncertainty of all charges of a bench by what its droplets "

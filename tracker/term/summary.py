@@ -5,7 +5,7 @@ from __future__ import annotations
 import hashlib
 import json
 from collections.abc import Mapping, Sequence
-from dataclasses import asdict
+from dataclasses import asdict, replace
 from pathlib import Path
 from typing import TYPE_CHECKING
 
@@ -32,7 +32,8 @@ _FILES = ("batch.csv", "droplets.csv", "README.md", "report.html")
 _HEAD = """# Results of a term
 
 Made by `fallrise batch`; running it again goes on where it stopped. All values are SI; an empty cell could not be
-measured. `batch.csv` has a line for each recording, `droplets.csv` one for each droplet of every recording, and each
+measured. `batch.csv` has a line for each recording, `droplets.csv` one for each droplet of every recording (a recording
+that lies there twice, too: `reason` in `batch.csv` then names the other one, and reports and pools count one), and each
 recording has a folder `PATH.fallrise` with the tables below, `recording.json` (where every value came from) and
 `decisions.jsonl` (what a person decided). `report.html` shows it all on one page. `batch.jsonl` is the batch's own
 memory of what is done. A text cell that would begin a formula in a spreadsheet has an apostrophe before it.
@@ -60,20 +61,27 @@ def write_summary(out: Path, entries: Sequence[Entry]) -> bool:
     ResultError
         If a file cannot be written; the old one stays.
     """
-    from tracker.term.report import read_results, write_term_report
+    from tracker.term.report import read_results, repeated_recordings, write_term_report
 
     digest = _digest(entries)
     marker = out / SUMMARY
     if all((out / name).is_file() for name in _FILES) and _text(marker) == digest:
         return False
     results = read_results(out, entries)
-    rows, droplets = table(entries, BATCH), term_droplets(results)
+    repeated = repeated_recordings(results)
+    told = [_told_twice(entry, repeated.get(entry.recording)) for entry in entries]
+    rows, droplets = table(told, BATCH), term_droplets(results)
     replace_file(out / "batch.csv", lambda part: write_csv(rows, part, BATCH))
     replace_file(out / "droplets.csv", lambda part: write_csv(droplets, part, TERM_DROPLETS))
     replace_file(out / "README.md", lambda part: part.write_text(readme(), encoding="utf-8"))
     write_term_report(out, entries, results)
     replace_file(marker, lambda part: part.write_text(digest, encoding="utf-8"))
     return True
+
+
+def _told_twice(entry: Entry, why: str | None) -> Entry:
+    """Say before a recording's warnings that another one repeats it."""
+    return entry if why is None else replace(entry, reason="; ".join(filter(None, (why, entry.reason))))
 
 
 def _digest(entries: Sequence[Entry]) -> str:

@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 import json
+import os
+from dataclasses import replace
 
 import numpy as np
 import pandas as pd
@@ -13,11 +15,11 @@ from physics.quanta import ELEMENTARY_CHARGE
 from tracker.bench import load_bench
 from tracker.cli import main
 from tracker.errors import UsageError
-from tracker.keeping.store import read_result
+from tracker.keeping.store import read_result, write_result
 from tracker.showing.units import HIGHEST_NUMBER, ChargeGroup, draw_charges
 from tracker.term.pool import find_results, pool_results
 from tracker.term.poolcharges import charge_pairs, charge_steps, kept_droplets, own_radius_stds, shared_inputs
-from tracker.term.poolfiles import pool_text, write_pool
+from tracker.term.poolfiles import charge_groups, pool_text, write_pool
 
 E = ELEMENTARY_CHARGE
 
@@ -168,6 +170,45 @@ def test_recording_measured_twice_counts_once(tmp_path):
     assert pool.unit.droplets_used == 30
     assert len(pool.skipped) == 1
     assert "same recording" in pool.skipped[0][1]
+
+
+def test_better_result_of_a_recording_counts(tmp_path):
+    """Of two results of one recording the one with more kept droplets counts, else the newer; the other is named."""
+    rng = np.random.default_rng(8)
+    bench = made_bench(tmp_path / "bench A")
+    sets = (("a few", 20, 100), ("b most", 30, 50), ("c as many", 30, 40))
+    for name, kept, written in sets:
+        folder = tmp_path / "bench A" / f"{name}.fallrise"
+        made = made_result(folder, bench, rng, droplets=30, rejected=30 - kept)
+        write_result(replace(made, recording=made.recording | {"sha256": "ab" * 32}), folder)
+        os.utime(folder / "recording.json", (written, written))
+    pool = pool_results([tmp_path])
+    assert pool.unit.droplets_used == 30
+    assert pool.benches[0].results == (str(tmp_path / "bench A" / "b most.fallrise"),)
+    left = dict(pool.skipped)
+    assert set(left) == {str(tmp_path / "bench A" / f"{name}.fallrise") for name in ("a few", "c as many")}
+    assert all("b most.fallrise, which counts" in why for why in left.values())
+    assert f"left out {tmp_path / 'bench A' / 'a few.fallrise'}" in pool_text(pool)
+
+
+def test_picture_shows_as_many_charges_as_are_counted(tmp_path):
+    """A droplet that changed its charge is drawn as two, its first charge and the change, and the text says so."""
+    rng = np.random.default_rng(3)
+    bench = made_bench(tmp_path / "bench A")
+    folder = tmp_path / "bench A" / "clip.fallrise"
+    made = made_result(folder, bench, rng, droplets=30)
+    main_charge = float(made.droplets["charge_c"][4])
+    parts = {"charge_c": [main_charge, main_charge + E], "covariance_c2": np.diag([0.05 * E, 0.05 * E]) ** 2}
+    parts["covariance_c2"] = parts["covariance_c2"].tolist()
+    write_result(
+        replace(made, recording=made.recording | {"details": {"charge_parts": {"4": parts}}}), folder
+    )
+    pool = pool_results([tmp_path])
+    group = charge_groups(pool)[0]
+    assert len(group.charge) == pool.unit.droplets_used == 31
+    np.testing.assert_allclose(group.charge[-2:], [main_charge, E])
+    np.testing.assert_allclose(group.own_std[-2:], [0.05 * E, np.sqrt(2) * 0.05 * E])
+    assert "31 charges that differ from 0; 1 droplets whose charge changed" in pool_text(pool)
 
 
 def test_air_current_of_a_recording_is_shared_by_its_droplets(tmp_path):

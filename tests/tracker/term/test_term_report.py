@@ -15,7 +15,9 @@ from scipy.optimize import curve_fit
 from physics.quanta import ELEMENTARY_CHARGE
 from tracker import cli
 from tracker.keeping.store import read_result, write_result
+from tracker.showing.html import Grid, Section, render
 from tracker.term.drift import bench_drifts, fit_line, monday_of
+from tracker.term.findings import doubtful
 from tracker.term.ledger import Entry, write_ledger
 from tracker.term.pool import pool_of
 from tracker.term.report import term_page, write_report
@@ -243,3 +245,42 @@ def test_recording_has_a_short_report(tmp_path):
         assert words in text
     assert len(found.pictures) == 1
     assert len(read_result(result.folder).tracks) == len(result.tracks)
+
+
+def test_recording_that_lies_there_twice_counts_once(term):
+    """The page's totals count the droplets of two copies once, and it names the copy that is left out."""
+    _, entries, results, _ = term
+    name, copy = entries[0].recording, "north/copy of clip0.avi"
+    some = {name: results[name], copy: results[name]}
+    page = Page(term_page([entries[0], replace(entries[0], recording=copy)], some))
+    text = " ".join(page.text)
+    assert f"{len(results[name].droplets)} droplets" in text
+    assert f"{copy}: the same recording as {name}, which counts" in text
+
+
+def test_recordings_in_doubt_and_with_doubtful_voltages_are_pointed_out(term):
+    """The top of the page names a recording with a warning about the field, and one with most droplets in doubt."""
+    _, entries, results, _ = term
+    first, second, third = (entry.recording for entry in entries[:3])
+    late = "the droplets see the field change about 0.76 s later than the list says; check its times"
+    warned = replace(
+        results[first], recording=results[first].recording | {"warnings": [late, "dusty window"]}
+    )
+    poor = results[second].droplets.copy()
+    poor.loc[2:14, ["verdict", "reasons"]] = "doubt", "diffusion"
+    found = doubtful({first: warned, second: replace(results[second], droplets=poor), third: results[third]})
+    assert found == [
+        f"{first}: {late}.",
+        f"{second}: 13 of 20 droplets that were measured are in doubt (diffusion 13 times).",
+    ]
+    page = term_page(entries[:1], {first: warned})
+    start, end = page.index("What to look at</h2>"), page.index("What was measured</h2>")
+    assert late in page[start:end]
+
+
+def test_table_without_rows_is_a_sentence():
+    """A grid that has heads only is not drawn; one with rows bears its title outside the part that scrolls."""
+    grids = (Grid("Reasons", ("reason", "share"), ()), Grid("Segments", ("start / s",), (("1.0",),)))
+    page = render("A page", [], [Section("Tables", (), grids)])
+    assert page.count("<table") == page.count('Segments</p>\n<div class="wide"><table') == 1
+    assert "Reasons: none." in page
