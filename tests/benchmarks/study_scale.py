@@ -122,6 +122,10 @@ def report(rows: list[dict[str, Any]]) -> str:
         f"{len(rows)} pictures, half 640 x 480, half 1280 x 960; `python tests/benchmarks/study_scale.py`.",
         "",
     ]
+    lines += [
+        "Error and pull are against the pitch at the picture's centre where a lens was found, else against its mean over",
+        "the marks; the pattern's tolerance is left out. Refused pictures are in no figure but their own column.", "",
+    ]  # fmt: skip
     lines += ["| " + " | ".join(HEAD) + " |", "|" + "---|" * len(HEAD)]
     for kind in ("lines", "grid", "dots"):
         lines.append("| " + " | ".join(table_row(kind, [r for r in rows if r["kind"] == kind])) + " |")
