@@ -168,7 +168,7 @@ def _motion_text(path: dict[str, Any], fits: list[dict[str, float]]) -> str:
     for voltage, values in sorted(speeds.items()):
         mean = float(np.mean(values))
         way = "down" if mean >= 0 else "up"
-        how = f"mean of {len(values)} segments" if len(values) > 1 else "one segment"
+        how = f"{len(values)} segments" if len(values) > 1 else "one segment"
         parts.append(f"At {_volts(voltage)}: {abs(mean):.1f} \u00b5m/s {way} ({how}).")
     return " ".join(parts)
 

@@ -13,7 +13,7 @@ from tracker.export import drawn_frames
 from tracker.page.errors import RefusedError
 from tracker.page.pack import Pack, cache_folder
 from tracker.page.results import Opened
-from tracker.showing.overlay import TrackIndex, draw_overlay
+from tracker.showing.overlay import TrackIndex, draw_overlay, frame_caption
 
 TAKEN = (".csv", ".parquet", ".json", ".jsonl")
 
@@ -53,7 +53,9 @@ def frame_png(opened: Opened, frame: int) -> bytes:
         grey = cv2.imdecode(np.frombuffer(pack.jpeg(frame), np.uint8), cv2.IMREAD_GRAYSCALE)
         pack.close()
         marks = TrackIndex(opened.result.tracks, opened.result.droplets).marks(frame)
-        drawn = draw_overlay(np.asarray(grey, np.uint8), marks)
+        drawn = draw_overlay(
+            np.asarray(grey, np.uint8), marks, caption=frame_caption(opened.recording, frame)
+        )
     return cv2.imencode(".png", drawn)[1].tobytes()
 
 

@@ -254,7 +254,8 @@ async def export_video(request: Request) -> Response:
     """Start the drawing of a video."""
     body = await body_of(request)
     opened = await opened_of(request)
-    first, last = whole_number(body.get("first"), "first"), whole_number(body.get("last"), "last")
+    first = whole_number(body.get("first"), "the first frame")
+    last = whole_number(body.get("last"), "the last frame")
     count = len(opened.recording.get("frame_times_s", ()))
     if not first <= last < count:
         raise RefusedError(422, f"the recording has frames 0 to {count - 1}; first must not be after last")

@@ -21,7 +21,7 @@ from starlette.responses import JSONResponse, Response
 from starlette.routing import Route
 
 from physics.errors import FallriseError
-from tracker.errors import ResultError, UsageError
+from tracker.errors import DecisionError, ResultError, UsageError
 from tracker.page.errors import RefusedError, status_of
 from tracker.page.guard import BodyTooLargeError, Guard
 from tracker.page.routes import ROUTES, UPLOAD_PATH
@@ -89,7 +89,9 @@ def _static(name: str) -> Callable[[Request], Response]:
 def _refuse(_: Request, error: Exception) -> Response:
     """What a person can do something about: a message and a status in the 400s, or 507 for a full disk."""
     facts = error.facts if isinstance(error, RefusedError) else {}
-    message = " ".join(str(error).split()) or type(error).__name__
+    # The page shows one result: a refused decision need not name its folder.
+    text = error.problem if isinstance(error, DecisionError) else str(error)
+    message = " ".join(text.split()) or type(error).__name__
     return JSONResponse({"message": message, **facts}, status_of(error))
 
 

@@ -338,6 +338,7 @@ def test_keyboard_alone_is_enough(context: BrowserContext, server: Server) -> No
     tab_to(page, "button:text-is('Reject')")
     page.keyboard.press("Enter")
     expect(page.locator(row_of(page, chosen) + " .verdict.reject")).to_be_visible()
+    expect(page.get_by_role("button", name="Reject", exact=True)).to_be_focused()
     page.keyboard.press("Escape")
     tab_to(page, "#tab-motion")
     page.keyboard.press("End")

@@ -254,6 +254,7 @@ def test_wrong_decisions_are_refused(page: Client, key: str) -> None:
         answer = page.post(f"/api/results/{key}/decide", json=body)
         assert answer.status_code == status, change
         assert answer.json()["message"]
+        assert "clip.fallrise" not in answer.json()["message"]
     assert page.get(f"/api/results/{key}/revision").json()["revision"] == revision
 
 

@@ -92,6 +92,7 @@ export class Judge {
 
   async send(what, body) {
     if (this.busy) return;
+    const held = document.activeElement;
     this.busy = true;
     this.say("Evaluating again \u2026", false);
     this.refresh();
@@ -110,5 +111,7 @@ export class Judge {
       else notice(error.message, { bad: true });
     }
     this.refresh();
+    // A button that was disabled meanwhile lost the focus: whoever works with the keyboard goes on from there.
+    if (document.activeElement === document.body && held?.isConnected) (held.disabled ? this.reason : held).focus();
   }
 }
