@@ -1,6 +1,7 @@
 """Accuracy, links and speed of the frame pipeline on fresh simulated recordings, with plain peers in the same run.
 
-Run ``python tests/benchmarks/bench_seeing.py`` (half an hour; ``--quick`` for the small part). It prints the tables
+Run ``python tests/benchmarks/bench_seeing.py`` (half an hour on a free machine; ``--quick`` for the
+first two rows of each table, ``--only Speed`` for one table). It prints the tables
 and the machine and writes both to ``tests/benchmarks/seeing.md``. Peers: a plain script of trackpy.batch and
 trackpy.link on the same recordings, and OpenCV's plain reading in one thread.
 """
@@ -297,9 +298,13 @@ def main() -> None:
     """Print the tables and write them down."""
     parser = argparse.ArgumentParser(description=__doc__)
     parser.add_argument("--quick", action="store_true", help="the first two recordings of each table")
-    quick = parser.parse_args().quick
+    parser.add_argument("--only", default="", help="first word of the table that is wanted")
+    chosen = parser.parse_args()
+    quick, only = chosen.quick, chosen.only
     lines = ["# The frame pipeline, measured", "", f"Seeds from {SEED}. {machine()}.", ""]
     for title, heads, scenes, row in TABLES:
+        if not title.startswith(only):
+            continue
         lines += [f"## {title}", "", f"| {' | '.join(heads)} |", "|" + "---|" * len(heads)]
         print("\n".join(lines[-4:]), flush=True)
         for name, (scene, ending) in list(scenes.items())[: 2 if quick else None]:
@@ -316,7 +321,7 @@ def main() -> None:
     with tempfile.TemporaryDirectory() as folder:
         lines.append(memory_row(Path(folder)))
     print("\n".join(lines[-2:]))
-    if not quick:
+    if not (quick or only):
         Path(__file__).with_name("seeing.md").write_text("\n".join(lines) + "\n")
 
 

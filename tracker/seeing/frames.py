@@ -204,6 +204,12 @@ class Reader:
         stated, read = self.form.frames, len(self._times)
         if stated > read and not told:
             told.append(f"the file states {stated} frames and gives {read}: measured as far as it goes")
+        ends = self._times[-1] - self._times[0] + self.form.interval if read else 0.0
+        duration = self.form.duration
+        if duration - ends > max(1.0, 0.05 * duration) and not told:
+            told.append(
+                f"the file states {duration:.2f} s and ends after {ends:.2f} s: measured as far as it goes"
+            )
         if self._damaged:
             told.append(f"{self._damaged} damaged pictures were left out")
         if self._untimed:

@@ -205,8 +205,7 @@ class VideoSource:
 
     def _decode(self) -> Iterator[Any]:
         """Yield decoded frames; damaged packets are stepped over and counted."""
-        broken = count = 0
-        cut = False
+        broken = 0
         errors = self._av.error.FFmpegError
         packets = self._container.demux(self._stream)
         while True:
@@ -215,19 +214,12 @@ class VideoSource:
             except StopIteration:
                 break
             except errors:
-                cut = True
+                self.warnings.append("the file ends in the middle of its data: measured as far as it goes")
                 break
             try:
-                frames = packet.decode()
+                yield from packet.decode()
             except errors:
                 broken += 1
-                continue
-            count += len(frames)
-            yield from frames
-        stated = int(self._stream.frames or 0)
-        if cut or count + broken < stated - 1:
-            told = f", {count} of {stated} pictures," if stated else ""
-            self.warnings.append(f"the file ends in the middle of its data{told}: measured as far as it goes")
         if broken:
             self.warnings.append(f"{broken} damaged packets could not be decoded and were left out")
 
