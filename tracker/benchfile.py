@@ -21,7 +21,7 @@ BENCH_NAME = "bench.toml"
 QUANTITIES: Mapping[str, tuple[str, float, float, str]] = {
     "cell.plate_gap": ("m", 1e-5, 1.0, 'a length such as "6.00(2) mm", 10 um to 1 m'),
     "cell.voltage": ("V", -1e5, 1e5, 'a voltage such as "260.0(5) V", not 0'),
-    "oil.density": ("kg/m^3", 2.0, 3e4, 'a density above air, such as "886(1) kg/m^3"'),
+    "oil.density": ("kg/m^3", 300.0, 3e4, 'a density far above air, such as "886(1) kg/m^3", 300 to 30000'),
     "oil.density_temperature": ("K", 200.0, 400.0, 'a temperature such as "20 degC"'),
     "oil.expansion": ("1/K", 0.0, 5e-3, 'an expansion such as "7e-4 1/K"'),
     "air.temperature": ("K", 273.15, 323.15, 'a temperature such as "22.0(3) degC", 0 to 50 degC'),
@@ -212,9 +212,10 @@ class Keys:
             names = ", ".join(_names(section if "." in dotted else ""))
             return self.error(dotted, "an unknown key", f"one of {names}")
         if complaint["type"] == "missing":
-            words = QUANTITIES[dotted][3] if dotted in QUANTITIES else "this key is required"
+            words = QUANTITIES[dotted][3] if dotted in QUANTITIES else f"a section [{dotted}] with its keys"
             return self.error(dotted, "nothing", words)
-        words = QUANTITIES[dotted][3] if dotted in QUANTITIES else str(complaint["msg"])
+        allowed = str(complaint.get("ctx", {}).get("expected", complaint["msg"]))
+        words = QUANTITIES[dotted][3] if dotted in QUANTITIES else allowed
         return self.error(dotted, repr(complaint["input"]), words)
 
     def measured(self, dotted: str) -> Measured | None:

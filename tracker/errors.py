@@ -39,6 +39,8 @@ class FieldError(FileError):
 class DecisionError(FileError):
     """A person's decision cannot be taken: unknown droplet, verdict or time."""
 
+    exit_status = 2
+
 
 class BenchError(FallriseError):
     """A bench file is wrong; the message names file, key, what was read and what is allowed.

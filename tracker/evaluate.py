@@ -66,10 +66,8 @@ def _evaluated(old: Result, folder: Path, bench: Bench | Path | str | None, memo
         tracks, recording, field, loaded, settings=settings, decisions=read_decisions(folder),
         cuts=old.recording["seeing"].get("cuts", ()), memo=memo,
     )  # fmt: skip
-    seeing = {
-        "report": old.recording["seeing"],
-        "warnings": tuple(old.recording["seeing"].get("warnings", ())),
-    }
+    stored = old.recording["seeing"]
+    seeing = {"report": stored, "cuts": stored.get("cuts", ()), "warnings": tuple(stored.get("warnings", ()))}
     return assemble(evaluation, recording=recording, field=field, bench=loaded, settings=settings, seeing=seeing,
                     folder=folder)  # fmt: skip
 

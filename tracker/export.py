@@ -11,9 +11,9 @@ import numpy as np
 from numpy.typing import NDArray
 
 from tracker.errors import RecordingError, ResultError, UsageError
-from tracker.keeping.store import Result, read_result, replace_file
+from tracker.keeping.store import Result, file_hash, read_result, replace_file
 from tracker.seeing.frames import open_recording
-from tracker.showing.overlay import TrackIndex, draw_overlay, grey8
+from tracker.showing.overlay import TrackIndex, draw_overlay, frame_caption, grey8
 
 _TIME_BASE = Fraction(1, 90_000)  # s; the tick that MP4 and MPEG streams use
 
@@ -92,7 +92,7 @@ def find_recording(result: Result, recording: Path | None = None) -> Path:
     Raises
     ------
     RecordingError
-        If it is not there.
+        If it is not there, or is another one.
     """
     if recording is None:
         folder = result.folder or Path()
@@ -103,6 +103,8 @@ def find_recording(result: Result, recording: Path | None = None) -> Path:
         raise RecordingError(
             str(recording), "the recording of this result is not there; name it with --recording"
         )
+    if recording.is_file() and file_hash(recording) != result.recording.get("sha256"):
+        raise RecordingError(str(recording), "is not the recording that this result was measured from")
     return recording
 
 
@@ -144,7 +146,8 @@ def drawn_frames(
                     return
                 if number >= first:
                     grey = grey8(picture) if picture.dtype == np.uint8 else grey8(picture, low=low, high=high)
-                    yield float(time), draw_overlay(grey, index.marks(number))
+                    caption = frame_caption(result.recording, number)
+                    yield float(time), draw_overlay(grey, index.marks(number), caption=caption)
                     if progress is not None:
                         progress(number + 1 - first, last - first)
 
@@ -161,7 +164,8 @@ def _frame_range(text: str | None, count: int) -> tuple[int, int]:
     first = parts[0]
     last = first + 1 if len(parts) == 1 else count if parts[1] is None else parts[1]
     if not 0 <= first < last <= count:
-        raise UsageError(f"--frames {text}: the recording has frames 0 to {count - 1}")
+        problem = "B must be above A" if first >= last else f"the recording has frames 0 to {count - 1}"
+        raise UsageError(f"--frames {text}: {problem}")
     return first, last
 
 

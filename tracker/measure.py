@@ -87,7 +87,7 @@ def _evaluated(seen: Seen, bench: Bench, settings: Settings, folder: Path) -> Re
     )  # fmt: skip
     result = assemble(
         evaluation, recording=seen.recording, field=field, bench=bench, settings=settings,
-        seeing={"report": seen.report, "warnings": seen.warnings}, folder=folder,
+        seeing={"report": seen.report, "cuts": seen.cuts, "warnings": seen.warnings}, folder=folder,
     )  # fmt: skip
     return write_result(result, folder, tables=settings.tables)
 

@@ -147,6 +147,8 @@ def make_decision(  # noqa: PLR0913 - one keyword for each option of the command
     if verdict in ("keep", "doubt", "reject") and not reason.strip():
         raise DecisionError(folder, f"a verdict {verdict!r} needs a reason, in your words")
     track = _track(result, droplet, folder)
+    if verdict == "undo" and not (result.folder and read_decisions(result.folder)):
+        raise DecisionError(folder, f"droplet {droplet} has no decision to undo")
     times = track["time_s"].to_numpy(float)
     _check_times(folder, verdict, times, at, start, end)
     other_place: tuple[tuple[float, float, float], ...] = ()

@@ -56,9 +56,13 @@ def result_folder(recording: Path) -> Path:
     Returns
     -------
     folder : Path
-        ``clip.fallrise`` for ``clip.mp4``.
+        ``clip.fallrise`` for ``clip.mp4``; ``clip.mp4.fallrise`` where the former holds the result of another
+        recording of the same stem.
     """
-    return recording.parent / f"{recording.stem if recording.suffix else recording.name}{SUFFIX}"
+    folder = recording.parent / f"{recording.stem if recording.suffix else recording.name}{SUFFIX}"
+    if (folder / PROVENANCE).is_file() and read_provenance(folder).get("file") != recording.name:
+        return recording.parent / f"{recording.name}{SUFFIX}"
+    return folder
 
 
 def write_result(result: Result, folder: Path, *, tables: str = "csv") -> Result:

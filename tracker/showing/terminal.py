@@ -57,6 +57,8 @@ def show_result(result: Result) -> None:
     """
     from rich.console import Console
 
+    from tracker.showing.unitwords import charge_unit_lines
+
     # Piped output is never cut to the width of a terminal that is not there.
     console = Console(highlight=False, width=None if sys.stdout.isatty() else 160)
     drops, frames = result.droplets, result.recording.get("frames", {})
@@ -68,9 +70,8 @@ def show_result(result: Result) -> None:
     console.print(f"{result.recording.get('file', '')}: {span}; {len(drops)} droplets: {told}", markup=False)
     if len(drops):
         console.print(_droplet_table(result))
-    unit = result.recording.get("charge_unit") or {}
-    if unit.get("reason"):
-        console.print(f"charge unit: {unit['reason']}", markup=False)
+    for line in charge_unit_lines(result.recording.get("charge_unit")):
+        console.print(line, markup=False)
     for warning in result.recording.get("warnings", []):
         console.print(f"warning: {warning}", markup=False)
     if result.folder is not None:
@@ -124,11 +125,12 @@ def show_budgets(made: Mapping[int | None, Budget]) -> None:
     console = Console(highlight=False, width=None if sys.stdout.isatty() else 160)
     for number_, budget in made.items():
         name = "bench, factor on all charges" if number_ is None else f"droplet {number_}, charge"
-        title = f"{name}: {budget.value:.5g} {budget.unit}, standard uncertainty {budget.std:.2g} ({budget.method})"
+        unit = "" if budget.unit == "1" else f" {budget.unit}"
+        title = f"{name}: {budget.value:.5g}{unit}, standard uncertainty {budget.std:.2g} ({budget.method})"
         shown = Table(box=box.SIMPLE, pad_edge=False, title=title, title_justify="left")
         for head in ("input", "value", "unit", "standard uncertainty", "sensitivity", "share / percent"):
             shown.add_column(head, justify="left" if head in ("input", "unit") else "right")
-        for row in budget.rows:
+        for row in (row for row in budget.rows if number_ is not None or row.input != "own"):
             shown.add_row(row.input, f"{row.value:.6g}", row.unit, f"{row.std:.2g}", f"{row.sensitivity:.3g}",
                           f"{100 * row.share:.2f}")  # fmt: skip
         console.print(shown)
@@ -196,5 +198,7 @@ def pair(value: Any, std: Any, factor: float) -> str:
     if missing(std) or not std > 0:
         return f"{value * factor:.4g}"
     decimals = max(0, 1 - floor(log10(std * factor)))
+    if decimals > 0 and round(std * factor * 10**decimals) >= 100:
+        decimals -= 1  # 0.00996 is 0.0100: two digits of it are 0.010
     digits = round(std * factor * 10**decimals)
     return f"{value * factor:.{decimals}f}({digits})"

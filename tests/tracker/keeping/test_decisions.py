@@ -114,7 +114,7 @@ def test_what_cannot_be_decided_is_one_line_that_says_why(result, options, words
 
 def test_a_folder_that_cannot_be_written_is_told(result, tmp_path):
     """The error names the file."""
-    decision = make_decision(result, droplet=0, verdict="undo")
+    decision = make_decision(result, droplet=0, verdict="reset")
     (tmp_path / "decisions.jsonl").mkdir()
     with pytest.raises(DecisionError, match="cannot be written"):
         append_decision(tmp_path, decision)
