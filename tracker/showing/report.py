@@ -15,6 +15,7 @@ from tracker.motion.verdict import REASONS
 from tracker.showing.html import Grid, Picture, Section, render
 from tracker.showing.plots import new_figure, plot_recording
 from tracker.showing.terminal import missing, number, pair
+from tracker.showing.unitwords import charge_unit_lines
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -259,10 +260,10 @@ def recording_page(result: Result) -> str:
         f"{provenance.get('versions', {}).get('fallrise', '')}.",
         f"SHA-256 of the recording: {provenance.get('sha256', '')}.",
     ]
-    unit = (provenance.get("charge_unit") or {}).get("reason")
+    unit = tuple(line[:1].upper() + line[1:] for line in charge_unit_lines(provenance.get("charge_unit")))
     seen = Picture("The recording", plot_recording(result), _recording_text(result))
     sections = [
-        Section("Droplets", (f"Charge unit: {unit}",) if unit else (), (droplet_grid(drops), seen)),
+        Section("Droplets", unit, (droplet_grid(drops), seen)),
         Section("Verdicts", (), (reason_grid(reason_counts(drops), len(drops)), verdict_grid(drops))),
         Section("Warnings", tuple(provenance.get("warnings", [])) or ("None.",)),
         Section("Field and bench", (), (field_grid(provenance), bench_grid(provenance))),

@@ -1,0 +1,38 @@
+"""The charge unit in words."""
+
+from __future__ import annotations
+
+import pytest
+
+from tracker.showing.terminal import pair
+from tracker.showing.unitwords import charge_unit_lines
+
+UNIT = {
+    "charge_unit_c": 1.595e-19, "charge_unit_std_c": 1.5e-21, "charge_unit_own_std_c": 1.0e-21,
+    "charge_unit_shared_std_c": 1.1e-21, "resolved": True, "reason": "a comb", "droplets_used": 32,
+    "log_ratio": 54.2, "margin": 12.1,
+}  # fmt: skip
+
+
+def test_number_with_its_uncertainty_comes_first():
+    """The first line holds unit, both parts of the uncertainty and the ratio to e: 1.595 / 1.602177 = 0.99552."""
+    first, second = charge_unit_lines(UNIT)
+    assert first == "charge unit 1.595(15)e-19 C (own 0.010, shared 0.011), 0.9955(94) e"
+    assert "Found from 32 charges" in second
+    assert "54 nats" in second
+
+
+def test_unit_that_is_not_resolved_gives_its_reason_only():
+    """Without a resolved unit no number is shown that could be taken for one."""
+    assert charge_unit_lines({**UNIT, "resolved": False, "reason": "not resolved from 9 charges"}) == (
+        "charge unit: not resolved from 9 charges",
+    )
+    assert charge_unit_lines(None) == ()
+
+
+@pytest.mark.parametrize(
+    ("std", "text"), [(0.0099, "1.0000(99)"), (0.00996, "1.000(10)"), (0.0101, "1.000(10)")]
+)
+def test_brackets_hold_two_digits(std, text):
+    """Rounding up to the next power of ten does not leave three digits in the brackets."""
+    assert pair(1.0, std, 1.0) == text
