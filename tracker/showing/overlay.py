@@ -6,7 +6,7 @@ number and trails its last places. Points are (x, y) with the centre of the firs
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
@@ -18,7 +18,11 @@ if TYPE_CHECKING:
 
 # Okabe & Ito's palette, which people with any colour vision can tell apart (Color Universal Design, 2008); as BGR.
 COLOURS = {"keep": (233, 180, 86), "doubt": (0, 159, 230), "reject": (167, 121, 204)}
+_LEGEND = (235, 235, 235)  # BGR
+_TEXT = 0.4  # size of text, relative to OpenCV's font
 _SHIFT = 4  # OpenCV draws at 1/16 px
+
+_Box = tuple[int, int, int, int]  # left, top, right, bottom in px
 
 
 @dataclass(frozen=True, slots=True)
@@ -107,8 +111,38 @@ def grey8(
     return np.asarray(np.clip(np.rint(scaled), 0, 255), dtype=np.uint8)
 
 
+def frame_caption(recording: Mapping[str, Any], frame: int) -> str:
+    """Say when a frame was taken, and at which voltage.
+
+    Parameters
+    ----------
+    recording : mapping
+        As in ``recording.json``.
+    frame : int
+        Decoded frame, from 0.
+
+    Returns
+    -------
+    caption : str
+        Time in s and, within a segment of constant voltage, that voltage in V; empty if no times are stored.
+    """
+    times = recording.get("frame_times_s")
+    if times is None or not 0 <= frame < len(times):
+        return ""
+    time = float(times[frame])
+    segments = (recording.get("field") or {}).get("segments", ())
+    volts = next((s["voltage_v"] for s in segments if s["start_s"] <= time < s["end_s"]), None)
+    told = "" if volts is None else ", field off" if volts == 0 else f", {volts:+.4g} V"
+    return f"{time:.3f} s{told}"
+
+
 def draw_overlay(
-    picture: NDArray[np.uint8], marks: Sequence[Mark], *, zoom: int = 1, chosen: int | None = None
+    picture: NDArray[np.uint8],
+    marks: Sequence[Mark],
+    *,
+    zoom: int = 1,
+    chosen: int | None = None,
+    caption: str = "",
 ) -> NDArray[np.uint8]:
     """Draw marks over a grey picture.
 
@@ -122,6 +156,8 @@ def draw_overlay(
         The picture is enlarged by this factor first, pixels staying square.
     chosen : int, optional
         Number of a droplet whose mark is drawn thicker.
+    caption : str, optional
+        Written into the lower left corner, with a legend of the marks beside it where there is room.
 
     Returns
     -------
@@ -133,12 +169,18 @@ def draw_overlay(
     drawn: NDArray[Any] = cv2.cvtColor(picture, cv2.COLOR_GRAY2BGR)
     if zoom > 1:
         drawn = cv2.resize(drawn, None, fx=zoom, fy=zoom, interpolation=cv2.INTER_NEAREST)
+    taken: list[_Box] = []
     for mark in marks:
         colour = COLOURS.get(mark.verdict, COLOURS["reject"])
         thick = 3 if mark.droplet == chosen else 1
         trail = _to_screen(mark.trail, zoom)
         cv2.polylines(drawn, [trail], False, colour, thick, cv2.LINE_AA, _SHIFT)
-        _draw_shape(drawn, mark, colour, thick, zoom)
+        x, y = (int(v) for v in _to_screen(np.array([[mark.x, mark.y]]), zoom)[0])
+        _draw_shape(drawn, mark.verdict, (x, y), (8 + zoom) << _SHIFT, colour, thick)
+        text = str(mark.droplet)
+        _write(drawn, text, _label_place((x >> _SHIFT, y >> _SHIFT), text, zoom, taken), colour)
+    if caption:
+        _draw_legend(drawn, caption)
     return np.asarray(drawn, dtype=np.uint8)
 
 
@@ -148,29 +190,66 @@ def _to_screen(points: NDArray[np.float64], zoom: int) -> NDArray[np.int32]:
     return np.asarray(np.rint(placed * 2**_SHIFT), dtype=np.int32)
 
 
-def _draw_shape(drawn: NDArray[Any], mark: Mark, colour: tuple[int, int, int], thick: int, zoom: int) -> None:
-    """Circle, square or cross around the droplet, and its number beside it."""
+def _draw_shape(
+    drawn: NDArray[Any],
+    verdict: str,
+    centre: tuple[int, int],
+    arm: int,
+    colour: tuple[int, int, int],
+    thick: int,
+) -> None:
+    """Circle, square or cross about a place; place and arm in 1/16 px."""
     import cv2
 
-    cx, cy = (int(v) for v in _to_screen(np.array([[mark.x, mark.y]]), zoom)[0])
-    arm = (8 + zoom) << _SHIFT
-    if mark.verdict == "keep":
+    cx, cy = centre
+    if verdict == "keep":
         cv2.circle(drawn, (cx, cy), arm, colour, thick, cv2.LINE_AA, _SHIFT)
-    elif mark.verdict == "doubt":
+    elif verdict == "doubt":
         cv2.rectangle(drawn, (cx - arm, cy - arm), (cx + arm, cy + arm), colour, thick, cv2.LINE_AA, _SHIFT)
     else:
         for sign in (-1, 1):
-            near, far = arm // 3, arm
-            for a, b in ((-far, -near), (near, far)):
-                cv2.line(
-                    drawn,
-                    (cx + a, cy + sign * a),
-                    (cx + b, cy + sign * b),
-                    colour,
-                    thick,
-                    cv2.LINE_AA,
-                    _SHIFT,
-                )
-    place = (int(cx / 2**_SHIFT + 10 + zoom), int(cy / 2**_SHIFT - 6))
-    cv2.putText(drawn, str(mark.droplet), place, cv2.FONT_HERSHEY_SIMPLEX, 0.4, (0, 0, 0), 3, cv2.LINE_AA)
-    cv2.putText(drawn, str(mark.droplet), place, cv2.FONT_HERSHEY_SIMPLEX, 0.4, colour, 1, cv2.LINE_AA)
+            for a, b in ((-arm, -(arm // 3)), (arm // 3, arm)):
+                ends = (cx + a, cy + sign * a), (cx + b, cy + sign * b)
+                cv2.line(drawn, *ends, colour, thick, cv2.LINE_AA, _SHIFT)
+
+
+def _write(drawn: NDArray[Any], text: str, place: tuple[int, int], colour: tuple[int, int, int]) -> None:
+    """Write text with a dark rim; `place` is the left end of its base line in px."""
+    import cv2
+
+    for ink, thick in (((0, 0, 0), 3), (colour, 1)):
+        cv2.putText(drawn, text, place, cv2.FONT_HERSHEY_SIMPLEX, _TEXT, ink, thick, cv2.LINE_AA)
+
+
+def _label_place(at: tuple[int, int], text: str, zoom: int, taken: list[_Box]) -> tuple[int, int]:
+    """Place of a number beside its droplet: the first of four that no other number has; it is added to `taken`."""
+    import cv2
+
+    (width, height), _ = cv2.getTextSize(text, cv2.FONT_HERSHEY_SIMPLEX, _TEXT, 1)
+    right, left = at[0] + 10 + zoom, at[0] - 10 - zoom - width
+    above, below = at[1] - 6, at[1] + 6 + height
+    places = [(right, above), (right, below), (left, above), (left, below)]
+    boxes = [(x - 1, y - height - 1, x + width + 1, y + 1) for x, y in places]
+    free = (i for i, box in enumerate(boxes) if not any(_overlap(box, other) for other in taken))
+    chosen = next(free, 0)
+    taken.append(boxes[chosen])
+    return places[chosen]
+
+
+def _overlap(one: _Box, other: _Box) -> bool:
+    return one[0] < other[2] and other[0] < one[2] and one[1] < other[3] and other[1] < one[3]
+
+
+def _draw_legend(drawn: NDArray[Any], caption: str) -> None:
+    """Caption in the lower left corner and, in pictures with room for it, what the three shapes mean."""
+    import cv2
+
+    base, x = drawn.shape[0] - 6, 6
+    _write(drawn, caption, (x, base), _LEGEND)
+    x += cv2.getTextSize(caption, cv2.FONT_HERSHEY_SIMPLEX, _TEXT, 1)[0][0] + 24
+    if x + 3 * 64 > drawn.shape[1]:
+        return
+    for verdict in COLOURS:
+        _draw_shape(drawn, verdict, (x << _SHIFT, (base - 4) << _SHIFT), 5 << _SHIFT, _LEGEND, 1)
+        _write(drawn, verdict, (x + 10, base), _LEGEND)
+        x += 64
