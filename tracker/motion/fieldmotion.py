@@ -7,13 +7,12 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
-from physics.droplet import Conditions, diffusion, radius_from_fall_speed
-from physics.errors import PhysicsError
 from physics.motion import MIN_INCREMENTS, Increments, field_impulse, free_fit, whitened
 from tracker.bench import Bench
 from tracker.errors import FieldError
 from tracker.motion.field import blur_of, exposure_of, field_of_steps, recording_span
 from tracker.motion.fieldclock import fit_clock_offset
+from tracker.motion.fieldstates import SHORT, side_diffusion, states_of_motion
 from tracker.motion.velocity import Orientation, Path, paths
 from tracker.records import Field, FloatArray, IntArray, Recording, Tracks
 
@@ -22,10 +21,8 @@ __all__ = ["field_from_motion", "fit_clock_offset", "segments_of_motion", "sharp
 FALSE_TOGGLES = 1e-3  # per recording
 LEAST_SEGMENT = 6  # frames
 LEAST_DROPLET = 30  # steps of a droplet that takes part
-SAME_STATE = 0.25  # of the spread of the states: scores nearer to one another are one state
 GRID = 33  # points of a toggle's likelihood
 LEAST_TIMING = 6.0  # chi-square by which places of a toggle must differ, or the droplets say nothing of it
-OFF_MARGIN = 9.0  # chi-square by which the field-off state must fit a falling sphere better than the other
 
 
 def field_from_motion(tracks: Tracks, recording: Recording, bench: Bench) -> Field:
@@ -50,7 +47,7 @@ def field_from_motion(tracks: Tracks, recording: Recording, bench: Bench) -> Fie
     Raises
     ------
     FieldError
-        If no toggle is seen, if there are more than three states, or if on and off cannot be told apart.
+        If no toggle is seen, if the states are not off, on and reversed, or if they cannot be told apart.
 
     Notes
     -----
@@ -78,16 +75,33 @@ def field_from_motion(tracks: Tracks, recording: Recording, bench: Bench) -> Fie
             str(recording.path),
             "no toggle of the field is seen in the motion; state it as a list, log or lamp",
         )
-    states = _states(droplets, edges, recording, bench.conditions)
+    states, unclear = states_of_motion(droplets, edges, recording, bench.conditions)
     times = recording.frame_times
     coarse = np.concatenate(([times[0]], [0.5 * (times[a] + times[b]) for a, b in zip(
         [e for _, e in edges[:-1]], [s for s, _ in edges[1:]], strict=True)]))  # fmt: skip
     volts = voltage.value * states
+    # A stretch has six frames at least, so a toggle near the first or last frame may lie inside its stretch.
+    toggle_std = np.full(len(edges), recording.frame_interval)
+    for toggle, (first, end) in ((1, edges[0]), (-1, edges[-1])):
+        toggle_std[toggle] *= 2.0 if end - first < SHORT else 1.0
     field = field_of_steps(
-        "motion", coarse, volts, span=recording_span(recording), toggle_std=recording.frame_interval,
+        "motion", coarse, volts, span=recording_span(recording), toggle_std=toggle_std,
         sign_known=False, warnings=_sign_warning(voltage.value, states),
     )  # fmt: skip
-    return _refined(field, droplets, recording, np.arange(len(field.segments) - 1))
+    return _without_unclear(_refined(field, droplets, recording, np.arange(len(field.segments) - 1)), unclear)
+
+
+def _without_unclear(field: Field, unclear: np.ndarray) -> Field:
+    """Let the toggle of a short first or last segment of open state be so uncertain that no fit uses the segment."""
+    if not unclear.any() or len(field.segments) != len(unclear):
+        return field
+    std = np.array(field.toggle_std)
+    for i, toggle in ((0, 0), (-1, -1)):
+        if unclear[i]:
+            std[toggle] = max(std[toggle], (field.segments[i].end - field.segments[i].start) / 3)
+    edge = " and ".join(name for name, i in (("first", 0), ("last", -1)) if unclear[i])
+    warning = f"the motion does not tell the voltage of the {edge} frames, which are left out"
+    return replace(field, toggle_std=std, warnings=(*field.warnings, warning))
 
 
 def sharpened(field: Field, tracks: Tracks, recording: Recording, bench: Bench) -> Field:
@@ -148,20 +162,10 @@ def _scaled_steps(droplets: Sequence[Path], recording: Recording) -> tuple[Float
         steps = path.steps()
         frames = path.frames[steps.first]
         single = path.frames[steps.first + 1] - frames == 1
-        unit = np.sqrt(2 * _side_diffusion(steps) * steps.dt)
+        unit = np.sqrt(2 * side_diffusion(steps) * steps.dt)
         scaled[j, frames[single]] = (steps.down / unit)[single]
         seen[j, frames[single]] = True
     return scaled, seen
-
-
-def _side_diffusion(steps: Increments) -> float:
-    """Diffusion from the motion across the field, which toggles do not touch: <x^2>/2dt + <x x'>/dt."""
-    side = steps.side - steps.dt * (np.sum(steps.side) / np.sum(steps.dt))
-    joined = steps.first[1:] - steps.first[:-1] == 1
-    mean_dt = float(np.mean(steps.dt))
-    size = float(np.mean(side**2))
-    neighbours = float(np.mean((side[:-1] * side[1:])[joined])) if np.any(joined) else 0.0
-    return max(size + 2 * neighbours, 0.2 * size) / (2 * mean_dt)
 
 
 def segments_of_motion(scaled: FloatArray, seen: np.ndarray) -> list[tuple[int, int]]:
@@ -213,135 +217,6 @@ def segments_of_motion(scaled: FloatArray, seen: np.ndarray) -> list[tuple[int, 
         segments.append((int(begin[end]), end))
         end = int(begin[end]) - 1
     return segments[::-1]
-
-
-@dataclass(frozen=True, slots=True)
-class _Means:
-    """Speed of every droplet in every segment, and its variance; nan where it was not seen."""
-
-    speed: FloatArray  # (droplets, segments) m/s
-    variance: FloatArray  # (m/s)^2
-    diffusion: FloatArray  # (droplets,) m^2/s
-    diffusion_std: FloatArray  # (droplets,) of ln D
-
-
-def _means(droplets: Sequence[Path], edges: Sequence[tuple[int, int]]) -> _Means:
-    """Mean speeds within the segments."""
-    speed = np.full((len(droplets), len(edges)), np.nan)
-    variance = speed.copy()
-    diffusions = np.zeros(len(droplets))
-    stds = np.zeros(len(droplets))
-    for j, path in enumerate(droplets):
-        steps = path.steps()
-        diffusions[j] = _side_diffusion(steps)
-        stds[j] = np.sqrt(3.0 / len(steps))  # the covariance estimator's, noise small against D dt
-        frames, last = path.frames[steps.first], path.frames[steps.first + 1]
-        for i, (first, end) in enumerate(edges):
-            inside = (frames >= first) & (last <= end)
-            if np.sum(inside) >= 3:
-                duration = float(np.sum(steps.dt[inside]))
-                speed[j, i] = np.sum(steps.down[inside]) / duration
-                variance[j, i] = 2 * diffusions[j] / duration
-    return _Means(speed, variance, diffusions, stds)
-
-
-def _states(
-    droplets: Sequence[Path], edges: Sequence[tuple[int, int]], recording: Recording, conditions: Conditions
-) -> FloatArray:
-    """Voltage of every segment over the first field-on one: 0, 1 or -1."""
-    means = _means(droplets, edges)
-    score = _scores(means)
-    groups = _groups(score)
-    levels = np.array([np.mean(score[groups == k]) for k in range(groups.max() + 1)])
-    if len(levels) == 3:
-        share = (levels[1] - levels[0]) / (levels[2] - levels[0])
-        if not 0.4 < share < 0.6:
-            problem = f"the motion's three states are not off, on and reversed: the middle is at {share:.2f} of the way"
-            raise FieldError(str(recording.path), f"{problem}; state the voltages as a list or a log")
-        off = 1
-    elif len(levels) == 2:
-        off = _off_state(means, groups, recording, conditions)
-    else:
-        raise FieldError(
-            str(recording.path), f"{len(levels)} states of the motion; state the voltages as a list or a log"
-        )
-    states = np.sign(levels[groups] - levels[off])
-    return np.asarray(states * states[np.flatnonzero(states)[0]])
-
-
-def _scores(means: _Means) -> FloatArray:
-    """One number for each segment, the droplets' common pattern of speeds: rank-one fit with missing values."""
-    weight = np.where(np.isfinite(means.speed), 1 / means.variance, 0.0)
-    speed = np.where(np.isfinite(means.speed), means.speed, 0.0)
-    score = _start_scores(speed, weight)
-    for _ in range(200):
-        # Each droplet's speed is a + b score; then each segment's score from all droplets.
-        w = weight.sum(axis=1)
-        ws, wss = weight @ score, weight @ score**2
-        wv, wvs = np.sum(weight * speed, axis=1), np.sum(weight * speed * score, axis=1)
-        determinant = w * wss - ws**2
-        sound = determinant > 1e-9 * np.maximum(w * wss, 1e-300)
-        b = np.where(sound, (w * wvs - ws * wv) / np.where(sound, determinant, 1.0), 0.0)
-        a = np.where(sound, (wv - b * ws) / np.maximum(w, 1e-300), 0.0)
-        power = np.sum(weight * (b**2)[:, None], axis=0)
-        new = np.sum(weight * b[:, None] * (speed - a[:, None]), axis=0) / np.maximum(power, 1e-300)
-        span = np.ptp(new)
-        new = (new - new.min()) / (span if span > 0 else 1.0)
-        if np.max(np.abs(new - score)) < 1e-9:
-            break
-        score = new
-    return score
-
-
-def _start_scores(speed: FloatArray, weight: FloatArray) -> FloatArray:
-    """Start from the droplet whose speeds differ most significantly between segments."""
-    mean = np.sum(weight * speed, axis=1) / np.maximum(weight.sum(axis=1), 1e-300)
-    spread = np.sum(weight * (speed - mean[:, None]) ** 2, axis=1)
-    best = int(np.argmax(spread * (np.sum(weight > 0, axis=1) / weight.shape[1]) ** 2))
-    score = np.where(weight[best] > 0, speed[best], mean[best])
-    span = np.ptp(score)
-    return np.asarray((score - score.min()) / (span if span > 0 else 1.0))
-
-
-def _groups(score: FloatArray) -> IntArray:
-    """Number of the state of each segment, states ordered by score."""
-    order = np.argsort(score)
-    steps = np.diff(score[order]) > SAME_STATE
-    groups = np.zeros(len(score), np.int64)
-    groups[order] = np.concatenate(([0], np.cumsum(steps)))
-    return groups
-
-
-def _off_state(means: _Means, groups: IntArray, recording: Recording, conditions: Conditions) -> int:
-    """Field-off state of two: there every droplet falls, at the speed that its Brownian motion asks for."""
-    misfit = [float(np.sum(_fall_misfit(means, groups == k, conditions))) for k in (0, 1)]
-    if abs(misfit[0] - misfit[1]) < OFF_MARGIN:
-        raise FieldError(
-            str(recording.path),
-            "on and off cannot be told apart by the motion; state the field as a list, log or lamp",
-        )
-    return int(np.argmin(misfit))
-
-
-def _fall_misfit(means: _Means, chosen: np.ndarray, conditions: Conditions) -> FloatArray:
-    """Chi-square of each droplet for being a falling sphere of the oil in the chosen segments."""
-    weight = np.where(np.isfinite(means.speed) & chosen, 1 / means.variance, 0.0)
-    total = weight.sum(axis=1)
-    misfit = np.zeros(len(total))
-    for j in np.flatnonzero(total > 0):
-        speed = float(np.sum(weight[j] * np.nan_to_num(means.speed[j])) / total[j])
-        std = float(1 / np.sqrt(total[j]))
-        if speed < 2 * std:
-            misfit[j] = min((speed / std - 2) ** 2, 100.0)
-            continue
-        try:
-            law = float(diffusion(radius_from_fall_speed(speed, conditions), conditions))
-        except PhysicsError:
-            continue
-        ln_std = float(np.hypot(means.diffusion_std[j], 0.6 * std / speed))
-        # Capped: a clump or a mistaken link must not decide for all.
-        misfit[j] = min((np.log(means.diffusion[j] / law) / ln_std) ** 2, 25.0)
-    return misfit
 
 
 def _refined(field: Field, droplets: Sequence[Path], recording: Recording, which: IntArray) -> Field:

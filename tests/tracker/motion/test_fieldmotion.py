@@ -6,6 +6,8 @@ the full study is tests/benchmarks/study_happenings.py.
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 from diffusing_droplets import CONDITIONS
@@ -15,6 +17,7 @@ from tracker.errors import FieldError
 from tracker.motion.field import field_from_lamp, field_from_list
 from tracker.motion.fieldlog import Log
 from tracker.motion.fieldmotion import field_from_motion, fit_clock_offset, segments_of_motion, sharpened
+from tracker.records import Tracks
 
 
 def lives(rng, count):
@@ -74,6 +77,37 @@ def test_on_and_off_are_told_apart_by_the_fall(tmp_path, signs):
     camera, tracks, recording, bench = movie(np.random.default_rng(33), tmp_path, signs=signs)
     field = field_from_motion(tracks, recording, bench)
     assert [s.voltage for s in field.segments] == pytest.approx([e * 6e-3 for _, e in camera.steps])
+
+
+@pytest.mark.parametrize("frames", [3, 4, 5, 7])
+def test_a_recording_that_ends_just_after_a_toggle_has_no_third_state(tmp_path, frames):
+    """The last stretch, of six frames at least, then holds both states; it is not taken for a field between them."""
+    camera, tracks, recording, bench = movie(np.random.default_rng(43), tmp_path, signs=(0, 1))
+    ends = round(30 * camera.steps[5][0]) + frames
+    kept = tracks.sightings.frame < ends
+    shorter = replace(recording, frame_times=recording.frame_times[:ends])
+    field = field_from_motion(Tracks(tracks.droplet[kept], tracks.sightings.take(kept)), shorter, bench)
+    assert set(np.round([s.voltage for s in field.segments], 6)) == {0.0, 240.0}
+    assert field.segments[0].voltage == 0.0
+    truth = np.array([t for t, _ in camera.steps[1:]])[: len(toggles(field))]
+    assert len(truth) >= 4
+    assert np.all(np.abs(toggles(field) - truth) < 4 * field.toggle_std)
+
+
+def test_a_field_that_is_only_reversed_is_not_read_as_on_and_off(tmp_path):
+    """Droplets of both signs driven one way and the other never fall freely: an error, not a wrong table."""
+    _, tracks, recording, bench = movie(np.random.default_rng(44), tmp_path, signs=(1, -1))
+    with pytest.raises(FieldError, match="never off"):
+        field_from_motion(tracks, recording, bench)
+
+
+def test_an_open_reading_of_the_motion_is_an_error_that_names_both(tmp_path):
+    """Where the field hastens one droplet by a third, its Brownian motion suits both speeds: no guess is made."""
+    rng = np.random.default_rng(45)
+    camera = Camera(seconds=9.0, steps=schedule(4e4, signs=(0, 1)))
+    tracks, recording = made_tracks(rng, [Life(1e-6, 2)], camera)
+    with pytest.raises(FieldError, match=r"cannot be told apart.*chi-square"):
+        field_from_motion(tracks, recording, made_bench(tmp_path, camera, source="motion"))
 
 
 def test_movies_without_field_show_no_toggle(tmp_path):
