@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import contextlib
 import shutil
+import tempfile
 from collections.abc import Mapping
 from dataclasses import dataclass
 from pathlib import Path
@@ -136,20 +137,16 @@ def place_order(order: Order, results: Path) -> Job:
     Raises
     ------
     RefusedError
-        422 if the bench file is wrong; the folder is gone again then, and the uploads are still held.
+        422 if the bench file is wrong; no folder is made then, and the uploads are still held.
     """
+    _check_bench(order, results)
     folder = _folder(order.recording, results)
     recording = order.recording.place(folder)
-    (folder / BENCH_NAME).write_text(order.text, encoding="utf-8")
-    if order.own is not None:
-        recording.with_suffix(".toml").write_text(order.own, encoding="utf-8")
-    if order.scale is not None:
-        (folder / order.scale_name).write_text(order.scale, encoding="utf-8")
+    _write_texts(order, recording)
     if order.log is not None:
         order.log.leaf = order.log_name
         order.log.place(folder)
     picture = order.picture.place(folder) if order.picture is not None else None
-    _check_bench(order, folder, recording)
     out = result_folder(recording)
     reference = None if picture is None else {
         "picture": str(picture), "scale": str(folder / order.scale_name), "pitch": order.pitch,
@@ -159,6 +156,15 @@ def place_order(order: Order, results: Path) -> Job:
     job = Job(0, "measure", order.recording.name, task, key=str(out))
     job.result = {}
     return job
+
+
+def _write_texts(order: Order, recording: Path) -> None:
+    """Write the small files of an order beside its recording."""
+    (recording.parent / BENCH_NAME).write_text(order.text, encoding="utf-8")
+    if order.own is not None:
+        recording.with_suffix(".toml").write_text(order.own, encoding="utf-8")
+    if order.scale is not None:
+        (recording.parent / order.scale_name).write_text(order.scale, encoding="utf-8")
 
 
 def _folder(recording: Upload, results: Path) -> Path:
@@ -174,26 +180,28 @@ def _folder(recording: Upload, results: Path) -> Path:
     raise RefusedError(409, f"there are too many recordings called {stem} in {results}")
 
 
-def _check_bench(order: Order, folder: Path, recording: Path) -> None:
+def _check_bench(order: Order, results: Path) -> None:
     """Read the bench as the measurement will; a scale that is still to be measured stands in as any scale."""
     from tracker.bench import load_bench
 
-    bench, trial = folder / BENCH_NAME, None
+    results.mkdir(parents=True, exist_ok=True)
     try:
-        if order.picture is not None:
-            trial = folder / "trial.toml"
-            trial.write_text(_with_any_scale(order.text), encoding="utf-8")
-        load_bench(trial or bench, recording=recording)
+        with tempfile.TemporaryDirectory(prefix=".check_", dir=results) as scratch:
+            recording, bench = Path(scratch) / order.recording.leaf, Path(scratch) / BENCH_NAME
+            recording.touch()
+            _write_texts(order, recording)
+            if order.log is not None:
+                (recording.parent / order.log_name).touch()
+            if order.picture is not None:
+                bench.write_text(_with_any_scale(order.text), encoding="utf-8")
+            load_bench(bench, recording=recording)
     except BenchError as error:
         fault = Fault(error.key, f"read {error.found}; allowed: {error.allowed}")
         named = {"camera.scale": (order.scale, order.scale_name), "field.log": (order.log, order.log_name)}
         given, name = named.get(error.key, ("", ""))
         if given is None and name in error.found:
             fault = Fault("", f"the bench names the file {name}, which is not here yet: drop it too")
-        raise RefusedError(422, str(error), {"faults": [fault]}) from error
-    finally:
-        if trial is not None:
-            trial.unlink(missing_ok=True)
+        raise RefusedError(422, fault["message"], {"faults": [fault]}) from error
 
 
 def _with_any_scale(text: str) -> str:

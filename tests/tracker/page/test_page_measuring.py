@@ -148,6 +148,7 @@ def test_reference_picture_gives_the_scale(page: Client, tmp_path: Path) -> None
     assert [fault["message"] for fault in without.json()["faults"]] == [
         "the bench names the file scale.json, which is not here yet: drop it too"
     ]
+    assert list((tmp_path / "results").iterdir()) == []
     order["values"] = {"scale.pitch": "0.1000(2) mm"}
     job = page.post("/api/measure", json=order).json()
     done = ended(page, job["number"])
