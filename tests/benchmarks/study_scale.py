@@ -124,7 +124,8 @@ def report(rows: list[dict[str, Any]]) -> str:
     ]
     lines += [
         "Error and pull are against the pitch at the picture's centre where a lens was found, else against its mean",
-        "over the marks; the pattern's tolerance is left out. Refused pictures are in no figure but their own column.", "",
+        "over the marks; the pattern's tolerance is left out. Refused pictures are in no figure but their own column.",
+        "",
     ]  # fmt: skip
     lines += ["| " + " | ".join(HEAD) + " |", "|" + "---|" * len(HEAD)]
     for kind in ("lines", "grid", "dots"):
