@@ -28,7 +28,7 @@ QUANTITIES: Mapping[str, tuple[str, float, float, str]] = {
     "air.pressure": ("Pa", 1e4, 1.1e5, 'a pressure such as "1008(1) hPa", 100 to 1100 hPa'),
     "air.relative_humidity": ("", 0.0, 1.0, 'a share such as "45(5) percent", 0 to 100 percent'),
     "air.viscosity": ("Pa s", 1e-6, 1e-4, 'a viscosity such as "1.83e-5 Pa s"'),
-    "site.gravity": ("m/s^2", 9.5, 10.0, 'an acceleration such as "9.8100(2) m/s^2", 9.5 to 10'),
+    "site.gravity": ("m/s^2", 9.5, 10.0, 'an acceleration such as "9.8100(2) m/s^2", 9.5 to 10 m/s^2'),
     "site.latitude": ("deg", -90.0, 90.0, 'a latitude such as "51.5 deg"'),
     "site.altitude": ("m", -500.0, 9000.0, 'an altitude such as "80 m"'),
     "camera.metres_per_pixel": ("m", 1e-9, 1e-3, 'a length such as "2.980(5) um"'),

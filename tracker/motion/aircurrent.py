@@ -6,6 +6,7 @@ from collections.abc import Sequence
 from dataclasses import dataclass, field, replace
 
 import numpy as np
+from scipy.special import chdtrc
 
 from physics.air_current import HALF_WIDTH
 from physics.droplet import Conditions, diffusion, radius_from_fall_speed
@@ -218,12 +219,10 @@ class _Shared:
 
     def significant(self) -> bool:
         """Whether chance explains it in fewer than one recording in a thousand."""
-        from scipy.stats import chi2
-
         rank = int(
             np.linalg.matrix_rank(self.matrix, tol=1e-8 * np.linalg.norm(self.matrix, 2), hermitian=True)
         )
-        return rank > 0 and bool(chi2.sf(self.chi_square(), rank) < CHANGING)
+        return rank > 0 and bool(chdtrc(rank, self.chi_square()) < CHANGING)
 
 
 def _terms(path: Path, fit: FreeFit, knots: FloatArray) -> tuple[_Shared, _Shared]:

@@ -226,12 +226,12 @@ def _exposure_warning(bench: Bench, exposure: float, droplets: Sequence[Droplet]
             f"camera.exposure is not stated: half the frame interval, {exposure * 1e3:.3g} ms, is taken for the times"
             " of the field; the blur of Brownian motion is fitted together with the place noise",
         )
-    from scipy.stats import binom
+    from scipy.special import bdtrc  # scipy.stats, which says it in more words, takes a second to import
 
     usable = [d.history for d in droplets if d.history is not None and is_one_droplet(d, bench.conditions)]
     bare = sum(h.fit.log_rho < np.log(NO_NOISE * np.median(h.steps.dt)) for h in usable)
     # With the right blur, chance leaves a droplet without place noise in at most one case of two.
-    if binom.sf(bare - 1, len(usable), 0.5) > TOO_SHORT:
+    if bare == 0 or bdtrc(bare - 1, len(usable), 0.5) > TOO_SHORT:
         return ()
     return (
         f"{bare} of {len(usable)} droplets seem to have no place noise: camera.exposure, {exposure * 1e3:.3g} ms, is"
