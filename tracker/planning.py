@@ -21,6 +21,10 @@ from tracker.errors import UsageError
 from tracker.records import FloatArray
 
 STREAK_PX = 8.0  # motion within one exposure beyond which a droplet is a streak and not a spot
+BREAKDOWN_FIELD = 3.0e6  # V/m, see `breakdown_voltage`
+_REFERENCE_DENSITY = 1.204  # kg/m^3, dry air at 20 degC and 101.325 kPa
+SAFE_SHARE = 0.5  # of the breakdown voltage: common practice, since edges, dust and droplets lower it
+_SUPPLY = 1000.0  # V, taken as the supply's limit if none is stated
 _STARTS = 9  # heights, evenly over the view, at which droplets begin
 _VOLTAGES, _PLATEAUS = 13, 10  # points of the search
 _LONGEST_PLATEAU = 20.0  # s
@@ -46,7 +50,8 @@ class Planned:
     radii: tuple[float, ...]  # m
     numbers: tuple[int, ...]  # signed charge numbers; negative ones rise when the top plate is positive
     droplets: int  # measured together, on one bench
-    voltage_max: float  # V, of the supply: the search goes no further
+    voltage_max: float  # V, of the supply, or what the air stands safely: the search goes no further
+    notes: tuple[str, ...] = ()  # what was supposed of the plan
 
     def __post_init__(self) -> None:
         for name in ("duration", "plateau", "voltage", "frame_rate", "exposure", "pixel", "place_std", "view_height",
@@ -68,6 +73,33 @@ class Planned:
             or self.droplets < 1
         ):
             raise UsageError("radii must be above 0, numbers not 0, and at least one droplet is needed")
+
+
+def breakdown_voltage(conditions: Conditions) -> float:
+    """Voltage near which the air between the plates breaks down.
+
+    Parameters
+    ----------
+    conditions : Conditions
+        Plate gap and density of the air.
+
+    Returns
+    -------
+    voltage : float
+        In V.
+
+    Notes
+    -----
+    The rounded value of common practice, 3 MV/m in air of 1 atm and 20 degC, in proportion to the air's density
+    (Paschen). Between level plates without sharp edges a gap of 10 mm stands 3.1 MV/m and a smaller one more, 3.3
+    MV/m at 6 mm [1]_; edges, dust and droplets lower it, so no gap may be run near it.
+
+    References
+    ----------
+    .. [1] E. Kuffel, W. S. Zaengl, J. Kuffel, High Voltage Engineering: Fundamentals, 2nd ed. (Newnes, 2000),
+       chapter 5: for air at 20 degC V = 6.72 sqrt(p d) + 24.36 p d, in kV with p d in bar cm.
+    """
+    return BREAKDOWN_FIELD * conditions.air_density / _REFERENCE_DENSITY * conditions.plate_gap
 
 
 @dataclass(frozen=True, slots=True)
@@ -113,6 +145,7 @@ def planned_recording(bench: Bench, options: PlanOptions) -> Planned:
     voltage = _typed(
         "--voltage", options.voltage, "V", abs(bench.voltage.value) if bench.voltage else entries
     )
+    voltage_max, notes = _limits(bench, options, voltage)
     rate = _typed("--frame-rate", options.frame_rate, "Hz", bench.frame_rate or 25.0)
     pixel = _typed("--pixel", options.pixel, "m", bench.scale.metres_per_pixel_y)
     exposure = bench.exposure.value if bench.exposure is not None else 0.5 / rate
@@ -136,8 +169,33 @@ def planned_recording(bench: Bench, options: PlanOptions) -> Planned:
         place_std=options.place_noise_px * pixel,
         view_height=_typed("--height", options.view_height, "m", pixel * (bench.scale.height_px or 1080)),
         radii=tuple(_typed("--radii", f"{value} {unit}", "m") for value in values.split(",")), numbers=numbers,
-        droplets=options.droplets, voltage_max=_typed("--voltage-max", options.voltage_max, "V", max(voltage, 1000.0)),
+        droplets=options.droplets, voltage_max=voltage_max, notes=notes,
     )  # fmt: skip
+
+
+def _limits(bench: Bench, options: PlanOptions, voltage: float) -> tuple[float, tuple[str, ...]]:
+    """Highest voltage of the search, and what to say of it; a voltage that the air does not stand is refused."""
+    breakdown, gap = breakdown_voltage(bench.conditions), bench.conditions.plate_gap
+    name = "cell.voltage" if options.voltage is None else f"--voltage {options.voltage}"
+    told = (f"{voltage / gap * 1e-5:.3g} kV/cm in a gap of {gap * 1e3:.3g} mm; air of this density breaks down near "
+            f"{breakdown / gap * 1e-5:.2g} kV/cm, that is {breakdown:.0f} V (Paschen; rounded)")  # fmt: skip
+    if voltage >= breakdown:
+        raise UsageError(f"{name}: {told}; plan with {SAFE_SHARE * breakdown:.0f} V or less")
+    supply = _typed("--voltage-max", options.voltage_max, "V", max(voltage, _SUPPLY))
+    if supply < voltage:
+        raise UsageError(f"--voltage-max {options.voltage_max}: below the planned voltage, {voltage:g} V")
+    notes, safe = [], SAFE_SHARE * breakdown
+    if options.voltage_max is None and voltage > _SUPPLY:
+        notes.append(
+            f"no --voltage-max was stated: the supply is taken to reach the planned {voltage:g} V, not more"
+        )
+    if voltage > safe:
+        notes.append(f"WARNING, risk of sparks: {told}; common practice is half of it or less, {safe:.0f} V")
+    elif supply > safe:
+        notes.append(
+            f"the search stops at {safe:.0f} V, half of what the air of the gap stands (common practice)"
+        )
+    return max(min(supply, safe), min(voltage, safe)), tuple(notes)
 
 
 def _typed(option: str, text: str | None, unit: str, default: float = 0.0) -> float:
@@ -173,9 +231,10 @@ class Search:
 
     voltages: FloatArray  # (V,) V
     plateaus: FloatArray  # (P,) s
-    typical: FloatArray  # (P, V) geometric mean over the droplets of own std over e; a droplet that is lost counts 1
-    voltage: float  # V, best
-    plateau: float  # s, best
+    typical: FloatArray  # (P, V) geometric mean over the droplets of own std over e; a droplet that is lost counts 1;
+    # nan where all are lost
+    voltage: float  # V, best; nan if there is none
+    plateau: float  # s, best; nan if there is none
     best: float  # typical uncertainty there
 
 
@@ -368,12 +427,14 @@ def _with_certainty(rows: tuple[PlanRow, ...], planned: Planned) -> tuple[PlanRo
 
 
 def _typical(own: NDArray[np.float64]) -> float:
-    """Geometric mean of uncertainties over e, each at most 1."""
+    """Geometric mean of uncertainties over e, each at most 1; nan if no droplet gives a charge."""
+    if not np.isfinite(own).any():
+        return float("nan")
     return float(np.exp(np.mean(np.log(np.minimum(own, 1.0)))))
 
 
 def _search(planned: Planned, conditions: Conditions, tracks: _Tracks) -> Search:
-    """Try voltages up to the supply's and plateaus up to a quarter of the duration."""
+    """Try voltages up to the highest allowed one and plateaus up to a quarter of the duration."""
     voltages = np.geomspace(planned.voltage_max / 30, planned.voltage_max, _VOLTAGES)
     shortest = max(10 / planned.frame_rate, 5 * planned.settling)
     plateaus = np.geomspace(
@@ -385,14 +446,16 @@ def _search(planned: Planned, conditions: Conditions, tracks: _Tracks) -> Search
             trial = replace(planned, voltage=float(voltage), plateau=float(plateau))
             own = [row.charge_own_std for row, _ in _rows(trial, conditions, tracks)]
             typical[i, j] = _typical(np.array(own) / ELEMENTARY_CHARGE)
-    at_plateau, at_voltage = divmod(int(np.argmin(typical)), len(voltages))
+    if np.isnan(typical).all():
+        return Search(voltages, plateaus, typical, np.nan, np.nan, np.nan)
+    at_plateau, at_voltage = divmod(int(np.nanargmin(typical)), len(voltages))
     return Search(voltages, plateaus, typical, float(voltages[at_voltage]), float(plateaus[at_plateau]),
-                  float(typical.min()))  # fmt: skip
+                  float(np.nanmin(typical)))  # fmt: skip
 
 
 def _warnings(planned: Planned, rows: tuple[PlanRow, ...]) -> tuple[str, ...]:
     """Say what a person should know of this plan."""
-    found = []
+    found = list(planned.notes)
     lost = [row for row in rows if not np.isfinite(row.charge_own_std)]
     if lost:
         found.append(f"{len(lost)} of {len(rows)} kinds of droplets give no charge: out of view or too fast")

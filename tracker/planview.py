@@ -16,6 +16,8 @@ from tracker.showing.report import CAUTIONS
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
 
+    from tracker.records import FloatArray
+
 _HEAD = (
     ("radius", "um"), ("number", ""), ("fall", "um/s"), ("drive", "um/s"), ("in view", "s"), ("radius own", "%"),
     ("shared", "%"), ("charge own", "e"), ("shared", "e"), ("certain", "%"), ("limited by", ""),
@@ -71,7 +73,10 @@ def summary(plan: Plan) -> list[str]:
     lines : list of str
         Certain numbers, droplets for a charge unit, best voltage and plateau.
     """
-    need, search, planned = plan.droplets_to_resolve, plan.search, plan.planned
+    if np.isnan(plan.typical):
+        limits = "; ".join(sorted({row.limit for row in plan.rows}))
+        return [f"None of these droplets gives a charge with this plan ({limits}).", _best_words(plan)]
+    need, planned = plan.droplets_to_resolve, plan.planned
     words = "more than 20000 droplets" if need is None else f"about {need} droplets"
     shared = [
         row.charge_shared_std / abs(row.number) / ELEMENTARY_CHARGE for row in plan.rows if row.certain > 0
@@ -86,11 +91,29 @@ def summary(plan: Plan) -> list[str]:
         lines.append(
             f"Shared inputs leave the charge unit uncertain by {percent:.2f} %, however many droplets."
         )
-    lines.append(
-        f"Typical own uncertainty of a charge {plan.typical:.3f} e; at best {search.best:.3f} e, at about "
-        f"{search.voltage:.0f} V and plateaus of {search.plateau:.1f} s (supply up to {planned.voltage_max:.0f} V)."
+    return [*lines, f"Typical own uncertainty of a charge {plan.typical:.3f} e. {_best_words(plan)}"]
+
+
+def _best_words(plan: Plan) -> str:
+    """Say what the search found best, and whether that is an end of what was tried."""
+    search = plan.search
+    low, high = search.voltages[0], search.voltages[-1]
+    tried = (
+        f"{low:.0f} to {high:.0f} V and plateaus of {search.plateaus[0]:.2g} to {search.plateaus[-1]:.2g} s"
     )
-    return lines
+    if np.isnan(search.best):
+        return f"Nothing that was tried gives a charge: {tried}."
+    at_voltage = _end_word(search.voltage, search.voltages, ("the lowest tried", "the highest tried"))
+    at_plateau = _end_word(search.plateau, search.plateaus, ("the shortest tried", "the longest tried"))
+    return (f"At best {search.best:.3f} e, at about {search.voltage:.0f} V{at_voltage} and plateaus of "
+            f"{search.plateau:.1f} s{at_plateau}; tried were {tried}.")  # fmt: skip
+
+
+def _end_word(value: float, tried: FloatArray, words: tuple[str, str]) -> str:
+    """Word in brackets for a value at an end of what was tried; empty within."""
+    if value in (tried[0], tried[-1]):
+        return f" ({words[int(value == tried[-1])]})"
+    return ""
 
 
 def plan_json(plan: Plan) -> dict[str, Any]:
@@ -135,14 +158,14 @@ def draw(plan: Plan, path: Path) -> None:
     """
     from matplotlib.figure import Figure
 
-    figure = Figure(figsize=(10, 8), layout="constrained")
+    figure = Figure(figsize=(11, 8.5), layout="constrained")
     axes = figure.subplots(2, 2)
     _draw_charge(axes[0, 0], plan)
     _draw_radius(axes[0, 1], plan)
     _draw_search(axes[1, 0], plan)
     axes[1, 1].axis("off")
     text = "\n".join(_wrapped([*summary(plan), *plan.warnings, *CAUTIONS]))
-    axes[1, 1].text(0, 1, text, va="top", fontsize="small", transform=axes[1, 1].transAxes)
+    axes[1, 1].text(0, 1, text, va="top", fontsize="x-small", transform=axes[1, 1].transAxes)
     replace_file(path, lambda part: figure.savefig(part, dpi=120))
 
 
@@ -150,7 +173,7 @@ def _wrapped(lines: list[str]) -> list[str]:
     """Lines broken to the width of the picture's text."""
     import textwrap
 
-    return [part for line in lines for part in textwrap.wrap(line, 72, subsequent_indent="   ")]
+    return [part for line in lines for part in textwrap.wrap(line, 68, subsequent_indent="   ")]
 
 
 def _plain_ticks(axes: Axes, along: str, values: tuple[float, ...]) -> None:
@@ -168,9 +191,7 @@ def _draw_charge(axes: Axes, plan: Plan) -> None:
         rows = [row for row in plan.rows if row.number == number]
         axes.plot([r.radius * 1e6 for r in rows], [r.charge_own_std / ELEMENTARY_CHARGE for r in rows],
                   _STYLES[k % len(_STYLES)], color="k", mfc="w", label=f"number {number}")  # fmt: skip
-    axes.axhline(0.2, color="0.5", lw=0.8)
-    axes.annotate("below: most numbers certain", (0.98, 0.2), xycoords=("axes fraction", "data"), ha="right", va="top",
-                  fontsize="small")  # fmt: skip
+    axes.axhline(0.2, color="0.5", lw=0.8, label="below: most numbers certain")
     axes.set(
         title="Charge: own standard uncertainty", xlabel="radius / um", ylabel="uncertainty / e", yscale="log"
     )
@@ -192,15 +213,23 @@ def _draw_radius(axes: Axes, plan: Plan) -> None:
     axes.legend(fontsize="small")
 
 
+def _around(values: list[float]) -> tuple[float, float]:
+    """Limits of a logarithmic axis that leave room for a marker at either end."""
+    room = (max(values) / min(values)) ** 0.05
+    return min(values) / room, max(values) * room
+
+
 def _draw_search(axes: Axes, plan: Plan) -> None:
     """Typical uncertainty over voltage and plateau, with the plan and the best."""
     search, planned = plan.search, plan.planned
-    lines = axes.contour(search.voltages, search.plateaus, search.typical, 10, colors="0.4")
-    axes.clabel(lines, fontsize="small")
+    if np.nanmin(search.typical, initial=np.inf) < np.nanmax(search.typical, initial=-np.inf):
+        lines = axes.contour(search.voltages, search.plateaus, search.typical, 10, colors="0.4")
+        axes.clabel(lines, fontsize="small")
     axes.plot(planned.voltage, planned.plateau, "x", color="k", ms=9, label="planned")
     axes.plot(search.voltage, search.plateau, "o", color="k", ms=9, mfc="w", label="best")
     axes.set(title="Typical own uncertainty of a charge / e", xlabel="voltage / V", ylabel="plateau / s", xscale="log",
-             yscale="log")  # fmt: skip
+             yscale="log", xlim=_around([*search.voltages, planned.voltage]),
+             ylim=_around([*search.plateaus, planned.plateau]))  # fmt: skip
     _plain_ticks(axes, "x", (10, 20, 50, 100, 200, 500, 1000, 2000, 5000))
     _plain_ticks(axes, "y", (0.1, 0.2, 0.5, 1, 2, 5, 10, 20))
     axes.legend(fontsize="small")
