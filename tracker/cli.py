@@ -263,7 +263,7 @@ def plan(
         str | None, typer.Option("--voltage", help="Field-on voltage; default: the bench's.")
     ] = None,
     voltage_max: Annotated[
-        str | None, typer.Option("--voltage-max", help="Of the supply; default: 1000 V.")
+        str | None, typer.Option("--voltage-max", help="Of the supply; default: 1000 V, or --voltage.")
     ] = None,
     settling: Annotated[
         str, typer.Option("--settling", help="Left out after each change of voltage.")
@@ -332,7 +332,7 @@ def simulate(
         files = room.simulate(made, out, seed=seed, progress=progress)
     written = {"recording": files.recording, "truth": files.truth_json, "motion": files.truth_npz}
     if bench is not None:
-        written["bench"] = room.write_bench(made, bench, recording=out)
+        written["bench"] = room.write_bench(made, bench, recording=out, log=log)
     if log is not None:
         logger = room.Logger(early=log_early, fast=log_fast)
         written["log"] = room.write_log(made, log, logger=logger, seed=seed)

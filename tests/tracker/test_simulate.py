@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import fields
+
 import numpy as np
 import pytest
 from scipy.integrate import quad
@@ -236,6 +238,16 @@ def test_scene_survives_its_own_text(tmp_path):
     scene = Scene(lamp=(1, 2, 3, 4), schedule=((0.0, 1.0), (2.5, -260.0)), codec="h264", returning=True)
     (tmp_path / "scene.toml").write_text(scene_text(scene), encoding="utf-8")
     assert scene_from_mapping(read_scene(tmp_path / "scene.toml")) == scene
+
+
+def test_text_of_a_scene_tells_every_field(tmp_path):
+    """Each field has one line with its meaning, a lamp that is not there, too; it is read as the scene."""
+    text = scene_text(Scene())
+    names = [line.removeprefix("# ").split(" = ")[0] for line in text.splitlines()]
+    assert names == [field.name for field in fields(Scene)]
+    assert all(len(line.split("  # ")[1]) > 0 for line in text.splitlines())
+    (tmp_path / "scene.toml").write_text(text, encoding="utf-8")
+    assert scene_from_mapping(read_scene(tmp_path / "scene.toml")) == Scene()
 
 
 @pytest.mark.parametrize(

@@ -206,6 +206,27 @@ def test_bench_of_a_scene_is_the_scene(tmp_path):
     np.testing.assert_allclose(bench.field.entries, scene.plan)
 
 
+def test_bench_names_the_log_or_the_lamp_of_its_scene(tmp_path):
+    """The voltage is from the log with a clock to be fitted, without one from the lamp, else from the list."""
+    from tracker.bench import load_bench
+    from tracker.simulate import write_bench
+
+    def field(name, log=None, **changes):
+        file = write_bench(Scene(**changes), tmp_path / "benches" / name, recording="a.avi", log=log)
+        return load_bench(file, recording=tmp_path / "a.avi").field
+
+    (tmp_path / "benches").mkdir()
+    log = write_log(Scene(seconds=3.0), tmp_path / "v.csv", logger=Logger(early=0.4), seed=1)
+    logged = field("log.toml", log, lamp=(8, 8, 16, 16))
+    assert logged.source == "log"
+    assert logged.log.resolve() == log.resolve()
+    assert logged.clock_offset is None
+    lit = field("lamp.toml", lamp=(8, 8, 16, 16))
+    assert (lit.source, tuple(lit.lamp)) == ("lamp", (8, 8, 16, 16))
+    # A lamp does not tell +260 V from -260 V.
+    assert field("both.toml", lamp=(8, 8, 16, 16), voltages=(0.0, 260.0, -260.0)).source == "list"
+
+
 @pytest.mark.parametrize("arguments", [["--set", "nonsense=1"], ["--set", "oops"], ["--out", "x.gif"]])
 def test_wrong_simulate_command_ends_with_status_2(tmp_path, monkeypatch, capsys, arguments):
     """Wrong usage is one line on standard error and status 2."""

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import csv
 import json
+import os
 import shutil
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager, suppress
@@ -190,7 +191,7 @@ def _true_changes(drops: Drops, motion: Motion) -> list[dict[str, Any]]:
     return changes + [{"droplet": j, "kind": "return", "frame": k} for k, j in back]
 
 
-def bench_text(scene: Scene, *, video: bool = True) -> str:
+def bench_text(scene: Scene, *, video: bool = True, log: str | None = None) -> str:
     """Give the bench file of a scene.
 
     Parameters
@@ -199,14 +200,16 @@ def bench_text(scene: Scene, *, video: bool = True) -> str:
         The simulated bench, taken as known exactly.
     video : bool, optional
         False for pictures without frame times: their frame rate is written, too.
+    log : str, optional
+        Voltage log beside the bench file, which then gives the voltage; its clock is fitted.
 
     Returns
     -------
     text : str
-        TOML, as `fallrise measure` reads it.
+        TOML, as `fallrise measure` reads it. Without a log the voltage is from the scene's lamp, if it has one and
+        one voltage besides 0, else from a list.
     """
-    volts = next((v for v in scene.voltages if v), 0.0)
-    list_ = ", ".join(f'["{t:.9g} s", "{v:.9g} V"]' for t, v in scene.plan)
+    volts = next((v for _, v in scene.plan if v), 0.0)
     rate = "" if video else f'frame_rate = "{scene.frame_rate:.12g} Hz"\n'
     return f"""# a simulated bench
 [cell]
@@ -225,12 +228,22 @@ gravity = "{scene.gravity:.12g} m/s^2"
 metres_per_pixel = "{scene.metres_per_pixel * 1e6:.12g} um"
 exposure = "{scene.exposure_time * 1e3:.12g} ms"
 {rate}[field]
-source = "list"
-list = [{list_}]
-"""
+{_field_text(scene, log)}"""
 
 
-def write_bench(scene: Scene, path: str | Path, *, recording: str | Path) -> Path:
+def _field_text(scene: Scene, log: str | None) -> str:
+    """Where the voltage over time is from: a log, the lamp or a list."""
+    if log is not None:
+        return f'source = "log"\nlog = {json.dumps(log)}\nclock_offset = "auto"\n'
+    if scene.lamp is not None and len({v for _, v in scene.plan} - {0.0}) == 1:
+        return f'source = "lamp"\nlamp = {list(scene.lamp)}\n'
+    entries = ", ".join(f'["{t:.9g} s", "{v:.9g} V"]' for t, v in scene.plan)
+    return f'source = "list"\nlist = [{entries}]\n'
+
+
+def write_bench(
+    scene: Scene, path: str | Path, *, recording: str | Path, log: str | Path | None = None
+) -> Path:
     """Write the bench file of a scene, so that its recording can be measured at once.
 
     Parameters
@@ -241,6 +254,8 @@ def write_bench(scene: Scene, path: str | Path, *, recording: str | Path) -> Pat
         The TOML file to be written.
     recording : path-like
         The recording that it belongs to.
+    log : path-like, optional
+        Voltage log that `write_log` writes; the bench file then names it.
 
     Returns
     -------
@@ -253,8 +268,9 @@ def write_bench(scene: Scene, path: str | Path, *, recording: str | Path) -> Pat
         If it cannot be written.
     """
     path = Path(path)
+    beside = None if log is None else Path(os.path.relpath(log, path.parent)).as_posix()
     with _whole(path) as part:
-        part.write_text(bench_text(scene, video=is_video(Path(recording))), encoding="utf-8")
+        part.write_text(bench_text(scene, video=is_video(Path(recording)), log=beside), encoding="utf-8")
     return path
 
 

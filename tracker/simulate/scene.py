@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import itertools
-import json
 import math
 import tomllib
 from collections.abc import Iterable, Mapping
@@ -198,30 +197,6 @@ def scene_from_mapping(values: Mapping[str, Any]) -> Scene:
         if name not in known:
             raise UsageError(f"scene: unknown key {name!r}; known are {', '.join(sorted(known))}")
     return Scene(**values)
-
-
-def scene_text(scene: Scene) -> str:
-    """Write a scene as TOML, every field with its value.
-
-    Parameters
-    ----------
-    scene : Scene
-        The scene.
-
-    Returns
-    -------
-    text : str
-        One line a field, as `read_scene` reads it; a lamp that is not there is left out.
-    """
-    values = {f.name: getattr(scene, f.name) for f in fields(Scene)}
-    return "".join(f"{name} = {_toml(value)}\n" for name, value in values.items() if value is not None)
-
-
-def _toml(value: Any) -> str:
-    """One value as TOML."""
-    if isinstance(value, tuple):
-        return f"[{', '.join(_toml(v) for v in value)}]"
-    return json.dumps(value)  # numbers, booleans and plain texts look the same in both
 
 
 def read_assignments(lines: Iterable[str]) -> dict[str, Any]:
