@@ -263,7 +263,7 @@ def _unit_sections(pool: Pool, drifts: Sequence[Drift]) -> list[Section]:
     value = (f"Charge unit {unit.unit:.5e} C, own uncertainty {unit.unit_own_std:.1e} C, shared "
              f"{unit.unit_shared_std:.1e} C; {unit.over_e:.4f} of e "
              f"with a standard uncertainty of {unit.over_e_std:.4f}.")  # fmt: skip
-    reason = f"{unit.reason[:1].upper()}{unit.reason[1:]}."
+    reason = f"{unit.reason[:1].upper()}{unit.reason[1:].rstrip('.')}."
     told = (value, reason) if unit.resolved else (reason,)
     aside = [f"{b.label} drifts and is part of this unit." for b, d in zip(pool.benches, drifts, strict=True)
              if d.drifts and not b.left_out]  # fmt: skip
