@@ -56,9 +56,12 @@ def see(
     ------
     RecordingError
         If the recording cannot be read or gives no frame.
+    UsageError
+        If the region leaves nothing of the picture, or the lamp does not lie in it.
     """
     path = Path(path)
     with open_recording(path, frame_rate=frame_rate) as reader:
+        _require_lamp(lamp, reader)
         watch = _Watch(reader, settings, lamp, progress)
         source = Source(path, watch.frames(), reader.form, watch.box, frame_rate)
         rows: list[Columns] = []
@@ -168,6 +171,18 @@ def _follow(eyes: Eyes, source: Source, *, check: bool) -> list[Columns]:
             source.put_back(frames.part(slice(change, None)))
             break
     return rows
+
+
+def _require_lamp(lamp: Rectangle | None, reader: Reader) -> None:
+    """Refuse a lamp outside the picture: its grey value would be none."""
+    if lamp is None:
+        return
+    x, y, width, height = lamp
+    if min(x, y) < 0 or min(width, height) < 1 or x + width > reader.width or y + height > reader.height:
+        raise UsageError(
+            f"field.lamp: the rectangle {list(lamp)} (x, y, width, height in px) lies outside the picture of "
+            f"{reader.width} x {reader.height} px; correct it in the bench file"
+        )
 
 
 def _within(sightings: Sightings, lamp: Rectangle) -> NDArray[np.bool_]:

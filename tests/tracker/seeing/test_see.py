@@ -11,6 +11,7 @@ import pytest
 import tifffile
 from tracking_scores import Track, as_tracks, score
 
+from tracker.errors import UsageError
 from tracker.records import Flag, Recording, Seen, Settings
 from tracker.seeing.link import link
 from tracker.seeing.see import see
@@ -174,6 +175,17 @@ def test_region_and_time_window_restrict(tmp_path):
     ]
     assert len(d) > 100
     assert np.quantile(d, 0.98) < 0.1
+
+
+@pytest.mark.parametrize("lamp", [(1300, 8, 10, 10), (8, 2000, 10, 10), (8, 8, 5000, 4)])
+def test_a_lamp_outside_the_picture_is_refused_in_one_line(tmp_path, lamp):
+    """The rectangle and the picture's size are named, with the exit status of a wrong bench file."""
+    path, _ = make(tmp_path, SCENE)
+    with pytest.raises(
+        UsageError, match=rf"field.lamp.*\[{lamp[0]}, .*outside the picture of \d+ x \d+ px"
+    ) as told:
+        see(path, settings=Settings(), lamp=lamp)
+    assert told.value.exit_status == 2
 
 
 def test_lamp_series_follows_the_field(tmp_path):
