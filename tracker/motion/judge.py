@@ -22,6 +22,7 @@ STUCK_SHARE = 0.1  # of that droplet's diffusion
 LONG_GAP = 25  # frames: a droplet may leave the picture and come back
 LEAST_FILLED, LEAST_FILLED_NEAR = 0.2, 0.9  # shares of frames with a sighting: of all, and without long gaps
 LITTLE_INERTIA, MUCH_INERTIA = 1e-3, 1e-2  # excess of the drag that is noted, and that is doubted
+REST = 2.0  # standard uncertainties within which a speed is 0
 SURE = 0.95  # probability from which a charge number is called certain
 SHARES = (
     ("merged", Flag.MERGED, 0.2), ("out_of_focus", Flag.SOFT, 0.5), ("saturated", Flag.SATURATED, 0.5),
@@ -55,8 +56,8 @@ class Balance:
     time_std: float  # s, of a time somewhere in the segment
     voltage: float  # V at which it would hang still
     voltage_std: float  # V, own
-    statistic: float  # |speed| over its standard uncertainty
-    threshold: float = 2.0
+    statistic: float  # |speed| over its standard uncertainty, in the segment or from all, whichever is larger
+    threshold: float = REST
 
 
 def reasons_of(facts: Facts, air: AirCurrent, rests: Sequence[Balance], settings: Settings) -> list[str]:
@@ -233,9 +234,10 @@ def balances(segments: Sequence[SegmentRow], history: History) -> list[Balance]:
     Returns
     -------
     balances : list of Balance
-        A segment counts if its speed is 0 within 2 standard uncertainties, and these are below a fifth of the
-        fall speed. The balance voltage comes from all segments: -fall speed / drive per volt, of the part of
-        the charge that holds there.
+        A segment counts if its speed is 0 within 2 standard uncertainties, these are below a fifth of the fall
+        speed, and the speed that all segments together give for its voltage is 0 within 2 of its own as well:
+        one short segment alone would call a slow droplet at rest. The balance voltage comes from all segments:
+        -fall speed / drive per volt, of the part of the charge that holds there.
     """
     fit = history.fit
     found: list[Balance] = []
@@ -243,7 +245,7 @@ def balances(segments: Sequence[SegmentRow], history: History) -> list[Balance]:
         return found
     for row in segments:
         small = row.down_speed_std_m_s < 0.2 * abs(fit.fall_speed)
-        if row.voltage_v == 0 or not small or abs(row.down_speed_m_s) > 2 * row.down_speed_std_m_s:
+        if row.voltage_v == 0 or not small or abs(row.down_speed_m_s) > REST * row.down_speed_std_m_s:
             continue
         middle = 0.5 * (row.start_s + row.end_s)
         part = history.part_at(middle)
@@ -253,13 +255,21 @@ def balances(segments: Sequence[SegmentRow], history: History) -> list[Balance]:
         if not abs(drive * row.voltage_v) > 0.5 * abs(fit.fall_speed):
             continue  # a slow droplet without drive rests nowhere
         voltage = -fit.fall_speed / drive
-        i = 1 + part
-        slope = np.zeros(len(fit.covariance))
-        slope[0], slope[i] = -1 / drive, fit.fall_speed / drive**2
-        covariance = np.where(np.isfinite(fit.covariance), fit.covariance, 0.0)
-        std = float(np.sqrt(slope @ covariance @ slope))
+        std = _joint_std(history, part, (-1 / drive, fit.fall_speed / drive**2))
+        here = abs(row.down_speed_m_s) / row.down_speed_std_m_s
+        overall = abs(fit.fall_speed + drive * row.voltage_v) / _joint_std(
+            history, part, (1.0, row.voltage_v)
+        )
+        if overall > REST:
+            continue
         half = 0.5 * (row.end_s - row.start_s)
-        found.append(Balance(
-            row.segment, middle, half / np.sqrt(3), voltage, std, abs(row.down_speed_m_s) / row.down_speed_std_m_s
-        ))  # fmt: skip
+        found.append(Balance(row.segment, middle, half / np.sqrt(3), voltage, std, max(here, overall)))
     return found
+
+
+def _joint_std(history: History, part: int, slopes: tuple[float, float]) -> float:
+    """Standard uncertainty of what is linear in the fall speed and the drive per volt of one part."""
+    covariance = np.where(np.isfinite(history.fit.covariance), history.fit.covariance, 0.0)
+    slope = np.zeros(len(covariance))
+    slope[0], slope[1 + part] = slopes
+    return max(float(np.sqrt(slope @ covariance @ slope)), 1e-300)

@@ -72,8 +72,9 @@ _ALL = (
     Reason("streak", "Faster than the camera can follow: its spots are streaks.",
            "share of sightings that move by more than their width in an exposure", "above 0.3",
            "none: counted, not estimated", "doubt"),
-    Reason("balance", "Rests in a segment with the field on; the balance voltage is given with its uncertainty.",
-           "speed with the field on over its standard uncertainty",
+    Reason("balance", "Rests, within its uncertainty, with the field on; its balance voltage, with uncertainty,"
+           " stands in recording.json under details, balances.",
+           "speed with the field on, in the segment and from all segments, over its standard uncertainty",
            "below 2, and the uncertainty below a fifth of the fall speed",
            "none: an observation", "note"),
     Reason("neutral", "Carries no charge that can be seen; charge number 0.",
