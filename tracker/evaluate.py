@@ -162,17 +162,20 @@ def present_bench(old: Result, recording: Recording, bench: Path | str | None = 
 
 def _field(old: Result, tracks: Tracks, recording: Recording, bench: Bench) -> Field:
     """The field as the present bench gives it; a lamp's toggles are those seen before, at the present voltage."""
-    from tracker.voltage import field_of_tracks, known_field
+    from tracker.voltage import compare_sources, field_of_tracks, known_field
 
     spec = bench.field
     stored = field_from_json(old.recording["field"])
     if spec.source == "lamp":
         if stored.source != "lamp" or bench.voltage is None:
             raise ResultError(str(old.folder), "was measured without the lamp; measure the recording again")
-        return scaled_field(stored, bench.voltage.value)
-    if spec.source == "list" or (spec.source == "log" and spec.clock_offset is not None):
-        return known_field(spec.source, recording, bench)
-    return field_of_tracks(tracks, recording, bench)
+        field = scaled_field(stored, bench.voltage.value)
+    elif spec.source == "list" or (spec.source == "log" and spec.clock_offset is not None):
+        field = known_field(spec.source, recording, bench)
+    else:
+        field = field_of_tracks(tracks, recording, bench)
+    compare_sources(field, tracks, recording, bench)
+    return field
 
 
 def scaled_field(field: Field, voltage: float) -> Field:

@@ -11,7 +11,7 @@ from tracker.bench import Bench
 from tracker.errors import FieldError
 from tracker.motion.field import compare_fields, exposure_of, field_from_lamp, field_from_list
 from tracker.motion.fieldclock import fit_clock_offset
-from tracker.motion.fieldlog import field_from_log, read_log
+from tracker.motion.fieldlog import Log, field_from_log, read_log
 from tracker.records import Field, FloatArray, Recording, Seen, Settings, Tracks
 from tracker.seeing.link import link
 
@@ -45,12 +45,41 @@ def field_and_tracks(seen: Seen, bench: Bench, settings: Settings) -> tuple[Fiel
         field = known_field(spec.source, seen.recording, bench, lamp=seen.lamp)
     else:
         field = field_of_tracks(link(seen, field=None, settings=settings), seen.recording, bench)
-    for other in _other_sources(bench, seen):
-        compare_fields(field, known_field(other, seen.recording, bench, lamp=seen.lamp), seen.recording)
     from tracker.motion.fieldmotion import sharpened
 
     tracks = link(seen, field=field, settings=settings)
+    compare_sources(field, tracks, seen.recording, bench, lamp=seen.lamp)
     return sharpened(field, tracks, seen.recording, bench), tracks
+
+
+def compare_sources(
+    field: Field, tracks: Tracks, recording: Recording, bench: Bench, *, lamp: FloatArray | None = None
+) -> None:
+    """Compare the field with every further source that the bench file gives.
+
+    Parameters
+    ----------
+    field : Field
+        From the chosen source; the clock of its log is fitted already.
+    tracks : Tracks
+        By which the clock of a further log is set where the bench file leaves it open.
+    recording : Recording
+        Whose time is covered.
+    bench : Bench
+        With the sources.
+    lamp : ndarray of shape (frames,), optional
+        Mean grey of the lamp's rectangle; without it the lamp is not compared.
+
+    Raises
+    ------
+    FieldError
+        If two sources disagree; the message shows both.
+    """
+    for other in _other_sources(bench, lamp=lamp is not None):
+        compare_fields(field, known_field(other, recording, bench, lamp=lamp), recording)
+    spec = bench.field
+    if spec.source != "log" and spec.log is not None and spec.clock_offset is None:
+        compare_fields(field, fit_clock_offset(tracks, _log(bench, recording), recording, bench), recording)
 
 
 def known_field(source: str, recording: Recording, bench: Bench, *, lamp: FloatArray | None = None) -> Field:
@@ -83,12 +112,9 @@ def known_field(source: str, recording: Recording, bench: Bench, *, lamp: FloatA
         return field_from_lamp(
             lamp, recording, exposure=exposure_of(bench, recording), voltage=bench.voltage.value
         )
-    if spec.log is None or spec.clock_offset is None:
-        raise FieldError(
-            str(recording.path), "the log needs field.log and field.clock_offset in the bench file"
-        )
-    log = read_log(spec.log, time_column=spec.time_column, voltage_column=spec.voltage_column,
-                   time_unit=spec.time_unit, voltage_unit=spec.voltage_unit)  # fmt: skip
+    if spec.clock_offset is None:
+        raise FieldError(str(recording.path), "the log needs field.clock_offset in the bench file")
+    log = _log(bench, recording)
     return field_from_log(log, recording, offset=spec.clock_offset.value, offset_std=spec.clock_offset.std)
 
 
@@ -111,9 +137,7 @@ def field_of_tracks(tracks: Tracks, recording: Recording, bench: Bench) -> Field
     """
     spec = bench.field
     if spec.source == "log" and spec.log is not None:
-        log = read_log(spec.log, time_column=spec.time_column, voltage_column=spec.voltage_column,
-                       time_unit=spec.time_unit, voltage_unit=spec.voltage_unit)  # fmt: skip
-        return fit_clock_offset(tracks, log, recording, bench)
+        return fit_clock_offset(tracks, _log(bench, recording), recording, bench)
     if bench.voltage is None:
         raise FieldError(str(recording.path), "toggles from motion need cell.voltage in the bench file")
     from tracker.motion.fieldmotion import field_from_motion
@@ -121,9 +145,18 @@ def field_of_tracks(tracks: Tracks, recording: Recording, bench: Bench) -> Field
     return field_from_motion(tracks, recording, bench)
 
 
-def _other_sources(bench: Bench, seen: Seen) -> list[str]:
+def _log(bench: Bench, recording: Recording) -> Log:
+    """Read the log that the bench file names."""
+    spec = bench.field
+    if spec.log is None:
+        raise FieldError(str(recording.path), "the log needs field.log in the bench file")
+    return read_log(spec.log, time_column=spec.time_column, voltage_column=spec.voltage_column,
+                    time_unit=spec.time_unit, voltage_unit=spec.voltage_unit)  # fmt: skip
+
+
+def _other_sources(bench: Bench, *, lamp: bool) -> list[str]:
     """Name the sources, beside the chosen one, that the bench file gives and that need no droplets."""
     spec = bench.field
-    given = {"list": bool(spec.entries), "lamp": seen.lamp is not None,
+    given = {"list": bool(spec.entries), "lamp": lamp,
              "log": spec.log is not None and spec.clock_offset is not None}  # fmt: skip
     return [source for source, there in given.items() if there and source != spec.source]

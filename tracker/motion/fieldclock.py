@@ -27,6 +27,8 @@ CLOCK_GAIN, MOST_OF_ONE = (
     60.0,
     50.0,
 )  # chi-square by which another clock must be better to be told; of one droplet
+SURE_GAIN, SURE_SHARE = 100.0, 0.01  # chi-square, and median share of what a drive explains, beyond doubt
+DRIVEN = 20.0  # chi-square that a drive explains of a droplet that has a say on the clock
 MOST_DROPLETS = 30  # longest tracks that are used; more narrow the offset below what matters
 STEPS_AT_ONCE = 4_000_000  # numbers held at once in the first search
 
@@ -107,28 +109,84 @@ def clock_warnings(field: Field, droplets: Sequence[Path], recording: Recording)
     Returns
     -------
     warnings : tuple of str
-        One line, if the field moved by two frames or more (one second at most) explains the motion of most of
-        the droplets better, and of all by a chi-square of 60, of which one droplet gives 50 at most.
+        One line, if the field moved by two frames or more, half the recording at most, explains the motion of
+        most of the driven droplets better, and of all by a chi-square of 60, of which one droplet gives 50 at most.
+
+    Raises
+    ------
+    FieldError
+        If the chi-square passes 100, and the field where it is said to be leaves 1 % or more unexplained of what
+        the moved one explains of the middle droplet: no charge step or mistaken link does so. The message shows
+        the times of both.
     """
     usable = sorted(droplets, key=len, reverse=True)[:MOST_DROPLETS]
     usable = [path for path in usable if len(path.steps()) >= 2 * MIN_INCREMENTS]
     if field.source not in ("list", "log") or len(field.segments) < 2 or not usable:
         return ()
-    step = recording.frame_interval
     log = Log(field.knot_times, field.knot_volts, True, recording.path)
-    offsets: FloatArray = step * np.arange(-int(1 / step), int(1 / step) + 1).astype(np.float64)
-    here = len(offsets) // 2
-    gains = np.array([_coarse_gain([path], log, offsets, recording) for path in usable])
-    votes = gains - gains[:, here, None]
+    shifts = _shifts(recording)
+    gains = _gains(usable, log, shifts, recording, falling=True)
+    driven = gains.max(axis=1) > DRIVEN
+    votes = gains - gains[:, :1]
     votes *= np.minimum(1.0, MOST_OF_ONE / np.maximum(votes.max(axis=1), 1e-9))[:, None]
     best = int(np.argmax(votes.sum(axis=0)))
-    agreed = np.mean(votes[:, best] > 0) > 0.5 and votes[:, best].sum() > CLOCK_GAIN
-    if abs(offsets[best]) < 1.5 * step or not agreed:
+    gain = float(votes[:, best].sum())
+    if abs(shifts[best]) < 1.5 * recording.frame_interval or gain <= CLOCK_GAIN:
         return ()
-    late = "later" if offsets[best] > 0 else "earlier"
+    if np.mean(votes[driven, best] > 0) <= 0.5:
+        return ()
+    found = _best_shifts(usable, log, shifts, recording)
+    share = float(np.median(1 - gains[driven, 0] / np.maximum(gains[driven, best], DRIVEN)))
+    if gain > SURE_GAIN and share > SURE_SHARE:
+        raise FieldError(str(recording.path), _contradiction(field, found, int(np.sum(driven)), gain))
+    late = "later" if found[0] > 0 else "earlier"
     return (
-        f"the droplets see the field change about {abs(offsets[best]):.2f} s {late} than the {field.source} says;"
+        f"the droplets see the field change about {abs(found[0]):.2f} s {late} than the {field.source} says;"
         " check its times",
+    )
+
+
+def _shifts(recording: Recording) -> FloatArray:
+    """Shifts of a field in s: none, every frame within a second, then every tenth of a second to half the span."""
+    step, half = recording.frame_interval, 0.5 * float(np.diff(recording_span(recording))[0])
+    near = step * np.arange(1, int(min(1.0, half) / step) + 1)
+    far = np.arange(1.0 + COARSE, half, COARSE)
+    return np.concatenate(([0.0], near, -near, far, -far))
+
+
+def _best_shifts(usable: Sequence[Path], log: Log, shifts: FloatArray, recording: Recording) -> list[float]:
+    """Shifts in s, to 10 ms, that fit the droplets best; several where a schedule repeats, the shortest first."""
+    shifts = np.sort(shifts)
+    total = _gains(usable, log, shifts, recording, falling=True).sum(axis=0)
+    near = [i for i in _peaks(shifts, total) if total[i] > 0.95 * total.max() - LEAST_MARGIN]
+    found: list[tuple[float, float]] = []
+    for i in near:
+        fine = shifts[i] + np.arange(-COARSE, COARSE + FINE / 2, FINE)
+        gain = _gains(usable, log, fine, recording, falling=True).sum(axis=0)
+        found.append((float(gain.max()), float(fine[np.argmax(gain)])))
+    needed = max(found)[0] - max(LEAST_MARGIN, LEAST_RELATIVE_MARGIN * max(found)[0])
+    kept: list[float] = []
+    for gain, shift in sorted(found, reverse=True):
+        if gain >= needed and all(abs(shift - other) > 2 * COARSE for other in kept):
+            kept.append(shift)
+    return sorted(kept, key=abs)
+
+
+def _contradiction(field: Field, shifts: Sequence[float], droplets: int, gain: float) -> str:
+    """Times of the field as it is stated and as the droplets see it, in one line."""
+    stated = [segment.start for segment in field.segments[1:5]]
+    more = ", ..." if len(field.segments) > 5 else ""
+    said = ", ".join(f"{time:.2f}" for time in stated)
+    seen = ", ".join(f"{time + shifts[0]:.2f}" for time in stated)
+    open_by = " or ".join(f"{shift:+.2f} s" for shift in shifts)
+    if field.source == "log":
+        clocks = " or ".join(f"{field.clock_offset + shift:.2f} s" for shift in shifts)
+        what = f"field.clock_offset is {field.clock_offset:.2f} s, the droplets find about {clocks}"
+    else:
+        what = "correct field.list"
+    return (
+        f"the droplets contradict the {field.source}: it changes the field at {said}{more} s, {droplets} droplets"
+        f" see that at {seen}{more} s (shifted by {open_by}; chi-square {gain:.0f} better); {what}"
     )
 
 
@@ -144,7 +202,17 @@ def _search_range(log: Log, span: tuple[float, float]) -> FloatArray:
 
 
 def _coarse_gain(usable: Sequence[Path], log: Log, offsets: FloatArray, recording: Recording) -> FloatArray:
-    """Chi-square that the drive explains at each offset, steps taken as independent."""
+    """Chi-square that the drives of all droplets explain at each offset."""
+    return np.asarray(_gains(usable, log, offsets, recording).sum(axis=0))
+
+
+def _gains(
+    usable: Sequence[Path], log: Log, offsets: FloatArray, recording: Recording, *, falling: bool = False
+) -> FloatArray:
+    """Chi-square that each droplet's drive explains at each offset, steps taken as independent.
+
+    Where gravity's direction is known, that of a droplet which would rise with the field off is taken away.
+    """
     from scipy.integrate import cumulative_trapezoid
 
     times, volts = np.asarray(log.times), np.asarray(log.volts)
@@ -153,12 +221,12 @@ def _coarse_gain(usable: Sequence[Path], log: Log, offsets: FloatArray, recordin
     total = cumulative_trapezoid(volts, times, initial=0.0)
     middle = recording.frame_times + 0.5 * usable[0].exposure
     rows = max(1, STEPS_AT_ONCE // len(middle))
-    gain = np.zeros(len(offsets))
+    gain = np.zeros((len(usable), len(offsets)))
     for first in range(0, len(offsets), rows):
         part = slice(first, first + rows)
         at_frame = _integral(middle - offsets[part, None], times, volts, total)
-        for path in usable:
-            gain[part] += _white_gain(path, at_frame)
+        for j, path in enumerate(usable):
+            gain[j, part] = _white_gain(path, at_frame) - (_rise(path, at_frame) if falling else 0.0)
     return gain
 
 
@@ -175,6 +243,19 @@ def _white_gain(path: Path, at_frame: FloatArray) -> FloatArray:
         score = impulse @ (data * weight)
         gain += score**2 / np.maximum(power, 1e-300) / _step_variance(data * weight)
     return np.where(power > 1e-9 * float(power.max() + 1e-300), gain, 0.0)
+
+
+def _rise(path: Path, at_frame: FloatArray) -> FloatArray:
+    """Chi-square of one droplet for rising with the field off, for each row of volt seconds at the frames."""
+    steps = path.steps()
+    weight, drift = 1 / np.sqrt(steps.dt), np.sqrt(steps.dt)
+    impulse = (at_frame[:, path.frames[steps.last]] - at_frame[:, path.frames[steps.first]]) * weight
+    power = np.maximum(np.einsum("ij,ij->i", impulse, impulse), 1e-300)
+    alone = drift - impulse * ((impulse @ drift) / power)[:, None]
+    left = np.einsum("ij,ij->i", alone, alone)
+    rise = np.minimum(alone @ (steps.down * weight), 0.0)
+    sound = left > 1e-6 * float(drift @ drift)
+    return np.where(sound, rise**2 / np.maximum(left, 1e-300), 0.0) / _step_variance(steps.down * weight)
 
 
 def _integral(at: FloatArray, times: FloatArray, volts: FloatArray, total: FloatArray) -> FloatArray:
@@ -306,9 +387,9 @@ class _Fit:
         weight /= weight.sum()
         mean = float(weight @ grid)
         spacing = grid[1] - grid[0]
-        toggles = max(1, int(np.sum(np.abs(np.diff(self.log.volts)) > 0.3 * np.ptp(self.log.volts))))
-        # Each jump may lie anywhere between two readings of the log.
-        sampling = self.log.interval**2 / 12 / toggles
+        # A jump may lie anywhere between two readings. A supply that is switched at whole steps of the log's pace
+        # puts all jumps at the same place between them, so their number does not lessen it.
+        sampling = self.log.interval**2 / 12
         return mean, float(np.sqrt(weight @ (grid - mean) ** 2 + spacing**2 / 12 + sampling))
 
 

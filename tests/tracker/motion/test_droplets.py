@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 import pickle
+import re
 from dataclasses import replace
 
 import numpy as np
@@ -11,6 +12,7 @@ import pytest
 from happening_droplets import Camera, Life, evaporated, made_bench, made_tracks, schedule
 
 from physics.droplet import ELEMENTARY_CHARGE
+from tracker.errors import FieldError
 from tracker.keeping.tables import CHANGES, DROPLETS, SEGMENTS, table
 from tracker.motion.droplets import evaluate_droplets, reason_sentences
 from tracker.motion.field import field_from_list
@@ -287,17 +289,35 @@ def test_droplets_that_shrink_together_are_told_with_their_rate(tmp_path):
     assert not any("together" in warning for warning in still.warnings)
 
 
-def test_a_list_whose_times_are_off_is_told(tmp_path):
-    """A list 0.2 s early is told with size and sense; the right one is not."""
-    lives = cluster(np.random.default_rng(100), 4)
-    tracks, recording = made_tracks(np.random.default_rng(101), lives, CAMERA)
+def shifted_list(tmp_path, shift, count=4):
+    """Evaluate droplets with the right list, its changes moved by a shift in s."""
+    tracks, recording = made_tracks(
+        np.random.default_rng(101), cluster(np.random.default_rng(100), count), CAMERA
+    )
     bench = made_bench(tmp_path, CAMERA)
-    early = [(max(t - 0.2, 0.0) if t else 0.0, v) for t, v in bench.field.entries]
-    for entries, told in ((bench.field.entries, False), (early, True)):
-        found = evaluate_droplets(
-            tracks, recording, field_from_list(entries, recording), bench, settings=Settings()
-        )
-        assert any("0.20 s later than the list" in warning for warning in found.warnings) is told
+    entries = [(t + shift if t else 0.0, v) for t, v in bench.field.entries]
+    return evaluate_droplets(
+        tracks, recording, field_from_list(entries, recording), bench, settings=Settings()
+    )
+
+
+def test_a_list_that_the_droplets_contradict_is_an_error_that_shows_both(tmp_path):
+    """A list 0.2 s early or 2.5 s late is refused with its times and those the droplets see; the right one is not."""
+    assert not any("says; check its times" in warning for warning in shifted_list(tmp_path, 0.0).warnings)
+    first = CAMERA.steps[1][0]
+    for shift in (-0.2, 2.5):
+        with pytest.raises(FieldError, match="contradict the list") as told:
+            shifted_list(tmp_path, shift)
+        assert f"at {first + shift:.2f}" in str(told.value)
+        # The droplets place the change to 10 ms or so; the message has two digits.
+        seen = float(re.search(r"see that at ([\d.]+)", str(told.value)).group(1))
+        assert seen == pytest.approx(first, abs=0.03)
+
+
+def test_a_list_that_two_droplets_see_too_early_is_told_as_a_warning(tmp_path):
+    """Two droplets are not enough to refuse a list 0.2 s early; size and sense are told."""
+    found = shifted_list(tmp_path, -0.2, count=2)
+    assert any("0.20 s later than the list" in warning for warning in found.warnings)
 
 
 def test_two_swapped_tracks_are_told_as_a_pair(tmp_path):
@@ -348,6 +368,28 @@ def test_a_droplet_at_balance_is_told_with_its_voltage(tmp_path):
     assert rests[0]["voltage_v"] == pytest.approx(200.0, abs=4 * rests[0]["voltage_std_v"])
     assert rests[0]["voltage_std_v"] < 10
     assert {row.kind for row in found.changes if row.droplet == 0} == {"balance"}
+
+
+def test_a_slow_droplet_is_not_at_rest_where_all_segments_tell_its_speed(tmp_path):
+    """At 80 % of its balance voltage some short segment's speed is 0 within two deviations; all segments know better."""
+    from diffusing_droplets import CONDITIONS
+
+    from physics.droplet import charge_at_balance, fall_speed
+
+    life = Life(0.55e-6, -3)
+    one = abs(float(charge_at_balance(life.radius, 1.0, CONDITIONS))) / ELEMENTARY_CHARGE
+    near = 0.8 * one / 3
+    camera = Camera(
+        seconds=60.0,
+        steps=tuple((2.0 * i, e / 6e-3) for i, e in enumerate([0, near, 0, 2 * near, 0, near] * 5)),
+    )
+    found = evaluate(tmp_path, np.random.default_rng(87), [life, Life(0.8e-6, 3)], camera=camera)
+    own = [row for row in found.segments if row.droplet == 0 and row.voltage_v == pytest.approx(near)]
+    fall = float(fall_speed(life.radius, CONDITIONS))
+    still = [abs(row.down_speed_m_s) < 2 * row.down_speed_std_m_s < 0.4 * fall for row in own]
+    assert any(still)
+    assert "balance" not in reasons(found)[0]
+    assert found.details["balances"] == []
 
 
 def test_a_droplet_that_drifts_sideways_against_the_others_is_doubted(tmp_path):

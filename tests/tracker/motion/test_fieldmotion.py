@@ -18,6 +18,7 @@ from tracker.motion.field import field_from_lamp, field_from_list
 from tracker.motion.fieldlog import Log
 from tracker.motion.fieldmotion import field_from_motion, fit_clock_offset, segments_of_motion, sharpened
 from tracker.records import Tracks
+from tracker.voltage import compare_sources, field_of_tracks, known_field
 
 
 def lives(rng, count):
@@ -180,6 +181,42 @@ def test_the_clock_offset_of_a_log_is_found_by_three_droplets(tmp_path, strength
         np.sort(np.abs(errors))[-2] < limit
     )  # all but one of eight: with 95 % inside, two outside happen in 6 % of seeds
     assert np.sqrt(np.mean(np.square(pulls))) == pytest.approx(1.0, abs=4 / np.sqrt(16))
+
+
+def test_jumps_that_all_lie_alike_between_two_readings_are_within_the_offsets_uncertainty(tmp_path):
+    """Switched and read at whole 20 ms, all jumps show half a reading early: their number does not average that."""
+    rng = np.random.default_rng(46)
+    steps = tuple((3.0 * i, 4e4 * (i % 2)) for i in range(8))
+    camera = Camera(seconds=24.0, steps=steps)
+    tracks, recording = made_tracks(rng, lives(rng, 10), camera)
+    bench = made_bench(tmp_path, camera, source="motion")
+    field = fit_clock_offset(
+        tracks, log_of(camera, shift=0.7, rate=1e-4, interval=0.02, rng=rng), recording, bench
+    )
+    # A uniform distribution over one interval: 5.8 ms; half the interval is its most.
+    assert field.clock_offset_std > 0.02 / np.sqrt(12)
+    assert abs(field.clock_offset + 0.7) < 2.5 * field.clock_offset_std
+
+
+@pytest.mark.parametrize(("late", "agree"), [(0.0, True), (1.0, False)])
+def test_a_list_beside_a_log_of_open_clock_is_compared_once_the_clock_is_found(tmp_path, late, agree):
+    """Whichever of the two is chosen, a list 1 s wrong is an error that shows both; the right one is accepted."""
+    camera, tracks, recording, bench = movie(np.random.default_rng(47), tmp_path, signs=(0, 1))
+    log = log_of(camera, shift=0.7)
+    lines = [f"{t!r},{v!r}" for t, v in zip(log.times.tolist(), log.volts.tolist(), strict=True)]
+    (tmp_path / "voltage.csv").write_text("\n".join(["time_s,voltage_v", *lines]), encoding="utf-8")
+    entries = tuple((t + late if t else 0.0, e * 6e-3) for t, e in camera.steps)
+    spec = replace(bench.field, entries=entries, log=tmp_path / "voltage.csv", clock_offset=None)
+    fitted = replace(bench, field=replace(spec, source="log"))
+    listed = replace(bench, field=replace(spec, source="list"))
+    for field, given in (
+        (field_of_tracks(tracks, recording, fitted), fitted), (known_field("list", recording, listed), listed),
+    ):  # fmt: skip
+        if agree:
+            compare_sources(field, tracks, recording, given)
+        else:
+            with pytest.raises(FieldError, match=r"(log and list|list and log) disagree"):
+                compare_sources(field, tracks, recording, given)
 
 
 def test_a_log_that_starts_early_and_runs_fast_gives_the_toggles(tmp_path):
