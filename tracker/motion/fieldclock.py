@@ -127,18 +127,21 @@ def clock_warnings(field: Field, droplets: Sequence[Path], recording: Recording)
     shifts = _shifts(recording)
     gains = _gains(usable, log, shifts, recording, falling=True)
     driven = gains.max(axis=1) > DRIVEN
+    if not driven.any():
+        return ()
+    gains, usable = gains[driven], [path for path, has in zip(usable, driven, strict=True) if has]
     votes = gains - gains[:, :1]
     votes *= np.minimum(1.0, MOST_OF_ONE / np.maximum(votes.max(axis=1), 1e-9))[:, None]
     best = int(np.argmax(votes.sum(axis=0)))
     gain = float(votes[:, best].sum())
     if abs(shifts[best]) < 1.5 * recording.frame_interval or gain <= CLOCK_GAIN:
         return ()
-    if np.mean(votes[driven, best] > 0) <= 0.5:
+    if np.mean(votes[:, best] > 0) <= 0.5:
         return ()
     found = _best_shifts(usable, log, shifts, recording)
-    share = float(np.median(1 - gains[driven, 0] / np.maximum(gains[driven, best], DRIVEN)))
+    share = float(np.median(1 - gains[:, 0] / np.maximum(gains[:, best], DRIVEN)))
     if gain > SURE_GAIN and share > SURE_SHARE:
-        raise FieldError(str(recording.path), _contradiction(field, found, int(np.sum(driven)), gain))
+        raise FieldError(str(recording.path), _contradiction(field, found, len(usable), gain))
     late = "later" if found[0] > 0 else "earlier"
     return (
         f"the droplets see the field change about {abs(found[0]):.2f} s {late} than the {field.source} says;"

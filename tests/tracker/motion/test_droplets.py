@@ -371,7 +371,7 @@ def test_a_droplet_at_balance_is_told_with_its_voltage(tmp_path):
 
 
 def test_a_slow_droplet_is_not_at_rest_where_all_segments_tell_its_speed(tmp_path):
-    """At 80 % of its balance voltage some short segment's speed is 0 within two deviations; all segments know better."""
+    """At 80 % of its balance voltage a short segment's speed may be 0 within two deviations; all together are not."""
     from diffusing_droplets import CONDITIONS
 
     from physics.droplet import charge_at_balance, fall_speed
