@@ -84,11 +84,10 @@ class Bench:
         """
         model = slip_model(self.slip)
         per_pixel = self.scale.metres_per_pixel_y
+        listed = max((abs(v) for _, v in self.field.entries), default=0.0)
         voltage = (
-            self.voltage.value
-            if self.voltage is not None
-            else max((abs(v) for _, v in self.field.entries), default=1.0)
-        )
+            self.voltage.value if self.voltage is not None else listed or 1.0
+        )  # never on: any value will do
         return {
             "scale": Measured(per_pixel, per_pixel * self.scale.relative_std, self.scale.picture or "stated"),
             "plate_gap": self.plate_gap,

@@ -397,6 +397,11 @@ def _show_result(result: Result) -> None:
     from tracker.showing.terminal import show_result
 
     show_result(result)
+    if result.droplets.empty:
+        name = result.recording.get("file", "")
+        typer.echo(
+            f"fallrise: {name}: no droplet was found; look at a frame with `fallrise overlay`", err=True
+        )
 
 
 def _result_json(result: Result) -> dict[str, Any]:

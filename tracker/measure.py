@@ -69,6 +69,10 @@ def measure(
 
     Thread(target=_import_ahead, daemon=True).start()
     seen = see(path, settings=settings, frame_rate=bench.frame_rate, lamp=bench.field.lamp, progress=progress)
+    if len(seen.recording.frame_times) < 2:
+        raise RecordingError(
+            str(path), "has only one frame, which gives no speed; record at least a few seconds"
+        )
     return _evaluated(seen, bench.fitted_to(seen.recording.width, seen.recording.height), settings, folder)
 
 

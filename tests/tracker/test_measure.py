@@ -233,21 +233,22 @@ def test_a_recording_without_droplets_is_an_empty_table(tmp_path):
     done = command("measure", tmp_path / "none.avi")
     assert done.returncode == 0, done.stderr
     assert "0 droplets" in done.stdout
+    assert "no droplet was found" in done.stderr
     assert list(pd.read_csv(tmp_path / "none.fallrise" / "droplets.csv").columns) == [
         c.name for c in TABLES["droplets"]
     ]
 
 
 def test_a_recording_of_one_frame_says_that_it_is_too_short(tmp_path):
-    """One frame gives no speed: an error or an empty table with a warning, never a number."""
+    """One frame gives no speed: one line, status 1, and nothing written."""
     scene = Scene(droplets=3, seconds=0.04, width=160, height=160)
     simulate(scene, tmp_path / "one.avi", seed=1)
     write_bench(scene, tmp_path / "bench.toml", recording="clip.avi")
     done = command("measure", tmp_path / "one.avi")
-    assert "Traceback" not in done.stderr
-    assert done.returncode in (0, 1)
-    text = done.stdout + done.stderr
-    assert "one frame" in text or "1 frame" in text
+    assert done.returncode == 1
+    assert len(done.stderr.strip().splitlines()) == 1
+    assert "only one frame" in done.stderr
+    assert not (tmp_path / "one.fallrise").exists()
 
 
 def test_an_output_folder_that_cannot_be_written_is_told_before_the_work(home, tmp_path):

@@ -210,12 +210,12 @@ def bench_text(scene: Scene, *, video: bool = True, log: str | None = None) -> s
         one voltage besides 0, else from a list.
     """
     volts = next((v for _, v in scene.plan if v), 0.0)
+    voltage = f'voltage = "{volts:.12g} V"\n' if volts else ""
     rate = "" if video else f'frame_rate = "{scene.frame_rate:.12g} Hz"\n'
     return f"""# a simulated bench
 [cell]
 plate_gap = "{scene.plate_gap * 1e3:.12g} mm"
-voltage = "{volts:.12g} V"
-[oil]
+{voltage}[oil]
 density = "{scene.oil_density:.12g} kg/m^3"
 [air]
 temperature = "{scene.temperature - 273.15:.9g} degC"
