@@ -10,7 +10,7 @@ from importlib.metadata import PackageNotFoundError, version
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
-from calibration.scale import Scale, scale_from_json, scale_to_json, to_metres
+from calibration.scale import Scale, scale_to_json, to_metres
 from tracker.bench import Bench
 from tracker.keeping.store import Result
 from tracker.keeping.tables import CHANGES, DROPLETS, SEGMENTS, TRACKS, table
@@ -295,22 +295,6 @@ def bench_json(bench: Bench, folder: Path) -> dict[str, Any]:
         "binning": bench.binning, "frame_rate_hz": bench.frame_rate, "voltage_rel_std": bench.voltage_rel_std,
         "oil_expansion_1_k": bench.oil_expansion, **quantities,
     }  # fmt: skip
-
-
-def stored_scale(provenance: dict[str, Any]) -> Scale:
-    """Give the scale of a result.
-
-    Parameters
-    ----------
-    provenance : dict
-        As in ``recording.json``.
-
-    Returns
-    -------
-    scale : Scale
-        For the recording's own pixels.
-    """
-    return scale_from_json(provenance["scale"])
 
 
 @lru_cache(maxsize=1)

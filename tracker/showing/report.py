@@ -10,11 +10,10 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 from numpy.typing import NDArray
 
-from physics.droplet import ELEMENTARY_CHARGE
 from tracker.motion.verdict import REASONS
 from tracker.showing.html import Grid, Picture, Section, render
 from tracker.showing.plots import new_figure, plot_recording
-from tracker.showing.terminal import missing, number, pair
+from tracker.showing.terminal import droplet_cells, missing
 from tracker.showing.unitwords import charge_unit_lines
 
 if TYPE_CHECKING:
@@ -296,16 +295,7 @@ def droplet_grid(droplets: pd.DataFrame) -> Grid:
     """
     heads = ("droplet", "verdict", "frames", "fall speed / (um/s)", "radius / um", "charge / 1e-19 C", "own", "shared",
              "charge / e", "number", "probability")  # fmt: skip
-    rows = []
-    for row in droplets.itertuples(index=False):
-        rows.append((
-            str(row.droplet), str(row.verdict), str(row.frames), pair(row.fall_speed_m_s, row.fall_speed_std_m_s, 1e6),
-            pair(row.radius_m, row.radius_std_m, 1e6), number(row.charge_c, 1e19, 3),
-            number(row.charge_own_std_c, 1e19, 3), number(row.charge_shared_std_c, 1e19, 3),
-            number(row.charge_c, 1 / ELEMENTARY_CHARGE, 2),
-            "" if missing(row.charge_number) else str(row.charge_number),
-            number(row.charge_number_probability, 1, 3),
-        ))  # fmt: skip
+    rows = [droplet_cells(row) for row in droplets.itertuples(index=False)]
     return Grid("Droplets; in brackets: standard uncertainty of the last digits", heads, tuple(rows))
 
 

@@ -7,6 +7,8 @@ from collections.abc import Callable, Iterator, Mapping
 from contextlib import contextmanager
 from typing import TYPE_CHECKING, Any
 
+from physics.droplet import ELEMENTARY_CHARGE
+
 if TYPE_CHECKING:
     from physics.budget import Budget
     from tracker.keeping.store import Result
@@ -83,8 +85,6 @@ def _droplet_table(result: Result) -> Any:
     from rich import box
     from rich.table import Table
 
-    from physics.droplet import ELEMENTARY_CHARGE
-
     heads = ("droplet", "verdict", "frames", "fall um/s", "radius um", "charge 1e-19 C", "own", "shared", "charge/e",
              "number", "P", "reasons")  # fmt: skip
     made = Table(box=box.SIMPLE, pad_edge=False)
@@ -93,21 +93,32 @@ def _droplet_table(result: Result) -> Any:
             head, justify="left" if head in ("verdict", "reasons") else "right", no_wrap=head != "reasons"
         )
     for row in result.droplets.itertuples(index=False):
-        made.add_row(
-            str(row.droplet),
-            str(row.verdict),
-            str(row.frames),
-            pair(row.fall_speed_m_s, row.fall_speed_std_m_s, 1e6),
-            pair(row.radius_m, row.radius_std_m, 1e6),
-            number(row.charge_c, 1e19, 3),
-            number(row.charge_own_std_c, 1e19, 3),
-            number(row.charge_shared_std_c, 1e19, 3),
-            number(row.charge_c, 1 / ELEMENTARY_CHARGE, 2),
-            "" if missing(row.charge_number) else str(row.charge_number),
-            number(row.charge_number_probability, 1, 3),
-            "" if missing(row.reasons) else str(row.reasons),
-        )
+        made.add_row(*droplet_cells(row), "" if missing(row.reasons) else str(row.reasons))
     return made
+
+
+def droplet_cells(row: Any) -> tuple[str, ...]:
+    """Write one droplet in units that a person reads, without its reasons.
+
+    Parameters
+    ----------
+    row : namedtuple
+        A row of `tracker.keeping.tables.DROPLETS`.
+
+    Returns
+    -------
+    cells : tuple of str
+        Number, verdict, frames, fall speed in um/s, radius in um, charge with its own and shared uncertainty in
+        1e-19 C, charge over e, charge number, its probability.
+    """
+    return (
+        str(row.droplet), str(row.verdict), str(row.frames), pair(row.fall_speed_m_s, row.fall_speed_std_m_s, 1e6),
+        pair(row.radius_m, row.radius_std_m, 1e6), number(row.charge_c, 1e19, 3),
+        number(row.charge_own_std_c, 1e19, 3), number(row.charge_shared_std_c, 1e19, 3),
+        number(row.charge_c, 1 / ELEMENTARY_CHARGE, 2),
+        "" if missing(row.charge_number) else str(row.charge_number),
+        number(row.charge_number_probability, 1, 3),
+    )  # fmt: skip
 
 
 def show_budgets(made: Mapping[int | None, Budget]) -> None:
