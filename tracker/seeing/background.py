@@ -3,7 +3,9 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Sequence
 from dataclasses import dataclass
+from functools import lru_cache
 from typing import Any
 
 import cv2
@@ -11,6 +13,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 F32 = NDArray[np.float32]
+Pictures = Sequence[NDArray[Any]] | NDArray[Any]  # of one size
 
 _LOW = 0.3  # quantile that a droplet in place for half the samples hardly moves
 _LOW_OFFSET = 0.5244  # standard deviations of a normal distribution from that quantile to its mean
@@ -63,25 +66,27 @@ def find_background(samples: NDArray[Any], *, black: float) -> Background:
 
 def temporal_level(samples: NDArray[Any]) -> F32:
     """Mean in time of the samples that show the background and no droplet."""
-    ordered = sort_in_time(samples)
-    n = len(ordered)
-    low = round(_LOW * (n - 1))
-    lower = max(0, round(0.08 * (n - 1)))
-    centre = ordered[low].astype(np.float32)
-    spread = centre - ordered[lower]
+    n = len(samples)
+    low, lower = round(_LOW * (n - 1)), max(0, round(0.08 * (n - 1)))
+    at_lower, at_low = ranks_in_time(samples, (lower, low))
+    centre = at_low.astype(np.float32)
+    spread = centre - at_lower
     # Both quantiles at the ranks that were taken, so that the offset is right for any number of samples.
     z_low, z_lower = _z((low + 0.625) / (n + 0.25)), _z((lower + 0.625) / (n + 0.25))
     sigma = np.maximum(_local_mean(spread, 31) / np.float32(z_low - z_lower), _change_sigma(samples))
     centre -= z_low * sigma
     half = _CLIP * sigma + 0.5
+    total, count = np.zeros(centre.shape, np.float32), np.zeros(centre.shape, np.float32)
     bottom, top = centre - half, centre + half
-    total = np.zeros(centre.shape, np.float32)
-    count = np.zeros(centre.shape, np.float32)
-    for picture in ordered:
-        inside = ((picture >= bottom) & (picture <= top)).astype(np.float32)
-        count += inside
-        total += inside * picture
-    return np.where(count > 0, total / np.maximum(count, 1), centre).astype(np.float32)
+    if samples.dtype.kind == "u":
+        most = np.iinfo(samples.dtype).max
+        bottom = np.clip(np.ceil(bottom), 0, most).astype(samples.dtype)
+        top = np.clip(np.floor(top), 0, most).astype(samples.dtype)
+    for picture in samples:
+        inside = cv2.inRange(picture, bottom, top)  # 255 where it is
+        cv2.accumulate(picture, total, mask=inside)
+        cv2.accumulate(inside, count)
+    return np.where(count > 0, 255 * total / np.maximum(count, 1), centre).astype(np.float32)
 
 
 def _change_sigma(samples: NDArray[Any]) -> float:
@@ -90,24 +95,39 @@ def _change_sigma(samples: NDArray[Any]) -> float:
     return max(float(np.abs(np.diff(chosen, axis=0)).mean(0).mean()) / 1.1284 * 0.9, 0.3)  # 2 / sqrt(pi)
 
 
-def sort_in_time(samples: NDArray[Any]) -> NDArray[Any]:
-    """Each pixel's samples in increasing order, by Batcher's odd-even merge network of picture-wide minima."""
-    n = len(samples)
-    ordered = [np.ascontiguousarray(s) for s in samples]
+def ranks_in_time(samples: Pictures, ranks: tuple[int, ...]) -> list[NDArray[Any]]:
+    """Each pixel's samples of the given ranks in increasing order, 0 the lowest; picture-wide minima and maxima."""
+    planes = list(samples)
+    for a, b, low, high in _network(len(planes), ranks):
+        first, second = planes[a], planes[b]
+        if low:
+            planes[a] = np.minimum(first, second)
+        if high:
+            planes[b] = np.maximum(first, second)
+    return [planes[r] for r in ranks]
+
+
+@lru_cache(maxsize=16)
+def _network(n: int, ranks: tuple[int, ...]) -> tuple[tuple[int, int, bool, bool], ...]:
+    """Comparisons (a, b, whether the lower, the higher is wanted) that bring the given ranks of n to their places.
+
+    Batcher's odd-even merge sort (K. E. Batcher, AFIPS Conf. Proc. 32 (1968) 307), without what no rank needs.
+    """
+    pairs = []
     p = 1
     while p < n:
         k = p
         while k >= 1:
-            for j in range(k % p, n - k, 2 * k):
-                for i in range(min(k, n - j - k)):
-                    a, b = i + j, i + j + k
-                    if a // (2 * p) == b // (2 * p):
-                        ordered[a], ordered[b] = (
-                            np.minimum(ordered[a], ordered[b]), np.maximum(ordered[a], ordered[b]),
-                        )  # fmt: skip
+            starts = [i + j for j in range(k % p, n - k, 2 * k) for i in range(min(k, n - j - k))]
+            pairs += [(a, a + k) for a in starts if a // (2 * p) == (a + k) // (2 * p)]
             k //= 2
         p *= 2
-    return np.stack(ordered)
+    needed, kept = set(ranks), []
+    for a, b in reversed(pairs):
+        if a in needed or b in needed:
+            kept.append((a, b, a in needed, b in needed))
+            needed |= {a, b}
+    return tuple(reversed(kept))
 
 
 def spatial_level(picture: F32, *, size: int = 41) -> F32:
@@ -181,8 +201,8 @@ def fill_restless(background: Background, samples: NDArray[Any], *, width: float
     size = (max(1, breadth // step), max(1, height // step))
     some = samples[:: max(1, len(samples) // 24)]
     rest = [cv2.resize(np.abs(_local_mean(p - background.level, 2 * step + 1)), size) for p in some]
-    usual = sort_in_time(np.stack(rest))[len(rest) // 2]
-    restless = (usual > _RESTLESS * max(float(np.median(usual)), 1e-3)).astype(np.uint8)
+    (usual,) = ranks_in_time(rest, (len(rest) // 2,))
+    restless: NDArray[Any] = (usual > _RESTLESS * max(float(np.median(usual)), 1e-3)).astype(np.uint8)
     restless = cv2.morphologyEx(restless, cv2.MORPH_OPEN, np.ones((2, 2), np.uint8))
     share = float(restless.mean())
     if not 0 < share < _MOST_RESTLESS:

@@ -10,7 +10,7 @@ import cv2
 import numpy as np
 from numpy.typing import NDArray
 
-from tracker.seeing.background import Background, sort_in_time
+from tracker.seeing.background import Background, Pictures, ranks_in_time
 from tracker.seeing.fit import Windows
 
 F32 = NDArray[np.float32]
@@ -26,7 +26,6 @@ _RESTLESS_DEPTH = (
 )
 _TAIL = (3.5, 3.75, 4.0, 4.25, 4.5, 4.75, 5.0, 5.25, 5.5, 5.75, 6.0)  # classes of heights that tell the tail
 _MOST_RAISED = 1.6  # times the threshold for white noise: more would be droplets taken for noise
-_MAX_CANDIDATES = 4000  # a frame with more shows no droplets but a change of the whole picture
 
 
 @dataclass(frozen=True, slots=True)
@@ -37,61 +36,69 @@ class Detector:
     sigma: float  # px of the binned picture, width of the filter
     level: F32  # filtered background, binned
     inverse_noise: F32  # 1 / standard deviation of the filtered residual, binned
-    threshold: float  # in standard deviations of the filtered residual
+    bar: F32  # filtered picture at the threshold, binned; infinite at the rim
     kernel: F32  # one-dimensional
-    frame_area: float  # px^2 of the binned picture
 
-    def filtered(self, picture: NDArray[Any]) -> F32:
-        """Picture binned and smoothed, less the background."""
-        return _smooth(picture, self.binning, self.kernel) - self.level
-
-    def candidates(self, pictures: list[NDArray[Any]]) -> Candidates:
+    def candidates(self, pictures: Pictures) -> Candidates:
         """Local maxima above the threshold.
 
         Parameters
         ----------
-        pictures : list of ndarray of shape (height, width)
+        pictures : sequence of ndarray of shape (height, width)
             A batch.
 
         Returns
         -------
         frame : ndarray of shape (N,)
-            Number of the picture in the batch.
+            Number of the picture in the batch, in increasing order.
         x, y : ndarray of shape (N,)
             px of the recording, from a parabola through the maximum and its neighbours.
         score : ndarray of shape (N,)
             Signal to noise after the filter.
         """
-        height, width = self.level.shape
-        stack = np.empty((len(pictures), height, width), np.float32)
-        for i, picture in enumerate(pictures):
-            _smooth(picture, self.binning, self.kernel, out=stack[i])
-        stack -= self.level
-        stack *= self.inverse_noise
-        return find_peaks(stack, self.threshold, self.binning)
+        smooth = np.empty_like(self.level)
+        flat, around = smooth.reshape(-1), _around(self.level.shape[1])
+        above, hoods = [], []
+        for picture in pictures:
+            _smooth(picture, self.binning, self.kernel, out=smooth)
+            above.append(np.flatnonzero(smooth > self.bar))
+            hoods.append(flat[above[-1][:, None] + around])
+        frame = np.repeat(np.arange(len(pictures)), [len(a) for a in above])
+        place = np.concatenate(above)
+        near = place[:, None] + around
+        hood = (np.concatenate(hoods) - self.level.reshape(-1)[near]) * self.inverse_noise.reshape(-1)[near]
+        return _peaks(frame, place, hood, width=self.level.shape[1], binning=self.binning)
 
 
-def find_peaks(stack: F32, threshold: float, binning: int) -> Candidates:
-    """Pixels above `threshold` that are the highest of their 3 x 3, with sub-pixel place; see `candidates`."""
+def find_peaks(stack: F32, threshold: float) -> Candidates:
+    """Pixels of pictures above `threshold` that are the highest of their 3 x 3; see `Detector.candidates`."""
     _, height, width = stack.shape
     flat = stack.reshape(-1)
-    above = np.flatnonzero(flat > threshold)
-    row, column = np.divmod(above % (height * width), width)
+    frame, place = np.divmod(np.flatnonzero(flat > threshold), height * width)
+    row, column = np.divmod(place, width)
     inner = (row > 0) & (row < height - 1) & (column > 0) & (column < width - 1)
-    above = above[inner]
-    value = flat[above]
-    top = np.ones(len(above), np.bool_)
-    for offset in (-width - 1, -width, -width + 1, -1):
-        top &= value > flat[above + offset]
-    for offset in (1, width - 1, width, width + 1):
-        top &= value >= flat[above + offset]
-    above, value = above[top], value[top]
-    frame, rest = np.divmod(above, height * width)
-    row, column = np.divmod(rest, width)
-    dx = _vertex(flat[above - 1], value, flat[above + 1])
-    dy = _vertex(flat[above - width], value, flat[above + width])
-    half = (binning - 1) / 2
-    return frame, (column + dx) * binning + half, (row + dy) * binning + half, value.astype(np.float64)
+    frame, place = frame[inner], place[inner]
+    hood = flat[(frame * height * width + place)[:, None] + _around(width)]
+    return _peaks(frame, place, hood, width=width, binning=1)
+
+
+def _around(width: int) -> NDArray[np.int64]:
+    """Where the 3 x 3 around a pixel lie in a flat picture, row by row; the pixel itself is the fifth."""
+    return np.add.outer(width * np.arange(-1, 2), np.arange(-1, 2)).reshape(-1)
+
+
+def _peaks(
+    frame: NDArray[np.int64], place: NDArray[np.int64], hood: F32, *, width: int, binning: int
+) -> Candidates:
+    """Those pixels that are the highest of their 3 x 3, with sub-pixel place and height."""
+    value = hood[:, 4]
+    top = (value[:, None] > hood[:, :4]).all(1) & (value[:, None] >= hood[:, 5:]).all(1)
+    frame, place, hood = frame[top], place[top], hood[top]
+    value = hood[:, 4]
+    row, column = np.divmod(place, width)
+    x = (column + _vertex(hood[:, 3], value, hood[:, 5])) * binning + (binning - 1) / 2
+    y = (row + _vertex(hood[:, 1], value, hood[:, 7])) * binning + (binning - 1) / 2
+    return frame, x, y, value.astype(np.float64)
 
 
 def _vertex(before: F32, at: F32, after: F32) -> NDArray[np.float64]:
@@ -160,7 +167,9 @@ def build_detector(
     theory = threshold_for(false_alarms, area, sigma)
     found = min(_threshold_of_tail(stack, false_alarms), _MOST_RAISED * theory)
     threshold = max(theory, found)
-    detector = Detector(binning, sigma, smooth_level, inverse, threshold, kernel, area)
+    bar = smooth_level + np.float32(threshold) / inverse
+    bar[[0, -1]] = bar[:, [0, -1]] = np.inf
+    detector = Detector(binning, sigma, smooth_level, inverse, bar, kernel)
     return detector, {"threshold": threshold, "threshold_white_noise": theory, "threshold_of_tail": found}
 
 
@@ -194,7 +203,7 @@ def local_noise(stack: F32, *, tile: int) -> F32:
     smooth = noise_map(stack, tile=tile)
     if len(stack) < _RESTLESS_SAMPLES:
         return smooth
-    low = sort_in_time(np.minimum(stack, 0))[round(0.12 * (len(stack) - 1))]
+    (low,) = ranks_in_time(np.minimum(stack, 0), (round(0.12 * (len(stack) - 1)),))
     own = cv2.blur(-low, (3, 3)) / np.float32(_RESTLESS_DEPTH)
     return np.asarray(np.maximum(smooth, own), np.float32)
 
@@ -226,7 +235,7 @@ def _threshold_of_tail(stack: F32, rate: float) -> float:
     Heights of maxima between 3.5 and 6 standard deviations follow h exp(-h^2 / 2 c^2) with c = 1 for Gaussian
     noise; c is fitted, with the even floor that real droplets make, as counted between 7 and 10, taken off.
     """
-    _, _, _, height = find_peaks(stack, _TAIL[0], 1)
+    _, _, _, height = find_peaks(stack, _TAIL[0])
     floor = np.count_nonzero((height >= 7) & (height < 10)) / 3
     edges = np.array(_TAIL)
     count = np.histogram(height, edges)[0] - floor * np.diff(edges)
@@ -247,13 +256,13 @@ def _threshold_of_tail(stack: F32, rate: float) -> float:
 
 
 def cut_windows(
-    pictures: NDArray[Any], at: Places, *, reach: int, background: Background, full_scale: float
+    pictures: Pictures, at: Places, *, reach: int, background: Background, full_scale: float
 ) -> Windows:
     """Cut squares of side 2 reach + 1 around places; at the edge of the picture they are moved inward.
 
     Parameters
     ----------
-    pictures : ndarray of shape (n, height, width)
+    pictures : sequence of n ndarray of shape (height, width)
         A batch.
     at : tuple of three ndarray of shape (N,)
         Picture of the batch, x and y in px.
@@ -273,8 +282,12 @@ def cut_windows(
     height, width = level.shape
     left = np.clip(np.rint(x).astype(np.int64) - reach, 0, width - side)
     top = np.clip(np.rint(y).astype(np.int64) - reach, 0, height - side)
-    view = np.lib.stride_tricks.sliding_window_view
-    raw = view(pictures, (side, side), axis=(1, 2))[frame, top, left]
-    back = view(level, (side, side))[top, left]
-    shades = view(shade, (side, side))[top, left]
-    return Windows(left, top, raw - back, back, shades, raw >= full_scale)
+    columns = (left[:, None] + np.arange(side))[:, None, :]
+    rows = (top[:, None] + np.arange(side))[:, :, None]
+    raw = np.empty((len(x), side, side), pictures[0].dtype)
+    order = np.argsort(frame, kind="stable")
+    for chosen in np.split(order, np.flatnonzero(np.diff(frame[order])) + 1):
+        if len(chosen):
+            raw[chosen] = pictures[frame[chosen[0]]][rows[chosen], columns[chosen]]
+    back = level[rows, columns]
+    return Windows(left, top, raw - back, back, shade[rows, columns], raw >= full_scale)

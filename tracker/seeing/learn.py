@@ -191,7 +191,7 @@ def scale_search(residual: F32) -> tuple[float, float]:
     noise = [max(n, 0.02) for n in noise]
     ratio = np.stack([f / n for f, n in zip(smooth, noise, strict=True)])
     best = ratio.max(0)
-    frame, x, y, score = find_peaks(best, _SEEN, 1)
+    frame, x, y, score = find_peaks(best, _SEEN)
     at = (frame, np.rint(y).astype(int), np.rint(x).astype(int))
     which = ratio[(slice(None), *at)].argmax(0)
     order = np.argsort(-score)[:_TEACHERS]
@@ -229,7 +229,7 @@ def _lone_spots(
     smooth = np.stack([smoothed(r, width) for r in residual])
     empty = camera.read_variance + camera.gain * float(np.median(residual))
     smooth /= math.sqrt(empty / (4 * math.pi * width**2))
-    frame, x, y, score = find_peaks(smooth, _SEEN, 1)
+    frame, x, y, score = find_peaks(smooth, _SEEN)
     apart = 1e6  # px between the planes of different pictures
     tree = cKDTree(np.column_stack([x, y, apart * frame]))
     lone = np.ones(len(x), np.bool_)

@@ -9,6 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from tracker.records import Flag
+from tracker.seeing.background import Pictures
 from tracker.seeing.crowd import Pairs, fit_pairs, near_pairs, split_starts
 from tracker.seeing.detect import cut_windows
 from tracker.seeing.fit import Spots, Windows, fit_spots
@@ -53,8 +54,7 @@ def look(eyes: Eyes, pictures: list[NDArray[Any]], numbers: Rows) -> Columns:
     if not pictures:
         return {}
     frame, x, y, _ = eyes.detector.candidates(pictures)
-    stack = np.stack(pictures)
-    windows = _cut(eyes, stack, frame, x, y, eyes.reach)
+    windows = _cut(eyes, pictures, frame, x, y, eyes.reach)
     width = np.full(len(x), eyes.width)
     spots = fit_spots(windows, (x, y), camera=eyes.camera, width=(width, width), rounds=2)
     sound = spots.good & (np.hypot(spots.x - x, spots.y - y) < 2 * eyes.width)
@@ -64,10 +64,10 @@ def look(eyes: Eyes, pictures: list[NDArray[Any]], numbers: Rows) -> Columns:
     table = _table(spots, frame)
     table["flags"] |= np.where(windows.bad.any((1, 2)), int(Flag.SATURATED), 0)
     crowded = near_pairs(frame, spots.x, spots.y, reach=_NEIGHBOUR * eyes.width)
-    table = _fit_neighbours(eyes, stack, table, crowded)
+    table = _fit_neighbours(eyes, pictures, table, crowded)
     alone = np.ones(len(frame), np.bool_)
     alone[crowded.ravel()] = False
-    table = _fit_odd(eyes, stack, table, spots, np.flatnonzero(_is_odd(spots) & alone))
+    table = _fit_odd(eyes, pictures, table, spots, np.flatnonzero(_is_odd(spots) & alone))
     spotlike = table["excess"] < _MOST_EXCESS
     return _finish(eyes, {k: v[spotlike] for k, v in table.items()}, numbers)
 
@@ -83,10 +83,10 @@ def _is_odd(spots: Spots) -> NDArray[np.bool_]:
 
 
 def _cut(
-    eyes: Eyes, stack: NDArray[Any], frame: Rows, x: NDArray[np.float64], y: NDArray[np.float64], reach: int
+    eyes: Eyes, pictures: Pictures, frame: Rows, x: NDArray[np.float64], y: NDArray[np.float64], reach: int
 ) -> Windows:
     return cut_windows(
-        stack, (frame, x, y), reach=reach, background=eyes.background, full_scale=eyes.camera.full_scale
+        pictures, (frame, x, y), reach=reach, background=eyes.background, full_scale=eyes.camera.full_scale
     )
 
 
@@ -100,7 +100,7 @@ def _table(spots: Spots, frame: Rows) -> Columns:
     }  # fmt: skip
 
 
-def _fit_neighbours(eyes: Eyes, stack: NDArray[Any], table: Columns, pairs: Rows) -> Columns:
+def _fit_neighbours(eyes: Eyes, pictures: Pictures, table: Columns, pairs: Rows) -> Columns:
     """Fit spots with a near neighbour again, jointly with it, all others taken off."""
     if len(pairs) == 0:
         return table
@@ -108,7 +108,7 @@ def _fit_neighbours(eyes: Eyes, stack: NDArray[Any], table: Columns, pairs: Rows
     i, j = pairs.T
     reach = _pair_reach(eyes)
     x, y = (0.5 * (table[c][i] + table[c][j]) for c in "xy")
-    windows = _cut(eyes, stack, table["frame"][i], x, y, reach)
+    windows = _cut(eyes, pictures, table["frame"][i], x, y, reach)
     for _ in range(2):
         start = np.stack([table[c][k] for k in (i, j) for c in ("amplitude", "x", "y")], 1)
         cleared = _without_others(windows, table, pairs, eyes.width)
@@ -163,13 +163,13 @@ def _without_others(windows: Windows, table: Columns, pairs: Rows, width: float)
     return Windows(windows.left, windows.top, grey, windows.background, windows.shade, windows.bad)
 
 
-def _fit_odd(eyes: Eyes, stack: NDArray[Any], table: Columns, spots: Spots, rows: Rows) -> Columns:
+def _fit_odd(eyes: Eyes, pictures: Pictures, table: Columns, spots: Spots, rows: Rows) -> Columns:
     """Fit spots that are no single sharp ones: as streaks, with their own widths, or as two."""
     if len(rows) == 0:
         return table
     table = {k: v.copy() for k, v in table.items()}
     x, y = table["x"][rows], table["y"][rows]
-    windows = _cut(eyes, stack, table["frame"][rows], x, y, _pair_reach(eyes))
+    windows = _cut(eyes, pictures, table["frame"][rows], x, y, _pair_reach(eyes))
     start = np.full(len(rows), eyes.width)
     wide = fit_spots(windows, (x, y), camera=eyes.camera, width=(start, start), free_width=True, rounds=8)
     fine = wide.good & (np.hypot(wide.x - x, wide.y - y) < 2 * eyes.width)
