@@ -55,11 +55,14 @@ def measure(
     FallriseError
         One line: what, which file, what to do. Nothing that was there before is lost.
     """
+    import cv2
+
     from tracker.bench import Bench, load_bench
     from tracker.keeping.store import result_folder
     from tracker.records import Settings
     from tracker.seeing.see import see
 
+    cv2.setNumThreads(1)  # the pictures are small, and the other cores decode
     path = Path(path)
     settings = settings or Settings()
     _require_recording(path)

@@ -7,7 +7,6 @@ import queue
 import threading
 from collections.abc import Iterator
 from dataclasses import dataclass
-from itertools import pairwise
 from pathlib import Path
 from types import TracebackType
 
@@ -20,7 +19,8 @@ from tracker.seeing.sources import Form, Picture, RawFrame, Source, natural_orde
 
 _BATCH_BYTES = 8_000_000  # of pictures handed over at once: fewer switches between decoding and work
 _LEAST_BATCH, _MOST_BATCH = 4, 32  # pictures
-_IN_FLIGHT = 3  # batches that may wait
+_WAITING_BYTES = 96_000_000  # of pictures that may wait: decoding goes on while the recording is learned
+_LEAST_WAITING = 3  # batches
 _GRID = 8  # every eighth pixel of every eighth row tells a repeated picture
 _REPEAT_SHARE = 0.25  # of the usual difference between frames; copies through a lossy codec reach about 0.15
 _HISTORY = 64  # differences that make up the usual one
@@ -46,7 +46,9 @@ class Reader:
     def __init__(self, path: Path, source: Source) -> None:
         self.path, self.form = path, source.form
         self._source = source
-        self._queue: queue.Queue[list[RawFrame] | Exception | None] = queue.Queue(_IN_FLIGHT)
+        self._size = min(max(_BATCH_BYTES // source.form.picture_bytes, _LEAST_BATCH), _MOST_BATCH)
+        waiting = max(_WAITING_BYTES // (self._size * source.form.picture_bytes), _LEAST_WAITING)
+        self._queue: queue.Queue[list[RawFrame] | Exception | None] = queue.Queue(waiting)
         self._stop = threading.Event()
         self._thread: threading.Thread | None = None
         self._hash = _Hash(path)
@@ -55,7 +57,6 @@ class Reader:
         self._untimed = self._unordered = self._damaged = 0
         self._differences: list[float] = []
         self._last: Picture | None = None
-        self._size = min(max(_BATCH_BYTES // source.form.picture_bytes, _LEAST_BATCH), _MOST_BATCH)
 
     @property
     def width(self) -> int:
@@ -163,8 +164,8 @@ class Reader:
     def _find_repeats(self, pictures: list[Picture]) -> NDArray[np.bool_]:
         """Which pictures are copies of the one before, by their differences on a coarse grid."""
         chain = pictures if self._last is None else [self._last, *pictures]
-        grids = [np.asarray(p[::_GRID, ::_GRID], np.int32) for p in chain]
-        changes = [float(np.abs(b - a).mean()) for a, b in pairwise(grids)]
+        grids = np.stack([p[::_GRID, ::_GRID] for p in chain]).astype(np.int32)
+        changes = np.abs(np.diff(grids, axis=0)).mean((1, 2)).tolist()
         repeated = np.zeros(len(pictures), np.bool_)
         offset = len(pictures) - len(changes)
         usual = float(np.median(self._differences + changes)) if changes else 0.0

@@ -189,11 +189,14 @@ def scale_search(residual: F32) -> tuple[float, float]:
     coarse = [i for i, s in enumerate(scales) if s <= _COARSE]
     noise = [max(raw[i : coarse[-1] + 1] or [raw[i]]) / s for i, s in enumerate(scales)]
     noise = [max(n, 0.02) for n in noise]
-    ratio = np.stack([f / n for f, n in zip(smooth, noise, strict=True)])
-    best = ratio.max(0)
+    for pictures, n in zip(smooth, noise, strict=True):
+        np.divide(pictures, np.float32(n), out=pictures)
+    best = smooth[0].copy()
+    for pictures in smooth[1:]:
+        np.maximum(best, pictures, out=best)
     frame, x, y, score = find_peaks(best, _SEEN)
     at = (frame, np.rint(y).astype(int), np.rint(x).astype(int))
-    which = ratio[(slice(None), *at)].argmax(0)
+    which = np.argmax([pictures[at] for pictures in smooth], axis=0)
     order = np.argsort(-score)[:_TEACHERS]
     order = order[score[order] > _CLEAR * np.quantile(score, 0.95)] if len(order) else order
     index = _DEFAULT_SCALE if len(order) < _FEW else int(np.median(which[order]))

@@ -42,8 +42,12 @@ class Light:
 
 def coarse(picture: NDArray[Any], black: float) -> F32:
     """Every so manieth pixel of every so manieth row, some thousand in all; grey over black."""
+    return np.asarray(_grid(picture), np.float32) - np.float32(black)
+
+
+def _grid(picture: NDArray[Any]) -> NDArray[Any]:
     step = max(_GRID, int(min(picture.shape) / _ACROSS))
-    return np.asarray(picture[step // 2 :: step, step // 2 :: step], np.float32) - np.float32(black)
+    return picture[step // 2 :: step, step // 2 :: step]
 
 
 def light_of(samples: NDArray[Any], level: F32 | None, black: float) -> Light:
@@ -89,14 +93,16 @@ def compare(light: Light, pictures: list[NDArray[Any]]) -> tuple[FloatArray, Flo
     mismatch : ndarray of shape (n,)
         Mean absolute difference after that, grey.
     """
-    grids = np.stack([coarse(p, light.black) for p in pictures]).reshape(len(pictures), -1)
+    grids = np.stack([_grid(p) for p in pictures]).reshape(len(pictures), -1).astype(np.float32)
+    grids -= np.float32(light.black)
     ground = light.grid.reshape(-1)
     bright = ground > _LEAST_LIGHT
     ratio = np.ones(len(pictures))
     if np.count_nonzero(bright) > ground.size // 4:
-        ratio = np.maximum(np.median(grids[:, bright] / ground[bright], axis=1), 1e-3).astype(np.float64)
-    rest = grids - ratio[:, None].astype(np.float32) * ground
-    return ratio, np.abs(rest).mean(1, dtype=np.float64)
+        lit = grids / ground if bright.all() else grids[:, bright] / ground[bright]
+        ratio = np.maximum(np.median(lit, axis=1, overwrite_input=True), 1e-3).astype(np.float64)
+    grids -= ratio[:, None].astype(np.float32) * ground
+    return ratio, np.abs(grids, out=grids).mean(1, dtype=np.float64)
 
 
 def even(light: Light, pictures: list[NDArray[Any]], ratio: FloatArray) -> list[NDArray[Any]]:
