@@ -29,7 +29,7 @@ from tracker.simulate.motion import scene_conditions
 from tracker.term.drift import bench_drifts
 from tracker.term.ledger import read_ledger
 from tracker.term.pool import pool_of
-from tracker.term.report import read_results
+from tracker.term.reading import read_results
 
 BENCHES = ("bench A", "bench B", "bench C")
 WEEKS = 12

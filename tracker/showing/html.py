@@ -4,7 +4,8 @@ from __future__ import annotations
 
 import base64
 import io
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
+from contextlib import contextmanager
 from dataclasses import dataclass
 from html import escape
 from typing import TYPE_CHECKING
@@ -123,14 +124,33 @@ def _cell(text: str) -> str:
 
 
 def _picture(picture: Picture) -> str:
-    image, kind = svg_of(picture.figure), "svg+xml"
-    if len(image) > _LARGEST_SVG:
-        image, kind = _png_of(picture.figure), "png"
+    with _laid_out(picture.figure):
+        image, kind = svg_of(picture.figure), "svg+xml"
+        if len(image) > _LARGEST_SVG:
+            image, kind = _png_of(picture.figure), "png"
     data = base64.b64encode(image).decode()
     return (
         f"<figure><figcaption>{escape(picture.title)}</figcaption>\n"
         f'<img alt="{escape(picture.text)}" src="data:image/{kind};base64,{data}"></figure>\n'
     )
+
+
+@contextmanager
+def _laid_out(figure: Figure) -> Iterator[None]:
+    """Lay a figure out once; matplotlib would draw it twice for each file, once only to find its layout."""
+    engine = figure.get_layout_engine()
+    if engine is None:
+        yield
+        return
+    dpi = figure.get_dpi()
+    figure.set_dpi(72)  # that of SVG files
+    try:
+        engine.execute(figure)
+        figure.set_layout_engine(None)
+        yield
+    finally:
+        figure.set_dpi(dpi)
+        figure.set_layout_engine(engine)
 
 
 def _png_of(figure: Figure) -> bytes:

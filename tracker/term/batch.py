@@ -12,6 +12,7 @@ from tracker.records import Settings
 from tracker.term.crew import Crew, LocalCrew, run_all
 from tracker.term.ledger import Entry, Ledger, read_ledger, write_ledger
 from tracker.term.lock import locked
+from tracker.term.reading import Reading
 from tracker.term.resume import clear_leftovers, made_entry, settings_key, standing, task_stamps
 from tracker.term.summary import write_summary
 from tracker.term.walk import Stamp, Task, find_tasks
@@ -93,22 +94,26 @@ def run_batch(
         raise ResultError(
             str(folder), "holds no recordings; known are video files, TIFF stacks, picture folders"
         )
-    with locked(out) as lock:
+    with locked(out) as lock, Reading(out) as reading:
         clear_leftovers(out)
         old = read_ledger(out)
         entries, todo = _sort(tasks, old, options)
         if entries != old:
             write_ledger(out, entries.values())
+        if todo:
+            reading.start(entries.values())
         try:
             with closing(_measure(todo, out, options, lock)) as made:
                 _tell(progress, entries, tasks)
                 for entry in made:
                     entries[entry.recording] = entry
+                    reading.add(entry)
                     _tell(progress, entries, tasks)
         finally:  # what is finished is in the tables, whatever ended this run
             if todo:
                 clear_leftovers(out)
-            changed = write_summary(out, [entries[task.name] for task in tasks if task.name in entries])
+            made_now = [entries[task.name] for task in tasks if task.name in entries]
+            changed = write_summary(out, made_now, read=reading.results)
     return Batch(out, tuple(entries[task.name] for task in tasks), len(todo), changed)
 
 

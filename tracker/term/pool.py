@@ -211,7 +211,7 @@ def _odd_benches(
 
 def _widened(unit: ChargeUnit, alone: Sequence[ChargeUnit], shared: Sequence[float]) -> ChargeUnit:
     """Widen the uncertainty of a unit whose benches differ by more than theirs say (Birge's ratio)."""
-    from scipy.stats import chi2
+    from scipy.special import chdtri
 
     rows = [
         (u.unit, np.hypot(u.unit_own_std, u.unit * s))
@@ -223,7 +223,7 @@ def _widened(unit: ChargeUnit, alone: Sequence[ChargeUnit], shared: Sequence[flo
     value, std = np.array(rows).T
     mean = np.average(value, weights=std**-2.0)
     square, dof = float(np.sum(((value - mean) / std) ** 2)), len(rows) - 1
-    if square <= chi2.isf(0.003, dof):
+    if square <= chdtri(dof, 0.003):
         return unit
     factor = float(np.sqrt(square / dof))
     bands = [tuple(unit.unit + factor * (end - unit.unit) for end in band)

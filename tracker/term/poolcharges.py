@@ -141,10 +141,14 @@ def kept_droplets(droplets: pd.DataFrame, own_radius: Mapping[int, float] | None
         The same columns and ``rel_std``: relative, through the radius; a charge at a given drive goes with
         the radius to the power 1.1.
     """
-    good = (droplets["verdict"] == "keep") & droplets["charge_c"].notna() & (droplets["charge_own_std_c"] > 0)
-    kept = droplets[good.fillna(False)].copy()
-    own = kept["droplet"].map(dict(own_radius or {})).astype("float64")
-    kept["rel_std"] = (1.1 * own.fillna(kept["radius_std_m"] / kept["radius_m"])).fillna(0.0)
+    charge, std = (droplets[name].to_numpy(float) for name in ("charge_c", "charge_own_std_c"))
+    kept_rows = (droplets["verdict"] == "keep").to_numpy(bool, na_value=False) & ~np.isnan(charge) & (std > 0)
+    kept = droplets[kept_rows].copy()
+    radius, radius_std = (kept[name].to_numpy(float) for name in ("radius_m", "radius_std_m"))
+    stated = dict(own_radius or {})
+    own = np.array([stated.get(droplet, np.nan) for droplet in kept["droplet"]], float)
+    relative = 1.1 * np.where(np.isnan(own), radius_std / radius, own)
+    kept["rel_std"] = np.where(np.isnan(relative), 0.0, relative)
     return kept
 
 
@@ -166,6 +170,10 @@ def charge_steps(changes: pd.DataFrame, kept: pd.DataFrame) -> tuple[FloatArray,
         Own standard uncertainty in C: the test statistic is (change / std)^2 at a known radius; the radius
         adds its part.
     """
+    if not (
+        changes["kind"] == "charge_step"
+    ).any():  # as in most recordings; what follows takes a millisecond
+        return np.empty(0), np.empty(0)
     steps = changes[(changes["kind"] == "charge_step") & changes["droplet"].isin(kept["droplet"])]
     change = (steps["after_c"] - steps["before_c"]).to_numpy(float)
     statistic = steps["statistic"].to_numpy(float)

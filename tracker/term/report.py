@@ -32,6 +32,7 @@ from tracker.term.findings import doubtful
 from tracker.term.ledger import LEDGER, Entry, read_ledger
 from tracker.term.pool import Pool, pool_of
 from tracker.term.poolfiles import bench_ratios, charge_groups, counted
+from tracker.term.reading import read_results
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -68,32 +69,6 @@ def write_report(folder: Path | str) -> Path:
         replace_file(folder / REPORT, lambda part: part.write_text(page, encoding="utf-8"))
         return folder / REPORT
     raise ResultError(str(folder), "neither a result folder nor the output folder of a batch")
-
-
-def read_results(out: Path, entries: Sequence[Entry]) -> dict[str, Result]:
-    """Read the results of the recordings that are done, without their tracks.
-
-    Parameters
-    ----------
-    out : Path
-        Output folder of the batch.
-    entries : sequence of Entry
-        One a recording.
-
-    Returns
-    -------
-    results : dict of str to Result
-        By the recording's path; a result that cannot be read is left out.
-    """
-    results = {}
-    for entry in entries:
-        if entry.status != "done":
-            continue
-        try:
-            results[entry.recording] = read_result(out / entry.folder, tracks=False)
-        except ResultError:
-            continue
-    return results
 
 
 def write_term_report(out: Path, entries: Sequence[Entry], results: Mapping[str, Result]) -> Path:

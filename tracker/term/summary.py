@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import hashlib
 import json
-from collections.abc import Mapping, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import asdict, replace
 from pathlib import Path
 from typing import TYPE_CHECKING
@@ -22,6 +22,7 @@ from tracker.keeping.tables import (
     write_csv,
 )
 from tracker.term.ledger import Entry
+from tracker.term.reading import read_results
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -41,7 +42,12 @@ Columns of `tracks.parquet`, if chosen, are those of `tracks.csv`, with unit and
 """
 
 
-def write_summary(out: Path, entries: Sequence[Entry]) -> bool:
+def write_summary(
+    out: Path,
+    entries: Sequence[Entry],
+    *,
+    read: Callable[[Sequence[Entry]], Mapping[str, Result]] | None = None,
+) -> bool:
     """Write tables and report of a batch, if anything has changed since they were last written.
 
     Parameters
@@ -50,6 +56,8 @@ def write_summary(out: Path, entries: Sequence[Entry]) -> bool:
         The output folder.
     entries : sequence of Entry
         One a recording, in the order of the tables.
+    read : callable, optional
+        Gives what `read_results` would give for entries; None: that function reads them now.
 
     Returns
     -------
@@ -61,13 +69,13 @@ def write_summary(out: Path, entries: Sequence[Entry]) -> bool:
     ResultError
         If a file cannot be written; the old one stays.
     """
-    from tracker.term.report import read_results, repeated_recordings, write_term_report
+    from tracker.term.report import repeated_recordings, write_term_report
 
     digest = _digest(entries)
     marker = out / SUMMARY
     if all((out / name).is_file() for name in _FILES) and _text(marker) == digest:
         return False
-    results = read_results(out, entries)
+    results = read_results(out, entries) if read is None else read(entries)
     repeated = repeated_recordings(results)
     told = [_told_twice(entry, repeated.get(entry.recording)) for entry in entries]
     rows, droplets = table(told, BATCH), term_droplets(results)

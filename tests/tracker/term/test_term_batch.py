@@ -26,6 +26,7 @@ from tracker.term import batch as batch_room
 from tracker.term.batch import Options, run_batch
 from tracker.term.ledger import LEDGER, read_ledger
 from tracker.term.lock import locked
+from tracker.term.reading import Reading, read_results
 from tracker.term.resume import made_entry, settings_key, task_stamps
 from tracker.term.terminal import batch_bar
 from tracker.term.walk import find_tasks
@@ -220,6 +221,28 @@ def test_leftovers_of_a_killed_batch_are_removed(term, inline):
     (folder / "my.part.notes").write_text("mine")
     run_batch(term / "term", out=term / "out")
     assert [p.name for p in (term / "out").rglob("*.part*")] == ["my.part.notes"]
+
+
+def test_results_read_during_a_batch_are_those_read_afterwards(term):
+    """Results that were read as they were made equal those read at the end, one that changed since then, too."""
+    out = term / "out"
+    entries = list(read_ledger(out).values())
+    with Reading(out) as reading:
+        reading.start(entries)
+        reading.results(entries)  # all are read now
+        folder = out / "north/2026-10-05/clip0.fallrise"
+        cli_status(
+            ["decide", str(folder), "--droplet", "0", "--verdict", "reject", "--reason", "two droplets"]
+        )
+        early = reading.results(entries)
+    late = read_results(out, entries)
+    assert list(early) == list(late)
+    assert len(late) == 4
+    for name, result in late.items():
+        assert early[name].recording == result.recording
+        pd.testing.assert_frame_equal(early[name].droplets, result.droplets)
+        pd.testing.assert_frame_equal(early[name].changes, result.changes)
+    assert "reject" in set(early["north/2026-10-05/clip0.avi"].droplets["verdict"])
 
 
 def test_torn_line_of_the_ledger_is_left_out(original, tmp_path):
