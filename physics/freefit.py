@@ -25,7 +25,6 @@ __all__ = [
     "FreeFit",
     "SegmentSpeeds",
     "free_fit",
-    "free_fit_of",
     "robust_increments",
     "segment_speeds",
 ]
@@ -55,6 +54,7 @@ class FreeFit:
     dof: int
     down_residuals: FloatArray  # (steps,) whitened: standard normal if the model holds
     side_residuals: FloatArray  # (steps,)
+    grid: Sums  # over the likely place noise, from which all of it follows
 
     def __post_init__(self) -> None:
         freeze_arrays(self, _FIT_ARRAYS)
@@ -87,11 +87,7 @@ def free_fit(steps: Increments) -> FreeFit:
     ----------
     .. [1] H. D. Patterson, R. Thompson, Biometrika 58 (1971), 545-554.
     """
-    return free_fit_of(steps, likelihood_grid(steps))
-
-
-def free_fit_of(steps: Increments, grid: Sums) -> FreeFit:
-    """Give the free fit that belongs to the statistics of a likelihood grid."""
+    grid = likelihood_grid(steps)
     weight = np.exp(grid.restricted - grid.restricted.max() + grid.log_width)
     weight /= weight.sum()
     log_rho_mean = weight @ grid.log_rho
@@ -108,7 +104,7 @@ def free_fit_of(steps: Increments, grid: Sums) -> FreeFit:
         diffusion=diffusion, log_diffusion_std=float(np.sqrt(log_var)), log_rho=float(best.log_rho[0]),
         log_rho_std=float(np.sqrt(weight @ grid.log_rho**2 - log_rho_mean**2)),
         noise_std=float(np.sqrt(np.exp(best.log_rho[0]) * diffusion)), dof=best.degrees_of_freedom,
-        down_residuals=down, side_residuals=side,
+        down_residuals=down, side_residuals=side, grid=grid,
     )  # fmt: skip
 
 
@@ -202,7 +198,7 @@ def _segment_axis(white: Whitened) -> tuple[FloatArray, FloatArray, FloatArray]:
 
 def robust_increments(
     steps: Increments, *, limit: float = 5.0, rounds: int = 4
-) -> tuple[Increments, NDArray[np.int64]]:
+) -> tuple[Increments, NDArray[np.int64], FreeFit | None]:
     """Leave out sightings that lie much farther from their neighbours than the model allows.
 
     Parameters
@@ -220,6 +216,8 @@ def robust_increments(
         With each marked sighting treated as a missing frame.
     sightings : ndarray of int
         The marked ones, indices of the arrays that `steps` was made from, increasing.
+    fit : FreeFit or None
+        Of what is left, if that was fitted on the way: it was unless steps are few or strays many.
 
     Notes
     -----
@@ -228,15 +226,17 @@ def robust_increments(
     Where a lasting jump in one of the two steps fits better, the sighting stays.
     """
     out: list[int] = []
+    fit = None
     for _ in range(rounds):
         if len(steps) < 2 * MIN_INCREMENTS:
             break
-        marked = _outliers(steps, free_fit(steps), limit)
+        fit = free_fit(steps)
+        marked = _outliers(steps, fit, limit)
         if not len(marked):
             break
         out.extend(marked.tolist())
-        steps = steps.without_sightings(marked)
-    return steps, np.array(sorted(out), dtype=np.int64)
+        steps, fit = steps.without_sightings(marked), None
+    return steps, np.array(sorted(out), dtype=np.int64), fit
 
 
 def _outliers(steps: Increments, fit: FreeFit, limit: float) -> NDArray[np.int64]:
@@ -247,8 +247,9 @@ def _outliers(steps: Increments, fit: FreeFit, limit: float) -> NDArray[np.int64
     axes: tuple[tuple[Axis, FloatArray], ...] = (("down", fit.down_residuals), ("side", fit.side_residuals))
     for axis, white in axes:
         worst = np.maximum(worst, _offset_scores(steps, white, rho, axis)[joined])
-    rank = np.array([worst[max(0, i - 2) : i + 3].max() for i in range(len(worst))])
-    return np.asarray(steps.last[joined[(worst > limit) & (worst >= rank)]])
+    padded = np.pad(worst, 2)
+    around = np.max([padded[i : i + len(worst)] for i in range(5)], axis=0)
+    return np.asarray(steps.last[joined[(worst > limit) & (worst >= around)]])
 
 
 def _offset_scores(steps: Increments, white: FloatArray, rho: float, axis: Axis) -> FloatArray:

@@ -122,12 +122,14 @@ def segment_occupancy(starts: ArrayLike, ends: ArrayLike, times: ArrayLike, expo
         In s; a row sums to the step's dt where the segments cover it. A segment's speed times its column is
         what that segment adds to the steps, exactly, also where a change falls within an exposure.
     """
-    begin, end = np.atleast_1d(starts), np.atleast_1d(ends)
-    columns = [
-        np.diff(field_impulse([a, a, b, b], [0.0, 1.0, 1.0, 0.0], times, exposure))
-        for a, b in zip(begin, end, strict=True)
-    ]
-    return np.stack(columns, axis=1) if columns else np.empty((max(0, np.size(times) - 1), 0))
+    begin, end = np.atleast_1d(starts)[None, :], np.atleast_1d(ends)[None, :]
+    opens = np.asarray(times, dtype=np.float64)[:, None]
+    before, after = (np.clip(at, begin, end) - begin for at in (opens, opens + exposure))
+    if exposure > 0:  # mean over the exposure of the seconds spent until then, which run in straight lines
+        beyond = np.clip(opens + exposure - end, 0.0, exposure)
+        inside = 0.5 * (after - before) * (after + before)
+        before = (inside + beyond * (end - begin)) / exposure
+    return np.asarray(np.diff(before, axis=0))
 
 
 @dataclass(frozen=True, slots=True)

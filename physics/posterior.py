@@ -19,9 +19,9 @@ from scipy.special import ndtr
 from physics.drag import slip_correction, slip_model
 from physics.droplet import BOLTZMANN, ELEMENTARY_CHARGE, Conditions, mass, weight
 from physics.errors import PhysicsError
-from physics.freefit import FreeFit, free_fit_of
+from physics.freefit import FreeFit, free_fit
 from physics.increments import FloatArray, Increments, freeze_arrays
-from physics.likelihood import MIN_INCREMENTS, Sums, likelihood_grid
+from physics.likelihood import MIN_INCREMENTS, Sums
 from physics.responses import STEP, input_responses
 
 __all__ = ["NO_CHARGE_REASONS", "DropletPosterior", "droplet_posterior"]
@@ -35,7 +35,7 @@ NO_CHARGE_REASONS: Mapping[str, str] = {
 RADIUS_RANGE = (3e-8, 1.5e-5)  # m; below, a droplet diffuses out of sight, above, Stokes' law has ended
 RADIUS_POINTS = 80  # an eighth of a standard deviation apart; the sum is exact to round-off at one
 SPEED_SPAN, DIFFUSION_SPAN = 5.0, 6.0  # standard deviations of either that the radius grid holds
-MOST_NUMBERS = 2000  # charge numbers beyond are never resolved
+LEAST_NUMBERS, MOST_NUMBERS = 10, 2000  # charge numbers beyond are never resolved
 RATIO_LIMIT = 0.3  # relative uncertainty of the fall speed up to which diffusion is compared with it
 
 
@@ -67,7 +67,7 @@ class DropletPosterior:
     diffusion_speed_std: float  # part of that standard deviation that comes from the fall speed
     inconsistent: bool  # fall speed and Brownian motion point to radii that do not overlap
     main_part: int  # longest part that saw the field; -1 if none
-    number_values: NDArray[np.int64]  # (M,) charge numbers, -nmax..nmax
+    number_values: NDArray[np.int64]  # (M,) charge numbers, -nmax..nmax, 8 deviations beyond the charges
     number_log_likelihood: FloatArray  # (M,) of the main part, up to a constant; no prior
     part_number_log_likelihood: FloatArray  # (parts, M), NaN rows for parts without charge
     log_radius: FloatArray  # (R,) ln m, grid
@@ -247,8 +247,8 @@ def droplet_posterior(
     *,
     air_speed: float = 0.0,
     air_speed_std: float = 0.0,
-    charge_number_max: int | None = None,
     responses: Mapping[str, Mapping[str, float]] | None = None,
+    fit: FreeFit | None = None,
 ) -> DropletPosterior:
     """Joint posterior of radius and charges of one droplet.
 
@@ -261,11 +261,10 @@ def droplet_posterior(
     air_speed, air_speed_std : float
         Vertical speed of the air in m/s, downward, and its standard uncertainty (normal): it adds to the fall
         speed and is integrated out, so that its doubt is part of the standard deviations of the result.
-    charge_number_max : int, optional
-        Largest charge number of `number_values`; None takes all that the charges reach within 8 standard
-        deviations, from 10 to 2000.
     responses : mapping, optional
         As `input_responses` gives; None calls it.
+    fit : FreeFit, optional
+        Of these steps, if it was made already.
 
     Returns
     -------
@@ -288,8 +287,8 @@ def droplet_posterior(
         raise PhysicsError("air_speed_std", air_speed_std, "0 m/s or more")
     if len(steps) < MIN_INCREMENTS:
         return _empty("too_few_steps", steps.parts, None)
-    sums = likelihood_grid(steps)
-    fit = free_fit_of(steps, sums)
+    fit = free_fit(steps) if fit is None else fit
+    sums = fit.grid
     table = law_table(conditions)
     span = radius_span(fit, table, air_speed, air_speed_std)
     if span is None or not span[1] > span[0]:
@@ -301,7 +300,7 @@ def droplet_posterior(
         **_diffusion_check(fit, table, air_speed, air_speed_std),
     )  # fmt: skip
     changes = _primitive_changes(sums, law, mixture, conditions, air_speed, air_speed_std)
-    result = replace(result, **_charge_results(result, steps, sums, mixture, charge_number_max))
+    result = replace(result, **_charge_results(result, steps, sums, mixture))
     by_air = result.charge_per_air_speed.copy()
     by_air[sums.parts] = changes.pop("air")[1] / float(mixture.weight @ law.speed)
     result = replace(result, charge_per_air_speed=by_air)
@@ -379,7 +378,7 @@ def _diffusion_check(fit: FreeFit, table: Law, air_speed: float, air_std: float)
 
 
 def _charge_results(
-    empty: DropletPosterior, steps: Increments, sums: Sums, mixture: _Mixture, number_max: int | None
+    empty: DropletPosterior, steps: Increments, sums: Sums, mixture: _Mixture
 ) -> dict[str, Any]:
     """Charges, their covariance and intervals, and the likelihood of the charge numbers."""
     if not len(sums.parts):
@@ -391,7 +390,7 @@ def _charge_results(
     std = np.sqrt(np.diag(cov))
     own: FloatArray = np.sqrt(np.einsum("rpp->rp", mixture.charge_cov))
     reach = float(np.max(np.abs(mean) + 8 * std)) / ELEMENTARY_CHARGE
-    most = int(np.clip(np.ceil(reach), 10, MOST_NUMBERS)) if number_max is None else int(number_max)
+    most = int(np.clip(np.ceil(reach), LEAST_NUMBERS, MOST_NUMBERS))
     numbers = np.arange(-most, most + 1)
     at_numbers = np.asarray(numbers * ELEMENTARY_CHARGE, dtype=np.float64)
     likelihood = np.full((parts, len(numbers)), np.nan)

@@ -42,7 +42,7 @@ def kinds_found(
     found = []
     for _ in range(tracks):
         path = record_path(rng, make(), camera)
-        history = find_changes(path.steps(), np.asarray(path.times), CONDITIONS, shared_rate=shared)
+        history = find_changes(path.steps, np.asarray(path.times), CONDITIONS, shared_rate=shared)
         found.append([change.kind for change in history.changes])
     return found
 
@@ -93,7 +93,7 @@ def rows_of_diffusion(rng: np.random.Generator, tracks: int) -> list[tuple[str, 
     """False alarms and power of the test of Brownian motion against fall speed."""
 
     def z_of(life: Life) -> float:
-        return droplet_posterior(record_path(rng, life, STRONG).steps(), CONDITIONS).diffusion_z
+        return droplet_posterior(record_path(rng, life, STRONG).steps, CONDITIONS).diffusion_z
 
     null = [z_of(Life(float(r), 5)) for r in rng.uniform(0.4e-6, 1.2e-6, tracks)]
     spread = f"z: mean {np.nanmean(null):+.2f}, sd {np.nanstd(null):.2f}"

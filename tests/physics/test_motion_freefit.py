@@ -308,10 +308,11 @@ def test_stray_sightings_are_found_and_good_ones_kept():
         stray = np.sort(rng.choice(np.arange(2, len(track.times) - 2), 5, replace=False))
         down = track.down.copy()
         down[stray] += 10 * 1.4e-6 * rng.choice([-1, 1], 5)
-        cleaned, marked = robust_increments(replace(track, down=down).steps())
+        cleaned, marked, fit = robust_increments(replace(track, down=down).steps())
         found += len(np.intersect1d(marked, stray))
         extra += len(np.setdiff1d(marked, stray))
         assert len(cleaned) == len(track.times) - 1 - len(marked)
+        assert fit is None or fit.diffusion == free_fit(cleaned).diffusion
     # two neighbours thrown alike are a jump to and fro, not two strays: one pair in 30 tracks is expected
     assert found >= 150 - 3 * 2
     # 39 000 good places (two axes): 0.02 beyond 5, 0.1 beyond 4.7; a track's scale is 6 % uncertain
@@ -351,5 +352,5 @@ def test_a_lasting_jump_is_no_stray_sighting():
     """A step of all later places is left to the tests for changes."""
     track = record(np.random.default_rng(34), 5e-7, 5)
     down = track.down + np.where(track.times > 12.0, 1.5e-5, 0.0)
-    _, marked = robust_increments(replace(track, down=down).steps())
+    _, marked, _ = robust_increments(replace(track, down=down).steps())
     assert len(marked) <= 1

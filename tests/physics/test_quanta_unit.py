@@ -180,7 +180,7 @@ def test_unit_of_even_numbers_is_twice_e():
     found = charge_unit((number + 0.05 * draw.standard_normal(40)) * E, np.full(40, 0.05 * E))
     assert found.resolved
     assert found.over_e == pytest.approx(2.0, rel=3e-3)  # 5 standard deviations of 0.05 / (11 sqrt 40) / 2
-    assert "largest comb" in found.reason
+    assert "largest unit" in found.reason
 
 
 def test_uncharged_droplets_are_no_evidence():

@@ -227,7 +227,7 @@ class _Shared:
 
 def _terms(path: Path, fit: FreeFit, knots: FloatArray) -> tuple[_Shared, _Shared]:
     """Give one droplet's equations along and across gravity."""
-    steps = path.steps()
+    steps = path.steps
     rho = float(np.exp(fit.log_rho))
     hats = _hats(steps, np.asarray(path.times), knots)
     own = np.column_stack([steps.dt, steps.impulse]) if np.any(steps.impulse) else steps.dt[:, None]

@@ -44,7 +44,7 @@ class Droplet:
         """Rows of the tracks that the fit rests on."""
         if self.history is None:
             return np.empty(0, np.int64)
-        first = self.path.steps().first[self.history.kept]
+        first = self.path.steps.first[self.history.kept]
         return np.asarray(self.path.rows[np.union1d(first, first + 1)])
 
 
@@ -108,7 +108,7 @@ def with_histories(droplets: list[Droplet], conditions: Conditions, drift: Drift
     for i, droplet in enumerate(droplets):
         if droplet.fit is None or is_sparse(droplet.path) or is_stuck(droplet.path, conditions):
             continue
-        steps = droplet.path.steps()
+        steps = droplet.path.steps
         still = drift.taken_out(steps, np.asarray(droplet.path.times))
         ready[i] = (still, droplet.fit if still is steps else free_fit(still))
     shared = _shared_rate(droplets, ready, conditions)
@@ -165,7 +165,7 @@ def with_posteriors(droplets: list[Droplet], bench: Bench, air: AirCurrent) -> l
                 droplet_posterior, conditions=conditions, air_speed=air.down, air_speed_std=std, responses=responses
             )  # fmt: skip
             steps, doubt = d.history.steps, d.history.doubt
-            found = of_steps(steps)
+            found = of_steps(steps, fit=d.history.fit)
             if doubt is not None and np.isfinite(found.radius):
                 found = _widened(found, of_steps(replace(steps, down=steps.down + doubt)))
             d = replace(d, posterior=found)  # noqa: PLW2901 - the same droplet, known better

@@ -11,6 +11,7 @@ from physics.motion import MIN_INCREMENTS, Increments, field_impulse, free_fit, 
 from tracker.bench import Bench
 from tracker.errors import FieldError
 from tracker.motion.field import blur_of, exposure_of, field_of_steps, recording_span
+from tracker.motion.fieldgain import drive_gains
 from tracker.motion.fieldlog import Log, field_from_log, on_recording_clock
 from tracker.motion.velocity import Orientation, Path, fit_orientation, paths
 from tracker.records import Field, FloatArray, IntArray, Recording, Tracks
@@ -30,7 +31,6 @@ CLOCK_GAIN, MOST_OF_ONE = (
 SURE_GAIN, SURE_SHARE = 100.0, 0.01  # chi-square, and median share of what a drive explains, beyond doubt
 DRIVEN = 20.0  # chi-square that a drive explains of a droplet that has a say on the clock
 MOST_DROPLETS = 30  # longest tracks that are used; more narrow the offset below what matters
-STEPS_AT_ONCE = 4_000_000  # numbers held at once in the first search
 
 
 def fit_clock_offset(tracks: Tracks, log: Log, recording: Recording, bench: Bench) -> Field:
@@ -72,13 +72,13 @@ def fit_clock_offset(tracks: Tracks, log: Log, recording: Recording, bench: Benc
     found = paths(
         tracks, recording, field=idle, scale=bench.scale, exposure=exposure, blur=blur, orientation=picture
     )
-    usable = [path for path in found if len(path.steps()) >= 2 * MIN_INCREMENTS]
+    usable = [path for path in found if len(path.steps) >= 2 * MIN_INCREMENTS]
     if not usable:
         raise FieldError(str(log.path), "no droplet is tracked long enough to set the log's clock; state it")
     usable = sorted(usable, key=len, reverse=True)[:MOST_DROPLETS]
     offsets = _search_range(log, span)
     searched = usable if len(offsets) < LONG_SEARCH else usable[:FEW_DROPLETS]
-    gain = _coarse_gain(searched, log, offsets, recording)
+    gain = drive_gains(searched, log, offsets, recording).sum(axis=0)
     peaks = _peaks(offsets, gain)
     coarse = field_from_log(log, recording, offset=float(offsets[peaks[0]]))
     turned = fit_orientation(
@@ -120,12 +120,12 @@ def clock_warnings(field: Field, droplets: Sequence[Path], recording: Recording)
         the times of both.
     """
     usable = sorted(droplets, key=len, reverse=True)[:MOST_DROPLETS]
-    usable = [path for path in usable if len(path.steps()) >= 2 * MIN_INCREMENTS]
+    usable = [path for path in usable if len(path.steps) >= 2 * MIN_INCREMENTS]
     if field.source not in ("list", "log") or len(field.segments) < 2 or not usable:
         return ()
     log = Log(field.knot_times, field.knot_volts, True, recording.path)
     shifts = _shifts(recording)
-    gains = _gains(usable, log, shifts, recording, falling=True)
+    gains = drive_gains(usable, log, shifts, recording, falling=True)
     driven = gains.max(axis=1) > DRIVEN
     if not driven.any():
         return ()
@@ -160,12 +160,12 @@ def _shifts(recording: Recording) -> FloatArray:
 def _best_shifts(usable: Sequence[Path], log: Log, shifts: FloatArray, recording: Recording) -> list[float]:
     """Shifts in s, to 10 ms, that fit the droplets best; several where a schedule repeats, the shortest first."""
     shifts = np.sort(shifts)
-    total = _gains(usable, log, shifts, recording, falling=True).sum(axis=0)
+    total = drive_gains(usable, log, shifts, recording, falling=True).sum(axis=0)
     near = [i for i in _peaks(shifts, total) if total[i] > 0.95 * total.max() - LEAST_MARGIN]
     found: list[tuple[float, float]] = []
     for i in near:
         fine = shifts[i] + np.arange(-COARSE, COARSE + FINE / 2, FINE)
-        gain = _gains(usable, log, fine, recording, falling=True).sum(axis=0)
+        gain = drive_gains(usable, log, fine, recording, falling=True).sum(axis=0)
         found.append((float(gain.max()), float(fine[np.argmax(gain)])))
     needed = max(found)[0] - max(LEAST_MARGIN, LEAST_RELATIVE_MARGIN * max(found)[0])
     kept: list[float] = []
@@ -202,77 +202,6 @@ def _search_range(log: Log, span: tuple[float, float]) -> FloatArray:
         problem = f"the log lasts {log.times[-1] - log.times[0]:.2f} s, less than half the recording's"
         raise FieldError(str(log.path), f"{problem} {span[1] - span[0]:.2f} s; state field.clock_offset")
     return np.arange(low, high + COARSE, COARSE)
-
-
-def _coarse_gain(usable: Sequence[Path], log: Log, offsets: FloatArray, recording: Recording) -> FloatArray:
-    """Chi-square that the drives of all droplets explain at each offset."""
-    return np.asarray(_gains(usable, log, offsets, recording).sum(axis=0))
-
-
-def _gains(
-    usable: Sequence[Path], log: Log, offsets: FloatArray, recording: Recording, *, falling: bool = False
-) -> FloatArray:
-    """Chi-square that each droplet's drive explains at each offset, steps taken as independent.
-
-    Where gravity's direction is known, that of a droplet which would rise with the field off is taken away.
-    """
-    from scipy.integrate import cumulative_trapezoid
-
-    times, volts = np.asarray(log.times), np.asarray(log.volts)
-    if not log.sampled:
-        times, volts = np.repeat(times, 2)[1:], np.repeat(volts, 2)[:-1]
-    total = cumulative_trapezoid(volts, times, initial=0.0)
-    middle = recording.frame_times + 0.5 * usable[0].exposure
-    rows = max(1, STEPS_AT_ONCE // len(middle))
-    gain = np.zeros((len(usable), len(offsets)))
-    for first in range(0, len(offsets), rows):
-        part = slice(first, first + rows)
-        at_frame = _integral(middle - offsets[part, None], times, volts, total)
-        for j, path in enumerate(usable):
-            gain[j, part] = _white_gain(path, at_frame) - (_rise(path, at_frame) if falling else 0.0)
-    return gain
-
-
-def _white_gain(path: Path, at_frame: FloatArray) -> FloatArray:
-    """Chi-square that one droplet's drive explains, for each row of volt seconds at the frames."""
-    steps = path.steps()
-    weight = 1 / np.sqrt(steps.dt)
-    drift = np.sqrt(steps.dt) / np.linalg.norm(np.sqrt(steps.dt))
-    impulse = (at_frame[:, path.frames[steps.last]] - at_frame[:, path.frames[steps.first]]) * weight
-    impulse -= (impulse @ drift)[:, None] * drift
-    power = np.einsum("ij,ij->i", impulse, impulse)
-    gain = np.zeros(len(at_frame))
-    for data in (steps.down, steps.side):
-        score = impulse @ (data * weight)
-        gain += score**2 / np.maximum(power, 1e-300) / _step_variance(data * weight)
-    return np.where(power > 1e-9 * float(power.max() + 1e-300), gain, 0.0)
-
-
-def _rise(path: Path, at_frame: FloatArray) -> FloatArray:
-    """Chi-square of one droplet for rising with the field off, for each row of volt seconds at the frames."""
-    steps = path.steps()
-    weight, drift = 1 / np.sqrt(steps.dt), np.sqrt(steps.dt)
-    impulse = (at_frame[:, path.frames[steps.last]] - at_frame[:, path.frames[steps.first]]) * weight
-    power = np.maximum(np.einsum("ij,ij->i", impulse, impulse), 1e-300)
-    alone = drift - impulse * ((impulse @ drift) / power)[:, None]
-    left = np.einsum("ij,ij->i", alone, alone)
-    rise = np.minimum(alone @ (steps.down * weight), 0.0)
-    sound = left > 1e-6 * float(drift @ drift)
-    return np.where(sound, rise**2 / np.maximum(left, 1e-300), 0.0) / _step_variance(steps.down * weight)
-
-
-def _integral(at: FloatArray, times: FloatArray, volts: FloatArray, total: FloatArray) -> FloatArray:
-    """Integral of the logged voltage to each time, the end voltages holding outside."""
-    inside = np.interp(at, times, total)
-    before, after = np.minimum(at - times[0], 0.0), np.maximum(at - times[-1], 0.0)
-    result: FloatArray = inside + volts[0] * before + volts[-1] * after
-    return result
-
-
-def _step_variance(steps: FloatArray) -> float:
-    """Variance of steps that toggles do not widen: from the middle half of second differences."""
-    second = np.abs(np.diff(steps))
-    return max(float(np.median(second) / 0.6745) ** 2 / 2, 1e-300)
 
 
 def _peaks(offsets: FloatArray, gain: FloatArray, *, most: int = 6) -> list[int]:
@@ -313,7 +242,7 @@ class _Fit:
         impulse = self.impulse(offset, 0.0)
         self.droplets = []
         for path in self.usable:
-            steps = path.steps()
+            steps = path.steps
             driven = _with_impulse(steps, impulse[path.frames])
             fit = free_fit(driven)
             self.droplets.append(_Droplet(steps, path.frames, fit.diffusion, float(np.exp(fit.log_rho))))

@@ -151,7 +151,7 @@ def _droplets(tracks: Tracks, recording: Recording, bench: Bench) -> list[Path]:
         tracks, recording, field=idle, scale=bench.scale, exposure=exposure_of(bench, recording),
         orientation=orientation, blur=blur_of(bench, recording),
     )  # fmt: skip
-    return [path for path in found if len(path) > LEAST_DROPLET and len(path.steps()) >= LEAST_DROPLET]
+    return [path for path in found if len(path) > LEAST_DROPLET and len(path.steps) >= LEAST_DROPLET]
 
 
 def _scaled_steps(droplets: Sequence[Path], recording: Recording) -> tuple[FloatArray, np.ndarray]:
@@ -159,7 +159,7 @@ def _scaled_steps(droplets: Sequence[Path], recording: Recording) -> tuple[Float
     shape = len(droplets), max(len(recording.frame_times) - 1, 1)
     scaled, seen = np.zeros(shape), np.zeros(shape, bool)
     for j, path in enumerate(droplets):
-        steps = path.steps()
+        steps = path.steps
         frames = path.frames[steps.first]
         single = path.frames[steps.first + 1] - frames == 1
         unit = np.sqrt(2 * side_diffusion(steps) * steps.dt)
@@ -253,7 +253,7 @@ class _Prepared:
 def _prepared(path: Path, field: Field) -> _Prepared:
     """Find diffusion and noise of a droplet with the field as it is known so far."""
     impulse = field_impulse(field.knot_times, field.knot_volts, path.times, path.exposure)
-    steps = replace(path, impulse=impulse).steps()
+    steps = replace(path, impulse=impulse).steps
     fit = free_fit(steps)
     return _Prepared(path, steps, fit.diffusion, float(np.exp(fit.log_rho)))
 

@@ -133,7 +133,7 @@ def _means(droplets: Sequence[Path], edges: Sequence[tuple[int, int]]) -> _Means
     variance = speed.copy()
     diffusions, stds = np.zeros(len(droplets)), np.zeros(len(droplets))
     for j, path in enumerate(droplets):
-        steps = path.steps()
+        steps = path.steps
         diffusions[j] = side_diffusion(steps)
         stds[j] = np.sqrt(3.0 / len(steps))  # the covariance estimator's, noise small against D dt
         frames, last = path.frames[steps.first], path.frames[steps.first + 1]

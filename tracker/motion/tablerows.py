@@ -127,7 +127,7 @@ def segment_rows(droplet: Droplet, field: Field) -> list[SegmentRow]:
     if droplet.history is None:
         return []
     path, fit = droplet.path, droplet.history.fit
-    steps = path.steps()
+    steps = path.steps
     seen = [
         (i, s) for i, s in enumerate(field.segments) if s.end > path.times[0] and s.start < path.times[-1]
     ]

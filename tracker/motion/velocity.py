@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass, replace
+from functools import cached_property
 
 import numpy as np
 
@@ -36,7 +37,7 @@ class Orientation:
     warnings: tuple[str, ...] = ()
 
 
-@dataclass(frozen=True, slots=True)
+@dataclass(frozen=True)
 class Path:
     """One droplet's sightings that may be used, along and across gravity."""
 
@@ -78,17 +79,13 @@ class Path:
         breaks[step] = True
         return replace(self, breaks=breaks)
 
-    def steps(self, part: IntArray | None = None) -> Increments:
-        """Give the steps between neighbouring sightings; `part` is the charge part of each of N - 1 steps."""
+    @cached_property
+    def steps(self) -> Increments:
+        """Steps between neighbouring sightings."""
         return increments(
             self.times, self.down, self.side, down_std=self.down_std, side_std=self.side_std,
-            impulse=self.impulse, exposure=self.exposure, blur=self.blur, breaks=self.breaks, part=part,
+            impulse=self.impulse, exposure=self.exposure, blur=self.blur, breaks=self.breaks,
         )  # fmt: skip
-
-    def used_rows(self) -> IntArray:
-        """Rows of the tracks that at least one step rests on."""
-        alone = np.concatenate(([True], self.breaks)) & np.concatenate((self.breaks, [True]))
-        return self.rows[~alone]
 
 
 def paths(  # noqa: PLR0913 - one recording has that many sides
@@ -180,7 +177,7 @@ def _speeds(path: Path) -> _Speeds | None:
     Steps are weighed as if independent, which costs a few per cent of precision. The diffusion behind the variances
     is the covariance-based estimate of both axes, <d^2>/2dt + <d d'>/dt (Vestergaard et al., Phys. Rev. E 89, 022726).
     """
-    steps = path.steps()
+    steps = path.steps
     if len(steps) < MIN_INCREMENTS:
         return None
     driven = bool(np.ptp(steps.impulse / steps.dt) > 0)
@@ -332,23 +329,26 @@ def without_outliers(path: Path) -> tuple[Path, int, tuple[int, ...], FreeFit | 
     Sightings by `physics.freefit.robust_increments`. A whitened residual beyond 5 that is left after that is a
     lasting jump; chance gives one step in 1.7 million.
     """
-    steps = path.steps()
     hops: list[int] = []
-    if len(steps) < MIN_INCREMENTS:
+    if len(path.steps) < MIN_INCREMENTS:
         return path, 0, (), None
-    _, marked = robust_increments(steps)
+    _, marked, fit = robust_increments(path.steps)
     for sighting in marked[::-1]:
         path = path.without(int(sighting))
-    fit = None
-    for _ in range(MOST_HOPS + 1):
-        steps = path.steps()
-        if len(steps) < MIN_INCREMENTS:
-            return path, len(marked), tuple(sorted(hops)), None
-        fit = free_fit(steps)
+    if len(marked) or fit is None:
+        fit = _fit(path)
+    while fit is not None and len(hops) < MOST_HOPS:
         size = np.maximum(np.abs(fit.down_residuals), np.abs(fit.side_residuals))
         worst = int(np.argmax(size))
-        if size[worst] <= OUTLIER or len(hops) == MOST_HOPS:
+        if size[worst] <= OUTLIER:
             break
-        hops.append(int(path.frames[steps.first[worst] + 1]))
-        path = path.cut(int(steps.first[worst]))
+        step = int(path.steps.first[worst])
+        hops.append(int(path.frames[step + 1]))
+        path = path.cut(step)
+        fit = _fit(path)
     return path, len(marked), tuple(sorted(hops)), fit
+
+
+def _fit(path: Path) -> FreeFit | None:
+    """Fit a path; None if the steps are too few."""
+    return free_fit(path.steps) if len(path.steps) >= MIN_INCREMENTS else None

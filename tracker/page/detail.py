@@ -152,7 +152,7 @@ def _residuals(droplet: Droplet | None) -> tuple[FloatArray, FloatArray]:
     if droplet is None or droplet.history is None:
         return np.empty(0), np.empty(0)
     path, history = droplet.path, droplet.history
-    first = path.steps().first[history.kept]
+    first = path.steps.first[history.kept]
     middle = 0.5 * (path.times[first] + path.times[first + 1])
     return np.asarray(middle), np.asarray(history.fit.down_residuals)
 

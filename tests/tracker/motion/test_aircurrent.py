@@ -26,7 +26,7 @@ def recorded(tmp_path, rng, count=12, **motion):
 
 
 def drift_of(given):
-    return find_drift(given, [free_fit(path.steps()) for path in given])
+    return find_drift(given, [free_fit(path.steps) for path in given])
 
 
 def test_still_air_has_no_changing_current(tmp_path):
@@ -47,12 +47,12 @@ def test_a_swinging_current_is_found_and_taken_out(tmp_path):
     std = np.sqrt(np.diag(drift.covariance))
     assert np.max(np.abs(drift.down - 8e-6 * truth) / np.hypot(std, 0.6e-6)) < 4
     assert np.max(np.abs(drift.side + 8e-6 * truth) / np.hypot(std, 0.6e-6)) < 4
-    before = np.mean([free_fit(path.steps()).diffusion for path in given])
+    before = np.mean([free_fit(path.steps).diffusion for path in given])
     after = np.mean(
-        [free_fit(drift.taken_out(path.steps(), np.asarray(path.times))).diffusion for path in given]
+        [free_fit(drift.taken_out(path.steps, np.asarray(path.times))).diffusion for path in given]
     )
     still = np.mean(
-        [free_fit(path.steps()).diffusion for path in recorded(tmp_path, np.random.default_rng(72))]
+        [free_fit(path.steps).diffusion for path in recorded(tmp_path, np.random.default_rng(72))]
     )
     assert abs(after / still - 1) < abs(before / still - 1) + 0.02
 
@@ -70,7 +70,7 @@ def test_few_droplets_or_short_recordings_have_no_changing_current():
     """With three droplets nothing can be told apart, and the empty drift leaves steps as they are."""
     path = record_path(np.random.default_rng(74), Life(0.7e-6, 3), CAMERA)
     assert len(drift_of([path] * 3).times) == 0
-    steps = path.steps()
+    steps = path.steps
     assert Drift().taken_out(steps, np.asarray(path.times)) is steps
     assert Drift().std_of_mean(steps, np.asarray(path.times)) == 0.0
 
@@ -80,7 +80,7 @@ def test_the_steady_current_pulls_about_the_truth(tmp_path):
     rng = np.random.default_rng(75)
     pulls = []
     for _ in range(12):
-        steps = [path.steps() for path in recorded(tmp_path, rng, count=20, air=(4e-6, 6e-6))]
+        steps = [path.steps for path in recorded(tmp_path, rng, count=20, air=(4e-6, 6e-6))]
         air = find_air_current([free_fit(s) for s in steps], CONDITIONS)
         pulls.append(((air.down - 4e-6) / air.down_std, (air.side - 6e-6) / air.side_std))
         assert air.down_std < 6e-6

@@ -23,7 +23,7 @@ WEAK = Camera(steps=schedule(1.5e4))
 
 def history(rng, life, camera):
     path = record_path(rng, life, camera)
-    return find_changes(path.steps(), np.asarray(path.times), CONDITIONS), path
+    return find_changes(path.steps, np.asarray(path.times), CONDITIONS), path
 
 
 def kinds(rng, life, camera, trials):
@@ -55,13 +55,13 @@ def test_what_all_droplets_share_tells_a_step_from_evaporation():
     shrinking = evaporated(Life(1.0e-6, 5), 0.1, 24.0)
     for _ in range(40):
         path = record_path(rng, life, STRONG)
-        found = find_changes(path.steps(), np.asarray(path.times), CONDITIONS, shared_rate=(0.0, 1e-16))
+        found = find_changes(path.steps, np.asarray(path.times), CONDITIONS, shared_rate=(0.0, 1e-16))
         assert found.changes[0].kind == "charge_step"
     shared = (2 * (1.0e-6) ** 2 * shrinking.shrinking, 3e-16)
     kinds = Counter()
     for _ in range(20):
         path = record_path(rng, shrinking, STRONG)
-        found = find_changes(path.steps(), np.asarray(path.times), CONDITIONS, shared_rate=shared)
+        found = find_changes(path.steps, np.asarray(path.times), CONDITIONS, shared_rate=shared)
         kinds.update(change.kind for change in found.changes)
     assert kinds["evaporation"] >= 18  # power 0.99 and class 1.0, as without what others share
     assert kinds["charge_step"] <= 1  # false steps at 2 in 1000: two of 20 happen in 0.1 % of seeds
@@ -75,7 +75,7 @@ def test_the_rate_of_shrinking_is_had_with_its_uncertainty_whether_it_shows_or_n
             life = evaporated(Life(radius, 4), share, 24.0)
             for _ in range(25):
                 path = record_path(rng, life, STRONG)
-                steps = path.steps()
+                steps = path.steps
                 rate, std = size_rate(steps, np.asarray(path.times), CONDITIONS, free_fit(steps))
                 pulls.append((rate - 2 * radius**2 * life.shrinking) / std)
     # 100 pulls of unit variance; the radius that scales the rate is itself known to a few per cent.
@@ -162,7 +162,7 @@ def test_after_a_switch_only_the_longer_side_is_kept():
     life = Life(1.0e-6, 5, changes=((16.0, 1.5e-6, -8),))
     found, path = history(np.random.default_rng(27), life, STRONG)
     assert "switch" in [change.kind for change in found.changes]
-    last = path.times[path.steps().first[found.kept]].max()
+    last = path.times[path.steps.first[found.kept]].max()
     assert last == pytest.approx(16.0, abs=0.3)
     assert found.fit.fall_speed == pytest.approx(
         fall_speed(1.0e-6, CONDITIONS), abs=4 * found.fit.fall_speed_std
@@ -188,7 +188,7 @@ def test_the_scan_by_cumulative_sums_equals_fits_with_the_cut_columns():
 def test_inputs_stay_as_they_are_and_the_threshold_is_stated_with_each_change():
     """Steps are not changed, and a change carries what it was compared with."""
     path = record_path(np.random.default_rng(29), Life(0.7e-6, 5, changes=((12.0, 0.7e-6, 7),)), STRONG)
-    steps = path.steps()
+    steps = path.steps
     before = steps.down.copy()
     found = find_changes(steps, np.asarray(path.times), CONDITIONS)
     assert np.array_equal(steps.down, before)

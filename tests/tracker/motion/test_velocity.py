@@ -102,7 +102,7 @@ def test_repeated_frames_biased_places_and_a_persons_rows_are_left_out(tmp_path)
     )[0]  # fmt: skip
     gone = sorted(set(range(rows.start, rows.stop)) - set(path.rows.tolist()))
     assert gone == [rows.start + i for i in (10, 20, 40, 50)]
-    assert path.steps().dt.max() >= 2 / CAMERA.frame_rate - 1e-9
+    assert path.steps.dt.max() >= 2 / CAMERA.frame_rate - 1e-9
 
 
 def test_steps_over_an_uncertain_toggle_and_a_bump_are_left_out(tmp_path):
@@ -118,7 +118,7 @@ def test_steps_over_an_uncertain_toggle_and_a_bump_are_left_out(tmp_path):
     assert (
         path.frames[:-1][path.breaks][~near_toggle][0] < 450 <= path.frames[1:][path.breaks][~near_toggle][0]
     )
-    assert len(path.steps()) == len(path) - 1 - path.breaks.sum()
+    assert len(path.steps) == len(path) - 1 - path.breaks.sum()
 
 
 def test_a_single_wrong_sighting_is_left_out_and_a_lasting_jump_breaks_the_track():
