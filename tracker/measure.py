@@ -105,6 +105,7 @@ def _import_ahead() -> None:
     import_module("tracker.motion.droplets")
     import_module("tracker.voltage")
     import_module("tracker.provenance")
+    import_module("pandas")
     import_module("pyarrow.csv")
 
 
