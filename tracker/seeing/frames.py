@@ -17,8 +17,8 @@ from tracker.errors import RecordingError
 from tracker.records import FloatArray, Recording
 from tracker.seeing.sources import Form, Picture, RawFrame, Source, natural_order, open_source
 
-_BATCH_BYTES = 8_000_000  # of pictures handed over at once: fewer switches between decoding and work
-_LEAST_BATCH, _MOST_BATCH = 4, 32  # pictures
+_BATCH_BYTES = 32_000_000  # of pictures handed over at once: fewer switches between decoding and work
+_LEAST_BATCH, _MOST_BATCH = 4, 64  # pictures
 _WAITING_BYTES = 96_000_000  # of pictures that may wait: decoding goes on while the recording is learned
 _LEAST_WAITING = 3  # batches
 _GRID = 8  # every eighth pixel of every eighth row tells a repeated picture
