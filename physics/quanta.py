@@ -395,7 +395,7 @@ def _resolved(
     count = sum(len(sample) for sample in samples)
     reason = (
         f"multiples of {mean:.4e} C explain the {count} charges better than a smooth spread (log likelihood ratio "
-        f"{verdict.best.log_ratio:.0f}, {verdict.needed:.0f} needed) and better than multiples of any other unit "
+        f"{verdict.best.log_ratio:.0f}, {verdict.needed:.3g} needed) and better than multiples of any other unit "
         f"({verdict.margin:.1f}, {MARGIN_NEEDED:.0f} needed); it is the largest unit that fits them"
     )
     bands = [_interval(f, weight, level, extra, z) for level, z in ((0.6827, 1.0), (0.95, 1.96))]
@@ -430,110 +430,13 @@ def _unresolved(samples: tuple[ChargeSample, ...], verdict: _Verdict) -> ChargeU
     causes = []
     if best.log_ratio <= verdict.needed:
         causes.append(
-            f"a smooth spread (log likelihood ratio {best.log_ratio:.1f}, {verdict.needed:.0f} needed)"
+            f"a smooth spread (log likelihood ratio {best.log_ratio:.1f}, {verdict.needed:.3g} needed)"
         )
     if verdict.margin <= MARGIN_NEEDED:
         rival = (
             f"multiples of {1 / verdict.rivals[0].frequency:.3e} C" if verdict.rivals else "any other unit"
         )
         causes.append(f"{rival} (log likelihood ratio {verdict.margin:.1f}, {MARGIN_NEEDED:.0f} needed)")
-    charge, std = (np.concatenate(column) for column in zip(*(s.independent for s in samples), strict=True))
-    weight = np.exp(-4 * np.pi**2 * (std * frequency) ** 2) + 1e-300
-    typical = np.sqrt(np.sum(weight * charge**2) / np.sum(weight))
-    width = min(0.35 / (typical * frequency), 0.12)
-    shared = _pooled_shared(samples, frequency)[1] if len(samples) > 1 else 0.0
-    return float(np.hypot(width, 3.3 * shared))
-
-
-def _pooled_shared(samples: Sequence[ChargeSample], frequency: float) -> tuple[float, float]:
-    """Relative own and shared standard uncertainty of the weighted mean of the benches' units."""
-    own = np.array([_comb_precision(sample, frequency) for sample in samples])
-    shared = np.array([sample.shared_rel_std for sample in samples])
-    weight = 1 / (own**2 + shared**2)
-    weight /= weight.sum()
-    return float(np.sqrt(np.sum((weight * own) ** 2))), float(np.sqrt(np.sum((weight * shared) ** 2)))
-
-
-def _comb_precision(sample: ChargeSample, frequency: float) -> float:
-    """Relative precision of one bench's unit; charges whose numbers are uncertain count less."""
-    charge, std = sample.independent
-    sharp = np.exp(-4 * np.pi**2 * (std * frequency) ** 2)
-    return float(1 / np.sqrt(np.sum(sharp * (charge / std) ** 2) + 1e-12))
-
-
-def _curve(frequency: FloatArray, blurred: FloatArray, peaks: list[_Peak]) -> tuple[FloatArray, FloatArray]:
-    """Statistic against the unit: the blurred scan with the climbed peaks set into it."""
-    keep = np.unique(np.linspace(0, len(frequency) - 1, min(len(frequency), 4000)).astype(int))
-    f = np.concatenate([frequency[keep], [p.frequency for p in peaks]])
-    value = np.concatenate([blurred[keep], [p.log_ratio for p in peaks]])
-    order = np.argsort(f, kind="stable")
-    return 1 / f[order], value[order]
-
-
-def _resolved(
-    samples: tuple[ChargeSample, ...], verdict: _Verdict, width: float, common: float
-) -> ChargeUnit:
-    """Posterior of the unit over the mode of the best comb."""
-    own, shared = _pooled_shared(samples, verdict.best.frequency)
-    single = len(samples) == 1
-    reach = min(40 * (own if single else np.hypot(own, shared)), 1.2 * width)
-    f, value = comb.pooled_log_ratio(samples, verdict.best.frequency, reach, 801, one_comb=True)
-    weight = np.exp(value - value.max())
-    weight /= weight.sum()
-    unit = 1 / f
-    mean = float(weight @ unit)
-    spread = float(np.sqrt(weight @ (unit - mean) ** 2))
-    shared_std = mean * float(np.hypot(shared, common))
-    own_std = (
-        spread if single else float(np.sqrt(max(spread**2 - (mean * shared) ** 2, (0.3 * mean * own) ** 2)))
-    )
-    extra = shared_std if single else mean * common
-    total = float(np.hypot(own_std, shared_std))
-    count = sum(len(sample) for sample in samples)
-    reason = (
-        f"multiples of {mean:.4e} C explain the {count} charges better than a smooth spread (log likelihood ratio "
-        f"{verdict.best.log_ratio:.0f}, {verdict.needed:.0f} needed) and better than multiples of any other unit "
-        f"({verdict.margin:.1f}, {MARGIN_NEEDED:.0f} needed); it is the largest unit that fits them"
-    )
-    bands = [_interval(f, weight, level, extra, z) for level, z in ((0.6827, 1.0), (0.95, 1.96))]
-    return ChargeUnit(
-        unit=mean, unit_std=total, unit_own_std=own_std, unit_shared_std=shared_std, resolved=True, reason=reason,
-        droplets_used=count, over_e=mean / ELEMENTARY_CHARGE, over_e_std=total / ELEMENTARY_CHARGE, best=mean,
-        log_ratio=verdict.best.log_ratio, margin=verdict.margin, rivals=_pairs_of(verdict.rivals),
-        curve_units=verdict.curve[0], curve_log_ratio=verdict.curve[1],
-        interval_68=bands[0], interval_95=bands[1], advice=None,
-    )  # fmt: skip
-
-
-def _interval(f: FloatArray, weight: FloatArray, level: float, extra: float, z: float) -> tuple[float, float]:
-    """Central interval of the unit in C; each side is widened in quadrature by z times `extra`."""
-    below = np.cumsum(weight) - 0.5 * weight
-    quantiles = np.interp([(1 + level) / 2, 0.5, (1 - level) / 2], below, f)
-    low, middle, high = 1 / quantiles
-    return float(middle - np.hypot(middle - low, z * extra)), float(
-        middle + np.hypot(high - middle, z * extra)
-    )
-
-
-def _pairs_of(peaks: Sequence[_Peak]) -> tuple[tuple[float, float], ...]:
-    """Peaks as (unit, log ratio)."""
-    return tuple((1 / peak.frequency, peak.log_ratio) for peak in peaks)
-
-
-def _unresolved(samples: tuple[ChargeSample, ...], verdict: _Verdict) -> ChargeUnit:
-    """Say why the set is not resolved, what its best combs are, and what would resolve it."""
-    count = sum(len(sample) for sample in samples)
-    best = verdict.best
-    causes = []
-    if best.log_ratio <= verdict.needed:
-        causes.append(
-            f"the best comb beats a smooth distribution by {best.log_ratio:.1f} nats, {verdict.needed:.1f} are needed"
-        )
-    if verdict.margin <= MARGIN_NEEDED:
-        rival = f"{1 / verdict.rivals[0].frequency:.3e} C" if verdict.rivals else "none"
-        causes.append(
-            f"it beats the next best ({rival}) by {verdict.margin:.1f} nats, {MARGIN_NEEDED:.0f} are needed"
-        )
     charge, std = (np.concatenate(column) for column in zip(*(s.independent for s in samples), strict=True))
     advice = resolution(charge, std, unit=_advice_unit(verdict))
     reason = (

@@ -59,6 +59,22 @@ def find_bench(recording: Path) -> Path | None:
     return None
 
 
+def own_file(recording: Path) -> Path:
+    """Name the file that overrides single keys of the bench for one recording.
+
+    Parameters
+    ----------
+    recording : Path
+        File or folder of pictures.
+
+    Returns
+    -------
+    own : Path
+        ``STEM.toml`` beside it, whether it exists or not.
+    """
+    return recording.parent / f"{recording.stem if recording.suffix else recording.name}.toml"
+
+
 def bench_text(bench: Path | str | None, *, recording: Path | None = None) -> dict[str, Any]:
     """Read bench file and override as plain merged keys, without checking values.
 
@@ -79,19 +95,18 @@ def bench_text(bench: Path | str | None, *, recording: Path | None = None) -> di
     BenchError
         If there is no bench file, or one is no TOML.
     """
+    own = None if recording is None else own_file(recording)
     main = Path(bench) if bench is not None else (find_bench(recording) if recording else None)
     if main is None:
-        raise BenchError(str(recording or BENCH_NAME), "", "no bench file",
-                         f"a {BENCH_NAME} beside the recording or in a folder above, or --bench FILE")  # fmt: skip
-    files = [main]
-    if recording is not None:
-        own = (
-            recording.with_suffix(".toml")
-            if recording.suffix
-            else recording.parent / f"{recording.name}.toml"
+        beside = (
+            f" ({own.name} beside it only changes keys of one)" if own is not None and own.is_file() else ""
         )
-        if own.is_file() and own.absolute() != main.absolute():
-            files.append(own)
+        raise BenchError(str(recording or BENCH_NAME), "", f"no bench file{beside}",
+                         f"a {BENCH_NAME} beside the recording or in a folder above, with what all recordings there "
+                         "share, or --bench FILE")  # fmt: skip
+    files = [main]
+    if own is not None and own.is_file() and own.absolute() != main.absolute():
+        files.append(own)
     merged: dict[str, Any] = {"": files}
     for file in files:
         for section, keys in _read_toml(file).items():

@@ -151,6 +151,15 @@ def test_no_bench_file_is_told_with_what_to_do(tmp_path):
         load_bench(recording=tmp_path / "clip.mp4")
 
 
+def test_an_own_file_without_a_bench_file_is_told(tmp_path):
+    """A recording's own file is no bench file: the message names it and says where a bench file belongs."""
+    (tmp_path / "clip.toml").write_text('[air]\ntemperature = "25.0(1) degC"\n')
+    with pytest.raises(
+        BenchError, match=r"clip\.mp4: read no bench file \(clip\.toml .* a bench\.toml beside"
+    ):
+        load_bench(recording=tmp_path / "clip.mp4")
+
+
 def test_a_damaged_bench_file_is_told(tmp_path):
     """What is no TOML, or no text, is one line with the place of the mistake."""
     path = tmp_path / "bench.toml"

@@ -17,9 +17,9 @@ from tracker.motion.droplet import Droplet
 from tracker.motion.droplets import Analysis
 from tracker.page.errors import RefusedError
 from tracker.page.results import Opened, field_segments
-from tracker.page.words import in_brackets
 from tracker.records import FloatArray
 from tracker.showing.plots import track_path
+from tracker.showing.terminal import pair
 
 MOST_NUMBERS = 41  # bars of the plot
 
@@ -193,7 +193,7 @@ def _number_text(numbers: dict[str, Any] | None) -> str:
     if numbers is None:
         return "This droplet has no charge, so no charge number; its reasons say why."
     best = int(np.argmax(numbers["p"]))
-    charge = in_brackets(numbers["charge"], numbers["std"]).replace("-", "\u2212")
+    charge = pair(numbers["charge"], numbers["std"], 1.0).replace("-", "\u2212")
     number = f"{numbers['n'][best]:+d}".replace("-", "\u2212")
     return (
         f"Measured {charge} e, own uncertainty (dot and bar). Most probable number {number}, "

@@ -6,29 +6,7 @@ from collections.abc import Mapping
 from typing import Any
 
 from physics.droplet import ELEMENTARY_CHARGE
-
-
-def in_brackets(value: float, std: float) -> str:
-    """Write a value with its standard uncertainty in units of the last two digits.
-
-    Parameters
-    ----------
-    value, std : float
-        In the same unit; `std` above 0.
-
-    Returns
-    -------
-    text : str
-        Such as ``1.6021(34)``.
-    """
-    from math import floor, log10
-
-    if not std > 0:
-        return f"{value:.5g}"
-    digits = max(0, 1 - floor(log10(std)))
-    if round(std * 10**digits) >= 100 and digits > 0:  # 0.00996 is 0.0100: two digits of it are 0.010
-        digits -= 1
-    return f"{value:.{digits}f}({round(std * 10**digits)})"
+from tracker.showing.terminal import pair
 
 
 def unit_words(unit: Mapping[str, Any] | None, *, short: bool = False) -> str:
@@ -49,14 +27,14 @@ def unit_words(unit: Mapping[str, Any] | None, *, short: bool = False) -> str:
         return "" if short else "No charge unit was looked for."
     value, std = unit.get("charge_unit_c"), unit.get("charge_unit_std_c")
     if unit.get("resolved") and value:
-        text = f"charge unit {in_brackets(value * 1e19, (std or 0.0) * 1e19)} \u00d7 10\u207b\u00b9\u2079 C"
+        text = f"charge unit {pair(value, std, 1e19)} \u00d7 10\u207b\u00b9\u2079 C"
         if short:
             return text
         used = unit.get("droplets_used")
-        over_e = f"{in_brackets(value / ELEMENTARY_CHARGE, (std or 0.0) / ELEMENTARY_CHARGE)} e"
+        over_e = f"{pair(value, std, 1 / ELEMENTARY_CHARGE)} e"
         parts = _parts(unit.get("charge_unit_own_std_c"), unit.get("charge_unit_shared_std_c"))
-        return f"{text[0].upper()}{text[1:]}{parts}, {over_e}, from {used} droplets. No quantum was assumed."
-    reason = str(unit.get("reason") or "the charges do not show one").rstrip(". ")
+        return f"{text[0].upper()}{text[1:]}{parts}, {over_e}, from {used} charges. No quantum was assumed."
+    reason = str(unit.get("reason") or "not resolved").rstrip(". ")
     return "" if short else f"Charge unit {reason}. Charges are shown over e."
 
 

@@ -13,7 +13,7 @@ from numpy.typing import NDArray
 from tracker.motion.verdict import REASONS
 from tracker.showing.html import Grid, Picture, Section, render
 from tracker.showing.plots import new_figure, plot_recording
-from tracker.showing.terminal import droplet_cells, missing
+from tracker.showing.terminal import count, droplet_cells, length, missing
 from tracker.showing.unitwords import charge_unit_lines
 
 if TYPE_CHECKING:
@@ -253,8 +253,7 @@ def recording_page(result: Result) -> str:
     counts = drops["verdict"].value_counts()
     told = ", ".join(f"{counts.get(v, 0)} {v}" for v in ("keep", "doubt", "reject"))
     lead = [
-        f"{frames.get('count', 0)} frames from {frames.get('first_s', 0):.6g} s to {frames.get('last_s', 0):.6g} s; "
-        f"{len(drops)} droplets: {told}.",
+        f"{length(frames)}; {count(len(drops), 'droplet')}: {told}.",
         f"Bench {provenance.get('bench', {}).get('name', '')}, fallrise "
         f"{provenance.get('versions', {}).get('fallrise', '')}.",
         f"SHA-256 of the recording: {provenance.get('sha256', '')}.",
@@ -277,7 +276,7 @@ def _recording_text(result: Result) -> str:
     radii = kept["radius_m"].dropna() * 1e6
     span = f", radii {radii.min():.2f} to {radii.max():.2f} um" if len(radii) else ""
     return (f"Tracks in the picture, heights over time with the field-on segments shaded, and charges over e with "
-            f"their own uncertainties: {len(kept)} kept droplets{span}.")  # fmt: skip
+            f"their own uncertainties: {count(len(kept), 'kept droplet')}{span}.")  # fmt: skip
 
 
 def droplet_grid(droplets: pd.DataFrame) -> Grid:

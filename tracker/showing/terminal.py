@@ -66,10 +66,10 @@ def show_result(result: Result) -> None:
     drops, frames = result.droplets, result.recording.get("frames", {})
     counts = drops["verdict"].value_counts()
     told = ", ".join(f"{counts.get(v, 0)} {v}" for v in ("keep", "doubt", "reject"))
-    span = (
-        f"{frames.get('count', 0)} frames, {frames.get('first_s', 0):.6g} to {frames.get('last_s', 0):.6g} s"
+    console.print(
+        f"{result.recording.get('file', '')}: {length(frames)}; {count(len(drops), 'droplet')}: {told}",
+        markup=False,
     )
-    console.print(f"{result.recording.get('file', '')}: {span}; {len(drops)} droplets: {told}", markup=False)
     if len(drops):
         console.print(_droplet_table(result))
     for line in charge_unit_lines(result.recording.get("charge_unit")):
@@ -147,6 +147,41 @@ def show_budgets(made: Mapping[int | None, Budget]) -> None:
         console.print(shown)
         if budget.note:
             console.print(budget.note, markup=False)
+
+
+def count(number_: int, noun: str) -> str:
+    """Write a number of things.
+
+    Parameters
+    ----------
+    number_ : int
+        How many.
+    noun : str
+        In the singular; its plural ends in s.
+
+    Returns
+    -------
+    text : str
+        Such as ``1 droplet`` and ``0 droplets``.
+    """
+    return f"{number_} {noun}{'' if number_ == 1 else 's'}"
+
+
+def length(frames: Mapping[str, Any]) -> str:
+    """Say how long a recording is.
+
+    Parameters
+    ----------
+    frames : mapping
+        ``frames`` of ``recording.json``.
+
+    Returns
+    -------
+    text : str
+        Such as ``1500 frames, 0 to 59.96 s``.
+    """
+    first, last = frames.get("first_s", 0), frames.get("last_s", 0)
+    return f"{count(frames.get('count', 0), 'frame')}, {first:.6g} to {last:.6g} s"
 
 
 def missing(value: object) -> bool:

@@ -6,7 +6,6 @@ from collections.abc import Mapping
 from typing import Any
 
 from physics.droplet import ELEMENTARY_CHARGE
-from physics.resolution import LOG_RATIO_NEEDED, MARGIN_NEEDED
 from tracker.showing.terminal import pair
 
 
@@ -32,15 +31,25 @@ def charge_unit_lines(unit: Mapping[str, Any] | None) -> tuple[str, ...]:
     own, shared = unit.get("charge_unit_own_std_c"), unit.get("charge_unit_shared_std_c")
     parts = "" if own is None or shared is None else f" (own {own * 1e19:#.2g}, shared {shared * 1e19:#.2g})"
     over_e = pair(value, std, 1 / ELEMENTARY_CHARGE)
-    return f"charge unit {pair(value, std, 1e19)}e-19 C{parts}, {over_e} e", _grounds(unit)
-
-
-def _grounds(unit: Mapping[str, Any]) -> str:
-    """Say on what a resolved unit rests."""
-    log_ratio, margin = unit.get("log_ratio") or 0.0, unit.get("margin") or 0.0
-    return (
-        f"Found from {unit.get('droplets_used')} charges without assuming a unit (a droplet whose charge changed "
-        "counts as its charge and the change). Multiples of this unit explain them better than a smooth spread, by "
-        f"{log_ratio:.0f} nats of log likelihood ({LOG_RATIO_NEEDED:.0f} are asked for), and better than multiples of "
-        f"any other unit, by {margin:.1f} ({MARGIN_NEEDED:.0f} are asked for). It is the largest unit that fits."
+    used = (
+        "No unit was assumed; a droplet whose charge changed counts twice, as its charge and as the change."
     )
+    return (
+        f"charge unit {pair(value, std, 1e19)}e-19 C{parts}, {over_e} e",
+        f"{sentence(unit['reason'])} {used}",
+    )
+
+
+def sentence(text: str) -> str:
+    """Make a sentence of a reason: a capital first, one full stop last.
+
+    Parameters
+    ----------
+    text : str
+        Such as the reason of a charge unit.
+
+    Returns
+    -------
+    sentence : str
+    """
+    return f"{text[:1].upper()}{text[1:].rstrip('. ')}."

@@ -23,7 +23,7 @@ FloatArray = NDArray[np.float64]
 
 COMMON_INPUTS = ("viscosity_model", "slip_model")  # models that err alike on all benches
 EXPLAINING = ("scale", "plate_gap", "voltage", "viscosity_model")  # single errors that a bench is asked for
-AGREES_WITHIN = 2.0  # own standard uncertainties off e, below which nothing needs to be explained
+AGREES_WITHIN = 2.0  # standard uncertainties off e, below which nothing needs to be explained
 ODD_FROM = 3.0  # standard uncertainties off the other benches, from which a bench leaves the pool
 _WORDS = {
     "scale": "a scale",
@@ -350,8 +350,13 @@ def _with_sentence(bench: BenchUnit) -> BenchUnit:
     if abs(bench.ratio - 1) < AGREES_WITHIN * bench.ratio_own_std:
         return replace(bench, sentence=f"{start}; it agrees with e.")
     ways = "; ".join(_error_words(name, *error) for name, error in bench.errors.items())
-    return replace(bench, sentence=f"{start}; {abs(bench.deviation):.1f} standard uncertainties off e. One of these "
-                   f"would explain it: {ways}.")  # fmt: skip
+    off = f"{abs(bench.deviation):.1f} standard uncertainties off e"
+    if (
+        abs(bench.deviation) < AGREES_WITHIN
+    ):  # more than the droplets' own spread, less than what the bench allows
+        return replace(bench, sentence=f"{start}; {off}, as what its droplets share allows. It would be e with one of "
+                       f"these: {ways}.")  # fmt: skip
+    return replace(bench, sentence=f"{start}; {off}. One of these would explain it: {ways}.")
 
 
 def _error_words(name: str, error: float, std: float) -> str:

@@ -9,6 +9,7 @@ import numpy as np
 
 from physics.quanta import SEARCH, ChargeUnit
 from tracker.keeping.store import replace_file, write_json
+from tracker.showing.terminal import count, pair
 from tracker.showing.units import ChargeGroup, UnitRatio, unit_figure
 from tracker.term.pool import BenchUnit, Pool
 
@@ -45,11 +46,13 @@ def counted(pool: Pool) -> str:
     drawn = sum(len(bench.sample) for bench in pool.benches)
     changed = sum(len(bench.sample.pair) for bench in pool.benches)
     aside = drawn - pool.unit.droplets_used
-    text = f"Of kept droplets there are {drawn} charges that differ from 0"
+    text = f"The kept droplets give {count(drawn, 'charge')} that can be told from 0"
     if changed:
-        text += f"; {changed} droplets whose charge changed give two each, a charge and its change"
+        text += f"; two from {count(changed, 'droplet')} whose charge changed: the charge and its change"
     if aside:
-        text += f"; {aside} do not count in the unit, being too blurred or of a bench that is left out"
+        text += (
+            f"; {aside} of them are left out of the unit, being too blurred or of a bench that is left out"
+        )
     return f"{text}."
 
 
@@ -175,8 +178,8 @@ def pool_text(pool: Pool) -> str:
     lines = [unit.reason]
     if unit.resolved:
         lines.insert(0, f"charge unit {unit.unit:.5e} C +/- {unit.unit_own_std:.1e} C (own) +/- "
-                     f"{unit.unit_shared_std:.1e} C (shared), {unit.over_e:.4f}({unit.over_e_std:.4f}) e")  # fmt: skip
+                     f"{unit.unit_shared_std:.1e} C (shared), {pair(unit.over_e, unit.over_e_std, 1)} e")  # fmt: skip
     lines.append(counted(pool))
-    lines += [bench.sentence for bench in pool.benches]
+    lines += [bench.sentence for bench in pool.benches if not bench.sentence.endswith(unit.reason)]
     lines += [f"left out {name}: {reason}" for name, reason in pool.skipped]
     return "\n".join(lines)

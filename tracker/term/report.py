@@ -25,7 +25,9 @@ from tracker.showing.report import (
     recording_page,
     trend_figure,
 )
+from tracker.showing.terminal import count
 from tracker.showing.units import unit_figure
+from tracker.showing.unitwords import sentence
 from tracker.term.drift import Drift, bench_drifts, monday_of
 from tracker.term.duplicates import duplicates
 from tracker.term.findings import doubtful
@@ -129,12 +131,14 @@ def term_page(entries: Sequence[Entry], results: Mapping[str, Result]) -> str:
     failed = [entry for entry in entries if entry.status == "failed"]
     kept = 0 if droplets is None else int((droplets["verdict"] == "keep").sum())
     span = f", {min(days.values())} to {max(days.values())}" if days else ""
-    lead = [f"{len(entries)} recordings{span}: {len(entries) - len(failed)} measured, {len(failed)} failed; "
-            f"{0 if droplets is None else len(droplets)} droplets, {kept} of them kept."]  # fmt: skip
+    lead = [f"{count(len(entries), 'recording')}{span}: {len(entries) - len(failed)} measured, {len(failed)} failed; "
+            f"{count(0 if droplets is None else len(droplets), 'droplet')}, {kept} of them kept."]  # fmt: skip
     lead += [f"{name}: {why}. Its droplets are not counted again." for name, why in twice.items()]
     sections = [Section("What was measured", (), (coverage_grid(entries),))]
     findings = (
-        [f"{len(failed)} of {len(entries)} recordings failed; the list below says why."] if failed else []
+        [f"{len(failed)} of {count(len(entries), 'recording')} failed; the list below says why."]
+        if failed
+        else []
     )
     findings = [*doubtful(results), *findings]
     if results:
@@ -238,7 +242,7 @@ def _unit_sections(pool: Pool, drifts: Sequence[Drift]) -> list[Section]:
     value = (f"Charge unit {unit.unit:.5e} C, own uncertainty {unit.unit_own_std:.1e} C, shared "
              f"{unit.unit_shared_std:.1e} C; {unit.over_e:.4f} of e "
              f"with a standard uncertainty of {unit.over_e_std:.4f}.")  # fmt: skip
-    reason = f"{unit.reason[:1].upper()}{unit.reason[1:].rstrip('.')}."
+    reason = sentence(unit.reason)
     told = (value, reason) if unit.resolved else (reason,)
     aside = [f"{b.label} drifts and is part of this unit." for b, d in zip(pool.benches, drifts, strict=True)
              if d.drifts and not b.left_out]  # fmt: skip
@@ -372,7 +376,7 @@ def _reasons_section(droplets: pd.DataFrame) -> Section:
     counts = reason_counts(droplets)
     verdicts = Counter(droplets["verdict"])
     told = ", ".join(f"{verdicts.get(v, 0)} {v}" for v in ("keep", "doubt", "reject"))
-    text = f"{len(droplets)} droplets: {told}."
+    text = f"{count(len(droplets), 'droplet')}: {told}."
     if not counts:
         return Section("Droplets that are not kept", (text, "No reason stands against any droplet."))
     figure = bars_figure(dict(counts.most_common()), title="Reasons against droplets", xlabel="droplets")
@@ -397,7 +401,7 @@ def _distribution_section(droplets: pd.DataFrame) -> Section:
         text = "No kept droplet has one."
         if len(joined):
             low, middle, high = np.percentile(joined, [5, 50, 95])
-            text = (f"{len(joined)} kept droplets: median {middle:.3g} {unit}, 5 % below {low:.3g} {unit}, "
+            text = (f"{count(len(joined), 'kept droplet')}: median {middle:.3g} {unit}, 5 % below {low:.3g} {unit}, "
                     f"5 % above {high:.3g} {unit}.")  # fmt: skip
         title = f"Distribution of the {name}"
         figure = distribution_figure(

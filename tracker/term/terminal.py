@@ -6,6 +6,7 @@ import sys
 from collections.abc import Iterator
 from contextlib import contextmanager
 
+from tracker.showing.terminal import count
 from tracker.term.batch import Batch, Progress
 
 
@@ -67,6 +68,6 @@ def batch_text(batch: Batch) -> str:
     kept = sum(entry.kept for entry in batch.entries)
     droplets = sum(entry.droplets for entry in batch.entries)
     counts = f"{done} done, {len(batch.failed)} failed, {batch.measured} measured now"
-    lines = [f"{len(batch.entries)} recordings: {counts}; {droplets} droplets, {kept} kept"]
+    lines = [f"{count(len(batch.entries), 'recording')}: {counts}; {count(droplets, 'droplet')}, {kept} kept"]
     lines += [f"failed: {entry.recording}: {entry.reason}" for entry in batch.failed]
     return "\n".join([*lines, f"result: {batch.out}"])

@@ -10,7 +10,7 @@ from importlib.metadata import version
 from typing import TYPE_CHECKING
 
 from physics.errors import FallriseError
-from tracker.errors import FileError, ResultError
+from tracker.errors import ResultError
 
 if TYPE_CHECKING:
     from tracker.keeping.store import Result
@@ -138,9 +138,7 @@ def done_outcome(result: Result, *, seconds: float) -> Outcome:
 
 def _line(task: Task, error: FallriseError) -> str:
     """What failed in one line; the recording's own name stands beside it already."""
-    if isinstance(error, FileError) and error.file == str(task.recording):
-        return " ".join(error.problem.split())
-    return " ".join(str(error).split())
+    return " ".join(str(error).removeprefix(f"{task.recording}: ").split())
 
 
 def _failed(task: Task, reason: str, error: BaseException, start: float) -> Outcome:

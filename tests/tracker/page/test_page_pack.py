@@ -13,7 +13,7 @@ from tracker.errors import RecordingError
 from tracker.page import pack as packs
 from tracker.page.errors import RefusedError
 from tracker.page.pack import Pack, make_room, write_pack
-from tracker.page.words import in_brackets, unit_words
+from tracker.page.words import unit_words
 
 
 def pictures(
@@ -133,12 +133,8 @@ def test_cache_throws_the_longest_unused_away(tmp_path: Path, monkeypatch: pytes
     assert refused.value.status == 507
 
 
-def test_values_are_written_with_two_digits_of_doubt() -> None:
-    """Brackets hold the standard uncertainty in units of the last digit (GUM, 7.2.2)."""
-    assert in_brackets(100.02147, 0.00035) == "100.02147(35)"
-    assert in_brackets(1.6018, 0.00998) == "1.602(10)"
-    assert in_brackets(886.0, 12.0) == "886(12)"
-    assert in_brackets(2.0, 0.0) == "2"
+def test_a_unit_that_is_not_resolved_gives_its_reason() -> None:
+    """The page says why no unit is seen and over what charges are shown then."""
     assert unit_words({"resolved": False, "reason": "not resolved from 3 charges."}).startswith(
         "Charge unit not resolved from 3 charges. "
     )
@@ -152,5 +148,5 @@ def test_charge_unit_tells_own_from_shared_uncertainty() -> None:
     }  # fmt: skip
     assert unit_words(unit) == (
         "Charge unit 1.610(25) \u00d7 10\u207b\u00b9\u2079 C (own 0.020, shared 0.015), 1.005(16) e, "
-        "from 14 droplets. No quantum was assumed."
+        "from 14 charges. No quantum was assumed."
     )

@@ -208,7 +208,7 @@ def test_picture_shows_as_many_charges_as_are_counted(tmp_path):
     assert len(group.charge) == pool.unit.droplets_used == 31
     np.testing.assert_allclose(group.charge[-2:], [main_charge, E])
     np.testing.assert_allclose(group.own_std[-2:], [0.05 * E, np.sqrt(2) * 0.05 * E])
-    assert "31 charges that differ from 0; 1 droplets whose charge changed" in pool_text(pool)
+    assert "31 charges that can be told from 0; two from 1 droplet whose charge changed" in pool_text(pool)
 
 
 def test_air_current_of_a_recording_is_shared_by_its_droplets(tmp_path):

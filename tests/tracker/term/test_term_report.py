@@ -223,7 +223,7 @@ def test_term_without_a_single_result_has_a_page():
         )
     ]
     found = Page(term_page(failed, {}))
-    assert "1 recordings, 2026-09-07 to 2026-09-07: 0 measured, 1 failed" in " ".join(found.text)
+    assert "1 recording, 2026-09-07 to 2026-09-07: 0 measured, 1 failed" in " ".join(found.text)
     assert found.pictures == []
 
 
