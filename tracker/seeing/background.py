@@ -24,6 +24,7 @@ _LINE_ROUNDS = 6
 _LINE_DEPTH = 0.93  # shade below this is a line
 _RESTLESS = 4.0  # times the usual median deviation from the background
 _MOST_RESTLESS = 0.2  # of the picture; more is a change of light
+_STRIP_BYTES = 65_536  # of each sample that are sorted at once
 _MIN_TEMPORAL = 12  # fewer samples cannot tell a droplet from glare in time
 
 
@@ -96,15 +97,21 @@ def _change_sigma(samples: NDArray[Any]) -> float:
 
 
 def ranks_in_time(samples: Pictures, ranks: tuple[int, ...]) -> list[NDArray[Any]]:
-    """Each pixel's samples of the given ranks in increasing order, 0 the lowest; picture-wide minima and maxima."""
-    planes = list(samples)
-    for a, b, low, high in _network(len(planes), ranks):
-        first, second = planes[a], planes[b]
-        if low:
-            planes[a] = np.minimum(first, second)
-        if high:
-            planes[b] = np.maximum(first, second)
-    return [planes[r] for r in ranks]
+    """Each pixel's samples of the given ranks in increasing order, 0 the lowest; by strips, to need little memory."""
+    height, width = samples[0].shape
+    found = [np.empty_like(samples[0]) for _ in ranks]
+    step = max(1, _STRIP_BYTES // (width * samples[0].itemsize))
+    for top in range(0, height, step):
+        planes = [s[top : top + step] for s in samples]
+        for a, b, low, high in _network(len(planes), ranks):
+            first, second = planes[a], planes[b]
+            if low:
+                planes[a] = np.minimum(first, second)
+            if high:
+                planes[b] = np.maximum(first, second)
+        for picture, rank in zip(found, ranks, strict=True):
+            picture[top : top + step] = planes[rank]
+    return found
 
 
 @lru_cache(maxsize=16)

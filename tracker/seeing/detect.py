@@ -203,8 +203,8 @@ def local_noise(stack: F32, *, tile: int) -> F32:
     smooth = noise_map(stack, tile=tile)
     if len(stack) < _RESTLESS_SAMPLES:
         return smooth
-    (low,) = ranks_in_time(np.minimum(stack, 0), (round(0.12 * (len(stack) - 1)),))
-    own = cv2.blur(-low, (3, 3)) / np.float32(_RESTLESS_DEPTH)
+    (low,) = ranks_in_time(stack, (round(0.12 * (len(stack) - 1)),))
+    own = cv2.blur(np.maximum(-low, 0), (3, 3)) / np.float32(_RESTLESS_DEPTH)
     return np.asarray(np.maximum(smooth, own), np.float32)
 
 
