@@ -18,6 +18,7 @@ from tracker.seeing.sources import Form
 IntArray = NDArray[np.int64]
 
 _SAMPLES = 56  # pictures behind the background
+_SAMPLE_BYTES = 300_000_000  # of them at most: 36 of 3840 x 2160 px
 _HEAD_SECONDS = 8.0  # that are looked at before any droplet is sought
 _HEAD_BYTES = 160_000_000  # of pictures kept for that
 _KEY_FRAMES = 16  # more samples from further on, where not every picture can be reached
@@ -100,12 +101,26 @@ def gather_samples(source: Source, settings: Settings) -> NDArray[Any]:
         light = Light(light.grid, black, usual, False)
         odd = strange(light, *compare(light, far))
         far = [p for p, o in zip(far, odd, strict=True) if not o]
-    if source.form.seekable and len(far) >= min(_SAMPLES // 2, source.form.frames or _SAMPLES):
-        return np.stack(far)
+    most = _most_samples(source.form)
+    if source.form.seekable and len(far) >= min(most // 2, source.form.frames or most):
+        return _stacked(far)
     if source.form.seekable and source.fill(settings, seconds=_HEAD_SECONDS):
         near = _steady_part(source, black)
-    rows = np.unique(np.linspace(0, len(near) - 1, max(_SAMPLES - len(far), 1)).astype(int))
-    return np.stack([near[i] for i in rows] + far)
+    rows = np.unique(np.linspace(0, len(near) - 1, max(most - len(far), 1)).astype(int))
+    return _stacked([near[i] for i in rows] + far)
+
+
+def _most_samples(form: Form) -> int:
+    return max(min(_SAMPLES, _SAMPLE_BYTES // form.picture_bytes), 1)
+
+
+def _stacked(pictures: list[NDArray[Any]]) -> NDArray[Any]:
+    """Pictures as one array; the list is emptied on the way, so that large ones are not held twice."""
+    stack = np.empty((len(pictures), *pictures[0].shape), pictures[0].dtype)
+    while pictures:
+        picture = pictures.pop()
+        stack[len(pictures)] = picture
+    return stack
 
 
 def _steady_part(source: Source, black: float) -> list[NDArray[Any]]:
@@ -124,7 +139,7 @@ def _far_samples(source: Source, settings: Settings) -> list[NDArray[Any]]:
         last = min(last, settings.end)
     if last <= first:
         return []
-    many = _SAMPLES if form.seekable else _KEY_FRAMES
+    many = _most_samples(form) if form.seekable else _KEY_FRAMES
     wanted = first + (last - first) * (np.arange(many) + 0.5) / many
     if not form.seekable:
         wanted = wanted[wanted > source.head[-1].times[-1]]
