@@ -23,6 +23,7 @@ _MOST_LINES = 0.4  # of the picture; more is no reticle but an uneven background
 _LINE_ROUNDS = 6
 _LINE_DEPTH = 0.93  # shade below this is a line
 _RESTLESS = 4.0  # times the usual median deviation from the background
+_LEAST_RESTLESS = 0.4  # grey, for that median deviation: what a codec holds still deviates by less
 _MOST_RESTLESS = 0.2  # of the picture; more is a change of light
 _STRIP_BYTES = 65_536  # of each sample that are sorted at once
 _MIN_TEMPORAL = 12  # fewer samples cannot tell a droplet from glare in time
@@ -209,7 +210,9 @@ def fill_restless(background: Background, samples: NDArray[Any], *, width: float
     some = samples[:: max(1, len(samples) // 24)]
     rest = [cv2.resize(np.abs(_local_mean(p - background.level, 2 * step + 1)), size) for p in some]
     (usual,) = ranks_in_time(rest, (len(rest) // 2,))
-    restless: NDArray[Any] = (usual > _RESTLESS * max(float(np.median(usual)), 1e-3)).astype(np.uint8)
+    restless: NDArray[Any] = (usual > _RESTLESS * max(float(np.median(usual)), _LEAST_RESTLESS)).astype(
+        np.uint8
+    )
     restless = cv2.morphologyEx(restless, cv2.MORPH_OPEN, np.ones((2, 2), np.uint8))
     share = float(restless.mean())
     if not 0 < share < _MOST_RESTLESS:

@@ -17,13 +17,17 @@ IntArray = NDArray[np.int64]
 
 _GRID = 8  # px, least distance of the pixels that are compared
 _ACROSS = 40  # of them along the shorter side
-_MISMATCH, _MISMATCH_GREY = 1.5, 0.3  # of the usual mismatch, and grey: more is another picture
+_PATCH = 5  # pixels of the grid along each side of the means that are compared
+_LOCAL = (
+    3.0  # times the picture's mean difference that one place counts at most: a lamp in a corner is no change
+)
+_MISMATCH, _MISMATCH_GREY = 1.5, 0.7  # of the usual mismatch, and grey: more is another picture
 _SWING = 1.6  # ratio of light beyond which a frame belongs to another illumination
 _LASTING = 4  # frames that make a change of illumination
 _FLICKER = 0.004  # relative spread of the light that is corrected
 _LEAST_LIGHT = 2.0  # grey over black; a darker background tells no ratio
 _MOVED = 0.6  # px, least shift of the background that is a moved camera
-_ALIKE = 0.15  # least response of the phase correlation that means anything
+_ALIKE = 0.6  # least correlation of two backgrounds that show one thing
 _JUMP = 1.0  # px, least common jump of all droplets
 _FEW_SIGHTINGS = 20  # fewer show no common motion
 _JUMP_CLEAR = 4.0  # times the median deviation among droplets
@@ -36,7 +40,7 @@ class Light:
 
     grid: F32  # grey over black
     black: float
-    mismatch: float  # mean absolute difference of a sample, grey
+    mismatch: float  # usual mismatch of a sample, grey; see `compare`
     flickers: bool  # whether the light varies from frame to frame by more than its measurement
 
 
@@ -73,8 +77,10 @@ def light_of(samples: NDArray[Any], level: F32 | None, black: float) -> Light:
     ratio, mismatch = compare(first, list(samples))
     spread = 1.4826 * float(np.median(np.abs(ratio - np.median(ratio))))
     usual = float(np.median(mismatch))
-    # standard error of a median of n ratios, from the mean absolute difference of the pictures
-    doubt = 1.25 * 1.25 * usual / max(float(np.median(first.grid)), 1e-3) / math.sqrt(first.grid.size)
+    # standard error of a median of n ratios, from the mean absolute difference of single pixels
+    doubt = (
+        1.25 * 1.25 * _PATCH * usual / max(float(np.median(first.grid)), 1e-3) / math.sqrt(first.grid.size)
+    )
     return Light(first.grid, black, usual, max(spread, float(ratio.std()) / 2) > max(_FLICKER, 3 * doubt))
 
 
@@ -91,7 +97,12 @@ def compare(light: Light, pictures: list[NDArray[Any]]) -> tuple[FloatArray, Flo
     ratio : ndarray of shape (n,)
         Median ratio of grey over black; 1 where the background is dark.
     mismatch : ndarray of shape (n,)
-        Mean absolute difference after that, grey.
+        Mean absolute difference of patches after that, grey.
+
+    Notes
+    -----
+    Patches are means over some tens of px each way: another light or place changes them, noise and what a codec
+    holds or lets go from picture to picture hardly do.
     """
     grids = np.stack([_grid(p) for p in pictures]).reshape(len(pictures), -1).astype(np.float32)
     grids -= np.float32(light.black)
@@ -102,7 +113,10 @@ def compare(light: Light, pictures: list[NDArray[Any]]) -> tuple[FloatArray, Flo
         lit = grids / ground if bright.all() else grids[:, bright] / ground[bright]
         ratio = np.maximum(np.median(lit, axis=1, overwrite_input=True), 1e-3).astype(np.float64)
     grids -= ratio[:, None].astype(np.float32) * ground
-    return ratio, np.abs(grids, out=grids).mean(1, dtype=np.float64)
+    patches = np.stack([cv2.blur(g.reshape(light.grid.shape), (_PATCH, _PATCH)) for g in grids])
+    size = np.abs(patches, out=patches).reshape(len(pictures), -1)
+    most = np.float32(_LOCAL) * size.mean(1, keepdims=True)
+    return ratio, np.minimum(size, most, out=size).mean(1, dtype=np.float64)
 
 
 def even(light: Light, pictures: list[NDArray[Any]], ratio: FloatArray) -> list[NDArray[Any]]:
@@ -141,13 +155,28 @@ def first_change(pictures: list[NDArray[Any]], black: float) -> int | None:
 
 
 def shift_between(before: F32, after: F32) -> tuple[float, float] | None:
-    """Shift of one background against another in px (x, y); None if it is below what can be told."""
+    """Shift of one background against another in px (x, y); None if it is below what can be told.
+
+    Notes
+    -----
+    From the highest correlation of what is finer than glare. A reticle repeats itself, and correlation by phase
+    alone, which weighs all frequencies alike, then takes noise for a shift.
+    """
     if before.shape != after.shape:
         return None
     a, b = (np.asarray(p - cv2.GaussianBlur(p, (0, 0), 6), np.float32) for p in (before, after))
     window = cv2.createHanningWindow(a.shape[::-1], cv2.CV_32F)
-    (x, y), response = cv2.phaseCorrelate(a, b, window)
-    return (x, y) if response > _ALIKE and np.hypot(x, y) > _MOVED else None
+    a, b = a * window, b * window
+    alike = np.fft.irfft2(np.fft.rfft2(b) * np.fft.rfft2(a).conj(), a.shape)
+    alike /= max(float(np.linalg.norm(a)) * float(np.linalg.norm(b)), 1e-9)
+    at = np.unravel_index(int(alike.argmax()), alike.shape)
+    shift = []
+    for axis, size in enumerate(a.shape):
+        left, middle, right = (float(np.roll(alike, 1 - k, axis)[at]) for k in range(3))
+        place = int(at[axis]) + 0.5 * (left - right) / min(left + right - 2 * middle, -1e-12)
+        shift.append((place + size / 2) % size - size / 2)
+    y, x = shift
+    return (x, y) if alike[at] > _ALIKE and math.hypot(x, y) > _MOVED else None
 
 
 def common_jumps(sightings: Sightings, piece: IntArray, times: FloatArray) -> list[int]:
