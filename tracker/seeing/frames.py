@@ -54,6 +54,7 @@ class Reader:
         self._hash = _Hash(path)
         self._times: list[float] = []
         self._repeated: list[int] = []
+        self._kinds: list[str] = []
         self._untimed = self._unordered = self._damaged = 0
         self._differences: list[float] = []
         self._last: Picture | None = None
@@ -143,6 +144,7 @@ class Reader:
             time, sound = self._time(frame.time)
             self._times.append(time)
             self._damaged += frame.corrupt
+            self._kinds.append(frame.kind)
             repeated[i] |= not sound
         self._repeated += [first + int(i) for i in np.flatnonzero(repeated)]
         usable = ~repeated & ~np.array([f.corrupt for f in frames])
@@ -175,6 +177,11 @@ class Reader:
         self._differences = (self._differences + changes)[-_HISTORY:]
         self._last = pictures[-1]
         return repeated
+
+    @property
+    def kinds(self) -> NDArray[np.str_]:
+        """Kind of each picture read so far: I, P, B, or empty where it is not known or all are alike."""
+        return np.array(self._kinds, np.str_)
 
     def recording(self) -> Recording:
         """Facts of the recording after the whole pass.

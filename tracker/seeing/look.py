@@ -19,7 +19,7 @@ from tracker.seeing.streak import Streaks, fit_streaks
 Rows = NDArray[np.int64]
 Columns = dict[str, NDArray[Any]]
 
-COLUMNS = ("frame", "x", "y", "x_std", "y_std", "brightness", "width", "flags")
+COLUMNS = ("frame", "x", "y", "x_std", "y_std", "brightness", "width", "flags", "strain")
 _NEIGHBOUR = 5.6  # widths: nearer spots are fitted jointly
 _ODD = 5.0  # standard deviations of a width or slant that one sharp spot would not show
 _MOST_SPREAD = 2.5  # standard deviations; more is no noise of a codec but many fast or soft droplets
@@ -49,7 +49,7 @@ def look(eyes: Eyes, pictures: list[NDArray[Any]], numbers: Rows) -> Columns:
     Returns
     -------
     columns : dict
-        Columns of `Sightings`, ordered by frame; empty for no pictures.
+        Columns of `Sightings`, ordered by frame, and `strain` as in `hold_copies`; empty for no pictures.
     """
     if not pictures:
         return {}
@@ -96,7 +96,7 @@ def _table(spots: Spots, frame: Rows) -> Columns:
         "frame": frame, "amplitude": spots.amplitude.copy(), "x": spots.x.copy(), "y": spots.y.copy(),
         "x_var": spots.covariance[:, 1, 1].copy(), "y_var": spots.covariance[:, 2, 2].copy(),
         "excess": spots.excess.copy(), "sx": spots.sx.copy(), "sy": spots.sy.copy(),
-        "flags": np.zeros(len(frame), np.int64),
+        "flags": np.zeros(len(frame), np.int64), "strain": spots.growth.copy(),
     }  # fmt: skip
 
 
@@ -279,6 +279,7 @@ def _finish(eyes: Eyes, table: Columns, numbers: Rows) -> Columns:
         "y_std": np.sqrt(np.maximum(table["y_var"] * excess, 1e-12)),
         "width": np.sqrt(table["sx"] * table["sy"]),
         "brightness": 2 * np.pi * table["amplitude"] * table["sx"] * table["sy"],
+        "strain": table["strain"] / np.sqrt(excess)[:, None],
     }  # fmt: skip
     inside = (x > -0.5) & (y > -0.5) & (x < breadth - 0.5) & (y < height - 0.5)
     order = np.argsort(out["frame"], kind="stable")

@@ -12,6 +12,7 @@ from numpy.typing import NDArray
 
 from tracker.errors import UsageError
 from tracker.records import FloatArray, Seen, Settings, Sightings
+from tracker.seeing.copies import hold_copies
 from tracker.seeing.fixed import on_fixed_places
 from tracker.seeing.frames import Reader, open_recording
 from tracker.seeing.learn import Eyes, learn
@@ -73,10 +74,9 @@ def see(
             watch.learned(eyes, source)
             rows += _follow(eyes, source, check=len(watch.eyes) < _MOST_LIGHTS)
         recording = reader.recording()
-    sightings = _gather(rows, watch.box)
-    if lamp is not None:
-        sightings = sightings.take(~_within(sightings, lamp))
+    sightings, strain = _gather(rows, watch.box, lamp)
     pieces = first_pieces(sightings, recording)
+    sightings, copies = hold_copies(sightings, strain=strain, piece=pieces, kinds=reader.kinds)
     jumps = common_jumps(sightings, pieces, recording.frame_times)
     fixed = on_fixed_places(sightings, pieces, recording)
     warnings = [*watch.warnings, *(f"all droplets jump at frame {j}: tracks are cut there" for j in jumps)]
@@ -84,7 +84,7 @@ def see(
         sightings = sightings.take(~fixed)
         warnings.append(f"{int(fixed.sum())} sightings of bright places that never move were left out")
     grey = np.concatenate(watch.grey) if lamp is not None else None
-    report = watch.report(len(sightings) / len(recording.frame_times))
+    report = watch.report(len(sightings) / len(recording.frame_times), copies)
     return Seen(
         recording, sightings, report, grey, np.array(sorted({*watch.cuts, *jumps}), np.int64), tuple(warnings)
     )
@@ -146,10 +146,15 @@ class _Watch:
                 self.warnings.append(f"the camera was moved by {moved} at {time:.2f} s: tracks are cut there")
         self.eyes.append(eyes)
 
-    def report(self, per_frame: float) -> dict[str, Any]:
+    def report(self, per_frame: float, copies: dict[str, Any]) -> dict[str, Any]:
         """What was found, for provenance; of the first illumination."""
         first = self.eyes[0].report if self.eyes else {}
-        return {**first, "illuminations": len(self.eyes), "sightings_per_frame": per_frame}
+        return {
+            **first,
+            "illuminations": len(self.eyes),
+            "sightings_per_frame": per_frame,
+            "picture_kinds": copies,
+        }
 
 
 def _follow(eyes: Eyes, source: Source, *, check: bool) -> list[Columns]:
@@ -192,12 +197,17 @@ def _within(sightings: Sightings, lamp: Rectangle) -> NDArray[np.bool_]:
     return np.asarray(across & (np.abs(sightings.y - (y + 0.5 * (height - 1))) < 0.5 * height + 3))
 
 
-def _gather(rows: list[Columns], box: Rectangle) -> Sightings:
-    """All columns joined, in px of the whole picture."""
+def _gather(rows: list[Columns], box: Rectangle, lamp: Rectangle | None) -> tuple[Sightings, FloatArray]:
+    """All columns joined, in px of the whole picture and without the lamp; and the spots' strain."""
     rows = [r for r in rows if r]
     joined: dict[str, Any] = {
         n: np.concatenate([r[n] for r in rows]) if rows else np.empty(0) for n in COLUMNS
     }
     joined["x"] = joined["x"] + box[0]
     joined["y"] = joined["y"] + box[1]
-    return Sightings(**joined)
+    strain = joined.pop("strain").reshape(-1, 2)
+    sightings = Sightings(**joined)
+    if lamp is None:
+        return sightings, strain
+    outside = ~_within(sightings, lamp)
+    return sightings.take(outside), strain[outside]

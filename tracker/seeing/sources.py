@@ -23,6 +23,7 @@ _INTRA_CODECS = frozenset(  # every frame a key frame
         "ljpeg", "tiff", "bmp",
     }
 )  # fmt: skip
+_KINDS = {1: "I", 2: "P", 3: "B", 4: "P", 5: "I", 6: "P", 7: "I"}  # AVPictureType
 _NO_TIMES = "gives no times of frames: state camera.frame_rate in the bench file"
 _THREADS = 2  # decoder threads for codecs with motion compensation; intra codecs gain nothing
 _LIMITED_BLACK, _LIMITED_WHITE = 16, 235  # of 8 bit, ITU-R BT.601: luma of studio range
@@ -35,6 +36,7 @@ class RawFrame:
     time: float | None  # s, None where the file gives none
     picture: Picture
     corrupt: bool = False  # the decoder concealed damage in it
+    kind: str = ""  # I: coded by itself, P: predicted from pictures before, B: from both sides; or unknown
 
 
 @dataclass(frozen=True, slots=True)
@@ -231,9 +233,13 @@ class VideoSource:
             if picture.shape != (self.form.height, self.form.width) or bits != self.form.bit_depth:
                 strange += 1
                 continue
-            yield RawFrame(self._time(frame, index), picture, bool(frame.is_corrupt))
+            yield RawFrame(self._time(frame, index), picture, bool(frame.is_corrupt), self._kind(frame))
         if strange:
             self.warnings.append(f"{strange} pictures of another size were left out")
+
+    def _kind(self, frame: Any) -> str:
+        """Kind of a picture of a codec with motion compensation, "" of others; FFmpeg's numbers."""
+        return "" if self._intra else _KINDS.get(int(frame.pict_type), "")
 
     def _chain(self) -> Iterator[Any]:
         first, self._first = self._first, None
