@@ -10,7 +10,8 @@ from tracker.bench import Bench, load_bench
 from tracker.errors import BenchError, ResultError
 from tracker.keeping.decisions import append_decision, make_decision, read_decisions
 from tracker.keeping.store import Result, read_result, write_result
-from tracker.motion.droplets import Analysis, Memo, evaluate_droplets
+from tracker.motion.analysis import Analysis, Given, Memo
+from tracker.motion.droplets import evaluate_droplets
 from tracker.provenance import assemble, field_from_json, recording_from_json, tracks_from_table
 from tracker.records import Field, Recording, Settings, Tracks
 
@@ -62,14 +63,12 @@ def _evaluated(old: Result, folder: Path, bench: Bench | Path | str | None, memo
     loaded = bench if isinstance(bench, Bench) else present_bench(old, recording, bench)
     loaded = loaded.fitted_to(recording.width, recording.height)
     field = _field(old, tracks, recording, loaded)
-    evaluation = evaluate_droplets(
-        tracks, recording, field, loaded, settings=settings, decisions=read_decisions(folder),
-        cuts=old.recording["seeing"].get("cuts", ()), memo=memo,
-    )  # fmt: skip
     stored = old.recording["seeing"]
-    seeing = {"report": stored, "cuts": stored.get("cuts", ()), "warnings": tuple(stored.get("warnings", ()))}
-    return assemble(evaluation, recording=recording, field=field, bench=loaded, settings=settings, seeing=seeing,
-                    folder=folder)  # fmt: skip
+    given = Given(recording, field, loaded, settings, stored.get("cuts", ()))
+    evaluation = evaluate_droplets(tracks, given, decisions=read_decisions(folder), memo=memo)
+    return assemble(
+        evaluation, given, report=stored, warnings=tuple(stored.get("warnings", ())), folder=folder
+    )
 
 
 def analyse_result(result: Result, memo: Memo) -> Analysis:

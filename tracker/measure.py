@@ -83,19 +83,15 @@ def _evaluated(seen: Seen, bench: Bench, settings: Settings, folder: Path) -> Re
     """Link, evaluate and write what was seen."""
     from tracker.keeping.decisions import read_decisions
     from tracker.keeping.store import write_result
+    from tracker.motion.analysis import Given
     from tracker.motion.droplets import evaluate_droplets
     from tracker.provenance import as_stored, assemble
     from tracker.voltage import field_and_tracks
 
     field, tracks = field_and_tracks(seen, bench, settings)
-    evaluation = evaluate_droplets(
-        as_stored(tracks), seen.recording, field, bench, settings=settings, decisions=read_decisions(folder),
-        cuts=seen.cuts,
-    )  # fmt: skip
-    result = assemble(
-        evaluation, recording=seen.recording, field=field, bench=bench, settings=settings,
-        seeing={"report": seen.report, "cuts": seen.cuts, "warnings": seen.warnings}, folder=folder,
-    )  # fmt: skip
+    given = Given(seen.recording, field, bench, settings, seen.cuts)
+    evaluation = evaluate_droplets(as_stored(tracks), given, decisions=read_decisions(folder))
+    result = assemble(evaluation, given, report=seen.report, warnings=seen.warnings, folder=folder)
     return write_result(result, folder, tables=settings.tables)
 
 

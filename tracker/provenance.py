@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import os
 import platform
+from collections.abc import Sequence
 from dataclasses import replace
 from functools import lru_cache
 from importlib.metadata import PackageNotFoundError, version
@@ -14,11 +15,12 @@ from calibration.scale import Scale, scale_to_json, to_metres
 from tracker.bench import Bench
 from tracker.keeping.store import Result
 from tracker.keeping.tables import CHANGES, DROPLETS, SEGMENTS, TRACKS, table
-from tracker.records import Field, Measured, Recording, Segment, Settings, Sightings, Tracks
+from tracker.records import Field, Measured, Recording, Segment, Sightings, Tracks
 
 if TYPE_CHECKING:
     import pandas as pd
 
+    from tracker.motion.analysis import Given
     from tracker.motion.droplets import Evaluation
 
 # Column of `Sightings` -> column of the table of tracks.
@@ -29,12 +31,10 @@ _PACKAGES = ("fallrise", "numpy", "scipy", "av", "opencv-python-headless", "pand
 
 def assemble(
     evaluation: Evaluation,
+    given: Given,
     *,
-    recording: Recording,
-    field: Field,
-    bench: Bench,
-    settings: Settings,
-    seeing: dict[str, Any],
+    report: dict[str, Any],
+    warnings: Sequence[str],
     folder: Path,
 ) -> Result:
     """Gather tables and provenance of one measurement.
@@ -43,10 +43,12 @@ def assemble(
     ----------
     evaluation : Evaluation
         What the motion wing found.
-    recording, field, bench, settings
-        What it was found from.
-    seeing : dict
-        ``report``, ``cuts`` and ``warnings`` of the seeing wing.
+    given : Given
+        What it was found with.
+    report : dict
+        What the seeing wing reports.
+    warnings : sequence of str
+        Of the seeing wing.
     folder : Path
         Result folder, to which the recording's path is written relative.
 
@@ -55,13 +57,8 @@ def assemble(
     result : Result
         Not written yet.
     """
-    warnings = [
-        *recording.warnings,
-        *seeing["warnings"],
-        *field.warnings,
-        *bench.scale.warnings,
-        *evaluation.warnings,
-    ]
+    recording, field, bench = given.recording, given.field, given.bench
+    told = [*recording.warnings, *warnings, *field.warnings, *bench.scale.warnings, *evaluation.warnings]
     provenance = {
         "file": recording.path.name,
         "path": os.path.relpath(recording.path.absolute(), folder.absolute()),
@@ -82,10 +79,10 @@ def assemble(
         "charge_unit": evaluation.charge_unit,
         "budget": evaluation.budget,
         "details": evaluation.details,
-        "seeing": {**seeing["report"], "cuts": seeing["cuts"], "warnings": seeing["warnings"]},
-        "settings": settings.as_dict(),
+        "seeing": {**report, "cuts": given.cuts, "warnings": warnings},
+        "settings": given.settings.as_dict(),
         "versions": versions(),
-        "warnings": list(dict.fromkeys(warnings)),
+        "warnings": list(dict.fromkeys(told)),
         "frame_times_s": recording.frame_times,
     }  # fmt: skip
     return Result(

@@ -123,7 +123,7 @@ def record_path(
     impulse = field_impulse(knots, volts, times[seen], camera.exposure)
     frames = np.flatnonzero(seen)
     full = np.full(len(frames), std)
-    return Path(number, np.arange(len(frames)), frames, times[seen], down[seen], side[seen], full, full, impulse,
+    return Path(number, frames, times[seen], down[seen], side[seen], full, full, impulse,
                 camera.exposure, np.zeros(len(frames) - 1, bool))  # fmt: skip
 
 

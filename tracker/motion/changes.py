@@ -22,6 +22,7 @@ Z_LIMIT = 3.29  # two-sided 1 in 1000
 LEAST_SHARE = 0.04  # of the information on the drive that must lie on either side of a change
 LEAST_DETERMINANT = 0.02  # relative: below, speed and drive of one side cannot be told apart
 MOST_CHANGES = 8  # in one track
+Rate = tuple[float, float]  # d(r^2)/dt in m^2/s with its standard uncertainty
 
 
 @dataclass(frozen=True, slots=True)
@@ -51,6 +52,13 @@ class History:
     size_rate_std: float = float("nan")
     doubt: FloatArray | None = None  # (N,) m in `steps.down` by one standard uncertainty of the rate
     begins: FloatArray | None = None  # (N,) s at which the steps begin
+    weighed: tuple[
+        tuple[Rate, bool], ...
+    ] = ()  # rates held against the shared one, and whether they contradict it
+
+    def holds_for(self, shared_rate: Rate | None) -> bool:
+        """Whether another rate that all droplets share would have led to the same history."""
+        return all(_is_odd(rate, shared_rate) == odd for rate, odd in self.weighed)
 
     def part_at(self, time: float) -> int | None:
         """Number of the charge part that holds at a time; None where the track is of another droplet."""
@@ -68,7 +76,7 @@ class History:
 
 def find_changes(
     steps: Increments, times: FloatArray, conditions: Conditions, *, fit: FreeFit | None = None,
-    shared_rate: tuple[float, float] | None = None,
+    shared_rate: Rate | None = None,
 ) -> History:  # fmt: skip
     """Look for charge steps, evaporation and a switch to another droplet, until nothing more is found.
 
@@ -101,16 +109,18 @@ def find_changes(
     changes: list[Change] = []
     trend: Change | None = None
     last: Change | None = None
+    weighed: list[tuple[Rate, bool]] = []
     column = np.empty((len(steps), 0))
     part = np.zeros(len(steps), np.int64)
     fit = free_fit(steps) if fit is None else fit
     for _ in range(MOST_CHANGES):
         if not np.all(np.isfinite(fit.drive_per_volt)) or len(steps) < 2 * MIN_INCREMENTS:
             break
-        last = _trend(_Model(steps, part, column, fit), times, conditions) if trend is None else None
-        found = _best_change(
-            _Model(steps, part, column, fit), times, last, _is_odd(last, fit, conditions, shared_rate)
-        )
+        model = _Model(steps, part, column, fit)
+        last = _trend(model, times, conditions) if trend is None else None
+        held = _held_against(shared_rate, last, fit, conditions)
+        weighed += held
+        found = _best_change(model, times, last, odd=any(odd for _, odd in held))
         if found is None:
             break
         changes.append(replace(found, step=int(kept[found.step])))
@@ -122,14 +132,14 @@ def find_changes(
             part = np.unique(part, return_inverse=True)[1].astype(np.int64)
         else:
             trend = found
-            column = _trend_column(_Model(steps, part, column, fit), times, conditions)
+            column = _trend_column(model, times, conditions)
         steps, fit, trend = _refit(steps, part, column, trend)
     rate = trend or last
     size = (float("nan"), float("nan")) if rate is None else (rate.rate, rate.rate_std)
     doubt = None if trend is None or column.shape[1] == 0 else trend.rate_std * column[:, 0]
     return History(
         _take_out(steps, column, trend), kept, fit, tuple(sorted(changes, key=_by_time)), trend, *size, doubt,
-        times[steps.first],
+        times[steps.first], tuple(weighed),
     )  # fmt: skip
 
 
@@ -161,9 +171,7 @@ class _Model:
         return both.columns[:, : base.shape[1]], both.columns[:, base.shape[1] :], both.data
 
 
-def size_rate(
-    steps: Increments, times: FloatArray, conditions: Conditions, fit: FreeFit
-) -> tuple[float, float] | None:
+def size_rate(steps: Increments, times: FloatArray, conditions: Conditions, fit: FreeFit) -> Rate | None:
     """Rate at which the square of a droplet's radius changes, as if nothing else happened to it.
 
     Parameters
@@ -189,22 +197,34 @@ def size_rate(
     )
     if trend is None or not trend.rate_std > 0:
         return None
+    return _area_rate(trend, fit, conditions)
+
+
+def _area_rate(trend: Change, fit: FreeFit, conditions: Conditions) -> Rate:
+    """Rate of the square of the radius for a trend of ln r."""
     area = 2 * float(radius_from_fall_speed(fit.fall_speed, conditions)) ** 2
     return area * trend.rate, area * trend.rate_std
 
 
-def _is_odd(
-    trend: Change | None, fit: FreeFit, conditions: Conditions, shared: tuple[float, float] | None
-) -> bool:
-    """Whether a trend contradicts what all droplets share."""
-    if trend is None or shared is None:
+def _held_against(
+    shared: Rate | None, trend: Change | None, fit: FreeFit, conditions: Conditions
+) -> list[tuple[Rate, bool]]:
+    """Rate of a trend that is significant, and whether it contradicts what all droplets share; else nothing."""
+    if trend is None or trend.statistic <= trend.threshold:
+        return []
+    rate = _area_rate(trend, fit, conditions)
+    return [(rate, _is_odd(rate, shared))]
+
+
+def _is_odd(rate: Rate, shared: Rate | None) -> bool:
+    """Whether a rate contradicts what all droplets share."""
+    if shared is None:
         return False
-    area = 2 * float(radius_from_fall_speed(fit.fall_speed, conditions)) ** 2
-    return abs(area * trend.rate - shared[0]) > Z_LIMIT * float(np.hypot(area * trend.rate_std, shared[1]))
+    return abs(rate[0] - shared[0]) > Z_LIMIT * float(np.hypot(rate[1], shared[1]))
 
 
-def _best_change(model: _Model, times: FloatArray, trend: Change | None, odd: bool) -> Change | None:
-    """Change whose statistic exceeds its threshold by most."""
+def _best_change(model: _Model, times: FloatArray, trend: Change | None, *, odd: bool) -> Change | None:
+    """Change whose statistic exceeds its threshold by most; an odd trend counts less."""
     step, switch = _step(model, times), _switch(model, times)
     candidates = [step, switch, trend]
     found = [c for c in candidates if c is not None and c.statistic > c.threshold]

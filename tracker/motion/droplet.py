@@ -11,11 +11,12 @@ from physics.droplet import Conditions
 from physics.motion import DropletPosterior, FreeFit, Increments, droplet_posterior, free_fit, input_responses
 from tracker.bench import Bench
 from tracker.motion.aircurrent import AirCurrent, Drift, robust_mean
-from tracker.motion.changes import History, find_changes, size_rate
+from tracker.motion.changes import History, Rate, find_changes, size_rate
 from tracker.motion.judge import is_sparse, is_stuck
 from tracker.motion.rows import NAN
+from tracker.motion.shelf import Shelf, digest
 from tracker.motion.velocity import Path, without_outliers
-from tracker.records import FloatArray, IntArray, Settings
+from tracker.records import FloatArray, IntArray, Settings, Tracks
 
 LEAST_SHARING = 5  # droplets whose rates of shrinking are compared
 
@@ -30,6 +31,7 @@ class Droplet:
     fit: FreeFit | None = None  # of the path as one droplet with one charge; None: too few steps
     history: History | None = None  # None: too few steps, or dirt
     posterior: DropletPosterior | None = None
+    key: str = ""  # digest of all that it was worked out from, but for the posterior
 
     @property
     def charge(self) -> tuple[float, float]:
@@ -39,16 +41,17 @@ class Droplet:
             return NAN, NAN
         return float(p.charge[p.main_part]), float(p.charge_std[p.main_part])
 
-    @property
-    def used_rows(self) -> IntArray:
+    def used_rows(self, tracks: Tracks) -> IntArray:
         """Rows of the tracks that the fit rests on."""
         if self.history is None:
             return np.empty(0, np.int64)
         first = self.path.steps.first[self.history.kept]
-        return np.asarray(self.path.rows[np.union1d(first, first + 1)])
+        span = tracks.rows(self.path.droplet)
+        used = self.path.frames[np.union1d(first, first + 1)]
+        return np.asarray(span.start + np.searchsorted(tracks.sightings.frame[span], used))
 
 
-def cleaned(path: Path, settings: Settings) -> Droplet:
+def cleaned(path: Path, settings: Settings, key: str = "") -> Droplet:
     """Leave out what does not belong to one droplet.
 
     Parameters
@@ -57,15 +60,18 @@ def cleaned(path: Path, settings: Settings) -> Droplet:
         Of one track.
     settings : Settings
         Least number of sightings.
+    key : str, optional
+        Digest of path, settings and all else that the recording's droplets rest on; if not given, of the path.
 
     Returns
     -------
     droplet : Droplet
         With a first fit if the track is long enough.
     """
+    key = key or path.digest
     if len(path) < max(settings.min_frames, 2):
-        return Droplet(path)
-    left = Droplet(*without_outliers(path))
+        return Droplet(path, key=key)
+    left = Droplet(*without_outliers(path), key=key)
     return left if len(left.path) >= settings.min_frames else replace(left, fit=None)
 
 
@@ -87,7 +93,9 @@ def is_one_droplet(droplet: Droplet, conditions: Conditions) -> bool:
     return not (droplet.hops or is_sparse(droplet.path) or is_stuck(droplet.path, conditions))
 
 
-def with_histories(droplets: list[Droplet], conditions: Conditions, drift: Drift) -> list[Droplet]:
+def with_histories(
+    droplets: list[Droplet], conditions: Conditions, drift: Drift, *, shelf: Shelf | None = None
+) -> list[Droplet]:
     """Look for what happened to the droplets, the air's change of speed taken out.
 
     Parameters
@@ -98,39 +106,65 @@ def with_histories(droplets: list[Droplet], conditions: Conditions, drift: Drift
         Of the bench.
     drift : Drift
         Of the air.
+    shelf : Shelf, optional
+        Keeps what does not change from one evaluation to the next.
 
     Returns
     -------
     droplets : list of Droplet
         In the same order; without a history where a track is too short, does not move or is no droplet.
     """
-    ready: dict[int, tuple[Increments, FreeFit]] = {}
-    for i, droplet in enumerate(droplets):
-        if droplet.fit is None or is_sparse(droplet.path) or is_stuck(droplet.path, conditions):
-            continue
-        steps = droplet.path.steps
-        still = drift.taken_out(steps, np.asarray(droplet.path.times))
-        ready[i] = (still, droplet.fit if still is steps else free_fit(still))
-    shared = _shared_rate(droplets, ready, conditions)
-    done = list(droplets)
-    for i, (steps, fit) in ready.items():
-        times = np.asarray(droplets[i].path.times)
-        history = find_changes(steps, times, conditions, fit=fit, shared_rate=shared)
-        done[i] = replace(droplets[i], history=history)
-    return done
-
-
-def _shared_rate(
-    droplets: list[Droplet], ready: dict[int, tuple[Increments, FreeFit]], conditions: Conditions
-) -> tuple[float, float] | None:
-    """Find d(r^2)/dt common to all droplets in m^2/s; None if they are too few to say."""
-    rates = [
-        size_rate(s, np.asarray(droplets[i].path.times), conditions, fit) for i, (s, fit) in ready.items()
+    shelf = Shelf() if shelf is None else shelf
+    air = digest(arrays=(drift.times, drift.down, drift.side))
+    ready = [
+        shelf.once("steps", d.key + air, partial(_in_still_air, d, conditions, drift))
+        if d.fit is not None and not is_sparse(d.path) and not is_stuck(d.path, conditions) else None
+        for d in droplets
+    ]  # fmt: skip
+    shared = _shared_rate([still.rate for still in ready if still is not None and still.rate is not None])
+    return [
+        d if still is None else _with_history(d, still, conditions, shared, shelf)
+        for d, still in zip(droplets, ready, strict=True)
     ]
-    known = [rate for rate in rates if rate is not None]
-    if len(known) < LEAST_SHARING:
-        return None
-    return robust_mean(*np.array(known).T)
+
+
+@dataclass(frozen=True, slots=True)
+class _Still:
+    """A droplet's steps as in air that keeps its mean speed."""
+
+    steps: Increments
+    fit: FreeFit
+    rate: Rate | None
+    key: str
+
+
+def _in_still_air(droplet: Droplet, conditions: Conditions, drift: Drift) -> _Still:
+    """Take the air's change of speed out of a droplet's steps."""
+    path = droplet.path
+    steps = drift.taken_out(path.steps, path.times)
+    fit = droplet.fit if steps is path.steps and droplet.fit is not None else free_fit(steps)
+    key = droplet.key if steps is path.steps else digest(droplet.key, arrays=(steps.down, steps.side))
+    return _Still(steps, fit, size_rate(steps, path.times, conditions, fit), key)
+
+
+def _with_history(
+    droplet: Droplet, still: _Still, conditions: Conditions, shared: Rate | None, shelf: Shelf
+) -> Droplet:
+    """Look for what happened to one droplet; a history that another shared rate would not change is kept."""
+    look = partial(
+        find_changes, still.steps, droplet.path.times, conditions, fit=still.fit, shared_rate=shared
+    )
+    key = still.key
+    history = shelf.once("history", key, look)
+    if not history.holds_for(shared):
+        key = digest(key, shared)
+        history = shelf.once("history", key, look)
+    return replace(droplet, history=history, key=key)
+
+
+def _shared_rate(rates: list[Rate]) -> Rate | None:
+    """Find d(r^2)/dt common to all droplets in m^2/s; None if they are too few to say."""
+    return robust_mean(*np.array(rates).T) if len(rates) >= LEAST_SHARING else None
 
 
 def with_posteriors(droplets: list[Droplet], bench: Bench, air: AirCurrent) -> list[Droplet]:

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
 from dataclasses import replace
 from typing import Any
 
@@ -14,51 +13,36 @@ from tracker.motion.charges import Number, SharedStds
 from tracker.motion.droplet import Droplet
 from tracker.motion.judge import Balance
 from tracker.motion.rows import NAN, ChangeRow, DropletRow, SegmentRow
-from tracker.motion.verdict import ordered, verdict_of
-from tracker.records import Field, Recording, Tracks
+from tracker.motion.verdict import ordered
+from tracker.records import Field
 
 SWAP_REACH = 1e-4  # m between two tracks that may have been swapped
 SWAP_TIME = 0.5  # s beyond their uncertainties
 
 
-def droplet_row(
-    droplet: Droplet, tracks: Tracks, recording: Recording, air: AirCurrent, shared: SharedStds, number: Number,
-    reasons: Sequence[str],
-) -> DropletRow:  # fmt: skip
-    """Give the row of one droplet; empty where a value could not be had.
+def measured_row(
+    row: DropletRow, droplet: Droplet, air: AirCurrent, shared: SharedStds, number: Number
+) -> DropletRow:
+    """Give the row of one droplet its values; empty where one could not be had.
 
     Parameters
     ----------
+    row : DropletRow
+        With the reasons of the verdict.
     droplet : Droplet
         With all that is known of it.
-    tracks, recording : Tracks, Recording
-        For the times at which it was seen.
     air : AirCurrent
         Taken off the fall speed.
     shared : SharedStds
         Parts of its uncertainties that all droplets share.
     number : Number
         Charge number.
-    reasons : sequence of str
-        Codes of its reasons.
 
     Returns
     -------
     row : DropletRow
-        With the verdict that follows from the reasons.
+        With values.
     """
-    rows = droplet.used_rows
-    seen = rows if len(rows) else np.arange(len(tracks))[tracks.rows(droplet.path.droplet)]
-    times = recording.frame_times[tracks.sightings.frame[seen]]
-    codes = ordered(reasons)
-    row = DropletRow(
-        droplet.path.droplet,
-        verdict_of(codes),
-        codes,
-        len(droplet.used_rows),
-        float(times[0]),
-        float(times[-1]),
-    )
     p = droplet.posterior
     if p is None or droplet.history is None:
         return row
@@ -74,7 +58,7 @@ def droplet_row(
         mass_kg=p.mass, diffusion_ratio=p.diffusion_ratio,
     )  # fmt: skip
     charge, own = droplet.charge
-    if not np.isfinite(charge) or "one_voltage" in reasons:
+    if not np.isfinite(charge) or "one_voltage" in row.reasons:
         return row
     return replace(
         row, charge_c=charge, charge_std_c=float(np.hypot(own, shared.charge)), charge_own_std_c=own,

@@ -19,6 +19,7 @@ from physics.motion import (
     robust_increments,
 )
 from tracker.motion.field import uncertain_spans
+from tracker.motion.shelf import digest
 from tracker.records import Field, Flag, FloatArray, IntArray, Recording, Tracks, readonly
 
 OUTLIER = 5.0  # whitened residual of a step beyond which the place of the droplet jumped
@@ -42,7 +43,6 @@ class Path:
     """One droplet's sightings that may be used, along and across gravity."""
 
     droplet: int
-    rows: IntArray  # (N,) rows of the tracks
     frames: IntArray  # (N,)
     times: FloatArray  # (N,) s, start of exposure
     down: FloatArray  # (N,) m along gravity
@@ -57,8 +57,7 @@ class Path:
     def __post_init__(self) -> None:
         for name in ("times", "down", "side", "down_std", "side_std", "impulse"):
             object.__setattr__(self, name, readonly(getattr(self, name)))
-        for name in ("rows", "frames"):
-            object.__setattr__(self, name, readonly(getattr(self, name), np.int64))
+        object.__setattr__(self, "frames", readonly(self.frames, np.int64))
         object.__setattr__(self, "breaks", readonly(self.breaks, np.bool_))
 
     def __len__(self) -> int:
@@ -70,14 +69,19 @@ class Path:
         breaks = np.delete(self.breaks, min(sighting, len(self.breaks) - 1))
         if 0 < sighting < len(self) - 1:
             breaks[sighting - 1] = self.breaks[sighting - 1] | self.breaks[sighting]
-        columns = ("rows", "frames", "times", "down", "side", "down_std", "side_std", "impulse")
-        return replace(self, **{name: getattr(self, name)[keep] for name in columns}, breaks=breaks)
+        return replace(self, **{name: getattr(self, name)[keep] for name in _COLUMNS}, breaks=breaks)
 
     def cut(self, step: int) -> Path:
         """Leave one step out."""
         breaks = self.breaks.copy()
         breaks[step] = True
         return replace(self, breaks=breaks)
+
+    @property
+    def digest(self) -> str:
+        """Digest of all that the path holds."""
+        arrays = (*(getattr(self, name) for name in _COLUMNS), self.breaks)
+        return digest(self.droplet, self.exposure, self.blur, arrays=arrays)
 
     @cached_property
     def steps(self) -> Increments:
@@ -86,6 +90,9 @@ class Path:
             self.times, self.down, self.side, down_std=self.down_std, side_std=self.side_std,
             impulse=self.impulse, exposure=self.exposure, blur=self.blur, breaks=self.breaks,
         )  # fmt: skip
+
+
+_COLUMNS = ("frames", "times", "down", "side", "down_std", "side_std", "impulse")
 
 
 def paths(  # noqa: PLR0913 - one recording has that many sides
@@ -141,7 +148,7 @@ def paths(  # noqa: PLR0913 - one recording has that many sides
         frames = sightings.frame[rows]
         breaks = _breaks(times[frames], frames, exposure=exposure, spans=spans, cuts=cuts)
         found.append(Path(
-            int(droplet), rows, frames, times[frames],
+            int(droplet), frames, times[frames],
             y[rows] * cos + x[rows] * sin, x[rows] * cos - y[rows] * sin,
             np.hypot(y_std[rows] * cos, x_std[rows] * sin), np.hypot(x_std[rows] * cos, y_std[rows] * sin),
             impulse[frames], exposure, breaks, blur,

@@ -12,9 +12,9 @@ import numpy as np
 
 from physics.droplet import ELEMENTARY_CHARGE
 from tracker.evaluate import analyse_result
+from tracker.motion.analysis import Analysis
 from tracker.motion.charges import Number
 from tracker.motion.droplet import Droplet
-from tracker.motion.droplets import Analysis
 from tracker.page.errors import RefusedError
 from tracker.page.results import Opened, field_segments
 from tracker.records import FloatArray

@@ -14,8 +14,8 @@ from physics.droplet import ELEMENTARY_CHARGE
 from tracker.errors import ResultError
 from tracker.keeping.decisions import read_decisions
 from tracker.keeping.store import Result, read_result
+from tracker.motion.analysis import Analysis, Memo
 from tracker.motion.decided import effective
-from tracker.motion.droplets import Analysis, Memo
 from tracker.page.library import Library, revision_of
 from tracker.page.words import unit_words
 from tracker.records import Decision

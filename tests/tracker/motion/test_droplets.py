@@ -14,11 +14,16 @@ from happening_droplets import Camera, Life, evaporated, made_bench, made_tracks
 from physics.droplet import ELEMENTARY_CHARGE
 from tracker.errors import FieldError
 from tracker.keeping.tables import CHANGES, DROPLETS, SEGMENTS, table
-from tracker.motion.droplets import evaluate_droplets, reason_sentences
+from tracker.motion.analysis import Given
+from tracker.motion.droplets import evaluate_droplets
 from tracker.motion.field import field_from_list
 from tracker.records import Decision, Flag, Settings
 
 CAMERA = Camera(seconds=24.0, steps=schedule(4e4))
+
+
+def given(recording, bench):
+    return Given(recording, field_from_list(bench.field.entries, recording), bench, Settings())
 
 
 def evaluate(tmp_path, rng, lives, *, camera=CAMERA, decisions=(), flags=None, **motion):
@@ -26,8 +31,7 @@ def evaluate(tmp_path, rng, lives, *, camera=CAMERA, decisions=(), flags=None, *
     if flags is not None:
         tracks = replace(tracks, sightings=replace(tracks.sightings, flags=flags(tracks)))
     bench = made_bench(tmp_path, camera)
-    field = field_from_list(bench.field.entries, recording)
-    return evaluate_droplets(tracks, recording, field, bench, settings=Settings(), decisions=decisions)
+    return evaluate_droplets(tracks, given(recording, bench), decisions=decisions)
 
 
 def cluster(rng, count):
@@ -192,9 +196,8 @@ def test_dirt_is_stuck_and_rises_are_not_droplets(tmp_path):
     y[second] = y[second] - 2 * 40.0 * recording.frame_times[tracks.sightings.frame[second]]
     bench = made_bench(tmp_path, CAMERA)
     found = evaluate_droplets(
-        replace(tracks, sightings=replace(tracks.sightings, x=x, y=y)), recording,
-        field_from_list(bench.field.entries, recording), bench, settings=Settings(),
-    )  # fmt: skip
+        replace(tracks, sightings=replace(tracks.sightings, x=x, y=y)), given(recording, bench)
+    )
     codes = reasons(found)
     assert codes[0] == {"stuck"}
     assert "not_falling" in codes[1]
@@ -234,9 +237,9 @@ def test_chance_detections_are_no_droplet(tmp_path):
     stay = np.flatnonzero(chance | visits | (tracks.droplet == 2))
     bench = made_bench(tmp_path, CAMERA)
     found = evaluate_droplets(
-        replace(tracks, droplet=tracks.droplet[stay], sightings=tracks.sightings.take(stay)), recording,
-        field_from_list(bench.field.entries, recording), bench, settings=Settings(),
-    )  # fmt: skip
+        replace(tracks, droplet=tracks.droplet[stay], sightings=tracks.sightings.take(stay)),
+        given(recording, bench),
+    )
     assert reasons(found)[0] == {"sparse"}
     assert np.isnan(found.droplets[0].charge_c)
     assert "sparse" not in reasons(found)[1]
@@ -255,9 +258,8 @@ def test_a_jump_beside_a_neighbour_is_excused(tmp_path):
         flags[row] = int(Flag.CROWDED) if crowded else 0
         bench = made_bench(tmp_path, CAMERA)
         found = evaluate_droplets(
-            replace(tracks, sightings=replace(tracks.sightings, y=y, flags=flags)), recording,
-            field_from_list(bench.field.entries, recording), bench, settings=Settings(),
-        )  # fmt: skip
+            replace(tracks, sightings=replace(tracks.sightings, y=y, flags=flags)), given(recording, bench)
+        )
         assert ("hop" in reasons(found)[0]) is not crowded
 
 
@@ -269,9 +271,7 @@ def test_light_of_the_lamp_is_no_droplet(tmp_path):
     x, y = tracks.sightings.x[rows], tracks.sightings.y[rows]
     lamp = (int(x.min()), int(y.min()), int(np.ptp(x)) + 2, int(np.ptp(y)) + 2)
     bench = replace(bench, field=replace(bench.field, lamp=lamp))
-    found = evaluate_droplets(
-        tracks, recording, field_from_list(bench.field.entries, recording), bench, settings=Settings()
-    )
+    found = evaluate_droplets(tracks, given(recording, bench))
     assert not found.used[rows].any()
     assert found.droplets[0].verdict == "reject"
 
@@ -296,9 +296,7 @@ def shifted_list(tmp_path, shift, count=4):
     )
     bench = made_bench(tmp_path, CAMERA)
     entries = [(t + shift if t else 0.0, v) for t, v in bench.field.entries]
-    return evaluate_droplets(
-        tracks, recording, field_from_list(entries, recording), bench, settings=Settings()
-    )
+    return evaluate_droplets(tracks, Given(recording, field_from_list(entries, recording), bench, Settings()))
 
 
 def test_a_list_that_the_droplets_contradict_is_an_error_that_shows_both(tmp_path):
@@ -339,9 +337,8 @@ def test_two_swapped_tracks_are_told_as_a_pair(tmp_path):
     seen = replace(tracks.sightings, x=x, y=y).take(order)
     bench = made_bench(tmp_path, CAMERA)
     found = evaluate_droplets(
-        replace(tracks, droplet=swapped[order], sightings=seen), recording,
-        field_from_list(bench.field.entries, recording), bench, settings=Settings(),
-    )  # fmt: skip
+        replace(tracks, droplet=swapped[order], sightings=seen), given(recording, bench)
+    )
     assert [row.verdict for row in found.droplets] == ["doubt", "doubt", "keep"]
     assert all("switch" in reasons(found)[number] for number in (0, 1))
     told = [warning for warning in found.warnings if "swapped" in warning]
@@ -402,9 +399,8 @@ def test_a_droplet_that_drifts_sideways_against_the_others_is_doubted(tmp_path):
     x[rows] += 10e-6 / 3e-6 * recording.frame_times[tracks.sightings.frame[rows]]
     bench = made_bench(tmp_path, CAMERA)
     found = evaluate_droplets(
-        replace(tracks, sightings=replace(tracks.sightings, x=x)), recording,
-        field_from_list(bench.field.entries, recording), bench, settings=Settings(),
-    )  # fmt: skip
+        replace(tracks, sightings=replace(tracks.sightings, x=x)), given(recording, bench)
+    )
     codes = reasons(found)
     assert "side_drift" in codes[0]
     assert all("side_drift" not in codes[number] for number in range(1, 8))
@@ -454,13 +450,6 @@ def test_an_empty_recording_is_an_empty_evaluation(tmp_path):
     tracks, recording = made_tracks(np.random.default_rng(91), [Life(0.7e-6, 3)], CAMERA)
     none = replace(tracks, droplet=tracks.droplet[:0], sightings=tracks.sightings.take(np.arange(0)))
     bench = made_bench(tmp_path, CAMERA)
-    found = evaluate_droplets(
-        none, recording, field_from_list(bench.field.entries, recording), bench, settings=Settings()
-    )
+    found = evaluate_droplets(none, given(recording, bench))
     assert (found.droplets, found.segments, found.changes) == ((), (), ())
     assert found.charge_unit["resolved"] is False
-
-
-def test_sentences_stand_in_the_order_of_the_codes():
-    """The report and the page show what the registry says."""
-    assert reason_sentences(["neutral", "stuck"])[1].startswith("Does not move")

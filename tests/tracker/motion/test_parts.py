@@ -9,6 +9,7 @@ import pytest
 from diffusing_droplets import CONDITIONS
 from happening_droplets import Camera, Life, made_bench, made_tracks, schedule
 
+from tracker.motion.analysis import Given
 from tracker.motion.droplets import evaluate_droplets
 from tracker.motion.field import field_from_list
 from tracker.motion.judge import fastest_of, inertia_codes
@@ -26,7 +27,7 @@ def test_parts_are_counted_on_the_side_that_a_switch_keeps(tmp_path, seed):
     tracks, recording = made_tracks(rng, lives, camera)
     bench = made_bench(tmp_path, camera)
     field = field_from_list(bench.field.entries, recording)
-    found = evaluate_droplets(tracks, recording, field, bench, settings=Settings())
+    found = evaluate_droplets(tracks, Given(recording, field, bench, Settings()))
     assert "switch" in found.droplets[0].reasons
     charges = found.details["charge_parts"].get("0", {"charge_c": [found.droplets[0].charge_c]})["charge_c"]
     rows = [row for row in found.changes if row.droplet == 0 and row.kind == "charge_step"]

@@ -12,6 +12,7 @@ from calibration.scale import Scale
 from physics.budget import SHARED_INPUTS
 from physics.droplet import ELEMENTARY_CHARGE
 from tracker.motion.aircurrent import AirCurrent, Drift
+from tracker.motion.analysis import Given
 from tracker.motion.charges import SharedPart
 from tracker.motion.droplet import cleaned, with_histories, with_posteriors
 from tracker.motion.droplets import evaluate_droplets
@@ -33,7 +34,7 @@ def evaluated(folder, rng, lives, *, camera=CAMERA, bench=None, **motion):
     made = made_bench(folder, camera)
     made = made if bench is None else bench(made)
     return evaluate_droplets(
-        tracks, recording, field_from_list(made.field.entries, recording), made, settings=Settings()
+        tracks, Given(recording, field_from_list(made.field.entries, recording), made, Settings())
     )
 
 
