@@ -6,8 +6,10 @@ beside the recording overrides single keys. A wrong key is one line: file, key, 
 
 from __future__ import annotations
 
+import dataclasses
 import hashlib
 import json
+from collections.abc import Mapping
 from dataclasses import dataclass, replace
 from itertools import pairwise
 from pathlib import Path
@@ -65,6 +67,8 @@ class Bench:
     binning: int | None  # of the recording against the scale's picture; None: not stated
     voltage_rel_std: float  # of every field-on voltage, whatever its source
     field: FieldSpec
+    # where the values came from that are not `Measured`, by name; no part of the digest
+    origins: Mapping[str, str] = dataclasses.field(default_factory=dict, repr=False)
 
     @property
     def conditions(self) -> Conditions:
@@ -177,8 +181,24 @@ def load_bench(bench: Path | str | None = None, *, recording: Path | str | None 
         else keys.required("camera.frame_rate").value,
         binning=_binning(keys),
         field=spec,
+        origins=_origins(keys, spec),
         **air_values,
     )
+
+
+def _origins(keys: Keys, spec: FieldSpec) -> dict[str, str]:
+    """Where the values that are not quantities with an uncertainty came from."""
+    by_list = spec.source == "list" and _entries(keys)[1] > 0
+    return {
+        "slip": keys.origin("air.slip", "default"),
+        "voltage_rel_std": keys.origin("field.list" if by_list else "cell.voltage", "not stated"),
+        "oil_expansion_1_k": keys.origin("oil.expansion", "not stated"),
+        "down_deg": keys.origin("camera.down", "from the motion"),
+        "frame_rate_hz": keys.origin("camera.frame_rate", "times of the recording"),
+        "binning": keys.origin("camera.binning", "not stated"),
+        "scale": keys.origin("camera.metres_per_pixel") or keys.origin("camera.scale", "found by place"),
+        "field": keys.origin("field.source"),
+    }
 
 
 def _air(keys: Keys) -> dict[str, Measured]:

@@ -5,15 +5,12 @@ from __future__ import annotations
 import tomllib
 from collections.abc import Mapping
 from pathlib import Path
-from typing import TYPE_CHECKING, Any, Literal
+from typing import Any
 
 from calibration.errors import QuantityError
 from calibration.quantity import parse_quantity
 from tracker.errors import BenchError
 from tracker.records import Measured
-
-if TYPE_CHECKING:
-    from pydantic import BaseModel
 
 BENCH_NAME = "bench.toml"
 
@@ -129,64 +126,6 @@ def _read_toml(file: Path) -> dict[str, Any]:
         ) from error
 
 
-def _shape() -> type[BaseModel]:
-    """Build the pydantic model of the bench file; here, so that pydantic is imported only when needed."""
-    from pydantic import BaseModel, ConfigDict
-
-    class Section(BaseModel):
-        model_config = ConfigDict(extra="forbid", strict=True)
-
-    class Cell(Section):
-        plate_gap: str
-        voltage: str | None = None
-
-    class Oil(Section):
-        density: str
-        density_temperature: str | None = None
-        expansion: str | None = None
-
-    class AirSection(Section):
-        temperature: str
-        pressure: str
-        relative_humidity: str | None = None
-        viscosity: str | None = None
-        slip: Literal["kim2005", "davies1945", "allen_raabe1985", "hutchins1995", "millikan1923"] = "kim2005"
-
-    class Site(Section):
-        gravity: str | None = None
-        latitude: str | None = None
-        altitude: str | None = None
-
-    class Camera(Section):
-        scale: str | None = None
-        metres_per_pixel: str | None = None
-        exposure: str | None = None
-        down: str | None = None
-        frame_rate: str | None = None
-        binning: int | None = None
-
-    class FieldSection(Section):
-        source: Literal["list", "log", "lamp", "motion"]
-        list: tuple[tuple[str, str], ...] | None = None
-        log: str | None = None
-        time_column: str | None = None
-        voltage_column: str | None = None
-        time_unit: str | None = None
-        voltage_unit: str | None = None
-        clock_offset: str | None = None
-        lamp: tuple[int, int, int, int] | None = None
-
-    class BenchFile(Section):
-        cell: Cell
-        oil: Oil
-        air: AirSection
-        site: Site
-        camera: Camera
-        field: FieldSection
-
-    return BenchFile
-
-
 class Keys:
     """Read access to merged keys: values as `Measured`, errors with the file that the key came from."""
 
@@ -205,6 +144,10 @@ class Keys:
         found = self.sections.get(section, {}).get(key, (None, None))[1]
         return Path(found) if found is not None else self.files[0]
 
+    def origin(self, dotted: str, default: str = "") -> str:
+        """Words for where the key came from; `default` if it is absent."""
+        return f"{self.file(dotted).name}: {dotted}" if self.raw(dotted) is not None else default
+
     def error(self, dotted: str, found: object, allowed: str) -> BenchError:
         """Error that names the key's own file."""
         return BenchError(str(self.file(dotted)), dotted, str(found), allowed)
@@ -213,9 +156,11 @@ class Keys:
         """Let pydantic look at names and types; its first complaint becomes a `BenchError`."""
         from pydantic import ValidationError
 
+        from tracker.benchshape import BenchFile
+
         plain = {s: {k: _tuples(v[0]) for k, v in keys.items()} for s, keys in self.sections.items()}
         try:
-            _shape().model_validate(plain)
+            BenchFile.model_validate(plain)
         except ValidationError as error:
             first = min(error.errors(), key=lambda e: e["type"] != "extra_forbidden")
             dotted = ".".join(str(part) for part in first["loc"][:2])
@@ -245,7 +190,7 @@ class Keys:
             raise self.error(dotted, f"{text!r} ({error.problem})", words) from error
         if not low <= value <= high or (dotted == "cell.voltage" and value == 0):
             raise self.error(dotted, repr(text), words)
-        return Measured(value, std, f"{self.file(dotted).name}: {dotted}")
+        return Measured(value, std, self.origin(dotted))
 
     def required(self, dotted: str) -> Measured:
         """One quantity that must be there."""
@@ -261,7 +206,9 @@ def _tuples(value: Any) -> Any:
 
 def _names(section: str) -> list[str]:
     """Names that a section, or the whole file, allows."""
-    fields = _shape().model_fields
+    from tracker.benchshape import BenchFile
+
+    fields = BenchFile.model_fields
     if section not in fields:
         return sorted((*fields, "bench"))
     model = fields[section].annotation

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import hashlib
 import os
 import platform
 from collections.abc import Sequence
@@ -290,7 +291,24 @@ def bench_json(bench: Bench, folder: Path) -> dict[str, Any]:
     return {
         "name": bench.name, "files": files, "digest": bench.digest, "slip": bench.slip, "down_deg": bench.down_deg,
         "binning": bench.binning, "frame_rate_hz": bench.frame_rate, "voltage_rel_std": bench.voltage_rel_std,
-        "oil_expansion_1_k": bench.oil_expansion, **quantities,
+        "oil_expansion_1_k": bench.oil_expansion, "origins": dict(bench.origins), "log": _log_json(bench, folder),
+        **quantities,
+    }  # fmt: skip
+
+
+def _log_json(bench: Bench, folder: Path) -> dict[str, Any] | None:
+    """Describe the voltage log that the bench file names; None if it names none."""
+    spec = bench.field
+    if spec.log is None:
+        return None
+    return {
+        "path": os.path.relpath(spec.log.absolute(), folder.absolute()),
+        "sha256": hashlib.sha256(spec.log.read_bytes()).hexdigest() if spec.log.is_file() else None,
+        "time_column": spec.time_column, "voltage_column": spec.voltage_column, "time_unit": spec.time_unit,
+        "voltage_unit": spec.voltage_unit, "clock_offset": None if spec.clock_offset is None else {
+            "value": spec.clock_offset.value, "std": spec.clock_offset.std, "unit": "s",
+            "origin": spec.clock_offset.origin,
+        },
     }  # fmt: skip
 
 
