@@ -81,7 +81,7 @@ class Server:
             stderr=subprocess.DEVNULL, text=True, env=environment,
         )  # fmt: skip
         line = self.process.stdout.readline() if self.process.stdout else ""
-        found = re.search(r"(http://127\.0\.0\.1:(\d+)/)\?token=(\S+)", line)
+        found = re.search(r"(http://127\.0\.0\.1:(\d+)/)\?token=([^\s#]+)\S*", line)
         if found is None:
             raise RuntimeError(f"the server printed {line!r} instead of its address")
         self.address, self.base, self.port, self.token = found[0], found[1], int(found[2]), found[3]

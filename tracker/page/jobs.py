@@ -88,9 +88,15 @@ class Jobs:
             raise RefusedError(404, f"there is no job {number}")
         return self._jobs[number]
 
-    def shown(self) -> list[dict[str, Any]]:
-        """Give all jobs as the page sees them, newest first."""
-        return [job.shown() for job in sorted(self._jobs.values(), key=lambda job: -job.number)]
+    def last(self, key: str) -> Job | None:
+        """Give the latest job at some work."""
+        return max(
+            (job for job in self._jobs.values() if job.key == key), key=lambda job: job.number, default=None
+        )
+
+    def all(self) -> list[Job]:
+        """Give all jobs that are remembered, oldest first."""
+        return list(self._jobs.values())
 
     def cancel(self, number: int) -> Job:
         """Ask a job to end; one that waits ends at once."""

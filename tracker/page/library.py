@@ -12,12 +12,14 @@ import os
 import time
 from collections import Counter
 from dataclasses import dataclass, field
+from itertools import islice
 from pathlib import Path
 from typing import Any
 
 from tracker.errors import ResultError
-from tracker.keeping.store import DECISIONS, PROVENANCE, SUFFIX
+from tracker.keeping.store import DECISIONS, PROVENANCE, SUFFIX, result_folder
 from tracker.page.errors import RefusedError
+from tracker.page.picturefolders import ENDINGS, FEWEST
 from tracker.page.uploads import KINDS
 from tracker.page.words import unit_words
 
@@ -75,12 +77,19 @@ class Library:
             raise RefusedError(404, f"the result folder of {entry.name} is gone")
         return entry.folder
 
+    def recording(self, key: str) -> Path:
+        """Give a recording without a result; refuses (404) what is not on the shelf."""
+        entry = {found.key: found for found in self.entries(fresh=True)}.get(key)
+        if entry is None or entry.status != "open":
+            raise RefusedError(404, "there is no such recording without a result on the shelf")
+        return entry.folder
+
     def name(self, key: str) -> str:
         """Name of an entry for a person."""
         return self._entries[key].name if key in self._entries else key
 
     def _walk(self) -> list[Entry]:
-        if self.target is not None and _is_result(self.target):
+        if self.target is not None and is_result(self.target):
             found = [_entry(self.target, self.target.parent)]
         else:
             found = [] if self.target is None else _results_below(self.target)
@@ -169,7 +178,8 @@ def summary(folder: Path) -> dict[str, Any]:
     }  # fmt: skip
 
 
-def _is_result(folder: Path) -> bool:
+def is_result(folder: Path) -> bool:
+    """Tell a result folder from others."""
     return (folder / PROVENANCE).is_file()
 
 
@@ -187,7 +197,7 @@ def _results_below(root: Path) -> list[Entry]:
     for here, folders, _ in os.walk(root):
         for name in sorted(folders):
             path = Path(here, name)
-            if name.endswith(SUFFIX) and _is_result(path):
+            if name.endswith(SUFFIX) and is_result(path):
                 found.append(_entry(path, root))
         folders[:] = [
             name for name in sorted(folders) if not name.startswith(".") and not name.endswith(SUFFIX)
@@ -211,12 +221,23 @@ def _failures(root: Path, known: set[str]) -> list[Entry]:
     ]
 
 
+def _is_recording(path: Path) -> bool:
+    """Tell a video or a folder of pictures by its name and what lies in it."""
+    if path.name.startswith(".") or path.name.endswith(SUFFIX):
+        return False
+    if not path.is_dir():
+        return path.suffix.lower() in KINDS["recording"]
+    with os.scandir(path) as inside:
+        pictures = (file for file in inside if file.name.lower().endswith(ENDINGS))
+        return next(islice(pictures, FEWEST - 1, None), None) is not None
+
+
 def _unmeasured(root: Path, found: list[Entry]) -> list[Entry]:
     """Recordings in folders of the page that have no result beside them."""
     measured = {entry.folder for entry in found}
     made = []
     for folder in sorted(path for path in root.iterdir() if path.is_dir() and not path.name.startswith(".")):
         for path in sorted(folder.iterdir()):
-            if path.suffix.lower() in KINDS["recording"] and path.with_suffix(SUFFIX) not in measured:
+            if _is_recording(path) and result_folder(path) not in measured:
                 made.append(Entry(key_of(path), f"{folder.name}/{path.name}", path, "open", "not measured"))
     return made

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import contextlib
-import shutil
 import tempfile
 from collections.abc import Mapping
 from dataclasses import dataclass
@@ -11,17 +10,18 @@ from pathlib import Path
 from typing import Any
 
 from physics.errors import FallriseError
-from tracker.benchfile import BENCH_NAME
+from tracker.benchfile import BENCH_NAME, own_file
 from tracker.errors import BenchError
 from tracker.keeping.store import result_folder
 from tracker.page.benchform import Fault, check_pitch, companions, read_form
 from tracker.page.errors import RefusedError
-from tracker.page.jobs import Job
+from tracker.page.jobs import Job, Jobs
 from tracker.page.library import key_of
 from tracker.page.uploads import Upload, Uploads
 
 MAX_BENCH = 100_000  # characters of a bench file
 PATTERNS = ("", "lines", "grid", "dots")
+PICTURES_RATE = 'a rate such as "25 Hz", since pictures hold no times'
 LOG_NAME, SCALE_NAME = "voltage.csv", "scale.json"
 
 
@@ -153,8 +153,35 @@ def place_order(order: Order, results: Path) -> Job:
         "pattern": order.pattern or None,
     }  # fmt: skip
     task = {"recording": str(recording), "out": str(out), "reference": reference}
-    job = Job(0, "measure", order.recording.name, task, key=str(out))
-    job.result = {}
+    return _job(order.recording.name, task)
+
+
+def _job(title: str, task: dict[str, Any]) -> Job:
+    """Job of a measurement, one at a time for each result."""
+    return Job(0, "measure", title, task, key=str(task["out"]))
+
+
+def measure_again(recording: Path, jobs: Jobs) -> Job:
+    """Give the job that measures a recording of the shelf that has no result.
+
+    Parameters
+    ----------
+    recording : Path
+        File or folder of pictures, with its bench file beside or above it.
+    jobs : Jobs
+        Of this server; what an earlier job of the same recording was told, such as its reference picture, holds.
+
+    Returns
+    -------
+    job : Job
+        Not started.
+    """
+    out = str(result_folder(recording))
+    before = jobs.last(out)
+    if before is None:
+        return _job(recording.name, {"recording": str(recording), "out": out, "reference": None})
+    job = _job(before.title, before.task)
+    job.finish = before.finish
     return job
 
 
@@ -162,7 +189,7 @@ def _write_texts(order: Order, recording: Path) -> None:
     """Write the small files of an order beside its recording."""
     (recording.parent / BENCH_NAME).write_text(order.text, encoding="utf-8")
     if order.own is not None:
-        recording.with_suffix(".toml").write_text(order.own, encoding="utf-8")
+        own_file(recording).write_text(order.own, encoding="utf-8")
     if order.scale is not None:
         (recording.parent / order.scale_name).write_text(order.scale, encoding="utf-8")
 
@@ -194,7 +221,9 @@ def _check_bench(order: Order, results: Path) -> None:
                 (recording.parent / order.log_name).touch()
             if order.picture is not None:
                 bench.write_text(_with_any_scale(order.text), encoding="utf-8")
-            load_bench(bench, recording=recording)
+            read = load_bench(bench, recording=recording)
+            if order.recording.kind == "pictures" and read.frame_rate is None:
+                raise BenchError(str(bench), "camera.frame_rate", "nothing", PICTURES_RATE)
     except BenchError as error:
         fault = Fault(error.key, f"read {error.found}; allowed: {error.allowed}")
         named = {"camera.scale": (order.scale, order.scale_name), "field.log": (order.log, order.log_name)}
@@ -213,47 +242,25 @@ def _with_any_scale(text: str) -> str:
     return "\n".join([*lines, "[camera]", 'metres_per_pixel = "1 um"'])
 
 
-def finish_order(order: Order, uploads: Uploads, job: Job) -> None:
-    """Clear up when a measurement ended: done keeps all, cancelled removes all, failed waits for another try.
+def finish_order(order: Order | None, uploads: Uploads, job: Job) -> None:
+    """Clear up when a measurement ended: done keeps all; failed and cancelled wait for another try.
 
     Parameters
     ----------
-    order : Order
-        That was measured.
+    order : Order or None
+        That was measured; None for a recording that was not sent by the page.
     uploads : Uploads
         Where its files are held.
     job : Job
         That ended.
     """
-    files = [held for held in (order.recording, order.picture, order.log) if held is not None]
     if job.state == "done":
         job.result = {"id": key_of(Path(job.task["out"]))}
-    if job.state == "cancelled":
-        shutil.rmtree(Path(job.task["out"]).parent, ignore_errors=True)
-    if job.state in ("done", "cancelled"):
-        for held in files:
+    for held in () if order is None else (order.recording, order.picture, order.log):
+        if held is not None and job.state == "done":
             uploads.release(held.number)
-
-
-def remove_upload(number: str, uploads: Uploads, results: Path) -> None:
-    """Drop a file that was sent; if it lies in a folder of a measurement that failed, the folder goes when empty.
-
-    Parameters
-    ----------
-    number : str
-        Of the upload.
-    uploads : Uploads
-        Where it is held.
-    results : Path
-        Folder that the user chose.
-    """
-    held = uploads.take_out(number)
-    if held is None:
-        return
-    held.discard()
-    folder = held.path.parent if held.path is not None else results
-    if folder.parent == results and held.kind == "recording" and not any(folder.glob("*.fallrise")):
-        shutil.rmtree(folder, ignore_errors=True)
+        elif held is not None:
+            held.given_up = job.state == "cancelled"
 
 
 def measure(*, recording: str, out: str, reference: dict[str, Any] | None, progress: Any) -> None:

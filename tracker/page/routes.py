@@ -19,8 +19,9 @@ from tracker.page import exports
 from tracker.page.detail import droplet_detail, droplet_fits
 from tracker.page.editing import decide, undo
 from tracker.page.errors import RefusedError
-from tracker.page.jobs import Job
-from tracker.page.measuring import finish_order, place_order, read_order, remove_upload
+from tracker.page.jobs import Job, Jobs
+from tracker.page.library import key_of
+from tracker.page.measuring import Order, finish_order, measure_again, place_order, read_order
 from tracker.page.pictures import small_picture
 from tracker.page.results import Opened, positions, shown
 from tracker.page.site import Site
@@ -70,11 +71,29 @@ async def shelf(request: Request) -> Response:
 
     site = site_of(request)
     items = await run_in_threadpool(site.library.shown)
+    jobs = _with_work(items, site.jobs)
     return JSONResponse({
         "place": str(site.library.target or site.library.results), "results": str(site.library.results),
-        "items": items, "jobs": site.jobs.shown(), "limit": site.uploads.limit, "cautions": CAUTIONS,
+        "items": items, "jobs": jobs, "limit": site.uploads.limit, "cautions": CAUTIONS,
         "reasons": {code: reason.sentence for code, reason in REASONS.items()},
     })  # fmt: skip
+
+
+def _with_work(items: list[dict[str, Any]], jobs: Jobs) -> list[dict[str, Any]]:
+    """Give the jobs; mark recordings that are being measured, and ended jobs whose recording has no result yet."""
+    without = {item["id"]: item for item in items if item["status"] == "open"}
+    told = []
+    for job in reversed(jobs.all()):
+        said = job.shown()
+        key = key_of(Path(job.task["recording"])) if job.kind == "measure" else ""
+        item = without.pop(key, None)  # the latest job of a recording counts
+        if item is not None and job.over:
+            said["again"] = key
+        elif item is not None:
+            item |= {"status": "measuring", "progress": round(job.progress, 4),
+                             "why": "waits" if job.state == "waiting" else "being measured"}  # fmt: skip
+        told.append(said)
+    return told
 
 
 async def result(request: Request) -> Response:
@@ -190,7 +209,12 @@ async def _chunks(request: Request) -> AsyncIterator[bytes]:
 async def drop_upload(request: Request) -> Response:
     """Forget a file that was sent."""
     site = site_of(request)
-    await run_in_threadpool(remove_upload, request.path_params["number"], site.uploads, site.library.results)
+    number = request.path_params["number"]
+    placed = site.uploads.path_of(number)
+    if placed is not None and any(job.task["recording"] == str(placed) and not job.over
+                                  for job in site.jobs.all() if job.kind == "measure"):  # fmt: skip
+        raise RefusedError(409, "this recording is being measured; cancel the measurement first")
+    await run_in_threadpool(site.uploads.remove, number)
     return JSONResponse({})
 
 
@@ -200,18 +224,32 @@ async def measure(request: Request) -> Response:
     body = await body_of(request)
     order = await run_in_threadpool(read_order, body, site.uploads)
     job = await run_in_threadpool(place_order, order, site.library.results)
+    return await _start_measuring(site, job, order)
+
+
+async def measure_open(request: Request) -> Response:
+    """Start the measurement of a recording of the shelf that has no result, such as one that was cancelled."""
+    site = site_of(request)
+    recording = await run_in_threadpool(site.library.recording, request.path_params["key"])
+    return await _start_measuring(site, measure_again(recording, site.jobs), None)
+
+
+async def _start_measuring(site: Site, job: Job, order: Order | None) -> Response:
+    """Start a job and keep the shelf up to date; one that measures again ends as the one before would have."""
 
     def finish(ended: Job) -> None:
         finish_order(order, site.uploads, ended)
         site.library.entries(fresh=True)
 
-    job.finish = finish
-    return JSONResponse(site.jobs.start(job).shown())
+    job.finish = job.finish or finish
+    started = site.jobs.start(job)
+    await run_in_threadpool(functools.partial(site.library.entries, fresh=True))
+    return JSONResponse(started.shown())
 
 
 async def jobs(request: Request) -> Response:
     """List all jobs."""
-    return JSONResponse(site_of(request).jobs.shown())
+    return JSONResponse([job.shown() for job in reversed(site_of(request).jobs.all())])
 
 
 def _job(request: Request) -> Job:
@@ -306,6 +344,7 @@ ROUTES: list[BaseRoute] = [
     Route(UPLOAD_PATH, take_upload, methods=["POST"]),
     Route(UPLOAD_PATH + "/{number}", drop_upload, methods=["DELETE"]),
     Route("/api/measure", measure, methods=["POST"]),
+    Route("/api/recordings/{key}/measure", measure_open, methods=["POST"]),
     Route("/api/jobs", jobs),
     Route("/api/jobs/{number}", job),
     Route("/api/jobs/{number}/cancel", cancel, methods=["POST"]),

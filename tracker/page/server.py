@@ -24,6 +24,7 @@ from physics.errors import FallriseError
 from tracker.errors import DecisionError, ResultError, UsageError
 from tracker.page.errors import RefusedError, status_of
 from tracker.page.guard import BodyTooLargeError, Guard
+from tracker.page.library import is_result, key_of
 from tracker.page.routes import ROUTES, UPLOAD_PATH
 from tracker.page.site import Site
 
@@ -139,13 +140,18 @@ def serve(
     with contextlib.closing(listen(port)) as listener:
         number = int(listener.getsockname()[1])
         token = secrets.token_urlsafe(24)
-        address = f"http://{HOST}:{number}/?token={token}"
+        address = f"http://{HOST}:{number}/?token={token}{_view(site.library.target)}"
         say(f"fallrise inspect: {address}")
         say(f"new results go to {site.library.results}; stop with Ctrl+C")
         if open_browser:
             threading.Thread(target=webbrowser.open, args=(address,), daemon=True).start()
         threading.Thread(target=_warm_up, daemon=True).start()
         uvicorn.Server(server_config(make_app(site, token=token, port=number))).run([listener])
+
+
+def _view(target: Path | None) -> str:
+    """The part of the address that opens the target at once, if it is a single result."""
+    return f"#/{key_of(target)}" if target is not None and is_result(target) else ""
 
 
 def server_config(app: ASGIApp) -> uvicorn.Config:
@@ -184,7 +190,7 @@ def _site(target: Path | str | None, results: Path | str | None) -> Site:
     place = None if target is None else Path(target).absolute()
     if place is not None and not place.is_dir():
         raise ResultError(str(place), "no such folder; give a result, a batch folder, or nothing")
-    whole_batch = place is not None and not (place / "recording.json").is_file()
+    whole_batch = place is not None and not is_result(place)
     default = place if whole_batch and place is not None else Path.cwd() / RESULTS_NAME
     chosen = default if results is None else Path(results).absolute()
     if chosen.exists() and not chosen.is_dir():

@@ -21,6 +21,7 @@ from typing import IO
 from starlette.concurrency import run_in_threadpool
 
 from tracker.page.errors import RefusedError
+from tracker.page.picturefolders import read_index, unpack
 
 MAX_UPLOAD = 64 * 1024**3  # bytes
 MAX_UPLOADS = 12  # held at a time
@@ -29,7 +30,9 @@ KINDS = {
     "recording": {".avi", ".mp4", ".mov", ".mkv", ".webm", ".m4v", ".tif", ".tiff", ".mpg", ".mpeg", ".ts"},
     "picture": {".png", ".jpg", ".jpeg", ".tif", ".tiff", ".bmp"},
     "log": {".csv", ".txt"},
+    "pictures": {""},  # a folder of them, as `picturefolders` reads it
 }
+_SERVES = {"recording": ("recording", "pictures")}  # role in a measurement -> kinds of uploads
 _RESERVED = {"con", "prn", "aux", "nul", *(f"{port}{i}" for port in ("com", "lpt") for i in range(10))}
 
 
@@ -44,13 +47,16 @@ class Upload:
     size: int
     stream: IO[bytes] | None  # the open file; None once it lies at `path`
     path: Path | None = None
+    given_up: bool = False  # its measurement was cancelled; it goes when the server ends
 
     def place(self, folder: Path) -> Path:
         """Give the file its name in a folder, by a link or a rename; never over another file."""
         target = folder / self.leaf
         if self.path == target:
             return target
-        if self.path is not None:
+        if self.kind == "pictures":
+            self._unpack(target)
+        elif self.path is not None:
             self.drop_stream()  # some systems rename no file that is open
             self.path.rename(target)
         elif self.stream is not None:
@@ -64,6 +70,14 @@ class Upload:
         self.path = target
         return target
 
+    def _unpack(self, target: Path) -> None:
+        """Make a folder of pictures out of the file that holds them."""
+        if shutil.disk_usage(target.parent).free < self.size + SPARE:
+            raise RefusedError(507, f"too little space on the disk in {target.parent}")
+        if self.stream is not None:
+            unpack(self.stream, self.size, target)
+            self.discard()
+
     def drop_stream(self) -> None:
         """Close the open file."""
         if self.stream is not None:
@@ -73,7 +87,9 @@ class Upload:
     def discard(self) -> None:
         """Forget the file; it goes from the disk."""
         self.drop_stream()
-        if self.path is not None:
+        if self.path is not None and self.path.is_dir():
+            shutil.rmtree(self.path, ignore_errors=True)
+        elif self.path is not None:
             self.path.unlink(missing_ok=True)
 
 
@@ -98,7 +114,7 @@ def clean_leaf(name: str, *, kind: str) -> str:
         415 if the ending is not one of the kind.
     """
     plain = unicodedata.normalize("NFKD", re.split(r"[/\\]", name)[-1]).encode("ascii", "ignore").decode()
-    stem, dot, ending = plain.rpartition(".")
+    stem, dot, ending = (plain, "", "") if kind == "pictures" else plain.rpartition(".")
     suffix = (dot + ending).lower()
     if suffix not in KINDS[kind]:
         raise RefusedError(415, f"a {kind} must end in {', '.join(sorted(KINDS[kind]))}")
@@ -129,13 +145,27 @@ class Uploads:
     def get(self, number: str, *, kind: str) -> Upload:
         """Give an upload of a kind, or refuse."""
         found = self._held.get(number)
-        if found is None or found.kind != kind:
+        if found is None or found.kind not in _SERVES.get(kind, (kind,)):
             raise RefusedError(404, f"the {kind} is no longer held; choose the file again")
         return found
 
-    def take_out(self, number: str) -> Upload | None:
-        """Take an upload off the list; what becomes of its file is the caller's business."""
-        return self._held.pop(number, None)
+    def path_of(self, number: str) -> Path | None:
+        """Where an upload lies under its own name; None if it waits for a measurement or is not held."""
+        held = self._held.get(number)
+        return None if held is None or held.path is None else held.path
+
+    def remove(self, number: str) -> None:
+        """Drop a file that was sent; a recording's own folder goes with it unless it holds a result."""
+        held = self._held.pop(number, None)
+        if held is not None:
+            self._remove(held)
+
+    def _remove(self, held: Upload) -> None:
+        folder = None if held.path is None else held.path.parent
+        held.discard()
+        own = folder is not None and folder.parent == self.folder and held.kind in _SERVES["recording"]
+        if folder is not None and own and not any(folder.glob("*.fallrise")):
+            shutil.rmtree(folder, ignore_errors=True)
 
     def release(self, number: str) -> None:
         """Take an upload off the list for good: its file has become part of a result."""
@@ -181,6 +211,8 @@ class Uploads:
             if held.size == 0:
                 raise RefusedError(400, f"{name} is empty")
             await run_in_threadpool(stream.flush)
+            if kind == "pictures":
+                await run_in_threadpool(read_index, stream, held.size)
         except BaseException:
             held.discard()
             raise
@@ -195,10 +227,10 @@ class Uploads:
             raise RefusedError(507, f"too little space on the disk in {self.folder}")
 
     def close(self) -> None:
-        """Drop everything that no measurement took."""
+        """Drop everything that no measurement took, and what belongs to cancelled ones."""
         for held in self._held.values():
-            if held.stream is not None:
-                held.discard()
+            if held.given_up or held.stream is not None:
+                self._remove(held)
         self._held.clear()
 
 

@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 import contextlib
+import io
+import json
 import os
 import signal
 import socket
@@ -18,6 +20,7 @@ from tracker.bench import load_bench
 from tracker.keeping.store import read_result
 from tracker.page.benchform import check_pitch, companions, read_form
 from tracker.page.errors import RefusedError
+from tracker.page.picturefolders import read_index
 from tracker.page.site import Site
 from tracker.page.uploads import SPARE, clean_leaf
 
@@ -211,14 +214,102 @@ def recording(tmp_path_factory: pytest.TempPathFactory) -> Path:
     return simulated_recording(tmp_path_factory.mktemp("long"), seconds=60.0)
 
 
-def test_cancelled_measurement_leaves_nothing(page: Client, recording: Path, tmp_path: Path) -> None:
-    """Cancel ends the child and removes the folder of the recording."""
+def test_cancelled_measurement_can_be_asked_for_again_or_removed(
+    page: Client, site: Site, recording: Path, tmp_path: Path
+) -> None:
+    """A cancelled recording stays, is offered again, cannot be removed while it is measured, and goes when asked."""
     number = send(page, recording)
     job = page.post("/api/measure", json={"recording": number, "values": FORM}).json()
     assert wait_for(lambda: page.get(f"/api/jobs/{job['number']}").json()["text"] == "measuring")
+    item = _item(page, "clip/clip.avi")
+    assert item["status"] == "measuring"
+    assert 0 <= item["progress"] <= 1
+    assert page.delete(f"/api/uploads/{number}").status_code == 409
     page.post(f"/api/jobs/{job['number']}/cancel", json={})
     assert ended(page, job["number"])["state"] == "cancelled"
+    assert _item(page, "clip/clip.avi")["status"] == "open"
+    told = page.get("/api/shelf").json()["jobs"][0]
+    assert told["again"] == item["id"]
+    again = page.post(f"/api/recordings/{item['id']}/measure", json={}).json()
+    assert again["title"] == "clip.avi"
+    assert wait_for(lambda: page.get(f"/api/jobs/{again['number']}").json()["text"] == "measuring")
+    page.post(f"/api/jobs/{again['number']}/cancel", json={})
+    ended(page, again["number"])
+    assert page.delete(f"/api/uploads/{number}").status_code == 200
     assert list((tmp_path / "results").iterdir()) == []
+    assert site.uploads.held == 0
+    assert page.post(f"/api/recordings/{item['id']}/measure", json={}).status_code == 404
+
+
+def _item(page: Client, name: str) -> dict[str, object]:
+    """One line of the shelf."""
+    items = {item["name"]: item for item in page.get("/api/shelf").json()["items"]}
+    assert name in items, items
+    return dict(items[name])
+
+
+def test_recording_without_a_result_is_measured_where_it_lies(tmp_path: Path) -> None:
+    """A recording in a batch folder that has no result can be measured from the page, with the bench beside it."""
+    term = tmp_path / "term"
+    simulated_recording(term / "bench A")
+    with Page(Site.make(term, term)) as running, running.client() as page:
+        job = page.post(f"/api/recordings/{_item(page, 'bench A/clip.avi')['id']}/measure", json={}).json()
+        done = ended(page, job["number"])
+        assert done["state"] == "done", done
+        assert page.get(f"/api/results/{done['result']['id']}").status_code == 200  # type: ignore[index]
+    assert (term / "bench A" / "clip.fallrise" / "recording.json").is_file()
+    assert (term / "bench A" / "clip.avi").is_file()
+
+
+def pictures_body(names: list[str], content: bytes = b"picture") -> bytes:
+    """A folder of pictures as the page sends it."""
+    return json.dumps([[name, len(content)] for name in names]).encode() + b"\n" + content * len(names)
+
+
+def test_folder_of_pictures_comes_out_as_it_was(page: Client, site: Site, tmp_path: Path) -> None:
+    """Names and bytes of the pictures are kept; pictures without a frame rate are told before anything is made."""
+    names = [f"frame {i}.png" for i in range(12)]
+    body = json.dumps([[name, i + 1] for i, name in enumerate(names)]).encode() + b"\n"
+    body += b"".join(bytes([i]) * (i + 1) for i in range(12))
+    headers = {"x-kind": "pictures", "x-name": "../run 7"}
+    number = page.post("/api/uploads", content=body, headers=headers).json()["number"]
+    answer = page.post("/api/measure", json={"recording": number, "values": FORM})
+    assert [fault["key"] for fault in answer.json()["faults"]] == ["camera.frame_rate"]
+    assert list((tmp_path / "results").iterdir()) == []
+    held = site.uploads.get(number, kind="recording")
+    (tmp_path / "results" / "run_7").mkdir()
+    folder = held.place(tmp_path / "results" / "run_7")
+    assert folder.name == "run_7"
+    assert {path.name: path.read_bytes() for path in folder.iterdir()} == {
+        name: bytes([i]) * (i + 1) for i, name in enumerate(names)
+    }
+    assert page.delete(f"/api/uploads/{number}").status_code == 200
+    assert list((tmp_path / "results").iterdir()) == []
+
+
+@pytest.mark.parametrize(
+    "body",
+    [
+        b"", b"not a list\n", b"[1, 2]\n", pictures_body(["a.png"] * 3), pictures_body([f"{i}.sh" for i in range(12)]),
+        pictures_body([f"{i}.png" for i in range(12)])[:-1], pictures_body([f"{i}.png" for i in range(12)], b""),
+    ],
+)  # fmt: skip
+def test_broken_folder_of_pictures_is_refused(page: Client, tmp_path: Path, body: bytes) -> None:
+    """No list, a wrong one, too few or other files, a cut end: refused, and nothing is left."""
+    headers = {"x-kind": "pictures", "x-name": "run"}
+    assert 400 <= page.post("/api/uploads", content=body, headers=headers).status_code < 500
+    assert list((tmp_path / "results").iterdir()) == []
+
+
+def test_names_of_pictures_cannot_leave_their_folder(tmp_path: Path) -> None:
+    """Names with paths, and names that differ only in case, become numbers in the order in which they came."""
+    for names in (
+        ["../../a.png", *(f"{i}.png" for i in range(11))],
+        [f"{'aA'[i % 2]}{i // 2}.png" for i in range(12)],
+    ):
+        body = pictures_body(names)
+        found = read_index(io.BytesIO(body), len(body))
+        assert [name for name, _ in found] == [f"{i:06d}.png" for i in range(12)]
 
 
 def test_uploads_stop_at_the_limit(page: Client, site: Site, tmp_path: Path) -> None:

@@ -2,6 +2,7 @@
 
 import { bytes, clearNotice, el, sentence } from "./dom.js";
 import { post, remove, upload } from "./api.js";
+import { PICTURE, dropped, packed } from "./dropping.js";
 
 const ROLES = { recording: "Recording", bench: "Bench file", own: "Recording\u2019s own file", scale: "Scale file", picture: "Reference picture", log: "Voltage log" };
 const TEXTS = ["bench", "own", "scale"];   // small files that are read here and sent with the request
@@ -20,20 +21,25 @@ const HINTS = {
 };
 const SOURCES = [["list", "typed list of times and voltages"], ["log", "log of the supply (CSV)"], ["lamp", "lamp in the picture"], ["motion", "the droplets' own motion"]];
 
+const VIDEO = /\.(avi|mp4|m4v|mov|mkv|webm|mpe?g|ts)$/i;
+const FEWEST = 10;   // pictures that make a folder a recording
+
 export class Intake {
   constructor(box, shelf, { onStarted }) {
     Object.assign(this, { shelf, onStarted });
     this.files = {};
-    this.started = new Map();
+    this.started = new Set();   // numbers of jobs that were asked for on this page and have not ended
+    this.current = null;        // the one of the files that are listed
     this.texts = {};
     this.values = {};
     this.error = el("p", { class: "error", role: "alert" });
+    this.note = el("p", { class: "soft", role: "status" });
     this.drop = this.dropZone();
     this.list = el("ul", { class: "files" });
     this.formBox = el("div");
     this.go = el("button", { type: "submit", class: "main" }, "Measure");
-    this.form = el("form", { noValidate: true, onsubmit: (event) => { event.preventDefault(); this.measure(); } }, this.list, this.formBox, this.error, el("div", { class: "row" }, this.go));
-    box.append(el("section", { class: "card", "aria-labelledby": "intake-title" }, el("h2", { id: "intake-title" }, "Measure a recording"), this.drop, this.form,
+    this.form = el("form", { noValidate: true, onsubmit: (event) => { event.preventDefault(); this.measure(); } }, this.list, this.formBox, el("div", { class: "row" }, this.go));
+    box.append(el("section", { class: "card", "aria-labelledby": "intake-title" }, el("h2", { id: "intake-title" }, "Measure a recording"), this.drop, this.error, this.note, this.form,
       el("p", { class: "soft" }, "Results are kept in ", el("span", { class: "num" }, shelf.results), "."), this.status = el("p", { class: "hidden", role: "status" })));
     this.stop = (event) => { if ([...(event.dataTransfer?.types || [])].includes("Files")) event.preventDefault(); };
     for (const name of ["dragover", "drop"]) window.addEventListener(name, this.stop);
@@ -42,23 +48,50 @@ export class Intake {
   }
 
   dropZone() {
-    const input = el("input", { type: "file", id: "files", multiple: true, class: "hidden", onchange: () => { this.take([...input.files]); input.value = ""; } });
-    const choose = el("button", { type: "button", onclick: () => input.click() }, "Choose files");
-    input.tabIndex = -1;
-    input.setAttribute("aria-label", "Files of a measurement");
+    const chooser = (id, label, more, take) => {
+      const input = el("input", { type: "file", id, multiple: true, class: "hidden", tabIndex: -1, "aria-label": label, onchange: () => { take([...input.files]); input.value = ""; }, ...more });
+      return input;
+    };
+    const files = chooser("files", "Files of a measurement", {}, (chosen) => this.take(chosen));
+    const folder = chooser("folder", "Folder of pictures of a recording", { webkitdirectory: true }, (chosen) => this.takeFolder(chosen[0]?.webkitRelativePath.split("/")[0] || "pictures", chosen.filter((file) => file.webkitRelativePath.split("/").length === 2)));
     const zone = el("div", { class: "drop" }, el("strong", {}, "Drop a recording here"),
-      el("p", { class: "soft" }, "with its bench file, reference picture or voltage log"), choose, input);
+      el("p", { class: "soft" }, "a video, a TIFF stack or a folder of pictures, with its bench file, reference picture or voltage log"),
+      el("div", { class: "row centre" }, el("button", { type: "button", onclick: () => files.click() }, "Choose files"), el("button", { type: "button", onclick: () => folder.click() }, "Choose a folder")), files, folder);
     zone.addEventListener("dragover", (event) => { event.preventDefault(); zone.classList.add("over"); });
     zone.addEventListener("dragleave", () => zone.classList.remove("over"));
-    zone.addEventListener("drop", (event) => { event.preventDefault(); zone.classList.remove("over"); this.take([...event.dataTransfer.files]); });
+    zone.addEventListener("drop", async (event) => {
+      event.preventDefault();
+      zone.classList.remove("over");
+      try {
+        const { files: single, folders } = await dropped(event.dataTransfer);
+        for (const { name, inside } of folders) this.takeFolder(name, inside);
+        if (single.length || !folders.length) this.take(single, folders.length > 0);
+      } catch (error) { this.error.textContent = sentence(error.message); }
+    });
     return zone;
+  }
+
+  // A folder: its pictures are one recording; whatever else lies in it is taken as if it had been dropped itself.
+  takeFolder(name, inside) {
+    const shown = inside.filter((file) => !file.name.startsWith("."));
+    const pictures = shown.filter((file) => PICTURE.test(file.name)), videos = shown.filter((file) => VIDEO.test(file.name));
+    const beside = shown.filter((file) => !PICTURE.test(file.name) && this.roleOf(file) !== "recording");
+    this.error.textContent = "";
+    if (videos.length) this.take([...videos, ...beside, ...(pictures.length === 1 ? pictures : [])]);
+    else if (pictures.length < FEWEST) this.error.textContent = `The folder ${name} holds no recording: neither a video nor ${FEWEST} pictures or more (PNG, TIFF or JPEG).`;
+    else if (pictures.some((file) => file.size === 0)) this.error.textContent = `A picture in the folder ${name} is empty.`;
+    else {
+      this.send("recording", packed(name, pictures), pictures.length);
+      this.take(beside, true);
+    }
   }
 
   roleOf(file) {
     const ending = file.name.toLowerCase().match(/\.[^.]*$/)?.[0] || "";
     // STEM.toml beside STEM.avi overrides single keys of the bench; any other is the bench file.
     const stem = (name) => name.replace(/\.[^.]*$/, "");
-    if (ending === ".toml") return this.files.recording && stem(file.name) === stem(this.files.recording.name) ? "own" : "bench";
+    const recording = this.files.recording;
+    if (ending === ".toml") return recording && stem(file.name) === (recording.pictures ? recording.name : stem(recording.name)) ? "own" : "bench";
     if (ending === ".json") return "scale";
     if ([".csv", ".txt"].includes(ending)) return "log";
     if ([".png", ".jpg", ".jpeg", ".bmp"].includes(ending)) return "picture";
@@ -66,8 +99,13 @@ export class Intake {
     return "recording";
   }
 
-  take(files) {
-    this.error.textContent = "";
+  take(files, more = false) {
+    if (!more) this.error.textContent = "";
+    this.note.textContent = "";
+    const several = files.filter((file) => VIDEO.test(file.name)), loose = files.filter((file) => PICTURE.test(file.name));
+    if (several.length > 1) this.error.textContent = `One recording at a time: ${several[0].name} was taken. Many are measured by \u201cfallrise batch FOLDER\u201d.`;
+    else if (loose.length > 2) { this.error.textContent = "Pictures of one recording: drop their folder. A single picture is taken as that of the reference pattern."; return; }
+    files = files.filter((file) => !several.slice(1).includes(file));
     // Recordings first: the role of a .toml or .tif depends on them.
     const late = (file) => (/\.(toml|json|png|jpe?g|bmp|csv|txt)$/i.test(file.name) ? 1 : 0);
     for (const file of files.sort((a, b) => late(a) - late(b))) {
@@ -86,13 +124,14 @@ export class Intake {
     this.refresh();
   }
 
-  async send(role, file) {
+  async send(role, file, pictures = 0) {
     if (file.size > this.shelf.limit) { this.error.textContent = `${file.name} is too large: ${bytes(file.size)}, the limit is ${bytes(this.shelf.limit)}.`; return; }
     if (file.size === 0) { this.error.textContent = `${file.name} is empty.`; return; }
+    if (role === "recording" && this.measuring) this.makeRoom();
     this.drop_(role);
-    const entry = { name: file.name, size: file.size, state: "sending", sent: 0 };
+    const entry = { name: file.name, size: file.size, state: "sending", sent: 0, pictures };
     this.files[role] = entry;
-    const job = upload(file, role, (sent) => { entry.sent = sent; this.refresh(); });
+    const job = upload(file, pictures ? "pictures" : role, (sent) => { entry.sent = sent; this.refresh(); });
     entry.cancel = job.cancel;
     this.refresh();
     if (role === "picture") this.fillForm();
@@ -108,6 +147,16 @@ export class Intake {
     this.refresh();
   }
 
+  // Whether the files that are listed here are being measured now.
+  get measuring() { return this.started.has(this.current); }
+
+  // The next recording: the one before goes on by itself, its bench is most likely that of this one too.
+  makeRoom() {
+    this.current = null;
+    this.again = false;
+    for (const role of ["recording", "own", "picture", "log"]) { delete this.files[role]; delete this.texts[role]; }
+  }
+
   drop_(role) {
     const entry = this.files[role];
     if (!entry) return;
@@ -119,6 +168,8 @@ export class Intake {
   removeFile(role) {
     this.drop_(role);
     delete this.texts[role];
+    this.note.textContent = "";
+    if (role === "recording") this.again = false;
     this.fillForm();
     this.refresh();
   }
@@ -127,14 +178,14 @@ export class Intake {
     const roles = Object.keys(ROLES).filter((role) => this.files[role]);
     this.list.replaceChildren(...roles.map((role) => {
       const entry = this.files[role];
-      const state = entry.state === "sending" ? `${bytes(entry.sent)} of ${bytes(entry.size)}` : bytes(entry.size);
-      const button = el("button", { type: "button", onclick: () => this.removeFile(role), "aria-label": `Remove ${entry.name}` }, entry.state === "sending" ? "Cancel" : "Remove");
+      const size = `${entry.pictures ? `${entry.pictures} pictures, ` : ""}${bytes(entry.size)}`, state = entry.state === "sending" ? `${bytes(entry.sent)} of ${size}` : size;
+      const button = el("button", { type: "button", disabled: this.measuring, onclick: () => this.removeFile(role), "aria-label": `Remove ${entry.name}` }, entry.state === "sending" ? "Cancel" : "Remove");
       return el("li", {}, el("span", { class: "role" }, ROLES[role]), el("span", { class: "leaf" }, entry.name), el("span", { class: "num soft" }, state), button);
     }));
     this.form.hidden = !roles.length;
     const sending = roles.some((role) => this.files[role].state === "sending");
-    this.go.disabled = !this.files.recording || sending || this.busy;
-    this.go.textContent = sending ? "Sending \u2026" : this.busy ? "Starting \u2026" : "Measure";
+    this.go.disabled = !this.files.recording || sending || this.busy || this.measuring;
+    this.go.textContent = sending ? "Sending \u2026" : this.busy ? "Starting \u2026" : this.measuring ? "Measuring \u2026" : this.again ? "Measure again" : "Measure";
   }
 
   field(key, title, example) {
@@ -199,7 +250,8 @@ export class Intake {
     const what = { recording: number("recording"), picture: number("picture"), log: number("log"), bench: this.texts.bench ?? null, own: this.texts.own ?? null, scale: this.texts.scale ?? null, values };
     try {
       const job = await post("/api/measure", what);
-      this.started.set(job.number, { ...this.files });
+      this.started.add(job.number);
+      this.current = job.number;
       this.status.textContent = `${this.files.recording.name} is being measured`;
       this.onStarted();
     } catch (error) {
@@ -210,15 +262,25 @@ export class Intake {
     this.refresh();
   }
 
+  // A measurement that was asked for elsewhere on this page: its result opens when it is there.
+  follow(job) {
+    this.started.add(job.number);
+    if (!this.files.recording || this.again) this.current = job.number;
+    this.note.textContent = "";
+    this.refresh();
+  }
+
   // A measurement of this page ended without a result: the files stay, and what was wrong stands beside its field.
   ended(job) {
     if (!this.started.delete(job.number)) return;
+    if (job.number !== this.current) { this.refresh(); return; }
+    this.again = job.state !== "done";
+    this.refresh();
     if (job.state === "failed") {
       const { key, found, allowed, message } = job.error;
       if (key && this.fault(key, `read ${found}; allowed: ${allowed}`)) return;
       this.error.textContent = sentence(message);
-    } else if (job.state === "cancelled") { this.files = {}; this.texts = {}; this.fillForm(); }
-    this.refresh();
+    } else if (job.state === "cancelled" && this.files.recording) this.note.textContent = "Cancelled. The files are still here: measure them again, or remove them.";
   }
 
   close() {

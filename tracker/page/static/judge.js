@@ -3,11 +3,31 @@
 import { el, notice, sentence, verdictShape } from "./dom.js";
 import { Refused, post } from "./api.js";
 
+const at = (time) => `${time.toFixed(3)} s`;
+
+// What is under way, in words.
+function doing(what, { droplet, verdict, at: time, start, end, other }) {
+  if (what === "undo") return "Taking the last decision back";
+  if (verdict === "split") return `Splitting droplet ${droplet} at ${at(time)}`;
+  if (verdict === "trim") return `Trimming droplet ${droplet} ${start === undefined ? `after ${at(end)}` : `before ${at(start)}`}`;
+  if (verdict === "join") return `Joining droplets ${droplet} and ${other}`;
+  return verdict === "reset" ? `Setting droplet ${droplet} back` : `Marking droplet ${droplet} as ${verdict}`;
+}
+
+// What became of the tracks: the numbers that came or went.
+function did(before, after, { droplet, verdict, other }) {
+  const had = new Set(before.droplets.map((d) => d.droplet)), come = after.droplets.map((d) => d.droplet).filter((n) => !had.has(n));
+  if (verdict === "split" && come.length) return `Droplet ${droplet} is now ${[droplet, ...come].join(" and ")}.`;
+  if (verdict === "join") return `Droplets ${droplet} and ${other} are one.`;
+  return "";
+}
+
 export class Judge {
   constructor(box, { state, onResult, onStale }) {
     Object.assign(this, { state, onResult, onStale });
     this.reason = el("input", { type: "text", id: "reason", maxLength: 400, autocomplete: "off", placeholder: "why, in your words" });
     this.outcome = el("div", { class: "outcome", role: "status", id: "outcome" });
+    this.working = el("progress", { class: "working off", "aria-label": "Evaluation" });
     const act = (text, title, call, key) => {
       const button = el("button", { type: "button", title: key ? `${title} (key ${key})` : title, onclick: call }, text);
       if (key) button.setAttribute("aria-keyshortcuts", key);
@@ -32,7 +52,7 @@ export class Judge {
       el("div", { class: "row" },
         el("div", { class: "row", role: "group", "aria-label": "Verdict of a person" }, keep, doubt, reject),
         el("div", { class: "row", role: "group", "aria-label": "Change the track" }, split, trimStart, trimEnd, this.join, el("label", { htmlFor: "other", class: "hidden" }, "Other droplet to join with"), this.other)),
-      this.outcome,
+      this.outcome, this.working,
     );
     this.reason.setAttribute("aria-describedby", "outcome");
     this.reason.addEventListener("input", () => this.hint());
@@ -94,13 +114,14 @@ export class Judge {
     if (this.busy) return;
     const held = document.activeElement;
     this.busy = true;
-    this.say("Evaluating again \u2026", false);
+    this.say(`${doing(what, body)} and evaluating again \u2026`, false);
+    this.working.classList.remove("off");
     this.refresh();
     try {
       const answer = await post(`/api/results/${this.state().result.id}/${what}`, body);
       // A reason that was begun in the meantime belongs to the next decision.
       if (this.reason.value.trim() === body.reason) this.reason.value = "";
-      this.say(`${what === "undo" ? "Taken back" : "Kept in decisions.jsonl"}; evaluated again in ${answer.seconds.toFixed(2)} s.`, false);
+      this.say(`${what === "undo" ? "Taken back" : `${did(this.state().result, answer.result, body)} Kept in decisions.jsonl`}; evaluated again in ${answer.seconds.toFixed(2)} s.`, false);
       this.busy = false;
       await this.onResult(answer, what);
     } catch (error) {
@@ -110,6 +131,7 @@ export class Judge {
       else if (error instanceof Refused && error.status >= 400 && error.status < 500) this.say(sentence(error.message));
       else notice(error.message, { bad: true });
     }
+    this.working.classList.add("off");
     this.refresh();
     // A button that was disabled meanwhile lost the focus: whoever works with the keyboard goes on from there.
     if (document.activeElement === document.body && held?.isConnected) (held.disabled ? this.reason : held).focus();

@@ -8,6 +8,8 @@ const ORDERS = [["name", "by name"], ["worst", "worst first"], ["new", "newest f
 
 const STEPS = ["Drop a recording, best with the bench file that says what is known of cell, oil, air and camera.", "Watch its droplets and judge the doubtful ones; each decision is kept with its reason.", "Export tables, pictures and a short report."];
 
+const measuring = (item) => `${item.why}${item.progress > 0 ? `, ${Math.round(100 * item.progress)} %` : ""}`;
+
 const counted = (parts) => parts.filter(([, n]) => n).map(([word, n]) => `${n} ${word}`).join(", ");
 
 export class ShelfView {
@@ -48,15 +50,18 @@ export class ShelfView {
     this.reason = this.reasonSelect.value;
     const by = { name: (a, b) => a.name.localeCompare(b.name, undefined, { numeric: true }), worst: (a, b) => b.bad - a.bad || a.name.localeCompare(b.name), new: (a, b) => b.when - a.when };
     const items = this.shelf.items.filter((item) => !this.reason || (item.reasons || {})[this.reason]).sort(by[this.order]);
-    const done = this.shelf.items.filter((item) => item.status === "done").length, failed = this.shelf.items.filter((item) => item.status === "failed").length;
-    this.tally.textContent = this.shelf.items.length ? `${counted([["measured", done], ["failed", failed], ["not measured", this.shelf.items.length - done - failed]])}, in ${this.shelf.place}` : "Nothing is measured here yet.";
+    const n = (...states) => this.shelf.items.filter((item) => states.includes(item.status)).length;
+    this.tally.textContent = this.shelf.items.length ? `${counted([["measured", n("done", "unread")], ["failed", n("failed")], ["being measured", n("measuring")], ["not measured", n("open")]])}, in ${this.shelf.place}` : "Nothing is measured here yet.";
     this.sorting.hidden = !this.shelf.items.length;
     this.firstSteps.hidden = !this.sorting.hidden;
-    const key = JSON.stringify(items);
+    // Progress changes in place: a list that is drawn anew loses the keyboard's focus.
+    const key = JSON.stringify(items, (name, value) => (name === "progress" ? undefined : value));
     if (key !== this.shownKey) {
       this.shownKey = key;
+      this.bars = new Map();
       this.list.replaceChildren(...items.map((item) => this.tile(item)));
     }
+    for (const item of items) this.showProgress(item);
     this.fillWorst();
     this.fillJobs();
   }
@@ -72,8 +77,33 @@ export class ShelfView {
       const way = this.order === "worst" && item.worst !== null ? `#/${item.id}/${item.worst}` : `#/${item.id}`;
       return el("li", {}, el("a", { class: "tile", href: way }, picture, el("div", { class: "words" }, ...words)));
     }
-    words.push(el("div", { class: "soft" }, sentence(item.status === "failed" ? `Failed: ${item.why}` : item.why || "not measured")));
+    if (item.status === "measuring") {
+      const bar = { text: el("div", { class: "soft num" }), progress: el("progress", { max: 1, "aria-label": `progress of ${item.name}` }) };
+      this.bars.set(item.id, bar);
+      words.push(bar.text, bar.progress);
+    } else words.push(el("div", { class: "soft" }, sentence(item.status === "failed" ? `Failed: ${item.why}` : item.why || "not measured")));
+    if (item.status === "open") words.push(this.measureButton(item.id, item.name, "Measure"));
     return el("li", {}, el("div", { class: "tile-off card" }, ...words));
+  }
+
+  showProgress(item) {
+    const bar = this.bars.get(item.id);
+    if (!bar) return;
+    bar.text.textContent = sentence(measuring(item));
+    if (item.progress > 0) bar.progress.value = item.progress;
+  }
+
+  // A recording that lies on the shelf without a result, with its bench file beside or above it.
+  measureButton(id, name, text) {
+    const start = async () => {
+      try {
+        const job = await post(`/api/recordings/${id}/measure`);
+        this.intake.follow(job);
+        this.main.scrollTop = 0;
+        this.poll(true);
+      } catch (error) { complain(error); }
+    };
+    return el("div", { class: "row" }, el("button", { type: "button", onclick: start, "aria-label": `${text} ${name}` }, text));
   }
 
   // The tracks with the most to look at, over all recordings: each opens where it lies.
@@ -97,7 +127,7 @@ export class ShelfView {
   }
 
   job(job) {
-    const state = { waiting: "waits", running: job.text || "measuring", cancelling: "stopping", done: "done", failed: "failed", cancelled: "cancelled, nothing was kept" }[job.state];
+    const state = { waiting: "waits", running: job.text || "measuring", cancelling: "stopping", done: "done", failed: "failed", cancelled: "cancelled" }[job.state];
     const parts = [el("div", { class: "spread" }, el("strong", {}, job.title), el("span", { class: "num soft" }, job.seconds && job.state !== "cancelled" ? `${state}, ${fixed(job.seconds, 0)} s` : state))];
     if (job.state === "running" || job.state === "waiting") {
       const bar = el("progress", { max: 1, "aria-label": `progress of ${job.title}` });
@@ -107,6 +137,7 @@ export class ShelfView {
       parts.push(el("div", { class: "row" }, el("span", { class: "num" }, `${Math.round(100 * job.progress)} %`), cancel), bar);
     }
     if (job.state === "failed") parts.push(el("div", { class: "error" }, sentence(job.error.message)));
+    if (job.again) parts.push(this.measureButton(job.again, job.title, "Measure again"));
     if (job.state === "done" && job.result.id) parts.push(el("a", { href: `#/${job.result.id}` }, "Open"));
     return el("li", {}, ...parts);
   }
@@ -124,7 +155,7 @@ export class ShelfView {
       this.fill();
       for (const job of this.shelf.jobs) {
         if (job.kind !== "measure" || this.known.has(job.number)) continue;
-        if (job.state === "done" && this.intake.started.has(job.number)) { location.hash = `#/${job.result.id}`; return; }
+        if (job.state === "done" && this.intake.current === job.number) { location.hash = `#/${job.result.id}`; return; }
         if (job.state === "failed" || job.state === "done" || job.state === "cancelled") {
           this.known.add(job.number);
           this.intake.ended(job);

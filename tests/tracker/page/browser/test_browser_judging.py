@@ -5,7 +5,7 @@ from __future__ import annotations
 import re
 
 import pytest
-from page_browser import row_of
+from page_browser import rest_on, row_of
 from page_server import CHROMIUM, Server, wait_for
 from playwright.sync_api import BrowserContext, Page, Route, expect
 
@@ -35,13 +35,37 @@ def test_rejection_holds_after_reload_and_can_be_undone(page: Page, server: Serv
     held: list[Route] = []
     page.route("**/undo", lambda route: held.append(route))  # noqa: PLW0108 -- the driver marks the handler
     page.get_by_role("button", name="Undo").click()
-    expect(page.locator("#outcome")).to_contain_text("Evaluating again")
+    expect(page.locator("#outcome")).to_contain_text("Taking the last decision back and evaluating again")
+    expect(page.get_by_role("progressbar", name="Evaluation")).to_be_visible()
     page.get_by_label("Reason", exact=True).fill("begun in the meantime")
     assert wait_for(lambda: page.evaluate("true") and held)
     held[0].continue_()
     expect(row.locator(".verdict.keep")).to_be_visible()
     expect(page.get_by_label("Reason", exact=True)).to_have_value("begun in the meantime")
     assert page.evaluate("fallrise.view.result.charge_unit_text") == before
+
+
+def test_split_says_what_is_done_and_what_became_of_it(page: Page) -> None:
+    """While a split is evaluated the page says so; then it names both droplets, and the table holds them."""
+    numbers = lambda: page.evaluate("fallrise.view.result.droplets.map((d) => d.droplet)")  # noqa: E731
+    before = numbers()
+    page.locator(row_of(page, before[0])).click()
+    rest_on(page, 40)
+    held: list[Route] = []
+    page.route("**/decide", lambda route: held.append(route))  # noqa: PLW0108 -- the driver marks the handler
+    page.get_by_label("Reason", exact=True).fill("another droplet from here")
+    page.get_by_role("button", name="Split", exact=True).click()
+    expect(page.locator("#outcome")).to_contain_text(
+        f"Splitting droplet {before[0]} at 2.000 s and evaluating"
+    )
+    assert wait_for(lambda: page.evaluate("true") and held)
+    held[0].continue_()
+    expect(page.locator("#outcome")).to_contain_text("Kept in decisions.jsonl")
+    (new,) = set(numbers()) - set(before)
+    expect(page.locator("#outcome")).to_contain_text(f"Droplet {before[0]} is now {before[0]} and {new}.")
+    expect(page.locator(row_of(page, new))).to_be_visible()
+    page.get_by_role("button", name="Undo").click()
+    expect(page.locator(row_of(page, new))).to_have_count(0)
 
 
 def test_stale_window_is_told(page: Page, context: BrowserContext) -> None:

@@ -120,3 +120,17 @@ def test_page_fits_small_windows_and_large_text(page: Page, size: tuple[int, int
     stage = page.locator(".stage").bounding_box()
     assert stage
     assert stage["height"] >= 160
+
+
+def test_a_result_named_on_the_command_line_is_opened(
+    context: BrowserContext, measured: Path, tmp_path: Path
+) -> None:
+    """The address that is printed for a single result opens its droplets; the list is one step away."""
+    with Server(measured / "clip.fallrise", tmp_path / "results", cache=tmp_path / "cache") as alone:
+        visit = context.browser.new_context() if context.browser else context
+        page = visit.new_page()
+        page.goto(alone.address)
+        expect(page.locator(".droplets tbody tr[data-droplet]").first).to_be_visible()
+        page.locator(".word").click()
+        expect(page.locator("a.tile")).to_have_count(1)
+        visit.close()
