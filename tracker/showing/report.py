@@ -14,6 +14,7 @@ from tracker.motion.verdict import REASONS
 from tracker.showing.html import Grid, Picture, Section, render
 from tracker.showing.plots import new_figure, plot_recording
 from tracker.showing.terminal import count, droplet_cells, length, missing
+from tracker.showing.units import MARKERS, label_of
 from tracker.showing.unitwords import charge_unit_lines
 
 if TYPE_CHECKING:
@@ -22,7 +23,6 @@ if TYPE_CHECKING:
 
     from tracker.keeping.store import Result
 
-MARKERS = "osD^v<>P*X"
 HATCHES = ("", "//", "..", "xx", "\\\\", "++", "oo", "--")
 CAUTIONS = (
     "The plates carry hundreds of volts or more: use a supply whose current is limited to what a person survives, "
@@ -45,22 +45,6 @@ class Trend:
     own_std: NDArray[np.float64]  # (N,)
     slope: float  # per week
     start: float  # ratio of the fitted line at week 0
-
-
-def label_of(text: str) -> str:
-    """Give a text that matplotlib does not read as mathematics.
-
-    Parameters
-    ----------
-    text : str
-        From outside, such as a file name.
-
-    Returns
-    -------
-    label : str
-        For titles and legends.
-    """
-    return text.replace("$", r"\$").lstrip("_") or "-"
 
 
 def cautions() -> Section:

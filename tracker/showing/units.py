@@ -66,7 +66,7 @@ def draw_charges(axes: Axes, groups: Sequence[ChargeGroup], unit: ChargeUnit) ->
         mine = [i for i, row in enumerate(shown) if row[2] == g]
         values, stds = [shown[i][0] for i in mine], [shown[i][1] for i in mine]
         axes.errorbar(place[mine], values, stds, fmt=MARKERS[g % len(MARKERS)], ms=3.5, lw=0.8, mfc="none",
-                      label=_plain(group.label))  # fmt: skip
+                      label=label_of(group.label))  # fmt: skip
     title = "Charges over the unit" if unit.resolved else "Charges over e: unit not resolved"
     hidden = len(rows) - len(shown)
     note = f" ({hidden} above {HIGHEST_NUMBER} left out)" if hidden else ""
@@ -152,7 +152,7 @@ def draw_ratios(axes: Axes, ratios: Sequence[UnitRatio]) -> None:
             continue
         axes.errorbar(row.ratio, i, xerr=np.hypot(row.own_std, row.shared_std), color="k", lw=0.8, capsize=3)
         axes.errorbar(row.ratio, i, xerr=row.own_std, fmt=MARKERS[i % len(MARKERS)], color="k", lw=3, mfc="w")
-    axes.set_yticks(range(len(ratios)), [_plain(row.label) for row in ratios])
+    axes.set_yticks(range(len(ratios)), [label_of(row.label) for row in ratios])
     axes.set(title="Charge unit over e", xlabel="charge unit / e", ylim=(len(ratios) - 0.5, -0.5))
 
 
@@ -187,6 +187,17 @@ def unit_figure(unit: ChargeUnit, groups: Sequence[ChargeGroup], ratios: Sequenc
     return figure
 
 
-def _plain(text: str) -> str:
-    """Text that matplotlib does not read as mathematics, and that does not vanish from a legend."""
-    return text.replace("$", r"\$").lstrip("_") or "bench"
+def label_of(text: str) -> str:
+    """Give a text that matplotlib does not read as mathematics, and that does not vanish from a legend.
+
+    Parameters
+    ----------
+    text : str
+        From outside, such as a file name.
+
+    Returns
+    -------
+    label : str
+        For titles and legends.
+    """
+    return text.replace("$", r"\$").lstrip("_") or "-"
