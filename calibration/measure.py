@@ -286,17 +286,7 @@ def pool_scales(scales: Sequence[Scale]) -> Scale:
     """
     from scipy.stats import chi2
 
-    first = scales[0]
-    for other in scales[1:]:
-        if (other.width_px, other.height_px) != (first.width_px, first.height_px):
-            raise PatternError(
-                other.picture,
-                f"has {other.width_px} x {other.height_px} px, {first.picture} {first.width_px} x {first.height_px} px;"
-                f" pictures for one scale must be of one size",
-            )
-        if (other.pattern == "lines") != (first.pattern == "lines"):
-            text = f"shows {other.pattern}, {first.picture} {first.pattern}; measure them apart"
-            raise PatternError(other.picture, text)
+    _require_alike(scales)
     means, stds, warnings = {}, {}, list(dict.fromkeys(w for scale in scales for w in scale.warnings))
     for axis in "xy":
         value = np.array([getattr(s, f"metres_per_pixel_{axis}") for s in scales])
@@ -319,13 +309,28 @@ def pool_scales(scales: Sequence[Scale]) -> Scale:
     entries = tuple(PictureScale(s.picture, s.picture_sha256, s.date, s.metres_per_pixel_x, s.metres_per_pixel_x_std)
                     for s in scales)  # fmt: skip
     return replace(
-        first,
+        scales[0],
         metres_per_pixel_x=means["x"], metres_per_pixel_x_std=stds["x"],
         metres_per_pixel_y=means["y"], metres_per_pixel_y_std=stds["y"],
         residual_px=float(np.sqrt(np.mean([s.residual_px**2 for s in scales]))),
         distortion=_mean_distortion(scales), picture=", ".join(s.picture for s in scales),
         date=max(s.date for s in scales), warnings=tuple(dict.fromkeys(warnings)), pictures=entries,
     )  # fmt: skip
+
+
+def _require_alike(scales: Sequence[Scale]) -> None:
+    """Refuse pictures of different sizes, and ruled lines beside a lattice."""
+    first = scales[0]
+    for other in scales[1:]:
+        if (other.width_px, other.height_px) != (first.width_px, first.height_px):
+            raise PatternError(
+                other.picture,
+                f"has {other.width_px} x {other.height_px} px, {first.picture} {first.width_px} x {first.height_px} px;"
+                f" pictures for one scale must be of one size",
+            )
+        if (other.pattern == "lines") != (first.pattern == "lines"):
+            text = f"shows {other.pattern}, {first.picture} {first.pattern}; measure them apart"
+            raise PatternError(other.picture, text)
 
 
 def _mean_distortion(scales: Sequence[Scale]) -> Distortion | None:
