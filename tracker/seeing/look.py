@@ -31,6 +31,7 @@ _SPLIT_SHARE = 0.15  # least amplitude of the fainter against the brighter
 _SOFT = 1.3  # widths: a spot this wide along both axes is out of focus
 _MOST_EXCESS = 1.0  # light beside a spot over its own: more is a lamp or a scratch
 _HALF_LIGHT = 0.4  # of the amplitude: mean of a spot's light over its slopes, which tell the place
+_MOST_STD = 0.47  # widths, of a place: more is a signal to noise below 3 (sqrt(2) widths over it, in white noise)
 _STREAK = 1.21  # widths: way within the exposure equal to the full width at half maximum widens to this
 
 
@@ -96,7 +97,7 @@ def _table(spots: Spots, frame: Rows) -> Columns:
         "frame": frame, "amplitude": spots.amplitude.copy(), "x": spots.x.copy(), "y": spots.y.copy(),
         "x_var": spots.covariance[:, 1, 1].copy(), "y_var": spots.covariance[:, 2, 2].copy(),
         "excess": spots.excess.copy(), "sx": spots.sx.copy(), "sy": spots.sy.copy(),
-        "flags": np.zeros(len(frame), np.int64), "strain": spots.growth.copy(),
+        "flags": np.zeros(len(frame), np.int64), "strain": np.column_stack([spots.growth, spots.slant]),
     }  # fmt: skip
 
 
@@ -281,6 +282,7 @@ def _finish(eyes: Eyes, table: Columns, numbers: Rows) -> Columns:
         "brightness": 2 * np.pi * table["amplitude"] * table["sx"] * table["sy"],
         "strain": table["strain"] / np.sqrt(excess)[:, None],
     }  # fmt: skip
-    inside = (x > -0.5) & (y > -0.5) & (x < breadth - 0.5) & (y < height - 0.5)
+    kept = (x > -0.5) & (y > -0.5) & (x < breadth - 0.5) & (y < height - 0.5)
+    kept &= np.minimum(out["x_std"], out["y_std"]) < _MOST_STD * out["width"]
     order = np.argsort(out["frame"], kind="stable")
-    return {name: out[name][order[inside[order]]] for name in COLUMNS}
+    return {name: out[name][order[kept[order]]] for name in COLUMNS}
