@@ -205,7 +205,7 @@ def _gather(rows: list[Columns], box: Rectangle, lamp: Rectangle | None) -> tupl
     }
     joined["x"] = joined["x"] + box[0]
     joined["y"] = joined["y"] + box[1]
-    strain = joined.pop("strain").reshape(-1, 2)
+    strain = joined.pop("strain").reshape(-1, 3)
     sightings = Sightings(**joined)
     if lamp is None:
         return sightings, strain

@@ -16,6 +16,7 @@ from tracker.errors import RecordingError
 Picture = NDArray[Any]  # (height, width) of uint8 or uint16
 
 PICTURE_SUFFIXES = frozenset({".png", ".tif", ".tiff", ".jpg", ".jpeg"})
+_LOSSY_SUFFIXES = frozenset({".jpg", ".jpeg"})
 _UNTIMED_FORMATS = frozenset({"h264", "hevc", "mjpeg", "m4v", "rawvideo", "obu", "vc1", "cavsvideo"})
 _INTRA_CODECS = frozenset(  # every frame a key frame
     {
@@ -23,6 +24,9 @@ _INTRA_CODECS = frozenset(  # every frame a key frame
         "ljpeg", "tiff", "bmp",
     }
 )  # fmt: skip
+_LOSSLESS_CODECS = frozenset(
+    {"rawvideo", "huffyuv", "ffvhuff", "ffv1", "png", "utvideo", "v210", "ljpeg", "tiff", "bmp"}
+)
 _KINDS = {1: "I", 2: "P", 3: "B", 4: "P", 5: "I", 6: "P", 7: "I"}  # AVPictureType
 _NO_TIMES = "gives no times of frames: state camera.frame_rate in the bench file"
 _THREADS = 2  # decoder threads for codecs with motion compensation; intra codecs gain nothing
@@ -36,7 +40,7 @@ class RawFrame:
     time: float | None  # s, None where the file gives none
     picture: Picture
     corrupt: bool = False  # the decoder concealed damage in it
-    kind: str = ""  # I: coded by itself, P: predicted from pictures before, B: from both sides; or unknown
+    kind: str = ""  # I: coded by itself, P: predicted from pictures before, B: from both sides; none: no loss
 
 
 @dataclass(frozen=True, slots=True)
@@ -168,7 +172,7 @@ class VideoSource:
             )
         self._rate = frame_rate if untimed else None
         name = stream.codec_context.name
-        self._intra = name in _INTRA_CODECS
+        self._intra, self._lossless = name in _INTRA_CODECS, name in _LOSSLESS_CODECS
         if not self._intra:
             stream.thread_type = "AUTO"
             stream.codec_context.thread_count = _THREADS
@@ -238,8 +242,8 @@ class VideoSource:
             self.warnings.append(f"{strange} pictures of another size were left out")
 
     def _kind(self, frame: Any) -> str:
-        """Kind of a picture of a codec with motion compensation, "" of others; FFmpeg's numbers."""
-        return "" if self._intra else _KINDS.get(int(frame.pict_type), "")
+        """Kind of a picture of a codec that loses something, empty for others; by FFmpeg's numbers."""
+        return "" if self._lossless else _KINDS.get(int(frame.pict_type), "")
 
     def _chain(self) -> Iterator[Any]:
         first, self._first = self._first, None
@@ -333,7 +337,8 @@ class StillSource:
                 continue
             if picture.shape != (self.form.height, self.form.width):
                 raise RecordingError(str(file), "has another size than the pictures before it")
-            yield RawFrame(index / self._rate, picture)
+            kind = "I" if file.suffix.lower() in _LOSSY_SUFFIXES else ""
+            yield RawFrame(index / self._rate, picture, kind=kind)
 
     def sample(self, times: NDArray[np.float64]) -> Iterator[RawFrame]:
         """Pictures at the given times."""
