@@ -7,7 +7,7 @@ impulse is integrated here on its own, piece by piece, for a voltage that is con
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -108,3 +108,15 @@ def _path(rng: np.random.Generator, spread: float, plan: Plan, count: int) -> ND
     between = np.sqrt(spread * (1 / plan.frame_rate - plan.exposure)) * rng.standard_normal(count)
     start = np.concatenate([[0.0], np.cumsum(within + between)[:-1]])
     return start + within / 2 + np.sqrt(spread * plan.exposure / 12) * rng.standard_normal(count)
+
+
+def stepped(
+    rng: np.random.Generator, radius: float = 6e-7, before: float = 5, after: float = 6
+) -> Increments:
+    """Steps of a droplet that changes its charge at 12 s, where the field is off, numbered by charge part."""
+    track = record(rng, radius, before)
+    per_volt = float(droplet_mobility(radius, CONDITIONS)) * ELEMENTARY_CHARGE / CONDITIONS.plate_gap
+    at = np.interp(12.0, track.times, track.impulse)
+    change = np.where(track.times > 12.0, (after - before) * per_volt * (track.impulse - at), 0.0)
+    track = replace(track, down=track.down + change)
+    return track.steps(part=(track.times[1:] > 12.0).astype(int))
