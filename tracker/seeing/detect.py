@@ -24,8 +24,12 @@ _RESTLESS_SAMPLES = 30  # fewer do not tell how restless one place is
 _RESTLESS_DEPTH = (
     1.4  # standard deviations: quantile 0.12 lies at 1.17, and 2 % of places may exceed this by chance
 )
-_TAIL = (3.5, 3.75, 4.0, 4.25, 4.5, 4.75, 5.0, 5.25, 5.5, 5.75, 6.0)  # classes of heights that tell the tail
-_MOST_RAISED = 1.6  # times the threshold for white noise: more would be droplets taken for noise
+_HEAVY = 1.1  # times the median deviation: a spread beyond it is one of flecks, which the median does not see
+_TAIL = 30  # highest minima that tell the tail
+_LEAST_TAIL = 8  # fewer tell nothing
+_MOST_RAISED = 4.0  # times the threshold for white noise: more is something else than noise
+_PULSE = 1.3  # times the usual spread of a picture: some sample beyond it, and pictures are judged one by one
+_SPARSE = 3  # every so manieth pixel and row tells a picture's spread
 
 
 @dataclass(frozen=True, slots=True)
@@ -38,6 +42,8 @@ class Detector:
     inverse_noise: F32  # 1 / standard deviation of the filtered residual, binned
     bar: F32  # filtered picture at the threshold, binned; infinite at the rim
     kernel: F32  # one-dimensional
+    threshold: float  # in standard deviations of the filtered residual
+    usual_spread: float  # of pictures, as `spread_below` gives it; 0 where all have the same
 
     def candidates(self, pictures: Pictures) -> Candidates:
         """Local maxima above the threshold.
@@ -55,19 +61,40 @@ class Detector:
             px of the recording, from a parabola through the maximum and its neighbours.
         score : ndarray of shape (N,)
             Signal to noise after the filter.
+
+        Notes
+        -----
+        Where pictures differ in noise, as key frames of some codecs do, each is measured by its own.
         """
         smooth = np.empty_like(self.level)
         flat, around = smooth.reshape(-1), _around(self.level.shape[1])
-        above, hoods = [], []
+        above, hoods, spread = [], [], np.ones(len(pictures))
         for picture in pictures:
             _smooth(picture, self.binning, self.kernel, out=smooth)
             above.append(np.flatnonzero(smooth > self.bar))
             hoods.append(flat[above[-1][:, None] + around])
+            if self.usual_spread:
+                spread[len(hoods) - 1] = max(self._spread(smooth) / self.usual_spread, 1)
         frame = np.repeat(np.arange(len(pictures)), [len(a) for a in above])
         place = np.concatenate(above)
         near = place[:, None] + around
         hood = (np.concatenate(hoods) - self.level.reshape(-1)[near]) * self.inverse_noise.reshape(-1)[near]
+        if self.usual_spread:
+            hood /= spread[frame, None]
+            high = hood[:, 4] > self.threshold
+            frame, place, hood = frame[high], place[high], hood[high]
         return _peaks(frame, place, hood, width=self.level.shape[1], binning=self.binning)
+
+    def _spread(self, smooth: F32) -> float:
+        """How restless a filtered picture is against the others."""
+        part = (slice(None, None, _SPARSE),) * 2
+        return float(spread_below(((smooth[part] - self.level[part]) * self.inverse_noise[part])[None])[0])
+
+
+def spread_below(stack: F32) -> NDArray[np.float64]:
+    """Standard deviation of each picture of a residual, from what lies below 0, where no bright droplet is."""
+    low = np.minimum(stack, 0)
+    return np.asarray(np.sqrt(2 * np.einsum("nij,nij->n", low, low) / low[0].size), np.float64)
 
 
 def find_peaks(stack: F32, threshold: float) -> Candidates:
@@ -151,7 +178,7 @@ def build_detector(
     -----
     Noise is the spread of the *filtered* residual in tiles: compression removes fine noise but leaves the
     part that the filter passes. The threshold for white noise follows from the rate of maxima of a Gaussian
-    random field; the heights of the recording's own low maxima raise it where noise is not Gaussian.
+    random field; the recording's own minima, which no bright droplet makes, raise it where noise is not Gaussian.
     """
     binning = 1
     while width / (2 * binning) >= _COARSE_WIDTH and 2 * binning <= _MAX_BINNING:
@@ -161,16 +188,30 @@ def build_detector(
     smooth_level = _smooth(level, binning, kernel)
     stack = np.stack([_smooth(p, binning, kernel) for p in samples])
     stack -= smooth_level
+    offset = np.float32(
+        np.median(stack[:, ::_SPARSE, ::_SPARSE])
+    )  # means of whole grey values are rounded up
+    smooth_level += offset
+    stack -= offset
     inverse = np.float32(1) / local_noise(stack, tile=max(8, _TILE // binning))
     stack *= inverse
-    area = float(smooth_level.size)
-    theory = threshold_for(false_alarms, area, sigma)
+    usual = _usual_spread(stack)
+    if usual:
+        stack /= np.maximum(spread_below(stack) / usual, 1).astype(np.float32)[:, None, None]
+    theory = threshold_for(false_alarms, float(smooth_level.size), sigma)
     found = min(_threshold_of_tail(stack, false_alarms), _MOST_RAISED * theory)
     threshold = max(theory, found)
     bar = smooth_level + np.float32(threshold) / inverse
     bar[[0, -1]] = bar[:, [0, -1]] = np.inf
-    detector = Detector(binning, sigma, smooth_level, inverse, bar, kernel)
+    detector = Detector(binning, sigma, smooth_level, inverse, bar, kernel, threshold, usual)
     return detector, {"threshold": threshold, "threshold_white_noise": theory, "threshold_of_tail": found}
+
+
+def _usual_spread(stack: F32) -> float:
+    """Median spread of the samples; 0 where all have nearly the same."""
+    spread = spread_below(stack[:, ::_SPARSE, ::_SPARSE])
+    usual = float(np.median(spread))
+    return usual if spread.max() > _PULSE * usual else 0.0
 
 
 def _of_tiles(values: F32, tile: int) -> F32:
@@ -187,11 +228,17 @@ def _of_tiles(values: F32, tile: int) -> F32:
 
 
 def noise_map(stack: F32, *, tile: int) -> F32:
-    """Standard deviation of the residual from its median absolute value in tiles, smooth between them."""
+    """Standard deviation of the residual from its median absolute value in tiles, smooth between them.
+
+    Where a codec leaves most of a tile as it was and puts flecks into the rest, the mean square of what lies below
+    the background counts.
+    """
     n, height, width = stack.shape
-    coarse: NDArray[Any] = _of_tiles(np.abs(stack[:: max(1, n // 12), ::2, ::2]), max(1, tile // 2))
-    floor = max(float(np.median(coarse)) * 0.3, 1e-3)
-    coarse = 1.4826 * np.maximum(coarse, floor)
+    coarse: NDArray[Any] = 1.4826 * _of_tiles(np.abs(stack[:: max(1, n // 12), ::2, ::2]), max(1, tile // 2))
+    low = np.minimum(stack[:: max(1, n // 24)], 0)
+    below = np.sqrt(2 * cv2.resize((low * low).mean(0), coarse.shape[::-1], interpolation=cv2.INTER_AREA))
+    coarse = np.where(below > _HEAVY * coarse, below, coarse)
+    coarse = np.maximum(coarse, max(float(np.median(coarse)) * 0.3, 1e-3))
     return np.asarray(cv2.resize(coarse, (width, height), interpolation=cv2.INTER_LINEAR), np.float32)
 
 
@@ -230,29 +277,17 @@ def threshold_for(rate: float, area: float, sigma: float) -> float:
 
 
 def _threshold_of_tail(stack: F32, rate: float) -> float:
-    """Threshold at which the recording's own false maxima reach the rate; 0 where there are none to count.
+    """Threshold at which the recording's own minima have the rate; 0 where there are none to count.
 
-    Heights of maxima between 3.5 and 6 standard deviations follow h exp(-h^2 / 2 c^2) with c = 1 for Gaussian
-    noise; c is fitted, with the even floor that real droplets make, as counted between 7 and 10, taken off.
+    The highest heights above some base fall off exponentially, whatever the noise is (J. Pickands, Annals of
+    Statistics 3 (1975) 119, with shape 0); beyond the last one this goes on.
     """
-    _, _, _, height = find_peaks(stack, _TAIL[0])
-    floor = np.count_nonzero((height >= 7) & (height < 10)) / 3
-    edges = np.array(_TAIL)
-    count = np.histogram(height, edges)[0] - floor * np.diff(edges)
-    middle = 0.5 * (edges[1:] + edges[:-1])
-    used = count >= max(4.0, 0.5 * floor)
-    used &= np.cumprod(used).astype(bool)  # from the lowest class up to the first that is too thin
-    if used.sum() < 2:
+    height = np.sort(find_peaks(-stack, 2.5)[3])[::-1][: _TAIL + 1]
+    if len(height) <= _LEAST_TAIL:
         return 0.0
-    weight = np.sqrt(count[used])
-    design = np.column_stack([np.ones(used.sum()), -0.5 * middle[used] ** 2]) * weight[:, None]
-    value = np.log(count[used] / middle[used]) * weight
-    (_, inverse_square), *_ = np.linalg.lstsq(design, value, rcond=None)
-    c2 = 1 / max(float(inverse_square), 0.25)
-    above = float(count[used].sum()) / len(stack)
-    low, top = edges[0], edges[1:][used][-1]
-    share = np.exp(-0.5 * low**2 / c2) - np.exp(-0.5 * top**2 / c2)
-    return math.sqrt(max(-2 * c2 * math.log(rate / above * share), low**2)) if above > rate else 0.0
+    base, count = float(height[-1]), len(height) - 1
+    excess = float(height[:-1].mean()) - base
+    return base + excess * max(math.log(count / (rate * len(stack))), 0.0)
 
 
 def cut_windows(

@@ -19,7 +19,7 @@ from tracker.seeing.streak import Streaks, fit_streaks
 Rows = NDArray[np.int64]
 Columns = dict[str, NDArray[Any]]
 
-COLUMNS = ("frame", "x", "y", "x_std", "y_std", "brightness", "width", "flags", "strain")
+COLUMNS = ("frame", "x", "y", "x_std", "y_std", "brightness", "width", "flags", "strain", "score")
 _NEIGHBOUR = 5.6  # widths: nearer spots are fitted jointly
 _ODD = 5.0  # standard deviations of a width or slant that one sharp spot would not show
 _MOST_SPREAD = 2.5  # standard deviations; more is no noise of a codec but many fast or soft droplets
@@ -31,7 +31,9 @@ _SPLIT_SHARE = 0.15  # least amplitude of the fainter against the brighter
 _SOFT = 1.3  # widths: a spot this wide along both axes is out of focus
 _MOST_EXCESS = 1.0  # light beside a spot over its own: more is a lamp or a scratch
 _HALF_LIGHT = 0.4  # of the amplitude: mean of a spot's light over its slopes, which tell the place
-_MOST_STD = 0.47  # widths, of a place: more is a signal to noise below 3 (sqrt(2) widths over it, in white noise)
+_MOST_STD = (
+    0.47  # widths, of a place: more is a signal to noise below 3 (sqrt(2) widths over it, in white noise)
+)
 _STREAK = 1.21  # widths: way within the exposure equal to the full width at half maximum widens to this
 
 
@@ -50,11 +52,12 @@ def look(eyes: Eyes, pictures: list[NDArray[Any]], numbers: Rows) -> Columns:
     Returns
     -------
     columns : dict
-        Columns of `Sightings`, ordered by frame, and `strain` as in `hold_copies`; empty for no pictures.
+        Columns of `Sightings`, ordered by frame, `strain` as in `hold_copies`, and `score`, the signal to noise of the
+        matched filter; empty for no pictures.
     """
     if not pictures:
         return {}
-    frame, x, y, _ = eyes.detector.candidates(pictures)
+    frame, x, y, score = eyes.detector.candidates(pictures)
     windows = _cut(eyes, pictures, frame, x, y, eyes.reach)
     width = np.full(len(x), eyes.width)
     spots = fit_spots(windows, (x, y), camera=eyes.camera, width=(width, width), rounds=2)
@@ -62,7 +65,7 @@ def look(eyes: Eyes, pictures: list[NDArray[Any]], numbers: Rows) -> Columns:
     sound &= spots.amplitude > 3 * np.sqrt(np.maximum(spots.covariance[:, 0, 0], 0))
     rows = np.flatnonzero(sound)
     frame, spots, windows = frame[rows], spots.take(rows), windows.take(rows)
-    table = _table(spots, frame)
+    table = _table(spots, frame, score[rows])
     table["flags"] |= np.where(windows.bad.any((1, 2)), int(Flag.SATURATED), 0)
     crowded = near_pairs(frame, spots.x, spots.y, reach=_NEIGHBOUR * eyes.width)
     table = _fit_neighbours(eyes, pictures, table, crowded)
@@ -91,13 +94,14 @@ def _cut(
     )
 
 
-def _table(spots: Spots, frame: Rows) -> Columns:
+def _table(spots: Spots, frame: Rows, score: NDArray[np.float64]) -> Columns:
     """Working columns: the fit's values, frames counted within the batch."""
     return {
         "frame": frame, "amplitude": spots.amplitude.copy(), "x": spots.x.copy(), "y": spots.y.copy(),
         "x_var": spots.covariance[:, 1, 1].copy(), "y_var": spots.covariance[:, 2, 2].copy(),
         "excess": spots.excess.copy(), "sx": spots.sx.copy(), "sy": spots.sy.copy(),
         "flags": np.zeros(len(frame), np.int64), "strain": np.column_stack([spots.growth, spots.slant]),
+        "score": score.copy(),
     }  # fmt: skip
 
 
@@ -280,7 +284,7 @@ def _finish(eyes: Eyes, table: Columns, numbers: Rows) -> Columns:
         "y_std": np.sqrt(np.maximum(table["y_var"] * excess, 1e-12)),
         "width": np.sqrt(table["sx"] * table["sy"]),
         "brightness": 2 * np.pi * table["amplitude"] * table["sx"] * table["sy"],
-        "strain": table["strain"] / np.sqrt(excess)[:, None],
+        "strain": table["strain"] / np.sqrt(excess)[:, None], "score": table["score"],
     }  # fmt: skip
     kept = (x > -0.5) & (y > -0.5) & (x < breadth - 0.5) & (y < height - 0.5)
     kept &= np.minimum(out["x_std"], out["y_std"]) < _MOST_STD * out["width"]

@@ -20,6 +20,7 @@ from tracker.seeing.light import change_at, common_jumps, compare, even, shift_b
 from tracker.seeing.link import first_pieces
 from tracker.seeing.look import COLUMNS, Columns, look
 from tracker.seeing.sampling import Frames, Source, gather_samples
+from tracker.seeing.strays import Alarms, count_alarms
 
 Progress = Callable[[int, int], None]  # frames done, frames in all (0: unknown)
 Rectangle = tuple[int, int, int, int]
@@ -74,17 +75,20 @@ def see(
             watch.learned(eyes, source)
             rows += _follow(eyes, source, check=len(watch.eyes) < _MOST_LIGHTS)
         recording = reader.recording()
-    sightings, strain = _gather(rows, watch.box, lamp)
+    sightings, strain, score = _gather(rows, watch.box, lamp)
     pieces = first_pieces(sightings, recording)
     sightings, copies = hold_copies(sightings, strain=strain, piece=pieces, kinds=reader.kinds)
     jumps = common_jumps(sightings, pieces, recording.frame_times)
     fixed = on_fixed_places(sightings, pieces, recording)
     warnings = [*watch.warnings, *(f"all droplets jump at frame {j}: tracks are cut there" for j in jumps)]
     if fixed.any():
-        sightings = sightings.take(~fixed)
         warnings.append(f"{int(fixed.sum())} sightings of bright places that never move were left out")
+        sightings, score, pieces = sightings.take(~fixed), score[~fixed], pieces[~fixed]
+    accepted, room = settings.false_alarms * watch.looked, float(watch.looked * watch.box[2] * watch.box[3])
+    alarms = count_alarms(sightings, score, pieces, accepted=accepted, room=room)
+    sightings = sightings.take(alarms.keep)
     grey = np.concatenate(watch.grey) if lamp is not None else None
-    report = watch.report(len(sightings) / len(recording.frame_times), copies)
+    report = watch.report(len(sightings) / len(recording.frame_times), copies, alarms)
     return Seen(
         recording, sightings, report, grey, np.array(sorted({*watch.cuts, *jumps}), np.int64), tuple(warnings)
     )
@@ -102,6 +106,7 @@ class _Watch:
     eyes: list[Eyes] = field(default_factory=list)
     cuts: list[int] = field(default_factory=list)
     warnings: list[str] = field(default_factory=list)
+    looked: int = 0  # frames that were looked at
 
     @property
     def box(self) -> Rectangle:
@@ -129,6 +134,7 @@ class _Watch:
             if self.progress is not None:
                 self.progress(batch.first_index + len(batch.times), self.reader.form.frames)
             rows = np.flatnonzero(used)
+            self.looked += len(rows)
             if len(rows):
                 cut = [batch.pictures[i][y : y + height, x : x + width] for i in rows]
                 yield Frames(batch.first_index + rows, batch.times[rows], cut)
@@ -146,7 +152,7 @@ class _Watch:
                 self.warnings.append(f"the camera was moved by {moved} at {time:.2f} s: tracks are cut there")
         self.eyes.append(eyes)
 
-    def report(self, per_frame: float, copies: dict[str, Any]) -> dict[str, Any]:
+    def report(self, per_frame: float, copies: dict[str, Any], alarms: Alarms) -> dict[str, Any]:
         """What was found, for provenance; of the first illumination."""
         first = self.eyes[0].report if self.eyes else {}
         return {
@@ -154,6 +160,10 @@ class _Watch:
             "illuminations": len(self.eyes),
             "sightings_per_frame": per_frame,
             "picture_kinds": copies,
+            "false_alarms_asked": self.settings.false_alarms,
+            "false_alarms_found": None if alarms.false is None else alarms.false / max(self.looked, 1),
+            "threshold_of_strays": alarms.threshold,
+            "strays_left_out": int(np.count_nonzero(~alarms.keep)),
         }
 
 
@@ -197,17 +207,19 @@ def _within(sightings: Sightings, lamp: Rectangle) -> NDArray[np.bool_]:
     return np.asarray(across & (np.abs(sightings.y - (y + 0.5 * (height - 1))) < 0.5 * height + 3))
 
 
-def _gather(rows: list[Columns], box: Rectangle, lamp: Rectangle | None) -> tuple[Sightings, FloatArray]:
-    """All columns joined, in px of the whole picture and without the lamp; and the spots' strain."""
+def _gather(
+    rows: list[Columns], box: Rectangle, lamp: Rectangle | None
+) -> tuple[Sightings, FloatArray, FloatArray]:
+    """All columns joined, in px of the whole picture and without the lamp; and the spots' strain and score."""
     rows = [r for r in rows if r]
     joined: dict[str, Any] = {
         n: np.concatenate([r[n] for r in rows]) if rows else np.empty(0) for n in COLUMNS
     }
     joined["x"] = joined["x"] + box[0]
     joined["y"] = joined["y"] + box[1]
-    strain = joined.pop("strain").reshape(-1, 3)
+    strain, score = joined.pop("strain").reshape(-1, 3), joined.pop("score")
     sightings = Sightings(**joined)
     if lamp is None:
-        return sightings, strain
+        return sightings, strain, score
     outside = ~_within(sightings, lamp)
-    return sightings.take(outside), strain[outside]
+    return sightings.take(outside), strain[outside], score[outside]
