@@ -19,7 +19,7 @@ from tracker.page.errors import RefusedError
 from tracker.page.results import Opened, field_segments
 from tracker.records import FloatArray
 from tracker.showing.plots import track_path
-from tracker.showing.terminal import pair
+from tracker.showing.terminal import pair, probability
 
 MOST_NUMBERS = 41  # bars of the plot
 
@@ -48,14 +48,15 @@ def droplet_detail(opened: Opened, droplet: int) -> dict[str, Any]:
     _row(opened, droplet)
     path = track_path(opened.result, droplet)
     fits = _lines(opened, droplet, path)
-    changes = opened.result.changes[opened.result.changes["droplet"] == droplet]
+    table = opened.result.changes[opened.result.changes["droplet"] == droplet]
+    changes = [{"kind": str(kind), "time": float(time) if np.isfinite(time) else None}
+               for kind, time in zip(table["kind"], table["time_s"].to_numpy(float), strict=True)]  # fmt: skip
     return {
         "droplet": droplet, "time": path["time"].tolist(), "height": np.round(path["height"] * 1e6, 3).tolist(),
         "used": path["used"].astype(int).tolist(), "fits": fits,
         "segments": field_segments(opened.recording),
-        "changes": [{"kind": str(kind), "time": float(time) if np.isfinite(time) else None}
-                    for kind, time in zip(changes["kind"], changes["time_s"].to_numpy(float), strict=True)],
-        "text": _motion_text(path, fits),
+        "changes": changes,
+        "text": " ".join(filter(None, (_motion_text(path, fits), _changes_text(changes)))),
     }  # fmt: skip
 
 
@@ -173,6 +174,16 @@ def _motion_text(path: dict[str, Any], fits: list[dict[str, float]]) -> str:
     return " ".join(parts)
 
 
+def _changes_text(changes: list[dict[str, Any]]) -> str:
+    """Say what the dashed lines stand for."""
+    kinds: dict[str, list[str]] = {}
+    for change in changes:
+        if change["time"] is not None:
+            kinds.setdefault(change["kind"].replace("_", " "), []).append(f"{change['time']:.1f}")
+    told = "; ".join(f"{kind} at {', '.join(times)} s" for kind, times in kinds.items())
+    return f"Dashed lines: {told}." if told else ""
+
+
 def _volts(voltage: float) -> str:
     """A voltage with its sign, 0 without one."""
     return f"{voltage:+.0f} V".replace("-", "\u2212") if voltage else "0 V"
@@ -197,5 +208,5 @@ def _number_text(numbers: dict[str, Any] | None) -> str:
     number = f"{numbers['n'][best]:+d}".replace("-", "\u2212")
     return (
         f"Measured {charge} e, own uncertainty (dot and bar). Most probable number {number}, "
-        f"probability {numbers['p'][best]:.3f} with all that is shared."
+        f"probability {probability(numbers['p'][best])} with all that is shared."
     )

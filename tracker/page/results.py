@@ -142,7 +142,8 @@ def shown(opened: Opened) -> dict[str, Any]:
         **values, "id": opened.key, "name": opened.name, "folder": str(opened.folder), "revision": opened.revision,
         "file": str(recording.get("file", "")), "recording_hash": opened.hash,
         "droplets": droplets(opened), "warnings": [str(text) for text in recording.get("warnings", [])],
-        "charge_unit": resolved or ELEMENTARY_CHARGE, "charge_unit_text": unit_words(unit),
+        "charge_unit": resolved or ELEMENTARY_CHARGE, "charge_unit_name": "unit" if resolved else "e",
+        "charge_unit_text": unit_words(unit),
         "decisions": history(opened.decisions), "can_undo": bool(_standing(opened.decisions)),
     }  # fmt: skip
 
@@ -175,14 +176,23 @@ def droplets(opened: Opened) -> list[dict[str, Any]]:
     """Give the rows of the droplet table; empty cells are None."""
     table = opened.result.droplets
     rows = []
-    said = _said(opened)
+    said, balances = _said(opened), _balances(opened.recording)
     for row in table.to_dict("records"):
         plain = {name: _plain(value) for name, value in row.items()}
         plain["reasons"] = str(plain["reasons"] or "").split()
         plain["by_hand"] = "decided" in plain["reasons"]
+        plain |= balances.get(plain["droplet"], {})
         plain["decision"] = said.get(plain["droplet"], "") if plain["by_hand"] else ""
         rows.append(plain)
     return rows
+
+
+def _balances(recording: dict[str, Any]) -> dict[int, dict[str, float]]:
+    """Balance voltage of each droplet that was seen at rest with the field on, from all its segments."""
+    told = (recording.get("details") or {}).get("balances") or ()
+    return {
+        int(b["droplet"]): {"balance_v": b["voltage_v"], "balance_std_v": b["voltage_std_v"]} for b in told
+    }
 
 
 def _said(opened: Opened) -> dict[int, str]:

@@ -49,7 +49,7 @@ class Picture:
 
 @dataclass(frozen=True, slots=True)
 class Grid:
-    """A table of texts; a cell that reads as a number is set to the right."""
+    """A table of texts; a column whose cells all read as numbers is set to the right."""
 
     title: str
     heads: tuple[str, ...]
@@ -109,7 +109,8 @@ def _grid(grid: Grid) -> str:
     if not grid.rows:
         return f"<p>{escape(grid.title)}: none.</p>\n"
     heads = "".join(f'<th scope="col">{escape(head)}</th>' for head in grid.heads)
-    rows = "".join(f"<tr>{''.join(map(_cell, row))}</tr>\n" for row in grid.rows)
+    kinds = [_kind(column) for column in zip(*grid.rows, strict=True)]
+    rows = "".join(f"<tr>{''.join(map(_cell, row, kinds))}</tr>\n" for row in grid.rows)
     name = escape(grid.title)
     return (
         f'<p class="title">{name}</p>\n<div class="wide"><table aria-label="{name}">\n<thead><tr>{heads}</tr></thead>\n'
@@ -117,9 +118,15 @@ def _grid(grid: Grid) -> str:
     )
 
 
-def _cell(text: str) -> str:
-    first = text.strip().lstrip("+-")[:1]
-    kind = "n" if first.isdigit() and len(text) < 24 else "l" if len(text) > 40 else "t"
+def _kind(column: Sequence[str]) -> str:
+    """Class of a column's cells: numbers, long texts, others."""
+    filled = [text.strip().lstrip("+-> ") for text in column if text.strip()]
+    if filled and all(text[0].isdigit() and len(text) < 24 for text in filled):
+        return "n"
+    return "l" if any(len(text) > 40 for text in column) else "t"
+
+
+def _cell(text: str, kind: str) -> str:
     return f'<td class="{kind}">{escape(text)}</td>'
 
 

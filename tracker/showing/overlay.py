@@ -245,11 +245,11 @@ def _draw_legend(drawn: NDArray[Any], caption: str) -> None:
     import cv2
 
     base, x = drawn.shape[0] - 6, 6
+    end = x + cv2.getTextSize(caption, cv2.FONT_HERSHEY_SIMPLEX, _TEXT, 1)[0][0] + 24
+    shown = tuple(COLOURS) if end + 3 * 64 <= drawn.shape[1] else ()
+    strip = drawn[base - 15 :, : end + 64 * len(shown) - 12]
+    strip //= 4  # a droplet below keeps its mark, dimmed, and no legend's cross lies on its ring unnoticed
     _write(drawn, caption, (x, base), _LEGEND)
-    x += cv2.getTextSize(caption, cv2.FONT_HERSHEY_SIMPLEX, _TEXT, 1)[0][0] + 24
-    if x + 3 * 64 > drawn.shape[1]:
-        return
-    for verdict in COLOURS:
+    for x, verdict in zip(range(end, end + 3 * 64, 64), shown, strict=False):
         _draw_shape(drawn, verdict, (x << _SHIFT, (base - 4) << _SHIFT), 5 << _SHIFT, _LEGEND, 1)
         _write(drawn, verdict, (x + 10, base), _LEGEND)
-        x += 64

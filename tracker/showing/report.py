@@ -15,7 +15,7 @@ from tracker.showing.html import Grid, Picture, Section, render
 from tracker.showing.plots import new_figure, plot_recording
 from tracker.showing.terminal import count, droplet_cells, length, missing
 from tracker.showing.units import MARKERS, label_of
-from tracker.showing.unitwords import charge_unit_lines
+from tracker.showing.unitwords import charge_unit_lines, sentence
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -279,7 +279,8 @@ def droplet_grid(droplets: pd.DataFrame) -> Grid:
     heads = ("droplet", "verdict", "frames", "fall speed / (um/s)", "radius / um", "charge / 1e-19 C", "own", "shared",
              "charge / e", "number", "probability")  # fmt: skip
     rows = [droplet_cells(row) for row in droplets.itertuples(index=False)]
-    return Grid("Droplets; in brackets: standard uncertainty of the last digits", heads, tuple(rows))
+    title = "Droplets; in brackets: standard uncertainty of the last digits; own and shared: of the charge, in 1e-19 C"
+    return Grid(title, heads, tuple(rows))
 
 
 def verdict_grid(droplets: pd.DataFrame) -> Grid:
@@ -374,8 +375,30 @@ def _budget_section(budget: Any) -> list[Section]:
          f"{r['sensitivity']:.3g}", f"{100 * r['share']:.1f} %")
         for r in rows
     )  # fmt: skip
-    heads = ("input", "value", "unit", "standard uncertainty", "sensitivity", "share")
+    heads = ("input", "value", "unit", "standard uncertainty", "relative change of a charge a unit", "share")
     told = (
-        f"Inputs that all droplets share; together {100 * budget['charge_factor_std']:.2f} % of every charge."
+        f"Inputs that all droplets share; together {100 * budget['charge_factor_std']:.2g} % of every charge."
     )
-    return [Section("Uncertainty budget of the charges", (told,), (Grid("Shared inputs", heads, made),))]
+    exact = map(sentence, taken_as_exact({str(r["input"]): float(r["std"]) for r in rows}))
+    return [
+        Section("Uncertainty budget of the charges", (told, *exact), (Grid("Shared inputs", heads, made),))
+    ]
+
+
+def taken_as_exact(stds: Mapping[str, float]) -> tuple[str, ...]:
+    """Say which inputs count as exact, since the bench file gives them no uncertainty.
+
+    Parameters
+    ----------
+    stds : mapping of str to float
+        Standard uncertainty of each input.
+
+    Returns
+    -------
+    told : tuple of str
+        One sentence; none if every input has an uncertainty.
+    """
+    exact = [name.replace("_", " ") for name, std in stds.items() if std == 0]
+    if not exact:
+        return ()
+    return (f"taken as exact, since the bench file states no uncertainty: {', '.join(exact)}.",)

@@ -117,7 +117,7 @@ def droplet_cells(row: Any) -> tuple[str, ...]:
         number(row.charge_own_std_c, 1e19, 3), number(row.charge_shared_std_c, 1e19, 3),
         number(row.charge_c, 1 / ELEMENTARY_CHARGE, 2),
         "" if missing(row.charge_number) else str(row.charge_number),
-        number(row.charge_number_probability, 1, 3),
+        probability(row.charge_number_probability),
     )  # fmt: skip
 
 
@@ -137,7 +137,9 @@ def show_budgets(made: Mapping[int | None, Budget]) -> None:
     for number_, budget in made.items():
         name = "bench, factor on all charges" if number_ is None else f"droplet {number_}, charge"
         unit = "" if budget.unit == "1" else f" {budget.unit}"
-        title = f"{name}: {budget.value:.5g}{unit}, standard uncertainty {budget.std:.2g} ({budget.method})"
+        title = (
+            f"{name}: {budget.value:.5g}{unit}, standard uncertainty {budget.std:.2g}{unit} ({budget.method})"
+        )
         shown = Table(box=box.SIMPLE, pad_edge=False, title=title, title_justify="left")
         for head in ("input", "value", "unit", "standard uncertainty", "sensitivity", "share / percent"):
             shown.add_column(head, justify="left" if head in ("input", "unit") else "right")
@@ -220,6 +222,22 @@ def number(value: Any, factor: float, decimals: int) -> str:
         Empty if the cell is.
     """
     return "" if missing(value) else f"{value * factor:.{decimals}f}"
+
+
+def probability(value: Any) -> str:
+    """Write a probability; one that three decimals would make a certainty is written as above the last of them.
+
+    Parameters
+    ----------
+    value : float or missing
+        From 0 to 1.
+
+    Returns
+    -------
+    text : str
+        Such as ``0.953`` and ``> 0.999``; empty if the cell is.
+    """
+    return "" if missing(value) else "> 0.999" if value > 0.9995 else f"{value:.3f}"
 
 
 def pair(value: Any, std: Any, factor: float) -> str:

@@ -23,6 +23,7 @@ from tracker.showing.report import (
     reason_counts,
     reason_grid,
     recording_page,
+    taken_as_exact,
     trend_figure,
 )
 from tracker.showing.terminal import count
@@ -358,16 +359,11 @@ def budget_grid(pool: Pool) -> Grid:
 
 
 def _unstated(pool: Pool) -> list[str]:
-    """Say which inputs count as exact, since the bench file gives them no uncertainty."""
+    """Say of each bench which inputs count as exact."""
     told = []
     for bench in pool.benches:
-        exact = [
-            row.input.replace("_", " ") for row in bench.budget.rows if row.std == 0 and row.input != "own"
-        ]
-        if exact:
-            told.append(
-                f"{bench.label}: taken as exact, since the bench file states no uncertainty: {', '.join(exact)}."
-            )
+        stds = {row.input: row.std for row in bench.budget.rows if row.input != "own"}
+        told += [f"{bench.label}: {text}" for text in taken_as_exact(stds)]
     return told
 
 

@@ -51,3 +51,13 @@ def test_numbers_of_near_droplets_do_not_cover_each_other():
     below = np.s_[64:80, 74:100]
     assert not alone[below].any()
     assert both[below].any()
+
+
+def test_mark_below_the_legend_is_dimmed():
+    """Where the legend lies a droplet's ring is a quarter as bright, so that no cross of the legend seems to be its."""
+    blank, ring = np.zeros((200, 512), np.uint8), [mark(4, 300, 192)]
+    plain, below = draw_overlay(blank, ring), draw_overlay(blank, ring, caption="1.000 s, -260 V")
+    blue = below.astype(int) - draw_overlay(blank, [], caption="1.000 s, -260 V")
+    strip = np.s_[180:, 285:292]  # the ring's left side, between two words of the legend
+    assert plain[strip].max() > 200
+    assert 0 < blue[strip].max() <= plain[strip].max() // 4 + 1  # whole numbers round down

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import pytest
 
-from tracker.showing.terminal import pair
+from tracker.showing.terminal import count, pair, probability
 from tracker.showing.unitwords import charge_unit_lines
 
 UNIT = {
@@ -39,3 +39,15 @@ def test_unit_that_is_not_resolved_gives_its_reason_only():
 def test_brackets_hold_two_digits(value, std, text):
     """Brackets hold the standard uncertainty in units of the last digit (GUM, 7.2.2), two digits of it."""
     assert pair(value, std, 1.0) == text
+
+
+def test_no_probability_is_written_as_a_certainty():
+    """What three decimals would round to 1 is told to lie above 0.999; an empty cell stays empty."""
+    assert [probability(p) for p in (0.9531, 0.9994, 0.99951, 1.0, float("nan"))] == [
+        "0.953", "0.999", "> 0.999", "> 0.999", "",
+    ]  # fmt: skip
+
+
+def test_one_thing_is_counted_in_the_singular():
+    """Only one takes no s."""
+    assert [count(n, "droplet") for n in (0, 1, 2)] == ["0 droplets", "1 droplet", "2 droplets"]

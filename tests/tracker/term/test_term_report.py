@@ -284,3 +284,12 @@ def test_table_without_rows_is_a_sentence():
     page = render("A page", [], [Section("Tables", (), grids)])
     assert page.count("<table") == page.count('Segments</p>\n<div class="wide"><table') == 1
     assert "Reasons: none." in page
+
+
+def test_numbers_stand_right_and_a_unit_that_reads_as_a_number_does_not():
+    """A column is set to the right if all its cells are numbers; the unit 1 of a share stays beside the other units."""
+    grid = Grid("Bench", ("value", "unit"), (("0.45", "1"), ("> 0.999", "Pa"), ("", "")))
+    page = render("A page", [], [Section("Tables", (), (grid,))])
+    assert re.findall(r'<td class="(\w)">([^<]*)</td>', page) == [
+        ("n", "0.45"), ("t", "1"), ("n", "&gt; 0.999"), ("t", "Pa"), ("n", ""), ("t", ""),
+    ]  # fmt: skip

@@ -119,7 +119,7 @@ export class Details {
     if (!result) return;
     if (this.tab === "motion") this.motion.draw(this.detail, result.times[this.frame] ?? null);
     if (this.tab === "number") drawNumbers(this.numberCanvas, this.numbers);
-    if (this.tab === "charges") this.charges.draw(result.droplets, result.charge_unit, chosen);
+    if (this.tab === "charges") this.charges.draw(result.droplets, result, chosen);
   }
 
   crops() {

@@ -156,6 +156,7 @@ export class InspectView {
         value("radius", d.radius_m === null ? "" : `${withDoubt(d.radius_m, d.radius_std_m, 1e6)} \u00b5m`),
         value("number", d.charge_number === null ? "" : `${signed(d.charge_number)}, P ${probability > 0.9995 ? "> 0.999" : fixed(probability, 3)}`),
         value("charge", d.charge_c === null ? "" : `${withDoubt(d.charge_c, d.charge_std_c, 1e19)} \u00d7 10\u207b\u00b9\u2079 C`, parts(d)),
+        value("balances at", d.balance_v === undefined ? "" : `${withDoubt(d.balance_v, d.balance_std_v)} V`),
         value("diffusion ratio", fixed(d.diffusion_ratio, 2))),
       d.reasons.length || d.decision ? el("ul", {}, ...d.reasons.map((code) => el("li", {}, this.reasons[code] || code)), d.decision ? el("li", {}, d.decision) : null) : "",
     );

@@ -172,7 +172,7 @@ export class ChargesPlot {
     });
   }
 
-  draw(droplets, unit, chosen) {
+  draw(droplets, { charge_unit: unit, charge_unit_name: name }, chosen) {
     const { context: c, width, height } = fitCanvas(this.canvas);
     if (width < 60) return;
     const shown = droplets.filter((d) => d.charge_c !== null).map((d) => ({ ...d, q: d.charge_c / unit, s: d.charge_own_std_c / unit }))
@@ -182,7 +182,7 @@ export class ChargesPlot {
     const y = span(shown.flatMap((d) => [Math.max(d.q - d.s, d.q - 3), Math.min(d.q + d.s, d.q + 3)]).concat([0]));
     const axes = new Axes(c, area, [-0.7, Math.max(1, shown.length) - 0.3], y);
     const comb = ticks(...y, Math.min(30, (area.bottom - area.top) / (1.5 * size))).filter(Number.isInteger);
-    axes.frame({ xLabel: "droplets, ordered by charge", yLabel: "charge / unit", xTicks: [], yTicks: comb, yText: (n) => (n > 0 ? `+${n}` : String(n)) });
+    axes.frame({ xLabel: "droplets, ordered by charge", yLabel: `charge / ${name}`, xTicks: [], yTicks: comb, yText: (n) => (n > 0 ? `+${n}` : String(n)) });
     axes.clip(() => shown.forEach((d, i) => {
       const x = axes.px(i), py = axes.py(d.q);
       this.places.push({ x, y: py, droplet: d.droplet });
