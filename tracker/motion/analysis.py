@@ -14,11 +14,10 @@ from tracker.motion.aircurrent import AirCurrent, find_air_current, find_drift
 from tracker.motion.charges import Number, SharedPart, charge_numbers
 from tracker.motion.decided import Decided
 from tracker.motion.droplet import Droplet, cleaned, is_one_droplet, with_histories, with_posteriors
-from tracker.motion.field import blur_of, exposure_of
 from tracker.motion.rows import SegmentRow
 from tracker.motion.shelf import Shelf, digest
 from tracker.motion.tablerows import segment_rows
-from tracker.motion.velocity import Orientation, Path, fit_orientation, paths
+from tracker.motion.velocity import Orientation, Path, View, fit_orientation, paths
 from tracker.records import Field, IntArray, Recording, Settings, Tracks
 
 LAMP_RIM = 4.0  # px about the lamp's rectangle that its light blurs into
@@ -35,9 +34,9 @@ class Given:
     cuts: Sequence[int] | IntArray = ()  # frames at which the camera was bumped
 
     @property
-    def exposure(self) -> float:
-        """Exposure of a frame in s."""
-        return exposure_of(self.bench, self.recording)
+    def view(self) -> View:
+        """How the camera saw the recording."""
+        return View.of(self.recording, self.field, self.bench)
 
     @property
     def digest(self) -> str:
@@ -124,19 +123,13 @@ def _analysis(decided: Decided, given: Given, orientation: Orientation, shelf: S
 
 def _orientation(tracks: Tracks, given: Given) -> Orientation:
     """Find gravity in the picture."""
-    return fit_orientation(
-        tracks, given.recording, field=given.field, scale=given.bench.scale, exposure=given.exposure,
-        down_deg=given.bench.down_deg,
-    )  # fmt: skip
+    return fit_orientation(tracks, given.view, down_deg=given.bench.down_deg)
 
 
 def _paths(decided: Decided, given: Given, orientation: Orientation) -> list[Path]:
     """Bring tracks into metres along gravity."""
-    return paths(
-        decided.tracks, given.recording, field=given.field, scale=given.bench.scale, exposure=given.exposure,
-        orientation=orientation, blur=blur_of(given.bench, given.recording), cuts=given.cuts,
-        left_out=decided.trimmed | _in_lamp(decided.tracks, given.bench),
-    )  # fmt: skip
+    left_out = decided.trimmed | _in_lamp(decided.tracks, given.bench)
+    return paths(decided.tracks, given.view, orientation, cuts=given.cuts, left_out=left_out)
 
 
 def _cleaned(path: Path, given: Given, shelf: Shelf) -> Droplet:

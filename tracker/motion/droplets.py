@@ -88,7 +88,7 @@ def evaluate_droplets(
         decided.tracks, readonly(decided.linked, np.int64), readonly(used, np.bool_), tuple(rows),
         tuple(row for part in made.segments for row in part),
         tuple(row for d, rest in zip(made.droplets, rests, strict=True) for row in change_rows(d, rest)),
-        _orientation_json(made.orientation), made.air.plain(), given.exposure,
+        _orientation_json(made.orientation), made.air.plain(), given.view.exposure,
         unit_json(charge_unit_of(made.droplets, rows, made.shared)), made.shared.budget(made.droplets, rows),
         details(made.droplets, rests) | _decisions_json(decided),
         (*made.orientation.warnings, *decided.warnings, *_exposure_warning(given, made.droplets),
@@ -137,7 +137,7 @@ def _orientation_json(orientation: Orientation) -> dict[str, Any]:
 
 def _exposure_warning(given: Given, droplets: Sequence[Droplet]) -> tuple[str, ...]:
     """Say where the exposure comes from if nobody stated it, or that the stated one is too short."""
-    bench, exposure = given.bench, given.exposure
+    bench, exposure = given.bench, given.view.exposure
     if bench.exposure is None:
         return (
             f"camera.exposure is not stated: half the frame interval, {exposure * 1e3:.3g} ms, is taken for the times"

@@ -123,7 +123,7 @@ def field_from_list(
 
 def field_of_steps(
     source: str, times: ArrayLike, volts: ArrayLike, *, span: tuple[float, float],
-    toggle_std: ArrayLike = 0.0, sign_known: bool = True, warnings: tuple[str, ...] = (),
+    toggle_std: ArrayLike = 0.0, sign_known: bool = True,
 ) -> Field:  # fmt: skip
     """Field that jumps between constant voltages.
 
@@ -141,8 +141,6 @@ def field_of_steps(
         Standard uncertainty of each time in s; the one of the first time is not used.
     sign_known : bool, optional
         False if all voltages may have the other sign.
-    warnings : tuple of str, optional
-        Passed on.
 
     Returns
     -------
@@ -162,7 +160,7 @@ def field_of_steps(
     )
     knots = np.concatenate(([span[0]], np.repeat(when[1:], 2)))
     knot_volts = np.concatenate(([value[0]], np.ravel(np.column_stack((value[:-1], value[1:])))))
-    return Field(source, segments, knots, knot_volts, std, sign_known=sign_known, warnings=warnings)
+    return Field(source, segments, knots, knot_volts, std, sign_known=sign_known)
 
 
 def voltage_at(field: Field, times: ArrayLike) -> FloatArray:

@@ -10,10 +10,10 @@ import numpy as np
 from physics.motion import MIN_INCREMENTS, Increments, field_impulse, free_fit, whitened
 from tracker.bench import Bench
 from tracker.errors import FieldError
-from tracker.motion.field import blur_of, exposure_of, field_of_steps, recording_span
+from tracker.motion.field import field_of_steps, recording_span
 from tracker.motion.fieldgain import drive_gains
 from tracker.motion.fieldlog import Log, field_from_log, on_recording_clock
-from tracker.motion.velocity import Orientation, Path, fit_orientation, paths
+from tracker.motion.velocity import Orientation, Path, View, fit_orientation, paths
 from tracker.records import Field, FloatArray, IntArray, Recording, Tracks
 
 COARSE = 0.1  # s, step of the first search
@@ -65,13 +65,11 @@ def fit_clock_offset(tracks: Tracks, log: Log, recording: Recording, bench: Benc
     log covers half the recording, then 10 ms, then by the likelihood itself, whose width is the uncertainty. The
     offset holds at the middle of the recording.
     """
-    exposure, blur = exposure_of(bench, recording), blur_of(bench, recording)
     span = recording_span(recording)
     idle = field_of_steps("log", [span[0]], [0.0], span=span)
     picture = Orientation(bench.down_deg or 0.0, 0.0, "picture")
-    found = paths(
-        tracks, recording, field=idle, scale=bench.scale, exposure=exposure, blur=blur, orientation=picture
-    )
+    view = View.of(recording, idle, bench)
+    found = paths(tracks, view, picture)
     usable = [path for path in found if len(path.steps) >= 2 * MIN_INCREMENTS]
     if not usable:
         raise FieldError(str(log.path), "no droplet is tracked long enough to set the log's clock; state it")
@@ -81,16 +79,11 @@ def fit_clock_offset(tracks: Tracks, log: Log, recording: Recording, bench: Benc
     gain = drive_gains(searched, log, offsets, recording).sum(axis=0)
     peaks = _peaks(offsets, gain)
     coarse = field_from_log(log, recording, offset=float(offsets[peaks[0]]))
-    turned = fit_orientation(
-        tracks, recording, field=coarse, scale=bench.scale, exposure=exposure, down_deg=bench.down_deg
-    )
+    turned = fit_orientation(tracks, View.of(recording, coarse, bench), down_deg=bench.down_deg)
     if turned.origin == "drive":
-        oriented = paths(
-            tracks, recording, field=idle, scale=bench.scale, exposure=exposure, blur=blur, orientation=turned
-        )
         chosen = {path.droplet for path in usable}
-        usable = [path for path in oriented if path.droplet in chosen]
-    fit = _Fit(usable, log, recording, exposure)
+        usable = [path for path in paths(tracks, view, turned) if path.droplet in chosen]
+    fit = _Fit(usable, log, recording, view.exposure)
     return fit.field([float(offsets[i]) for i in peaks])
 
 

@@ -10,10 +10,10 @@ import numpy as np
 from physics.motion import MIN_INCREMENTS, Increments, field_impulse, free_fit, whitened
 from tracker.bench import Bench
 from tracker.errors import FieldError
-from tracker.motion.field import blur_of, exposure_of, field_of_steps, recording_span
+from tracker.motion.field import field_of_steps, recording_span
 from tracker.motion.fieldclock import fit_clock_offset
 from tracker.motion.fieldstates import SHORT, side_diffusion, states_of_motion
-from tracker.motion.velocity import Orientation, Path, paths
+from tracker.motion.velocity import Orientation, Path, View, paths
 from tracker.records import Field, FloatArray, IntArray, Recording, Tracks
 
 __all__ = ["field_from_motion", "fit_clock_offset", "segments_of_motion", "sharpened"]
@@ -86,8 +86,9 @@ def field_from_motion(tracks: Tracks, recording: Recording, bench: Bench) -> Fie
         toggle_std[toggle] *= 2.0 if end - first < SHORT else 1.0
     field = field_of_steps(
         "motion", coarse, volts, span=recording_span(recording), toggle_std=toggle_std,
-        sign_known=False, warnings=_sign_warning(voltage.value, states),
+        sign_known=False,
     )  # fmt: skip
+    field = replace(field, warnings=_sign_warning(voltage.value, states))
     return _without_unclear(_refined(field, droplets, recording, np.arange(len(field.segments) - 1)), unclear)
 
 
@@ -147,10 +148,7 @@ def _droplets(tracks: Tracks, recording: Recording, bench: Bench) -> list[Path]:
     span = recording_span(recording)
     idle = field_of_steps("motion", [span[0]], [0.0], span=span)
     orientation = Orientation(bench.down_deg or 0.0, 0.0, "picture")
-    found = paths(
-        tracks, recording, field=idle, scale=bench.scale, exposure=exposure_of(bench, recording),
-        orientation=orientation, blur=blur_of(bench, recording),
-    )  # fmt: skip
+    found = paths(tracks, View.of(recording, idle, bench), orientation)
     return [path for path in found if len(path) > LEAST_DROPLET and len(path.steps) >= LEAST_DROPLET]
 
 
@@ -234,10 +232,10 @@ def _refined(field: Field, droplets: Sequence[Path], recording: Recording, which
     volts = [segment.voltage for segment in field.segments]
     new = field_of_steps(
         field.source, bounds[:-1], volts, span=recording_span(recording), toggle_std=np.concatenate(([0.0], stds)),
-        sign_known=field.sign_known, warnings=field.warnings,
+        sign_known=field.sign_known,
     )  # fmt: skip
     return replace(new, clock_offset=field.clock_offset, clock_offset_std=field.clock_offset_std,
-                   clock_rate=field.clock_rate)  # fmt: skip
+                   clock_rate=field.clock_rate, warnings=field.warnings)  # fmt: skip
 
 
 @dataclass(frozen=True, slots=True)

@@ -18,7 +18,8 @@ from physics.motion import (
     increments,
     robust_increments,
 )
-from tracker.motion.field import uncertain_spans
+from tracker.bench import Bench
+from tracker.motion.field import blur_of, exposure_of, uncertain_spans
 from tracker.motion.shelf import digest
 from tracker.records import Field, Flag, FloatArray, IntArray, Recording, Tracks, readonly
 
@@ -95,29 +96,41 @@ class Path:
 _COLUMNS = ("frames", "times", "down", "side", "down_std", "side_std", "impulse")
 
 
-def paths(  # noqa: PLR0913 - one recording has that many sides
-    tracks: Tracks, recording: Recording, *, field: Field, scale: Scale, exposure: float,
-    orientation: Orientation, blur: float | None = None, cuts: Sequence[int] | IntArray = (),
+@dataclass(frozen=True, slots=True)
+class View:
+    """How the camera saw a recording, and the field meanwhile."""
+
+    recording: Recording
+    field: Field  # voltage over time
+    scale: Scale  # of the recording's pixels
+    exposure: float  # of a frame in s
+    blur: float | None = None  # exposure in s for the blur of Brownian motion; None: `exposure`
+
+    @classmethod
+    def of(cls, recording: Recording, field: Field, bench: Bench) -> View:
+        """Take scale and exposure from the bench."""
+        return cls(recording, field, bench.scale, exposure_of(bench, recording), blur_of(bench, recording))
+
+
+def paths(
+    tracks: Tracks,
+    view: View,
+    orientation: Orientation,
+    *,
+    cuts: Sequence[int] | IntArray = (),
     left_out: np.ndarray | None = None,
-) -> list[Path]:  # fmt: skip
+) -> list[Path]:
     """Bring tracks into metres along and across gravity, without the sightings that cannot be used.
 
     Parameters
     ----------
     tracks : Tracks
         In px.
-    recording : Recording
-        Frame times and repeated frames; a repeated picture says nothing of its own time and is left out.
-    field : Field
-        Voltage over time; steps over a toggle whose time is uncertain are left out.
-    scale : Scale
-        Of the recording's pixels.
-    exposure : float
-        Of a frame in s.
+    view : View
+        A repeated picture says nothing of its own time and is left out, and so are steps over a toggle whose time
+        is uncertain.
     orientation : Orientation
         Gravity in the picture.
-    blur : float, optional
-        Exposure in s that the blur of Brownian motion is worked out with; `exposure` if not given.
     cuts : sequence of int, optional
         Frames at which the camera was bumped: the step that reaches such a frame is left out.
     left_out : ndarray of bool, shape (len(tracks),), optional
@@ -128,13 +141,14 @@ def paths(  # noqa: PLR0913 - one recording has that many sides
     paths : list of Path
         One for each droplet number, in that order; a path may be empty.
     """
-    sightings, times = tracks.sightings, recording.frame_times
-    x, y = to_metres(scale, sightings.x, sightings.y)
+    sightings, recording, times = tracks.sightings, view.recording, view.recording.frame_times
+    x, y = to_metres(view.scale, sightings.x, sightings.y)
     angle = np.deg2rad(orientation.down_deg)
     cos, sin = np.cos(angle), np.sin(angle)
-    x_std, y_std = sightings.x_std * scale.metres_per_pixel_x, sightings.y_std * scale.metres_per_pixel_y
-    impulse = field_impulse(field.knot_times, field.knot_volts, times, exposure)
-    spans = uncertain_spans(field, frame_interval=recording.frame_interval)
+    x_std = sightings.x_std * view.scale.metres_per_pixel_x
+    y_std = sightings.y_std * view.scale.metres_per_pixel_y
+    impulse = field_impulse(view.field.knot_times, view.field.knot_volts, times, view.exposure)
+    spans = uncertain_spans(view.field, frame_interval=recording.frame_interval)
     usable = (
         np.isfinite(x) & np.isfinite(y) & (x_std > 0) & (y_std > 0)
         & ((sightings.flags & int(LEFT_OUT)) == 0) & ~np.isin(sightings.frame, recording.repeated)
@@ -146,12 +160,12 @@ def paths(  # noqa: PLR0913 - one recording has that many sides
         span = tracks.rows(int(droplet))
         rows = np.arange(span.start, span.stop)[usable[span]]
         frames = sightings.frame[rows]
-        breaks = _breaks(times[frames], frames, exposure=exposure, spans=spans, cuts=cuts)
+        breaks = _breaks(times[frames], frames, exposure=view.exposure, spans=spans, cuts=cuts)
         found.append(Path(
             int(droplet), frames, times[frames],
             y[rows] * cos + x[rows] * sin, x[rows] * cos - y[rows] * sin,
             np.hypot(y_std[rows] * cos, x_std[rows] * sin), np.hypot(x_std[rows] * cos, y_std[rows] * sin),
-            impulse[frames], exposure, breaks, blur,
+            impulse[frames], view.exposure, breaks, view.blur,
         ))  # fmt: skip
     return found
 
@@ -207,24 +221,15 @@ def _speeds(path: Path) -> _Speeds | None:
     return _Speeds(found[0], drive, float(variance[0]), drive_var)
 
 
-def fit_orientation(
-    tracks: Tracks, recording: Recording, *, field: Field, scale: Scale, exposure: float,
-    down_deg: float | None = None,
-) -> Orientation:  # fmt: skip
+def fit_orientation(tracks: Tracks, view: View, *, down_deg: float | None = None) -> Orientation:
     """Find gravity's direction in the picture from the motion that is common to all droplets.
 
     Parameters
     ----------
     tracks : Tracks
         In px.
-    recording : Recording
-        Frame times.
-    field : Field
-        Voltage over time.
-    scale : Scale
-        Of the recording's pixels.
-    exposure : float
-        Of a frame in s.
+    view : View
+        Recording, voltage and scale.
     down_deg : float, optional
         Gravity as the bench file states it; it is then only checked.
 
@@ -241,7 +246,7 @@ def fit_orientation(
     """
     assumed, seen = Orientation(down_deg or 0.0, 0.0, "picture"), None
     for _ in range(2):  # the weights of the second look are those of the right axes
-        found = paths(tracks, recording, field=field, scale=scale, exposure=exposure, orientation=assumed)
+        found = paths(tracks, view, assumed)
         fits = [fit for fit in (_speeds(path) for path in found if len(path) > MIN_INCREMENTS) if fit]
         drive, significance = _axis([fit.drive for fit in fits], [fit.drive_var for fit in fits])
         fall = np.sum([fit.fall / fit.fall_var for fit in fits], axis=0) if fits else np.zeros(2)

@@ -10,7 +10,7 @@ from happening_droplets import Camera, Life, made_bench, made_tracks, record_pat
 from physics.motion import free_fit
 from tracker.motion.aircurrent import Drift, find_air_current, find_drift, robust_mean
 from tracker.motion.field import field_from_list
-from tracker.motion.velocity import Orientation, paths
+from tracker.motion.velocity import Orientation, View, paths
 
 CAMERA = Camera(seconds=30.0, steps=schedule(4e4, seconds=30.0))
 
@@ -21,8 +21,7 @@ def recorded(tmp_path, rng, count=12, **motion):
     tracks, recording = made_tracks(rng, lives, CAMERA, **motion)
     bench = made_bench(tmp_path, CAMERA)
     field = field_from_list(bench.field.entries, recording)
-    return paths(tracks, recording, field=field, scale=bench.scale, exposure=CAMERA.exposure,
-                 orientation=Orientation(0.0, 0.0, "bench"))  # fmt: skip
+    return paths(tracks, View(recording, field, bench.scale, CAMERA.exposure), Orientation(0.0, 0.0, "bench"))
 
 
 def drift_of(given):

@@ -17,7 +17,7 @@ from tracker.motion.charges import SharedPart
 from tracker.motion.droplet import cleaned, with_histories, with_posteriors
 from tracker.motion.droplets import evaluate_droplets
 from tracker.motion.field import field_from_list
-from tracker.motion.velocity import Orientation, paths
+from tracker.motion.velocity import Orientation, View, paths
 from tracker.records import Settings
 
 CAMERA = Camera(seconds=24.0, steps=schedule(4e4))
@@ -154,8 +154,9 @@ def test_the_shared_part_of_a_radius_is_how_far_a_wrong_scale_moves_it(tmp_path)
     field = field_from_list(bench.field.entries, recording)
 
     def posteriors(bench):
-        found = paths(tracks, recording, field=field, scale=bench.scale, exposure=CAMERA.exposure,
-                      orientation=Orientation(0.0, 0.0, "bench"))  # fmt: skip
+        found = paths(
+            tracks, View(recording, field, bench.scale, CAMERA.exposure), Orientation(0.0, 0.0, "bench")
+        )
         made = [cleaned(path, Settings()) for path in found]
         return with_posteriors(with_histories(made, bench.conditions, Drift()), bench, air)
 

@@ -9,7 +9,7 @@ import pytest
 from happening_droplets import Camera, Life, made_bench, made_tracks, record_path, schedule
 
 from tracker.motion.field import field_from_list, field_of_steps
-from tracker.motion.velocity import Orientation, fit_orientation, paths, without_outliers
+from tracker.motion.velocity import Orientation, View, fit_orientation, paths, without_outliers
 from tracker.records import Flag, Tracks
 
 CAMERA = Camera(seconds=20.0, steps=schedule(4e4, seconds=20.0))
@@ -27,7 +27,7 @@ def evenly(tmp_path, rng, *, tilt=0.0, camera=CAMERA, lives=LIVES, air=(0.0, 0.0
 def test_gravity_is_found_from_the_drive_of_all_droplets(tmp_path, tilt):
     """At any turn of the camera, also upside down, and with air that drifts sideways; honest uncertainty."""
     tracks, recording, field, bench = evenly(tmp_path, np.random.default_rng(51), tilt=tilt, air=(0.0, 10e-6))
-    found = fit_orientation(tracks, recording, field=field, scale=bench.scale, exposure=CAMERA.exposure)
+    found = fit_orientation(tracks, View(recording, field, bench.scale, CAMERA.exposure))
     assert found.origin == "drive"
     apart = (found.down_deg - tilt + 180) % 360 - 180
     assert abs(apart) < 4 * found.down_deg_std
@@ -41,7 +41,7 @@ def test_gravity_pulls_about_the_truth_with_its_stated_uncertainty(tmp_path):
     pulls = []
     for _ in range(40):
         tracks, recording, field, bench = evenly(tmp_path, rng, tilt=2.0)
-        found = fit_orientation(tracks, recording, field=field, scale=bench.scale, exposure=CAMERA.exposure)
+        found = fit_orientation(tracks, View(recording, field, bench.scale, CAMERA.exposure))
         pulls.append((found.down_deg - 2.0) / found.down_deg_std)
     assert np.sqrt(np.mean(np.square(pulls))) == pytest.approx(1.0, abs=4 / np.sqrt(80))
 
@@ -49,10 +49,10 @@ def test_gravity_pulls_about_the_truth_with_its_stated_uncertainty(tmp_path):
 def test_a_stated_direction_is_taken_and_checked(tmp_path):
     """A stated direction stands; a drive that points elsewhere is told."""
     tracks, recording, field, bench = evenly(tmp_path, np.random.default_rng(53), tilt=3.0)
-    options = {"field": field, "scale": bench.scale, "exposure": CAMERA.exposure}
-    right = fit_orientation(tracks, recording, down_deg=3.0, **options)
+    view = View(recording, field, bench.scale, CAMERA.exposure)
+    right = fit_orientation(tracks, view, down_deg=3.0)
     assert (right.down_deg, right.origin, right.warnings) == (3.0, "bench", ())
-    wrong = fit_orientation(tracks, recording, down_deg=-3.0, **options)
+    wrong = fit_orientation(tracks, view, down_deg=-3.0)
     assert wrong.down_deg == -3.0
     assert "drive" in wrong.warnings[0]
 
@@ -61,7 +61,7 @@ def test_without_a_drive_the_fall_gives_the_direction_with_a_warning(tmp_path):
     """Field never on: the mean fall, and a warning that sideways air turns it."""
     idle = Camera(seconds=20.0, steps=((0.0, 0.0),))
     tracks, recording, field, bench = evenly(tmp_path, np.random.default_rng(54), tilt=4.0, camera=idle)
-    found = fit_orientation(tracks, recording, field=field, scale=bench.scale, exposure=idle.exposure)
+    found = fit_orientation(tracks, View(recording, field, bench.scale, idle.exposure))
     assert found.origin == "fall"
     assert found.down_deg == pytest.approx(4.0, abs=4 * found.down_deg_std)
     assert "drifts" in found.warnings[0]
@@ -71,15 +71,16 @@ def test_no_tracks_leave_the_pictures_own_vertical(tmp_path):
     """An empty recording has a direction, and says that it was not measured."""
     tracks, recording, field, bench = evenly(tmp_path, np.random.default_rng(55))
     none = Tracks(tracks.droplet[:0], tracks.sightings.take(np.arange(0)))
-    found = fit_orientation(none, recording, field=field, scale=bench.scale, exposure=CAMERA.exposure)
+    found = fit_orientation(none, View(recording, field, bench.scale, CAMERA.exposure))
     assert (found.down_deg, found.origin) == (0.0, "picture")
 
 
 def test_places_are_turned_and_scaled(tmp_path):
     """Down and side are the picture's axes turned by gravity's angle, in metres."""
     tracks, recording, field, bench = evenly(tmp_path, np.random.default_rng(56))
-    path = paths(tracks, recording, field=field, scale=bench.scale, exposure=CAMERA.exposure,
-                 orientation=Orientation(90.0, 0.0, "bench"))[0]  # fmt: skip
+    path = paths(
+        tracks, View(recording, field, bench.scale, CAMERA.exposure), Orientation(90.0, 0.0, "bench")
+    )[0]
     rows = tracks.rows(0)
     assert path.down == pytest.approx(tracks.sightings.x[rows] * 3e-6)
     assert path.side == pytest.approx(-tracks.sightings.y[rows] * 3e-6)
@@ -96,9 +97,9 @@ def test_repeated_frames_biased_places_and_a_persons_rows_are_left_out(tmp_path)
     left_out = np.zeros(len(tracks), bool)
     left_out[rows.start + 50] = True
     path = paths(
-        replace(tracks, sightings=replace(tracks.sightings, flags=flags)), replace(recording, repeated=[frame]),
-        field=field, scale=bench.scale, exposure=CAMERA.exposure, orientation=Orientation(0, 0, "bench"),
-        left_out=left_out,
+        replace(tracks, sightings=replace(tracks.sightings, flags=flags)),
+        View(replace(recording, repeated=[frame]), field, bench.scale, CAMERA.exposure),
+        Orientation(0, 0, "bench"), left_out=left_out,
     )[0]  # fmt: skip
     frames = tracks.sightings.frame[rows]
     assert np.setdiff1d(frames, path.frames).tolist() == frames[[10, 20, 40, 50]].tolist()
@@ -109,8 +110,9 @@ def test_steps_over_an_uncertain_toggle_and_a_bump_are_left_out(tmp_path):
     """A copy of the frame before, merged or cut spots and trimmed rows give no place; steps over them are longer."""
     tracks, recording, _, bench = evenly(tmp_path, np.random.default_rng(58))
     field = field_of_steps("lamp", [0.0, 6.0], [0.0, 240.0], span=(0.0, 20.0), toggle_std=0.02)
-    path = paths(tracks, recording, field=field, scale=bench.scale, exposure=CAMERA.exposure,
-                 orientation=Orientation(0, 0, "bench"), cuts=[450])[0]  # fmt: skip
+    path = paths(
+        tracks, View(recording, field, bench.scale, CAMERA.exposure), Orientation(0, 0, "bench"), cuts=[450]
+    )[0]
     begin, end = path.times[:-1][path.breaks], path.times[1:][path.breaks] + CAMERA.exposure
     near_toggle = (begin < 6.06) & (end > 5.94)
     assert near_toggle.sum() >= 4
