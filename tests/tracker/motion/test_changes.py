@@ -31,7 +31,7 @@ def kinds(rng, life, camera, trials):
 
 
 def test_a_steady_droplet_shows_no_change():
-    """Of 600 steady droplets at most 6 show any change: three tests at up to 2 in 1000 each make 3.6 at most."""
+    """Of 600 steady droplets at most 9 show any change: three tests at up to 2 in 1000 each make 3.6 at most."""
     rng = np.random.default_rng(21)
     lives = [Life(r, n) for r, n in ((0.3e-6, 5), (0.5e-6, -2), (0.7e-6, 8), (1.0e-6, -5))]
     found = [k for life in lives for k in kinds(rng, life, STRONG, 150)]
