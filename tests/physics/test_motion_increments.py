@@ -108,6 +108,20 @@ def test_occupancy_of_segments_covers_each_step():
     assert occupancy[21, 1] == pytest.approx(22 / 30 + 0.015 - 0.71 - late, rel=1e-10)
 
 
+@pytest.mark.parametrize("exposure", [0.0, 0.011, 0.033])
+def test_occupancy_is_the_impulse_of_a_unit_voltage(exposure):
+    """A segment's seconds are the volt seconds of 1 V that is on in that segment alone."""
+    rng = np.random.default_rng(57)
+    times = np.sort(rng.uniform(0.0, 4.0, 80))
+    starts = rng.uniform(-1.0, 4.5, 30)
+    ends = starts + rng.choice([0.004, 0.02, 0.9], 30)
+    found = segment_occupancy(starts, ends, times, exposure)
+    for start, end, column in zip(starts, ends, found.T, strict=True):
+        on = field_impulse([start, start, end, end], [0.0, 1.0, 1.0, 0.0], times, exposure)
+        assert column == pytest.approx(np.diff(on), abs=1e-13)  # s; round-off of seconds over the exposure
+    assert segment_occupancy([], [], times, exposure).shape == (79, 0)
+
+
 @pytest.mark.parametrize(
     ("knots", "volts", "exposure"),
     [([0.0, -1.0], [0.0, 1.0], 0.1), ([0.0], [np.nan], 0.1), ([0.0], [1.0, 2.0], 0.1), ([0.0], [1.0], -0.1)],
