@@ -7,12 +7,13 @@ costs as much as one fit.
 from __future__ import annotations
 
 from dataclasses import dataclass, replace
+from functools import cached_property
 
 import numpy as np
 
 from physics.droplet import Conditions, droplet_mobility, fall_speed, radius_from_fall_speed
 from physics.errors import PhysicsError
-from physics.motion import MIN_INCREMENTS, FreeFit, Increments, free_fit, whitened
+from physics.motion import MIN_INCREMENTS, FreeFit, Increments, Whitened, free_fit, whitened
 from tracker.records import FloatArray, IntArray
 
 STEP_THRESHOLD = 18.0  # one false step in 1000 droplets
@@ -147,7 +148,7 @@ def _by_time(change: Change) -> float:
     return change.time
 
 
-@dataclass(frozen=True, slots=True)
+@dataclass(frozen=True)
 class _Model:
     """What is already known of a droplet when the next change is looked for."""
 
@@ -156,19 +157,24 @@ class _Model:
     column: FloatArray  # (N, 0 or 1) design column of a trend
     fit: FreeFit
 
-    def base(self) -> FloatArray:
-        """Design of the model: drift, a drive for each part, a trend."""
+    @cached_property
+    def base(self) -> Whitened:
+        """Whitened design of the model, drift, a drive for each part, a trend, and the data."""
         drives = self.steps.impulse[:, None] * (self.part[:, None] == np.arange(self.part.max() + 1))
-        return np.column_stack([self.steps.dt, drives, self.column])
+        return self._white(np.column_stack([self.steps.dt, drives, self.column]))
+
+    @cached_property
+    def residual(self) -> float:
+        """Sum of squares that the model leaves."""
+        return _rss(self.base.columns, self.base.data)
 
     def white(self, extra: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:
         """Whitened base design, extra columns and data."""
-        base = self.base()
-        both = whitened(
-            self.steps, diffusion=self.fit.diffusion, rho=float(np.exp(self.fit.log_rho)),
-            columns=np.column_stack([base, extra]),
-        )  # fmt: skip
-        return both.columns[:, : base.shape[1]], both.columns[:, base.shape[1] :], both.data
+        return self.base.columns, self._white(extra).columns, self.base.data
+
+    def _white(self, columns: FloatArray) -> Whitened:
+        rho = float(np.exp(self.fit.log_rho))
+        return whitened(self.steps, diffusion=self.fit.diffusion, rho=rho, columns=columns)
 
 
 def size_rate(steps: Increments, times: FloatArray, conditions: Conditions, fit: FreeFit) -> Rate | None:
@@ -294,8 +300,7 @@ def _suffix(rows: FloatArray) -> FloatArray:
 def _gain_exact(model: _Model, extra: FloatArray) -> float:
     """Drop of the residual sum of squares by extra columns."""
     base, added, data = model.white(extra)
-    both = np.column_stack([base, added])
-    return float(_rss(base, data) - _rss(both, data))
+    return model.residual - _rss(np.column_stack([base, added]), data)
 
 
 def _rss(design: FloatArray, data: FloatArray) -> float:
