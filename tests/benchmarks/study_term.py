@@ -160,7 +160,7 @@ def verdict_rows(out: Path) -> list[tuple[str, ...]]:
     days = {
         str(results[e.recording].folder): date.fromisoformat(e.day) for e in entries if e.recording in results
     }
-    drifts = bench_drifts(pool, {str(r.folder): r for r in results.values()}, days)
+    drifts = bench_drifts(pool, days)
     rows = []
     for bench, drift in zip(pool.benches, drifts, strict=True):
         true_scale = SCALE_ERROR if bench.label == "bench B" else 0.0

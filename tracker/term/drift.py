@@ -12,10 +12,9 @@ from numpy.typing import NDArray
 
 from physics.budget import explaining_errors
 from physics.droplet import ELEMENTARY_CHARGE
-from physics.quanta import charge_sample, unit_ratio
-from tracker.keeping.store import Result
+from physics.quanta import unit_ratio
 from tracker.term.pool import BenchUnit, Pool
-from tracker.term.poolcharges import bench_charges
+from tracker.term.poolcharges import Charges, joined, sample_of
 
 FloatArray = NDArray[np.float64]
 
@@ -72,17 +71,15 @@ def monday_of(day: date) -> date:
     return day - timedelta(days=day.weekday())
 
 
-def bench_drifts(pool: Pool, results: Mapping[str, Result], days: Mapping[str, date]) -> list[Drift]:
+def bench_drifts(pool: Pool, days: Mapping[str, date]) -> list[Drift]:
     """Follow every bench of a pool over the weeks.
 
     Parameters
     ----------
     pool : Pool
-        Of the same results.
-    results : mapping of str to Result
-        By the names that the pool's benches list.
+        Of the results of a term.
     days : mapping of str to date
-        Day of each recording.
+        Day of each recording, by the names of results that the pool's benches list.
 
     Returns
     -------
@@ -96,14 +93,14 @@ def bench_drifts(pool: Pool, results: Mapping[str, Result], days: Mapping[str, d
     and the stated uncertainties are absolute.
     """
     first = min(map(monday_of, days.values()), default=date(2000, 1, 3))
-    return [_drift(bench, results, days, first) for bench in pool.benches]
+    return [_drift(bench, days, first) for bench in pool.benches]
 
 
-def _drift(bench: BenchUnit, results: Mapping[str, Result], days: Mapping[str, date], first: date) -> Drift:
-    members: defaultdict[date, list[Result]] = defaultdict(list)
-    for name in bench.results:
-        if name in results:
-            members[monday_of(days[name])].append(results[name])
+def _drift(bench: BenchUnit, days: Mapping[str, date], first: date) -> Drift:
+    members: defaultdict[date, list[Charges]] = defaultdict(list)
+    for name, part in zip(bench.results, bench.parts, strict=True):
+        if name in days:
+            members[monday_of(days[name])].append(part)
     unit = bench.ratio * ELEMENTARY_CHARGE if np.isfinite(bench.ratio) else ELEMENTARY_CHARGE
     weeks = tuple(_week(monday, members[monday], unit, bench) for monday in sorted(members))
     told = [week for week in weeks if np.isfinite(week.ratio)]
@@ -115,13 +112,9 @@ def _drift(bench: BenchUnit, results: Mapping[str, Result], days: Mapping[str, d
     return Drift(bench.label, weeks, start, slope, std, scatter, _sentence(drift, bench, at))
 
 
-def _week(monday: date, members: Sequence[Result], unit: float, bench: BenchUnit) -> Week:
+def _week(monday: date, members: Sequence[Charges], unit: float, bench: BenchUnit) -> Week:
     """One week's ratio from its own charges."""
-    found = bench_charges(members)
-    sample = charge_sample(
-        found.charge, found.own_std, rel_stds=found.rel_std, shared_rel_std=bench.sample.shared_rel_std,
-        steps=(found.step, found.step_std), pairs=(found.pair, found.pair_cov),
-    )  # fmt: skip
+    sample = sample_of(joined(members), bench.sample.shared_rel_std)
     if len(sample) < _FEWEST:
         return Week(monday, len(members), len(sample), float("nan"), float("nan"))
     ratio, std = unit_ratio(sample, unit, prior_rel_std=_PRIOR)

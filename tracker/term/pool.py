@@ -13,11 +13,19 @@ from numpy.typing import NDArray
 
 from physics.budget import Budget, explaining_errors
 from physics.droplet import ELEMENTARY_CHARGE
-from physics.quanta import SEARCH, ChargeSample, ChargeUnit, charge_sample, pooled_charge_unit, unit_ratio
+from physics.quanta import SEARCH, ChargeSample, ChargeUnit, pooled_charge_unit, unit_ratio
 from tracker.errors import ResultError, UsageError
 from tracker.keeping.store import PROVENANCE, Result, read_result
 from tracker.term.duplicates import duplicates, result_name
-from tracker.term.poolcharges import bench_charges, factor_budget
+from tracker.term.poolcharges import (
+    Charges,
+    air_rel_std,
+    factor_budget,
+    joined,
+    result_charges,
+    sample_of,
+    shared_rel_std,
+)
 
 FloatArray = NDArray[np.float64]
 
@@ -39,6 +47,7 @@ class BenchUnit:
 
     label: str
     results: tuple[str, ...]
+    parts: tuple[Charges, ...]  # of the results, in their order
     sample: ChargeSample
     unit: ChargeUnit  # of this bench alone
     ratio: float  # charge unit over e; nan if neither the bench nor the pool is resolved
@@ -73,6 +82,7 @@ class _Bench:
 
     label: str
     results: tuple[str, ...]
+    parts: tuple[Charges, ...]
     sample: ChargeSample
     budget: Budget
     common: float  # relative uncertainty by the models, which err alike on all benches
@@ -269,16 +279,14 @@ def _same_standards(recordings: Sequence[Mapping[str, Any]]) -> frozenset[str]:
 
 def _bench(label: str, results: Sequence[Result], standards: frozenset[str]) -> _Bench:
     """Gather the charges of one bench and the budget of their common factor."""
-    charges = bench_charges(results)
+    parts = tuple(result_charges(result) for result in results)
+    charges = joined(parts)
     budget = factor_budget(results, charges)
-    shared = charges.shared_rel_std if np.isfinite(charges.shared_rel_std) else budget.shared_std
-    shared = float(np.hypot(shared, charges.air_rel_std))
-    sample = charge_sample(
-        charges.charge, charges.own_std, rel_stds=charges.rel_std, shared_rel_std=shared,
-        steps=(charges.step, charges.step_std), pairs=(charges.pair, charges.pair_cov),
-    )  # fmt: skip
+    shared = shared_rel_std(charges)
+    shared = float(np.hypot(shared if np.isfinite(shared) else budget.shared_std, air_rel_std(charges)))
+    sample = sample_of(charges, shared)
     common = min(_common_part(budget, results[0].recording, standards), shared)
-    return _Bench(label, tuple(result_name(result) for result in results), sample, budget, common)
+    return _Bench(label, tuple(result_name(result) for result in results), parts, sample, budget, common)
 
 
 def _common_part(budget: Budget, recording: Mapping[str, Any], standards: frozenset[str]) -> float:
@@ -334,8 +342,8 @@ def _bench_unit(bench: _Bench, alone: ChargeUnit, pooled: ChargeUnit, left_out: 
         prior = min(max(1.5 * shared, 0.01), 0.03)
         relative, std = unit_ratio(bench.sample, pooled.unit, prior_rel_std=prior)
         ratio, own = relative * pooled.over_e, std * pooled.over_e
-    made = BenchUnit(bench.label, bench.results, bench.sample, alone, ratio, own, ratio * shared, left_out, from_pool,
-                     bench.budget, _explaining(ratio, own, shared, bench.budget), "")  # fmt: skip
+    made = BenchUnit(bench.label, bench.results, bench.parts, bench.sample, alone, ratio, own, ratio * shared, left_out,
+                     from_pool, bench.budget, _explaining(ratio, own, shared, bench.budget), "")  # fmt: skip
     return _with_sentence(made)
 
 

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, fields
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -12,6 +12,7 @@ from numpy.typing import NDArray
 from physics.budget import SHARED_INPUTS, Budget, DropletModel, bench_budget, shared_sensitivities
 from physics.drag import slip_model
 from physics.droplet import Conditions
+from physics.quanta import ChargeSample, charge_sample
 from tracker.keeping.store import Result
 from tracker.records import Measured
 
@@ -25,59 +26,120 @@ _USUAL_RADIUS = 5e-7  # m, where none is known
 
 
 @dataclass(frozen=True, slots=True)
-class BenchCharges:
-    """Kept charges of one bench; a droplet whose charge changed is a pair, or a charge and a step."""
+class Charges:
+    """Kept charges of one result; a droplet whose charge changed is a pair, or a charge and a step."""
 
     charge: FloatArray  # (N,) C
     own_std: FloatArray  # (N,) C
-    rel_std: FloatArray  # (N,) relative part of it, through the radius
+    shared_std: FloatArray  # (N,) C, nan where not stored
+    rel_std: FloatArray  # (N,) relative part of the own one, through the radius
     radius: FloatArray  # (N,) m, nan where unknown
     sensitivity: FloatArray  # (N, 10) d ln charge by `SHARED_INPUTS`, nan where not stored
     step: FloatArray  # (M,) C
     step_std: FloatArray  # (M,) C
     pair: FloatArray  # (K, 2) C
     pair_cov: FloatArray  # (K, 2, 2) C^2
-    shared_rel_std: float  # of the common factor; nan if the results do not say
-    air_rel_std: float  # of the mean of all recordings by their air currents, each common to one recording
+    air: FloatArray  # (1, 2) relative effect of the air current's uncertainty, and the weight of the result in a mean
 
 
-def bench_charges(results: Sequence[Result]) -> BenchCharges:
-    """Gather the kept charges of one bench.
+def result_charges(result: Result) -> Charges:
+    """Gather the kept charges of one result.
 
     Parameters
     ----------
-    results : sequence of Result
-        Of that bench; their tracks are not needed.
+    result : Result
+        Its tracks are not needed.
 
     Returns
     -------
-    charges : BenchCharges
-        Droplets count by (charge / own uncertainty)^2 in the shared uncertainty.
+    charges : Charges
     """
-    import pandas as pd
-
-    tables, steps, pairs, air = [], [], [], []
-    for result in results:
-        kept = kept_droplets(result.droplets, own_radius_stds(result.recording))
-        paired = charge_pairs(result.recording, kept)
-        alone = kept[~kept["droplet"].isin(list(paired))]
-        pairs += list(paired.values())
-        steps.append(charge_steps(result.changes, alone))
-        air.append(_air_part(result.recording, kept))
-        tables.append(alone.assign(sensitivity=_stored_sensitivities(result.recording, alone)))
-    table = pd.concat(tables, ignore_index=True)
-    charge, own = (table[name].to_numpy(float) for name in ("charge_c", "charge_own_std_c"))
-    relative = table["charge_shared_std_c"].to_numpy(float) / np.abs(charge)
-    usable = np.isfinite(relative)
-    shared = np.average(relative[usable], weights=(charge / own)[usable] ** 2) if usable.any() else np.nan
-    step, step_std = (np.concatenate(column) for column in zip(*steps, strict=True))
-    none = np.full(len(SHARED_INPUTS), np.nan)
-    return BenchCharges(
-        charge, own, table["rel_std"].to_numpy(float), table["radius_m"].to_numpy(float),
-        np.array([none if row is None else row for row in table["sensitivity"]]).reshape(-1, len(SHARED_INPUTS)),
-        step, step_std, np.array([q for q, _ in pairs]).reshape(-1, 2),
-        np.array([c for _, c in pairs]).reshape(-1, 2, 2), float(shared), _mean_std(air),
+    kept = kept_droplets(result.droplets, own_radius_stds(result.recording))
+    paired = charge_pairs(result.recording, kept)
+    alone = kept[~kept["droplet"].isin(list(paired))]
+    names = ("charge_c", "charge_own_std_c", "charge_shared_std_c", "rel_std", "radius_m")
+    charge, own_std, shared_std, rel_std, radius = (alone[name].to_numpy(float) for name in names)
+    none = [np.nan] * len(SHARED_INPUTS)
+    stored = [none if row is None else row for row in _stored_sensitivities(result.recording, alone)]
+    step, step_std = charge_steps(result.changes, alone)
+    pairs, covs = [q for q, _ in paired.values()], [cov for _, cov in paired.values()]
+    return Charges(
+        charge, own_std, shared_std, rel_std, radius, np.array(stored, float).reshape(-1, len(SHARED_INPUTS)),
+        step, step_std, np.array(pairs).reshape(-1, 2), np.array(covs).reshape(-1, 2, 2),
+        np.array([_air_part(result.recording, kept)]),
     )  # fmt: skip
+
+
+def joined(parts: Sequence[Charges]) -> Charges:
+    """Join the charges of several results of one bench.
+
+    Parameters
+    ----------
+    parts : sequence of Charges
+        At least one.
+
+    Returns
+    -------
+    charges : Charges
+        In the order of the parts.
+    """
+    return Charges(*(np.concatenate([getattr(part, f.name) for part in parts]) for f in fields(Charges)))
+
+
+def sample_of(charges: Charges, shared: float) -> ChargeSample:
+    """Give charges as the search for their unit takes them.
+
+    Parameters
+    ----------
+    charges : Charges
+        Of one bench.
+    shared : float
+        Relative standard uncertainty of the factor on all of them.
+
+    Returns
+    -------
+    sample : ChargeSample
+    """
+    return charge_sample(
+        charges.charge, charges.own_std, rel_stds=charges.rel_std, shared_rel_std=shared,
+        steps=(charges.step, charges.step_std), pairs=(charges.pair, charges.pair_cov),
+    )  # fmt: skip
+
+
+def shared_rel_std(charges: Charges) -> float:
+    """Relative standard uncertainty of the factor on all charges of a bench, by what its inputs leave open.
+
+    Parameters
+    ----------
+    charges : Charges
+        Of the bench.
+
+    Returns
+    -------
+    std : float
+        Mean over the droplets, which count by (charge / own uncertainty)^2; nan if the results do not say.
+    """
+    relative = charges.shared_std / np.abs(charges.charge)
+    usable = np.isfinite(relative)
+    weights = (charges.charge / charges.own_std)[usable] ** 2
+    return float(np.average(relative[usable], weights=weights)) if usable.any() else float("nan")
+
+
+def air_rel_std(charges: Charges) -> float:
+    """Relative standard uncertainty of a bench's mean charge by air currents, each common to one recording.
+
+    Parameters
+    ----------
+    charges : Charges
+        Of the bench.
+
+    Returns
+    -------
+    std : float
+        Of the weighted mean of independent parts.
+    """
+    std, weight = charges.air.T
+    return float(np.sqrt(np.sum((weight * std) ** 2)) / weight.sum()) if weight.sum() > 0 else 0.0
 
 
 def _air_part(recording: Mapping[str, Any], kept: pd.DataFrame) -> tuple[float, float]:
@@ -91,12 +153,6 @@ def _air_part(recording: Mapping[str, Any], kept: pd.DataFrame) -> tuple[float, 
     good = np.isfinite(relative) & (relative > 0)
     part = float(np.average(relative[good], weights=weight[good])) if good.any() else 0.0
     return part, float(weight.sum())
-
-
-def _mean_std(parts: Sequence[tuple[float, float]]) -> float:
-    """Standard deviation of a weighted mean of independent parts (std, weight)."""
-    std, weight = np.array(parts).T
-    return float(np.sqrt(np.sum((weight * std) ** 2)) / weight.sum()) if weight.sum() > 0 else 0.0
 
 
 def _stored_sensitivities(recording: Mapping[str, Any], kept: pd.DataFrame) -> list[list[float] | None]:
@@ -257,14 +313,14 @@ def _largest_voltage(recording: Mapping[str, Any]) -> float:
     return max((abs(s["voltage_v"]) for s in segments), default=0.0) or 1.0
 
 
-def factor_budget(results: Sequence[Result], charges: BenchCharges) -> Budget:
+def factor_budget(results: Sequence[Result], charges: Charges) -> Budget:
     """Budget of the factor on all charges of a bench.
 
     Parameters
     ----------
     results : sequence of Result
         Of that bench; the first one's provenance gives the inputs.
-    charges : BenchCharges
+    charges : Charges
         Of the same results; droplets count by (charge / own uncertainty)^2.
 
     Returns

@@ -232,9 +232,7 @@ def week_name(monday: date) -> str:
 def _pool_and_drifts(results: Mapping[str, Result], days: Mapping[str, date]) -> tuple[Pool, list[Drift]]:
     """Charge unit as `fallrise pool` finds it, and the benches over the weeks."""
     pool = pool_of(list(results.values()))
-    by_folder = {str(result.folder): name for name, result in results.items()}
-    named = {folder: results[name] for folder, name in by_folder.items()}
-    return pool, bench_drifts(pool, named, {folder: days[name] for folder, name in by_folder.items()})
+    return pool, bench_drifts(pool, {str(result.folder): days[name] for name, result in results.items()})
 
 
 def _unit_sections(pool: Pool, drifts: Sequence[Drift]) -> list[Section]:

@@ -75,9 +75,8 @@ def drifts(term):
     """The benches over the weeks."""
     _, _, results, days = term
     pool = pool_of(list(results.values()))
-    named = {str(r.folder): r for r in results.values()}
     by_folder = {str(results[name].folder): day for name, day in days.items()}
-    return pool, {d.label: d for d in bench_drifts(pool, named, by_folder)}
+    return pool, {d.label: d for d in bench_drifts(pool, by_folder)}
 
 
 def test_bench_with_a_falling_voltage_is_named_with_the_size(drifts):
