@@ -18,11 +18,16 @@ Pictures = Sequence[NDArray[Any]] | NDArray[Any]  # of one size
 _LOW = 0.3  # quantile that a droplet in place for half the samples hardly moves
 _LOW_OFFSET = 0.5244  # standard deviations of a normal distribution from that quantile to its mean
 _CLIP = 2.0  # samples within so many standard deviations make the mean
+_BRIGHT, _MOST_BRIGHT = 2.0, 8.0  # times the noise around, of bright pixels, with what a codec adds there
+_BRIGHT_SHARE = 0.2  # of their rise over what is around; more is a droplet on the move
 _LINE_SCALE = 14.0  # px, standard deviation of the smoothing that separates glare from lines
 _MOST_LINES = 0.4  # of the picture; more is no reticle but an uneven background
 _LINE_ROUNDS = 6
 _LINE_DEPTH = 0.93  # shade below this is a line
 _RESTLESS = 4.0  # times the usual median deviation from the background
+_RESTLESS_SHARE = (
+    0.1  # of the background's rise thereabouts: a bright pixel has more noise, and a codec adds to it
+)
 _LEAST_RESTLESS = 0.4  # grey, for that median deviation: what a codec holds still deviates by less
 _MOST_RESTLESS = 0.2  # of the picture; more is a change of light
 _STRIP_BYTES = 65_536  # of each sample that are sorted at once
@@ -76,6 +81,9 @@ def temporal_level(samples: NDArray[Any]) -> F32:
     # Both quantiles at the ranks that were taken, so that the offset is right for any number of samples.
     z_low, z_lower = _z((low + 0.625) / (n + 0.25)), _z((lower + 0.625) / (n + 0.25))
     sigma = np.maximum(_local_mean(spread, 31) / np.float32(z_low - z_lower), _change_sigma(samples))
+    own = _local_mean(spread, 3) / np.float32(z_low - z_lower)
+    bright = (own > _BRIGHT * sigma) & (own < _MOST_BRIGHT * sigma) & (own < _BRIGHT_SHARE * _rise(centre, 8))
+    sigma = np.where(bright, own, sigma)
     centre -= z_low * sigma
     half = _CLIP * sigma + 0.5
     total, count = np.zeros(centre.shape, np.float32), np.zeros(centre.shape, np.float32)
@@ -210,9 +218,9 @@ def fill_restless(background: Background, samples: NDArray[Any], *, width: float
     some = samples[:: max(1, len(samples) // 24)]
     rest = [cv2.resize(np.abs(_local_mean(p - background.level, 2 * step + 1)), size) for p in some]
     (usual,) = ranks_in_time(rest, (len(rest) // 2,))
-    restless: NDArray[Any] = (usual > _RESTLESS * max(float(np.median(usual)), _LEAST_RESTLESS)).astype(
-        np.uint8
-    )
+    rise = cv2.resize(_rise(background.level, 8 * step), size)
+    least = np.maximum(_RESTLESS * max(float(np.median(usual)), _LEAST_RESTLESS), _RESTLESS_SHARE * rise)
+    restless: NDArray[Any] = (usual > least).astype(np.uint8)
     restless = cv2.morphologyEx(restless, cv2.MORPH_OPEN, np.ones((2, 2), np.uint8))
     share = float(restless.mean())
     if not 0 < share < _MOST_RESTLESS:
@@ -248,6 +256,12 @@ def _long_parts(line: NDArray[Any]) -> NDArray[Any]:
     long = np.maximum(stats[:, cv2.CC_STAT_WIDTH], stats[:, cv2.CC_STAT_HEIGHT]) > 25
     long[0] = False
     return long[labels].astype(np.uint8) if count > 1 else line
+
+
+def _rise(level: F32, size: int) -> NDArray[Any]:
+    """Highest rise of a picture over its surroundings within half of `size` px."""
+    rise = level - _local_mean(level, size + 1)
+    return np.asarray(cv2.dilate(rise, np.ones((size + 1, size + 1), np.uint8)))
 
 
 def _local_mean(picture: F32, size: int) -> F32:
