@@ -21,12 +21,14 @@ F32 = NDArray[np.float32]
 
 _SCALES = (0.7, 1.0, 1.4, 2.0, 2.8, 4.0, 5.6, 8.0)  # px, spot widths tried
 _DEFAULT_SCALE = 2  # index of the scale taken where nothing is seen
+_ROUNDING = 0.0814  # least noise times width: that of rounding to whole grey values, sqrt(1 / 12 / 4 pi)
 _COARSE = 2.9  # px, scales up to here must show the noise of finer ones
 _UNSHADED = 0.97  # least shade in the window of a spot that is off the lines
 _LEAST_PICTURES = 2
 _FEW = 5  # fewer spots teach nothing
 _SEEN = 6.0  # signal to noise of a spot that teaches
-_CLEAR = 0.3  # of the signal to noise of the clearest: fainter spots may be flecks
+_CLEAR = 0.3  # of the signal to noise of the clearest: fainter spots may be flecks of a codec, however many
+_CLEAREST = 2  # spots of a picture that count as the clearest
 _TEACHERS = 400  # spots that are enough
 _PIXELS = 20_000_000  # of sample pictures in which teachers are sought, at most
 _PICTURES = 20  # sample pictures in which teachers are sought
@@ -187,8 +189,7 @@ def scale_search(residual: F32) -> tuple[float, float]:
     smooth = [np.stack([smoothed(r, s) for r in pictures]) for s in scales]
     raw = [_spread(f[:, ::4, ::4]) * s for f, s in zip(smooth, scales, strict=True)]
     coarse = [i for i, s in enumerate(scales) if s <= _COARSE]
-    noise = [max(raw[i : coarse[-1] + 1] or [raw[i]]) / s for i, s in enumerate(scales)]
-    noise = [max(n, 0.02) for n in noise]
+    noise = [max(*raw[i : coarse[-1] + 1], raw[i], _ROUNDING) / s for i, s in enumerate(scales)]
     for pictures, n in zip(smooth, noise, strict=True):
         np.divide(pictures, np.float32(n), out=pictures)
     best = smooth[0].copy()
@@ -198,7 +199,7 @@ def scale_search(residual: F32) -> tuple[float, float]:
     at = (frame, np.rint(y).astype(int), np.rint(x).astype(int))
     which = np.argmax([pictures[at] for pictures in smooth], axis=0)
     order = np.argsort(-score)[:_TEACHERS]
-    order = order[score[order] > _CLEAR * np.quantile(score, 0.95)] if len(order) else order
+    order = order[score[order] > _least_score(score, min(few, len(residual)))]
     index = _DEFAULT_SCALE if len(order) < _FEW else int(np.median(which[order]))
     return scales[min(index, len(scales) - 1)], noise[min(index, len(scales) - 1)]
 
@@ -223,6 +224,12 @@ def smoothed(picture: F32, sigma: float) -> F32:
     return np.asarray(cv2.resize(small, (width, height), interpolation=cv2.INTER_LINEAR), np.float32)
 
 
+def _least_score(score: FloatArray, pictures: int) -> float:
+    """Signal to noise of a spot that teaches: a share of that of the clearest ones, a few in each picture."""
+    clearest = np.sort(score)[::-1][: _CLEAREST * pictures]
+    return _CLEAR * float(clearest[-1]) if len(clearest) else 0.0
+
+
 def _lone_spots(
     residual: F32, width: float, camera: Camera
 ) -> tuple[NDArray[np.int64], FloatArray, FloatArray]:
@@ -238,7 +245,7 @@ def _lone_spots(
     lone = np.ones(len(x), np.bool_)
     pairs = tree.query_pairs(8 * width, output_type="ndarray")
     lone[pairs.ravel()] = False
-    lone &= score > _CLEAR * np.quantile(score, 0.9) if len(score) else lone
+    lone &= score > _least_score(score, len(residual))
     rows = np.flatnonzero(lone)
     rows = rows[np.argsort(-score[rows])[:_TEACHERS]]
     return frame[rows], x[rows], y[rows]
