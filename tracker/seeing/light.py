@@ -32,6 +32,9 @@ _JUMP = 1.0  # px, least common jump of all droplets
 _FEW_SIGHTINGS = 20  # fewer show no common motion
 _JUMP_CLEAR = 4.0  # times the median deviation among droplets
 _JUMP_DROPLETS = 4
+_JUMP_SIGMA = (
+    6.0  # standard deviations of the median of so many droplets: two in a row by chance in none of 1e9 frames
+)
 
 
 @dataclass(frozen=True, slots=True)
@@ -198,7 +201,8 @@ def common_jumps(sightings: Sightings, piece: IntArray, times: FloatArray) -> li
     Notes
     -----
     A jump shows twice in second differences, forth and back; a change of the field shows once, and with the sign
-    of each droplet's charge.
+    of each droplet's charge. It must stand out of the second differences that Brownian motion and noise give in this
+    recording: the median of n normal values scatters by sqrt(pi / (2 n)) of theirs.
     """
     if len(sightings) < _FEW_SIGHTINGS:
         return []
@@ -216,7 +220,12 @@ def common_jumps(sightings: Sightings, piece: IntArray, times: FloatArray) -> li
     size = np.hypot(*middle.T)
     follows = np.append(np.diff(frames) == 1, False)
     back = np.roll(middle, -1, axis=0)
-    jumped = (count >= _JUMP_DROPLETS) & follows & (size > _JUMP) & (size > _JUMP_CLEAR * spread)
+    usual = 1.4826 * float(
+        np.median(np.abs(bend - np.median(bend, axis=0)), axis=0).max()
+    )  # of the normal from its MAD
+    chance = _JUMP_SIGMA * usual * np.sqrt(np.pi / (2 * count))
+    jumped = (count >= _JUMP_DROPLETS) & follows & (size > np.maximum(_JUMP, chance))
+    jumped &= size > _JUMP_CLEAR * spread
     jumped &= np.hypot(*(middle + back).T) < 0.5 * size
     return [int(f) for f in frames[jumped]]
 
