@@ -41,9 +41,12 @@ DENSE = replace(CROWD, droplets=200, width=1280, height=960)
 SWARM = replace(DENSE, droplets=500)
 ACCURACY = {
     **{f"lossless, spot {s:g} px": (replace(BASE, spot=s), "mkv") for s in (1.0, 1.4, 1.7, 2.2, 3.0)},
-    "Motion-JPEG": (replace(BASE, codec="mjpeg"), "avi"),
-    "H.264": (replace(BASE, codec="h264"), "mp4"),
+    **{f"Motion-JPEG, quality {q}": (replace(BASE, codec="mjpeg", quality=q), "avi") for q in (2, 3, 4)},
+    **{f"H.264, crf {q}": (replace(BASE, codec="h264", quality=q), "mp4") for q in (18, 20, 23, 26)},
+    "VP9, crf 30": (replace(BASE, codec="vp9", quality=30), "webm"),
+    "HEVC, crf 22": (replace(BASE, codec="hevc", quality=22), "mp4"),
     "dark lines, lossless": (replace(BASE, lines=9, down_deg=2.0), "mkv"),
+    "dark lines, H.264, crf 21": (replace(BASE, lines=9, down_deg=2.0, codec="h264", quality=21), "mp4"),
     "peak 25 grey, lossless": (replace(BASE, peak=25.0), "mkv"),
 }
 LINKS = {
@@ -115,7 +118,7 @@ def bound(scene: Scene, peak: np.ndarray) -> np.ndarray:
 
 
 def accuracy_row(name: str, scene: Scene, ending: str, folder: Path) -> str:
-    """One recording: found, false sightings, rms, rms over bound, pulls."""
+    """One recording: found, false sightings, rms, rms over bound, pulls, also by kind of picture."""
     path, truth = make(folder, scene, ending, SEED + len(name))
     seen = see(path, settings=Settings())
     s = seen.sightings
@@ -129,12 +132,22 @@ def accuracy_row(name: str, scene: Scene, ending: str, folder: Path) -> str:
     dy = s.y[lone] - truth["y_px"][s.frame[lone], own[lone]]
     limits = bound(scene, looks(path))
     ratio = np.sqrt(np.mean((dx / limits[own[lone]]) ** 2))
-    pulls = [np.std(e / std[lone]) for e, std in ((dx, s.x_std), (dy, s.y_std))]
+    pulls = np.stack([e / std[lone] for e, std in ((dx, s.x_std), (dy, s.y_std))])
+    kinds = kinds_of(path)[s.frame[lone]]
+    by_kind = " ".join(f"{k} {pulls[:, kinds == k].std():.2f}" for k in "IPB" if (kinds == k).any())
     return (
         f"| {name} | {hit[visible].mean():.4f} | {np.count_nonzero(near > 4) / len(visible):.3f} | "
         f"{seen.report['spot_width_px']:.2f} | {dx.std():.4f} / {dy.std():.4f} | {ratio:.2f} | "
-        f"{pulls[0]:.2f} / {pulls[1]:.2f} |"
+        f"{pulls[0].std():.2f} / {pulls[1].std():.2f} | {by_kind} |"
     )
+
+
+def kinds_of(path: Path) -> np.ndarray:
+    """Kind of each picture, empty without loss."""
+    with open_recording(path) as reader:
+        for _ in reader:
+            pass
+        return reader.kinds
 
 
 def looks(path: Path) -> np.ndarray:
@@ -268,6 +281,7 @@ TABLES: list[tuple[str, list[str], dict[str, tuple[Scene, str]], Callable[..., s
             "rms px x / y",
             "rms / bound",
             "pulls x / y",
+            "pulls by kind of picture",
         ],
         ACCURACY,
         accuracy_row,

@@ -1,10 +1,10 @@
-"""Doubt about places that a codec adds by what it leaves out, from the recording's own spots and steps.
+"""Doubt about places from the recording's own spots and steps: what the camera's noise does, and a codec beside it.
 
-A picture loses what lies below the quantiser. One that is predicted from others is a copy of them, moved by motion
-vectors and mended where the difference exceeds the quantiser's dead zone. Two traces of that can be measured:
+A compressed picture loses what lies below the quantiser. One that is predicted from others is a copy of them, moved by
+motion vectors and mended where the difference exceeds the quantiser's dead zone. Two traces can be measured:
 
-- Spots are out of shape by what was left out: width and slant, which the fit of a place leaves alone, vary by more
-  than the camera's noise lets them. As patterns in a picture they are nearly as coarse as a shift of the spot.
+- Spots are out of shape by noise and by what was left out: how much width and slant vary, which the fit of a place
+  leaves alone, tells both. As patterns in a picture they are nearly as coarse as a shift of the spot.
 - A spot that was copied and not mended has moved by the motion vector, a multiple of a fixed step. Droplets diffuse by
   more than that, so that steps of free places have all phases against it alike.
 """
@@ -51,15 +51,15 @@ class Copying:
         }  # fmt: skip
 
 
-def hold_copies(
+def mend_deviations(
     sightings: Sightings, *, strain: FloatArray, piece: IntArray, kinds: Kinds
 ) -> tuple[Sightings, dict[str, Any]]:
-    """Let standard deviations hold what a codec with motion compensation adds.
+    """Scale standard deviations to what the spots show, and let them hold what copies add.
 
     Parameters
     ----------
     sightings : Sightings
-        With the standard deviations that the camera's noise gives.
+        With the standard deviations that the noise gives which a few spots taught.
     strain : ndarray of shape (N, 3)
         What the fit's residual adds to the logarithms of the spot's widths along x and y and to its slant, in standard
         deviations that go with the stated ones of the place.
@@ -71,9 +71,9 @@ def hold_copies(
     Returns
     -------
     sightings : Sightings
-        The same object where no picture loses anything.
+        The same where there are too few clear ones.
     report : dict
-        What was found for each kind of picture; empty where nothing was to be found.
+        What was found for each kind of picture, and for those without loss.
 
     Notes
     -----
@@ -93,22 +93,23 @@ def hold_copies(
     .. [1] ITU-T Recommendation H.264, 8.4.2.2: prediction in steps of a quarter of a luma sample.
     .. [2] W. R. Bennett, Bell Syst. Tech. J. 27 (1948), 446-472: variance q^2 / 12 of rounding.
     """
-    used = kinds[sightings.frame]
-    if not np.isin(used, ("I", "P", "B")).any():
+    if len(sightings) == 0:
         return sightings, {}
-    rows = _clear(sightings, piece)
-    found = {k: f for k in ("I", "P", "B") if (f := _find(sightings, strain, piece, (k, kinds, rows)))}
+    used, rows = kinds[sightings.frame], _clear(sightings, piece)
+    found = {k: f for k in ("", "I", "P", "B") if (f := _find(sightings, strain, piece, (k, kinds, rows)))}
     if "P" in found and "B" in found:
         found["B"] = replace(found["B"], variance=max(found["B"].variance, found["P"].variance))
     variance = np.stack([sightings.x_std**2, sightings.y_std**2])
-    for kind, other in (("I", "P"), ("P", "B"), ("B", "P")):
+    for kind, other in (("", ""), ("I", "P"), ("P", "B"), ("B", "P")):
         if near := found.get(kind) or found.get(other):
             at = used == kind
             own = kind in found or kind != "I"
             shape, added = (near.shape, near.variance) if own else (min(near.shape, 1.0), 0.0)
             variance[:, at] = shape * variance[:, at] + added
     x_std, y_std = np.sqrt(variance)
-    return replace(sightings, x_std=x_std, y_std=y_std), {k: f.as_dict() for k, f in found.items()}
+    return replace(sightings, x_std=x_std, y_std=y_std), {
+        k or "lossless": f.as_dict() for k, f in found.items()
+    }
 
 
 def share_of_copies(steps: FloatArray, step: float) -> float:
@@ -146,7 +147,7 @@ def _find(
     if np.count_nonzero(rows) < _FEW:
         return None
     shape = _shape(strain[rows], piece[rows])
-    sides = _references(kinds)[: {"I": 0, "P": 1, "B": 2}[kind]]
+    sides = _references(kinds)[: {"P": 1, "B": 2}.get(kind, 0)]
     shares = tuple(_shares(sightings, piece, rows, side) for side in sides)
     added = sum(_rounding(s) for s in shares)
     typical = shape * float(np.median(sightings.x_std[rows] ** 2))

@@ -52,8 +52,8 @@ def look(eyes: Eyes, pictures: list[NDArray[Any]], numbers: Rows) -> Columns:
     Returns
     -------
     columns : dict
-        Columns of `Sightings`, ordered by frame, `strain` as in `hold_copies`, and `score`, the signal to noise of the
-        matched filter; empty for no pictures.
+        Columns of `Sightings`, ordered by frame, `strain` as in `mend_deviations`, and `score`, the signal to noise of
+        the matched filter; empty for no pictures.
     """
     if not pictures:
         return {}

@@ -12,7 +12,7 @@ from numpy.typing import NDArray
 
 from tracker.errors import UsageError
 from tracker.records import FloatArray, Seen, Settings, Sightings
-from tracker.seeing.copies import hold_copies
+from tracker.seeing.copies import mend_deviations
 from tracker.seeing.fixed import on_fixed_places
 from tracker.seeing.frames import Reader, open_recording
 from tracker.seeing.learn import Eyes, learn
@@ -77,7 +77,7 @@ def see(
         recording = reader.recording()
     sightings, strain, score = _gather(rows, watch.box, lamp)
     pieces = first_pieces(sightings, recording)
-    sightings, copies = hold_copies(sightings, strain=strain, piece=pieces, kinds=reader.kinds)
+    sightings, copies = mend_deviations(sightings, strain=strain, piece=pieces, kinds=reader.kinds)
     jumps = common_jumps(sightings, pieces, recording.frame_times)
     fixed = on_fixed_places(sightings, pieces, recording)
     warnings = [*watch.warnings, *(f"all droplets jump at frame {j}: tracks are cut there" for j in jumps)]

@@ -8,7 +8,7 @@ import numpy as np
 import pytest
 
 from tracker.records import Settings, Sightings
-from tracker.seeing.copies import hold_copies, share_of_copies
+from tracker.seeing.copies import mend_deviations, share_of_copies
 from tracker.seeing.frames import open_recording
 from tracker.seeing.see import see
 from tracker.simulate import Scene, simulate
@@ -67,7 +67,7 @@ def test_copies_add_the_variance_of_rounding():
     kinds = np.array(["I"] + ["P"] * 399)
     sightings, piece, true = follow(rng, kinds)
     strain = rng.normal(0, 1, (len(sightings), 3))
-    held, report = hold_copies(sightings, strain=strain, piece=piece, kinds=kinds)
+    held, report = mend_deviations(sightings, strain=strain, piece=piece, kinds=kinds)
     predicted = sightings.frame > 0
     added = held.x_std[predicted] ** 2 - report["P"]["shape_variance"] * sightings.x_std[predicted] ** 2
     assert added == pytest.approx(0.25**2 / 12, rel=1e-3)  # every one is a copy: no chance in the share
@@ -86,7 +86,7 @@ def test_shape_of_spots_scales_the_deviation():
     one = np.ones(n)
     sightings = Sightings(frame, x, y, 0.05 * one, 0.06 * one, one, 1.7 * one, 0 * frame)
     strain = rng.normal(0, 1, (n, 3)) * np.where(frame % 2, 3, 1)[:, None]
-    held, report = hold_copies(sightings, strain=strain, piece=number, kinds=kinds)
+    held, report = mend_deviations(sightings, strain=strain, piece=number, kinds=kinds)
     # standard deviation of a median absolute deviation: 1.17 / sqrt(n); the smaller of two is taken
     tolerance = 5 * 1.17 / np.sqrt(n / 2)
     for odd, factor in ((0, 1), (1, 3)):
@@ -96,14 +96,28 @@ def test_shape_of_spots_scales_the_deviation():
     assert report["P"]["copies_std_px"] == 0
 
 
-def test_pictures_without_loss_keep_their_deviations():
-    """Where no picture loses anything, the very same record comes back."""
+def test_pictures_without_loss_are_scaled_alone():
+    """Without loss the shape of the spots scales the deviation, and steps of a quarter pixel mean nothing."""
     rng = np.random.default_rng(5)
-    kinds = np.array([""] * 50)
+    kinds = np.array(["P"] * 200)
     sightings, piece, _ = follow(rng, kinds)
-    held, report = hold_copies(sightings, strain=np.full((len(sightings), 3), 9.0), piece=piece, kinds=kinds)
-    assert held is sightings
+    strain = 2 * rng.normal(0, 1, (len(sightings), 3))
+    held, report = mend_deviations(sightings, strain=strain, piece=piece, kinds=np.array([""] * 200))
+    # standard deviation of a median absolute deviation: 1.17 / sqrt(n)
+    assert held.x_std / 0.1 == pytest.approx(2, rel=5 * 1.17 / np.sqrt(len(sightings)))
+    assert report["lossless"]["copies_std_px"] == 0
+
+
+def test_few_sightings_keep_their_deviations():
+    """Fifty sightings are too few to scale anything by; none at all give an empty record."""
+    rng = np.random.default_rng(6)
+    kinds = np.array(["P"] * 25)
+    sightings, piece, _ = follow(rng, kinds, droplets=2)
+    held, report = mend_deviations(sightings, strain=np.ones((50, 3)), piece=piece, kinds=kinds)
+    assert held.x_std == pytest.approx(sightings.x_std, rel=1e-12)
     assert report == {}
+    none = sightings.take(np.zeros(50, np.bool_))
+    assert mend_deviations(none, strain=np.ones((0, 3)), piece=piece[:0], kinds=kinds) == (none, {})
 
 
 @pytest.mark.parametrize(
@@ -148,4 +162,4 @@ def test_stated_deviations_are_true_after_compression(tmp_path, codec, quality, 
     )
     # 4 / sqrt(2 n) by chance, and a tenth for what is known of the noise of camera and codec
     assert pulls.std() == pytest.approx(1, abs=0.1 + 4 / np.sqrt(2 * len(pulls)))
-    assert bool(seen.report["picture_kinds"]) == (codec != "ffv1")
+    assert ("lossless" in seen.report["picture_kinds"]) == (codec == "ffv1")
