@@ -29,10 +29,11 @@ table { border-collapse: collapse; margin: .25rem 0 .75rem; font-variant-numeric
 th, td { border: 1px solid #999; padding: .2rem .5rem; text-align: left; vertical-align: top; }
 th { background: #eee; }
 td.n { text-align: right; white-space: nowrap; }
+td.t { white-space: nowrap; }
 td.l { min-width: 16rem; }
 @media print { body { max-width: none; padding: 0; font-size: 10pt; } nav { display: none; }
   h2 { break-after: avoid; } tr { break-inside: avoid; } thead { display: table-header-group; }
-  .wide { overflow: visible; } th { background: none; } td.l { min-width: 0; } }
+  .wide { overflow: visible; } th { background: none; } td.l { min-width: 0; } td.t { white-space: normal; } }
 """
 
 _LARGEST_SVG = 400_000  # bytes; a larger figure is shown as pixels

@@ -69,5 +69,12 @@ def batch_text(batch: Batch) -> str:
     droplets = sum(entry.droplets for entry in batch.entries)
     counts = f"{done} done, {len(batch.failed)} failed, {batch.measured} measured now"
     lines = [f"{count(len(batch.entries), 'recording')}: {counts}; {count(droplets, 'droplet')}, {kept} kept"]
+    contents = [entry.sha256 for entry in batch.entries if entry.status == "done" and entry.sha256]
+    repeats = len(contents) - len(set(contents))
+    if repeats:
+        again = "repeats another one" if repeats == 1 else "repeat others"
+        lines.append(
+            f"{count(repeats, 'recording')} {again}: in report and pool each counts once; batch.csv names them"
+        )
     lines += [f"failed: {entry.recording}: {entry.reason}" for entry in batch.failed]
     return "\n".join([*lines, f"result: {batch.out}"])

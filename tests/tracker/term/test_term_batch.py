@@ -327,6 +327,14 @@ def test_command_ends_with_status_1_if_a_recording_failed(term, inline, capsys):
     assert [row["status"] for row in json.loads(capsys.readouterr().out)["recordings"]] == ["done"] * 4
 
 
+def test_repeated_recordings_are_told(term, inline, capsys):
+    """A copy of a recording under another name is said to repeat it, since report and pool count it once."""
+    clip = term / "term/north/2026-10-05/clip0.avi"
+    shutil.copy(clip, clip.with_name("again.avi"))
+    cli_status(["batch", str(term / "term"), "--out", str(term / "out")])
+    assert "1 recording repeats another one: in report and pool each counts once" in capsys.readouterr().out
+
+
 def test_folder_without_recordings_is_one_line(tmp_path, capsys):
     """A folder with nothing to measure, or no folder, ends with status 1 and one line."""
     assert cli_status(["batch", str(tmp_path)]) == 1
