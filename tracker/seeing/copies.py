@@ -96,6 +96,7 @@ def mend_deviations(
     if len(sightings) == 0:
         return sightings, {}
     used, rows = kinds[sightings.frame], _clear(sightings, piece)
+    strain = _less_means(strain, piece, rows)
     found = {k: f for k in ("", "I", "P", "B") if (f := _find(sightings, strain, piece, (k, kinds, rows)))}
     if "P" in found and "B" in found:
         found["B"] = replace(found["B"], variance=max(found["B"].variance, found["P"].variance))
@@ -146,7 +147,9 @@ def _find(
     rows = clear & (kinds[sightings.frame] == kind)
     if np.count_nonzero(rows) < _FEW:
         return None
-    shape = _shape(strain[rows], piece[rows])
+    # motion within the exposure widens spots along its way and unevenly: of the widths the quieter one counts
+    x, y, slant = (_spread(strain[rows, i]) ** 2 for i in range(3))
+    shape = 0.5 * (min(x, y) + slant)
     sides = _references(kinds)[: {"P": 1, "B": 2}.get(kind, 0)]
     shares = tuple(_shares(sightings, piece, rows, side) for side in sides)
     added = sum(_rounding(s) for s in shares)
@@ -162,15 +165,12 @@ def _clear(sightings: Sightings, piece: IntArray) -> NDArray[np.bool_]:
     return np.asarray(clear & lasting[piece])
 
 
-def _shape(strain: FloatArray, piece: IntArray) -> float:
-    """Mean of the variances of width and slant; a droplet out of focus is wide by itself, so each one's mean is off.
-
-    Motion within the exposure widens spots along its way and unevenly: of the widths the quieter one counts.
-    """
-    _, number, count = np.unique(piece, return_inverse=True, return_counts=True)
-    means = np.stack([np.bincount(number, column) / count for column in strain.T], 1)
-    x, y, slant = (_spread(column) ** 2 for column in (strain - means[number]).T)
-    return 0.5 * (min(x, y) + slant)
+def _less_means(strain: FloatArray, piece: IntArray, rows: NDArray[np.bool_]) -> FloatArray:
+    """Strain less the mean over its piece's clear sightings: a droplet out of focus is wide by itself."""
+    size = int(piece.max()) + 1
+    count = np.maximum(np.bincount(piece[rows], minlength=size), 1)
+    means = np.stack([np.bincount(piece[rows], column[rows], size) / count for column in strain.T], 1)
+    return np.asarray(strain - means[piece])
 
 
 def _spread(values: FloatArray) -> float:
