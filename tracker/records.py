@@ -103,7 +103,7 @@ class Sightings:
     frame: IntArray  # (N,) decoded frames from 0
     x: FloatArray  # (N,) px
     y: FloatArray  # (N,) px
-    x_std: FloatArray  # (N,) px, standard deviation of x: noise of the picture only
+    x_std: FloatArray  # (N,) px, standard deviation of x: noise of the picture and what its codec adds
     y_std: FloatArray  # (N,) px
     brightness: FloatArray  # (N,) integrated grey values of the spot
     width: FloatArray  # (N,) px, standard deviation of the spot
