@@ -61,7 +61,7 @@ def test_split_says_what_is_done_and_what_became_of_it(page: Page) -> None:
     assert wait_for(lambda: page.evaluate("true") and held)
     held[0].continue_()
     expect(page.locator("#outcome")).to_contain_text("Kept in decisions.jsonl")
-    (new,) = set(numbers()) - set(before)
+    (new,) = wait_for(lambda: set(numbers()) - set(before))
     expect(page.locator("#outcome")).to_contain_text(f"Droplet {before[0]} is now {before[0]} and {new}.")
     expect(page.locator(row_of(page, new))).to_be_visible()
     page.get_by_role("button", name="Undo").click()
