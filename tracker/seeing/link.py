@@ -16,6 +16,8 @@ _CROWDING = 0.06  # other droplets expected within the first gate
 _STEADY = 2  # frames: a droplet is seen at least so often in half of its life; flecks of noise are not
 _FAINT = 1.6  # times the brightness that a hundredth of the sightings does not reach
 _WEAK = 8.0  # signal to noise: the width of a spot over the standard deviation of its place
+_NOISE = 5.0  # of the same: what noise can reach
+_DIM = 0.15  # of the usual brightness of clear droplets
 _RESTING = 0.7  # of the usual mean root of the way between frames
 _LEAST_GATE, _MOST_GATE = 4.0, 60.0  # px
 
@@ -148,8 +150,9 @@ def _tracks(sightings: Sightings, piece: IntArray, least: int) -> Tracks:
 def _flecks(sightings: Sightings, piece: IntArray) -> NDArray[np.bool_]:
     """Which pieces are flecks of noise or what a codec leaves behind.
 
-    A droplet is seen in most frames of its life. What is near the threshold must also be seen in half
-    of the frames from its first to its last, and move from frame to frame as droplets do.
+    A droplet is seen in most frames of its life. What is near the threshold must also be seen in half of the frames
+    from its first to its last, and move from frame to frame as droplets do; next to far brighter droplets it may be
+    noise that a codec carries on from picture to picture.
     """
     count = np.bincount(piece)
     order = np.lexsort((sightings.frame, piece))
@@ -166,8 +169,11 @@ def _flecks(sightings: Sightings, piece: IntArray) -> NDArray[np.bool_]:
     )  # mean root of the way: a robust measure of its size
     brightness = np.bincount(piece, sightings.brightness, len(count)) / count
     faint = brightness < _FAINT * np.quantile(sightings.brightness, 0.01)
-    faint &= np.bincount(piece, sightings.width / sightings.x_std, len(count)) / count < _WEAK
+    clearness = np.bincount(piece, sightings.width / sightings.x_std, len(count)) / count
+    faint &= clearness < _WEAK
+    clear = sightings.brightness[sightings.width >= _WEAK * sightings.x_std]
+    dim = (clearness < _NOISE) & (brightness < (_DIM * np.median(clear) if len(clear) else 0.0))
     usual = np.median(np.sqrt(way[next_to])) if next_to.any() else 0.0
     noise = np.sqrt(2 * float(np.median(sightings.x_std)))
     resting = (root < _RESTING * usual) & (usual > noise)
-    return np.asarray(~often | (faint & ((count < 0.5 * span) | resting)))
+    return np.asarray(~often | dim | (faint & ((count < 0.5 * span) | resting)))

@@ -78,20 +78,19 @@ def see(
     sightings, strain, score = _gather(rows, watch.box, lamp)
     pieces = first_pieces(sightings, recording)
     sightings, copies = mend_deviations(sightings, strain=strain, piece=pieces, kinds=reader.kinds)
-    jumps = common_jumps(sightings, pieces, recording.frame_times)
     fixed = on_fixed_places(sightings, pieces, recording)
-    warnings = [*watch.warnings, *(f"all droplets jump at frame {j}: tracks are cut there" for j in jumps)]
     if fixed.any():
-        warnings.append(f"{int(fixed.sum())} sightings of bright places that never move were left out")
+        watch.warnings.append(f"{int(fixed.sum())} sightings of bright places that never move were left out")
         sightings, score, pieces = sightings.take(~fixed), score[~fixed], pieces[~fixed]
     accepted, room = settings.false_alarms * watch.looked, float(watch.looked * watch.box[2] * watch.box[3])
     alarms = count_alarms(sightings, score, pieces, accepted=accepted, room=room)
-    sightings = sightings.take(alarms.keep)
+    sightings, pieces = sightings.take(alarms.keep), pieces[alarms.keep]
+    jumps = common_jumps(sightings, pieces, recording.frame_times)
+    watch.warnings += [f"all droplets jump at frame {j}: tracks are cut there" for j in jumps]
     grey = np.concatenate(watch.grey) if lamp is not None else None
     report = watch.report(len(sightings) / len(recording.frame_times), copies, alarms)
-    return Seen(
-        recording, sightings, report, grey, np.array(sorted({*watch.cuts, *jumps}), np.int64), tuple(warnings)
-    )
+    cuts = np.array(sorted({*watch.cuts, *jumps}), np.int64)
+    return Seen(recording, sightings, report, grey, cuts, tuple(watch.warnings))
 
 
 @dataclass(slots=True)

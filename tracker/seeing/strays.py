@@ -17,6 +17,7 @@ _STEPS = 50  # that are enough to tell
 _FROZEN = 0.1  # of the usual way: one droplet in a hundred goes less by chance
 _FROZEN_NOISE = 0.2  # of the deviation of a place: one droplet at rest in a hundred seems to go less
 _OFTEN_FROZEN = 1 / 3  # of the steps of a piece
+_WEAK = 8.0  # spot width over the deviation of its place: clearer ones are no flecks
 _NEAREST, _MOST_REACH = 3.0, 60.0  # px
 
 
@@ -57,7 +58,8 @@ def count_alarms(
     The threshold of the filter is set from sample pictures, and holds where false maxima are as frequent as minima.
     What a codec adds is seldom so even. A droplet is seen for many frames, so what is seen once is a false alarm,
     or a droplet in passing at the rim, which counts as one. In a crowd some of the false ones have a droplet
-    near them by chance: that share of the picture is allowed for. What a codec shows frozen is no droplet either.
+    near them by chance: that share of the picture is allowed for. What a codec shows faint and frozen is no droplet
+    either; a clear droplet is frozen too where it moves by less from picture to picture than the codec mends.
     Where the threshold has to be raised, what is seen a few times in a row must exceed it once.
     """
     keep = np.ones(len(sightings), np.bool_)
@@ -66,7 +68,8 @@ def count_alarms(
     reach, usual = _ways(sightings, piece)
     group, covered = _groups(sightings, piece, reach)
     size = np.bincount(group)[group]
-    stray = (size <= _BRIEF) | _frozen(sightings, piece, usual)
+    weak = sightings.width < _WEAK * np.minimum(sightings.x_std, sightings.y_std)
+    stray = (size <= _BRIEF) | (weak & _frozen(sightings, piece, usual))
     free = max(1 - covered / room, 0.1)
     most = int(accepted * free)
     rows = np.flatnonzero(stray)
