@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass, field
 from pathlib import Path
@@ -27,6 +28,9 @@ Rectangle = tuple[int, int, int, int]
 
 _LEAST_SIDE = 24  # px, of the region that is looked at
 _BLIND = 2.0  # times further off than a change of light needs: a single frame that is left out
+_LOOSE = (
+    3.0  # times the asked rate of false sightings at first; strays above it are left out once they are known
+)
 _MOST_LIGHTS = 12  # changes of illumination that are followed; a recording with more is not held up
 
 
@@ -70,7 +74,7 @@ def see(
         while source.fill(settings):
             eyes = learn(
                 gather_samples(source, settings), black=reader.black, full_scale=reader.full_scale,
-                false_alarms=settings.false_alarms,
+                false_alarms=_LOOSE * settings.false_alarms,
             )  # fmt: skip
             watch.learned(eyes, source)
             rows += _follow(eyes, source, check=len(watch.eyes) < _MOST_LIGHTS)
@@ -83,7 +87,9 @@ def see(
         watch.warnings.append(f"{int(fixed.sum())} sightings of bright places that never move were left out")
         sightings, score, pieces = sightings.take(~fixed), score[~fixed], pieces[~fixed]
     accepted, room = settings.false_alarms * watch.looked, float(watch.looked * watch.box[2] * watch.box[3])
-    alarms = count_alarms(sightings, score, pieces, accepted=accepted, room=room)
+    alarms = count_alarms(
+        sightings, score, pieces, accepted=accepted, room=room, firm=watch.firm_threshold
+    )  # fmt: skip
     sightings, pieces = sightings.take(alarms.keep), pieces[alarms.keep]
     jumps = common_jumps(sightings, pieces, recording.frame_times)
     watch.warnings += [f"all droplets jump at frame {j}: tracks are cut there" for j in jumps]
@@ -150,6 +156,12 @@ class _Watch:
                 moved = f"({shift[0]:.1f}, {shift[1]:.1f}) px"
                 self.warnings.append(f"the camera was moved by {moved} at {time:.2f} s: tracks are cut there")
         self.eyes.append(eyes)
+
+    @property
+    def firm_threshold(self) -> float:
+        """Threshold at which noise would have the asked rate: h with exp(-h^2 / 2) smaller by the loose factor."""
+        loose = self.eyes[0].report["threshold"] if self.eyes else 0.0
+        return math.sqrt(loose**2 + 2 * math.log(_LOOSE))
 
     def report(self, per_frame: float, copies: dict[str, Any], alarms: Alarms) -> dict[str, Any]:
         """What was found, for provenance; of the first illumination."""

@@ -33,8 +33,9 @@ class Alarms:
 
 
 def count_alarms(
-    sightings: Sightings, score: FloatArray, piece: IntArray, *, accepted: float, room: float
-) -> Alarms:
+    sightings: Sightings, score: FloatArray, piece: IntArray, *, accepted: float, room: float,
+    firm: float = 0.0,
+) -> Alarms:  # fmt: skip
     """Leave out the faintest strays until there are no more than are accepted.
 
     Parameters
@@ -48,6 +49,8 @@ def count_alarms(
         False sightings in the whole recording.
     room : float
         Area of all pictures that were looked at, in px^2.
+    firm : float
+        Threshold for recordings too short to tell strays.
 
     Returns
     -------
@@ -64,7 +67,7 @@ def count_alarms(
     """
     keep = np.ones(len(sightings), np.bool_)
     if len(sightings) == 0 or np.ptp(sightings.frame) < _LONG:
-        return Alarms(keep, 0.0, None if len(sightings) else 0.0)
+        return Alarms(score > firm, 0.0, None if len(sightings) else 0.0)
     reach, usual = _ways(sightings, piece)
     group, covered = _groups(sightings, piece, reach)
     size = np.bincount(group)[group]
