@@ -204,7 +204,8 @@ def build_detector(
     bar = smooth_level + np.float32(threshold) / inverse
     bar[[0, -1]] = bar[:, [0, -1]] = np.inf
     detector = Detector(binning, sigma, smooth_level, inverse, bar, kernel, threshold, usual)
-    return detector, {"threshold": threshold, "threshold_white_noise": theory, "threshold_of_tail": found}
+    report = {"threshold": threshold, "threshold_white_noise": theory, "threshold_of_tail": found}
+    return detector, {**report, "false_alarms_at_threshold": false_alarms}
 
 
 def _usual_spread(stack: F32) -> float:
