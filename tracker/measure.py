@@ -70,7 +70,7 @@ def measure(
     _require_writable(folder)
     bench = bench if isinstance(bench, Bench) else load_bench(bench, recording=path)
 
-    Thread(target=_import_ahead, daemon=True).start()
+    Thread(target=import_ahead, daemon=True).start()
     seen = see(path, settings=settings, frame_rate=bench.frame_rate, lamp=bench.field.lamp, progress=progress)
     if len(seen.recording.frame_times) < 2:
         raise RecordingError(
@@ -95,7 +95,7 @@ def _evaluated(seen: Seen, bench: Bench, settings: Settings, folder: Path) -> Re
     return write_result(result, folder, tables=settings.tables)
 
 
-def _import_ahead() -> None:
+def import_ahead() -> None:
     """Import what comes after the seeing while frames are decoded, which needs no interpreter; it saves a second."""
     import_module("tracker.keeping.decisions")
     import_module("tracker.motion.droplets")

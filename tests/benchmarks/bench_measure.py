@@ -29,6 +29,11 @@ SCENES = {
         Scene(droplets=40, seconds=60.0, width=1280, height=960),
     ),
 }
+START = (
+    "from importlib import import_module as load\n"
+    "for name in ('tracker.cli', 'tracker.bench', 'tracker.seeing.see', 'av', 'pint'):\n    load(name)\n"
+    "load('tracker.measure').import_ahead()"
+)
 READ = "import cv2, sys\ncv2.setNumThreads(1)\nvideo = cv2.VideoCapture(sys.argv[1])\nwhile video.read()[0]:\n    pass"
 
 
@@ -41,19 +46,22 @@ def seconds(command: list[str]) -> float:
 
 
 def row(name: str, file: str, scene: Scene, folder: Path) -> str:
-    """Time one recording; reading and measuring take turns."""
+    """Time one recording; reading, measuring and starting take turns."""
     recording = folder / file
     simulate(scene, recording, seed=31)
     bench = write_bench(scene, folder / f"{file}.toml", recording=recording)
-    read, measured = [], []
+    read, measured, started = [], [], []
     for _ in range(RUNS):
         read.append(seconds([sys.executable, "-c", READ, str(recording)]))
         line = [sys.executable, "-m", "tracker.cli", "measure", str(recording), "--bench", str(bench)]
         measured.append(seconds(line))
-    start = seconds([sys.executable, "-c", "import cv2"])
-    plain = median(read) - start
-    ratio = median(measured) / plain
-    return f"| {name} | {plain:.2f} s | {median(measured):.2f} s | {ratio:.2f} |"
+        started.append(seconds([sys.executable, "-c", START]))
+    plain = median(read) - seconds([sys.executable, "-c", "import cv2"])
+    all_, start = median(measured), median(started)
+    return (
+        f"| {name} | {plain:.2f} s | {all_:.2f} s | {all_ / plain:.2f} | {start:.2f} s | "
+        f"{(all_ - start) / plain:.2f} |"
+    )
 
 
 def main() -> None:
@@ -64,8 +72,11 @@ def main() -> None:
         f"{platform.processor() or platform.machine()}, {os.cpu_count()} cores, load {os.getloadavg()[0]:.1f} "
         f"before the start; Python {platform.python_version()}; medians of {RUNS} runs in turn.",
         "",
-        "| recording of a minute | OpenCV reads it, one thread | `fallrise measure`, all of it | ratio |",
-        "|---|---|---|---|",
+        "Start: of the process and of all libraries that a measurement imports.",
+        "",
+        "| recording of a minute | OpenCV reads it, one thread | `fallrise measure`, all of it | ratio | start "
+        "| ratio without start |",
+        "|---|---|---|---|---|---|",
     ]
     with tempfile.TemporaryDirectory() as folder:
         lines += [row(name, file, scene, Path(folder)) for name, (file, scene) in SCENES.items()]
