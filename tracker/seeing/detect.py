@@ -92,8 +92,11 @@ class Detector:
 
 
 def spread_below(stack: F32) -> NDArray[np.float64]:
-    """Standard deviation of each picture of a residual, from what lies below 0, where no bright droplet is."""
-    low = np.minimum(stack, 0)
+    """Standard deviation of each picture about its median, from what lies below, where no bright droplet is.
+
+    About the median, as a picture that is a little darker than the others has no more noise.
+    """
+    low = np.minimum(stack - np.median(stack, axis=(1, 2), keepdims=True), 0)
     return np.asarray(np.sqrt(2 * np.einsum("nij,nij->n", low, low) / low[0].size), np.float64)
 
 
@@ -197,7 +200,8 @@ def build_detector(
     stack *= inverse
     usual = _usual_spread(stack)
     if usual:
-        stack /= np.maximum(spread_below(stack) / usual, 1).astype(np.float32)[:, None, None]
+        spread = spread_below(stack[:, ::_SPARSE, ::_SPARSE])
+        stack /= np.maximum(spread / usual, 1).astype(np.float32)[:, None, None]
     theory = threshold_for(false_alarms, float(smooth_level.size), sigma)
     found = min(_threshold_of_tail(stack, false_alarms), _MOST_RAISED * theory)
     threshold = max(theory, found)

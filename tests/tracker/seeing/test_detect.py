@@ -69,6 +69,25 @@ def test_spots_of_three_times_the_noise_are_found(width):
     assert np.count_nonzero(~near.any(1)) <= 12
 
 
+def test_a_darker_picture_is_no_noisier_one():
+    """Spots of one picture that is darker by less than its noise are found as those of the others.
+
+    0.8 grey are 1.9 standard deviations of what a filter of 2 px leaves of 3 grey, so that spots of 12 stand out
+    by 10: five standard deviations above the threshold.
+    """
+    width, darker = 2.0, 0.8
+    rng = np.random.default_rng(4)
+    dark = np.zeros((12, 1, 1))
+    dark[3] = darker
+    samples = np.rint(rng.normal(40 - dark, 3, (12, 160, 160))).astype(np.uint8)
+    level = np.full((160, 160), 40, np.float32)
+    pictures, _ = spots(samples, peak=12 * 3 / (np.sqrt(np.pi) * width), width=width)
+    detector, _ = build_detector(pictures, level, width=width, false_alarms=0.05)
+    assert detector.usual_spread == 0
+    frame, *_ = detector.candidates(list(pictures))
+    assert np.bincount(frame, minlength=12)[3] == 9
+
+
 def test_minima_network_sorts():
     """The network of minima and maxima gives the ranks that a plain sort gives, for awkward numbers of pictures."""
     rng = np.random.default_rng(3)
