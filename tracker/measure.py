@@ -12,7 +12,7 @@ from pathlib import Path
 from threading import Thread
 from typing import TYPE_CHECKING
 
-from tracker.errors import RecordingError, ResultError
+from tracker.errors import RecordingError, ResultError, UsageError
 
 if TYPE_CHECKING:
     from tracker.bench import Bench
@@ -76,6 +76,7 @@ def measure(
         raise RecordingError(
             str(path), "has only one frame, which gives no speed; record at least a few seconds"
         )
+    _require_window(seen, settings)
     return _evaluated(seen, bench.fitted_to(seen.recording.width, seen.recording.height), settings, folder)
 
 
@@ -111,6 +112,16 @@ def _require_recording(path: Path) -> None:
         raise RecordingError(str(path), "no such file or folder; check the name")
     if path.is_file() and path.stat().st_size == 0:
         raise RecordingError(str(path), "is empty (0 bytes); copy the recording again")
+
+
+def _require_window(seen: Seen, settings: Settings) -> None:
+    """A time window that leaves nothing of the recording is a slip, no recording without droplets."""
+    first, last = (float(seen.recording.frame_times[i]) for i in (0, -1))
+    low, high = settings.start, settings.end
+    if (low is not None and low > last) or (high is not None and high < first):
+        raise UsageError(
+            f"no frame lies in the time window: the recording lasts from {first:g} s to {last:g} s"
+        )
 
 
 def _require_writable(folder: Path) -> None:

@@ -282,6 +282,14 @@ def test_part_of_picture_and_time(home, tmp_path):
     assert seen["time_s"].between(2.0, 12.0).all()
 
 
+@pytest.mark.parametrize("window", [{"start": 100.0}, {"end": -1.0}])
+def test_a_time_window_beside_the_recording_is_refused(home, tmp_path, window):
+    """A slip in `--from` or `--to` is told with the recording's own times, and writes no empty result."""
+    with pytest.raises(UsageError, match=r"lasts from 0 s to 13\.96 s"):
+        tracker.measure(home / "clip.avi", out=tmp_path / "none", settings=tracker.Settings(**window))
+    assert not (tmp_path / "none").exists()
+
+
 def test_recordings_of_one_stem_do_not_share_a_result(home, tmp_path):
     """`clip.avi` and `clip.mkv` side by side get a folder each; the first keeps its own when measured again."""
     shutil.copy(home / "bench.toml", tmp_path)

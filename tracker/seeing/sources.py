@@ -28,7 +28,6 @@ _LOSSLESS_CODECS = frozenset(
     {"rawvideo", "huffyuv", "ffvhuff", "ffv1", "png", "utvideo", "v210", "ljpeg", "tiff", "bmp"}
 )
 _KINDS = {1: "I", 2: "P", 3: "B", 4: "P", 5: "I", 6: "P", 7: "I"}  # AVPictureType
-_NO_TIMES = "gives no times of frames: state camera.frame_rate in the bench file"
 _THREADS = 2  # decoder threads for codecs with motion compensation; intra codecs gain nothing
 _LIMITED_BLACK, _LIMITED_WHITE = 16, 235  # of 8 bit, ITU-R BT.601: luma of studio range
 
@@ -138,7 +137,7 @@ def natural_order(folder: Path) -> list[Path]:
 
 def _need_rate(path: Path, frame_rate: float | None) -> float:
     if frame_rate is None:
-        raise RecordingError(str(path), f"pictures {_NO_TIMES}")
+        raise RecordingError(str(path), "pictures carry no times: state camera.frame_rate in the bench file")
     if not (np.isfinite(frame_rate) and frame_rate > 0):
         raise RecordingError(
             str(path), f"the frame rate must be finite and above 0 per second, not {frame_rate}"
@@ -157,7 +156,9 @@ class VideoSource:
             self._container = av.open(str(path), mode="r", metadata_errors="replace")
         except (av.error.FFmpegError, OSError, ValueError) as error:
             reason = getattr(error, "strerror", None) or str(error)
-            raise RecordingError(str(path), f"no recording that can be decoded ({reason})") from error
+            raise RecordingError(
+                str(path), f"no recording that can be decoded ({reason}); copy it again if it should be one"
+            ) from error
         videos = [s for s in self._container.streams.video if not _is_cover(s)]
         if not videos or videos[0].codec_context is None:
             self._container.close()
