@@ -16,7 +16,6 @@ F32 = NDArray[np.float32]
 Pictures = Sequence[NDArray[Any]] | NDArray[Any]  # of one size
 
 _LOW = 0.3  # quantile that a droplet in place for half the samples hardly moves
-_LOW_OFFSET = 0.5244  # standard deviations of a normal distribution from that quantile to its mean
 _CLIP = 2.0  # samples within so many standard deviations make the mean
 _BRIGHT, _MOST_BRIGHT = 2.0, 8.0  # times the noise around, of bright pixels, with what a codec adds there
 _BRIGHT_SHARE = 0.2  # of their rise over what is around; more is a droplet on the move

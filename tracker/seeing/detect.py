@@ -29,7 +29,7 @@ _TAIL = 30  # highest minima that tell the tail
 _LEAST_TAIL = 8  # fewer tell nothing
 _MOST_RAISED = 4.0  # times the threshold for white noise: more is something else than noise
 _PULSE = 1.3  # times the usual spread of a picture: some sample beyond it, and pictures are judged one by one
-_SPARSE = 3  # every so manieth pixel and row tells a picture's spread
+_SPARSE = 3  # every third pixel and row tells a picture's spread
 
 
 @dataclass(frozen=True, slots=True)

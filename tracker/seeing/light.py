@@ -48,7 +48,7 @@ class Light:
 
 
 def coarse(picture: NDArray[Any], black: float) -> F32:
-    """Every so manieth pixel of every so manieth row, some thousand in all; grey over black."""
+    """Pixels of a coarse grid, one or two thousand in all; grey over black."""
     return np.asarray(_grid(picture), np.float32) - np.float32(black)
 
 
