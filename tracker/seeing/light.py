@@ -24,7 +24,8 @@ _LOCAL = (
 _MISMATCH, _MISMATCH_GREY = 1.5, 0.7  # of the usual mismatch, and grey: more is another picture
 _SWING = 1.6  # ratio of light beyond which a frame belongs to another illumination
 _LASTING = 4  # frames that make a change of illumination
-_FLICKER = 0.004  # relative spread of the light that is corrected
+_FLICKER = 2.5  # standard errors of a picture's light: more spread among pictures is corrected
+_NEAR = 4.0  # median differences: what is further off is a droplet or another light
 _LEAST_LIGHT = 2.0  # grey over black; a darker background tells no ratio
 _MOVED = 0.6  # px, least shift of the background that is a moved camera
 _ALIKE = 0.6  # least correlation of two backgrounds that show one thing
@@ -80,11 +81,9 @@ def light_of(samples: NDArray[Any], level: F32 | None, black: float) -> Light:
     ratio, mismatch = compare(first, list(samples))
     spread = 1.4826 * float(np.median(np.abs(ratio - np.median(ratio))))
     usual = float(np.median(mismatch))
-    # standard error of a median of n ratios, from the mean absolute difference of single pixels
-    doubt = (
-        1.25 * 1.25 * _PATCH * usual / max(float(np.median(first.grid)), 1e-3) / math.sqrt(first.grid.size)
-    )
-    return Light(first.grid, black, usual, max(spread, float(ratio.std()) / 2) > max(_FLICKER, 3 * doubt))
+    # standard error of a mean of n ratios, from the mean absolute difference of patches
+    doubt = 1.25 * _PATCH * usual / max(float(np.median(first.grid)), 1e-3) / math.sqrt(first.grid.size)
+    return Light(first.grid, black, usual, max(spread, float(ratio.std()) / 2) > _FLICKER * doubt)
 
 
 def compare(light: Light, pictures: list[NDArray[Any]]) -> tuple[FloatArray, FloatArray]:
@@ -98,7 +97,7 @@ def compare(light: Light, pictures: list[NDArray[Any]]) -> tuple[FloatArray, Flo
     Returns
     -------
     ratio : ndarray of shape (n,)
-        Median ratio of grey over black; 1 where the background is dark.
+        Ratio of grey over black; 1 where the background is dark.
     mismatch : ndarray of shape (n,)
         Mean absolute difference of patches after that, grey.
 
@@ -110,16 +109,26 @@ def compare(light: Light, pictures: list[NDArray[Any]]) -> tuple[FloatArray, Flo
     grids = np.stack([_grid(p) for p in pictures]).reshape(len(pictures), -1).astype(np.float32)
     grids -= np.float32(light.black)
     ground = light.grid.reshape(-1)
-    bright = ground > _LEAST_LIGHT
-    ratio = np.ones(len(pictures))
-    if np.count_nonzero(bright) > ground.size // 4:
-        lit = grids / ground if bright.all() else grids[:, bright] / ground[bright]
-        ratio = np.maximum(np.median(lit, axis=1, overwrite_input=True), 1e-3).astype(np.float64)
+    ratio = _ratio(grids, ground)
     grids -= ratio[:, None].astype(np.float32) * ground
     patches = np.stack([cv2.blur(g.reshape(light.grid.shape), (_PATCH, _PATCH)) for g in grids])
     size = np.abs(patches, out=patches).reshape(len(pictures), -1)
     most = np.float32(_LOCAL) * size.mean(1, keepdims=True)
     return ratio, np.minimum(size, most, out=size).mean(1, dtype=np.float64)
+
+
+def _ratio(grids: F32, ground: F32) -> FloatArray:
+    """Median ratio to the ground, then mean of what is near it: of whole grey values, a median is coarse."""
+    bright = ground > _LEAST_LIGHT
+    if np.count_nonzero(bright) <= ground.size // 4:
+        return np.ones(len(grids))
+    lit, ground = (grids, ground) if bright.all() else (grids[:, bright], ground[bright])
+    ratio = np.maximum(np.median(lit / ground, axis=1, overwrite_input=True), 1e-3)[:, None]
+    rest = lit - ratio * ground
+    size = np.abs(rest)
+    near = size <= _NEAR * np.median(size, axis=1, keepdims=True) + 0.5
+    more = (rest * near).sum(1, dtype=np.float64) / np.maximum((ground * near).sum(1, dtype=np.float64), 1e-3)
+    return np.asarray(np.maximum(ratio[:, 0] + more, 1e-3), np.float64)
 
 
 def even(light: Light, pictures: list[NDArray[Any]], ratio: FloatArray) -> list[NDArray[Any]]:

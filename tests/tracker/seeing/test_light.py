@@ -8,7 +8,7 @@ import numpy as np
 import pytest
 
 from tracker.records import Settings
-from tracker.seeing.light import Light, compare, strange
+from tracker.seeing.light import Light, compare, light_of, strange
 from tracker.seeing.see import see
 from tracker.simulate import Scene
 from tracker.simulate.files import open_writer
@@ -80,3 +80,20 @@ def test_a_lamp_in_a_corner_is_no_other_light():
     everywhere += np.linspace(-8, 8, 320)
     pictures = [rng.normal(p, 2).astype(np.float32) for p in (ground, lamp, everywhere)]
     assert strange(light, *compare(light, pictures)).tolist() == [False, False, True]
+
+
+def test_flicker_of_a_bright_background_is_corrected_where_it_exceeds_the_noise():
+    """Whole grey values of 500 with 0.3 % of flicker, 1.5 grey, twice what a filter of 2 px leaves of 5 grey of noise.
+
+    The light of 1024 pixels is known to 5 / 500 / sqrt(1024) = 3e-4; the bound is twice that, as the ground and the
+    limits of what is near take part. Without flicker, there is nothing to correct.
+    """
+    rng = np.random.default_rng(6)
+    light = 1 + 0.003 * rng.normal(size=40)
+    for true, flickers in ((light, True), (np.ones(40), False)):
+        noise = rng.normal(0, 5, (40, 256, 256))
+        pictures = np.rint(500 * true[:, None, None] + noise).astype(np.uint16)
+        found = light_of(pictures, None, 0.0)
+        assert found.flickers == flickers
+        ratio, _ = compare(found, list(pictures))
+        assert np.std(ratio / ratio.mean() - true / true.mean()) < 2 * 5 / 500 / np.sqrt(1024)
