@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from typing import Any
+
 import numpy as np
 from numpy.typing import NDArray
 
@@ -24,6 +26,31 @@ _WHITE = (0.8, 1.3)  # variance of a pixel over that of the filtered noise: with
 _HALF = 0.4549  # median of the square of a standard normal number
 _MOST_SHARE = 0.75  # of the empty background's variance that shot noise may be in the weights
 _LEAST_READ = 0.05
+_CAMERA_BITS = (9, 10, 11, 12, 13, 14, 15)  # of cameras whose files have words of 16
+_REPEATED = 8  # pixels of the samples at the largest value
+
+
+def saturation(samples: NDArray[Any], stated: float) -> float:
+    """Grey value from which on pixels are saturated.
+
+    Parameters
+    ----------
+    samples : ndarray of shape (n, height, width)
+        Pictures of the recording.
+    stated : float
+        The largest value that the file could hold.
+
+    Returns
+    -------
+    full_scale : float
+        `stated`, or the largest value of a camera with fewer bits than its file, in the lower or upper bits of a word,
+        where the samples end exactly there and several pixels have it.
+    """
+    top = int(samples.max())
+    ends = [(2**b - 1) << shift for b in _CAMERA_BITS for shift in (0, 16 - b)]
+    if samples.dtype == np.uint16 and top in ends and np.count_nonzero(samples == top) >= _REPEATED:
+        return float(min(top, stated))
+    return stated
 
 
 def find_camera(

@@ -12,7 +12,7 @@ from numpy.typing import NDArray
 
 from tracker.records import FloatArray
 from tracker.seeing.background import Background, fill_restless, find_background
-from tracker.seeing.camera import find_camera
+from tracker.seeing.camera import find_camera, saturation
 from tracker.seeing.detect import Detector, build_detector, cut_windows, find_peaks, gaussian_kernel
 from tracker.seeing.fit import Camera, Spots, Windows, fit_spots
 from tracker.seeing.light import Light, compare, even, light_of
@@ -56,7 +56,7 @@ def learn(samples: NDArray[Any], *, black: float, full_scale: float, false_alarm
     samples : ndarray of shape (n, height, width), uint8 or uint16
         Pictures spread over the recording, of one illumination.
     black, full_scale : float
-        Grey values of no light and of saturation.
+        Grey values of no light and of saturation as the file states it.
     false_alarms : float
         False sightings a frame that are accepted.
 
@@ -64,6 +64,7 @@ def learn(samples: NDArray[Any], *, black: float, full_scale: float, false_alarm
     -------
     eyes : Eyes
     """
+    full_scale = saturation(samples, full_scale)
     samples, flickers = _evened(samples, black)
     background = find_background(samples, black=black)
     many = int(np.clip(_PIXELS // samples[0].size, _LEAST_PICTURES, _PICTURES))
@@ -89,7 +90,7 @@ def learn(samples: NDArray[Any], *, black: float, full_scale: float, false_alarm
     reach = min(max(3, math.ceil(2.8 * width)), (min(samples.shape[1:]) - 1) // 2)
     report = {
         "spot_width_px": width, "read_noise": math.sqrt(camera.read_variance), "camera_gain": true.gain,
-        "binning": detector.binning, "background_samples": background.samples,
+        "saturation": full_scale, "binning": detector.binning, "background_samples": background.samples,
         "line_share": background.line_share, "flickers": flickers, "teaching_spots": len(clear), **found,
     }  # fmt: skip
     light = light_of(samples, background.level, black)
