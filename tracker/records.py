@@ -265,3 +265,4 @@ class Seen:
         default_factory=lambda: np.empty(0, np.int64)
     )  # frames at which the camera was bumped
     warnings: tuple[str, ...] = ()
+    cutouts: Any = None  # `Cutouts` of the seeing wing, for the links; None where nothing was kept

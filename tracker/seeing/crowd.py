@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, fields
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -11,6 +12,7 @@ from tracker.seeing.fit import Camera, Windows, inverses
 
 Float = NDArray[np.float64]
 
+NEIGHBOUR = 5.6  # widths: nearer spots are fitted jointly
 _CHUNK = 256  # pairs at a time: the Jacobian is kept whole
 _DAMPING = 0.02  # share added to the diagonal, after Levenberg: near pairs are almost singular
 
@@ -127,6 +129,49 @@ def near_pairs(frame: NDArray[np.int64], x: Float, y: Float, *, reach: float) ->
     rows = np.flatnonzero(np.isfinite(distance[:, 1]))
     pairs = np.sort(np.column_stack([rows, neighbour[rows, 1]]), axis=1)
     return np.unique(pairs, axis=0).astype(np.int64)
+
+
+def without_others(
+    windows: Windows, table: dict[str, NDArray[Any]], pairs: NDArray[np.int64], width: float
+) -> Windows:
+    """Windows of pairs with the light of third spots nearby taken off.
+
+    Parameters
+    ----------
+    windows : Windows
+        N cut-outs.
+    table : dict of ndarray
+        Columns `frame`, `x`, `y` in px of the picture, and `amplitude` of all spots.
+    pairs : ndarray of shape (N, 2)
+        Rows of the table that each window is about.
+    width : float
+        Standard deviation of a spot in px.
+
+    Returns
+    -------
+    windows : Windows
+        The same where there are no others.
+    """
+    from scipy.spatial import cKDTree
+
+    reach = (NEIGHBOUR + 4) * width
+    plane = table["frame"] * (10 * reach)
+    tree = cKDTree(np.column_stack([table["x"], table["y"], plane]))
+    middle = np.column_stack([0.5 * (table[c][pairs[:, 0]] + table[c][pairs[:, 1]]) for c in "xy"])
+    near = tree.query_ball_point(np.column_stack([middle, plane[pairs[:, 0]]]), reach)
+    owner = np.repeat(np.arange(len(pairs)), [len(n) for n in near])
+    other = np.concatenate([np.asarray(n, np.int64) for n in near])
+    third = (other != pairs[owner, 0]) & (other != pairs[owner, 1])
+    owner, other = owner[third], other[third]
+    if len(owner) == 0:
+        return windows
+    grey = windows.grey.copy()
+    at = np.arange(grey.shape[1])
+    gx = np.exp(-0.5 * ((at + windows.left[owner, None] - table["x"][other, None]) / width) ** 2)
+    gy = np.exp(-0.5 * ((at + windows.top[owner, None] - table["y"][other, None]) / width) ** 2)
+    light = table["amplitude"][other, None, None] * gy[:, :, None] * gx[:, None, :] * windows.shade[owner]
+    np.subtract.at(grey, owner, light.astype(np.float32))
+    return Windows(windows.left, windows.top, grey, windows.background, windows.shade, windows.bad)
 
 
 def split_starts(spots: Float, width: float, sx: Float, sy: Float, slant: NDArray[np.bool_]) -> list[Float]:

@@ -7,6 +7,7 @@ from numpy.typing import NDArray
 
 from tracker.records import Field, Recording, Seen, Settings, Sightings, Tracks
 from tracker.seeing.clocks import Clocks, clocks_of
+from tracker.seeing.parting import part_meetings
 from tracker.seeing.stitch import join_pieces
 from tracker.seeing.untangle import untangle
 
@@ -54,6 +55,8 @@ def link(seen: Seen, *, field: Field | None, settings: Settings) -> Tracks:
     pieces = link_frames(sightings, clocks, box=box, cuts=seen.cuts)
     pieces = join_pieces(sightings, pieces, clocks, box=box, cuts=seen.cuts)
     pieces = untangle(sightings, pieces, clocks)
+    if seen.cutouts is not None:
+        sightings, pieces = part_meetings(sightings, pieces, clocks, seen.cutouts)
     return _tracks(sightings, pieces, settings.min_frames)
 
 

@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 
 from tracker.records import Flag
 from tracker.seeing.background import Pictures
-from tracker.seeing.crowd import Pairs, fit_pairs, near_pairs, split_starts
+from tracker.seeing.crowd import NEIGHBOUR, Pairs, fit_pairs, near_pairs, split_starts, without_others
 from tracker.seeing.detect import cut_windows
 from tracker.seeing.fit import Spots, Windows, fit_spots
 from tracker.seeing.learn import Eyes
@@ -20,7 +20,6 @@ Rows = NDArray[np.int64]
 Columns = dict[str, NDArray[Any]]
 
 COLUMNS = ("frame", "x", "y", "x_std", "y_std", "brightness", "width", "flags", "strain", "score")
-_NEIGHBOUR = 5.6  # widths: nearer spots are fitted jointly
 _ODD = 5.0  # standard deviations of a width or slant that one sharp spot would not show
 _MOST_SPREAD = 2.5  # standard deviations; more is no noise of a codec but many fast or soft droplets
 _ENOUGH = 40  # spots that tell the spread
@@ -67,23 +66,33 @@ def look(eyes: Eyes, pictures: list[NDArray[Any]], numbers: Rows) -> Columns:
     frame, spots, windows = frame[rows], spots.take(rows), windows.take(rows)
     table = _table(spots, frame, score[rows])
     table["flags"] |= np.where(windows.bad.any((1, 2)), int(Flag.SATURATED), 0)
-    crowded = near_pairs(frame, spots.x, spots.y, reach=_NEIGHBOUR * eyes.width)
+    crowded = near_pairs(frame, spots.x, spots.y, reach=NEIGHBOUR * eyes.width)
     table = _fit_neighbours(eyes, pictures, table, crowded)
     alone = np.ones(len(frame), np.bool_)
     alone[crowded.ravel()] = False
-    table = _fit_odd(eyes, pictures, table, spots, np.flatnonzero(_is_odd(spots) & alone))
+    table = _fit_odd(eyes, pictures, table, spots, np.flatnonzero((oddness(table["strain"]) > _ODD) & alone))
     spotlike = table["excess"] < _MOST_EXCESS
     return _finish(eyes, {k: v[spotlike] for k, v in table.items()}, numbers)
 
 
-def _is_odd(spots: Spots) -> NDArray[np.bool_]:
-    """Whether a spot's width or slant is none of a single sharp spot, judged by the spread among its batch."""
-    shape = np.column_stack([spots.growth, spots.slant])
+def oddness(strain: NDArray[np.float64]) -> NDArray[np.float64]:
+    """How far width or slant are from a single sharp spot's, in deviations, judged by the spread among the batch.
+
+    Parameters
+    ----------
+    strain : ndarray of shape (N, 3)
+        Growth along x and y, and slant, in standard deviations.
+
+    Returns
+    -------
+    oddness : ndarray of shape (N,)
+    """
+    shape = strain.copy()
     if len(shape) >= _ENOUGH:
-        shape = shape - np.clip(np.median(shape, axis=0), -_MOST_SPREAD, _MOST_SPREAD)
+        shape -= np.clip(np.median(shape, axis=0), -_MOST_SPREAD, _MOST_SPREAD)
         shape /= np.clip(1.4826 * np.median(np.abs(shape), axis=0), 1, _MOST_SPREAD)
     shape[:, 2] = np.abs(shape[:, 2])
-    return np.asarray(shape.max(1, initial=0) > _ODD)
+    return np.asarray(shape.max(1, initial=-np.inf))
 
 
 def _cut(
@@ -111,12 +120,12 @@ def _fit_neighbours(eyes: Eyes, pictures: Pictures, table: Columns, pairs: Rows)
         return table
     table = {k: v.copy() for k, v in table.items()}
     i, j = pairs.T
-    reach = _pair_reach(eyes)
+    reach = pair_reach(eyes)
     x, y = (0.5 * (table[c][i] + table[c][j]) for c in "xy")
     windows = _cut(eyes, pictures, table["frame"][i], x, y, reach)
     for _ in range(2):
         start = np.stack([table[c][k] for k in (i, j) for c in ("amplitude", "x", "y")], 1)
-        cleared = _without_others(windows, table, pairs, eyes.width)
+        cleared = without_others(windows, table, pairs, eyes.width)
         fitted = fit_pairs(cleared, start, camera=eyes.camera, width=eyes.width, rounds=4)
         moved = np.hypot(
             fitted.values[:, [1, 4]] - start[:, [1, 4]], fitted.values[:, [2, 5]] - start[:, [2, 5]]
@@ -130,9 +139,10 @@ def _fit_neighbours(eyes: Eyes, pictures: Pictures, table: Columns, pairs: Rows)
     return table
 
 
-def _pair_reach(eyes: Eyes) -> int:
+def pair_reach(eyes: Eyes) -> int:
+    """Half side in px of a window that holds two neighbours."""
     most = int(min(eyes.background.level.shape) - 1) // 2
-    return min(eyes.reach + math.ceil(_NEIGHBOUR * eyes.width / 2), most)
+    return min(eyes.reach + math.ceil(NEIGHBOUR * eyes.width / 2), most)
 
 
 def _write(table: Columns, rows: Rows, fitted: Pairs, first: int) -> None:
@@ -144,37 +154,13 @@ def _write(table: Columns, rows: Rows, fitted: Pairs, first: int) -> None:
     table["y_var"][rows] = fitted.covariance[:, first + 2, first + 2]
 
 
-def _without_others(windows: Windows, table: Columns, pairs: Rows, width: float) -> Windows:
-    """Windows of pairs with the light of third spots nearby taken off."""
-    from scipy.spatial import cKDTree
-
-    reach = (_NEIGHBOUR + 4) * width
-    plane = table["frame"] * (10 * reach)
-    tree = cKDTree(np.column_stack([table["x"], table["y"], plane]))
-    middle = np.column_stack([0.5 * (table[c][pairs[:, 0]] + table[c][pairs[:, 1]]) for c in "xy"])
-    near = tree.query_ball_point(np.column_stack([middle, plane[pairs[:, 0]]]), reach)
-    owner = np.repeat(np.arange(len(pairs)), [len(n) for n in near])
-    other = np.concatenate([np.asarray(n, np.int64) for n in near])
-    third = (other != pairs[owner, 0]) & (other != pairs[owner, 1])
-    owner, other = owner[third], other[third]
-    if len(owner) == 0:
-        return windows
-    grey = windows.grey.copy()
-    at = np.arange(grey.shape[1])
-    gx = np.exp(-0.5 * ((at + windows.left[owner, None] - table["x"][other, None]) / width) ** 2)
-    gy = np.exp(-0.5 * ((at + windows.top[owner, None] - table["y"][other, None]) / width) ** 2)
-    light = table["amplitude"][other, None, None] * gy[:, :, None] * gx[:, None, :] * windows.shade[owner]
-    np.subtract.at(grey, owner, light.astype(np.float32))
-    return Windows(windows.left, windows.top, grey, windows.background, windows.shade, windows.bad)
-
-
 def _fit_odd(eyes: Eyes, pictures: Pictures, table: Columns, spots: Spots, rows: Rows) -> Columns:
     """Fit spots that are no single sharp ones: as streaks, with their own widths, or as two."""
     if len(rows) == 0:
         return table
     table = {k: v.copy() for k, v in table.items()}
     x, y = table["x"][rows], table["y"][rows]
-    windows = _cut(eyes, pictures, table["frame"][rows], x, y, _pair_reach(eyes))
+    windows = _cut(eyes, pictures, table["frame"][rows], x, y, pair_reach(eyes))
     start = np.full(len(rows), eyes.width)
     wide = fit_spots(windows, (x, y), camera=eyes.camera, width=(start, start), free_width=True, rounds=8)
     fine = wide.good & (np.hypot(wide.x - x, wide.y - y) < 2 * eyes.width)
@@ -254,7 +240,7 @@ def _is_two(eyes: Eyes, both: Pairs, wide: Spots, chi2: NDArray[np.float64]) -> 
         (both.chi2 < chi2 - needed)
         & (amplitude.min(1) > _SPLIT_SHARE * amplitude.max(1))
         & (apart > _SPLIT_APART)
-        & (near.max(1) < _NEIGHBOUR * eyes.width)
+        & (near.max(1) < NEIGHBOUR * eyes.width)
         & (both.covariance[:, [1, 2, 4, 5], [1, 2, 4, 5]] < eyes.width**2).all(1)
     )
 

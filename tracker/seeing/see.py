@@ -12,8 +12,9 @@ import numpy as np
 from numpy.typing import NDArray
 
 from tracker.errors import UsageError
-from tracker.records import FloatArray, Seen, Settings, Sightings
+from tracker.records import FloatArray, IntArray, Seen, Settings, Sightings
 from tracker.seeing.copies import mend_deviations
+from tracker.seeing.cutouts import Album
 from tracker.seeing.fixed import on_fixed_places
 from tracker.seeing.frames import Reader, open_recording
 from tracker.seeing.learn import Eyes, learn
@@ -71,21 +72,24 @@ def see(
         watch = _Watch(reader, settings, lamp, progress)
         source = Source(path, watch.frames(), reader.form, watch.box, frame_rate)
         rows: list[Columns] = []
+        album = Album()
         while source.fill(settings):
             eyes = learn(
                 gather_samples(source, settings), black=reader.black, full_scale=reader.full_scale,
                 false_alarms=_LOOSE * settings.false_alarms,
             )  # fmt: skip
             watch.learned(eyes, source)
-            rows += _follow(eyes, source, check=len(watch.eyes) < _MOST_LIGHTS)
+            rows += _follow(eyes, source, album, check=len(watch.eyes) < _MOST_LIGHTS)
         recording = reader.recording()
-    sightings, strain, score = _gather(rows, watch.box, lamp)
+    sightings, strain, score, number = _gather(rows, watch.box, lamp)
+    cutouts = album.cutouts(number, watch.box[:2])
     pieces = first_pieces(sightings, recording)
     sightings, copies = mend_deviations(sightings, strain=strain, piece=pieces, kinds=reader.kinds)
     fixed = on_fixed_places(sightings, pieces, recording)
     if fixed.any():
         watch.warnings.append(f"{int(fixed.sum())} sightings of bright places that never move were left out")
         sightings, score, pieces = sightings.take(~fixed), score[~fixed], pieces[~fixed]
+        cutouts = cutouts.take(~fixed)
     accepted, room = settings.false_alarms * watch.looked, float(watch.looked * watch.box[2] * watch.box[3])
     alarms = count_alarms(
         sightings, score, pieces, accepted=accepted, room=room, firm=watch.firm_threshold
@@ -96,7 +100,7 @@ def see(
     grey = np.concatenate(watch.grey) if lamp is not None else None
     report = watch.report(len(sightings) / len(recording.frame_times), copies, alarms)
     cuts = np.array(sorted({*watch.cuts, *jumps}), np.int64)
-    return Seen(recording, sightings, report, grey, cuts, tuple(watch.warnings))
+    return Seen(recording, sightings, report, grey, cuts, tuple(watch.warnings), cutouts.take(alarms.keep))
 
 
 @dataclass(slots=True)
@@ -178,7 +182,7 @@ class _Watch:
         }
 
 
-def _follow(eyes: Eyes, source: Source, *, check: bool) -> list[Columns]:
+def _follow(eyes: Eyes, source: Source, album: Album, *, check: bool) -> list[Columns]:
     """Look at frames until the recording ends or shows another illumination; what is left goes back."""
     rows: list[Columns] = []
     for count, frames in enumerate(source):
@@ -192,7 +196,10 @@ def _follow(eyes: Eyes, source: Source, *, check: bool) -> list[Columns]:
         pictures = [frames.pictures[i] for i in keep]
         if eyes.light.flickers:
             pictures = even(eyes.light, pictures, ratio[keep])
-        rows.append(look(eyes, pictures, frames.numbers[keep]))
+        seen = look(eyes, pictures, frames.numbers[keep])
+        if seen:
+            seen["cutout"] = album.keep(eyes, pictures, frames.numbers[keep], seen)
+        rows.append(seen)
         if change is not None:
             source.put_back(frames.part(slice(change, None)))
             break
@@ -220,17 +227,18 @@ def _within(sightings: Sightings, lamp: Rectangle) -> NDArray[np.bool_]:
 
 def _gather(
     rows: list[Columns], box: Rectangle, lamp: Rectangle | None
-) -> tuple[Sightings, FloatArray, FloatArray]:
-    """All columns joined, in px of the whole picture and without the lamp; and the spots' strain and score."""
+) -> tuple[Sightings, FloatArray, FloatArray, IntArray]:
+    """All columns joined, in px of the whole picture, without the lamp; strain, score and number of the cut-out."""
     rows = [r for r in rows if r]
     joined: dict[str, Any] = {
-        n: np.concatenate([r[n] for r in rows]) if rows else np.empty(0) for n in COLUMNS
+        n: np.concatenate([r[n] for r in rows]) if rows else np.empty(0) for n in (*COLUMNS, "cutout")
     }
     joined["x"] = joined["x"] + box[0]
     joined["y"] = joined["y"] + box[1]
     strain, score = joined.pop("strain").reshape(-1, 3), joined.pop("score")
+    number = joined.pop("cutout").astype(np.int64)
     sightings = Sightings(**joined)
     if lamp is None:
-        return sightings, strain, score
+        return sightings, strain, score, number
     outside = ~_within(sightings, lamp)
-    return sightings.take(outside), strain[outside], score[outside]
+    return sightings.take(outside), strain[outside], score[outside], number[outside]
