@@ -150,7 +150,7 @@ def spatial_level(picture: F32, *, size: int = 41) -> F32:
     level: NDArray[Any] = _local_mean(picture, size)
     for _ in range(4):
         above = picture - level
-        sigma = 1.4826 * float(np.median(np.abs(above - np.median(above))))
+        sigma = spread_of(above)
         mask = (np.abs(above) < 2.5 * max(sigma, 1e-3)).astype(np.float32)
         share = np.maximum(_local_mean(mask, size), np.float32(1e-3))
         level = _local_mean(picture * mask, size) / share
@@ -261,6 +261,11 @@ def _rise(level: F32, size: int) -> NDArray[Any]:
     """Highest rise of a picture over its surroundings within half of `size` px."""
     rise = level - _local_mean(level, size + 1)
     return np.asarray(cv2.dilate(rise, np.ones((size + 1, size + 1), np.uint8)))
+
+
+def spread_of(values: NDArray[Any]) -> float:
+    """Standard deviation from the median absolute deviation."""
+    return 1.4826 * float(np.median(np.abs(values - np.median(values))))
 
 
 def _local_mean(picture: F32, size: int) -> F32:

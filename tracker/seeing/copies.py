@@ -18,6 +18,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from tracker.records import FloatArray, IntArray, Sightings
+from tracker.seeing.background import spread_of
 
 Kinds = NDArray[np.str_]  # (frames,) I: by itself, P: from pictures before, B: from both sides, or empty
 
@@ -152,7 +153,7 @@ def _find(
     if np.count_nonzero(rows) < _FEW:
         return None
     # motion within the exposure widens spots along its way and unevenly: of the widths the quieter one counts
-    x, y, slant = (_spread(strain[rows, i]) ** 2 for i in range(3))
+    x, y, slant = (spread_of(strain[rows, i]) ** 2 for i in range(3))
     shape = 0.5 * (min(x, y) + slant)
     sides = _references(kinds)[: {"P": 1, "B": 2}.get(kind, 0)]
     shares = tuple(_shares(sightings, piece, rows, side) for side in sides)
@@ -175,11 +176,6 @@ def _less_means(strain: FloatArray, piece: IntArray, rows: NDArray[np.bool_]) ->
     count = np.maximum(np.bincount(piece[rows], minlength=size), 1)
     means = np.stack([np.bincount(piece[rows], column[rows], size) / count for column in strain.T], 1)
     return np.asarray(strain - means[piece])
-
-
-def _spread(values: FloatArray) -> float:
-    """Standard deviation from the median absolute deviation."""
-    return 1.4826 * float(np.median(np.abs(values - np.median(values))))
 
 
 def _references(kinds: Kinds) -> tuple[IntArray, IntArray]:

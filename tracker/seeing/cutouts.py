@@ -11,7 +11,7 @@ from numpy.typing import NDArray
 
 from tracker.records import Flag, IntArray
 from tracker.seeing.background import Pictures
-from tracker.seeing.detect import cut_windows
+from tracker.seeing.detect import cut_squares, windows_of
 from tracker.seeing.fit import Windows
 from tracker.seeing.learn import Eyes
 from tracker.seeing.look import Columns, oddness, pair_reach
@@ -61,14 +61,10 @@ class Cutouts:
             np.concatenate([getattr(self.sheets[s], name)[rows] for s, rows in chosen])
             for name in ("left", "top", "raw")
         )
-        at = np.arange(raw.shape[1])
-        column, row = (left[:, None] + at)[:, None, :], (top[:, None] + at)[:, :, None]
-        back = eyes.background.level[row, column]
-        x, y = self.corner
-        return Windows(
-            left + x, top + y, raw - back, back, eyes.background.shade[row, column],
-            raw >= eyes.camera.full_scale,
+        windows = windows_of(
+            left, top, raw, background=eyes.background, full_scale=eyes.camera.full_scale
         )  # fmt: skip
+        return replace(windows, left=left + self.corner[0], top=top + self.corner[1])
 
 
 @dataclass(slots=True)
@@ -102,14 +98,7 @@ class Album:
         if len(rows) == 0:
             return number
         at = np.searchsorted(numbers, columns["frame"][rows]), columns["x"][rows], columns["y"][rows]
-        windows = cut_windows(
-            pictures, at, reach=pair_reach(eyes), background=eyes.background, full_scale=eyes.camera.full_scale
-        )  # fmt: skip
-        raw = windows.grey + windows.background
-        kind = pictures[0].dtype
-        self.sheets.append(
-            Sheet(eyes, windows.left, windows.top, (np.rint(raw) if kind.kind == "u" else raw).astype(kind))
-        )
+        self.sheets.append(Sheet(eyes, *cut_squares(pictures, at, reach=pair_reach(eyes))))
         number[rows] = self.count + np.arange(len(rows))
         self.count += len(rows)
         return number

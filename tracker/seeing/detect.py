@@ -317,17 +317,39 @@ def cut_windows(
     -------
     windows : Windows
     """
+    return windows_of(*cut_squares(pictures, at, reach=reach), background=background, full_scale=full_scale)
+
+
+def cut_squares(
+    pictures: Pictures, at: Places, *, reach: int
+) -> tuple[NDArray[np.int64], NDArray[np.int64], NDArray[Any]]:
+    """Left and top in px of the squares that `cut_windows` cuts, and their grey values as in the pictures."""
     frame, x, y = at
-    level, shade, side = background.level, background.shade, 2 * reach + 1
-    height, width = level.shape
+    side = 2 * reach + 1
+    height, width = pictures[0].shape
     left = np.clip(np.rint(x).astype(np.int64) - reach, 0, width - side)
     top = np.clip(np.rint(y).astype(np.int64) - reach, 0, height - side)
-    columns = (left[:, None] + np.arange(side))[:, None, :]
-    rows = (top[:, None] + np.arange(side))[:, :, None]
+    rows, columns = _pixels(left, top, side)
     raw = np.empty((len(x), side, side), pictures[0].dtype)
     order = np.argsort(frame, kind="stable")
     for chosen in np.split(order, np.flatnonzero(np.diff(frame[order])) + 1):
         if len(chosen):
             raw[chosen] = pictures[frame[chosen[0]]][rows[chosen], columns[chosen]]
-    back = level[rows, columns]
-    return Windows(left, top, raw - back, back, shade[rows, columns], raw >= full_scale)
+    return left, top, raw
+
+
+def windows_of(
+    left: NDArray[np.int64], top: NDArray[np.int64], raw: NDArray[Any], *, background: Background, full_scale: float
+) -> Windows:  # fmt: skip
+    """Set up windows from squares that `cut_squares` gave."""
+    rows, columns = _pixels(left, top, raw.shape[1])
+    back = background.level[rows, columns]
+    return Windows(left, top, raw - back, back, background.shade[rows, columns], raw >= full_scale)
+
+
+def _pixels(
+    left: NDArray[np.int64], top: NDArray[np.int64], side: int
+) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
+    """Rows (N, side, 1) and columns (N, 1, side) of squares."""
+    at = np.arange(side)
+    return (top[:, None] + at)[:, :, None], (left[:, None] + at)[:, None, :]

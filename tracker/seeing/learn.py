@@ -11,7 +11,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from tracker.records import FloatArray
-from tracker.seeing.background import Background, fill_restless, find_background
+from tracker.seeing.background import Background, fill_restless, find_background, spread_of
 from tracker.seeing.camera import find_camera, saturation
 from tracker.seeing.detect import Detector, build_detector, cut_windows, find_peaks, gaussian_kernel
 from tracker.seeing.fit import Camera, Spots, Windows, fit_spots
@@ -109,7 +109,7 @@ def _evened(samples: NDArray[Any], black: float) -> tuple[NDArray[Any], bool]:
 def change_noise(samples: NDArray[Any], sigma: float) -> float:
     """Standard deviation, from their differences, of single pictures smoothed by a Gaussian."""
     differences = np.diff(np.stack([smoothed(p.astype(np.float32), sigma) for p in samples]), axis=0)
-    return _spread(differences) / math.sqrt(2)
+    return spread_of(differences) / math.sqrt(2)
 
 
 def white_variance(noise: float, sigma: float) -> float:
@@ -188,7 +188,7 @@ def scale_search(residual: F32) -> tuple[float, float]:
     pictures = residual[:: max(1, len(residual) // few)][:few]
     scales = [s for s in _SCALES if 6 * s <= min(residual.shape[1:])] or [_SCALES[0]]
     smooth = [np.stack([smoothed(r, s) for r in pictures]) for s in scales]
-    raw = [_spread(f[:, ::4, ::4]) * s for f, s in zip(smooth, scales, strict=True)]
+    raw = [spread_of(f[:, ::4, ::4]) * s for f, s in zip(smooth, scales, strict=True)]
     coarse = [i for i, s in enumerate(scales) if s <= _COARSE]
     noise = [max(*raw[i : coarse[-1] + 1], raw[i], _ROUNDING) / s for i, s in enumerate(scales)]
     for pictures, n in zip(smooth, noise, strict=True):
@@ -203,11 +203,6 @@ def scale_search(residual: F32) -> tuple[float, float]:
     order = order[score[order] > _least_score(score, min(few, len(residual)))]
     index = _DEFAULT_SCALE if len(order) < _FEW else int(np.median(which[order]))
     return scales[min(index, len(scales) - 1)], noise[min(index, len(scales) - 1)]
-
-
-def _spread(values: NDArray[Any]) -> float:
-    """Standard deviation from the median absolute deviation."""
-    return 1.4826 * float(np.median(np.abs(values - np.median(values))))
 
 
 def smoothed(picture: F32, sigma: float) -> F32:

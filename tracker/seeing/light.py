@@ -11,6 +11,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from tracker.records import FloatArray, Sightings
+from tracker.seeing.background import spread_of
 
 F32 = NDArray[np.float32]
 IntArray = NDArray[np.int64]
@@ -79,7 +80,7 @@ def light_of(samples: NDArray[Any], level: F32 | None, black: float) -> Light:
         grid = coarse(level, black)
     first = Light(grid, black, np.inf, False)
     ratio, mismatch = compare(first, list(samples))
-    spread = 1.4826 * float(np.median(np.abs(ratio - np.median(ratio))))
+    spread = spread_of(ratio)
     usual = float(np.median(mismatch))
     # standard error of a mean of n ratios, from the mean absolute difference of patches
     doubt = 1.25 * _PATCH * usual / max(float(np.median(first.grid)), 1e-3) / math.sqrt(first.grid.size)
